@@ -1,0 +1,181 @@
+"""C and P to one nondimensional closed loop.
+
+Time is counted in units of a power of two of a second near the geometric mean of the closed-loop poles, and the
+plant's gain is divided out, so every grid and tolerance further up is relative. Scaling by powers of two is exact.
+The characteristic polynomial is formed from the uncancelled numerators and denominators, D_P D_C + N_P N_C.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from synth.loop.arrays import FloatArray, IntArray
+
+
+@dataclass(frozen=True, slots=True)
+class Rational:
+    """A stack of transfer functions in SI units: plants (K rows) or compensators (B rows).
+
+    numerator, denominator : (R, width), descending powers of s, leading zeros as padding
+    dead_time : (R,) [s]
+    """
+
+    numerator: FloatArray
+    denominator: FloatArray
+    dead_time: FloatArray
+
+    def __len__(self) -> int:
+        return int(self.numerator.shape[0])
+
+    @classmethod
+    def of(cls, numerator: object, denominator: object, dead_time: object = 0.0) -> Rational:
+        """Rows from nested lists or arrays; one polynomial alone is one row."""
+        num = np.atleast_2d(np.asarray(numerator, dtype=float))
+        den = np.atleast_2d(np.asarray(denominator, dtype=float))
+        rows = max(num.shape[0], den.shape[0])
+        num = np.broadcast_to(num, (rows, num.shape[1]))
+        den = np.broadcast_to(den, (rows, den.shape[1]))
+        delay = np.broadcast_to(np.asarray(dead_time, dtype=float), (rows,))
+        return cls(num, den, delay)
+
+    def rows(self, index: IntArray) -> Rational:
+        """The rows named by `index`."""
+        return Rational(self.numerator[index], self.denominator[index], self.dead_time[index])
+
+
+@dataclass(frozen=True, slots=True)
+class Loops:
+    """M closed loops of one order n, nondimensional.
+
+    All polynomials (M, n + 1), descending powers of s·time_scale:
+    numerator    N = N_P N_C            denominator  D = D_P D_C, leading coefficient never 0
+    control      N_C D_P                load         N_P D_C
+    closed       N + D  (the characteristic polynomial where dead_time is 0)
+    so that L = N/D e^(-s θ), T = N e^(-s θ)/Δ, C S = control/Δ, P S = load e^(-s θ)/Δ, Δ = D + N e^(-s θ).
+
+    dead_time    (M,) θ in units of time_scale; all zero or all positive within one Loops
+    time_scale   (M,) [s]
+    plant_gain   (M,) what P was divided by and C multiplied by
+
+    value in SI = value · time_scale^time_power · plant_gain^gain_power (see the table of quantities).
+    """
+
+    numerator: FloatArray
+    denominator: FloatArray
+    control: FloatArray
+    load: FloatArray
+    closed: FloatArray
+    dead_time: FloatArray
+    time_scale: FloatArray
+    plant_gain: FloatArray
+
+    def __len__(self) -> int:
+        return int(self.numerator.shape[0])
+
+    @property
+    def order(self) -> int:
+        """n, the order of D."""
+        return int(self.denominator.shape[1]) - 1
+
+    def rows(self, index: IntArray) -> Loops:
+        """The loops named by `index` (integers or a mask)."""
+        return replace(self, **{f: getattr(self, f)[index] for f in self.__slots__})
+
+
+def exact_degree(polynomials: FloatArray) -> IntArray:
+    """Degree of each row, counting no leading zeros; -1 for a row of zeros. (R, w) -> (R,)."""
+    nonzero = polynomials != 0.0
+    degree: IntArray = np.where(nonzero.any(axis=1), polynomials.shape[1] - 1 - nonzero.argmax(axis=1), -1)
+    return degree
+
+
+def trimmed(polynomials: FloatArray, degree: int) -> FloatArray:
+    """Rows of exactly degree + 1 columns: leading zeros dropped or added."""
+    width = polynomials.shape[1]
+    if width >= degree + 1:
+        return polynomials[:, width - degree - 1 :]
+    return np.pad(polynomials, ((0, 0), (degree + 1 - width, 0)))
+
+
+def product(a: FloatArray, b: FloatArray) -> FloatArray:
+    """Row by row polynomial product, (M, p + 1) and (M, q + 1) -> (M, p + q + 1)."""
+    out = np.zeros((a.shape[0], a.shape[1] + b.shape[1] - 1))
+    for j in range(b.shape[1]):
+        out[:, j : j + a.shape[1]] += a * b[:, j, None]
+    return out
+
+
+def _stretched(polynomials: FloatArray, power: IntArray) -> tuple[FloatArray, IntArray]:
+    """p(s) in the variable s·2^power, divided by a power of two so that the largest coefficient is in [0.5, 1).
+
+    Returns the rows and the exponents taken out. Exact: exponents alone are touched.
+    """
+    width = polynomials.shape[1]
+    mantissa, exponent = np.frexp(polynomials)
+    shift = exponent - power[:, None] * np.arange(width - 1, -1, -1)[None, :]
+    largest = np.where(mantissa != 0.0, shift, np.iinfo(shift.dtype).min).max(axis=1)
+    return np.ldexp(mantissa, np.maximum(shift - largest[:, None], -2000).astype(np.int32)), largest
+
+
+def close(plants: Rational, compensators: Rational, plant_of: IntArray, compensator_of: IntArray) -> Loops:
+    """Close the loops of the named pairs.
+
+    plant_of, compensator_of : (M,) row numbers. Within one call every D_P D_C must have the same exact degree and
+    every dead time be zero or every one positive (`evaluate` sorts them so).
+    """
+    dp = int(exact_degree(plants.denominator[plant_of[:1]])[0])
+    dc = int(exact_degree(compensators.denominator[compensator_of[:1]])[0])
+    n = dp + dc
+    plant_num, plant_den = trimmed(plants.numerator, dp)[plant_of], trimmed(plants.denominator, dp)[plant_of]
+    comp_num = trimmed(compensators.numerator, dc)[compensator_of]
+    comp_den = trimmed(compensators.denominator, dc)[compensator_of]
+    delay = plants.dead_time[plant_of] + compensators.dead_time[compensator_of]
+
+    power = _time_power(plant_num, plant_den, comp_num, comp_den)
+    plant_num, a = _stretched(plant_num, power)
+    plant_den, b = _stretched(plant_den, power)
+    comp_num, c = _stretched(comp_num, power)
+    comp_den, d = _stretched(comp_den, power)
+    with np.errstate(over="ignore"):  # a gain beyond the number range is inf here and an unstable loop above
+        comp_num = np.ldexp(comp_num, np.clip(a - b + c - d, -4000, 4000).astype(np.int32)[:, None])
+        gain = np.ldexp(1.0, np.clip(a - b, -4000, 4000).astype(np.int32))
+    numerator, denominator = product(plant_num, comp_num), product(plant_den, comp_den)
+    scale = np.ldexp(1.0, power.astype(np.int32))
+    return Loops(
+        numerator=numerator,
+        denominator=denominator,
+        control=product(comp_num, plant_den),
+        load=product(plant_num, comp_den),
+        closed=numerator + denominator,
+        dead_time=delay / scale,
+        time_scale=scale,
+        plant_gain=gain,
+    )
+
+
+def _time_power(plant_num: FloatArray, plant_den: FloatArray, comp_num: FloatArray, comp_den: FloatArray) -> IntArray:
+    """log2 of the time scale: minus the mean log2 magnitude of the nonzero roots of D + N."""
+
+    def log2(values: FloatArray) -> FloatArray:
+        mantissa, exponent = np.frexp(values)
+        with np.errstate(divide="ignore"):
+            out: FloatArray = np.log2(np.abs(mantissa)) + exponent
+        return out
+
+    # D + N is formed from logarithms of its end coefficients alone, so that no product can overflow
+    dp, dc = plant_den.shape[1] - 1, comp_den.shape[1] - 1
+    n = dp + dc
+    first = log2(plant_den[:, 0]) + log2(comp_den[:, 0])
+    tails = np.full((plant_num.shape[0], n + 1), -np.inf)
+    for x, y in ((plant_den, comp_den), (plant_num, comp_num)):
+        logs_x, logs_y = log2(x), log2(y)
+        for i in range(dp + 1):
+            tails[:, i : i + dc + 1] = np.maximum(tails[:, i : i + dc + 1], logs_x[:, i, None] + logs_y)
+    last = tails.shape[1] - 1 - np.argmax(np.isfinite(tails)[:, ::-1], axis=1)
+    constant = np.take_along_axis(tails, last[:, None], axis=1)[:, 0]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        mean = np.where(last > 0, (constant - first) / np.maximum(last, 1), 0.0)
+    power: IntArray = -np.round(np.clip(np.nan_to_num(mean), -900, 900)).astype(np.intp)
+    return power
