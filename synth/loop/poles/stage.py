@@ -1,0 +1,223 @@
+"""The first stage: stability, poles, and every quantity that needs no more than coefficients and poles."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
+from synth.loop.closed_loop import Loops
+from synth.loop.poles.roots import closed_roots, routh_stable
+from synth.loop.poles.share import alike, damping_of, folded, share_in_step
+from synth.loop.polynomials import coefficient
+from synth.loop.quantities import Measure
+
+# Poles up to this many times the highest fall of abs(T) are counted ...
+REACH = 5.0
+# ... and, without dead time, any pole whose share in the reference step is at least this.
+LEAST_SHARE = 0.02
+
+
+@dataclass(frozen=True, slots=True)
+class PoleStage:
+    """What the poles say of M loops, in scaled time.
+
+    stable    (M,)
+    abscissa  (M,) largest real part of a pole; with dead time also of the chain, ln abs(L(∞)) / θ. Where 1 +
+              L(∞) is not positive a pole has passed through infinity: a finite positive stand-in. -inf with
+              no pole at all.
+    poles     (M, n) without dead time, (M, q) padded with NaN with it: the rightmost true roots. By
+              decreasing real part, pairs together, upper half first, exactly conjugate; reals have imaginary
+              part exactly 0.
+    values    scaled values of the measures that are ready; NaN where absent
+    """
+
+    stable: BoolArray
+    abscissa: FloatArray
+    poles: ComplexArray
+    values: dict[Measure, FloatArray]
+
+    def rows(self, index: IntArray | BoolArray) -> PoleStage:
+        """The loops named by `index`."""
+        values = {m: v[index] for m, v in self.values.items()}
+        return PoleStage(self.stable[index], self.abscissa[index], self.poles[index], values)
+
+    def count(
+        self, loops: Loops, measures: tuple[Measure, ...], highest_fall: FloatArray | None
+    ) -> dict[Measure, FloatArray]:
+        """Quantities over the counted poles: damping ratio by the usual rule, and natural frequency.
+
+        highest_fall : (M,) highest ω at which abs(T) falls through abs(T(0))/√2, NaN where there is none;
+        None when no measure needs it.
+        """
+        wanted = [m for m in measures if m.quantity == "natural_frequency" or _usual_damping(m)]
+        if not wanted:
+            return {}
+        if highest_fall is None:
+            raise ValueError("counting poles needs the highest fall of abs(T)")
+        poles, share, counted = counted_poles(loops, self.poles, highest_fall)
+        out: dict[Measure, FloatArray] = {}
+        for measure in wanted:
+            if measure.quantity == "damping_ratio":
+                out[measure] = least_damping(loops, poles, counted)
+            else:
+                out[measure] = _natural_frequency(loops, poles, share, counted)
+        return out
+
+
+def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
+    """Stability, poles and the quantities of the poles' stage that need no frequency.
+
+    An unstable loop keeps its decay rate (negative) and its damping ratio, taken over all its poles;
+    everything else is NaN.
+    """
+    names = {m.quantity for m in measures}
+    if _delayed(loops):
+        stable, abscissa, poles = _with_dead_time(loops)
+    else:
+        stable, abscissa, poles = _without_dead_time(loops)
+    values: dict[Measure, FloatArray] = {}
+    statics = _statics(loops, stable, names)
+    for measure in measures:
+        name = measure.quantity
+        if name == "decay_rate":
+            values[measure] = -abscissa
+        elif name in statics:
+            values[measure] = statics[name]
+        elif name == "damping_ratio":
+            values[measure] = _early_damping(loops, stable, poles, measure)
+    return PoleStage(stable, abscissa, poles, values)
+
+
+def counted_poles(
+    loops: Loops, poles: ComplexArray, highest_fall: FloatArray
+) -> tuple[ComplexArray, FloatArray, BoolArray]:
+    """Poles as far as counting needs them, their share in the reference step, and which are counted.
+
+    highest_fall : (M,), NaN where abs(T) never falls: all poles count there.
+    Returns poles (M, q), share (M, q) as a ratio (of abs(T(0)); where T(0) = 0 the bare residue), counted (M,
+    q). With dead time further poles are fetched, as far as the rule reaches, and share alone counts none.
+    """
+    delayed = _delayed(loops)
+    everything = ~np.isfinite(highest_fall)
+    if delayed:
+        poles = _reaching(loops, poles, np.where(everything, 0.0, REACH * np.nan_to_num(highest_fall)))
+    with np.errstate(invalid="ignore"):
+        size = np.abs(poles)
+        counted = everything[:, None] | (size <= REACH * highest_fall[:, None])
+    share = share_in_step(loops, poles)
+    if not delayed:
+        counted |= share >= LEAST_SHARE
+    no_step = coefficient(loops.numerator, 0) == 0.0
+    return poles, share, (counted | no_step[:, None]) & ~np.isnan(size)
+
+
+def least_damping(loops: Loops, poles: ComplexArray, counted: BoolArray) -> FloatArray:
+    """Smallest damping ratio of the counted poles; 1, the best there is, where none is counted. (M,)."""
+    out: FloatArray = np.where(counted, damping_of(loops, poles), 1.0).min(axis=1, initial=1.0)
+    return out
+
+
+def _usual_damping(measure: Measure) -> bool:
+    return measure.quantity == "damping_ratio" and measure.below is None
+
+
+def _delayed(loops: Loops) -> bool:
+    return len(loops) > 0 and bool(loops.dead_time[0] > 0.0)
+
+
+def _without_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray]:
+    poles = closed_roots(loops.closed)
+    with np.errstate(invalid="ignore", over="ignore"):
+        passed = ~(loops.closed[:, 0] * loops.denominator[:, 0] > 0.0)  # 1 + L(∞) <= 0
+    abscissa = np.where(np.isnan(poles.real), -np.inf, poles.real).max(axis=1, initial=-np.inf)
+    if passed.any():
+        with np.errstate(all="ignore"):
+            depth = np.abs(loops.closed[passed, 0] / loops.denominator[passed, 0])
+        stand_in = 1.0 + np.nan_to_num(np.minimum(depth, 1e30), nan=1e30)
+        abscissa[passed] = np.maximum(abscissa[passed], stand_in)
+    # Routh decides; where rounding has put a computed pole on or past the axis the loop is as good as on it
+    stable = routh_stable(loops.closed) & ~passed & (abscissa < 0.0)
+    return stable, abscissa, poles
+
+
+def _with_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray]:
+    from synth.loop.poles.delayed import delayed_poles, delayed_stable
+
+    poles = delayed_poles(loops, np.zeros(len(loops)))
+    abscissa = np.where(np.isnan(poles.real), -np.inf, poles.real).max(axis=1, initial=-np.inf)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        chain = np.log(np.abs(loops.numerator[:, 0] / loops.denominator[:, 0])) / loops.dead_time
+    abscissa = np.fmax(abscissa, chain)  # -inf where L(∞) = 0
+    return delayed_stable(loops) & (abscissa < 0.0), abscissa, poles
+
+
+def _reaching(loops: Loops, poles: ComplexArray, reach: FloatArray) -> ComplexArray:
+    """Poles of loops with dead time as far out as `reach`, and never fewer than are known already."""
+    from synth.loop.poles.delayed import delayed_poles
+
+    if not (reach > 0.0).any():
+        return poles
+    further: ComplexArray = delayed_poles(loops, reach)
+    return further
+
+
+def _statics(loops: Loops, stable: BoolArray, names: set[str]) -> dict[str, FloatArray]:
+    """Limits at s -> 0 from the last two coefficients; a dead time does not enter them.
+
+    The characteristic function at 0 is D(0) + N(0), not 0 for a stable loop. Coefficients of 0 stay 0 through
+    the products, so what should be exactly 0 (or 1) is.
+    """
+    numerator, denominator, load = loops.numerator, loops.denominator, loops.load
+    with np.errstate(all="ignore"):
+        base = np.where(stable, coefficient(loops.closed, 0), np.nan)
+        out: dict[str, FloatArray] = {}
+        if "final_value" in names:
+            out["final_value"] = coefficient(numerator, 0) / base
+        if "static_error" in names:
+            out["static_error"] = 100.0 * np.abs(coefficient(denominator, 0) / base)
+        if "velocity_error" in names:
+            slope = np.abs(coefficient(denominator, 1) / base)
+            out["velocity_error"] = _unless(coefficient(denominator, 0) != 0.0, slope, stable)
+        if "disturbance_residue" in names:
+            out["disturbance_residue"] = np.abs(coefficient(load, 0) / base)
+        if "disturbance_integral" in names:
+            area = np.abs(coefficient(load, 1) / base)
+            out["disturbance_integral"] = _unless(coefficient(load, 0) != 0.0, area, stable)
+    return out
+
+
+def _unless(diverges: BoolArray, value: FloatArray, stable: BoolArray) -> FloatArray:
+    return np.where(stable & diverges, np.inf, value)
+
+
+def _early_damping(loops: Loops, stable: BoolArray, poles: ComplexArray, measure: Measure) -> FloatArray:
+    """Damping ratio with `below`; by the usual rule for unstable loops alone (all poles), else NaN."""
+    if measure.below is None:
+        out = np.full(len(loops), np.nan)
+        if not stable.all():
+            bad = np.flatnonzero(~stable)
+            out[bad] = least_damping(loops.rows(bad), poles[bad], ~np.isnan(poles[bad]))
+        return out
+    limit = measure.below * loops.time_scale
+    if _delayed(loops):
+        poles = _reaching(loops, poles, limit)
+    with np.errstate(invalid="ignore"):
+        return least_damping(loops, poles, np.abs(poles) <= limit[:, None])
+
+
+def _natural_frequency(
+    loops: Loops, poles: ComplexArray, share: FloatArray, counted: BoolArray
+) -> FloatArray:
+    """abs(p) of the counted complex pair with the largest share; NaN where there is none."""
+    if poles.shape[1] == 0:
+        return np.full(len(loops), np.nan)
+    groups = alike(loops, poles)
+    eligible = counted & (poles.imag > 0.0) & ~np.isnan(share)
+    if groups is not None:
+        eligible &= ~folded(poles, groups)
+    best = np.where(eligible, share, -1.0).argmax(axis=1)[:, None]
+    size = np.take_along_axis(np.abs(poles), best, axis=1)[:, 0]
+    out: FloatArray = np.where(np.take_along_axis(eligible, best, axis=1)[:, 0], size, np.nan)
+    return out
