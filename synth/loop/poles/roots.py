@@ -26,7 +26,7 @@ def routh_stable(closed: FloatArray) -> BoolArray:
     """
     with np.errstate(all="ignore"):  # rows that have failed run on with what they have; their verdict stands
         upper = closed * np.sign(closed[:, :1])
-        stable: BoolArray = ((upper > 0.0) & np.isfinite(upper)).all(axis=1)
+        stable: BoolArray = np.all((upper > 0.0) & np.isfinite(upper), axis=1, keepdims=True)[:, 0]
         degree = closed.shape[1] - 1
         a, b = upper[:, 0::2], upper[:, 1::2]
         for _ in range(degree - 1):
