@@ -1,7 +1,7 @@
 """Formulas in s: parsed, never run.
 
-A parsed formula gives coefficient arrays for K plant cases (`rational`), a number for each case (`value`), or the
-response at complex s without multiplying anything out (`at`).
+A parsed formula gives coefficient arrays for K plant cases (`rational`), a number for each case (`value`), or
+the response at complex s without multiplying anything out (`at`).
 
 Letters: K plant cases, w columns.
 """
