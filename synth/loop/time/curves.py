@@ -1,0 +1,33 @@
+"""Step responses as curves, at times the caller chooses: what is drawn and recorded."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from synth.loop.arrays import FloatArray
+from synth.loop.closed_loop import Loops
+from synth.loop.poles.roots import closed_roots
+from synth.loop.time.modes import SIGNALS, at, step_modes
+
+
+def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """y and u of a unit reference step, and y of a unit step at the plant's input.
+
+    Parameters
+    ----------
+    loops : M loops, stable or not.
+    t : (T,) or (M, T) times >= 0 in units of each loop's time_scale; at 0 the value after the jump is given.
+
+    Returns
+    -------
+    y, u, d : (M, T) each, scaled by the loop's plant gain like every value of the core.
+    """
+    times = np.broadcast_to(t, (len(loops), np.asarray(t).shape[-1]))
+    if (loops.dead_time > 0.0).any():
+        from synth.loop.time.delayed import delayed_step_curves
+
+        delayed: tuple[FloatArray, FloatArray, FloatArray] = delayed_step_curves(loops, times)
+        return delayed
+    modes = step_modes(loops, closed_roots(loops.closed), SIGNALS)
+    out = at(modes, np.arange(len(loops)), times)
+    return out[:, 0], out[:, 1], out[:, 2]
