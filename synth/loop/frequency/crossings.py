@@ -1,0 +1,151 @@
+"""Where |L| = 1, where |T| passes |T(0)|/√2 and where L is real: all such frequencies of every loop.
+
+Each is a positive root of a polynomial in x = ω², bracketed by `isolation` and refined by Newton's method in ln ω on
+logarithms of the unsquared polynomials, which keeps the digits that squaring loses near light damping. With dead time
+the first kind alone is a polynomial's.
+
+Letters: M loops, F crossings.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
+from synth.loop.frequency.isolation import Brackets, isolate
+from synth.loop.frequency.response import CLOSED, D, N, Response, cross, evaluate, log_rates
+
+GAIN, FALL, PHASE = 0, 1, 2
+_ITERATIONS = 70  # bisection alone closes any bracket in fewer
+_SETTLED = 3e-14  # Newton step in ln ω
+
+
+@dataclass(frozen=True, slots=True)
+class Crossings:
+    """F crossings.
+
+    kind   GAIN (|L| = 1), FALL (|T| passes the level, in either direction) or PHASE (L is real)
+    row    the loop
+    w      frequency [1/time_scale]
+    down   FALL and GAIN: the magnitude falls through
+    loop   L(jω) there, complex
+    """
+
+    kind: IntArray
+    row: IntArray
+    w: FloatArray
+    down: BoolArray
+    loop: ComplexArray
+
+    def of(self, kind: int) -> Crossings:
+        """The crossings of one kind."""
+        at = np.flatnonzero(self.kind == kind)
+        return Crossings(self.kind[at], self.row[at], self.w[at], self.down[at], self.loop[at])
+
+
+def fall_level(response: Response) -> FloatArray:
+    """|T(0)|²/2 of each loop; 0 where T(0) = 0."""
+    ratio = response.ends[0, N] / (response.ends[0, N] + response.ends[0, D])
+    level: FloatArray = 0.5 * ratio * ratio
+    return level
+
+
+def crossings(response: Response, kinds: tuple[int, ...]) -> Crossings:
+    """All crossings of the kinds asked for; loops without dead time, or GAIN alone."""
+    squares, m = response.squares, response.loops
+    level = fall_level(response)
+    stack = []
+    for kind in kinds:
+        if kind == GAIN:
+            stack.append(squares[:, D] - squares[:, N])
+        elif kind == FALL:
+            # a loop with T(0) = 0 has no level: the zero polynomial has no roots
+            stack.append((level * squares[:, CLOSED] - squares[:, N]) * (level > 0.0))
+        else:
+            stack.append(_quadrature(response))
+    brackets = isolate(np.concatenate(stack, axis=1))
+    kind = np.array(kinds, dtype=np.intp)[brackets.row // m]
+    return refine(response, kind, brackets, level)
+
+
+def _quadrature(response: Response) -> FloatArray:
+    """Im(N conj D)/ω, ascending powers of x; coefficients that are rounding alone are set to zero."""
+    m = response.loops
+    even, odd = response.halves[:, 0, 0], response.halves[:, 0, 1]
+    en, on, ed, od = even[:, :m], odd[:, :m], even[:, m : 2 * m], odd[:, m : 2 * m]
+    n = len(response.squares) - 1
+    p = cross(on, ed, en, od, -1.0, 0, n)
+    size = cross(np.abs(on), np.abs(ed), np.abs(en), np.abs(od), 1.0, 0, n)
+    return np.where(np.abs(p) <= 4e-16 * size, 0.0, p)
+
+
+def refine(response: Response, kind: IntArray, brackets: Brackets, level: FloatArray) -> Crossings:
+    """Newton's method, kept inside the brackets, for all crossings at once."""
+    m = response.loops
+    row, negative = brackets.row % m, brackets.negative
+    bottom, top = 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high)
+    first = response.columns(N, row, 1)
+    second = response.columns(np.where(kind == FALL, CLOSED, D), row, 1)
+    columns = np.stack((first, second), axis=3)  # (h + 1, 2, 2, 2, F)
+    offset = np.where(kind == FALL, np.log(np.where(level[row] > 0.0, level[row], 1.0)), 0.0)
+    is_phase = kind == PHASE
+    sign = np.where(negative, 1.0, -1.0)  # of the logarithm of the ratio below the crossing
+    u = 0.5 * (bottom + top)
+    result = np.empty(len(row))
+    active = np.arange(len(row))
+    for iteration in range(_ITERATIONS):
+        excess, slope, side = _excess(columns, u, is_phase, offset)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            step = -excess / slope
+        before = side * sign > 0.0
+        bottom = np.where(before, u, bottom)
+        top = np.where(before, top, u)
+        new = u + step
+        tolerance = (_SETTLED if iteration < 10 else 30.0 * _SETTLED) * np.maximum(1.0, np.abs(u))
+        small = np.abs(step) < tolerance
+        inside = ((new >= bottom) & (new <= top)) | small
+        new = np.where(inside, new, 0.5 * (bottom + top))
+        done = (np.abs(new - u) < tolerance) | (top - bottom < 1e-15)
+        u = new
+        if done.any():
+            result[active[done]] = u[done]
+            keep = np.flatnonzero(~done)
+            active, u, bottom, top = active[keep], u[keep], bottom[keep], top[keep]
+            if not keep.size:
+                break
+            columns = columns[..., keep]
+            is_phase, offset, sign = is_phase[keep], offset[keep], sign[keep]
+    result[active] = u
+    w = np.exp(result)
+    return Crossings(kind, row, w, negative, loop_at(response, row, w))
+
+
+def _excess(
+    columns: FloatArray, u: FloatArray, is_phase: BoolArray, offset: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """What must vanish, its slope, and a number positive where the bracketing polynomial is negative.
+
+    What vanishes is ln|ratio|² less the offset, or the angle of ±N/D nearest to zero.
+    """
+    re, im = evaluate(columns, np.exp(u))  # (2 derivatives, 2 polynomials, F)
+    size, rate, turn = log_rates(re, im)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        gain = np.log(size[0] / size[1]) - offset
+        cosine = re[0, 0] * re[0, 1] + im[0, 0] * im[0, 1]
+        sine = im[0, 0] * re[0, 1] - re[0, 0] * im[0, 1]
+        angle = np.arctan(sine / cosine)
+    excess = np.where(is_phase, angle, gain)
+    slope = np.where(is_phase, turn[0] - turn[1], 2.0 * (rate[0] - rate[1]))
+    return excess, slope, np.where(is_phase, -sine, gain)
+
+
+def loop_at(response: Response, row: IntArray, w: FloatArray) -> ComplexArray:
+    """L(jω) of F points, dead time included."""
+    n_re, n_im = evaluate(response.columns(N, row, 0), w)
+    d_re, d_im = evaluate(response.columns(D, row, 0), w)
+    value: ComplexArray = (n_re[0] + 1j * n_im[0]) / (d_re[0] + 1j * d_im[0])
+    if response.dead_time.any():
+        value = value * np.exp(-1j * w * response.dead_time[row])
+    return value
