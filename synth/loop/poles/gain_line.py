@@ -53,8 +53,7 @@ def stable_gain_intervals(loops: Loops) -> list[tuple[Interval, ...]]:
     if len(loops) and loops.dead_time[0] > 0.0:
         from synth.loop.poles.gain_line_delayed import delayed_intervals
 
-        found: list[tuple[Interval, ...]] = delayed_intervals(loops)
-        return found
+        return delayed_intervals(loops)
     roots = closed_roots(_axis_polynomials(loops.numerator, loops.denominator))
     out = []
     for numerator, denominator, squares in zip(loops.numerator, loops.denominator, roots, strict=True):

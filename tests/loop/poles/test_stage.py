@@ -197,3 +197,44 @@ def test_a_gain_beyond_the_number_range_is_an_unstable_loop_and_no_warning():
     stage = pole_stage(close(plants, comps, np.array([0]), np.array([0])), POLES_STAGE)
     assert not stage.stable.any()
     assert not np.isposinf(stage.abscissa).any()
+
+
+def test_dead_time_statics_do_not_know_the_dead_time():
+    """PI on 3 e^(-2s)/(5s + 1): the same limits as without dead time."""
+    rational, delayed = (loop([3.0], [5.0, 1.0], [2.4, 0.3], [8.0, 0.0], theta) for theta in (0.0, 2.0))
+    stages = [pole_stage(one, POLES_STAGE) for one in (rational, delayed)]
+    assert all(stage.stable.all() for stage in stages)
+    statics = ("final_value", "static_error", "velocity_error", "disturbance_integral", "disturbance_residue")
+    for quantity in statics:
+        values = [si(one, stage, quantity) for one, stage in zip((rational, delayed), stages, strict=True)]
+        assert values[0] == values[1]
+
+
+def test_decay_rate_with_dead_time_takes_in_the_chain():
+    """L = 0.4 e^(-2s) (with a cancelled root at -5): the chain at ln 0.4 / θ is the slowest."""
+    loops = loop([1.0, 5.0], [1.0, 5.0], [0.4], dead_time=2.0)
+    stage = pole_stage(loops, POLES_STAGE)
+    assert stage.stable.all()
+    assert si(loops, stage, "decay_rate") == pytest.approx(-np.log(0.4) / 2.0, rel=1e-12)
+
+
+def test_dominant_root_of_an_integrator_with_dead_time():
+    """k e^(-s)/s: p + k e^(-p) = 0 has a real root between -1 and 0 for k below 1/e."""
+    loops = loop([1.0], [1.0, 0.0], [0.2], dead_time=1.0)
+    stage = pole_stage(loops, POLES_STAGE)
+    root = -si(loops, stage, "decay_rate")
+    assert root + 0.2 * np.exp(-root) == pytest.approx(0.0, abs=1e-14)
+    assert -1.0 < root < 0.0
+
+
+def test_counting_with_dead_time_reaches_as_far_as_the_rule_says():
+    loops = loop([1.0], [1.0, 0.0], [0.6], dead_time=1.0)
+    stage = pole_stage(loops, POLES_STAGE)
+    near = stage.count(loops, POLES_STAGE, np.array([1.0]) * loops.time_scale)
+    far = stage.count(loops, POLES_STAGE, np.array([20.0]) * loops.time_scale)
+    damping = Measure("damping_ratio")
+    assert far[damping][0] < near[damping][0]  # the chain's ratio falls with frequency
+    poles, _, counted = counted_poles(loops, stage.poles, np.array([20.0]) * loops.time_scale)
+    size = np.abs(poles[0][counted[0]]) / loops.time_scale[0]
+    assert 90.0 < size.max() <= 100.0
+    assert counted.sum() == 2 * 16  # one pair in each turn of 2π up to 100 rad/s
