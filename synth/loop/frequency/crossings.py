@@ -10,6 +10,7 @@ Letters: M loops, F crossings.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
@@ -82,63 +83,79 @@ def _quadrature(response: Response) -> FloatArray:
 
 
 def refine(response: Response, kind: IntArray, brackets: Brackets, level: FloatArray) -> Crossings:
-    """Newton's method, kept inside the brackets, for all crossings at once."""
-    m = response.loops
-    row, negative = brackets.row % m, brackets.negative
-    bottom, top = 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high)
-    first = response.columns(N, row, 1)
-    second = response.columns(np.where(kind == FALL, CLOSED, D), row, 1)
-    columns = np.stack((first, second), axis=3)  # (h + 1, 2, 2, 2, F)
-    offset = np.where(kind == FALL, np.log(np.where(level[row] > 0.0, level[row], 1.0)), 0.0)
-    is_phase = kind == PHASE
-    sign = np.where(negative, 1.0, -1.0)  # of the logarithm of the ratio below the crossing
+    """The crossings of bracketed roots of loops without dead time (or of kind GAIN)."""
+    row = brackets.row % response.loops
+    equation = _Rational(response, kind, row, level)
+    u = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
+    w = np.exp(u)
+    return Crossings(kind, row, w, brackets.negative, loop_at(response, row, w))
+
+
+class Equation(Protocol):
+    """F equations in u = ln ω."""
+
+    def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """What must vanish, its slope, and a number that is positive on the side `negative` of the brackets."""
+
+    def keep(self, index: IntArray) -> None:
+        """Go on with these equations alone."""
+
+
+def newton(equation: Equation, bottom: FloatArray, top: FloatArray, negative: BoolArray) -> FloatArray:
+    """Roots u of F equations by Newton's method, kept inside the brackets; a step that leaves them is a bisection."""
+    sign = np.where(negative, 1.0, -1.0)
     u = 0.5 * (bottom + top)
-    result = np.empty(len(row))
-    active = np.arange(len(row))
+    result = np.empty(len(u))
+    active = np.arange(len(u))
     for iteration in range(_ITERATIONS):
-        excess, slope, side = _excess(columns, u, is_phase, offset)
+        excess, slope, side = equation.at(u)
         with np.errstate(divide="ignore", invalid="ignore"):
-            step = -excess / slope
+            new = u - excess / slope
         before = side * sign > 0.0
         bottom = np.where(before, u, bottom)
         top = np.where(before, top, u)
-        new = u + step
         tolerance = (_SETTLED if iteration < 10 else 30.0 * _SETTLED) * np.maximum(1.0, np.abs(u))
-        small = np.abs(step) < tolerance
-        inside = ((new >= bottom) & (new <= top)) | small
-        new = np.where(inside, new, 0.5 * (bottom + top))
+        # a converged step may end beside a bracket whose end is the root itself: that is no reason to bisect
+        good = ((new >= bottom) & (new <= top)) | (np.abs(new - u) < tolerance)
+        new = np.where(good, new, 0.5 * (bottom + top))
         done = (np.abs(new - u) < tolerance) | (top - bottom < 1e-15)
         u = new
-        if done.any():
+        finished = np.count_nonzero(done)
+        if finished == len(u):
+            break
+        if 4 * finished > len(u):
             result[active[done]] = u[done]
             keep = np.flatnonzero(~done)
-            active, u, bottom, top = active[keep], u[keep], bottom[keep], top[keep]
-            if not keep.size:
-                break
-            columns = columns[..., keep]
-            is_phase, offset, sign = is_phase[keep], offset[keep], sign[keep]
+            active, u, bottom, top, sign = active[keep], u[keep], bottom[keep], top[keep], sign[keep]
+            equation.keep(keep)
     result[active] = u
-    w = np.exp(result)
-    return Crossings(kind, row, w, negative, loop_at(response, row, w))
+    return result
 
 
-def _excess(
-    columns: FloatArray, u: FloatArray, is_phase: BoolArray, offset: FloatArray
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """What must vanish, its slope, and a number positive where the bracketing polynomial is negative.
+class _Rational:
+    """ln|ratio|² less its level, or the angle of ±N/D nearest to zero, for loops without dead time."""
 
-    What vanishes is ln|ratio|² less the offset, or the angle of ±N/D nearest to zero.
-    """
-    re, im = evaluate(columns, np.exp(u))  # (2 derivatives, 2 polynomials, F)
-    size, rate, turn = log_rates(re, im)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        gain = np.log(size[0] / size[1]) - offset
-        cosine = re[0, 0] * re[0, 1] + im[0, 0] * im[0, 1]
-        sine = im[0, 0] * re[0, 1] - re[0, 0] * im[0, 1]
-        angle = np.arctan(sine / cosine)
-    excess = np.where(is_phase, angle, gain)
-    slope = np.where(is_phase, turn[0] - turn[1], 2.0 * (rate[0] - rate[1]))
-    return excess, slope, np.where(is_phase, -sine, gain)
+    def __init__(self, response: Response, kind: IntArray, row: IntArray, level: FloatArray) -> None:
+        first = response.columns(N, row, 1)
+        second = response.columns(np.where(kind == FALL, CLOSED, D), row, 1)
+        self.columns = np.stack((first, second), axis=3)  # (h + 1, 2, 2, 2, F)
+        self.offset = np.where(kind == FALL, np.log(np.where(level > 0.0, level, 1.0))[row], 0.0)
+        self.phase = kind == PHASE
+
+    def keep(self, index: IntArray) -> None:
+        self.columns, self.offset, self.phase = self.columns[..., index], self.offset[index], self.phase[index]
+
+    def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+        re, im = evaluate(self.columns, np.exp(u))  # (2 derivatives, 2 polynomials, F)
+        size, rate, turn = log_rates(re, im)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            gain = np.log(size[0] / size[1]) - self.offset
+            cosine = re[0, 0] * re[0, 1] + im[0, 0] * im[0, 1]
+            sine = im[0, 0] * re[0, 1] - re[0, 0] * im[0, 1]
+            angle = np.arctan(sine / cosine)
+        excess = np.where(self.phase, angle, gain)
+        slope = np.where(self.phase, turn[0] - turn[1], 2.0 * (rate[0] - rate[1]))
+        return excess, slope, np.where(self.phase, -sine, gain)
 
 
 def loop_at(response: Response, row: IntArray, w: FloatArray) -> ComplexArray:

@@ -25,6 +25,7 @@ _OCTAVES = 40  # cells of one window: x from 2^-20 to 2^20, three decades of ω 
 _CELLS = _OCTAVES + 2  # and the two ends, to 0 and to infinity
 _WINDOWS = 40  # windows to either side before giving up: beyond any double
 _NARROW = 1e-10  # relative width below which two roots are one touch
+_LIGHT = 0.03  # relative width of an interval below which an undecided one is called a light root
 _BLOCK = 150_000  # doubles of one matrix product: it stays in the second-level cache
 
 
@@ -55,24 +56,45 @@ def isolate(polynomials: FloatArray, hint: FloatArray | None = None) -> Brackets
     Brackets in no order. Roots closer together than 1e-10 (relative) may be reported as none or one.
     """
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]] = []
-    signs = _filled_signs(polynomials)
-    rows = np.flatnonzero(changes(signs))  # Descartes on the whole axis: often there is nothing to do
-    polynomials, signs = polynomials[:, rows], signs[:, rows]
-    if hint is not None:
-        hint = hint[rows]
-    work = [(np.arange(len(rows)), 0, 0)] if rows.size else []
-    while work:
-        which, shift, side = work.pop()
-        below, above = _scan(polynomials, signs, hint, which, shift, found)
-        if side <= 0 and below.size and shift > -_WINDOWS:
-            work.append((below, shift - 1, -1))
-        if side >= 0 and above.size and shift < _WINDOWS:
-            work.append((above, shift + 1, 1))
+    _search(polynomials, hint, found, None)
     if not found:
         nothing = np.empty(0)
         return Brackets(np.empty(0, dtype=np.intp), nothing, nothing, np.empty(0, dtype=bool))
     row, low, high, negative = (np.concatenate(part) for part in zip(*found, strict=True))
-    return Brackets(rows[row], low, high, negative)
+    return Brackets(row, low, high, negative)
+
+
+def light_roots(polynomials: FloatArray) -> tuple[IntArray, FloatArray]:
+    """Points that crowd round roots near the positive axis: (row, x), of polynomials positive on it.
+
+    The ends of all intervals narrower than 3 % that could not be decided: of |p(jω)|² they are the frequencies round
+    a lightly damped root of p (damping below some 0.03), the closer together the lighter it is.
+    """
+    near: list[tuple[IntArray, FloatArray, FloatArray]] = []
+    _search(polynomials, None, [], near)
+    if not near:
+        return np.empty(0, dtype=np.intp), np.empty(0)
+    row, low, high = (np.concatenate(part) for part in zip(*near, strict=True))
+    return np.concatenate((row, row, row)), np.concatenate((low, 0.5 * (low + high), high))
+
+
+def _search(
+    polynomials: FloatArray,
+    hint: FloatArray | None,
+    found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
+    near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
+) -> None:
+    """All windows that hold roots, beginning with the central one."""
+    signs = _filled_signs(polynomials)
+    rows = np.flatnonzero(changes(signs))  # Descartes on the whole axis: often there is nothing to do
+    work = [(rows, 0, 0)] if rows.size else []
+    while work:
+        which, shift, side = work.pop()
+        below, above = _scan(polynomials, signs, hint, which, shift, found, near)
+        if side <= 0 and below.size and shift > -_WINDOWS:
+            work.append((below, shift - 1, -1))
+        if side >= 0 and above.size and shift < _WINDOWS:
+            work.append((above, shift + 1, 1))
 
 
 def changes(negative: BoolArray) -> FloatArray:
@@ -114,6 +136,7 @@ def _scan(
     which: IntArray,
     shift: int,
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
+    near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
 ) -> tuple[IntArray, IntArray]:
     """One window, 2^(40 shift) times the central one: adds to `found`, returns rows with roots below and above it."""
     m = len(polynomials) - 1
@@ -122,7 +145,7 @@ def _scan(
     block = max(1, _BLOCK // len(matrix))
     for start in range(0, len(which), block):
         row = which[start : start + block]
-        p = polynomials[:, row] if shift else polynomials[:, row[0] : row[0] + len(row)]
+        p = polynomials[:, row]
         if shift:
             p = _moved(p, shift)
         coefficients = (matrix @ p).reshape(m + 1, _CELLS, -1)
@@ -143,7 +166,7 @@ def _scan(
         if many.size:
             at = row[column[many]]
             cut = np.zeros(len(many)) if hint is None else hint[at] / low[many] - 1.0
-            _halve(coefficients[:, 1 + cell[many], column[many]], at, low[many], 2.0 * low[many], cut, found)
+            _halve(coefficients[:, 1 + cell[many], column[many]], at, low[many], 2.0 * low[many], cut, found, near)
     return np.concatenate(below), np.concatenate(above)
 
 
@@ -173,6 +196,7 @@ def _halve(
     high: FloatArray,
     cut: FloatArray,
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
+    near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
 ) -> None:
     """Cut intervals until each holds one root or none. cut : (F,) where to cut first, 0..1 of the width."""
     cut = np.where((cut > 1e-9) & (cut < 1.0 - 1e-9), cut, 0.5)
@@ -188,5 +212,8 @@ def _halve(
         done = (count == 1) | ((count % 2 == 1) & narrow)
         found.append((row[done], low[done], high[done], negative[0, done]))
         keep = np.flatnonzero((count > 1) & ~narrow)
+        if near is not None:
+            close = keep[(high[keep] - low[keep]) < _LIGHT * high[keep]]
+            near.append((row[close], low[close], high[close]))
         coefficients, row, low, high = coefficients[:, keep], row[keep], low[keep], high[keep]
         cut = np.full(len(row), 0.5)

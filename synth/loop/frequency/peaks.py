@@ -12,6 +12,8 @@ Letters: M loops, R = kinds · M curves.
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
@@ -39,7 +41,7 @@ def suprema(response: Response, poles: ComplexArray, keys: tuple[str, ...]) -> d
     row = np.tile(np.arange(m), len(keys))
     best, at = _coarse(response, poles, numerators)
     inside = np.flatnonzero(at > 0.0)
-    _climb(response, curve[inside], row[inside], inside, best, at)
+    climb(_rational(response, curve[inside], row[inside]), inside, at[inside], best, at)
 
     squares = response.squares
     todo = np.arange(len(row))
@@ -53,7 +55,7 @@ def suprema(response: Response, poles: ComplexArray, keys: tuple[str, ...]) -> d
         which, w = _between(brackets.row, brackets.low, brackets.high)
         chosen = todo[which]
         before = best.copy()
-        _climb(response, curve[chosen], row[chosen], chosen, best, at, np.sqrt(w))
+        climb(_rational(response, curve[chosen], row[chosen]), chosen, np.sqrt(w), best, at)
         todo = np.flatnonzero(best > before * (1.0 + 1e-12))
         if not todo.size:
             break
@@ -108,30 +110,29 @@ def _size(response: Response, polynomial: IntArray, row: IntArray, w: FloatArray
     return out
 
 
-def _climb(
-    response: Response,
-    curve: IntArray,
-    row: IntArray,
+def climb(
+    derivatives: Callable[[FloatArray], tuple[FloatArray, FloatArray]],
     target: IntArray,
+    start: FloatArray,
     best: FloatArray,
     at: FloatArray,
-    start: FloatArray | None = None,
 ) -> None:
-    """Newton's method on the slope of ln|P/Δ| in ln ω from `start` (default: `at`); keeps the best value met."""
+    """Newton's method on the slope of ln|P/Δ| in ln ω from F starts [ω]; keeps the best value met.
+
+    derivatives : ω (F,) -> real and imaginary parts, (3, 2, F), of P and Δ and two derivatives in ln ω.
+    target : (F,) place in `best` and `at` (ω of the best) that each start may raise.
+    """
     if not target.size:
         return
-    columns = np.stack(
-        (response.columns(curve, row, 2), response.columns(np.full(len(row), CLOSED), row, 2)), axis=3
-    )
-    u = np.log(at[target] if start is None else start)
+    u = np.log(start)
     low, high = u - 0.35, u + 0.35
     for _ in range(_STEPS):
         w = np.exp(u)
-        re, im = evaluate(columns, w)
+        re, im = derivatives(w)
         size, rate, turn = log_rates(re, im)
         value = np.sqrt(size[0] / size[1])
         np.maximum.at(best, target, value)
-        met = best[target] == value
+        met = np.flatnonzero(best[target] == value)
         at[target[met]] = w[met]
         bend = (re[2] * re[0] + im[2] * im[0]) / size - rate * rate + turn * turn
         slope, curvature = rate[0] - rate[1], bend[0] - bend[1]
@@ -141,6 +142,14 @@ def _climb(
         if np.abs(new - u).max() < 1e-9:
             break
         u = new
+
+
+def _rational(
+    response: Response, curve: IntArray, row: IntArray
+) -> Callable[[FloatArray], tuple[FloatArray, FloatArray]]:
+    closed = response.columns(CLOSED, row, 2)
+    columns = np.stack((response.columns(curve, row, 2), closed), axis=3)
+    return lambda w: evaluate(columns, w)
 
 
 def _margin(top: FloatArray, bottom: FloatArray, best: FloatArray, at: FloatArray) -> FloatArray:
