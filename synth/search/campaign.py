@@ -1,0 +1,259 @@
+"""The campaign: structures take turns until each is settled or has used its share.
+
+Rounds of starts and polish for all structures in lockstep; the cases that bind join the active set; structures whose
+restarts do not agree get more starts and a short differential evolution. What it finds is left in `standings`.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from synth.loop.arrays import FloatArray, IntArray
+from synth.loop.quantities import Measure
+from synth.search.archive import Rows, distinct, joined
+from synth.search.evolution import evolve
+from synth.search.objective import Objective
+from synth.search.outcome import Progress, ProgressCall, Settings, StopCall, Task
+from synth.search.polish import Pace, Polished, polish
+from synth.search.standing import FINE, Standing
+from synth.search.starts import SOURCES, sample
+
+
+@dataclass(frozen=True, slots=True)
+class Effort:
+    """What a budget allows: loops scored in all, rounds a structure, starts of a first round, generations."""
+
+    evaluations: int
+    rounds: int
+    starts: int
+    generations: int
+    trials: int  # of the outer exploration, each a batch
+
+
+EFFORTS = {
+    "quick": Effort(8_000, 1, 64, 0, 0),
+    "normal": Effort(60_000, 4, 96, 12, 40),
+    "thorough": Effort(600_000, 8, 192, 20, 400),
+}
+PICKS = 6
+MOST_CASE_TURNS = 12
+
+
+class Campaign:
+    """One search in progress.
+
+    origins   where starts came from, by the number that rows carry
+    halted    the user or the time limit ended it early
+    """
+
+    def __init__(
+        self,
+        task: Task,
+        settings: Settings,
+        *,
+        extra: tuple[Measure, ...] = (),
+        progress: ProgressCall | None = None,
+        stop: StopCall | None = None,
+    ) -> None:
+        self.task, self.settings = task, settings
+        self.effort = EFFORTS[settings.budget]
+        self.objective = Objective(task, extra)
+        self.standings = [Standing(i, len(s.parameters)) for i, s in enumerate(task.structures)]
+        self.origins: list[str] = list(SOURCES)
+        self.begun = time.perf_counter()
+        self.interrupted = False
+        self.limited = False
+        self.stage = "starts"
+        self.stages: dict[str, float] = {}
+        self._lap = self.begun
+        self._progress, self._stop = progress, stop
+
+    # -- time and news
+
+    def halted(self) -> bool:
+        """Tell the world how it stands, and whether to stop now."""
+        if self._progress is not None:
+            self._progress(self.news())
+        if self._stop is not None and self._stop():
+            self.interrupted = True
+        limit = self.settings.time_limit
+        if limit is not None and time.perf_counter() - self.begun > limit:
+            self.limited = True
+        return self.interrupted or self.limited
+
+    def news(self) -> Progress:
+        """How it stands."""
+        names = [s.name for s in self.task.structures]
+        found = {names[s.number]: s.best for s in self.standings if s.guides.size}
+        best = max(found.items(), key=lambda item: item[1]) if found else None
+        return Progress(
+            self.stage,
+            self.objective.evaluations,
+            self.effort.evaluations,
+            time.perf_counter() - self.begun,
+            best,
+            found,
+        )
+
+    def enter(self, stage: str) -> None:
+        """Begin a stage; the time since the last one is booked on that one."""
+        now = time.perf_counter()
+        self.stages[self.stage] = self.stages.get(self.stage, 0.0) + now - self._lap
+        self.stage, self._lap = stage, now
+
+    def origin(self, text: str) -> int:
+        """The number of a source of starts."""
+        if text not in self.origins:
+            self.origins.append(text)
+        return self.origins.index(text)
+
+    # -- the search
+
+    def run(self, seeds: Rows | None = None) -> None:
+        """Search every structure to a verdict, as far as the budget goes."""
+        numbers = list(range(len(self.standings)))
+        self.round(numbers, seeds)
+        self.enter("cases")
+        self.examine(numbers)
+        for _ in range(1, self.effort.rounds):
+            open_ = [s.number for s in self.standings if not s.settled]
+            if not open_ or self.halted() or self.objective.evaluations >= self.effort.evaluations:
+                break
+            self.enter("rounds")
+            self.round(open_, None)
+            self.enter("cases")
+            self.examine(open_)
+        self.enter("rounds")
+
+    def round(self, numbers: list[int], seeds: Rows | None) -> None:
+        """Starts, picks and polish of these structures in lockstep; from the second round on with evolution."""
+        before = self.objective.evaluations
+        parts = [self._starts(n) for n in numbers]
+        if seeds is not None and len(seeds):
+            parts.append(seeds)
+        rows = joined(parts)
+        scores = self.objective.score(rows)
+        guide = scores.guide()
+        picks = []
+        for n in numbers:
+            index = np.flatnonzero(rows.structure == n)
+            standing = self.standings[n]
+            if standing.rounds == 0:
+                alive = scores.stable[index]
+                signs = tuple(s for s in (1, -1) if np.any(alive & (rows.sign[index] == s)))
+                standing.signs = signs or (1, -1)
+            picks.append(index[distinct(rows.take(index), guide[index], PICKS)])
+        later = [n for n in numbers if self.standings[n].rounds > 0]
+        self._polish(rows.take(np.concatenate(picks)), Pace())
+        if later and self.effort.generations and not self.halted():
+            self._evolve(later, rows, guide)
+        share = (self.objective.evaluations - before) // max(len(numbers), 1)
+        for n in numbers:
+            self.standings[n].rounds += 1
+            self.standings[n].evaluations += share
+            self.standings[n].judge()
+        self.halted()
+
+    def _starts(self, n: int) -> Rows:
+        standing = self.standings[n]
+        count = self.effort.starts * min(2**standing.rounds, 8)
+        seed = self.settings.seed * 1009 + standing.rounds * 97 + n
+        return sample(self.objective, n, count, seed, standing.signs)
+
+    def _polish(self, rows: Rows, pace: Pace) -> Polished:
+        done = polish(self.objective, rows, pace=pace, stop=self.halted)
+        self._record(done)
+        return done
+
+    def _record(self, done: Polished) -> None:
+        for n in np.unique(done.rows.structure):
+            index = np.flatnonzero(done.rows.structure == n)
+            index = index[np.argsort(~done.finished[index], kind="stable")]
+            finished = int(done.finished[index].sum())
+            self.standings[int(n)].record(done.rows.take(index), done.merit[index], finished)
+
+    def _evolve(self, numbers: list[int], rows: Rows, guide: FloatArray) -> None:
+        """Members: the tops and the best distinct starts; the three best end in a short polish."""
+        parts = []
+        for n in numbers:
+            tops = self.standings[n].tops
+            index = np.flatnonzero(rows.structure == n)
+            size = 8 * self.standings[n].parameters
+            fresh = rows.take(index[distinct(rows.take(index), guide[index], size, 0.05)])
+            members = joined([tops.take(np.arange(min(3, len(tops)))), fresh]) if tops is not None else fresh
+            if len(members) >= 4:
+                parts.append(members.take(np.arange(min(size, len(members)))))
+        if not parts:
+            return
+        rng = np.random.default_rng([self.settings.seed, self.objective.evaluations])
+        members, score = evolve(
+            self.objective, joined(parts), generations=self.effort.generations, rng=rng, stop=self.halted
+        )
+        picks = []
+        for n in np.unique(members.structure):
+            index = np.flatnonzero(members.structure == n)
+            picks.append(index[distinct(members.take(index), score[index], 3, 0.05)])
+        self._polish(members.take(np.concatenate(picks)), Pace(radius=0.1, halve=()))
+
+    # -- plant cases
+
+    def examine(self, numbers: list[int]) -> None:
+        """Confirm the best of each structure on all cases; the worst violated case joins its active set, and the
+        structure is polished on from its tops."""
+        if len(self.objective.case_names) == 1:
+            return
+        for _ in range(MOST_CASE_TURNS):
+            changed = self._violated(numbers)
+            if not changed:
+                break
+            self._restart(changed)
+            if self.halted():
+                break
+
+    def _violated(self, numbers: list[int]) -> list[int]:
+        """Structures whose best loses on a case that is not active; that case becomes active."""
+        numbers = [n for n in numbers if self.standings[n].tops is not None]
+        everything = tuple(range(len(self.objective.case_names)))
+        heads = joined([self._top(n) for n in numbers])
+        cases = [everything for _ in self.standings]
+        scores = self.objective.score(heads, cases, remember=False)
+        by_case = scores.search.min(axis=2)
+        changed = []
+        for i, n in enumerate(numbers):
+            worst = int(by_case[i].argmin())
+            if by_case[i, worst] < self.standings[n].best - FINE and worst not in self.objective.active[n]:
+                self.objective.active[n] = (*self.objective.active[n], worst)
+                changed.append(n)
+        return changed
+
+    def _top(self, n: int) -> Rows:
+        tops = self.standings[n].tops
+        if tops is None:
+            raise ValueError(f"structure {n} was not searched yet")
+        return tops.take(np.array([0]))
+
+    def _restart(self, numbers: list[int]) -> None:
+        """The active cases changed: what was found is scored anew and polished on."""
+        parts = []
+        for n in numbers:
+            tops = self.standings[n].tops
+            if tops is not None:
+                parts.append(tops.take(np.arange(min(4, len(tops)))))
+            standing = self.standings[n]
+            standing.tops, standing.guides, standing.optima = None, np.zeros(0), []
+        self._polish(joined(parts), Pace(radius=0.15, halve=(3,)))
+        for n in numbers:
+            self.standings[n].judge()
+
+    def heads(self) -> tuple[IntArray, Rows, FloatArray]:
+        """The best of every structure: its number, its row, its worst search slack on the active cases."""
+        found = [s for s in self.standings if s.tops is not None]
+        rows = joined([self._top(s.number) for s in found])
+        return np.array([s.number for s in found]), rows, np.array([s.best for s in found])
+
+
+Stop = Callable[[], bool]

@@ -1,0 +1,230 @@
+"""A batch of search points in, slacks out. The active cases live here.
+
+S rows, A active cases at most (padded), R requirements, Q measures, K cases known.
+
+Two slacks are kept. The exact one decides what is met. The search slack has the same sign and a slope where the
+exact one has none: compressed below -1, a continuous stand-in for a settling time that is not met, and far below
+everything a bounded term in the spectral abscissa for a loop that is not stable.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.closed_loop import Rational
+from synth.loop.evaluate import evaluate
+from synth.loop.quantities import Measure
+from synth.requirements import judged, slack_of
+from synth.search.archive import Archive, Rows
+from synth.search.outcome import Task
+from synth.search.scales import Scales, scales_of
+
+ABSENT = -12.0  # search slack of a quantity that a stable loop does not have; below any compressed slack
+UNSTABLE = -20.0  # and of every requirement on a loop that is not stable, less a term in the abscissa
+
+
+@dataclass(frozen=True, slots=True)
+class Scores:
+    """What a batch scored.
+
+    case    (S, A) case number, -1 where a row has fewer active cases
+    exact   (S, A, R) slack, -inf where absent, +inf where not judged
+    search  (S, A, R) slack with slopes, +inf where not judged
+    values  (S, A, Q), NaN absent
+    stable  (S,) on all the cases judged
+    """
+
+    case: IntArray
+    exact: FloatArray
+    search: FloatArray
+    values: FloatArray
+    stable: BoolArray
+
+    def worst(self) -> FloatArray:
+        """(S,) exact worst slack over requirements and the cases judged."""
+        out: FloatArray = self.exact.min(axis=(1, 2))
+        return out
+
+    def guide(self) -> FloatArray:
+        """(S,) worst search slack."""
+        out: FloatArray = self.search.min(axis=(1, 2))
+        return out
+
+    def take(self, index: IntArray) -> Scores:
+        """The rows named by `index`."""
+        return Scores(
+            self.case[index], self.exact[index], self.search[index], self.values[index], self.stable[index]
+        )
+
+
+class Objective:
+    """Scores rows of any structure against the sheet, on the cases that are active for each structure.
+
+    measures   Q: those of the requirements, then what was asked for besides, then settling stand-ins
+    active     for each structure the case numbers it is judged on; starts with the nominal
+    evaluations  loops scored so far (one compensator on one plant)
+    """
+
+    def __init__(self, task: Task, extra: tuple[Measure, ...] = ()) -> None:
+        self.task = task
+        self.structures = task.structures
+        self.width = max(len(s.parameters) for s in task.structures)
+        self.plants = task.plants
+        self.case_names = task.case_names
+        self.scales: Scales = scales_of(task.plants)
+        self.boxes = [s.box() for s in task.structures]
+        self.active: list[tuple[int, ...]] = [(0,) for _ in task.structures]
+        self.archive = Archive()
+        self.evaluations = 0
+        wanted = [b.measure for b in task.bounds] + list(extra)
+        self.measures = tuple(dict.fromkeys(wanted))
+        self.column = [self.measures.index(b.measure) for b in task.bounds]
+        self._late: dict[int, int] = {}  # requirement -> column of its stand-in
+        late = []
+        for r, bound in enumerate(task.bounds):
+            if bound.measure.quantity == "settling_time" and bound.side == "max" and bound.limit > 0.0:
+                self._late[r] = len(self.measures) + len(late)
+                late.append(Measure("late_deviation", after=bound.limit))
+        self.measures_asked = self.measures + tuple(late)
+        self.judged = judged(self.task.bounds, self.case_names)
+
+    def add_cases(self, plants: Rational, names: tuple[str, ...]) -> None:
+        """Make further plants cases of the search (points inside the tolerance box that failed)."""
+        self.plants = stacked(self.plants, plants)
+        self.case_names = self.case_names + names
+        self.judged = judged(self.task.bounds, self.case_names)
+
+    def theta(self, rows: Rows) -> list[FloatArray]:
+        """Tuned values in SI, one array (P,) a row."""
+        out: list[FloatArray] = [np.zeros(0)] * len(rows)
+        for s in np.unique(rows.structure):
+            index = np.flatnonzero(rows.structure == s)
+            for i, one in zip(index, self._theta(rows, int(s), index), strict=True):
+                out[int(i)] = one
+        return out
+
+    def _theta(self, rows: Rows, s: int, index: IntArray) -> FloatArray:
+        structure = self.structures[s]
+        x = rows.x[index, : len(structure.parameters)]
+        return structure.from_search(x, rows.sign[index], self.scales.time, self.scales.gain)
+
+    def rows_of(self, s: int, theta: FloatArray, origin: IntArray | None = None) -> Rows:
+        """Rows of structure s from tuned values (B, P), brought inside its box."""
+        structure = self.structures[s]
+        x, sign = structure.to_search(theta, self.scales.time, self.scales.gain)
+        wide = np.zeros((len(theta), self.width))
+        wide[:, : x.shape[1]] = np.clip(x, *self.boxes[s])
+        start = np.full(len(theta), -1) if origin is None else origin
+        return Rows(np.full(len(theta), s), wide, sign, start)
+
+    def realise(self, rows: Rows) -> Rational:
+        """C(s) of every row, padded to one width."""
+        width = 1 + max((self.structures[int(s)].order for s in np.unique(rows.structure)), default=0)
+        numerator, denominator = np.zeros((len(rows), width)), np.zeros((len(rows), width))
+        for s in np.unique(rows.structure):
+            index = np.flatnonzero(rows.structure == s)
+            made = self.structures[int(s)].realise(self._theta(rows, int(s), index))
+            numerator[index, width - made.numerator.shape[1] :] = made.numerator
+            denominator[index, width - made.denominator.shape[1] :] = made.denominator
+        return Rational(numerator, denominator, np.zeros(len(rows)))
+
+    def score(self, rows: Rows, cases: list[tuple[int, ...]] | None = None, remember: bool = True) -> Scores:
+        """Score every row on the active cases of its structure, or on the cases given for each structure."""
+        judged_on = self.active if cases is None else cases
+        count = np.array([len(judged_on[s]) for s in range(len(self.structures))])[rows.structure]
+        most = int(count.max(initial=1))
+        table = np.full((len(self.structures), most), -1)
+        for s, chosen in enumerate(judged_on):
+            table[s, : min(len(chosen), most)] = chosen[:most]
+        case = table[rows.structure]
+        real = case >= 0
+        row, slot = np.nonzero(real)
+        found = evaluate(
+            self.plants,
+            self.realise(rows),
+            measures=self.measures_asked,
+            reference_step=self.task.reference_step,
+            pairs=(row, case[row, slot]),
+        )
+        self.evaluations += len(row)
+        exact, search = self.slacks(found.values, found.stable, found.abscissa, case[row, slot])
+        shape = (len(rows), most)
+        scores = Scores(
+            case,
+            _spread(exact, row, slot, shape, np.inf),
+            _spread(search, row, slot, shape, np.inf),
+            _spread(found.values[:, : len(self.measures)], row, slot, shape, np.nan),
+            np.bincount(row[~found.stable], minlength=len(rows)) == 0,
+        )
+        if remember:
+            self.archive.add(rows, scores.exact.min(axis=1), self.worst_values(scores), count)
+        return scores
+
+    def slacks(
+        self, values: FloatArray, stable: BoolArray, abscissa: FloatArray, case: IntArray
+    ) -> tuple[FloatArray, FloatArray]:
+        """Exact and search slacks of M loops. values (M, Q), stable, abscissa, case (M,) -> (M, R) twice."""
+        exact = np.empty((len(values), len(self.task.bounds)))
+        search = np.empty_like(exact)
+        for r, bound in enumerate(self.task.bounds):
+            s = slack_of(bound, values[:, self.column[r]])
+            exact[:, r] = s
+            if r in self._late:
+                band = 100.0 * bound.measure.band
+                with np.errstate(invalid="ignore"):
+                    stand_in = (band - values[:, self._late[r]]) / band
+                s = np.where((s < 0.0) & np.isfinite(stand_in), np.minimum(stand_in, -1e-9), s)
+            search[:, r] = compressed(s)
+        growth = np.maximum(np.nan_to_num(abscissa, nan=np.inf, posinf=np.inf), 0.0) * self.scales.time
+        exact[~stable] = -np.inf
+        with np.errstate(invalid="ignore"):
+            term = np.where(np.isinf(growth), 1.0, growth / (1.0 + growth))
+        search[~stable] = (UNSTABLE - 5.0 * term)[~stable, None]
+        exact[~self.judged[case]] = np.inf
+        search[~self.judged[case] & stable[:, None]] = np.inf
+        return exact, search
+
+    def worst_values(self, scores: Scores) -> FloatArray:
+        """(S, Q) each measure on its worst case: the largest where small is good, the smallest where large is."""
+        out = np.empty((scores.values.shape[0], scores.values.shape[2]))
+        absent = np.isnan(scores.values) & (scores.case >= 0)[:, :, None]
+        for q, measure in enumerate(self.measures):
+            column = scores.values[:, :, q]
+            if measure.row.better == "max":
+                out[:, q] = np.where(np.isnan(column), np.inf, column).min(axis=1)
+            else:
+                out[:, q] = np.where(np.isnan(column), -np.inf, column).max(axis=1)
+        out[absent.any(axis=1)] = np.nan
+        return out
+
+
+def compressed(slack: FloatArray) -> FloatArray:
+    """Slack with a slope everywhere: -1 - ln(-slack) below -1, and a floor for what is absent."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        deep = -1.0 - np.log(np.where(slack < -1.0, -slack, 1.0))
+    out: FloatArray = np.where(np.isnan(slack), ABSENT, np.where(slack < -1.0, np.maximum(deep, ABSENT), slack))
+    return out
+
+
+def stacked(a: Rational, b: Rational) -> Rational:
+    """Rows of a, then rows of b."""
+
+    def wide(p: FloatArray, width: int) -> FloatArray:
+        return np.pad(p, ((0, 0), (width - p.shape[1], 0)))
+
+    top = max(a.numerator.shape[1], b.numerator.shape[1])
+    low = max(a.denominator.shape[1], b.denominator.shape[1])
+    return Rational(
+        np.concatenate([wide(a.numerator, top), wide(b.numerator, top)]),
+        np.concatenate([wide(a.denominator, low), wide(b.denominator, low)]),
+        np.concatenate([a.dead_time, b.dead_time]),
+    )
+
+
+def _spread(flat: FloatArray, row: IntArray, slot: IntArray, shape: tuple[int, int], fill: float) -> FloatArray:
+    out = np.full((*shape, flat.shape[1]), fill)
+    out[row, slot] = flat
+    return out
