@@ -86,7 +86,7 @@ class Measured(Kind):
         if not names:
             return dict(NUMBER)
         pattern = _NUMBER_PATTERN + f"({'|'.join(re.escape(n) for n in names)})\\s*$"
-        return {**TEXT, "pattern": pattern, "examples": [units.example(self.dimension)]}
+        return {**TEXT, "pattern": pattern, "examples": [units.sample(self.dimension).strip('"')]}
 
 
 @dataclass(frozen=True, slots=True)
@@ -247,12 +247,51 @@ class Many(Kind):
 
 
 @dataclass(frozen=True, slots=True)
+class Vector(Kind):
+    """n numbers or formulas: flat, or as a matrix of one row or one column. Reads a flat list."""
+
+    def read(self, node: Node) -> list[float | Formula] | None:
+        """See Kind."""
+        if not isinstance(node.value, list):
+            node.fault("this must be a list", "n numbers, or formulas of the parameters in quotes, in [ ]")
+            return None
+        out: list[float | Formula | None] = []
+        for element in node.elements():
+            inner = element.elements() if isinstance(element.value, list) else [element]
+            out.extend(Expression().read(entry) for entry in inner)
+        good = [value for value in out if value is not None]
+        return good if len(good) == len(out) else None
+
+    def schema(self) -> Schema:
+        """See Kind."""
+        entry = Expression().schema()
+        row = {"type": "array", "items": entry}
+        return {"anyOf": [row, {"type": "array", "items": row}]}
+
+
+@dataclass(frozen=True, slots=True)
+class Direct(Kind):
+    """One number or formula, which may stand in the brackets of a 1 × 1 matrix."""
+
+    def read(self, node: Node) -> float | Formula | None:
+        """See Kind."""
+        while isinstance(node.value, list) and len(node.value) == 1:
+            node = node.child(0)
+        return Expression().read(node)
+
+    def schema(self) -> Schema:
+        """See Kind."""
+        return {"anyOf": [Expression().schema(), Vector().schema()]}
+
+
+@dataclass(frozen=True, slots=True)
 class Table(Kind):
     """A table with known keys.
 
     later   names that are kept for a later version
     rest    kind of every other key, where the user chooses the names (then `rest_name` says what they are)
     hints   other spellings -> the key meant
+    example what to write, where a table was expected; `wrap` puts a lone value ("?") into such a table
     """
 
     fields: Mapping[str, Field]
@@ -261,13 +300,18 @@ class Table(Kind):
     rest_name: str = "key"
     hints: Mapping[str, str] = field(default_factory=dict)
     example: str | None = None
+    wrap: str | None = None
 
     def read(self, node: Node) -> dict[str, Any] | None:
         """The good values by key. Faulty and absent keys are not in it."""
         if not isinstance(node.value, dict):
-            node.fault("this must be a table", self.example or f"a table with {', '.join(self.fields)}")
+            near = self.wrap.replace("?", node.source.written(node.path) or "?") if self.wrap else None
+            if isinstance(node.value, list):
+                near = None
+            node.fault("this must be a table", self.example or f"a table with {', '.join(self.fields)}", near)
             return None
         out: dict[str, Any] = {}
+        meant = set()  # a misspelt key is not missing as well
         for key in node.value:
             child = node.child(key)
             if key in self.fields:
@@ -281,18 +325,15 @@ class Table(Kind):
                 kind = self.rest
             if kind is None:
                 near = self.hints.get(key) or nearest(key, [*self.fields, *self.hints])
-                child.fault(
-                    f"unknown {self.rest_name} `{key}`",
-                    ", ".join(self.fields),
-                    self.hints.get(near, near) if near else None,
-                    given=key,
-                )
+                near = self.hints.get(near, near) if near else None
+                meant.add(near)
+                child.fault(f"unknown {self.rest_name} `{key}`", ", ".join(self.fields), near, given=key)
                 continue
             value = kind.read(child)
             if value is not None:
                 out[key] = value
         for key, known in self.fields.items():
-            if known.required and key not in node.value:
+            if known.required and key not in node.value and key not in meant:
                 node.missing(key, known.doc)
         return out
 

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+import re
 from typing import Any
 
 from synth.errors import nearest
 from synth.model.cases import ParameterRange, case_points
 from synth.model.formula import RESERVED
 from synth.spec.kinds import is_name
-from synth.spec.source import Node
+from synth.spec.source import MOST_FAULTS, Node, shortened
 
 MOST_OPERATING = 200
 
@@ -32,16 +33,38 @@ def read_parameters(node: Node, read: dict[str, tuple[float, float, float]]) -> 
 def check_names(node: Node, used: tuple[str, ...], plant: Node) -> None:
     """Every name that the plant uses must be a parameter, and every parameter must be used."""
     known = node.value if isinstance(node.value, dict) else {}
-    for name in used:
-        if name not in known:
-            words = ", ".join(known) if known else f"[parameters] with {name} = ..."
-            plant.fault(f"`{name}` is used here and is no parameter", words, nearest(name, known), given=name)
-    for name in known:
-        if name not in used and is_name(name):
-            words = "use it in the plant, or leave it out"
-            node.child(name).fault(
-                f"the parameter `{name}` is not used", words, nearest(name, used), given=name
-            )
+    taken = set(used)
+    unused = [name for name in known if name not in taken and is_name(name)]
+    undefined = [name for name in used if name not in known]
+    words = shortened(", ".join(unused or known), 200) or "[parameters] with a line for it"
+    for name in undefined[:MOST_FAULTS]:
+        place = _using(plant, name) or plant
+        place.fault(f"`{name}` is used here and is no parameter", words, nearest(name, unused), given=name)
+    for name in unused[:MOST_FAULTS]:
+        near = nearest(name, undefined[:MOST_FAULTS])
+        what = f"the parameter `{name}` is not used"
+        node.child(name).fault(what, "use it in the plant, or leave it out", near, given=name)
+    plant.source.uncounted += len(undefined[MOST_FAULTS:]) + len(unused[MOST_FAULTS:])
+
+
+def _using(node: Node, name: str) -> Node | None:
+    """The first text below a node in which a name stands."""
+    if isinstance(node.value, str):
+        return node if re.search(rf"(?<!\w){re.escape(name)}(?!\w)", node.value) else None
+    keys = (
+        node.value
+        if isinstance(node.value, dict)
+        else range(len(node.value))
+        if isinstance(node.value, list)
+        else ()
+    )
+    for key in keys:
+        if key in ("input", "output", "valid_to"):
+            continue
+        found = _using(node.child(key), name)
+        if found is not None:
+            return found
+    return None
 
 
 def read_cases(

@@ -33,7 +33,7 @@ def read_plant(node: Node, read: dict[str, Any]) -> PlantForm | None:
     try:
         return _built(form, read)
     except FormError as error:
-        _at(node, error.key).fault(error.message)
+        place_of(node, error).fault(error.message)
     except FormulaError as error:
         node.fault(error.message, None, error.repaired, given=error.excerpt())
     return None
@@ -48,7 +48,7 @@ def signal(read: dict[str, Any], key: str) -> Signal:
 def place_of(node: Node, error: FormError | FormulaError) -> Node:
     """Where in [plant] an error about its values belongs."""
     if isinstance(error, FormError):
-        return _at(node, error.key)
+        return _at(node, error.key or _fallback(node, error.message))
     if node.has("transfer"):
         return node.child("transfer")
     for key, value in node.value.items() if isinstance(node.value, dict) else ():
@@ -97,18 +97,18 @@ def _built(form: str, read: dict[str, Any]) -> PlantForm:
             read["gain"], _values(read.get("zeros", [])), _values(read["poles"]), dead_time
         )
     a = [_values(row) for _, row in read["A"]]
-    return forms.from_matrices(a, _flat(read["B"]), _flat(read["C"]), read.get("D", 0.0), dead_time)
+    return forms.from_matrices(a, read["B"], read["C"], read.get("D", 0.0), dead_time)
 
 
 def _values(pairs: list[tuple[Node, Any]]) -> list[Any]:
     return [value for _, value in pairs]
 
 
-def _flat(pairs: list[tuple[Node, Any]]) -> list[Any]:
-    out = []
-    for _, value in pairs:
-        out.extend(_values(value) if isinstance(value, list) else [value])
-    return out
+def _fallback(node: Node, message: str) -> str:
+    """Where a fault of the plant as a whole is shown: the first key of its form."""
+    keys = [key for needed, _ in FORMS.values() for key in needed if node.has(key)]
+    named = [key for key in keys if key in message.split()]
+    return (named or keys or [""])[0]
 
 
 def _at(node: Node, key: str | None) -> Node:

@@ -15,6 +15,7 @@ Path = tuple[str | int, ...]
 # A sheet needs four; a level costs the standard parser recursion, and dotted keys cost it quadratic time.
 MAX_NESTING = 20
 MAX_KEY_PARTS = 10
+MAX_DIGITS = 60
 
 _BLANK = re.compile(r"(?:[ \t\r\n]|#[^\n]*)*")
 _SPACE = re.compile(r"[ \t]*")
@@ -27,6 +28,7 @@ _LITERAL = re.compile(
     r"true|false|[+-]?(?:inf|nan)|0[xob][0-9A-Fa-f_]+|[+-]?\d[\d_]*(?:\.\d[\d_]*)?(?:[eE][+-]?\d[\d_]*)?"
     r"|\d{4}-\d\d-\d\d(?:[Tt ]\d\d:\d\d:\d\d(?:\.\d+)?(?:[Zz]|[+-]\d\d:\d\d)?)?|\d\d:\d\d:\d\d(?:\.\d+)?"
 )
+_UNQUOTED = re.compile(r"[\w.+-]*[^\W\d][^=\"']*|[\d.+-]+ *%")  # what was most likely meant as a text
 _ESCAPES = {"b": "\b", "t": "\t", "n": "\n", "f": "\f", "r": "\r", '"': '"', "\\": "\\"}
 
 
@@ -101,10 +103,10 @@ class _Scanner:
         if double:
             if path in self.spans and path not in self.tables:
                 raise Slip(f"`{dotted(path)}` is written twice", start)
-            self.spans.setdefault(path, Span(start, start, self.at))
+            self.spans.setdefault(path, Span(start, self.at, self.at))
             number = self.tables[path] = self.tables.get(path, -1) + 1
             path = (*path, number)
-        self.claim(path, Span(start, start, self.at), table=True)
+        self.claim(path, Span(start, self.at, self.at), table=True)
         return path
 
     def resolved(self, parts: list[str]) -> Path:
@@ -136,8 +138,9 @@ class _Scanner:
             elif self.text[start : start + 1] in ('"', "'") and self.pass_over(_LINE_STRING):
                 parts.append(unquoted(self.text[start : self.at]))
             else:
-                shown = self.text[start : start + 1].strip()
-                what = f"a key cannot begin with `{shown}`" if shown else "a key must stand here"
+                first = self.text[start : start + 1]
+                shown = first.isprintable() and not first.isspace()
+                what = f"a key cannot begin with `{first}`" if first and shown else "a key must stand here"
                 raise Slip(what, start, 'letters, digits, "_" and "-"; other keys in quotes')
             if len(parts) > MAX_KEY_PARTS:
                 raise Slip(f"a key with more than {MAX_KEY_PARTS} parts", start)
@@ -179,9 +182,12 @@ class _Scanner:
         self.at = start + len(word)
         if not word:
             raise Slip("a value must stand here", start, "a number, a text in quotes, a list or { ... }")
+        if len(word) > MAX_DIGITS:
+            raise Slip("a number has too many digits", start)
         if not _LITERAL.fullmatch(word):
-            shown = word if len(word) <= 40 else word[:37] + "..."
-            raise Slip(f"`{shown}` is neither a number nor a text in quotes", start, f'write "{shown}"')
+            plain = _UNQUOTED.fullmatch(word) is not None
+            allowed = f'write "{word}"' if plain else "a number, a text in quotes, a list or { ... }"
+            raise Slip(f"`{word}` is neither a number nor a text in quotes", start, allowed)
 
     def array(self, path: Path, depth: int) -> None:
         start = self.at

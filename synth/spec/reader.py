@@ -14,7 +14,7 @@ from synth.spec.parameters import Operating, check_names, read_cases, read_param
 from synth.spec.plant import place_of, read_plant, signal
 from synth.spec.requirements import read_bounds, read_preference
 from synth.spec.sheet import SHEET
-from synth.spec.source import Node, Source, load
+from synth.spec.source import Node, Source, check_size, load
 from synth.spec.spec import SearchSettings, Spec
 
 
@@ -26,6 +26,7 @@ def read_spec(path: str | Path) -> Spec:
 
 def parse_spec(text: str, file: str = "spec.toml") -> Spec:
     """Read the text of a spec. Raises InputError with all its faults, each with line and key."""
+    check_size(len(text), file)
     try:
         data = text.encode("utf-8")
     except UnicodeEncodeError:

@@ -8,6 +8,7 @@ from typing import Any
 from synth.errors import nearest
 from synth.loop.quantities import QUANTITIES, Measure, Side
 from synth.requirements import Bound, numbered
+from synth.spec.sheet import PREFER, bound_table
 from synth.spec.source import Node
 from synth.spec.spec import Preference
 
@@ -23,11 +24,13 @@ def read_bounds(node: Node, read: dict[str, Any], case_names: Sequence[str]) -> 
     for key, pairs in read.items():
         found: list[tuple[Node, Part]] = []
         for bound, values in pairs:
+            assert isinstance(bound.value, dict)
             cases = _cases(bound.child("cases"), values.get("cases"), case_names)
             measure = _measure(key, values)
-            if not any(bound.has(side) for side in SIDES):
+            known = all(name in bound_table(QUANTITIES[key]).fields for name in bound.value)
+            if known and not any(bound.has(side) for side in SIDES):
                 bound.fault("this bound has no limit", "min = ... or max = ...")
-            for side in bound.value if isinstance(bound.value, dict) else ():
+            for side in bound.value:
                 if side in SIDES and side in values:
                     _check_reach(bound.child(side), key, side, values[side])
                     found.append((bound, (measure, side, values[side], cases)))
@@ -41,7 +44,7 @@ def read_preference(node: Node, read: dict[str, Any]) -> Preference | None:
     named = [(key, side) for key, side in (("minimise", "min"), ("maximise", "max")) if node.has(key)]
     if len(named) == 2:
         node.fault("one quantity can be preferred, not two", "minimise or maximise")
-    if not named and isinstance(node.value, dict):
+    if not named and set(node.value if isinstance(node.value, dict) else ()) <= set(PREFER.fields):
         node.fault("[prefer] names no quantity", 'minimise = "..." or maximise = "..."')
     reserve = read.get("reserve", 0.0) / 100.0
     for key, side in named:

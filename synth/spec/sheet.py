@@ -1,7 +1,7 @@
 """The sheet: every table and key of a spec file, written down once.
 
-The reader checks files against these tables and the JSON Schema is made from them. What a key means beyond its
-own value (names that must exist, bounds that contradict each other) is in plant.py, parameters.py, and
+The reader checks files against these tables and the JSON Schema is made from them. What a key means beyond
+its value (names that must exist, bounds that contradict) is in plant.py, parameters.py,
 requirements.py.
 """
 
@@ -13,6 +13,7 @@ from synth.spec.kinds import (
     TEXT,
     Choice,
     DeadTime,
+    Direct,
     Expression,
     Field,
     Kind,
@@ -23,10 +24,11 @@ from synth.spec.kinds import (
     Span,
     Table,
     Text,
+    Vector,
     Whole,
 )
 from synth.spec.source import Node
-from synth.spec.units import UnitFault
+from synth.spec.units import UnitFault, sample
 from synth.spec.units import parameter as parameter_value
 from synth.structures import REGISTRY
 
@@ -145,9 +147,9 @@ PLANT = Table(
         "zeros": Field(_ROOTS, "zeros; complex ones with their conjugates"),
         "poles": Field(_ROOTS, "poles; complex ones with their conjugates"),
         "A": Field(Many(_ENTRIES, "rows in [ ], such as [[0, 1], [-4, -2]]"), "state matrix, n rows of n"),
-        "B": Field(Many(_ENTRIES, "n entries", single=True), "input column, n entries"),
-        "C": Field(Many(_ENTRIES, "n entries", single=True), "output row, n entries"),
-        "D": Field(Expression(), "direct path, one number"),
+        "B": Field(Vector(), "input column, n entries"),
+        "C": Field(Vector(), "output row, n entries"),
+        "D": Field(Direct(), "direct path, one number"),
         "dead_time": Field(DeadTime(), "dead time of a list form, with its unit or a formula"),
         "valid_to": Field(Measured("frequency", _positive), "how far the model was identified"),
         "input": Field(SIGNAL, "name and unit of u, for reports"),
@@ -202,6 +204,8 @@ _OPTIONS: dict[str, Field] = {
 def bound_table(quantity: Quantity) -> Table:
     """What a bound on one quantity may say."""
     unit = quantity.unit or "a pure ratio"
+    side = "min" if quantity.better == "max" else "max"
+    example = sample(quantity.dimension)
     return Table(
         {
             "min": Field(_limit(quantity), f"at least this ({unit})"),
@@ -213,7 +217,8 @@ def bound_table(quantity: Quantity) -> Table:
         },
         rest_name="key of a bound",
         hints={"maximum": "max", "minimum": "min", "upper": "max", "lower": "min", "case": "cases"},
-        example=f"a bound such as {{ {'min' if quantity.better == 'max' else 'max'} = ... }}",
+        example=f"a bound such as {{ {side} = {example} }}",
+        wrap=f"{{ {side} = ? }}",
     )
 
 
@@ -268,7 +273,12 @@ SHEET = Table(
         "revision": Field(Text(), 'of the plant model, any text, such as "B"'),
         "plant": Field(PLANT, "the plant in exactly one form", required=True),
         "parameters": Field(
-            Table({}, rest=ParameterKind(), rest_name="parameter"),
+            Table(
+                {},
+                rest=ParameterKind(),
+                rest_name="parameter",
+                example="[parameters] with name = value lines",
+            ),
             "names used in the plant, with their values",
         ),
         "cases": Field(Many(CASE, "[[cases]], one for each operating case"), "operating cases"),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import bisect
 import contextlib
 import re
 import tomllib
@@ -13,7 +14,9 @@ from synth.errors import Fault, InputError
 from synth.spec.positions import Path, Slip, Span, dotted, line_and_column, scan
 
 # A sheet is a page or two; past this, the file is something else.
-MAX_BYTES = 512 * 1024
+MAX_BYTES = 256 * 1024
+MOST_FAULTS = 60  # of one file; the rest are only counted
+_QUOTED = r"'([^']*)'"
 
 
 @dataclass(slots=True)
@@ -25,6 +28,8 @@ class Source:
     data: dict[str, object]
     spans: dict[Path, Span]
     faults: list[Fault] = field(default_factory=list)
+    uncounted: int = 0  # faults past those that are kept
+    lines: list[int] = field(default_factory=list)  # where each line begins
 
     @classmethod
     def of(cls, text: str, file: str) -> Source:
@@ -41,19 +46,20 @@ class Source:
             raise InputError([Fault("a number has too many digits", file=file)]) from None
         except RecursionError:  # pragma: no cover - the scanner refuses such texts first
             raise InputError([Fault("too many brackets inside one another", file=file)]) from None
-        return cls(file, body, data, spans)
+        lines = [0, *(match.end() for match in re.finditer("\n", body))]
+        return cls(file, body, data, spans, lines=lines)
 
     @property
     def root(self) -> Node:
         """The whole file."""
         return Node(self, (), self.data)
 
-    def line(self, path: Path) -> int | None:
+    def line(self, path: Path) -> int:
         """Line of a key, or of the nearest table round it that has one."""
         for length in range(len(path), 0, -1):
             if path[:length] in self.spans:
-                return line_and_column(self.text, self.spans[path[:length]].key)[0]
-        return None
+                return bisect.bisect_right(self.lines, self.spans[path[:length]].key)
+        return 1
 
     def written(self, path: Path) -> str | None:
         """The value as the file writes it, on one line and cut to a readable length."""
@@ -65,8 +71,11 @@ class Source:
 
     def stop(self) -> None:
         """Raise InputError with every fault so far, by line. Does nothing without one."""
-        if self.faults:
-            raise InputError(sorted(dict.fromkeys(self.faults), key=lambda f: f.line or 0))
+        faults = sorted(dict.fromkeys(self.faults), key=lambda f: f.line or 0)
+        if self.uncounted:
+            faults.append(Fault(f"and {self.uncounted} more faults in this file", file=self.file))
+        if faults:
+            raise InputError(faults)
 
 
 @dataclass(frozen=True, slots=True)
@@ -100,6 +109,9 @@ class Node:
         self, what: str, allowed: str | None = None, nearest: str | None = None, given: str | None = None
     ) -> None:
         """Note a fault at this place."""
+        if len(self.source.faults) >= MOST_FAULTS:
+            self.source.uncounted += 1
+            return
         self.source.faults.append(
             Fault(
                 what,
@@ -135,9 +147,7 @@ def load(path: str | FilePath) -> tuple[str, bytes]:
     except (OSError, ValueError) as error:  # ValueError: a name no system takes, such as one with a NUL
         reason = getattr(error, "strerror", None) or str(error)
         raise InputError([Fault(f"the file cannot be read: {reason}", file=file)]) from None
-    if len(data) > MAX_BYTES:
-        limit = f"at most {MAX_BYTES // 1024} kB"
-        raise InputError([Fault("the file is too large for a spec", file=file, allowed=limit)])
+    check_size(len(data), file)
     try:
         return data.decode("utf-8"), data
     except UnicodeDecodeError as error:
@@ -147,6 +157,13 @@ def load(path: str | FilePath) -> tuple[str, bytes]:
             "the file is not UTF-8 text", file=file, line=line, given=given, allowed="save it as UTF-8"
         )
         raise InputError([fault]) from None
+
+
+def check_size(size: int, file: str) -> None:
+    """Raise InputError for a text of so many bytes, or characters, that it is no sheet."""
+    if size > MAX_BYTES:
+        limit = f"at most {MAX_BYTES // 1024} kB"
+        raise InputError([Fault("the file is too large for a spec", file=file, allowed=limit)])
 
 
 def shortened(text: str, most: int = 60) -> str:
@@ -191,4 +208,5 @@ def _library(file: str, text: str, message: str) -> Fault:
             sum(len(row) + 1 for row in text.split("\n")[: int(match.group(2)) - 1]) + int(match.group(3)) - 1
         )
         at = min(at, len(text))
+    what = re.sub(r"\(('[^()]*')\)", lambda m: f"`{'.'.join(re.findall(_QUOTED, m.group(1)))}`", what)
     return _not_toml(file, text, shortened(what[:1].lower() + what[1:], 100), at, None)

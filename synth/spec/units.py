@@ -106,9 +106,9 @@ def allowed(dimension: Dimension) -> str:
     return f"{_WORDS[dimension]} with its unit ({' '.join(units)}), such as {_EXAMPLES[dimension]}"
 
 
-def example(dimension: Dimension) -> str:
-    """A value as it may be written, without quotes."""
-    return _EXAMPLES[dimension].split('"')[1] if '"' in _EXAMPLES[dimension] else _EXAMPLES[dimension]
+def sample(dimension: Dimension) -> str:
+    """A value as a sheet may write it."""
+    return _EXAMPLES[dimension].split(" or ")[0]
 
 
 def measured(value: object, dimension: Dimension) -> float:
@@ -128,7 +128,9 @@ def measured(value: object, dimension: Dimension) -> float:
     number, unit = _taken_apart(value, words)
     if not units:
         if unit:
-            raise UnitFault(f"{_WORDS[dimension]} must stand here, without a unit", words, _short(number))
+            bare = {"dB": 10.0 ** (min(number, 200.0) / 20.0), "%": number / 100.0}.get(unit)
+            near = f"{bare:.6g}" if bare is not None else None
+            raise UnitFault(f"{_WORDS[dimension]} must stand here, without a unit", words, near)
         raise UnitFault("a bare number must not stand in quotes", words, _short(number))
     if not unit:
         raise UnitFault(f"{_WORDS[dimension]} must carry its unit", words)
@@ -185,11 +187,12 @@ def finite(number: float, words: str) -> float:
 
 
 def _taken_apart(text: str, words: str) -> tuple[float, str]:
+    if re.match(r"\s*[+-]?\d+,\d", text):
+        near = '"' + text.strip().replace(",", ".", 1) + '"'
+        raise UnitFault("decimals are written with a point", words, near)
     match = _WRITTEN.fullmatch(text)
     if match is None:
-        comma = re.fullmatch(r"\s*[+-]?\d+,\d+\s*(.*)", text)
-        near = '"' + text.strip().replace(",", ".") + '"' if comma else None
-        raise UnitFault("this does not begin with a finite number", words, near)
+        raise UnitFault("this does not begin with a finite number", words)
     return float(match.group(1)), match.group(2)
 
 
