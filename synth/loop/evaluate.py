@@ -1,7 +1,7 @@
 """Every quantity of B compensators on K plants: poles first, then frequency, then time.
 
-A stage runs only for the loops and the quantities that need it. Loops are sorted into stacks of one order, with or
-without dead time; each stack is closed, scaled and sent through the stages in one go.
+A stage runs only for the loops and the quantities that need it. Loops are sorted into stacks of one order,
+with or without dead time; each stack is closed, scaled and sent through the stages in one go.
 """
 
 from __future__ import annotations
@@ -14,19 +14,23 @@ import numpy as np
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops, Rational, close, exact_degree
 from synth.loop.frequency.stage import frequency_stage
-from synth.loop.poles.stage import pole_stage
-from synth.loop.quantities import EVERY_QUANTITY, QUANTITIES, Measure
+from synth.loop.poles.stage import PoleStage, needs_counting, pole_stage
+from synth.loop.quantities import EVERY_QUANTITY, Measure
 from synth.loop.time.stage import time_stage
 
-# Loops handled at once: large enough to drown the cost of a call, small enough to stay in cache and in memory.
+# Loops handled at once: large enough to drown the cost of a call, small enough to stay in cache and in
+# memory.
 CHUNK = 1024
+USUAL_DAMPING = Measure("damping_ratio")
 
 
 @dataclass(frozen=True, slots=True)
 class Screen:
     """When to stop looking at a loop: later stages are skipped for it.
 
-    least_damping   damping ratio below this ends the loop after its poles
+    least_damping   damping ratio below this ends the loop: after its poles where a pole that is sure to
+    count (its
+                    share in the step is 2 % or more) is damped less, else after its frequencies
     most_peak       sensitivity peak above this ends it after its frequencies
     """
 
@@ -39,7 +43,10 @@ class Evaluation:
     """What the core found.
 
     measures     the Q measures asked for, in order
-    values       (B, K, Q) or (M, Q); NaN is absent (or not looked at, see `reached`), ±inf is meant
+    values       (B, K, Q) or (M, Q); NaN is absent (or not looked at, see `reached`), ±inf is meant. Of a
+    loop that
+                 the screen ended after its poles, damping_ratio is that of the poles sure to count: at
+                 least the true one's upper bound
     approximate  same shape: True where the error bound of the quantity was not reached
     stable       (B, K) or (M,)
     abscissa     (B, K) or (M,) largest real part of the poles [1/s]; the negative of the decay rate
@@ -122,55 +129,84 @@ def _cross(compensators: int, plants: int) -> tuple[IntArray, IntArray]:
 def stacks(
     plants: Rational, compensators: Rational, plant_of: IntArray, compensator_of: IntArray
 ) -> Iterator[IntArray]:
-    """Row sets that can be closed together: same orders of plant and compensator, dead time in all or in none."""
-    finite_plant = np.isfinite(plants.numerator).all(1) & np.isfinite(plants.denominator).all(1)
-    finite_comp = np.isfinite(compensators.numerator).all(1) & np.isfinite(compensators.denominator).all(1)
-    usable = finite_plant[plant_of] & finite_comp[compensator_of]
+    """Row sets that can be closed together: same orders of plant and compensator, dead time in all or in
+    none.
+
+    Rows that are not finite, have no denominator or are not proper belong to none.
+    """
+    plant_degree, comp_degree = _order(plants)[plant_of], _order(compensators)[compensator_of]
     delayed = (plants.dead_time[plant_of] + compensators.dead_time[compensator_of]) > 0.0
-    width = plants.denominator.shape[1] + compensators.denominator.shape[1] + 2
-    dp, dc = exact_degree(plants.denominator)[plant_of], exact_degree(compensators.denominator)[compensator_of]
-    usable &= (dp >= 0) & (dc >= 0)
-    kind = np.where(usable, (dp * width + dc) * 2 + delayed, -1)
-    for one in np.unique(kind[usable]):
+    width = compensators.denominator.shape[1]
+    kind = (plant_degree * width + comp_degree) * 2 + delayed
+    kind[(plant_degree < 0) | (comp_degree < 0)] = -1
+    for one in np.unique(kind[kind >= 0]):
         rows = np.flatnonzero(kind == one)
         for start in range(0, len(rows), CHUNK):
             yield rows[start : start + CHUNK]
 
 
+def _order(rationals: Rational) -> IntArray:
+    """Degree of the denominator of each row, -1 where the row cannot be used. (R,)."""
+    top, bottom = exact_degree(rationals.numerator), exact_degree(rationals.denominator)
+    finite = np.isfinite(rationals.numerator).all(axis=1) & np.isfinite(rationals.denominator).all(axis=1)
+    out: IntArray = np.where(finite & (top <= bottom), bottom, -1)
+    return out
+
+
 def _fill(out: Evaluation, rows: IntArray, loops: Loops, screen: Screen) -> None:
     """Run one stack through the stages and write what each yields into its rows."""
     wanted = out.measures
-    names = frozenset(w.quantity for w in wanted)
+    stages = {m.row.stage for m in wanted}
+    names = {m.quantity for m in wanted if m.row.stage == "frequency"}
 
     stage = pole_stage(loops, wanted)  # stability, poles, and what needs no more than coefficients
     out.stable[rows] = stage.stable
     out.abscissa[rows] = stage.abscissa / loops.time_scale
     _write(out, rows, loops, stage.values, None)
-    alive = np.flatnonzero(stage.stable)
-    if alive.size == 0:
+    rows, loops, stage = _kept(rows, loops, stage, stage.stable)
+    if rows.size and screen.least_damping > 0.0:
+        sure = stage.surely_counted_damping(loops)
+        early = sure < screen.least_damping
+        for i, measure in enumerate(wanted):
+            if measure.quantity == "damping_ratio" and measure.below is None:
+                out.values[rows[early], i] = sure[early]
+        rows, loops, stage = _kept(rows, loops, stage, ~early)
+    if rows.size == 0:
         return
-    rows, loops, stage = rows[alive], loops.rows(alive), stage.rows(alive)
 
-    needs_falls = bool(names & {"damping_ratio", "natural_frequency"})
-    needs_frequency = needs_falls or any(QUANTITIES[n].stage == "frequency" for n in names) or screen.most_peak < np.inf
-    keep = np.ones(len(rows), dtype=bool)
-    if needs_frequency:
-        asked = names | ({"sensitivity_peak"} if screen.most_peak < np.inf else set())
-        found = frequency_stage(loops, stage.poles, asked | ({"highest_fall"} if needs_falls else set()))
+    counting = tuple(m for m in wanted if needs_counting(m))
+    if screen.least_damping > 0.0 and USUAL_DAMPING not in counting:
+        counting = (*counting, USUAL_DAMPING)
+    if screen.most_peak < np.inf:
+        names.add("sensitivity_peak")
+    if counting:
+        names.add("highest_fall")
+    if names:
+        found = frequency_stage(loops, stage.poles, frozenset(names))
         _write(out, rows, loops, {w: found[w.quantity] for w in wanted if w.quantity in found}, None)
-        counted = stage.count(loops, wanted, found.get("highest_fall"))
+        counted = stage.count(loops, counting, found.get("highest_fall"))
         _write(out, rows, loops, counted, None)
         out.reached[rows] = 1
-        for measure, values in counted.items():
-            if measure.quantity == "damping_ratio":
-                keep &= ~(values < screen.least_damping)
+        keep = np.ones(len(rows), dtype=bool)
+        if screen.least_damping > 0.0:
+            keep &= ~(counted[USUAL_DAMPING] < screen.least_damping)
         if screen.most_peak < np.inf:
             keep &= ~(found["sensitivity_peak"] > screen.most_peak)
-    if any(QUANTITIES[n].stage == "time" for n in names) and keep.any():
-        rows, loops, stage = rows[keep], loops.rows(keep), stage.rows(keep)
+        rows, loops, stage = _kept(rows, loops, stage, keep)
+    if "time" in stages and rows.size:
         response = time_stage(loops, stage.poles, wanted)
         _write(out, rows, loops, response.values, response.approximate)
         out.reached[rows] = 2
+
+
+def _kept(
+    rows: IntArray, loops: Loops, stage: PoleStage, keep: BoolArray
+) -> tuple[IntArray, Loops, PoleStage]:
+    """The loops still looked at; nothing is copied when all of them are."""
+    if keep.all():
+        return rows, loops, stage
+    index = np.flatnonzero(keep)
+    return rows[index], loops.rows(index), stage.rows(index)
 
 
 def _write(

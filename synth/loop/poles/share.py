@@ -97,7 +97,7 @@ def alike(loops: Loops, poles: ComplexArray) -> BoolArray | None:
         slope = np.abs(loops.closed[:, :1] * _product_apart(poles))
         noise = 20.0 * count * np.finfo(float).eps * magnitude_sum(loops.closed, np.abs(poles))
         distance = np.abs(poles[:, :, None] - poles[:, None, :])
-        near = distance * slope[:, :, None] <= noise[:, :, None]
+        near: BoolArray = distance * slope[:, :, None] <= noise[:, :, None]
     near |= near.transpose(0, 2, 1)
     diagonal = np.arange(count)
     near[:, diagonal, diagonal] = False

@@ -51,7 +51,7 @@ class PoleStage:
         highest_fall : (M,) highest ω at which abs(T) falls through abs(T(0))/√2, NaN where there is none;
         None when no measure needs it.
         """
-        wanted = [m for m in measures if m.quantity == "natural_frequency" or _usual_damping(m)]
+        wanted = [m for m in measures if needs_counting(m)]
         if not wanted:
             return {}
         if highest_fall is None:
@@ -64,6 +64,23 @@ class PoleStage:
             else:
                 out[measure] = _natural_frequency(loops, poles, share, counted)
         return out
+
+    def surely_counted_damping(self, loops: Loops) -> FloatArray:
+        """Least damping ratio of the poles that count whatever the bandwidth, for their share alone. (M,).
+
+        An upper bound of the damping ratio, known before any frequency; 1 with dead time, where share
+        counts none.
+        """
+        if _delayed(loops):
+            return np.ones(len(loops))
+        with np.errstate(invalid="ignore"):
+            return least_damping(loops, self.poles, share_in_step(loops, self.poles) >= LEAST_SHARE)
+
+
+def needs_counting(measure: Measure) -> bool:
+    """Whether a measure waits for the poles that count by the usual rule, and so for the fall of abs(T)."""
+    usual = measure.quantity == "damping_ratio" and measure.below is None
+    return usual or measure.quantity == "natural_frequency"
 
 
 def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
@@ -117,10 +134,6 @@ def least_damping(loops: Loops, poles: ComplexArray, counted: BoolArray) -> Floa
     """Smallest damping ratio of the counted poles; 1, the best there is, where none is counted. (M,)."""
     out: FloatArray = np.where(counted, damping_of(loops, poles), 1.0).min(axis=1, initial=1.0)
     return out
-
-
-def _usual_damping(measure: Measure) -> bool:
-    return measure.quantity == "damping_ratio" and measure.below is None
 
 
 def _delayed(loops: Loops) -> bool:

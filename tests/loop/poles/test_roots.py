@@ -133,7 +133,7 @@ def test_rows_that_are_degenerate_do_not_disturb_the_others():
 def test_routh_agrees_with_the_roots(n):
     rng = np.random.default_rng(n)
     rows = spread_polynomials(n, 400, 0.5, seed=n)
-    rows *= np.exp(rng.normal(scale=1.5 / n, size=rows.shape))  # a good part of them leaves the left half plane
+    rows *= np.exp(rng.normal(scale=1.5 / n, size=rows.shape))  # a good part of them becomes unstable
     verdict = routh_stable(rows)
     np.testing.assert_array_equal(verdict, closed_roots(rows).real.max(axis=1) < 0.0)
     np.testing.assert_array_equal(verdict, routh_stable(-rows))
