@@ -1,4 +1,4 @@
-"""The JSON Schema of a spec file, made from the tables that the reader checks against."""
+"""The JSON Schema of a spec file, made from the tables the reader checks against; and the spec to start from."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ from pathlib import Path
 from synth.spec.kinds import Schema
 from synth.spec.sheet import SHEET
 
-FILE = Path(__file__).with_name("spec.schema.json")  # the same, shipped for editors; a test keeps it equal
+FILE = Path(__file__).with_name("spec.schema.json")  # shipped for editors; a test keeps it equal
 
 
 def json_schema() -> Schema:
@@ -17,3 +17,8 @@ def json_schema() -> Schema:
         "title": "Spec of a control loop, for compensator synthesis",
         **SHEET.schema(),
     }
+
+
+def template() -> str:
+    """A commented spec to start from; it reads without a fault and can be met."""
+    return Path(__file__).with_name("template.toml").read_text(encoding="utf-8")
