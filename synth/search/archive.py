@@ -88,7 +88,8 @@ def distinct(rows: Rows, guide: FloatArray, count: int, apart: float = 0.15) -> 
     chosen: list[int] = []
     for i in np.argsort(-guide, kind="stable"):
         near = [
-            rows.sign[i] == rows.sign[j] and float(np.abs(rows.x[i] - rows.x[j]).max()) <= apart for j in chosen
+            rows.sign[i] == rows.sign[j] and float(np.abs(rows.x[i] - rows.x[j]).max()) <= apart
+            for j in chosen
         ]
         if not any(near):
             chosen.append(int(i))

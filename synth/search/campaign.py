@@ -7,13 +7,13 @@ restarts do not agree get more starts and a short differential evolution. What i
 from __future__ import annotations
 
 import time
-from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 
 from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.quantities import Measure
+from synth.rules import starts
 from synth.search.archive import Rows, distinct, joined
 from synth.search.evolution import evolve
 from synth.search.objective import Objective
@@ -46,7 +46,7 @@ MOST_CASE_TURNS = 12
 class Campaign:
     """One search in progress.
 
-    origins   where starts came from, by the number that rows carry
+    origins   where starts came from (words, publication), by the number that rows carry
     halted    the user or the time limit ended it early
     """
 
@@ -63,7 +63,7 @@ class Campaign:
         self.effort = EFFORTS[settings.budget]
         self.objective = Objective(task, extra)
         self.standings = [Standing(i, len(s.parameters)) for i, s in enumerate(task.structures)]
-        self.origins: list[str] = list(SOURCES)
+        self.origins: list[tuple[str, str]] = [(name, "") for name in SOURCES]
         self.begun = time.perf_counter()
         self.interrupted = False
         self.limited = False
@@ -105,11 +105,11 @@ class Campaign:
         self.stages[self.stage] = self.stages.get(self.stage, 0.0) + now - self._lap
         self.stage, self._lap = stage, now
 
-    def origin(self, text: str) -> int:
+    def origin(self, start: str, source: str = "") -> int:
         """The number of a source of starts."""
-        if text not in self.origins:
-            self.origins.append(text)
-        return self.origins.index(text)
+        if (start, source) not in self.origins:
+            self.origins.append((start, source))
+        return self.origins.index((start, source))
 
     # -- the search
 
@@ -162,7 +162,14 @@ class Campaign:
         standing = self.standings[n]
         count = self.effort.starts * min(2**standing.rounds, 8)
         seed = self.settings.seed * 1009 + standing.rounds * 97 + n
-        return sample(self.objective, n, count, seed, standing.signs)
+        drawn = sample(self.objective, n, count, seed, standing.signs)
+        if standing.rounds:
+            return drawn
+        rules = starts(self.task.plants, self.task.structures[n].name)
+        if not rules:
+            return drawn
+        origin = np.array([self.origin(r.rule, r.source) for r in rules])
+        return joined([self.objective.rows_of(n, np.array([r.theta for r in rules]), origin), drawn])
 
     def _polish(self, rows: Rows, pace: Pace) -> Polished:
         done = polish(self.objective, rows, pace=pace, stop=self.halted)
@@ -254,6 +261,3 @@ class Campaign:
         found = [s for s in self.standings if s.tops is not None]
         rows = joined([self._top(s.number) for s in found])
         return np.array([s.number for s in found]), rows, np.array([s.best for s in found])
-
-
-Stop = Callable[[], bool]

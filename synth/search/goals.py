@@ -82,7 +82,9 @@ def terms(objective: Objective, goals: Goals, scores: Scores) -> Terms:
         if aim.other is not None:
             value = scores.values[index, :, objective.measures.index(aim.other)]
             level = goals.level[index, None]
-            room = (level - value if aim.other_sense == "min" else value - level) / np.maximum(np.abs(level), 1e-300)
+            room = (level - value if aim.other_sense == "min" else value - level) / np.maximum(
+                np.abs(level), 1e-300
+            )
             beside[index] = np.where(scores.case[index] >= 0, compressed(room), np.inf)
     constraint = np.concatenate([search.reshape(rows, -1), beside], axis=1)
     return Terms(constraint, cap, gain)

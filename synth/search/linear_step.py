@@ -61,9 +61,17 @@ def maximin_step(
     """
     count, constraints = slack.shape
     variables = slope.shape[2]
-    if slope.shape != (count, constraints, variables) or low.shape != (count, variables) or low.shape != high.shape:
-        raise ValueError(f"slack {slack.shape}, slope {slope.shape}, low {low.shape}, high {high.shape} do not fit")
-    size = np.maximum(high - low, 1e-300)  # variables in units of their room, so that every programme looks alike
+    if (
+        slope.shape != (count, constraints, variables)
+        or low.shape != (count, variables)
+        or low.shape != high.shape
+    ):
+        raise ValueError(
+            f"slack {slack.shape}, slope {slope.shape}, low {low.shape}, high {high.shape} do not fit"
+        )
+    size = np.maximum(
+        high - low, 1e-300
+    )  # variables in units of their room, so that every programme looks alike
     free = high > low
     levels = 1 if gain is None or gain_slope is None else 2
     rows = _Rows(count, variables, levels)
@@ -79,11 +87,18 @@ def maximin_step(
     if curvature is not None:
         hessian[:, :variables, :variables] = curvature * (size[:, :, None] * size[:, None, :])
     frozen = np.arange(variables)
-    hessian[:, frozen, frozen] += np.where(free, 0.0, 1.0)  # a frozen variable has no constraint: hold it at 0
+    hessian[:, frozen, frozen] += np.where(
+        free, 0.0, 1.0
+    )  # a frozen variable has no constraint: hold it at 0
     point, multipliers = _interior_point(*rows.stacked(), cost, hessian, variables)
     d = np.where(free, np.clip(point[:, :variables] * size, low, high), 0.0)
     cases = gain.shape[1] if gain is not None else 0
-    return Step(d, point[:, variables], multipliers[:, :constraints], multipliers[:, constraints : constraints + cases])
+    return Step(
+        d,
+        point[:, variables],
+        multipliers[:, :constraints],
+        multipliers[:, constraints : constraints + cases],
+    )
 
 
 class _Rows:
@@ -122,11 +137,20 @@ class _Rows:
 
     def stacked(self) -> tuple[FloatArray, FloatArray, FloatArray]:
         """A (S, rows, width), b (S, rows), and 1 where a row exists."""
-        return np.concatenate(self.matrices, 1), np.concatenate(self.rights, 1), np.concatenate(self.switches, 1)
+        return (
+            np.concatenate(self.matrices, 1),
+            np.concatenate(self.rights, 1),
+            np.concatenate(self.switches, 1),
+        )
 
 
 def _interior_point(
-    matrix: FloatArray, right: FloatArray, binding: FloatArray, cost: FloatArray, hessian: FloatArray, variables: int
+    matrix: FloatArray,
+    right: FloatArray,
+    binding: FloatArray,
+    cost: FloatArray,
+    hessian: FloatArray,
+    variables: int,
 ) -> tuple[FloatArray, FloatArray]:
     """min cost·y + ½ yᵀ H y, A y <= b. Returns y (S, width) and the multipliers (S, rows)."""
     number = np.maximum(binding.sum(axis=1), 1.0)
@@ -158,12 +182,16 @@ def _interior_point(
         ) -> tuple[FloatArray, FloatArray, FloatArray]:
             """Newton step towards dual·room = dual·room - complement."""
             inner = ratio * off_room - complement / room
-            dy = np.linalg.solve(normal, -(off_dual + np.einsum("svr,sr->sv", transposed, inner))[:, :, None])[:, :, 0]
+            dy = np.linalg.solve(
+                normal, -(off_dual + np.einsum("svr,sr->sv", transposed, inner))[:, :, None]
+            )[:, :, 0]
             droom = -off_room - np.einsum("srv,sv->sr", matrix, dy)
             return dy, droom, -complement / room - ratio * droom
 
         _, droom, ddual = direction(dual * room)
-        ahead = ((dual + _reach(dual, ddual) * ddual) * (room + _reach(room, droom) * droom)).sum(axis=1) / number
+        ahead = ((dual + _reach(dual, ddual) * ddual) * (room + _reach(room, droom) * droom)).sum(
+            axis=1
+        ) / number
         centre = np.minimum((np.maximum(ahead, 0.0) / np.maximum(gap, 1e-300)) ** 3, 1.0) * gap
         dy, droom, ddual = direction(dual * room + ddual * droom - centre[:, None] * binding)
         step = 0.995 * np.minimum(_reach(room, droom), _reach(dual, ddual))

@@ -205,7 +205,9 @@ def compressed(slack: FloatArray) -> FloatArray:
     """Slack with a slope everywhere: -1 - ln(-slack) below -1, and a floor for what is absent."""
     with np.errstate(divide="ignore", invalid="ignore"):
         deep = -1.0 - np.log(np.where(slack < -1.0, -slack, 1.0))
-    out: FloatArray = np.where(np.isnan(slack), ABSENT, np.where(slack < -1.0, np.maximum(deep, ABSENT), slack))
+    out: FloatArray = np.where(
+        np.isnan(slack), ABSENT, np.where(slack < -1.0, np.maximum(deep, ABSENT), slack)
+    )
     return out
 
 
@@ -224,7 +226,9 @@ def stacked(a: Rational, b: Rational) -> Rational:
     )
 
 
-def _spread(flat: FloatArray, row: IntArray, slot: IntArray, shape: tuple[int, int], fill: float) -> FloatArray:
+def _spread(
+    flat: FloatArray, row: IntArray, slot: IntArray, shape: tuple[int, int], fill: float
+) -> FloatArray:
     out = np.full((*shape, flat.shape[1]), fill)
     out[row, slot] = flat
     return out

@@ -141,8 +141,7 @@ class Candidate:
     stable           (K,)
     slack            (K, R), +inf where a requirement is not judged on that case
     worst_slack      least of it; `binding` = (requirement id, case name)
-    gap              |1 - T(0)| in % on the worst case, or None where static error is bounded by the sheet
-    start            where the search set out from ("SIMC, closed-loop time constant 0.2 s")
+    start, source    where the search set out from ("SIMC, closed-loop time 0.2 s"), and who published that rule
     goal             what it is the best at ("worst slack", "least control_peak", "disturbance_integral")
     ranked           why it stands where it stands
     """
@@ -161,6 +160,7 @@ class Candidate:
     worst_slack: float
     binding: tuple[str, str] | None
     start: str
+    source: str
     goal: str
     ranked: str = ""
     interior_met: int | None = None  # points inside the tolerance box on which it meets everything

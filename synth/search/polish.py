@@ -21,7 +21,7 @@ import numpy as np
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.search.archive import Rows, joined
 from synth.search.goals import PENALTY, Goals, Terms, terms
-from synth.search.linear_step import maximin_step
+from synth.search.linear_step import Step, maximin_step
 from synth.search.objective import Objective
 
 TRIALS = (1.0, 0.5, 0.2)
@@ -51,6 +51,7 @@ class Pace:
     radius, least   of the trust region at the start and at the end
     iterations      at most
     halve           after these iterations the worse half of each structure's rows is dropped, down to `field`
+    curvature       second differences as well: for optima that lie in no corner of the constraints
     """
 
     radius: float = 0.25
@@ -58,6 +59,7 @@ class Pace:
     iterations: int = 14
     halve: tuple[int, ...] = (3, 6)
     field: int = 3
+    curvature: bool = False
 
 
 def polish(
@@ -87,18 +89,34 @@ def polish(
         here = rows.take(index).at(x[index])
         now = Terms(constraint[index], cap[index], None if gain is None else gain[index])
         aims = goals.take(index)
-        slope, gain_slope = _slopes(objective, here, aims, now, radius[index], high[index], free[index])
         room = np.where(free[index], radius[index, None], 0.0)
-        step = maximin_step(
-            now.constraint,
-            slope,
-            -np.minimum(room, np.maximum(x[index] - low[index], 0.0)),
-            np.minimum(room, np.maximum(high[index] - x[index], 0.0)),
-            gain=now.gain,
-            gain_slope=gain_slope,
-            weight=1.0 if now.gain is None else PENALTY,
-            cap=now.cap,
-        )
+        least = -np.minimum(room, np.maximum(x[index] - low[index], 0.0))
+        most = np.minimum(room, np.maximum(high[index] - x[index], 0.0))
+        slope, gain_slope = _slopes(objective, here, aims, now, radius[index], high[index], free[index])
+
+        def step_with(
+            curvature: FloatArray | None,
+            now: Terms = now,
+            slope: FloatArray = slope,
+            gain_slope: FloatArray | None = gain_slope,
+            least: FloatArray = least,
+            most: FloatArray = most,
+        ) -> Step:
+            return maximin_step(
+                now.constraint,
+                slope,
+                least,
+                most,
+                gain=now.gain,
+                gain_slope=gain_slope,
+                weight=1.0 if now.gain is None else PENALTY,
+                cap=now.cap,
+                curvature=curvature,
+            )
+
+        step = step_with(None)
+        if pace.curvature:
+            step = step_with(_curvature(objective, here, aims, now, step, radius[index], free[index]))
         points = [here.at(np.clip(here.x + t * step.d, low[index], high[index])) for t in TRIALS]
         tried = objective.score(joined(points))
         ahead = terms(objective, _repeated(aims, len(TRIALS)), tried)
@@ -153,6 +171,58 @@ def _slopes(
     if now.gain is not None and there.gain is not None:
         gain_slope = spread(there.gain, now.gain)
     return spread(there.constraint, now.constraint), gain_slope
+
+
+def _curvature(
+    objective: Objective,
+    rows: Rows,
+    goals: Goals,
+    now: Terms,
+    step: Step,
+    radius: FloatArray,
+    free: BoolArray,
+) -> FloatArray:
+    """Second differences of -(multipliers · levels), its negative eigenvalues cut off. (S, V, V)
+
+    They know nothing of the box: a point beyond it is only looked at, never kept.
+    """
+    count, variables = rows.x.shape
+    length = np.clip(0.3 * radius, 2e-3, 5e-2)
+    one, other = np.triu_indices(variables)
+    moves = np.zeros((2 * variables + one.size, variables))
+    moves[np.arange(variables), np.arange(variables)] = 1.0
+    moves[np.arange(variables, 2 * variables), np.arange(variables)] = -1.0
+    moves[2 * variables + np.arange(one.size), one] += 1.0
+    moves[2 * variables + np.arange(one.size), other] += 1.0
+    wanted = (free[:, None, :] | (moves == 0.0)[None, :, :]).all(axis=2)
+    wanted[:, 2 * variables :] &= one != other
+    row, move = np.nonzero(wanted)
+    scores = objective.score(rows.take(row).at(rows.x[row] + length[row, None] * moves[move]), remember=False)
+    there = terms(objective, goals.take(row), scores)
+
+    def weighed(ahead: FloatArray, base: FloatArray, multipliers: FloatArray) -> FloatArray:
+        with np.errstate(invalid="ignore"):
+            change = ahead - base[row]
+        change = np.where(np.isfinite(change) & (np.abs(change) <= CLIFF), change, 0.0)
+        out: FloatArray = -(multipliers[row] * change).sum(axis=1)
+        return out
+
+    flat = weighed(there.constraint, now.constraint, step.multipliers)
+    if now.gain is not None and there.gain is not None:
+        flat = flat + weighed(there.gain, now.gain, step.gain_multipliers)
+    change = np.zeros((count, len(moves)))
+    change[row, move] = flat
+    ahead, behind = change[:, :variables], change[:, variables : 2 * variables]
+    hessian = np.zeros((count, variables, variables))
+    mixed = change[:, 2 * variables :] - ahead[:, one] - ahead[:, other]
+    mixed = np.where(wanted[:, 2 * variables :], mixed, 0.0)
+    hessian[:, one, other] = mixed
+    hessian[:, other, one] = mixed
+    hessian[:, np.arange(variables), np.arange(variables)] = ahead + behind
+    hessian /= length[:, None, None] ** 2
+    value, vector = np.linalg.eigh(hessian)
+    out: FloatArray = (vector * np.maximum(value, 0.0)[:, None, :]) @ vector.transpose(0, 2, 1)
+    return out
 
 
 def _boxes(objective: Objective, rows: Rows) -> tuple[FloatArray, FloatArray]:

@@ -10,7 +10,9 @@ from synth.search.linear_step import maximin_step
 def programmes(seed, count, constraints, variables):
     rng = np.random.default_rng(seed)
     slack = rng.normal(size=(count, constraints)) * 10.0 ** rng.uniform(-3, 1, size=(count, 1))
-    slope = rng.normal(size=(count, constraints, variables)) * 10.0 ** rng.uniform(-2, 1.7, size=(count, 1, variables))
+    slope = rng.normal(size=(count, constraints, variables)) * 10.0 ** rng.uniform(
+        -2, 1.7, size=(count, 1, variables)
+    )
     radius = 10.0 ** rng.uniform(-3, 0, size=(count, 1)) * np.ones((count, variables))
     return slack, slope, -radius, radius
 
@@ -70,7 +72,10 @@ def test_curvature_moves_the_step_to_the_quadratic_optimum():
         return 0.5 * d @ hessian[0] @ d - (slack[0] + slope[0] @ d).min()
 
     grid = min(
-        (minimize(cost, x, method="Nelder-Mead", options={"xatol": 1e-9, "fatol": 1e-13}) for x in np.eye(2) * 0.1),
+        (
+            minimize(cost, x, method="Nelder-Mead", options={"xatol": 1e-9, "fatol": 1e-13})
+            for x in np.eye(2) * 0.1
+        ),
         key=lambda r: r.fun,
     )
     assert cost(step.d[0]) <= grid.fun + 1e-9

@@ -1,0 +1,230 @@
+"""A sheet's task in, an outcome out: the whole search in its order."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from synth.loop.arrays import FloatArray
+from synth.search.archive import Rows, joined
+from synth.search.campaign import Campaign
+from synth.search.finals import Draft, candidates, drafts_of, named, rounded, scorecards, with_fragility
+from synth.search.outcome import Candidate, Outcome, ProgressCall, Rejection, Scan, Settings, StopCall, Task
+from synth.search.prices import price_list
+from synth.search.ranking import chosen, different
+from synth.search.wishes import Wished, extreme_measures, extremes, preferred
+
+Seed = tuple[str, Sequence[float]]
+BOX_TURNS = 4  # how often points inside the tolerance box may send the search on
+
+
+def propose(
+    task: Task,
+    settings: Settings | None = None,
+    progress: ProgressCall | None = None,
+    stop: StopCall | None = None,
+    *,
+    seeds: Sequence[Seed] = (),
+) -> Outcome:
+    """Search every structure of the task and rank what is found.
+
+    seeds : (structure, tuned values in SI) of earlier candidates to set out from as well.
+    stop : asked often; True ends the search and keeps what is best so far (`interrupted`).
+    The same task, settings and seeds give the same outcome bit for bit, unless a time limit or `stop` ends it.
+    """
+    settings = settings or Settings()
+    wish = task.prefer
+    extra = extreme_measures(task)
+    if wish is not None and wish.measure is not None:
+        extra = (*extra, wish.measure)
+    campaign = Campaign(task, settings, extra=extra, progress=progress, stop=stop)
+    campaign.run(_seed_rows(campaign, seeds))
+    found, listed = _listed(campaign)
+    examined = 0
+    for _ in range(BOX_TURNS):
+        if task.interior is None or not listed:
+            break
+        listed, failing = _inside(campaign, listed)
+        examined = len(task.interior)
+        if not failing or campaign.halted():
+            break
+        found, listed = _listed(campaign)
+    else:
+        listed, _ = _inside(campaign, listed)
+    objective = campaign.objective
+    campaign.enter("fragility")
+    final = with_fragility(task, tuple(listed), objective.plants, objective.case_names)
+    campaign.enter("prices")
+    met = any(c.meets_all for c in final)
+    prices = () if met or campaign.halted() else price_list(campaign)
+    scans = tuple(_scan(campaign, n) for n in range(len(task.structures)))
+    campaign.enter("end")
+    return Outcome(
+        candidates=final,
+        rejections=_rejections(campaign, found, final, scans),
+        scans=scans,
+        prices=prices,
+        verdict="met" if met else "not met",
+        case_names=objective.case_names,
+        plants=objective.plants,
+        cases=task.cases + _added(campaign),
+        interior_examined=examined,
+        seed=settings.seed,
+        budget=settings.budget,
+        evaluations=objective.evaluations,
+        seconds=time.perf_counter() - campaign.begun,
+        interrupted=campaign.interrupted,
+        limited=campaign.limited,
+        stages=dict(campaign.stages),
+    )
+
+
+def rescore(
+    task: Task, drafts: Sequence[tuple[str, Sequence[float]]], plants: object = None
+) -> tuple[Candidate, ...]:
+    """Score given compensators of known structures as they are: nothing is rounded, renamed or ranked.
+
+    drafts : (structure, tuned values in SI).
+    """
+    del plants
+    by_name = {s.name: s for s in task.structures}
+    from synth.structures import by_name as registered
+
+    made = [
+        Draft(by_name.get(name) or registered(name), np.asarray(theta, dtype=float), goal="given")
+        for name, theta in drafts
+    ]
+    return candidates(task, made, task.plants, task.case_names)
+
+
+def _seed_rows(campaign: Campaign, seeds: Sequence[Seed]) -> Rows | None:
+    names = [s.name for s in campaign.task.structures]
+    parts = []
+    for name, theta in seeds:
+        if name in names:
+            origin = np.array([campaign.origin("an earlier candidate")])
+            values = np.asarray(theta, dtype=float)[None, :]
+            parts.append(campaign.objective.rows_of(names.index(name), values, origin))
+    return joined(parts) if parts else None
+
+
+def _listed(campaign: Campaign) -> tuple[list[Candidate], list[Candidate]]:
+    """Every candidate found, and the list to report."""
+    task, objective = campaign.task, campaign.objective
+    wished = [w for w in (preferred(campaign), extremes(campaign)) if w is not None]
+    campaign.enter("finals")
+    drafts: list[Draft] = []
+    for standing in campaign.standings:
+        if standing.tops is not None:
+            need = 0.0
+            several = standing.tops.take(np.arange(min(2, len(standing.tops))))
+            drafts += drafts_of(objective, several, "worst slack", campaign.origins, need)
+    for wish in wished:
+        drafts += _wished_drafts(campaign, wish)
+    drafts = [named(d, task.structures) for d in drafts]
+    drafts, scored = rounded(task, drafts, objective.plants, objective.case_names)
+    found = list(candidates(task, drafts, objective.plants, objective.case_names))
+    objective.evaluations += scored + len(drafts) * len(objective.plants)
+    return found, chosen(task, found, 1.0 / objective.scales.time)
+
+
+def _wished_drafts(campaign: Campaign, wish: Wished) -> list[Draft]:
+    made = drafts_of(campaign.objective, wish.rows, "", campaign.origins, wish.need)
+    return [replace(d, goal=g) for d, g in zip(made, wish.goals, strict=True)]
+
+
+def _inside(campaign: Campaign, listed: list[Candidate]) -> tuple[list[Candidate], bool]:
+    """Judge the list on the points inside the tolerance box. The worst failing point of each candidate becomes a
+    case of the search, which goes on from there; True when that happened."""
+    task, objective = campaign.task, campaign.objective
+    if task.interior is None:
+        return listed, False
+    campaign.enter("inside the box")
+    names = tuple(c.name for c in task.interior_cases)
+    drafts = _again(campaign, listed)
+    measures = tuple(dict.fromkeys(b.measure for b in task.bounds))
+    from synth.search.finals import realised
+
+    cards = scorecards(task, realised(drafts), task.interior, names, measures)
+    objective.evaluations += len(drafts) * len(task.interior)
+    worst = cards.slack.min(axis=2)
+    out = [
+        replace(c, interior_met=int((worst[b] >= 0.0).sum()), interior_total=len(names))
+        for b, c in enumerate(listed)
+    ]
+    fails = sorted(
+        {int(worst[b].argmin()) for b, c in enumerate(listed) if c.meets_all and worst[b].min() < 0.0}
+    )
+    fails = [i for i in fails if names[i] not in objective.case_names]
+    if not fails:
+        return out, False
+    index = np.array(fails, dtype=np.intp)
+    objective.add_cases(task.interior.rows(index), tuple(names[i] for i in fails))
+    campaign.examine(list(range(len(campaign.standings))))
+    return out, True
+
+
+def _again(campaign: Campaign, listed: list[Candidate]) -> list[Draft]:
+    by_name = {s.name: s for s in campaign.task.structures}
+    return [Draft(by_name[c.structure], np.array(list(c.parameters.values()))) for c in listed]
+
+
+def _added(campaign: Campaign) -> tuple[object, ...]:
+    extra = campaign.objective.case_names[len(campaign.task.case_names) :]
+    by_name = {c.name: c for c in campaign.task.interior_cases}
+    return tuple(by_name[name] for name in extra)
+
+
+def _scan(campaign: Campaign, n: int) -> Scan:
+    standing = campaign.standings[n]
+    return Scan(
+        structure=campaign.task.structures[n].name,
+        exhaustive="exact" if standing.parameters == 1 else "search",
+        restarts=standing.restarts,
+        agreeing=standing.agreeing,
+        settled=standing.settled or standing.parameters == 1,
+        best_slack=standing.best,
+        evaluations=standing.evaluations,
+        signs=standing.signs,
+    )
+
+
+def _rejections(
+    campaign: Campaign, found: list[Candidate], final: Sequence[Candidate], scans: Sequence[Scan]
+) -> tuple[Rejection, ...]:
+    """Structures without a place in the list, nearest first, and why."""
+    out = []
+    for scan in scans:
+        mine = [c for c in found if scan.structure in (c.structure, *c.also)]
+        if any(c.structure == scan.structure and c.meets_all for c in final):
+            continue
+        closest = max(mine, key=lambda c: c.worst_slack, default=None)
+        out.append(_rejection(campaign, scan, closest, final))
+    out.sort(key=lambda r: -(r.closest.worst_slack if r.closest is not None else -np.inf))
+    return tuple(out)
+
+
+def _rejection(
+    campaign: Campaign, scan: Scan, closest: Candidate | None, final: Sequence[Candidate]
+) -> Rejection:
+    if closest is None or not bool(closest.stable.all()):
+        return Rejection(scan.structure, "no setting found that stabilises every case", None, {}, scan)
+    by_requirement: FloatArray = closest.worst_by_requirement()
+    short = {b.id: float(s) for b, s in zip(campaign.task.bounds, by_requirement, strict=True) if s < 0.0}
+    if not short:
+        twins = [c for c in final if scan.structure in c.also]
+        fallback = 1.0 / campaign.objective.scales.time
+        near = twins or [c for c in final if not different(c, closest, fallback)]
+        if twins:
+            reason = f"the same function is listed as {twins[0].structure}"
+        elif near:
+            reason = f"its best setting is no other loop than that of {near[0].structure}, listed already"
+        else:
+            reason = "it meets the sheet, and the list is long enough without it"
+        return Rejection(scan.structure, reason, closest, {}, scan)
+    worst = min(short, key=lambda k: short[k])
+    reason = f"comes no nearer than {short[worst]:.3g} of slack, short of {', '.join(short)}"
+    return Rejection(scan.structure, reason, closest, short, scan)
