@@ -1,0 +1,297 @@
+"""True roots of D(s) + N(s) e^(-s θ), all of them within a circle, counted to be sure that none is missing.
+
+M loops, q roots. Scaled time. Seeds come from a rational stand-in of the delay near the origin and from the chain of
+far roots beyond; every root returned solves the transcendental equation itself.
+"""
+
+from __future__ import annotations
+
+from math import comb, factorial
+
+import numpy as np
+
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
+from synth.loop.closed_loop import Loops
+from synth.loop.poles.encirclement import (
+    chain_abscissa,
+    delayed_stable,
+    moved,
+    roots_right_of,
+    unit_crossings,
+)
+from synth.loop.poles.roots import closed_roots
+from synth.loop.poles.winding import missing_roots
+from synth.loop.polynomials import horner, horner_slope, magnitude_sum
+
+__all__ = ["characteristic", "delayed_poles", "delayed_stable"]
+
+# Radius, in units of 1/θ, within which every root is always sought; it holds the first chain pair.
+NEAREST = 7.0
+# Radius, in units of 1/θ, beyond which no roots are returned: the chain has long settled on its asymptote there.
+FARTHEST = 400.0
+# Order of the rational stand-in of the delay whose roots are the near seeds.
+STAND_IN = 4
+# So many of the rightmost are returned however far out they lie.
+RIGHTMOST = 6
+
+
+def delayed_poles(loops: Loops, reach: FloatArray) -> ComplexArray:
+    """All roots with abs(p) <= reach, and never fewer than the rightmost one or pair.
+
+    Parameters
+    ----------
+    loops : dead_time (M,) > 0, scaled.
+    reach : (M,) scaled 1/time; 0 for the nearest ones alone. Beyond 400/θ it is taken as 400/θ.
+
+    Returns
+    -------
+    (M, q), NaN at the end of a row; ordered by decreasing real part, pairs side by side, upper half first, exactly
+    conjugate; real roots have imaginary part exactly 0. Relative error about eps × condition (test_delayed_poles).
+
+    Notes
+    -----
+    Seeds: roots of D Q + N P, P/Q the diagonal Padé quotient of e^(-s θ), and s = (ln(-N/D) + 2πjk)/θ on the chain.
+    All are moved together by Aberth's iteration on the transcendental function (Math. Comp. 27, 1973), which keeps
+    two from meeting in one root. The number within the circle is then checked by the argument principle, and the
+    rightmost by the bound abs(N/D) < e^(θ Re p) outside the circle or by the count right of a line.
+    """
+    if len(loops) == 0:
+        return np.zeros((0, 0), dtype=complex)
+    delay = loops.dead_time
+    asked = np.clip(np.nan_to_num(reach), NEAREST / delay, FARTHEST / delay)
+    radius = asked.copy()
+    found = _within(loops, radius)
+    short = np.flatnonzero(~_holds_rightmost(loops, found, radius))
+    while short.size:
+        radius[short] = np.minimum(3.0 * radius[short], FARTHEST / delay[short])
+        found = _joined(found, short, _within(loops.rows(short), radius[short]))
+        lacking = short[~_holds_rightmost(loops.rows(short), found[short], radius[short])]
+        short = lacking[radius[lacking] * delay[lacking] < 0.999 * FARTHEST]
+        astray = np.setdiff1d(lacking, short)
+        if astray.size:
+            found = _joined(found, astray, _with_rightmost(loops.rows(astray), found[astray]))
+    return _trimmed(found, asked)
+
+
+def characteristic(loops: Loops, s: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+    """Δ = D + N e^(-s θ) and dΔ/ds at each row's points, (M, q) twice."""
+    d, slope_d = horner_slope(loops.denominator, s)
+    n, slope_n = horner_slope(loops.numerator, s)
+    delay = loops.dead_time[:, None]
+    late = np.exp(-s * delay)
+    return d + n * late, slope_d + (slope_n - delay * n) * late
+
+
+def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
+    """All roots of each row with abs(p) <= radius; rows of like size are worked on together."""
+    pairs = np.ceil(1.5 * radius * loops.dead_time / (2.0 * np.pi)).astype(np.intp) + 1
+    size = np.ceil(np.log2(pairs)).astype(np.intp)
+    found = np.full((len(loops), 0), np.nan, dtype=complex)
+    for one in np.unique(size):
+        at = np.flatnonzero(size == one)
+        some, far = loops.rows(at), radius[at]
+        with np.errstate(all="ignore"):  # rows that are not finite and seeds that run away end as NaN
+            roots = _kept(some, _refined(some, _seeds(some, int(pairs[at].max()))))
+            for _ in range(4):
+                seeds = missing_roots(some, roots, far)
+                wanting = np.flatnonzero(np.isfinite(seeds.real).any(axis=1))
+                if wanting.size == 0:
+                    break
+                more = np.concatenate([roots[wanting], seeds[wanting]], axis=1)
+                part = some.rows(wanting)
+                roots = _joined(roots, wanting, _kept(part, _refined(part, more)))
+            outside = ~(np.abs(roots) <= far[:, None] * (1.0 + 1e-12))
+            best = np.where(outside, -np.inf, roots.real).max(axis=1, initial=-np.inf)
+            outside &= ~(roots.real > best[:, None])
+        roots[outside] = np.nan
+        found = _joined(found, at, _ordered(roots))
+    return found
+
+
+def _seeds(loops: Loops, pairs: int) -> ComplexArray:
+    """Near seeds and `pairs` chain pairs; with long delays the poles of L too, near which roots gather."""
+    seeds = [_near_seeds(loops), _chain_seeds(loops, pairs)]
+    if pairs > 4:
+        seeds.append(closed_roots(loops.denominator))
+    return np.concatenate(seeds, axis=1)
+
+
+def _near_seeds(loops: Loops) -> ComplexArray:
+    """Roots of D Q + N P with the diagonal Padé quotient P/Q; good for abs(s) θ up to about its order."""
+    m = STAND_IN
+    powers = loops.dead_time[:, None] ** np.arange(m, -1, -1)
+    weights = np.array([comb(m, k) * factorial(2 * m - k) / factorial(2 * m) for k in range(m, -1, -1)])
+    below = powers * weights
+    above = below * (-1.0) ** np.arange(m, -1, -1)
+    order = loops.order
+    total = np.zeros((len(loops), order + m + 1))
+    for k in range(m + 1):
+        total[:, k : k + order + 1] += below[:, k, None] * loops.denominator + above[:, k, None] * loops.numerator
+    return closed_roots(total)
+
+
+def _chain_seeds(loops: Loops, pairs: int) -> ComplexArray:
+    """s θ = ln(-N/D) + 2πjk for k = 1 .. pairs, iterated; both halves of each pair."""
+    delay = loops.dead_time[:, None]
+    turns = 2.0j * np.pi * np.arange(1, pairs + 1)
+    lead = (loops.numerator != 0.0).argmax(axis=1)
+    first = np.take_along_axis(loops.numerator, lead[:, None], axis=1) / loops.denominator[:, :1]
+    falls = lead[:, None].astype(float)
+    level = np.log(-first.astype(complex))
+    s = (level + turns) / delay
+    for _ in range(4):
+        # the leading ratio by its own logarithm, which turns steadily with s, and the rest by the principal one
+        rest = horner(loops.numerator, s) / (horner(loops.denominator, s) * first) * s**falls
+        better = (level - falls * np.log(s) + np.log(rest) + turns) / delay
+        s = np.where(np.isfinite(better), better, s)
+    return np.concatenate([s, np.conj(s)], axis=1)
+
+
+def _refined(loops: Loops, seeds: ComplexArray) -> ComplexArray:
+    """Aberth's iteration from all seeds at once, then Newton's on each root."""
+    roots = np.where(np.isfinite(seeds), seeds, np.nan)
+    # a pair that starts exactly conjugate could never split into two reals
+    roots = roots * (1.0 + 1e-4j * (1.0 + np.arange(roots.shape[1]) % 3))
+    active = np.arange(len(loops))
+    for _ in range(14):
+        here = roots[active]
+        some = loops.rows(active)
+        value, slope = characteristic(some, here)
+        apart = here[:, :, None] - here[:, None, :]
+        index = np.arange(here.shape[1])
+        apart[:, index, index] = np.inf
+        newton = value / slope
+        step = newton / (1.0 - newton * np.nansum(1.0 / apart, axis=2))
+        size = np.abs(here)
+        limit = 0.5 * size + 0.5 / some.dead_time[:, None]
+        long = np.abs(step)
+        step = np.where(long > limit, step * (limit / long), step)
+        step = np.where(np.isfinite(step), step, 0.0)
+        roots[active] = here - step
+        moving = (long > 1e-5 * size + 1e-12).any(axis=1)
+        if not moving.any():
+            break
+        active = active[moving]
+    for _ in range(2):
+        value, slope = characteristic(loops, roots)
+        step = value / slope
+        fine = np.abs(step) < 1e-3 * np.abs(roots) + 1e-12
+        roots = np.where(fine, roots - step, roots)
+    return roots
+
+
+def _kept(loops: Loops, roots: ComplexArray) -> ComplexArray:
+    """Converged roots, each once, made conjugate: upper half and reals first found, lower half by reflection."""
+    with np.errstate(all="ignore"):
+        value, slope = characteristic(loops, roots)
+        late = np.exp(-roots.real * loops.dead_time[:, None])
+        size = np.abs(roots)
+        rounding = magnitude_sum(loops.denominator, size) + magnitude_sum(loops.numerator, size) * late
+        good = (np.abs(value) <= 1e-11 * rounding) & np.isfinite(value)
+        # the distance to the true root that rounding leaves open, as for a double root where the slope is small
+        fuzz = np.sqrt(np.finfo(float).eps) * 1e-3 * size + 1e-15 * rounding / np.abs(slope)
+        fuzz = np.minimum(fuzz, 1e-4 * size) + 1e-300
+    upper = np.where(good, roots.real + 1j * np.abs(roots.imag), np.nan)
+    real = upper.imag <= np.minimum(1e-9 * size, fuzz)
+    upper.imag[real] = 0.0
+    order = np.argsort(np.where(np.isnan(upper.real), np.inf, np.abs(upper)), axis=1)
+    upper = np.take_along_axis(upper, order, axis=1)
+    below = np.take_along_axis(roots.imag < 0.0, order, axis=1)
+    fuzz = np.take_along_axis(fuzz, order, axis=1)
+    # the two halves of one pair, or one root found twice: the same half may not occur twice within rounding
+    gap = np.abs(upper[:, :, None] - upper[:, None, :])
+    earlier = np.tril(np.ones((upper.shape[1], upper.shape[1]), dtype=bool), -1)
+    twin = (gap <= fuzz[:, :, None]) & earlier
+    real = upper.imag == 0.0
+    # of reals that coincide a double root keeps two, told apart by the halves they came in from
+    same_half = below[:, :, None] == below[:, None, :]
+    twin &= ~(real[:, :, None] & real[:, None, :]) | same_half
+    upper[twin.any(axis=2)] = np.nan
+    both = np.concatenate([upper, np.where(upper.imag > 0.0, np.conj(upper), np.nan)], axis=1)
+    return _ordered(both)
+
+
+def _ordered(roots: ComplexArray) -> ComplexArray:
+    """By decreasing real part, upper half of a pair before its lower half, NaN last, empty columns dropped."""
+    bad = np.isnan(roots.real)
+    keys = (np.where(bad, 0.0, -roots.imag), np.where(bad, 0.0, -np.abs(roots.imag)), np.where(bad, np.inf, -roots.real))
+    out = np.take_along_axis(roots, np.lexsort(keys, axis=1), axis=1)
+    width = int((~bad).sum(axis=1).max(initial=0))
+    return out[:, :width]
+
+
+def _joined(whole: ComplexArray, at: IntArray, part: ComplexArray) -> ComplexArray:
+    """`whole` with its rows `at` replaced by `part`, widened with NaN as needed."""
+    width = max(whole.shape[1], part.shape[1])
+    out = np.full((whole.shape[0], width), np.nan, dtype=complex)
+    out[:, : whole.shape[1]] = whole
+    out[at] = np.nan
+    out[at, : part.shape[1]] = part
+    return out
+
+
+def _trimmed(found: ComplexArray, asked: FloatArray) -> ComplexArray:
+    """Drop what a wider search for the rightmost root brought in: outside `asked` a few rightmost ones stay."""
+    with np.errstate(invalid="ignore"):
+        keep = np.abs(found) <= asked[:, None] * (1.0 + 1e-12)
+    keep[:, :RIGHTMOST] = True
+    # a pair is kept or dropped as one
+    if found.shape[1] > RIGHTMOST:
+        keep[:, RIGHTMOST] |= found[:, RIGHTMOST] == np.conj(found[:, RIGHTMOST - 1])
+    return _ordered(np.where(keep, found, np.nan))
+
+
+def _with_rightmost(loops: Loops, found: ComplexArray) -> ComplexArray:
+    """`found` with the rightmost root or pair added, from the count right of a line alone.
+
+    The line is bisected to where the last root leaves its right side; the crossing frequency where L is nearest -1
+    there is the root's imaginary part.
+    """
+    low = np.where(np.isnan(found.real), -np.inf, found.real).max(axis=1, initial=-np.inf)
+    low = np.fmax(low, -FARTHEST / loops.dead_time)
+    step = 1.0 / loops.dead_time
+    high = low + step
+    for _ in range(60):
+        right, _ = roots_right_of(loops, high)
+        more = right > 0.0
+        if not more.any():
+            break
+        step = 2.0 * step
+        high = np.where(more, high + step, high)
+    for _ in range(45):
+        middle = 0.5 * (low + high)
+        right, _ = roots_right_of(loops, middle)
+        low, high = np.where(right > 0.0, middle, low), np.where(right > 0.0, high, middle)
+    with np.errstate(all="ignore"):
+        shrink = np.exp(-low * loops.dead_time)[:, None]
+        crossing = unit_crossings(moved(loops.denominator, low), moved(loops.numerator, low) * shrink)
+        places = np.concatenate([np.zeros((len(low), 1)), crossing], axis=1)
+        points = np.where(np.isfinite(places), low[:, None] + 1j * places, np.nan)
+        value, _ = characteristic(loops, points)
+        scale = magnitude_sum(loops.denominator, np.abs(points))
+        best = np.nan_to_num(np.abs(value) / scale, nan=np.inf).argmin(axis=1)
+        seed = np.take_along_axis(points, best[:, None], axis=1)
+        seeds = np.concatenate([seed, np.where(seed.imag > 0.0, np.conj(seed), np.nan)], axis=1)
+        return _kept(loops, _refined(loops, np.concatenate([found, seeds], axis=1)))
+
+
+def _holds_rightmost(loops: Loops, found: ComplexArray, radius: FloatArray) -> BoolArray:
+    """Whether no root outside the circle lies right of the rightmost one found (or of the far chain). (M,)."""
+    chain = chain_abscissa(loops)
+    with np.errstate(all="ignore"):
+        best = np.where(np.isnan(found.real), -np.inf, found.real).max(axis=1, initial=-np.inf)
+        far = np.abs(loops.denominator[:, 0]) * radius**loops.order
+        rest = magnitude_sum(loops.denominator[:, 1:], radius[:, None])[:, 0] if loops.order else np.zeros(len(loops))
+        most = magnitude_sum(loops.numerator, radius[:, None])[:, 0]
+        sure = (far > rest) & (most < (far - rest) * np.exp(loops.dead_time * best))
+    doubtful = np.flatnonzero(~sure)
+    if doubtful.size:
+        line = np.maximum(best, chain)[doubtful] + 1e-6 / loops.dead_time[doubtful]
+        readable = np.isfinite(line)
+        count, _ = roots_right_of(loops.rows(doubtful[readable]), line[readable])
+        sure[doubtful[readable]] = ~(count > 0.0)
+        empty = ~np.isfinite(best)[doubtful]
+        # without N, or where the row is not finite, there may be nothing to find
+        nothing = ~loops.numerator[doubtful].any(axis=1) | ~np.isfinite(loops.closed[doubtful]).all(axis=1)
+        sure[doubtful[empty]] = nothing[empty]
+    return sure
