@@ -21,7 +21,7 @@ RESERVED = ("s", "pi", "sqrt", "exp")
 _OTHER_FUNCTIONS = {"sin", "cos", "tan", "log", "ln", "log10", "abs", "sinh", "cosh", "tanh", "atan", "pow"}
 _SIGNS = {"·": "*", "×": "*", "−": "-", "–": "-", "÷": "/", "²": "^2", "³": "^3", "√": "sqrt(...)"}
 TOKEN = re.compile(
-    r"\s*(?:(?P<number>(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)|(?P<name>[^\W\d]\w*)|(?P<sign>\*\*|[-+*/^()]))"
+    r"\s*(?:(?P<number>(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?)|(?P<name>[^\W\d]\w*)|(?P<sign>\*\*|[-+*/^()]))"
 )
 
 
@@ -109,11 +109,17 @@ class Token:
 
 
 def tokens(text: str) -> list[Token]:
+    """The text in tokens, the last of kind "end". Raises FormulaError."""
     found: list[Token] = []
     position = 0
     stop = len(text.rstrip())
     while position < stop:
         match = TOKEN.match(text, position)
+        if match is not None and match.lastgroup == "name":  # \w takes in ² and its like
+            name = match.group("name")
+            if not name.isidentifier():
+                stranger = (i for i, c in enumerate(name) if not f"a{c}".isidentifier())
+                position, match = match.start("name") + next(stranger, 0), None
         if match is None:
             position += len(text[position:]) - len(text[position:].lstrip())
             sign = text[position]

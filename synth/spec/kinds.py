@@ -376,4 +376,4 @@ def formula(node: Node, in_s: bool) -> Formula | None:
 
 def is_name(key: str) -> bool:
     """Whether a key can be a name in a formula."""
-    return re.fullmatch(r"[^\W\d]\w*", key) is not None and key not in RESERVED
+    return key.isidentifier() and key not in RESERVED
