@@ -7,7 +7,7 @@ import numpy as np
 from synth.loop.arrays import FloatArray
 from synth.loop.closed_loop import Loops
 from synth.loop.poles.roots import closed_roots
-from synth.loop.time.modes import SIGNALS, at, step_modes
+from synth.loop.time.modes import limits, step_modes
 
 
 def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
@@ -28,6 +28,7 @@ def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, Fl
 
         delayed: tuple[FloatArray, FloatArray, FloatArray] = delayed_step_curves(loops, times)
         return delayed
-    modes = step_modes(loops, closed_roots(loops.closed), SIGNALS)
-    out = at(modes, np.arange(len(loops)), times)
+    modes = step_modes(loops, closed_roots(loops.closed), ("y", "u", "d"))
+    _, end = limits(loops, ("y", "u", "d"))
+    out = modes.curves(times) + end[:, :, None]
     return out[:, 0], out[:, 1], out[:, 2]

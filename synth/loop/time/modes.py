@@ -1,8 +1,9 @@
 """The step responses of a loop as sums of modes: residues over the computed poles.
 
-M loops, n poles, m mode slots (a complex pair is one slot, its upper pole), S signals.
+M loops, n poles, m mode slots (a complex pair is one slot, its upper pole), S signals, P blocks, E points.
+Signals are counted from their value at infinity:
 
-    x(t) = x(inf) + Re sum_i r_i e^(p_i t)        a pair's residue counts double
+    x(t) - x(inf) = Re sum_i r_i e^(p_i t)        the residue of a pair counts double
 
 The residues are products over the COMPUTED poles. Those are the exact poles of a nearby loop, so their errors
 cancel in the sum; residues from the derivative of the polynomial lose every digit at near-equal poles.
@@ -15,94 +16,264 @@ from dataclasses import dataclass
 import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
-from synth.loop.closed_loop import Loops, exact_degree, trimmed
+from synth.loop.closed_loop import Loops, trimmed
 
-SIGNALS = ("y", "u", "d")
-"""Reference step: output y and control u; step at the plant's input: output d."""
+CELLS = 8
+"""Cells of equal width in a block."""
+
+HERMITE = 1.0 / 384.0
+"""Error of the cubic through both end values and slopes, per h^4 and fourth derivative."""
 
 
 @dataclass(frozen=True, slots=True)
+class Profile:
+    """Coarse course of the signals: what the block plan is made from. K times, the first one 0.
+
+    time       (M, K) doubling after the first two
+    deviation  (M, S, K) x - x(inf)
+    envelope   (M, S, K) bound of abs(x - x(inf)) from that time on
+    fourth     (M, S, K) bound of the fourth derivative from that time on
+    rivals     (M, S, K) bound of the slope of all other modes over that of the slowest, where that is real; below 1 the
+               signal is monotone from that time on; inf where the slowest is a pair
+    area       (M, S, K) bound of the integral of abs(x - x(inf)) from that time on; None when not asked for
+    others     (M, S, K) the same without the slowest mode; None when not asked for
+    """
+
+    time: FloatArray
+    deviation: FloatArray
+    envelope: FloatArray
+    fourth: FloatArray
+    rivals: FloatArray
+    area: FloatArray | None
+    others: FloatArray | None
+
+
 class Modes:
     """Modal form of S signals of M loops.
 
-    pole     (M, m) scaled, upper half plane and reals; -1 in an empty slot
+    pole     (M, m) scaled, upper half plane and reals by decreasing real part; -1 in an empty slot
     residue  (M, S, m) doubled for pairs; 0 in an empty slot
-    limit    (M, S) value at infinity
-    start    (M, S) value at 0+
     """
 
-    pole: ComplexArray
-    residue: ComplexArray
-    limit: FloatArray
-    start: FloatArray
+    def __init__(self, pole: ComplexArray, residue: ComplexArray) -> None:
+        self.pole = pole
+        self.residue = residue
+        self.size = np.abs(residue)
+        self.swing = np.abs(pole)
+        m, s, slots = residue.shape
+        self._pole = np.ascontiguousarray(pole.T)
+        self._residue = np.ascontiguousarray(residue.reshape(m * s, slots).T)
+        self.fourth = self.size * (self.swing**4)[:, None]
+
+    def __len__(self) -> int:
+        return int(self.pole.shape[0])
 
     def rows(self, index: IntArray) -> Modes:
-        """The loops named by `index`, with no more slots than they need."""
-        return Modes(self.pole[index], self.residue[index], self.limit[index], self.start[index])
+        """The loops named by `index`."""
+        return Modes(self.pole[index], self.residue[index])
+
+    def later(self, signals: list[int], delay: FloatArray) -> Modes:
+        """The chosen signals seen from `delay` (M,) on: x(t + delay)."""
+        return Modes(self.pole, self.residue[:, signals] * np.exp(self.pole * delay[:, None])[:, None])
+
+    def first(self) -> IntArray:
+        """(M, S) slot of the slowest mode that the signal carries."""
+        slot: IntArray = (self.size > 0.0).argmax(axis=2)
+        return slot
+
+    def profile(self, floor: FloatArray, areas: bool) -> Profile:
+        """The signals at times doubling, until every mode has decayed below `floor` (M, S)."""
+        m, s, slots = self.residue.shape
+        fall = -self.pole.real
+        present = (self.size > 0.0).any(axis=1)
+        t0 = 0.25 / np.where(present, self.swing, 0.0).max(axis=1, initial=1e-9)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            life = np.log(self.size * (slots / floor[:, :, None])).max(axis=1) / fall
+        end = np.where(present, life, 0.0).max(axis=1, initial=0.0)
+        octaves = int(np.clip(np.ceil(np.log2(np.maximum(end / t0, 1.0)).max(initial=0.0)) + 1, 2, 120))
+        grow = np.empty((octaves + 1, m, slots), dtype=complex)
+        grow[0] = 1.0
+        grow[1] = np.exp(self.pole * t0[:, None])
+        decay = np.empty(grow.shape)
+        decay[:2] = np.abs(grow[:2])
+        for k in range(2, octaves + 1):
+            np.multiply(grow[k - 1], grow[k - 1], out=grow[k])
+            np.multiply(decay[k - 1], decay[k - 1], out=decay[k])
+        time = np.zeros((m, octaves + 1))
+        time[:, 1:] = t0[:, None] * np.exp2(np.arange(octaves))
+
+        deviation = np.matmul(_real(self.residue.conj()), _real(grow).transpose(1, 2, 0))
+        slow = np.arange(slots) == self.first()[:, :, None]
+        speed = np.where(slow, 0.0, self.size * self.swing[:, None])
+        weights = [self.size, self.fourth, speed]
+        if areas:
+            integral = self.size / fall[:, None]
+            weights += [integral, np.where(slow, 0.0, integral)]
+        bound = np.matmul(np.concatenate(weights, axis=1), decay.transpose(1, 2, 0))
+        parts = [bound[:, k * s : (k + 1) * s] for k in range(len(weights))]
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            first = np.where(slow & (self.pole.imag == 0.0)[:, None], self.size * fall[:, None], 0.0).sum(axis=2)
+            slowest = decay.transpose(1, 0, 2)[np.arange(m)[:, None], :, self.first()]
+            rivals = parts[2] / (first[:, :, None] * slowest)
+        rivals[~(rivals >= 0.0)] = np.inf
+        return Profile(
+            time, deviation, parts[0], parts[1], rivals, parts[3] if areas else None, parts[4] if areas else None
+        )
+
+    def bounds(self, loop: IntArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """(S, P) bounds of the fourth derivative and of abs(x) from t on."""
+        decay = np.exp(self.pole.real[loop] * t[:, None])[:, :, None]
+        fourth: FloatArray = np.matmul(self.fourth[loop], decay)[:, :, 0].T
+        envelope: FloatArray = np.matmul(self.size[loop], decay)[:, :, 0].T
+        return fourth, envelope
+
+    def cell_misses(self, loop: IntArray, signal: IntArray, t: FloatArray, h: FloatArray) -> FloatArray:
+        """(8, P) cubic error in the cells of width h that start at t, for one signal each."""
+        fall = self.pole.real[loop]
+        weight = self.fourth[loop, signal] * np.exp(fall * t[:, None])
+        powers = np.exp(fall[:, :, None] * (h[:, None] * np.arange(CELLS))[:, None])
+        out: FloatArray = np.matmul(weight[:, None], powers)[:, 0].T * (HERMITE * h**4)
+        return out
+
+    def nodes(
+        self, loop: IntArray, t: FloatArray, h: FloatArray, signal: IntArray | None = None
+    ) -> tuple[FloatArray, FloatArray]:
+        """Values and slopes (times h) at the 9 ends of the 8 cells of width h that start at t.
+
+        loop, t, h (P,); signal (P,) or None for all. Returns two arrays (S, 9, P).
+
+        The matrix of e^(p t) r by that of e^(p h k), k = 0..8, made by doubling: two exponentials a mode.
+        """
+        residue = self.residue[loop] if signal is None else self.residue[loop, signal][:, None]
+        pole = self.pole[loop]
+        blocks, s, slots = residue.shape
+        step = pole * h[:, None]
+        right = np.empty((blocks, CELLS + 1, slots), dtype=complex)
+        right[:, 0] = 1.0
+        power = np.exp(step)
+        right[:, 1] = power
+        filled = 2
+        while filled <= CELLS:
+            power = right[:, filled - 1] * right[:, 1] if filled > 2 else power * power
+            take = min(filled, CELLS + 1 - filled)
+            np.multiply(right[:, :take], power[:, None], out=right[:, filled : filled + take])
+            filled += take
+        left = np.empty((blocks, 2 * s, slots), dtype=complex)
+        np.multiply(residue, np.exp(pole * t[:, None])[:, None], out=left[:, :s])
+        np.multiply(left[:, :s], step[:, None], out=left[:, s:])
+        np.conjugate(left, out=left)
+        table = np.matmul(_real(left), _real(right).transpose(0, 2, 1))
+        turned = np.ascontiguousarray(table.reshape(blocks, 2 * s * (CELLS + 1)).T)
+        turned = turned.reshape(2 * s, CELLS + 1, blocks)
+        return turned[:s], turned[s:]
+
+    def jet(
+        self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int
+    ) -> list[FloatArray]:
+        """Derivatives number first, first + 1, ... (-1: the primitive that vanishes at infinity), each (E,)."""
+        pole = self._pole.take(loop, axis=1)
+        term = np.exp(pole * t)
+        term *= self._residue.take(loop * self.residue.shape[1] + signal, axis=1)
+        if first == -1:
+            term /= pole
+        elif first > 0:
+            term *= pole**first
+        out = [term.real.sum(axis=0)]
+        for _ in range(count - 1):
+            term *= pole
+            out.append(term.real.sum(axis=0))
+        return out
+
+    def curves(self, t: FloatArray) -> FloatArray:
+        """x - x(inf) at the times t (M, T) of each loop; (M, S, T)."""
+        grow = np.exp(self.pole[:, :, None] * t[:, None, :])
+        out: FloatArray = np.matmul(self.residue, grow).real
+        return out
+
+    def tail(self, loop: IntArray, signal: IntArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Integral of abs(x) from t on, and a bound of its error. (E,) each.
+
+        Where the slowest mode is real and its slope outweighs all others', x keeps its sign: exact. Else the slowest
+        mode stands for all, and the others' areas bound the error. With f = r e^(p t) / p, the primitive of a
+        pair's mode, and abs f falling by e^(-pi sigma/omega) from zero to zero, the sum after the first zero is
+        abs(f(zero)) coth(pi sigma / (2 omega)).
+        """
+        slots = self.pole.shape[1]
+        slot = self.first()[loop, signal]
+        pole, now = self.pole[loop], self.residue[loop, signal] * np.exp(self.pole[loop] * t[:, None])
+        size = np.abs(now)
+        others = np.where(np.arange(slots) == slot[:, None], 0.0, size)
+        row = np.arange(len(loop))
+        p, x = pole[row, slot], now[row, slot]
+        paired = p.imag > 0.0
+        steady = ~paired & (size[row, slot] * -p.real > (others * np.abs(pole)).sum(axis=1))
+        exact = np.abs((now / pole).real.sum(axis=1))
+        omega = np.where(paired, p.imag, 1.0)
+        wait = np.mod(0.5 * np.pi - np.angle(x), np.pi) / omega
+        primitive = (x / p).real
+        at_zero = (x / p * np.exp(p * wait)).real
+        waves = np.abs(at_zero - primitive) + np.abs(at_zero) / np.tanh(-0.5 * np.pi * p.real / omega)
+        area = np.where(steady, exact, np.where(paired, waves, np.abs(primitive)))
+        return area, np.where(steady, 0.0, (others / -pole.real).sum(axis=1))
+
+
+def _real(array: ComplexArray) -> FloatArray:
+    """A complex array (..., k) as a real one (..., 2 k), no copy when it is contiguous."""
+    out: FloatArray = np.ascontiguousarray(array).view(np.float64)
+    return out
 
 
 def numerator_of(loops: Loops, signal: str) -> FloatArray:
-    """(M, n + 1) numerator of T, C S or P S over the characteristic polynomial."""
-    return {"y": loops.numerator, "u": loops.control, "d": loops.load}[signal]
+    """(M, n + 1) numerator of T ("y"), C S ("u") or P S ("d") over the characteristic polynomial."""
+    rows = {"y": loops.numerator, "u": loops.control, "d": loops.load}[signal]
+    return trimmed(rows, loops.order)
 
 
-def upper_half(poles: ComplexArray) -> tuple[ComplexArray, FloatArray]:
-    """(M, n) poles -> (M, m) upper half plane and reals first come, and (M, m) weights: 2 a pair, 1 a real, 0 empty."""
+def upper_half(poles: ComplexArray) -> tuple[ComplexArray, FloatArray, IntArray]:
+    """Poles (M, n) of the upper half plane and the real ones, in their order.
+
+    Returns (M, m) poles with -1 in empty slots, (M, m) weights (2 a pair, 1 a real, 0 an empty slot) and the
+    column (M, m) each came from.
+    """
     keep = poles.imag >= 0.0
     m = int(keep.sum(axis=1).max(initial=0))
-    order = np.argsort(~keep, axis=1, kind="stable")[:, :m]
-    pole = np.take_along_axis(poles, order, axis=1)
-    weight = np.where(pole.imag > 0.0, 2.0, 1.0)
-    used = np.take_along_axis(keep, order, axis=1)
-    return np.where(used, pole, -1.0), np.where(used, weight, 0.0)
+    column: IntArray = np.argsort(~keep, axis=1, kind="stable")[:, :m]
+    pole = np.take_along_axis(poles, column, axis=1)
+    used = np.take_along_axis(keep, column, axis=1)
+    weight = np.where(used, np.where(pole.imag > 0.0, 2.0, 1.0), 0.0)
+    return np.where(used, pole, -1.0), weight, column
 
 
 def step_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -> Modes:
     """Residues of the step responses of the named signals.
 
-    Error relative to the signal: about eps max|r| / max|x|, which is what the switch to clusters looks at.
+    Error relative to the signal: about eps max abs(r) / max abs(x); infinite residues where poles coincide
+    exactly.
     """
-    n = loops.order
-    pole, weight = upper_half(poles)
-    m = pole.shape[1]
-    lead = loops.closed[:, 0]
+    if poles.shape[1] == 0:  # a static loop
+        return Modes(np.full((len(loops), 1), -1.0 + 0.0j), np.zeros((len(loops), len(signals), 1), dtype=complex))
+    pole, weight, column = upper_half(poles)
+    m, slots = pole.shape
     gap = pole[:, :, None] - poles[:, None, :]
-    gap[np.arange(len(loops))[:, None], np.arange(m), _own(poles, m)] = 1.0
-    with np.errstate(all="ignore"):  # equal poles divide by zero; an empty slot may do anything
-        bottom = lead[:, None] * pole * gap.prod(axis=2)
-        factor = np.where(weight > 0.0, weight / bottom, 0.0)
-    size = (len(loops), len(signals))
-    residue = np.zeros((*size, m), dtype=complex)
-    limit, start = np.empty(size), np.empty(size)
-    for i, name in enumerate(signals):
-        top = trimmed(numerator_of(loops, name), n)
-        value = np.repeat(top[:, :1].astype(complex), m, axis=1)
-        for k in range(1, n + 1):
-            value = value * pole + top[:, k, None]
-        with np.errstate(all="ignore"):
-            residue[:, i] = value * factor
-        limit[:, i] = top[:, -1] / loops.closed[:, -1]
-        start[:, i] = top[:, 0] / lead
-    return Modes(pole, residue, limit, start)
+    np.put_along_axis(gap, column[:, :, None], 1.0, axis=2)
+    with np.errstate(all="ignore"):
+        factor = weight / (loops.closed[:, :1] * pole * gap.prod(axis=2))
+        factor[weight == 0.0] = 0.0
+        residue = np.empty((m, len(signals), slots), dtype=complex)
+        for i, name in enumerate(signals):
+            top = numerator_of(loops, name)
+            value = np.zeros((m, slots), dtype=complex)
+            value += top[:, :1]
+            for k in range(1, top.shape[1]):
+                value *= pole
+                value += top[:, k, None]
+            np.multiply(value, factor, out=residue[:, i])
+    return Modes(pole, residue)
 
 
-def _own(poles: ComplexArray, m: int) -> IntArray:
-    """(M, m) which column of `poles` each slot came from."""
-    return np.argsort(~(poles.imag >= 0.0), axis=1, kind="stable")[:, :m]
-
-
-def at(modes: Modes, loop: IntArray, t: FloatArray, order: int = 0) -> FloatArray:
-    """Derivative number `order` (-1 is the primitive of x - limit that vanishes at infinity).
-
-    loop (E,), t (E,) or (E, W) -> (E, S, ...)
-    """
-    pole = modes.pole[loop]
-    grow = np.exp(pole.reshape(pole.shape + (1,) * (t.ndim - 1)) * t[:, None])
-    weight = modes.residue[loop] * pole[:, None, :] ** order
-    out: FloatArray = np.einsum("esm,em...->es...", weight, grow).real
-    if order == 0:
-        out = out + modes.limit[loop].reshape(out.shape[:2] + (1,) * (out.ndim - 2))
-    return out
-
-
-__all__ = ["SIGNALS", "Modes", "at", "exact_degree", "numerator_of", "step_modes", "upper_half"]
+def limits(loops: Loops, signals: tuple[str, ...]) -> tuple[FloatArray, FloatArray]:
+    """Values of the named signals at 0+ and at infinity, (M, S) each."""
+    top = [numerator_of(loops, name) for name in signals]
+    start = np.stack([p[:, 0] / loops.closed[:, 0] for p in top], axis=1)
+    end = np.stack([p[:, -1] / loops.closed[:, -1] for p in top], axis=1)
+    return start, end

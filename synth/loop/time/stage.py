@@ -9,8 +9,22 @@ import numpy as np
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops
 from synth.loop.quantities import Measure
-from synth.loop.time.modes import SIGNALS, step_modes
-from synth.loop.time.plain import Response, plain_quantity
+from synth.loop.time.answers import Answers, Area, Passage, Supremum, answer
+from synth.loop.time.modes import Modes, limits, step_modes
+
+REACHES = {
+    "overshoot": "y",
+    "undershoot": "y",
+    "peak_time": "y",
+    "rise_time": "y",
+    "settling_time": "y",
+    "late_deviation": "y",
+    "tracking_area": "y",
+    "control_peak": "u",
+    "disturbance_peak": "d",
+    "disturbance_area": "d",
+}
+"""Which signal each quantity is read from."""
 
 
 @dataclass
@@ -24,17 +38,128 @@ class TimeStage:
 def time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...]) -> TimeStage:
     """The time-stage measures among `measures`, for M stable loops.
 
-    poles : (M, n) scaled closed-loop poles, pairs adjacent, upper first (with dead time: the true roots found).
+    poles : (M, n) scaled closed-loop poles, pairs adjacent, upper first (with dead time: the roots found).
     """
     asked = tuple(m for m in measures if m.row.stage == "time")
     if (loops.dead_time > 0.0).any():
         from synth.loop.time.delayed import delayed_time_stage
 
-        return delayed_time_stage(loops, poles, asked)
-    modes = step_modes(loops, poles, SIGNALS)
-    out = {m: np.full(len(loops), np.nan) for m in asked}
-    for i in range(len(loops)):
-        response = Response(modes, i, float(loops.denominator[i, -1]) == 0.0)
-        for m in asked:
-            out[m][i] = plain_quantity(response, m, float(loops.time_scale[i]))
-    return TimeStage(out, {})
+        delayed: TimeStage = delayed_time_stage(loops, poles, asked)
+        return delayed
+    if not asked or len(loops) == 0:
+        return TimeStage({m: np.zeros(0) for m in asked}, {})
+    needed = {REACHES[m.quantity] for m in asked}
+    signals = tuple(s for s in ("y", "u", "d") if s in needed)
+    modes = step_modes(loops, poles, signals)
+    start, end = limits(loops, signals)
+    return _Reading(loops, modes, signals, start, end, asked).read()
+
+
+class _Reading:
+    """Measures turned into questions and answers turned into values."""
+
+    def __init__(
+        self,
+        loops: Loops,
+        modes: Modes,
+        signals: tuple[str, ...],
+        start: FloatArray,
+        end: FloatArray,
+        asked: tuple[Measure, ...],
+    ) -> None:
+        self.loops, self.asked = loops, asked
+        self.index = {name: i for i, name in enumerate(signals)}
+        self.tracks = loops.denominator[:, -1] == 0.0  # L has a pole at 0: the static error is exactly 0
+        self.has_end = np.ones(len(loops), dtype=bool)
+        unit = np.maximum(np.abs(start), np.abs(end))
+        if "y" in self.index:
+            # y is counted in units of its final value: z = y / y(inf)
+            y = self.index["y"]
+            self.has_end = end[:, y] != 0.0
+            final = np.where(self.has_end, end[:, y], 1.0)
+            residue = modes.residue.copy()
+            residue[:, y] *= np.where(self.has_end, 1.0 / final, 0.0)[:, None]
+            modes = Modes(modes.pole, residue)
+            unit[:, y] = np.maximum(1.0, np.abs(start[:, y] / final))
+        self.modes, self.unit, self.end = modes, unit, end
+        self.suprema: dict[str, Supremum] = {}
+        self.passages: dict[tuple[float, float, bool], Passage] = {}
+        self.areas: dict[str, Area] = {}
+
+    def read(self) -> TimeStage:
+        """All values."""
+        for m in self.asked:
+            self._ask(m)
+        found = answer(
+            self.modes,
+            self.unit,
+            list(self.suprema.values()),
+            list(self.passages.values()),
+            list(self.areas.values()),
+        )
+        values, approximate = {}, {}
+        for m in self.asked:
+            values[m] = self._value(m, found)
+            if m.quantity in self.areas:
+                doubt = found.doubts[list(self.areas).index(m.quantity)]
+                approximate[m] = (doubt > 1e-5) & np.isfinite(values[m])
+        return TimeStage(values, approximate)
+
+    def _ask(self, m: Measure) -> None:
+        zero, one = np.zeros(len(self.loops)), np.ones(len(self.loops))
+        name, signal = m.quantity, self.index.get(REACHES[m.quantity], 0)
+        if name in ("overshoot", "peak_time"):
+            self.suprema["overshoot"] = Supremum(signal, (1.0,), zero, zero)
+        elif name == "undershoot":
+            self.suprema[name] = Supremum(signal, (-1.0,), one, zero)
+        elif name in ("control_peak", "disturbance_peak"):
+            limit = self.end[:, signal]
+            self.suprema[name] = Supremum(signal, (1.0, -1.0), limit, np.abs(limit))
+        elif name == "rise_time":
+            for level in m.span:
+                if level > 0.0:
+                    self._passage(signal, -np.inf, np.nextafter(level - 1.0, -2.0), False)
+        elif name == "settling_time":
+            self._passage(signal, -m.band, m.band, True)
+        elif name in ("tracking_area", "disturbance_area"):
+            self.areas[name] = Area(signal)
+
+    def _passage(self, signal: int, low: float, high: float, last: bool) -> None:
+        self.passages[low, high, last] = Passage(signal, low, high, last)
+
+    def _value(self, m: Measure, found: Answers) -> FloatArray:
+        name = m.quantity
+        if name in ("overshoot", "undershoot"):
+            value = 100.0 * found.suprema[list(self.suprema).index(name)]
+        elif name == "peak_time":
+            k = list(self.suprema).index("overshoot")
+            value = np.where(found.suprema[k] > 0.0, found.times[k], np.nan)
+        elif name in ("control_peak", "disturbance_peak"):
+            return found.suprema[list(self.suprema).index(name)]
+        elif name == "rise_time":
+            value = self._arrival(found, m.span[1]) - self._arrival(found, m.span[0])
+        elif name == "settling_time":
+            value = found.passages[list(self.passages).index((-m.band, m.band, True))]
+        elif name == "tracking_area":
+            return np.where(self.tracks, found.areas[list(self.areas).index(name)], np.inf)
+        elif name == "disturbance_area":
+            returns = self.end[:, self.index["d"]] == 0.0
+            return np.where(returns, found.areas[list(self.areas).index(name)], np.inf)
+        else:
+            value = self._late(m)
+        return np.where(self.has_end, value, np.nan)
+
+    def _arrival(self, found: Answers, level: float) -> FloatArray:
+        """First time at that part of the final value; NaN where it is never reached."""
+        if level <= 0.0:
+            return np.zeros(len(self.loops))
+        key = (-np.inf, float(np.nextafter(level - 1.0, -2.0)), False)
+        time = found.passages[list(self.passages).index(key)]
+        return np.where(np.isfinite(time), time, np.nan)
+
+    def _late(self, m: Measure) -> FloatArray:
+        """100 sup of abs(z - 1) from m.after on: the same question of the responses seen from then on."""
+        later = self.modes.later([self.index["y"]], m.after / self.loops.time_scale)
+        zero = np.zeros(len(self.loops))
+        found = answer(later, np.zeros((len(self.loops), 1)), [Supremum(0, (1.0, -1.0), zero, zero)], [], [])
+        return 100.0 * found.suprema[0]
