@@ -9,6 +9,7 @@ Letters: M loops, F crossings.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -40,10 +41,14 @@ class Crossings:
     down: BoolArray
     loop: ComplexArray
 
-    def of(self, kind: int) -> Crossings:
-        """The crossings of one kind."""
-        at = np.flatnonzero(self.kind == kind)
-        return Crossings(self.kind[at], self.row[at], self.w[at], self.down[at], self.loop[at])
+
+def of_kind(found: Sequence[Crossings], kind: int) -> Crossings:
+    """All crossings of one kind."""
+    masks = [c.kind == kind for c in found]
+    empty = (np.empty(0, dtype=np.intp), np.empty(0), np.empty(0, dtype=bool), np.empty(0, dtype=complex))
+    parts = [(c.row[k], c.w[k], c.down[k], c.loop[k]) for c, k in zip(found, masks, strict=True)]
+    row, w, down, loop = (np.concatenate(part) for part in zip(empty, *parts, strict=True))
+    return Crossings(np.full(len(row), kind, dtype=np.intp), row, w, down, loop)
 
 
 def fall_level(response: Response) -> FloatArray:

@@ -25,7 +25,7 @@ _OCTAVES = 40  # cells of one window: x from 2^-20 to 2^20, three decades of ω 
 _CELLS = _OCTAVES + 2  # and the two ends, to 0 and to infinity
 _WINDOWS = 40  # windows to either side before giving up: beyond any double
 _NARROW = 1e-10  # relative width below which two roots are one touch
-_LIGHT = 0.03  # relative width of an interval below which an undecided one is called a light root
+_CROWD = np.arange(-2.0, 27.0) / 24.0  # places of nodes in an interval that could not be decided
 _BLOCK = 150_000  # doubles of one matrix product: it stays in the second-level cache
 
 
@@ -67,15 +67,16 @@ def isolate(polynomials: FloatArray, hint: FloatArray | None = None) -> Brackets
 def light_roots(polynomials: FloatArray) -> tuple[IntArray, FloatArray]:
     """Points that crowd round roots near the positive axis: (row, x), of polynomials positive on it.
 
-    The ends of all intervals narrower than 3 % that could not be decided: of |p(jω)|² they are the frequencies round
-    a lightly damped root of p (damping below some 0.03), the closer together the lighter it is.
+    Some two dozen for every interval that could not be decided: of |p(jω)|² they are the frequencies round a lightly
+    damped root of p, the closer together the lighter it is.
     """
     near: list[tuple[IntArray, FloatArray, FloatArray]] = []
     _search(polynomials, None, [], near)
     if not near:
         return np.empty(0, dtype=np.intp), np.empty(0)
     row, low, high = (np.concatenate(part) for part in zip(*near, strict=True))
-    return np.concatenate((row, row, row)), np.concatenate((low, 0.5 * (low + high), high))
+    places = low[:, None] + (high - low)[:, None] * _CROWD
+    return np.repeat(row, places.shape[1]), places.ravel()
 
 
 def _search(
@@ -199,6 +200,8 @@ def _halve(
     near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
 ) -> None:
     """Cut intervals until each holds one root or none. cut : (F,) where to cut first, 0..1 of the width."""
+    if near is not None:
+        near.append((row, low, high))
     cut = np.where((cut > 1e-9) & (cut < 1.0 - 1e-9), cut, 0.5)
     while row.size:
         middle = low + cut * (high - low)
@@ -213,7 +216,6 @@ def _halve(
         found.append((row[done], low[done], high[done], negative[0, done]))
         keep = np.flatnonzero((count > 1) & ~narrow)
         if near is not None:
-            close = keep[(high[keep] - low[keep]) < _LIGHT * high[keep]]
-            near.append((row[close], low[close], high[close]))
+            near.append((row[keep], low[keep], high[keep]))
         coefficients, row, low, high = coefficients[:, keep], row[keep], low[keep], high[keep]
         cut = np.full(len(row), 0.5)

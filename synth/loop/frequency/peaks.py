@@ -12,7 +12,7 @@ Letters: M loops, R = kinds · M curves.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from typing import Protocol
 
 import numpy as np
 
@@ -23,7 +23,8 @@ from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, evalu
 CURVES = {"sensitivity_peak": D, "complementary_peak": N, "noise_gain": CONTROL}
 
 _SPAN = 20  # the coarse look: x from 2^-20 to 2^20
-_STEPS = 8
+_NEIGHBOUR = 2.0**0.5  # ratio of neighbouring ω of that look
+_STEPS = 60  # bisection alone needs half of them
 _ROUNDS = 12
 _LEAST_MARGIN = 2e-9  # relative, of the level above the peak in the test
 _MOST_MARGIN = 2e-7
@@ -41,7 +42,9 @@ def suprema(response: Response, poles: ComplexArray, keys: tuple[str, ...]) -> d
     row = np.tile(np.arange(m), len(keys))
     best, at = _coarse(response, poles, numerators)
     inside = np.flatnonzero(at > 0.0)
-    climb(_rational(response, curve[inside], row[inside]), inside, at[inside], best, at)
+    start = at[inside]
+    around = (start / _NEIGHBOUR, start, start * _NEIGHBOUR)
+    climb(_Rational(response, curve[inside], row[inside]), inside, around, best, at)
 
     squares = response.squares
     todo = np.arange(len(row))
@@ -52,10 +55,11 @@ def suprema(response: Response, poles: ComplexArray, keys: tuple[str, ...]) -> d
         brackets = isolate(level, hint=at[todo] ** 2)
         if not brackets.row.size:
             break
-        which, w = _between(brackets.row, brackets.low, brackets.high)
+        which, x = _between(brackets.row, brackets.low, brackets.high)
         chosen = todo[which]
         before = best.copy()
-        climb(_rational(response, curve[chosen], row[chosen]), chosen, np.sqrt(w), best, at)
+        around = (np.sqrt(x[0]), (x[1] * x[2]) ** 0.25, np.sqrt(x[3]))
+        climb(_Rational(response, curve[chosen], row[chosen]), chosen, around, best, at)
         todo = np.flatnonzero(best > before * (1.0 + 1e-12))
         if not todo.size:
             break
@@ -110,25 +114,35 @@ def _size(response: Response, polynomial: IntArray, row: IntArray, w: FloatArray
     return out
 
 
+class Curve(Protocol):
+    """F points on curves |P/Δ|, each with its own loop."""
+
+    def at(self, w: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Real and imaginary parts, (3, 2, F), of P and Δ and their two derivatives in ln ω."""
+
+    def keep(self, index: IntArray) -> None:
+        """Go on with these points alone."""
+
+
 def climb(
-    derivatives: Callable[[FloatArray], tuple[FloatArray, FloatArray]],
+    curve: Curve,
     target: IntArray,
-    start: FloatArray,
+    between: tuple[FloatArray, FloatArray, FloatArray],
     best: FloatArray,
     at: FloatArray,
 ) -> None:
-    """Newton's method on the slope of ln|P/Δ| in ln ω from F starts [ω]; keeps the best value met.
+    """Newton's method on the slope of |Δ/P|² in ln ω, F starts at once; keeps the best value met.
 
-    derivatives : ω (F,) -> real and imaginary parts, (3, 2, F), of P and Δ and two derivatives in ln ω.
     target : (F,) place in `best` and `at` (ω of the best) that each start may raise.
+    between : ω low, start, high: the slope's sign moves the ends in, and a step that leaves them is a bisection.
     """
     if not target.size:
         return
-    u = np.log(start)
-    low, high = u - 0.35, u + 0.35
+    with np.errstate(divide="ignore"):
+        low, u, high = (np.log(x) for x in between)
     for _ in range(_STEPS):
         w = np.exp(u)
-        re, im = derivatives(w)
+        re, im = curve.at(w)
         size, rate, turn = log_rates(re, im)
         value = np.sqrt(size[0] / size[1])
         np.maximum.at(best, target, value)
@@ -136,20 +150,33 @@ def climb(
         at[target[met]] = w[met]
         bend = (re[2] * re[0] + im[2] * im[0]) / size - rate * rate + turn * turn
         slope, curvature = rate[0] - rate[1], bend[0] - bend[1]
+        low, high = np.where(slope > 0.0, u, low), np.where(slope > 0.0, high, u)
         with np.errstate(divide="ignore", invalid="ignore"):
-            step = np.where(curvature < 0.0, -slope / curvature, np.copysign(0.1, slope))
-        new = np.clip(u + step, low, high)
-        if np.abs(new - u).max() < 1e-9:
+            new = u + slope / (2.0 * slope * slope - curvature)  # |Δ/P|² is smooth where the peak is sharp
+        new = np.where((new >= low) & (new <= high), new, 0.5 * (low + high))
+        moving = np.abs(new - u) > 1e-9
+        count = np.count_nonzero(moving)
+        if count == 0:
             break
         u = new
+        if 2 * count < len(u):
+            keep = np.flatnonzero(moving)
+            u, low, high, target = u[keep], low[keep], high[keep], target[keep]
+            curve.keep(keep)
 
 
-def _rational(
-    response: Response, curve: IntArray, row: IntArray
-) -> Callable[[FloatArray], tuple[FloatArray, FloatArray]]:
-    closed = response.columns(CLOSED, row, 2)
-    columns = np.stack((response.columns(curve, row, 2), closed), axis=3)
-    return lambda w: evaluate(columns, w)
+class _Rational:
+    """Curves of loops without dead time."""
+
+    def __init__(self, response: Response, curve: IntArray, row: IntArray) -> None:
+        closed = response.columns(CLOSED, row, 2)
+        self.columns = np.stack((response.columns(curve, row, 2), closed), axis=3)
+
+    def keep(self, index: IntArray) -> None:
+        self.columns = self.columns[..., index]
+
+    def at(self, w: FloatArray) -> tuple[FloatArray, FloatArray]:
+        return evaluate(self.columns, w)
 
 
 def _margin(top: FloatArray, bottom: FloatArray, best: FloatArray, at: FloatArray) -> FloatArray:
@@ -167,10 +194,15 @@ def _margin(top: FloatArray, bottom: FloatArray, best: FloatArray, at: FloatArra
     return out
 
 
-def _between(row: IntArray, low: FloatArray, high: FloatArray) -> tuple[IntArray, FloatArray]:
-    """Points above the level: between a row's first and second root, its third and fourth, and so on."""
+def _between(
+    row: IntArray, low: FloatArray, high: FloatArray
+) -> tuple[IntArray, tuple[FloatArray, FloatArray, FloatArray, FloatArray]]:
+    """Where a curve is above the level: between a row's first and second root, its third and fourth, and so on.
+
+    Returns the rows and the brackets of both roots, four x in ascending order.
+    """
     order = np.lexsort((low, row))
     row, low, high = row[order], low[order], high[order]
     first = np.searchsorted(row, row)  # where this row's roots begin
     opening = np.flatnonzero(((np.arange(len(row)) - first) % 2 == 0) & (np.append(row[1:], -1) == row))
-    return row[opening], np.sqrt(high[opening] * low[opening + 1])
+    return row[opening], (low[opening], high[opening], low[opening + 1], high[opening + 1])

@@ -6,7 +6,8 @@ import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops
-from synth.loop.frequency.crossings import FALL, GAIN, PHASE, crossings, fall_level
+from synth.loop.frequency.crossings import FALL, GAIN, PHASE, Crossings, crossings, fall_level, of_kind
+from synth.loop.frequency.delayed import delayed_quantities
 from synth.loop.frequency.margins import fall_quantities, gain_margins, gain_quantities
 from synth.loop.frequency.peaks import CURVES, suprema
 from synth.loop.frequency.response import response_of
@@ -38,17 +39,29 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
         return {}
     with np.errstate(over="ignore"):
         response = response_of(loops)
+    delayed = bool((loops.dead_time > 0.0).any())
     kinds = tuple(k for k, keys in ((GAIN, GAINS), (FALL, FALLS), (PHASE, PHASES)) if wanted & keys)
-    out: dict[str, FloatArray] = {}
-    if kinds:
-        found = crossings(response, kinds)
-        if GAIN in kinds:
-            out |= gain_quantities(response, found.of(GAIN))
-        if FALL in kinds:
-            out |= fall_quantities(len(loops), found.of(FALL), fall_level(response) == 0.0)
-        if PHASE in kinds:
-            out |= gain_margins(response, found.of(PHASE))
     curves = tuple(k for k in CURVES if k in wanted)
-    if curves:
-        out |= suprema(response, poles, curves)
+    out: dict[str, FloatArray] = {}
+    found: list[Crossings] = []
+    if delayed:
+        others = tuple(k for k in kinds if k != GAIN)
+        recurring = np.zeros(len(loops), dtype=bool)
+        if others or curves:
+            found, out, recurring = delayed_quantities(response, others, curves)
+        if GAIN in kinds:
+            found.append(crossings(response, (GAIN,)))
+    else:
+        if kinds:
+            found.append(crossings(response, kinds))
+        if curves:
+            out = suprema(response, poles, curves)
+    if GAIN in kinds:
+        out |= gain_quantities(response, of_kind(found, GAIN))
+    if FALL in kinds:
+        out |= fall_quantities(len(loops), of_kind(found, FALL), fall_level(response) == 0.0)
+        if delayed:
+            out["highest_fall"] = np.where(recurring, np.inf, out["highest_fall"])
+    if PHASE in kinds:
+        out |= gain_margins(response, of_kind(found, PHASE))
     return {k: v for k, v in out.items() if k in wanted}
