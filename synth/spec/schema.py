@@ -1,4 +1,4 @@
-"""The JSON Schema of a spec file, made from the tables the reader checks against; and a spec to start from."""
+"""The JSON Schema of a spec file, made from the tables the reader checks against; a spec to start from."""
 
 from __future__ import annotations
 

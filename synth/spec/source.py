@@ -208,5 +208,5 @@ def _library(file: str, text: str, message: str) -> Fault:
             sum(len(row) + 1 for row in text.split("\n")[: int(match.group(2)) - 1]) + int(match.group(3)) - 1
         )
         at = min(at, len(text))
-    what = re.sub(r"\(('[^()]*')\)", lambda m: f"`{'.'.join(re.findall(_QUOTED, m.group(1)))}`", what)
+    what = re.sub(r"\(('[^()]*',?)\)", lambda m: f"`{'.'.join(re.findall(_QUOTED, m.group(1)))}`", what)
     return _not_toml(file, text, shortened(what[:1].lower() + what[1:], 100), at, None)

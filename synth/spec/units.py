@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import math
 import re
-from dataclasses import dataclass
 from types import MappingProxyType
 
 from synth.errors import nearest
@@ -55,7 +54,8 @@ _WORDS: dict[Dimension, str] = {
 _SPELT = {
     "sec": "s", "secs": "s", "second": "s", "seconds": "s", "S": "s", "msec": "ms", "µs": "us", "μs": "us",
     "usec": "us", "mins": "min", "minute": "min", "minutes": "min", "hr": "h", "hour": "h", "hours": "h",
-    "rad/sec": "rad/s", "rads": "rad/s", "rad": "rad/s", "r/s": "rad/s", "rad s^-1": "rad/s", "s^-1": "1/s",
+    "rad/sec": "rad/s", "rads": "rad/s", "rad": "rad/s", "r/s": "rad/s", "rad s^-1": "rad/s",
+    "s^-1": "1/s", "/s": "1/s",
     "hz": "Hz", "HZ": "Hz", "khz": "kHz", "KHz": "kHz", "cps": "Hz",
     "degree": "deg", "degrees": "deg", "°": "deg", "db": "dB", "DB": "dB", "percent": "%", "pct": "%",
 }  # fmt: skip
@@ -89,13 +89,14 @@ _WRITTEN = re.compile(rf"\s*({_NUMBER})\s*(.*?)\s*", re.DOTALL)
 _SPAN = re.compile(rf"\s*({_NUMBER})\s*%?\s*(?:-|–|to)\s*({_NUMBER})\s*%\s*")
 
 
-@dataclass(frozen=True, slots=True)
 class UnitFault(Exception):
     """What is wrong with a number and its unit, what may stand there, and the nearest right text."""
 
-    what: str
-    allowed: str
-    nearest: str | None = None
+    def __init__(self, what: str, allowed: str, nearest: str | None = None) -> None:
+        super().__init__(what)
+        self.what = what
+        self.allowed = allowed
+        self.nearest = nearest
 
 
 def allowed(dimension: Dimension) -> str:
@@ -136,7 +137,8 @@ def measured(value: object, dimension: Dimension) -> float:
         raise UnitFault(f"{_WORDS[dimension]} must carry its unit", words)
     if unit not in units:
         right = _SPELT.get(unit)
-        right = right if right in units else nearest(unit, units)
+        if right not in units:
+            right = None if unit in PARAMETER_UNITS else nearest(unit, units)
         near = f'"{_short(number)} {right}"' if right else None
         raise UnitFault(f"`{unit}` is no unit of {_WORDS[dimension].split(' ', 1)[1]}", words, near)
     return finite(number * units[unit], words)
