@@ -84,16 +84,18 @@ def _companion_roots(monic: FloatArray) -> ComplexArray:
 
 def _polished(monic: FloatArray, roots: ComplexArray) -> ComplexArray:
     """One Aberth step from good roots; no step that is not finite or exceeds half the way to a neighbour."""
-    degree = roots.shape[1]
     value, slope = horner_slope(monic, roots)
-    apart = roots[:, :, None] - roots[:, None, :]
-    diagonal = np.arange(degree)
-    apart[:, diagonal, diagonal] = np.inf
+    columns = np.ascontiguousarray(roots.T)  # loops along the last axis: contiguous sums over the neighbours
+    apart = columns[:, None, :] - columns[None, :, :]
+    diagonal = np.arange(len(columns))
+    apart[diagonal, diagonal] = np.inf
     with np.errstate(all="ignore"):  # 0/0 at roots that coincide: such a step is dropped
+        squared = apart.real**2 + apart.imag**2
+        repulsion = (apart.conj() / squared).sum(axis=1).T
         newton = value / slope
-        step = newton / (1.0 - newton * (1.0 / apart).sum(axis=2))
-        nearest = np.abs(apart).min(axis=2)
-        step[~(np.abs(step) <= 0.5 * np.minimum(nearest, np.abs(roots)))] = 0.0
+        step = newton / (1.0 - newton * repulsion)
+        limit = 0.5 * np.minimum(np.sqrt(squared.min(axis=1).T), np.abs(roots))
+        step[~(np.abs(step) <= limit)] = 0.0
     better: ComplexArray = roots - step
     # the two halves of a pair see the same arithmetic but for the order of sums: make them conjugate again
     lower = roots.imag < 0.0

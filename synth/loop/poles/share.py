@@ -7,36 +7,84 @@ real.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
-from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 from synth.loop.polynomials import horner, horner_slope, magnitude_sum
 
 
-def share_in_step(loops: Loops, poles: ComplexArray) -> FloatArray:
+@dataclass(frozen=True, slots=True)
+class Spacing:
+    """How the poles of M loops lie to each other; worked out once, used by every function below.
+
+    product  (M, q) Π over j ≠ i of (p_i - p_j); ones with dead time, where nothing needs it
+    rows     (R,) loops that have repeated poles; empty for nearly every stack
+    groups   (R, q, q) which poles of such a loop are one; transitive, true on the diagonal
+    folded   (R, q) complex poles of such a loop that are one with their own conjugate, so truly real
+    """
+
+    product: ComplexArray
+    rows: IntArray
+    groups: BoolArray
+    folded: BoolArray
+
+
+def spaced(loops: Loops, poles: ComplexArray) -> Spacing:
+    """Spacing of poles (M, q), NaN-padded.
+
+    Two poles are one when they lie closer than the error that rounding of the coefficients can have given
+    them, 10 × 2 n eps Σ abs(a_k p^k) / abs(Δ'(p)). With dead time the poles were found one by one and are
+    simple.
+    """
+    count = poles.shape[1]
+    none = Spacing(
+        np.ones_like(poles),
+        np.zeros(0, dtype=np.intp),
+        np.zeros((0, count, count), dtype=bool),
+        np.zeros((0, count), dtype=bool),
+    )
+    if _delayed(loops) or count < 2:
+        return none
+    with np.errstate(all="ignore"):
+        product, nearest = _product_and_nearest(poles)
+        slope = np.abs(loops.closed[:, :1] * product)
+        noise = 20.0 * count * np.finfo(float).eps * magnitude_sum(loops.closed, np.abs(poles))
+        rows = np.flatnonzero((nearest * slope <= noise).any(axis=1))
+        if rows.size == 0:
+            return Spacing(product, none.rows, none.groups, none.folded)
+        distance = np.abs(poles[rows][:, :, None] - poles[rows][:, None, :])
+        groups: BoolArray = distance * slope[rows][:, :, None] <= noise[rows][:, :, None]
+    groups |= groups.transpose(0, 2, 1)
+    diagonal = np.arange(count)
+    groups[:, diagonal, diagonal] = True
+    for _ in range(int(np.ceil(np.log2(count)))):  # friends of friends
+        groups = np.matmul(groups, groups)
+    return Spacing(product, rows, groups, _folded(poles[rows], groups))
+
+
+def share_in_step(loops: Loops, poles: ComplexArray, spacing: Spacing | None = None) -> FloatArray:
     """Share of each pole in the reference step: abs(residue of T(s)/s) / abs(T(0)), doubled for a pair.
 
-    poles : (M, q) scaled, NaN-padded. Returns (M, q); where T(0) = 0 the residue is not divided; NaN at
-    padding. Error: eps × condition of the pole for simple poles; a repeated one is measured in test_share.py.
+    poles : (M, q) scaled, NaN-padded; spacing : theirs, where it is known already. Returns (M, q); where
+    T(0) = 0 the residue is not divided; NaN at padding. Error: eps × condition of the pole for simple poles;
+    a repeated one is measured in test_share.py.
     """
+    spacing = spacing or spaced(loops, poles)
+    residue = residues(loops, poles, spacing)
+    factor = np.where(poles.imag != 0.0, 2.0, 1.0)
+    factor[spacing.rows] = np.where(spacing.folded, 1.0, factor[spacing.rows])
     with np.errstate(all="ignore"):
         final = np.abs(loops.numerator[:, -1] / loops.closed[:, -1])
-        residue = residues(loops, poles)
-        groups = alike(loops, poles)
-        paired = poles.imag != 0.0
-        if groups is not None:
-            some = np.flatnonzero((groups.sum(axis=2) > 1).any(axis=1))
-            residue[some] = _group_residues(loops.rows(some), poles[some], groups[some], residue[some])
-            paired = paired & ~folded(poles, groups)
-        share = np.abs(residue) / np.where(final == 0.0, 1.0, final)[:, None]
-    out: FloatArray = np.where(paired, 2.0, 1.0) * share
+        out: FloatArray = factor * np.abs(residue) / np.where(final == 0.0, 1.0, final)[:, None]
     out[np.isnan(poles)] = np.nan
     return out
 
 
-def residues(loops: Loops, poles: ComplexArray) -> ComplexArray:
-    """Residues of T(s)/s, (M, q).
+def residues(loops: Loops, poles: ComplexArray, spacing: Spacing | None = None) -> ComplexArray:
+    """Residues of T(s)/s, (M, q); of a repeated pole the coefficient of 1/(s - p), the same for each of it.
 
     Without dead time by the product over the computed poles, N(p) / (p a Π (p - p_j)): the computed poles are
     the exact poles of a nearby loop, so their errors cancel in sums. With dead time by the slope of the
@@ -49,7 +97,12 @@ def residues(loops: Loops, poles: ComplexArray) -> ComplexArray:
             _, slope = horner_slope(loops.denominator, poles)
             turn = np.exp(-poles * theta)
             return top * turn / (poles * (slope + (top_slope - theta * top) * turn))
-        return horner(loops.numerator, poles) / (poles * loops.closed[:, :1] * _product_apart(poles))
+        spacing = spacing or spaced(loops, poles)
+        found = horner(loops.numerator, poles) / (poles * loops.closed[:, :1] * spacing.product)
+        some = spacing.rows
+        if some.size:
+            found[some] = _group_residues(loops.rows(some), poles[some], spacing.groups, found[some])
+        return found
 
 
 def _group_residues(
@@ -72,62 +125,46 @@ def _group_residues(
     return out
 
 
-def damping_of(loops: Loops, poles: ComplexArray) -> FloatArray:
+def damping_of(loops: Loops, poles: ComplexArray, spacing: Spacing | None = None) -> FloatArray:
     """-Re p / abs(p) of each pole, (M, q): 1 for a real negative pole, repeated or not; 0 at s = 0."""
+    spacing = spacing or spaced(loops, poles)
     with np.errstate(invalid="ignore"):
-        ratio = -poles.real / np.abs(poles)
+        ratio: FloatArray = -poles.real / np.abs(poles)
     ratio[poles == 0.0] = 0.0
-    groups = alike(loops, poles)
-    if groups is not None:
-        ratio[folded(poles, groups) & (poles.real < 0.0)] = 1.0
+    real = spacing.folded & (poles[spacing.rows].real < 0.0)
+    ratio[spacing.rows] = np.where(real, 1.0, ratio[spacing.rows])
     return ratio
 
 
-def alike(loops: Loops, poles: ComplexArray) -> BoolArray | None:
-    """Which poles are one: (M, q, q), transitive, true on the diagonal; None when all are simple.
-
-    Two poles are one when they lie closer than the error that rounding of the coefficients can have given
-    them, 10 × 2 n eps Σ abs(a_k p^k) / abs(Δ'(p)). With dead time the poles were found one by one and are
-    simple.
-    """
-    if _delayed(loops) or poles.shape[1] < 2:
-        return None
-    count = poles.shape[1]
-    with np.errstate(all="ignore"):
-        slope = np.abs(loops.closed[:, :1] * _product_apart(poles))
-        noise = 20.0 * count * np.finfo(float).eps * magnitude_sum(loops.closed, np.abs(poles))
-        distance = np.abs(poles[:, :, None] - poles[:, None, :])
-        near: BoolArray = distance * slope[:, :, None] <= noise[:, :, None]
-    near |= near.transpose(0, 2, 1)
-    diagonal = np.arange(count)
-    near[:, diagonal, diagonal] = False
-    if not near.any():
-        return None
-    near[:, diagonal, diagonal] = True
-    for _ in range(int(np.ceil(np.log2(count)))):  # friends of friends
-        near = np.matmul(near, near)
-    return near
-
-
-def folded(poles: ComplexArray, groups: BoolArray) -> BoolArray:
-    """Complex poles that are one with their own conjugate, so truly real. (M, q)."""
+def _folded(poles: ComplexArray, groups: BoolArray) -> BoolArray:
+    """Complex poles in one group with their own conjugate, which stands beside them. (R, q)."""
     out = np.zeros(poles.shape, dtype=bool)
-    upper = poles.imag[:, :-1] > 0.0
     column = np.arange(poles.shape[1] - 1)
-    joined = upper & groups[:, column, column + 1]
+    joined = (poles.imag[:, :-1] > 0.0) & groups[:, column, column + 1]
     out[:, :-1] |= joined
     out[:, 1:] |= joined
     return out
 
 
-def _product_apart(poles: ComplexArray) -> ComplexArray:
-    """Π over j ≠ i of (p_i - p_j), NaN padding left out. (M, q)."""
-    apart = poles[:, :, None] - poles[:, None, :]
-    diagonal = np.arange(poles.shape[1])
-    apart[:, diagonal, diagonal] = 1.0
-    apart = np.where(np.isnan(apart), 1.0, apart)
-    out: ComplexArray = apart.prod(axis=2)
-    return out
+def _product_and_nearest(poles: ComplexArray) -> tuple[ComplexArray, FloatArray]:
+    """Π over j ≠ i of (p_i - p_j) and min abs(p_i - p_j), padding left out. (M, q) twice.
+
+    Loops stand along the last axis here: six times faster than the other way round at 1024 loops of order 6.
+    """
+    columns = np.ascontiguousarray(poles.T)
+    apart = columns[:, None, :] - columns[None, :, :]
+    diagonal = np.arange(len(columns))
+    apart[diagonal, diagonal] = 1.0
+    padding = np.isnan(apart)
+    if padding.any():
+        apart[padding] = 1.0
+    product = apart[:, 0].copy()
+    for j in range(1, len(columns)):
+        product *= apart[:, j]
+    squared = apart.real**2 + apart.imag**2
+    squared[diagonal, diagonal] = np.inf
+    squared[padding] = np.inf
+    return product.T, np.sqrt(squared.min(axis=1)).T
 
 
 def _delayed(loops: Loops) -> bool:

@@ -9,7 +9,7 @@ import numpy as np
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 from synth.loop.poles.roots import closed_roots, routh_stable
-from synth.loop.poles.share import alike, damping_of, folded, share_in_step
+from synth.loop.poles.share import Spacing, damping_of, share_in_step, spaced
 from synth.loop.polynomials import coefficient
 from synth.loop.quantities import Measure
 
@@ -56,13 +56,15 @@ class PoleStage:
             return {}
         if highest_fall is None:
             raise ValueError("counting poles needs the highest fall of abs(T)")
-        poles, share, counted = counted_poles(loops, self.poles, highest_fall)
+        poles = _far_enough(loops, self.poles, highest_fall)
+        spacing = spaced(loops, poles)
+        share, counted = _counted(loops, poles, spacing, highest_fall)
         out: dict[Measure, FloatArray] = {}
         for measure in wanted:
             if measure.quantity == "damping_ratio":
-                out[measure] = least_damping(loops, poles, counted)
+                out[measure] = least_damping(loops, poles, counted, spacing)
             else:
-                out[measure] = _natural_frequency(loops, poles, share, counted)
+                out[measure] = _natural_frequency(poles, share, counted, spacing)
         return out
 
     def surely_counted_damping(self, loops: Loops) -> FloatArray:
@@ -74,7 +76,9 @@ class PoleStage:
         if _delayed(loops):
             return np.ones(len(loops))
         with np.errstate(invalid="ignore"):
-            return least_damping(loops, self.poles, share_in_step(loops, self.poles) >= LEAST_SHARE)
+            spacing = spaced(loops, self.poles)
+            sure = share_in_step(loops, self.poles, spacing) >= LEAST_SHARE
+            return least_damping(loops, self.poles, sure, spacing)
 
 
 def needs_counting(measure: Measure) -> bool:
@@ -116,23 +120,36 @@ def counted_poles(
     Returns poles (M, q), share (M, q) as a ratio (of abs(T(0)); where T(0) = 0 the bare residue), counted (M,
     q). With dead time further poles are fetched, as far as the rule reaches, and share alone counts none.
     """
-    delayed = _delayed(loops)
-    everything = ~np.isfinite(highest_fall)
-    if delayed:
-        poles = _reaching(loops, poles, np.where(everything, 0.0, REACH * np.nan_to_num(highest_fall)))
+    poles = _far_enough(loops, poles, highest_fall)
+    return poles, *_counted(loops, poles, spaced(loops, poles), highest_fall)
+
+
+def _far_enough(loops: Loops, poles: ComplexArray, highest_fall: FloatArray) -> ComplexArray:
+    """With dead time the true poles as far out as the rule reaches; else the poles as they are."""
+    if not _delayed(loops):
+        return poles
+    return _reaching(loops, poles, REACH * np.where(np.isfinite(highest_fall), highest_fall, 0.0))
+
+
+def _counted(
+    loops: Loops, poles: ComplexArray, spacing: Spacing, highest_fall: FloatArray
+) -> tuple[FloatArray, BoolArray]:
+    """Share of each pole, and whether it counts."""
+    everything = ~np.isfinite(highest_fall) | (coefficient(loops.numerator, 0) == 0.0)
+    share = share_in_step(loops, poles, spacing)
     with np.errstate(invalid="ignore"):
-        size = np.abs(poles)
-        counted = everything[:, None] | (size <= REACH * highest_fall[:, None])
-    share = share_in_step(loops, poles)
-    if not delayed:
-        counted |= share >= LEAST_SHARE
-    no_step = coefficient(loops.numerator, 0) == 0.0
-    return poles, share, (counted | no_step[:, None]) & ~np.isnan(size)
+        counted = everything[:, None] | (np.abs(poles) <= REACH * highest_fall[:, None])
+        if not _delayed(loops):
+            counted |= share >= LEAST_SHARE
+    return share, counted & ~np.isnan(poles)
 
 
-def least_damping(loops: Loops, poles: ComplexArray, counted: BoolArray) -> FloatArray:
+def least_damping(
+    loops: Loops, poles: ComplexArray, counted: BoolArray, spacing: Spacing | None = None
+) -> FloatArray:
     """Smallest damping ratio of the counted poles; 1, the best there is, where none is counted. (M,)."""
-    out: FloatArray = np.where(counted, damping_of(loops, poles), 1.0).min(axis=1, initial=1.0)
+    ratio = damping_of(loops, poles, spacing)
+    out: FloatArray = np.where(counted, ratio, 1.0).min(axis=1, initial=1.0)
     return out
 
 
@@ -221,15 +238,13 @@ def _early_damping(loops: Loops, stable: BoolArray, poles: ComplexArray, measure
 
 
 def _natural_frequency(
-    loops: Loops, poles: ComplexArray, share: FloatArray, counted: BoolArray
+    poles: ComplexArray, share: FloatArray, counted: BoolArray, spacing: Spacing
 ) -> FloatArray:
-    """abs(p) of the counted complex pair with the largest share; NaN where there is none."""
+    """abs(p) of the counted complex pair with the largest share; NaN where there is none. (M,)."""
     if poles.shape[1] == 0:
-        return np.full(len(loops), np.nan)
-    groups = alike(loops, poles)
+        return np.full(len(poles), np.nan)
     eligible = counted & (poles.imag > 0.0) & ~np.isnan(share)
-    if groups is not None:
-        eligible &= ~folded(poles, groups)
+    eligible[spacing.rows] &= ~spacing.folded
     best = np.where(eligible, share, -1.0).argmax(axis=1)[:, None]
     size = np.take_along_axis(np.abs(poles), best, axis=1)[:, 0]
     out: FloatArray = np.where(np.take_along_axis(eligible, best, axis=1)[:, 0], size, np.nan)
