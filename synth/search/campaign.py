@@ -16,11 +16,12 @@ from synth.loop.quantities import Measure
 from synth.rules import starts
 from synth.search.archive import Rows, distinct, joined
 from synth.search.evolution import evolve
+from synth.search.gain_line import Intervals, stable_gains
 from synth.search.objective import Objective
 from synth.search.outcome import Progress, ProgressCall, Settings, StopCall, Task
 from synth.search.polish import Pace, Polished, polish
 from synth.search.standing import FINE, Standing
-from synth.search.starts import SOURCES, sample
+from synth.search.starts import SOURCES, line, sample
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,6 +47,7 @@ MOST_CASE_TURNS = 12
 class Campaign:
     """One search in progress.
 
+    gains     intervals of a bare gain that stabilise every case, exact
     origins   where starts came from (words, publication), by the number that rows carry
     halted    the user or the time limit ended it early
     """
@@ -64,6 +66,9 @@ class Campaign:
         self.objective = Objective(task, extra)
         self.standings = [Standing(i, len(s.parameters)) for i, s in enumerate(task.structures)]
         self.origins: list[tuple[str, str]] = [(name, "") for name in SOURCES]
+        self.gains: Intervals = ()
+        if any(s.parameters == 1 for s in self.standings):
+            self.gains = stable_gains(task.plants)
         self.begun = time.perf_counter()
         self.interrupted = False
         self.limited = False
@@ -161,6 +166,8 @@ class Campaign:
     def _starts(self, n: int) -> Rows:
         standing = self.standings[n]
         count = self.effort.starts * min(2**standing.rounds, 8)
+        if standing.parameters == 1:
+            return line(self.objective, n, self.gains, (1, -1), 2 * count)
         seed = self.settings.seed * 1009 + standing.rounds * 97 + n
         drawn = sample(self.objective, n, count, seed, standing.signs)
         if standing.rounds:

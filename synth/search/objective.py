@@ -9,6 +9,8 @@ everything a bounded term in the spectral abscissa for a loop that is not stable
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 
 import numpy as np
@@ -63,7 +65,8 @@ class Scores:
 class Objective:
     """Scores rows of any structure against the sheet, on the cases that are active for each structure.
 
-    measures   Q: those of the requirements, then what was asked for besides, then settling stand-ins
+    measures   Q: those of the requirements, then what else is asked for at the moment
+    kept       those of them that the archive remembers
     active     for each structure the case numbers it is judged on; starts with the nominal
     evaluations  loops scored so far (one compensator on one plant)
     """
@@ -80,16 +83,26 @@ class Objective:
         self.archive = Archive()
         self.evaluations = 0
         wanted = [b.measure for b in task.bounds] + list(extra)
-        self.measures = tuple(dict.fromkeys(wanted))
+        self.measures = self.kept = tuple(dict.fromkeys(wanted))
         self.column = [self.measures.index(b.measure) for b in task.bounds]
-        self._late: dict[int, int] = {}  # requirement -> column of its stand-in
-        late = []
+        self._late: dict[int, int] = {}  # requirement -> number of its stand-in
+        late: list[Measure] = []
         for r, bound in enumerate(task.bounds):
             if bound.measure.quantity == "settling_time" and bound.side == "max" and bound.limit > 0.0:
-                self._late[r] = len(self.measures) + len(late)
+                self._late[r] = len(late)
                 late.append(Measure("late_deviation", after=bound.limit))
-        self.measures_asked = self.measures + tuple(late)
+        self._stand_ins = tuple(late)
         self.judged = judged(self.task.bounds, self.case_names)
+
+    @contextmanager
+    def asking(self, extra: tuple[Measure, ...]) -> Iterator[None]:
+        """Score further measures for a while, those that are not asked for anyway."""
+        before = self.measures
+        self.measures = tuple(dict.fromkeys([*before, *extra]))
+        try:
+            yield
+        finally:
+            self.measures = before
 
     def add_cases(self, plants: Rational, names: tuple[str, ...]) -> None:
         """Make further plants cases of the search (points inside the tolerance box that failed)."""
@@ -145,7 +158,7 @@ class Objective:
         found = evaluate(
             self.plants,
             self.realise(rows),
-            measures=self.measures_asked,
+            measures=(*self.measures, *self._stand_ins),
             reference_step=self.task.reference_step,
             pairs=(row, case[row, slot]),
         )
@@ -160,7 +173,7 @@ class Objective:
             np.bincount(row[~found.stable], minlength=len(rows)) == 0,
         )
         if remember:
-            self.archive.add(rows, scores.exact.min(axis=1), self.worst_values(scores), count)
+            self.archive.add(rows, scores.exact.min(axis=1), self._worst_values(scores), count)
         return scores
 
     def slacks(
@@ -175,7 +188,7 @@ class Objective:
             if r in self._late:
                 band = 100.0 * bound.measure.band
                 with np.errstate(invalid="ignore"):
-                    stand_in = (band - values[:, self._late[r]]) / band
+                    stand_in = (band - values[:, len(self.measures) + self._late[r]]) / band
                 s = np.where((s < 0.0) & np.isfinite(stand_in), np.minimum(stand_in, -1e-9), s)
             search[:, r] = compressed(s)
         growth = np.maximum(np.nan_to_num(abscissa, nan=np.inf, posinf=np.inf), 0.0) * self.scales.time
@@ -187,11 +200,11 @@ class Objective:
         search[~self.judged[case] & stable[:, None]] = np.inf
         return exact, search
 
-    def worst_values(self, scores: Scores) -> FloatArray:
-        """(S, Q) each measure on its worst case: the largest where small is good, the smallest where large is."""
-        out = np.empty((scores.values.shape[0], scores.values.shape[2]))
-        absent = np.isnan(scores.values) & (scores.case >= 0)[:, :, None]
-        for q, measure in enumerate(self.measures):
+    def _worst_values(self, scores: Scores) -> FloatArray:
+        """(S, kept) each on its worst case: the largest, or the smallest where large is good."""
+        out = np.empty((scores.values.shape[0], len(self.kept)))
+        absent = np.isnan(scores.values[:, :, : len(self.kept)]) & (scores.case >= 0)[:, :, None]
+        for q, measure in enumerate(self.kept):
             column = scores.values[:, :, q]
             if measure.row.better == "max":
                 out[:, q] = np.where(np.isnan(column), np.inf, column).min(axis=1)

@@ -15,7 +15,7 @@ from synth.search.finals import Draft, candidates, drafts_of, named, rounded, sc
 from synth.search.outcome import Candidate, Outcome, ProgressCall, Rejection, Scan, Settings, StopCall, Task
 from synth.search.prices import price_list
 from synth.search.ranking import chosen, different
-from synth.search.wishes import Wished, extreme_measures, extremes, preferred
+from synth.search.wishes import Wished, extremes, preferred
 
 Seed = tuple[str, Sequence[float]]
 BOX_TURNS = 4  # how often points inside the tolerance box may send the search on
@@ -37,9 +37,7 @@ def propose(
     """
     settings = settings or Settings()
     wish = task.prefer
-    extra = extreme_measures(task)
-    if wish is not None and wish.measure is not None:
-        extra = (*extra, wish.measure)
+    extra = (wish.measure,) if wish is not None and wish.measure is not None else ()
     campaign = Campaign(task, settings, extra=extra, progress=progress, stop=stop)
     campaign.run(_seed_rows(campaign, seeds))
     found, listed = _listed(campaign)
@@ -185,10 +183,11 @@ def _scan(campaign: Campaign, n: int) -> Scan:
         exhaustive="exact" if standing.parameters == 1 else "search",
         restarts=standing.restarts,
         agreeing=standing.agreeing,
-        settled=standing.settled or standing.parameters == 1,
+        settled=standing.settled,
         best_slack=standing.best,
         evaluations=standing.evaluations,
         signs=standing.signs,
+        gain_intervals=campaign.gains if standing.parameters == 1 else (),
     )
 
 
@@ -211,7 +210,10 @@ def _rejection(
     campaign: Campaign, scan: Scan, closest: Candidate | None, final: Sequence[Candidate]
 ) -> Rejection:
     if closest is None or not bool(closest.stable.all()):
-        return Rejection(scan.structure, "no setting found that stabilises every case", None, {}, scan)
+        reason = "no setting found that stabilises every case"
+        if scan.exhaustive == "exact":
+            reason = "no gain of either sign stabilises every case"
+        return Rejection(scan.structure, reason, None, {}, scan)
     by_requirement: FloatArray = closest.worst_by_requirement()
     short = {b.id: float(s) for b, s in zip(campaign.task.bounds, by_requirement, strict=True) if s < 0.0}
     if not short:

@@ -57,5 +57,8 @@ class Standing:
 
     def judge(self) -> None:
         """Settled when enough restarts agree on the best."""
+        if self.parameters == 1:
+            self.settled = True  # the whole line was walked
+            return
         needed = ENOUGH_WIDE if self.parameters >= 4 and self.best < 0.0 else ENOUGH
         self.settled = self.agreeing >= needed

@@ -17,12 +17,13 @@ import numpy as np
 from synth.loop.arrays import FloatArray
 from synth.requirements import Bound
 from synth.search.archive import Rows, joined
+from synth.search.gain_line import Intervals, covering
 from synth.search.objective import Objective
 from synth.search.scales import response
 from synth.structures import Structure
 
 PRIMES = (2, 3, 5, 7, 11, 13, 17, 19)
-SOURCES = ("design coordinates", "crossover with free corners", "wide log-uniform")
+SOURCES = ("design coordinates", "crossover with free corners", "wide log-uniform", "the whole gain line")
 DECADE = float(np.log(10.0))
 
 
@@ -89,7 +90,6 @@ def sample(objective: Objective, s: int, count: int, seed: int, signs: tuple[int
 
     Row origins are the numbers of SOURCES.
     """
-    structure = objective.structures[s]
     bands = [plant_band(objective)]
     asked = asked_band(objective.task.bounds)
     if asked is not None:
@@ -97,9 +97,6 @@ def sample(objective: Objective, s: int, count: int, seed: int, signs: tuple[int
     third = max(count // 3, 4)
     parts = []
     for sign in signs:
-        if len(structure.parameters) == 1:
-            parts.append(_line(objective, s, sign, count))
-            continue
         for k, band in enumerate(bands):
             share = -(-third // len(bands))
             salt = seed * 31 + k * 7 + (3 if sign > 0 else 5)
@@ -109,15 +106,22 @@ def sample(objective: Objective, s: int, count: int, seed: int, signs: tuple[int
     return joined(parts)
 
 
-def _line(objective: Objective, s: int, sign: int, count: int) -> Rows:
-    """One parameter: the gain from far below to far above every abs(1/P) on the way."""
+def line(objective: Objective, s: int, intervals: Intervals, signs: tuple[int, ...], count: int) -> Rows:
+    """One parameter: the whole gain line, dense on the intervals that stabilise; log-uniform over the reach of
+    abs(1/P) where there is none, so that a closest approach can still be told."""
     band = plant_band(objective)
     size = np.abs(response(objective.task.plants, band.at(np.linspace(0.0, 1.0, 60)))) / objective.scales.gain
     size = size[np.isfinite(size) & (size > 0.0)]
-    low, high = -np.log(size.max()) - 1.0 * DECADE, -np.log(size.min()) + 1.0 * DECADE
-    x = np.zeros((2 * count, objective.width))
-    x[:, 0] = np.linspace(max(low, -14.0), min(high, 14.0), 2 * count)
-    return _rows(objective, s, x, sign, 2)
+    reach = np.clip([-np.log(size.max()) - DECADE, -np.log(size.min()) + DECADE], -14.0, 14.0)
+    parts = []
+    for sign in signs:
+        gains = covering(intervals, sign, objective.scales.gain, count)
+        logs = np.log(gains * objective.scales.gain) if gains.size else np.linspace(*reach, 16)
+        x = np.zeros((logs.size, objective.width))
+        x[:, 0] = logs
+        rows = _rows(objective, s, x, sign, 3)
+        parts.append(rows)
+    return joined(parts)
 
 
 def _design(objective: Objective, s: int, count: int, seed: int, band: Band, sign: int) -> Rows:

@@ -74,7 +74,8 @@ def extremes(campaign: Campaign) -> Wished | None:
     tops = [s.tops.take(np.array([0])) for s in heads if s.tops is not None]
     rows = joined(tops * len(aims))
     goals = Goals(aims, np.repeat(np.arange(len(aims)), len(tops)), np.full(len(rows), np.nan))
-    done = polish(campaign.objective, rows, goals, pace=EXTREME_PACE, stop=campaign.halted)
+    with campaign.objective.asking(tuple(a.measure for a in aims if a.measure is not None)):
+        done = polish(campaign.objective, rows, goals, pace=EXTREME_PACE, stop=campaign.halted)
     good = np.flatnonzero(done.stable & (done.worst >= reserve))
     names = [f"least {aims[int(a)].measure.row.name}" for a in goals.aim[good]]  # type: ignore[union-attr]
     return Wished(done.rows.take(good), tuple(names), reserve)
