@@ -297,7 +297,28 @@ def read(text: str) -> tuple[Node, tuple[str, ...], bool]:
     """Tree, parameter names in order of appearance, and whether s stands in the text. Raises FormulaError."""
     if len(text) > MAX_TEXT:
         raise FormulaError(f"the formula is longer than {MAX_TEXT} characters", text[:80], 0)
-    reader = Reader(text, tokens(text))
-    tree = reader.sum()
-    reader.end()
+    try:
+        reader = Reader(text, tokens(text))
+        tree = reader.sum()
+        reader.end()
+    except FormulaError as error:
+        if error.repaired is not None:
+            whole = _mended(error.repaired)
+            raise FormulaError(error.message, text, error.position, repaired=whole) from None
+        raise
     return tree, tuple(dict.fromkeys(reader.names)), reader.uses_s
+
+
+def _mended(text: str) -> str:
+    """A text in which one `*` was missing, with the others that are missing put in too."""
+    for _ in range(20):
+        try:
+            reader = Reader(text, tokens(text))
+            reader.sum()
+        except FormulaError as error:
+            if error.repaired is None:
+                break
+            text = error.repaired
+        else:
+            break
+    return text

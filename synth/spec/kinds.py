@@ -365,8 +365,8 @@ def formula(node: Node, in_s: bool) -> Formula | None:
     assert isinstance(node.value, str)
     try:
         parsed = parse(node.value)
-        if parsed.uses_s and not in_s:
-            parsed.value({})
+        if not in_s and (parsed.uses_s or not parsed.names):
+            parsed.value({})  # refuses s; and a number such as 1/0 is wrong already here
     except FormulaError as error:
         allowed = "numbers, names, s, pi, sqrt(...), + - * / ^, ( ), exp(-theta*s)" if in_s else None
         node.fault(error.message, allowed, error.repaired, given=error.excerpt())

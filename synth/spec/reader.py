@@ -16,6 +16,7 @@ from synth.spec.requirements import read_bounds, read_preference
 from synth.spec.sheet import SHEET
 from synth.spec.source import Node, Source, check_size, load
 from synth.spec.spec import SearchSettings, Spec
+from synth.structures import REGISTRY
 
 
 def read_spec(path: str | Path) -> Spec:
@@ -42,6 +43,8 @@ def parse_spec(text: str, file: str = "spec.toml") -> Spec:
     points = case_points(ranges, operating)
     bounds = read_bounds(root.child("requirements"), read.get("requirements", {}), [p.name for p in points])
     prefer = read_preference(root.child("prefer"), read["prefer"]) if "prefer" in read else None
+
+    search = _search(root.child("search"), read.get("search", {}))
 
     plant_node, plant_read = root.child("plant"), read.get("plant", {})
     form = read_plant(plant_node, plant_read)
@@ -70,7 +73,7 @@ def parse_spec(text: str, file: str = "spec.toml") -> Spec:
         reference_step=read.get("reference", {}).get("step", 1.0),
         bounds=bounds,
         prefer=prefer,
-        search=_search(read.get("search", {})),
+        search=search,
     )
 
 
@@ -92,7 +95,9 @@ def _built(
         return None
 
 
-def _search(read: dict[str, Any]) -> SearchSettings:
+def _search(node: Node, read: dict[str, Any]) -> SearchSettings:
     named = read.get("structures")
+    if named == []:
+        node.child("structures").fault("no structure is named", ", ".join(REGISTRY))
     structures = tuple(dict.fromkeys(name for _, name in named)) if named else None
     return SearchSettings(structures, read.get("budget", "normal"), read.get("seed", 0))

@@ -15,7 +15,7 @@ from synth.spec.positions import Path, Slip, Span, dotted, line_and_column, scan
 
 # A sheet is a page or two; past this, the file is something else.
 MAX_BYTES = 256 * 1024
-MOST_FAULTS = 60  # of one file; the rest are only counted
+MOST_FAULTS = 200  # of one file; the rest are only counted
 _QUOTED = r"'([^']*)'"
 
 

@@ -143,6 +143,7 @@ ONLY_EXP = "exp(...) stands for dead time alone: write exp(-theta*s), theta a nu
         ("K(s+1)", "`*` is missing between `K` and `(`", 1, "K*(s+1)"),
         ("(s+1)(s+2)", "`*` is missing between `)` and `(`", 5, "(s+1)*(s+2)"),
         ("(s+1) s", "`*` is missing between `)` and `s`", 6, "(s+1)*s"),
+        ("2(s + 1)(K s+1)", "`*` is missing between `2` and `(`", 1, "2*(s + 1)*(K*s+1)"),
         ("K 2", "`*` is missing between `K` and `2`", 2, "K*2"),
         ("sqrt(2)s", "`*` is missing between `)` and `s`", 7, "sqrt(2)*s"),
         ("2exp(-s)", "`*` is missing between `2` and `exp`", 1, "2*exp(-s)"),
