@@ -63,9 +63,19 @@ class Case(TypedDict):
     role: NotRequired[str]  # nominal, corner, operating, interior
 
 
+class Range(TypedDict):
+    """A parameter in SI; low = high = nominal where it has no tolerance."""
+
+    name: str
+    nominal: float
+    low: float
+    high: float
+
+
 class Plant(TypedDict):
     cases: list[Case]
     form: NotRequired[str]
+    ranges: NotRequired[list[Range]]
     poles: NotRequired[list[Pole]]  # of the nominal case
     zeros: NotRequired[list[Pole]]
     interior_examined: NotRequired[int]
@@ -109,7 +119,7 @@ class Worst(TypedDict):
 
 
 class Mode(TypedDict):
-    """A closed-loop pole (a pair once, upper half), its share of the reference step, whether it is counted."""
+    """A closed-loop pole (a pair once, upper half), its share of the step, whether it is counted."""
 
     pole: Pole
     share: Number
@@ -174,6 +184,7 @@ class Candidate(TypedDict):
     modes: NotRequired[list[Mode]]
     fragility: NotRequired[list[Moved]]
     start: NotRequired[str]
+    source: NotRequired[str]
     goal: NotRequired[str]
     ranked: NotRequired[str]
     approximate: NotRequired[list[str]]

@@ -1,0 +1,195 @@
+"""Facts about a candidate: numbers that the record's own compensator and plants give again. No words here.
+
+Each function takes a scene and gives one fact, or None where there is nothing to say.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from synth.rationale.scene import Scene
+from synth.search.outcome import Candidate, Scan
+from synth.structures import REGISTRY
+
+
+@dataclass(frozen=True, slots=True)
+class Fact:
+    """A kind, which has a sentence of its own, and the numbers it rests on."""
+
+    kind: str
+    data: dict[str, Any]
+
+
+def phase(scene: Scene) -> Fact | None:
+    """What the plant lacks at the crossover, and what C adds there; nominal case."""
+    w = scene.nominal("crossover")
+    if not math.isfinite(w):
+        return None
+    s = 1j * w
+    plants = scene.outcome.plants
+    plant = complex(np.polyval(plants.numerator[0], s) / np.polyval(plants.denominator[0], s))
+    plant *= complex(np.exp(-s * float(plants.dead_time[0])))
+    c = complex(np.polyval(scene.candidate.numerator, s) / np.polyval(scene.candidate.denominator, s))
+    sign = low_frequency_sign(scene.candidate.numerator, scene.candidate.denominator)
+    return Fact(
+        "phase",
+        {
+            "crossover": w,
+            "plant_phase": _degrees(plant * sign),
+            "compensator_phase": _degrees(c * sign),
+            "gain_alone_margin": _margin(plant * sign),
+            "margin_there": _margin(plant * c),
+        },
+    )
+
+
+def low_frequency_sign(numerator: Sequence[float], denominator: Sequence[float]) -> float:
+    """Sign of C's gain at low frequency: -1 for a reverse-acting loop."""
+    top = next((v for v in reversed(numerator) if v != 0.0), 1.0)
+    bottom = next((v for v in reversed(denominator) if v != 0.0), 1.0)
+    return math.copysign(1.0, top) * math.copysign(1.0, bottom)
+
+
+def _degrees(value: complex) -> float:
+    return math.degrees(math.atan2(value.imag, value.real))
+
+
+def _margin(value: complex) -> float:
+    """180° + phase, wrapped to (-180°, 180°]."""
+    return _degrees(-value)
+
+
+def statics(scene: Scene) -> Fact:
+    """Who integrates, and what a step of the reference and of the disturbance leave."""
+    den = np.asarray(scene.candidate.denominator)
+    plant_den = scene.outcome.plants.denominator[0]
+    static, _ = scene.worst("static_error")
+    residue, _ = scene.worst("disturbance_residue")
+    return Fact(
+        "statics",
+        {
+            "integrators_of_compensator": _zeros_at_origin(den),
+            "integrators_of_plant": _zeros_at_origin(plant_den),
+            "static_error": static,
+            "disturbance_residue": residue,
+        },
+    )
+
+
+def _zeros_at_origin(polynomial: Any) -> int:
+    nonzero = np.flatnonzero(np.asarray(polynomial))
+    return 0 if nonzero.size == 0 else len(polynomial) - 1 - int(nonzero[-1])
+
+
+def start(scene: Scene) -> Fact | None:
+    """Where the search set out from."""
+    found = scene.candidate
+    return Fact("start", {"start": found.start, "source": found.source}) if found.start else None
+
+
+def binding(scene: Scene) -> Fact | None:
+    """The requirement with the least slack, and the next."""
+    candidate = scene.candidate
+    if candidate.binding is None:
+        return None
+    requirement, case = candidate.binding
+    number, bound = scene.bound(requirement)
+    k = scene.outcome.case_names.index(case)
+    data: dict[str, Any] = {
+        "requirement": requirement,
+        "case": case,
+        "value": float(scene.column(bound.measure)[k]),
+        "limit": bound.limit,
+        "slack": candidate.worst_slack,
+    }
+    worst = candidate.worst_by_requirement()
+    others = [i for i in range(len(worst)) if i != number and math.isfinite(worst[i])]
+    if others:
+        following = min(others, key=lambda i: (float(worst[i]), i))
+        data |= {"next": scene.spec.bounds[following].id, "next_slack": float(worst[following])}
+    return Fact("binding", data)
+
+
+def fragility(scene: Scene) -> Fact | None:
+    """Worst slack when each tuned value alone moves by -10 % and +10 %."""
+    moved = scene.candidate.fragility
+    if not moved or not scene.candidate.meets_all:  # what falls short already is not made of glass
+        return None
+    return Fact("fragility", {f.parameter: [f.down, f.up] for f in moved})
+
+
+def simpler(scene: Scene) -> Fact | None:
+    """How near the richest of the structures inside this one comes."""
+    own = REGISTRY[scene.candidate.structure]
+    scans = {s.structure: s for s in scene.outcome.scans}
+    inside = [scans[name] for name in own.simpler if name in scans]
+    if not inside:
+        return None
+    # the richest first; of equally rich ones the one that comes nearest
+    best = max(inside, key=lambda s: (len(REGISTRY[s.structure].parameters), s.best_slack))
+    data: dict[str, Any] = {"structure": best.structure, "slack": best.best_slack, "scan": best.exhaustive}
+    closest = closest_of(scene, best)
+    if closest is not None and closest.binding is not None:
+        number, bound = scene.bound(closest.binding[0])
+        k = scene.outcome.case_names.index(closest.binding[1])
+        column = closest.measures.index(bound.measure)
+        data |= {
+            "requirement": bound.id,
+            "value": float(closest.values[k, column]),
+            "limit": bound.limit,
+            "slack": float(closest.slack[k, number]),
+        }
+    return Fact("simpler", data)
+
+
+def closest_of(scene: Scene, scan: Scan) -> Candidate | None:
+    """The closest approach of a rejected structure."""
+    for r in scene.outcome.rejections:
+        if r.structure == scan.structure:
+            return r.closest
+    return None
+
+
+def richer(scene: Scene) -> Fact | None:
+    """What the best structure with more tuned values would buy."""
+    own = REGISTRY[scene.candidate.structure]
+    more = [s for s in scene.outcome.scans if len(REGISTRY[s.structure].parameters) > len(own.parameters)]
+    if not more:
+        return None
+    best = max(more, key=lambda s: s.best_slack)
+    return Fact(
+        "richer",
+        {
+            "structure": best.structure,
+            "slack": best.best_slack,
+            "gain": best.best_slack - scene.candidate.worst_slack,
+            "parameters": len(REGISTRY[best.structure].parameters),
+            "own_parameters": len(own.parameters),
+        },
+    )
+
+
+def inside(scene: Scene) -> Fact | None:
+    """How it does on the points inside the tolerance box."""
+    if scene.candidate.interior_met is None or not scene.candidate.interior_total:
+        return None
+    return Fact("inside", {"met": scene.candidate.interior_met, "points": scene.candidate.interior_total})
+
+
+def rank(scene: Scene) -> Fact | None:
+    """Why it stands where it stands."""
+    if not scene.candidate.ranked:
+        return None
+    return Fact(
+        "rank",
+        {
+            "ranked": scene.candidate.ranked,
+            "worst_slack": scene.candidate.worst_slack,
+            "parameters": len(scene.candidate.parameters),
+        },
+    )

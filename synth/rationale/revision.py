@@ -1,0 +1,130 @@
+"""The plant was revised: what to do about the compensator in service, and the evidence for it."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any, Literal
+
+from synth.rationale.figures import count, figure, percent
+from synth.rationale.scene import Scene
+from synth.rationale.sentences import said_binding
+from synth.rationale.words import parameter_name
+from synth.search.outcome import Candidate, Outcome
+from synth.spec import Spec
+
+Advice = Literal["keep", "retune", "restructure", "relax"]
+
+
+@dataclass(frozen=True, slots=True)
+class Decision:
+    """The advice, the number of the candidate that would take over (None: none), how far its values move,
+    and why.
+
+    evidence : sentences, each with its facts.
+    """
+
+    advice: Advice
+    successor: int | None
+    moved: dict[str, list[float]] | None
+    evidence: list[tuple[str, dict[str, Any]]]
+
+
+def decide(
+    spec: Spec,
+    outcome: Outcome,
+    untouched: Candidate,
+    *,
+    about: str,
+    slack_before: float,
+    parameters: Mapping[str, float],
+) -> Decision:
+    """Advice for one compensator.
+
+    untouched     it, as it is, scored on the new plant
+    about         who it is, in words ("the adopted PI")
+    slack_before  its worst slack on the old plant, NaN where unknown
+    parameters    its tuned values
+    """
+    evidence = [_before_and_after(spec, outcome, untouched, about, slack_before)]
+    if untouched.meets_all:
+        return Decision("keep", None, None, [*evidence, *_could_be_better(outcome, untouched)])
+    met = [i for i, c in enumerate(outcome.candidates) if c.meets_all]
+    same = [i for i in met if outcome.candidates[i].structure == untouched.structure]
+    if same:
+        new = outcome.candidates[same[0]]
+        moved = {k: [float(parameters[k]), float(v)] for k, v in new.parameters.items() if k in parameters}
+        return Decision("retune", same[0], moved, [*evidence, _moves(new, moved, same[0])])
+    evidence.append(_own_structure(outcome, untouched))
+    if met:
+        new = outcome.candidates[met[0]]
+        text = (
+            f"A {new.structure} meets everything: candidate {met[0] + 1}, slack {percent(new.worst_slack)}, "
+            f"{count(len(new.parameters), 'tuned value')}."
+        )
+        facts = {"rank": met[0] + 1, "worst_slack": new.worst_slack}
+        return Decision("restructure", met[0], None, [*evidence, (text, facts)])
+    return Decision("relax", 0 if outcome.candidates else None, None, [*evidence, _nothing_does(outcome)])
+
+
+def _before_and_after(
+    spec: Spec, outcome: Outcome, untouched: Candidate, about: str, before: float
+) -> tuple[str, dict[str, Any]]:
+    was = f" (it had {percent(before)} on the old one)" if before == before else ""
+    facts: dict[str, Any] = {"before": before, "after": untouched.worst_slack}
+    head = f"Untouched on the revised plant, {about}"
+    if not untouched.stable.all():
+        bad = [n for n, ok in zip(outcome.case_names, untouched.stable, strict=False) if not ok]
+        where = f" on {', '.join(bad[:3])}" if len(outcome.case_names) > 1 else ""
+        return f"{head} is unstable{where}{was}.", facts
+    scene = Scene(spec, outcome, untouched)
+    if untouched.meets_all:
+        text = f"{head} still meets everything, with a slack of {percent(untouched.worst_slack)}{was}."
+        return f"{text} {said_binding(scene)}", facts
+    return f"{head} no longer meets everything{was}. {said_binding(scene)}", facts
+
+
+def _could_be_better(outcome: Outcome, untouched: Candidate) -> list[tuple[str, dict[str, Any]]]:
+    if not outcome.candidates or not outcome.candidates[0].meets_all:
+        return []
+    first = outcome.candidates[0]
+    gain = first.worst_slack - untouched.worst_slack
+    if gain <= 0.0:
+        return []
+    slack = percent(first.worst_slack)
+    text = f"A new search would reach {slack} with a {first.structure}: {percent(gain)} on top."
+    return [(text, {"worst_slack": first.worst_slack, "gain": gain})]
+
+
+def _moves(new: Candidate, moved: dict[str, list[float]], index: int) -> tuple[str, dict[str, Any]]:
+    parts = []
+    for key, (old, now) in moved.items():
+        change = f"{100.0 * (now / old - 1.0):+.0f} %".replace("-", "−") if old else "from 0"
+        parts.append(f"{parameter_name(key)} {figure(old)} to {figure(now)} ({change})")
+    text = (
+        f"The same structure does it with other values: candidate {index + 1}, slack "
+        f"{percent(new.worst_slack)}; {', '.join(parts)}."
+    )
+    return text, {"rank": index + 1, "worst_slack": new.worst_slack, "moved": moved}
+
+
+def _own_structure(outcome: Outcome, untouched: Candidate) -> tuple[str, dict[str, Any]]:
+    scan = next((s for s in outcome.scans if s.structure == untouched.structure), None)
+    if scan is None:
+        return f"A {untouched.structure} was not searched again.", {}
+    sure = "" if scan.settled else " as far as it was searched"
+    text = (
+        f"Retuned, a {untouched.structure} comes no nearer than a slack of {percent(scan.best_slack)}{sure}."
+    )
+    return text, {"best_slack": scan.best_slack}
+
+
+def _nothing_does(outcome: Outcome) -> tuple[str, dict[str, Any]]:
+    if not outcome.candidates:
+        return "Nothing that was searched meets the sheet on the revised plant.", {}
+    first = outcome.candidates[0]
+    text = (
+        f"Nothing that was searched meets the sheet on the revised plant; the nearest is a "
+        f"{first.structure} with a slack of {percent(first.worst_slack)}."
+    )
+    return text, {"worst_slack": first.worst_slack}

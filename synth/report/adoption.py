@@ -1,0 +1,30 @@
+"""What `synth adopt` says once it is done."""
+
+from __future__ import annotations
+
+from rich.text import Text
+
+from synth.record import Adoption
+from synth.report.settings import fraction, plain_values
+from synth.report.theme import hanging
+
+RELEASE = "This states a choice and is no release to service: a model is not the machine."
+
+
+def adopted(adoption: Adoption, path: str, width: int) -> list[Text]:
+    """Which candidate, of which record, and where that is written."""
+    head = Text.assemble(
+        ("ADOPTED", "head"),
+        f"  candidate {adoption['rank']} of {adoption['record']['file']}: {adoption['structure']}",
+    )
+    lines = [head]
+    if adoption["parameters"]:
+        lines.append(hanging("  ", plain_values(adoption["parameters"]), width))
+    lines.extend(Text("  " + line) for line in fraction(adoption["compensator"]))
+    if adoption["verdict"] != "met":
+        lines.append(hanging("  ", "It does not meet everything.", width, style="warn"))
+    if adoption["note"]:
+        lines.append(hanging("  note: ", adoption["note"], width))
+    lines.append(hanging("  ", RELEASE, width, style="dim"))
+    lines.append(Text(f"adoption: {path}"))
+    return lines

@@ -1,0 +1,131 @@
+"""Candidates of one or more records side by side: the same rows for all, whatever each sheet asked for."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from rich.text import Text
+
+from synth.rationale.figures import figure, percent, unit_for
+from synth.record import Candidate, Record, number, quantity_name, quantity_unit, requirement_name
+from synth.report.settings import tuned
+from synth.report.theme import Columns, hanging, heading, items
+from synth.report.view import SIGN, View, order
+
+CELL = 10
+ALWAYS = (
+    "damping_ratio",
+    "overshoot",
+    "settling_time",
+    "bandwidth",
+    "phase_margin",
+    "gain_margin",
+    "sensitivity_peak",
+    "control_peak",
+    "disturbance_area",
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Column:
+    """One candidate of one record, under a short name: "A1"."""
+
+    label: str
+    record: Record
+    candidate: Candidate
+
+
+def comparison(named: Sequence[tuple[str, Record]], width: int) -> list[Text]:
+    """The records named, then their candidates in columns;
+
+    As many columns as fit, the rest in further blocks.
+    """
+    several = len(named) > 1
+    lines: list[Text] = []
+    columns: list[Column] = []
+    for i, (file, record) in enumerate(named):
+        letter = chr(ord("A") + i % 26) if several else ""
+        lines.append(_record_line(letter, file, record, width))
+        columns.extend(Column(f"{letter}{c['rank']}", record, c) for c in record["candidates"])
+    if not columns:
+        return [*lines, Text("\nno candidates in them")]
+    left = 28
+    room = max(1, (width - left - 2) // CELL)
+    for start in range(0, len(columns), room):
+        lines.append(heading("Side by side", "worst plant case of each" if start == 0 else "continued"))
+        lines.extend(_block(columns[start : start + room]))
+    lines.append(Text("  * holds it back   ! falls short of its own sheet", style="dim"))
+    lines.append(heading("Tuned values"))
+    label = max(len(c.label) for c in columns) + 4
+    for c in columns:
+        first = Text.assemble(f"  {c.label}".ljust(label), (c.candidate["structure"].ljust(13), "name"))
+        lines.append(items(first, tuned(c.candidate), width))
+    if several:
+        lines.extend(_limits(named, width))
+    return lines
+
+
+def _record_line(letter: str, file: str, record: Record, width: int) -> Text:
+    spec = record["spec"]
+    revision = f", revision {spec['revision']}" if spec["revision"] else ""
+    text = f"{spec['title'] or spec['file']}{revision}: {record['verdict']} ({file}, {record['created']})"
+    return hanging(f"{letter}  " if letter else "", text, width)
+
+
+def _block(columns: Sequence[Column]) -> list[Text]:
+    table = Columns(("<", *(">" for _ in columns)))
+    table.add("", *(c.label for c in columns), style="dim")
+    table.add("structure", *(Text(c.candidate["structure"][: CELL - 1], style="name") for c in columns))
+    table.add("order", *(str(order(c.candidate)) for c in columns))
+    table.add("meets its sheet", *("yes" if c.candidate["meets_all"] else "no" for c in columns))
+    table.add("worst slack", *(percent(number(c.candidate["worst_slack"])) for c in columns))
+    for key in _quantities(columns):
+        values = [View(c.record).worst(c.candidate, key) for c in columns]
+        if not any(not math.isnan(v) for v in values):
+            continue
+        unit = unit_for(_unit(key, columns), values)
+        name = f"{quantity_name(key)}, {unit.word}" if unit.word else quantity_name(key)
+        table.add(name, *(_cell(c, key, unit.number(v, 3)) for c, v in zip(columns, values, strict=True)))
+    return table.lines()
+
+
+def _unit(key: str, columns: Sequence[Column]) -> str:
+    """The unit with the plant's own words where all the records agree on them."""
+    units = {quantity_unit(key, c.record["spec"]) for c in columns}
+    return units.pop() if len(units) == 1 else quantity_unit(key)
+
+
+def _quantities(columns: Sequence[Column]) -> list[str]:
+    """What any of the sheets asks for, in their order, then a fixed few."""
+    asked = (r["quantity"] for c in columns for r in c.record["requirements"])
+    return list(dict.fromkeys((*asked, *ALWAYS)))
+
+
+def _cell(column: Column, key: str, text: str) -> Text:
+    ids = [r["id"] for r in column.record["requirements"] if r["quantity"] == key]
+    short = any(not number(column.candidate["slack"].get(i)) >= 0.0 for i in ids)
+    binding = column.candidate["binding"]
+    binds = binding is not None and binding["requirement"] in ids
+    cell = Text(text + ("!" if short else "*" if binds else " "))
+    cell.stylize("short" if short else "binds" if binds else "")
+    return cell
+
+
+def _limits(named: Sequence[tuple[str, Record]], width: int) -> list[Text]:
+    """What each sheet asks for, where they differ."""
+    sheets = [
+        {
+            r["id"]: f"{requirement_name(r)} {SIGN[r['bound']]} {figure(r['limit'])} {r['unit']}".rstrip()
+            for r in rec["requirements"]
+        }
+        for _, rec in named
+    ]
+    if all(sheet == sheets[0] for sheet in sheets):
+        return []
+    lines = [heading("The sheets differ")]
+    for i, sheet in enumerate(sheets):
+        own = [text for key, text in sheet.items() if any(other.get(key) != text for other in sheets)]
+        lines.append(hanging(f"  {chr(ord('A') + i % 26)}  ", "; ".join(own) or "nothing of its own", width))
+    return lines

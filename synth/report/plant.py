@@ -1,0 +1,111 @@
+"""`synth check`: the plant as it was read, its cases, and what no compensator can do on it."""
+
+from __future__ import annotations
+
+import math
+from typing import cast
+
+from rich.text import Text
+
+from synth.rationale.figures import count, figure, quantity
+from synth.record import Check, Record, quantity_name
+from synth.report import reach, summary
+from synth.report.theme import Columns, hanging, heading
+from synth.report.view import View
+
+MOST_CASES = 12  # listed; the rest is counted
+
+
+def plant(check: Check, width: int) -> list[Text]:
+    """The whole view of one sheet."""
+    record = cast(Record, check)  # the parts both have read alike
+    lines = [summary.title(record, width)]
+    violated = [limit for limit in check["limits"] if limit["violates"]]
+    if violated:
+        words = f"{count(len(violated), 'limit')} of the plant rule the sheet out; see below."
+        lines.append(
+            Text("\n").append_text(hanging(Text.assemble(("IMPOSSIBLE", "bad"), "  "), words, width))
+        )
+    else:
+        words = "The sheet reads well, and no limit that was checked rules it out. Nothing was searched."
+        lines.append(Text("\n").append_text(hanging(Text.assemble(("READ", "good"), "  "), words, width)))
+    lines.extend(_plant(check, width))
+    lines.extend(_cases(check, width))
+    lines.extend(_requirements(record, width))
+    lines.extend(reach.limits(record, width))
+    lines.append(heading("Cautions"))
+    lines.extend(hanging("  - ", caution, width) for caution in check["cautions"])
+    return lines
+
+
+def _plant(check: Check, width: int) -> list[Text]:
+    part, spec = check["plant"], check["spec"]
+    lines = [heading("Plant", "nominal")]
+    if part.get("form"):
+        lines.append(hanging("  P(s)   ", part["form"], width))
+    for word, key in (("poles", "poles"), ("zeros", "zeros")):
+        roots = part.get(key, [])
+        listed = [_root(re, im) for re, im in cast("list[list[float]]", roots) if im >= 0.0]
+        if listed:
+            lines.append(hanging(f"  {word}  ", ", ".join(listed) + " rad/s", width))
+    nominal = part["cases"][0]
+    if nominal["dead_time"]:
+        lines.append(Text(f"  dead time  {quantity(nominal['dead_time'], 's')}"))
+    gain = _steady(nominal["numerator"], nominal["denominator"])
+    if math.isfinite(gain):
+        lines.append(Text(f"  gain at zero frequency  {figure(gain)}"))
+    valid = spec.get("valid_to")
+    if valid is not None:
+        lines.append(Text(f"  valid to  {figure(valid)} rad/s ({figure(valid / (2.0 * math.pi))} Hz)"))
+    lines.extend(_parameters(check))
+    return lines
+
+
+def _root(re: float, im: float) -> str:
+    if im == 0.0:
+        return figure(re)
+    size = math.hypot(re, im)
+    return f"{figure(re)} ± {figure(im)}j ({figure(size)} rad/s, damping ratio {figure(-re / size, 3)})"
+
+
+def _steady(numerator: list[float], denominator: list[float]) -> float:
+    return numerator[-1] / denominator[-1] if denominator[-1] else math.inf
+
+
+def _parameters(check: Check) -> list[Text]:
+    ranges = check["plant"].get("ranges", [])
+    if not ranges:
+        return []
+    table = Columns(("<", ">", ">", "<", ">"), indent=2)
+    table.add("parameter (SI)", "nominal", "from", "", "to", style="dim")
+    for r in ranges:
+        if r["low"] != r["high"]:
+            table.add(r["name"], figure(r["nominal"]), figure(r["low"]), "…", figure(r["high"]))
+        else:
+            table.add(r["name"], figure(r["nominal"]))
+    return [Text(), *table.lines()]
+
+
+def _cases(check: Check, width: int) -> list[Text]:
+    cases = check["plant"]["cases"]
+    if len(cases) < 2:
+        return []
+    lines = [heading("Cases", count(len(cases), "plant case"))]
+    names = [c["name"] for c in cases[:MOST_CASES]]
+    more = f" and {len(cases) - MOST_CASES} more" if len(cases) > MOST_CASES else ""
+    lines.append(hanging("  ", "; ".join(names) + more, width))
+    return lines
+
+
+def _requirements(record: Record, width: int) -> list[Text]:
+    view = View(record)
+    table = Columns(("<", "<", "<"))
+    for r in record["requirements"]:
+        table.add(view.name(r["id"]), view.limit(r), f"on {', '.join(r['cases'])}" if r["cases"] else "")
+    lines = [heading("Requirements"), *table.lines()]
+    prefer = record["spec"].get("prefer")
+    if prefer:
+        word = "minimise" if prefer["sense"] == "min" else "maximise"
+        reserve = f", keeping {100.0 * prefer['reserve']:g} % of slack" if prefer["reserve"] else ""
+        lines.append(hanging("  ", f"then {word} {quantity_name(prefer['quantity'])}{reserve}", width))
+    return lines

@@ -1,0 +1,80 @@
+"""What is not on offer and why: structures not used, what it would take, what no compensator can do."""
+
+from __future__ import annotations
+
+import math
+
+from rich.text import Text
+
+from synth.rationale.figures import quantity
+from synth.record import Record, number
+from synth.report.settings import tuned
+from synth.report.theme import Columns, hanging, heading
+from synth.report.view import SIGN, View
+
+
+def rejected(record: Record, width: int) -> list[Text]:
+    """Structures without a place in the list, each with its closest approach."""
+    if not record["rejected"]:
+        return []
+    lines = [heading("Structures not used", "and how near each came")]
+    room = max(len(r["structure"]) for r in record["rejected"]) + 4
+    for r in record["rejected"]:
+        text = Text(r["reason"])
+        closest = r["closest"]
+        if closest is not None and any(number(s) < 0.0 for s in closest["slack"].values()):
+            text.append(f" [{' · '.join(tuned(closest))}]", style="dim")
+        label = Text.assemble("  ", (r["structure"].ljust(room - 2), "name"))
+        lines.append(hanging(label, text, width))
+    return lines
+
+
+def prices(record: Record, width: int) -> list[Text]:
+    """When the sheet is not met: what each requirement would have to be for the rest to be met."""
+    found = record.get("prices", [])
+    if not found:
+        return []
+    view = View(record)
+    lines = [heading("What it would take", "one limit moved, all the others met; cheapest first")]
+    table = Columns(("<", ">", "<", "<", ">", "<"))
+    for p in found:
+        requirement = view.requirements.get(p["requirement"])
+        if requirement is None:
+            continue
+        unit = view.unit(requirement)
+        needed = float(p["needed"]) if p["needed"] is not None else math.nan
+        table.add(
+            view.name(p["requirement"]),
+            f"{SIGN[requirement['bound']]} {quantity(p['limit'], unit)}",
+            "→",
+            quantity(needed, unit),
+            "",
+            f"and a {p['structure']} does it",
+        )
+    lines.extend(line if line.cell_len <= width else _cut(line, width) for line in table.lines())
+    return lines
+
+
+def _cut(line: Text, width: int) -> Text:
+    line.truncate(width, overflow="ellipsis")
+    return line
+
+
+def limits(record: Record, width: int) -> list[Text]:
+    """What no compensator can do on this plant, violated ones first."""
+    found = sorted(record["limits"], key=lambda limit: limit["violates"] is None)
+    if not found:
+        return []
+    view = View(record)
+    lines = [heading("Limits of the plant", "hold for any compensator in this loop")]
+    for limit in found:
+        text = Text(limit["statement"])
+        if limit["violates"]:
+            text.append(f" Violated by {view.name(limit['violates'])}.", style="bad")
+            relax = limit.get("relax")
+            requirement = view.requirements.get(limit["violates"])
+            if relax and requirement is not None and isinstance(relax.get("to"), int | float):
+                text.append(f" Relax it to {quantity(float(relax['to']), view.unit(requirement))}.")
+        text.append(f" [{limit['source']}]", style="dim")
+        lines.append(hanging("  - ", text, width))
+    return lines

@@ -1,0 +1,123 @@
+"""A rerun: the advice and its evidence, what changed, what the earlier candidates do untouched."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from rich.text import Text
+
+from synth.rationale.figures import ABSENT, figure, percent, quantity
+from synth.record import Earlier, Record, number, parameter_name
+from synth.report.theme import Columns, hanging, heading
+from synth.report.view import View
+
+_ADVICE = {
+    "keep": ("KEEP", "good", "meets everything on the revised plant, untouched."),
+    "retune": ("RETUNE", "warn", "needs other values."),
+    "restructure": ("RESTRUCTURE", "warn", "cannot do it with other values; another structure can."),
+    "relax": ("RELAX", "bad", "and nothing else that was searched meets the sheet."),
+}
+
+
+def revision(record: Record, width: int) -> list[Text]:
+    """Advice, changes, earlier candidates."""
+    part = record["revision"]
+    if part is None:
+        return []
+    word, style, words = _ADVICE[part["advice"]]
+    about = part.get("about") or "the earlier record has no candidate"
+    text = f"{about[:1].upper()}{about[1:]} {words}" if part.get("about") else f"{about}."
+    lines = [heading("Advice")]
+    lines.append(hanging(Text.assemble("  ", (word, style), "  "), text, width))
+    lines.extend(hanging("  - ", sentence["text"], width) for sentence in part.get("evidence", []))
+    lines.extend(_moved(part["moved"], record))
+    lines.extend(_changes(record, width))
+    lines.extend(_earlier(record, width))
+    return lines
+
+
+def _moved(moved: dict[str, list[float]] | None, record: Record) -> list[Text]:
+    if not moved:
+        return []
+    part = record["revision"]
+    successor = part.get("successor") if part is not None else None
+    units: dict[str, str] = next(
+        (c.get("units", {}) for c in record["candidates"] if c["rank"] == successor), {}
+    )
+    table = Columns(("<", ">", "<", ">", ">"), indent=4)
+    for key, (old, new) in moved.items():
+        change = f"{100.0 * (new / old - 1.0):+.1f} %".replace("-", "−") if old else ""
+        unit = units.get(key, "")
+        table.add(parameter_name(key), quantity(old, unit), "→", quantity(new, unit), change)
+    return table.lines()
+
+
+def _changes(record: Record, width: int) -> list[Text]:
+    part = record["revision"]
+    if part is None:
+        return []
+    lines = [heading("What changed", "from the predecessor's sheet to this one")]
+    if not part["changes"]:
+        return [*lines, Text("  nothing in plant or requirements")]
+    table = Columns(("<", ">", "<", ">", "<"))
+    long = []
+    for change in part["changes"]:
+        where = f"{change['what']}, {change['case']}" if change["case"] else change["what"]
+        old, new = _value(change["old"]), _value(change["new"])
+        if len(where) + len(old) + len(new) + 14 > width:
+            long.append(hanging(f"  {where}: ", f"{old} → {new}", width))
+            continue
+        table.add(where, old, "→", new, _relative(change["old"], change["new"]))
+    return [*lines, *table.lines(), *long]
+
+
+def _value(value: Any) -> str:
+    if value is None:
+        return ABSENT
+    if isinstance(value, bool):
+        return str(value)
+    if isinstance(value, int | float):
+        return figure(float(value))
+    if isinstance(value, dict):
+        return ", ".join(f"{k} {_value(v)}" for k, v in value.items())
+    if isinstance(value, list):
+        return "[" + ", ".join(_value(v) for v in value) + "]"
+    return str(value)
+
+
+def _relative(old: Any, new: Any) -> str:
+    plain = all(isinstance(v, int | float) and not isinstance(v, bool) for v in (old, new))
+    if not plain or not old:
+        return ""
+    return f"({100.0 * (new / old - 1.0):+.0f} %)".replace("-", "−")
+
+
+def _earlier(record: Record, width: int) -> list[Text]:
+    part = record["revision"]
+    if part is None or not part["earlier"]:
+        return []
+    view = View(record)
+    lines = [heading("Earlier candidates", "as they are, on the revised plant")]
+    table = Columns((">", "<", ">", "<", ">", "<"), indent=1)
+    table.add("", "structure", "slack was", "", "is", "held back by", style="dim")
+    if part["adopted"] is not None:
+        table.add(*_row(view, part["adopted"], "adopted"))
+    for earlier in part["earlier"]:
+        table.add(*_row(view, earlier, ""))
+    for line in table.lines():
+        line.truncate(width, overflow="ellipsis")
+        lines.append(line)
+    return lines
+
+
+def _row(view: View, earlier: Earlier, mark: str) -> list[str | Text]:
+    binding = earlier["binding"]
+    held = ""
+    if binding is not None:
+        case = f", {binding['case']}" if view.several_cases else ""
+        held = f"{view.name(binding['requirement'])}{case}"
+    slack = Text(percent(number(earlier["worst_slack"])))
+    slack.stylize("" if earlier["meets_all"] else "short")
+    name = f"{earlier['structure']} ({mark}, rank {earlier['rank']})" if mark else earlier["structure"]
+    rank = "" if mark else str(earlier["rank"] or "")
+    return [rank, name, percent(number(earlier.get("was"))), "→", slack, held]
