@@ -43,7 +43,7 @@ _SHARED = np.concatenate(
         np.arange(_BEND, _HIGH + _STEP / 2, _STEP),
     )
 )
-_MOST = 40_000  # nodes in one range of falls
+_WINDOW = 128.0  # rad at either end of a long range of falls
 _SPAN = 20  # octaves of x below and, twice, above 1 in the table of the bound of |C S|
 
 
@@ -130,7 +130,7 @@ class _Findings:
         It is smooth, and |C S| touches it once a turn: no more than the turns beside its top need a look.
         """
         i = self.keys.index("noise_gain")
-        x = 2.0 ** np.arange(-_SPAN, 2 * _SPAN + 0.25, 0.25)
+        x = 2.0 ** np.arange(-_SPAN, 2 * _SPAN + 1.0)
         powers = x[:, None] ** np.arange(len(self.response.squares))[None, :]
         squares = self.response.squares
         with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
@@ -157,10 +157,14 @@ class _Findings:
             row, low, high, negative = phase_brackets(s)
             self._refine(PHASE, rows[row], low, high, negative)
         if FALL in self.kinds:
-            (row, low, high, negative), (turn_row, turn) = fall_brackets(s, self.level[rows])
-            self._refine(FALL, rows[row], low, high, negative)
-            if turn_row.size:
-                self._turning(s, rows, turn_row, turn)
+            self.read_falls(s, rows)
+
+    def read_falls(self, s: Samples, rows: IntArray) -> None:
+        """The passages of |T| through its level alone."""
+        (row, low, high, negative), (turn_row, turn) = fall_brackets(s, self.level[rows])
+        self._refine(FALL, rows[row], low, high, negative)
+        if turn_row.size:
+            self._turning(s, rows, turn_row, turn)
 
     def _turning(self, s: Samples, rows: IntArray, column: IntArray, w: FloatArray) -> None:
         """A closer look, at 32 nodes round each point, where |T| may touch the level between two nodes."""
@@ -258,7 +262,9 @@ def delayed_quantities(
     control = "noise_gain" in keys
     everyone = np.arange(response.loops)
     findings.read(sample_shared(response, _SHARED, control=control), everyone)
-    for rows, nodes in _further_nodes(response, control):
+    zone = findings.fall_zone() if FALL in kinds else (np.full(response.loops, np.inf), np.zeros(response.loops))
+    end = np.maximum(np.maximum(findings.upper_end(), zone[1]), _HIGH / response.dead_time)
+    for rows, nodes in _further_nodes(response, control, end):
         findings.read(sample(response.rows(rows), nodes, control=control), rows)
     high = np.full(response.loops, _HIGH)
     while True:
@@ -273,14 +279,8 @@ def delayed_quantities(
         findings.read(sample_shared(response.rows(rows), angles, control=control), rows)
         high[rows] = reach
     if FALL in kinds:
-        first, last = findings.fall_zone()
-        rows = np.flatnonzero(first < last)
-        for row in rows:
-            one = np.array([row])
-            step = _STEP / response.dead_time[row]
-            count = int(min(np.ceil((last[row] - first[row]) / step) + 4, _MOST))
-            nodes = first[row] + step * np.arange(-2, count)
-            findings.read(sample(response.rows(one), nodes[nodes > 0.0][:, None], control=control), one)
+        for rows, nodes in _zone_nodes(*zone, response.dead_time):
+            findings.read_falls(sample(response.rows(rows), nodes, control=False), rows)
     if control:
         rows, top = findings.envelope_top(high / response.dead_time)
         if rows.size:
@@ -293,8 +293,31 @@ def delayed_quantities(
     return findings.found, {k: findings.best[i] for i, k in enumerate(keys)}, recurring
 
 
-def _further_nodes(response: Response, control: bool) -> Iterator[tuple[IntArray, FloatArray]]:
-    """Nodes below the shared list, for slow loops, and round lightly damped roots: (rows, ω (G, rows))."""
+def _zone_nodes(
+    first: FloatArray, last: FloatArray, delay: FloatArray
+) -> Iterator[tuple[IntArray, FloatArray]]:
+    """Nodes a quarter of a radian apart from `first` to `last` [ω], both (M,): (rows, ω (G, rows)), rows repeated.
+
+    Of a long range its two ends: the lowest passage lies within a turn of the first edge where |L| falls steadily,
+    the highest within a turn of the last.
+    """
+    row = np.flatnonzero(first < last)
+    low, high = first[row] * delay[row], last[row] * delay[row]
+    long = high - low > 2.0 * _WINDOW
+    start = np.concatenate((low, high[long] - _WINDOW))
+    stop = np.concatenate((np.where(long, low + _WINDOW, high), high[long]))
+    row = np.concatenate((row, row[long]))
+    count = np.ceil((stop - start) / _STEP).astype(np.intp) + 4
+    for group in _alike(count):
+        steps = np.minimum(np.arange(-2, count[group].max())[:, None], count[group])
+        angles = np.maximum(start[group] + _STEP * steps, 1e-6)
+        yield row[group], angles / delay[row[group]]
+
+
+def _further_nodes(
+    response: Response, control: bool, end: FloatArray
+) -> Iterator[tuple[IntArray, FloatArray]]:
+    """Nodes below the shared list, for slow loops, and round lightly damped roots up to `end`: (rows, ω (G, rows))."""
     with np.errstate(divide="ignore"):
         depth = np.ceil(np.log2(_SHARED[0] / (_slowest(response) * response.dead_time)) * _PER_OCTAVE)
     rows = np.flatnonzero(depth > 0)
@@ -305,14 +328,18 @@ def _further_nodes(response: Response, control: bool) -> Iterator[tuple[IntArray
     polynomials = (N, D, CONTROL) if control else (N, D)
     m = response.loops
     row, x = light_roots(response.squares[:, polynomials].reshape(len(response.squares), -1))
-    if row.size:
-        yield _crowded(row % m, np.sqrt(x), response.dead_time)
+    row, w = row % m, np.sqrt(np.maximum(x, 0.0))
+    near = np.flatnonzero((w > 0.0) & (w < 1.1 * end[row]))
+    if near.size:
+        yield from _crowded(row[near], w[near], response.dead_time)
 
 
-def _crowded(row: IntArray, w: FloatArray, delay: FloatArray) -> tuple[IntArray, FloatArray]:
+def _crowded(row: IntArray, w: FloatArray, delay: FloatArray) -> Iterator[tuple[IntArray, FloatArray]]:
     """Sorted nodes of each row, (rows, ω (G, rows)), with steps of the angle in between; padded with the last."""
     order = np.lexsort((w, row))
     row, w = row[order], w[order]
+    fresh = np.append(True, (row[1:] != row[:-1]) | (w[1:] > w[:-1] * (1.0 + 1e-12)))  # nested intervals share points
+    row, w = row[fresh], w[fresh]
     near = (row[1:] == row[:-1]) & (w[1:] < 1.2 * w[:-1])
     extra = np.where(near, np.minimum(np.ceil((w[1:] - w[:-1]) * delay[row[1:]] / _STEP), 64), 1).astype(np.intp)
     if (extra > 1).any():
@@ -321,8 +348,19 @@ def _crowded(row: IntArray, w: FloatArray, delay: FloatArray) -> tuple[IntArray,
         inserted = w[start] + (w[start + 1] - w[start]) * (within / extra[start])
         row, w = np.append(row[start], row[-1]), np.append(inserted, w[-1])
     rows, first, count = np.unique(row, return_index=True, return_counts=True)
-    nodes = np.minimum(np.arange(int(count.max()))[:, None], count - 1) + first
-    return rows, w[nodes]
+    for group in _alike(count):
+        nodes = np.minimum(np.arange(int(count[group].max()))[:, None], count[group] - 1) + first[group]
+        yield rows[group], w[nodes]
+
+
+def _alike(count: IntArray) -> Iterator[IntArray]:
+    """Groups of places with counts within a factor of two, of 200,000 nodes at most: the longest sets the size."""
+    order = np.argsort(count, kind="stable")
+    while order.size:
+        many = count[order] <= max(2 * int(count[order[0]]), 64)
+        group = order[many][: max(1, 200_000 // int(count[order[many][-1]]))]
+        order = order[len(group) :]
+        yield group
 
 
 def _slowest(response: Response) -> FloatArray:
