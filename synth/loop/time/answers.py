@@ -1,21 +1,21 @@
-"""From modes to answers: how far to look, one pass over the blocks, then what is left to prove.
+"""From modes to answers: a plan, one pass over its blocks, the proof of what is left, and the long ones from their end.
 
-M loops, S signals counted from their values at infinity. Three kinds of questions are asked of a batch: suprema, first
-or last passages of an edge, and areas. Only what is asked for is computed.
+A lightly damped loop takes thousands of blocks to die away. Its plan stops after LONG of them: what comes first has been
+seen by then, a last exit is looked for backwards from where the envelope meets the band, and an area's tail is that of
+the slowest mode.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
-
 import numpy as np
 
 from synth.loop.arrays import FloatArray, IntArray
-from synth.loop.time import areas, crossings, peaks
-from synth.loop.time.cells import Cells, joined, no_cells
-from synth.loop.time.modes import CELLS, Modes, Profile
-from synth.loop.time.plan import Plan, blocks, onset, reach
-from synth.loop.time.scan import Scan, scan
+from synth.loop.time.clusters import ClusterModes
+from synth.loop.time.modes import Modes
+from synth.loop.time.plan import Plan, blocks
+from synth.loop.time.questions import Answers, Area, Passage, Supremum
+from synth.loop.time.scan import scan
+from synth.loop.time.survey import RESOLUTION, Survey
 
 FINE = 5e-3
 """Cubic error allowed in a cell, relative to the size of the signal. Cells that matter are split further."""
@@ -23,80 +23,63 @@ FINE = 5e-3
 PASS_BLOCKS = 1400
 """Blocks handled at once, so that a pass stays in cache."""
 
-RESOLUTION = 1e-9
-"""Suprema are proven to this part of the signal's size."""
+LONG = 128
+"""Blocks after which a plan stops."""
 
-AREA_RESOLUTION = 3e-7
-
-
-@dataclass(frozen=True, slots=True)
-class Supremum:
-    """sup of sign · (x + offset) over the signs given, and never below floor. offset, floor (M,)."""
-
-    signal: int
-    signs: tuple[float, ...]
-    offset: FloatArray
-    floor: FloatArray
-
-
-@dataclass(frozen=True, slots=True)
-class Passage:
-    """First time outside low <= x <= high, or (last) the last time outside it."""
-
-    signal: int
-    low: float
-    high: float
-    last: bool
-
-
-@dataclass(frozen=True, slots=True)
-class Area:
-    """Integral of abs(x)."""
-
-    signal: int
-
-
-@dataclass(slots=True)
-class Answers:
-    """Arrays (M,) in the order of the questions.
-
-    suprema, times   value, and where it is taken (NaN: only as a limit)
-    passages         time; 0 where the signal is outside from the start (first) or never (last); inf: first, never
-    areas, doubts    value, and bound of its relative error
-    """
-
-    suprema: list[FloatArray] = field(default_factory=list)
-    times: list[FloatArray] = field(default_factory=list)
-    passages: list[FloatArray] = field(default_factory=list)
-    areas: list[FloatArray] = field(default_factory=list)
-    doubts: list[FloatArray] = field(default_factory=list)
+SEGMENTS = 32
+"""Stretches of LONG blocks that a supremum or a first passage is followed over before it is given up as unproven."""
 
 
 def answer(
-    modes: Modes,
+    modes: Modes | ClusterModes,
     unit: FloatArray,
     suprema: list[Supremum],
     passages: list[Passage],
     integrals: list[Area],
-    most: int = 4096,
+    segments: int = SEGMENTS,
 ) -> Answers:
     """Answer the questions for every loop.
 
-    unit : (M, S) a size of each signal that is known beforehand (its value at 0+ or at infinity); 0 when none is.
+    unit : (M, S) a size of each signal that is known beforehand (its value at 0+ or at infinity), or 0.
     """
-    size = modes.size.max(axis=2, initial=0.0)
-    profile = modes.profile(np.maximum(RESOLUTION * unit, 1e-13 * size) + 1e-300, bool(integrals))
+    found = _direct(modes, unit, suprema, passages, integrals, LONG)
+    if segments == 0 or np.isinf(found.seen).all():
+        return found
+    for w, q in enumerate(suprema):
+        rows = np.flatnonzero(found.supremum_ends[w] > found.seen)
+        if rows.size:
+            _follow_supremum(modes, unit, found, w, q, rows, segments)
+    for v, p in enumerate(passages):
+        rows = np.flatnonzero(found.passage_ends[v] > found.seen)
+        if rows.size == 0:
+            continue
+        if p.last:
+            found.passages[v][rows] = _last_passage(modes, p, rows, found.passage_ends[v][rows])
+        else:
+            _follow_passage(modes, unit, found, v, p, rows[np.isinf(found.passages[v][rows])], segments)
+    return found
+
+
+def _direct(
+    modes: Modes | ClusterModes,
+    unit: FloatArray,
+    suprema: list[Supremum],
+    passages: list[Passage],
+    integrals: list[Area],
+    most: int,
+) -> Answers:
+    """Answers as far as `most` blocks a loop reach."""
+    profile = modes.profile(np.maximum(RESOLUTION * unit, 1e-13 * modes.largest()) + 1e-300, bool(integrals))
     unit = np.maximum(unit, np.abs(profile.deviation).max(axis=2)) + 1e-300
-    state = _State(modes, profile, unit, suprema, passages, integrals)
-    allowed = FINE * unit
-    plan = blocks(modes, profile, state.ends, allowed, most)
+    survey = Survey(modes, profile, unit, suprema, passages, integrals)
+    plan = blocks(modes, profile, survey.ends, FINE * unit, most)
     for a, b in _passes(plan):
         low = plan.first[a]
         high = plan.first[b] if b < len(plan.first) else len(plan.loop)
         part = slice(low, high)
         place = plan.loop[part], plan.t[part], plan.h[part], plan.miss[:, part]
-        state.look(scan(modes, plan.owner[a:b], plan.first[a:b] - low, *place))
-    return state.finish()
+        survey.look(scan(modes, plan.owner[a:b], plan.first[a:b] - low, *place))
+    return survey.finish(plan)
 
 
 def _passes(plan: Plan) -> list[tuple[int, int]]:
@@ -110,243 +93,62 @@ def _passes(plan: Plan) -> list[tuple[int, int]]:
     return out
 
 
-class _State:
-    """The questions of one batch, what is known about them, and the cells still in doubt."""
+def _follow_supremum(
+    modes: Modes | ClusterModes,
+    unit: FloatArray,
+    found: Answers,
+    w: int,
+    q: Supremum,
+    rows: IntArray,
+    segments: int,
+) -> None:
+    """Go on from where the plan stopped, for the loops whose envelope still allows more."""
+    seen, best = found.seen[rows], found.suprema[w][rows]
+    top = np.maximum.reduce([sign * q.offset[rows] for sign in q.signs])
+    envelope = modes.bounds(rows, seen)[1][q.signal]
+    more = envelope + top > best + RESOLUTION * unit[rows, q.signal]
+    rows, seen, best = rows[more], seen[more], best[more]
+    if rows.size == 0:
+        return
+    later = modes.rows(rows).later([q.signal], seen)
+    on = Supremum(0, q.signs, q.offset[rows], best)
+    part = answer(later, unit[rows][:, [q.signal]], [on], [], [], segments - 1)
+    higher = part.suprema[0] > best
+    found.suprema[w][rows] = part.suprema[0]
+    found.times[w][rows[higher]] = (seen + part.times[0])[higher]
 
-    def __init__(
-        self,
-        modes: Modes,
-        profile: Profile,
-        unit: FloatArray,
-        suprema: list[Supremum],
-        passages: list[Passage],
-        integrals: list[Area],
-    ) -> None:
-        self.modes, self.unit, self.m = modes, unit, len(modes)
-        self.suprema, self.passages, self.integrals = suprema, passages, integrals
-        self.profile = profile
-        self.ends = np.zeros(unit.shape)
-        self.steady = [self._steady(s) for s in range(unit.shape[1])]
-        self.peak_end: list[FloatArray] = []
-        self.peaks = self._known_peaks()
-        self.passage_end = [self._extend(p.signal, self._passage_end(p)) for p in passages]
-        self.area_end: list[FloatArray] = []
-        self.weight = [self._area_end(q) for q in integrals]
-        self.doubt_peaks: list[Cells] = []
-        self.doubt_edges: list[Cells] = []
-        self.doubt_zeros: list[Cells] = []
-        self.edges = crossings.Edges(
-            np.repeat([p.low for p in passages], self.m),
-            np.repeat([p.high for p in passages], self.m),
-            np.repeat(np.array([p.last for p in passages], dtype=bool), self.m),
-        )
 
-    def _extend(self, signal: int, end: FloatArray) -> FloatArray:
-        np.maximum(self.ends[:, signal], end, out=self.ends[:, signal])
-        return end
+def _follow_passage(
+    modes: Modes | ClusterModes,
+    unit: FloatArray,
+    found: Answers,
+    v: int,
+    p: Passage,
+    rows: IntArray,
+    segments: int,
+) -> None:
+    """Go on from where the plan stopped, for the loops that have not arrived yet."""
+    if rows.size == 0:
+        return
+    seen = found.seen[rows]
+    later = modes.rows(rows).later([p.signal], seen)
+    on = Passage(0, p.low, p.high, False)
+    part = answer(later, unit[rows][:, [p.signal]], [], [on], [], segments - 1)
+    found.passages[v][rows] = seen + part.passages[0]
 
-    def _steady(self, signal: int) -> FloatArray:
-        """(M,) time from which the signal is monotone for ever; inf where that is not known."""
-        rivals = self.profile.rivals[:, signal]
-        return np.where(rivals[:, -1] < 0.9, reach(self.profile.time, rivals, np.full(self.m, 0.9)), np.inf)
 
-    def _known_peaks(self) -> peaks.Peaks:
-        """Suprema over the samples, and when nothing larger can come."""
-        best, places, tolerance, answer_of, signs, offsets = [], [], [], [], [], []
-        self.question: list[list[int]] = []
-        for w, q in enumerate(self.suprema):
-            x = self.profile.deviation[:, q.signal]
-            known, top = q.floor.copy(), np.full(self.m, -np.inf)
-            numbers = []
-            for sign in q.signs:
-                extreme = x.max(axis=1) if sign > 0.0 else x.min(axis=1)
-                np.maximum(known, sign * (extreme + q.offset), out=known)
-                np.maximum(top, sign * q.offset, out=top)
-                numbers.append(len(signs))
-                signs.append(sign)
-                offsets.append(q.offset)
-                answer_of.append(w)
-            self.question.append(numbers)
-            fine = RESOLUTION * self.unit[:, q.signal]
-            level = np.maximum(known - top, fine)
-            quiet = reach(self.profile.time, self.profile.envelope[:, q.signal], level)
-            self.peak_end.append(self._extend(q.signal, np.minimum(quiet, self.steady[q.signal])))
-            start = x[:, 0] + q.offset
-            start = np.maximum.reduce([sign * start for sign in q.signs])
-            best.append(np.maximum(q.floor, start))
-            places.append(np.where(start > q.floor, 0.0, np.nan))
-            tolerance.append(fine)
-        loops = np.arange(self.m)
-        empty = np.zeros(0)
-        return peaks.Peaks(
-            np.concatenate([*best, empty]),
-            np.concatenate([*places, empty]),
-            np.concatenate([*tolerance, empty]),
-            np.concatenate([*[w * self.m + loops for w in answer_of], empty]).astype(np.intp),
-            np.repeat(signs, self.m),
-            np.concatenate([*offsets, empty]),
-        )
-
-    def _passage_end(self, p: Passage) -> FloatArray:
-        time, envelope = self.profile.time, self.profile.envelope[:, p.signal]
-        if p.last:
-            return reach(time, envelope, np.full(self.m, 0.98 * min(-p.low, p.high)))
-        seen = onset(time, self.profile.deviation[:, p.signal] > p.high)
-        if p.high < -RESOLUTION:
-            return np.minimum(seen, reach(time, envelope, np.full(self.m, -p.high)))
-        fine = np.full(self.m, max(p.high, RESOLUTION))
-        return np.minimum(seen, np.minimum(reach(time, envelope, fine), self.steady[p.signal]))
-
-    def _area_end(self, q: Area) -> FloatArray:
-        """Looks until the tail is a single mode or nothing; returns about the area, (M,)."""
-        assert self.profile.area is not None
-        assert self.profile.others is not None
-        time = self.profile.time
-        x = np.abs(self.profile.deviation[:, q.signal])
-        about: FloatArray = np.sum(0.5 * (x[:, 1:] + x[:, :-1]) * np.diff(time, axis=1), axis=1) + 1e-300
-        fine = AREA_RESOLUTION * about
-        end = np.minimum(
-            reach(time, self.profile.area[:, q.signal], fine),
-            reach(time, self.profile.others[:, q.signal], fine),
-        )
-        self.area_end.append(self._extend(q.signal, np.minimum(end, self.steady[q.signal])))
-        return about
-
-    def look(self, s: Scan) -> None:
-        """Take from one pass what it tells, and keep the cells that need more."""
-        signals = sorted({q.signal for q in (*self.suprema, *self.passages, *self.integrals)})
-        for signal in signals:
-            doubtful = s.doubtful(signal)
-            block = doubtful % len(s.loop)
-            cells = s.cells(signal, doubtful, s.loop[block])  # key: loop, for now
-            low, high = cells.range()
-            top, bottom = s.top(signal), s.bottom(signal)
-            for w, q in enumerate(self.suprema):
-                if q.signal == signal:
-                    self._look_for_peaks(s, w, q, cells, low, high, top, bottom)
-            for v, p in enumerate(self.passages):
-                if p.signal == signal:
-                    self._look_for_passage(s, v, p, cells, doubtful, low, high, top, bottom)
-            for k, r in enumerate(self.integrals):
-                if r.signal == signal:
-                    self._look_for_zeros(s, k, cells, doubtful, low, high)
-
-    def _look_for_peaks(
-        self,
-        s: Scan,
-        w: int,
-        q: Supremum,
-        cells: Cells,
-        low: FloatArray,
-        high: FloatArray,
-        top: FloatArray,
-        bottom: FloatArray,
-    ) -> None:
-        best = self.peaks.best[w * self.m : (w + 1) * self.m]
-        place = self.peaks.place[w * self.m : (w + 1) * self.m]
-        for sign in q.signs:
-            node = np.maximum.reduceat(top, s.first) if sign > 0.0 else -np.minimum.reduceat(bottom, s.first)
-            node += sign * q.offset[s.owner]
-            higher = node > best[s.owner]
-            # a supremum at a node is one at t = 0+: any other lies beside a slope, in a cell that holds more
-            place[s.owner[higher]] = 0.0
-            best[s.owner] = np.maximum(best[s.owner], node)
-        for number, sign in zip(self.question[w], q.signs, strict=True):
-            reachable = (high if sign > 0.0 else -low) + sign * q.offset[cells.loop]
-            matters = reachable > best[cells.loop] + RESOLUTION * self.unit[cells.loop, q.signal]
-            few = cells.rows(matters & (cells.t < self.peak_end[w][cells.loop]))
-            self.doubt_peaks.append(self.peaks.seen(few.keyed(few.loop + number * self.m)))
-
-    def _look_for_passage(
-        self,
-        s: Scan,
-        v: int,
-        p: Passage,
-        cells: Cells,
-        doubtful: IntArray,
-        low: FloatArray,
-        high: FloatArray,
-        top: FloatArray,
-        bottom: FloatArray,
-    ) -> None:
-        blocks_here = len(s.loop)
-        outside = (top > p.high) | (bottom < p.low)
-        number = np.arange(blocks_here)
-        if p.last:
-            chosen = np.maximum.reduceat(np.where(outside, number, -1), s.first)
-            some = chosen >= 0
-        else:
-            chosen = np.minimum.reduceat(np.where(outside, number, blocks_here), s.first)
-            some = chosen < blocks_here
-        order = np.full(len(s.owner), -1.0 if p.last else np.inf)
-        block = chosen[some]
-        nodes = s.value[p.signal][:, block]
-        out = (nodes > p.high) | (nodes < p.low)
-        if p.last:
-            cell = CELLS - out[::-1].argmax(axis=0)
-            onward = (cell == CELLS) & (block < s.last[some])
-            block, cell = np.where(onward, block + 1, block), np.where(onward, 0, cell)
-            valid = cell < CELLS
-        else:
-            cell = out.argmax(axis=0) - 1
-            back = (cell < 0) & (block > s.first[some])
-            block, cell = np.where(back, block - 1, block), np.where(back, CELLS - 1, cell)
-            valid = cell >= 0
-        order[some] = block * CELLS + cell
-        # doubtful cells on the side where a passage would matter more
-        mine = order[np.searchsorted(s.owner, cells.loop)]
-        place = (doubtful % blocks_here) * CELLS + doubtful // blocks_here
-        touching = ((high > p.high) | (low < p.low)) & ((place > mine) if p.last else (place < mine))
-        few = cells.rows(touching)
-        passing = s.cells(p.signal, (cell * blocks_here + block)[valid], s.owner[some][valid])
-        few = joined([few, passing])
-        few = few.rows(few.t < self.passage_end[v][few.loop])
-        self.doubt_edges.append(few.keyed(few.loop + v * self.m))
-
-    def _look_for_zeros(
-        self, s: Scan, k: int, cells: Cells, doubtful: IntArray, low: FloatArray, high: FloatArray
-    ) -> None:
-        signal = self.integrals[k].signal
-        positive = s.value[signal] > 0.0
-        changes = np.flatnonzero(positive[1:] != positive[:-1])
-        plain = s.cells(signal, changes, s.loop[changes % len(s.loop)])
-        wide = (np.minimum(-low, high) * cells.h > 1e-2 * AREA_RESOLUTION * self.weight[k][cells.loop]) & (
-            (cells.a > 0.0) == (cells.b > 0.0)
-        )
-        few = joined([plain, cells.rows(wide)])
-        few = few.rows(few.t < self.area_end[k][few.loop])
-        self.doubt_zeros.append(few.keyed(few.loop + k * self.m))
-
-    def finish(self) -> Answers:
-        """Resolve what is in doubt."""
-        out = Answers()
-        m = self.m
-        if self.doubt_peaks:
-            peaks.resolve(self.modes, self.peaks, joined(self.doubt_peaks))
-        for w in range(len(self.suprema)):
-            mine, floor = slice(w * m, (w + 1) * m), self.suprema[w].floor
-            best = self.peaks.best[mine]
-            more = best > floor + self.peaks.tolerance[mine]  # less than that is rounding
-            out.suprema.append(np.where(more, best, floor))
-            out.times.append(np.where(more, self.peaks.place[mine], np.nan))
-        if self.passages:
-            cells = joined(self.doubt_edges) if self.doubt_edges else no_cells()
-            time = crossings.resolve(self.modes, self.edges, cells).reshape(len(self.passages), m)
-            for v, p in enumerate(self.passages):
-                if p.last:
-                    out.passages.append(np.where(np.isnan(time[v]), 0.0, time[v]))
-                else:
-                    first = np.where(np.isnan(time[v]), np.inf, time[v])
-                    start = self.profile.deviation[:, p.signal, 0]
-                    out.passages.append(np.where((start > p.high) | (start < p.low), 0.0, first))
-        if self.integrals:
-            cells = joined(self.doubt_zeros) if self.doubt_zeros else no_cells()
-            weight = np.concatenate(self.weight) * (1e-2 * AREA_RESOLUTION)
-            cells = areas.zeros(self.modes, cells, weight)
-            for k, q in enumerate(self.integrals):
-                mine = cells.rows(cells.key // m == k)
-                mine = mine.keyed(mine.loop)
-                total, doubt = areas.area(self.modes, q.signal, np.arange(m), self.area_end[k], mine)
-                out.areas.append(total)
-                out.doubts.append(doubt)
-        return out
+def _last_passage(modes: Modes | ClusterModes, p: Passage, rows: IntArray, end: FloatArray) -> FloatArray:
+    """Last time outside, looked for in windows that reach further and further back from `end` (A,)."""
+    out = np.zeros(len(rows))
+    window = 40.0 / np.abs(modes.pole[rows]).min(axis=1)
+    pending = np.arange(len(rows))
+    on = Passage(0, p.low, p.high, True)
+    while pending.size:
+        start = np.maximum(end[pending] - window[pending], 0.0)
+        later = modes.rows(rows[pending]).later([p.signal], start)
+        part = _direct(later, np.zeros((len(pending), 1)), [], [on], [], 1 << 14)
+        out[pending] = start + part.passages[0]
+        again = (part.passages[0] == 0.0) & (start > 0.0)
+        pending = pending[again]
+        window[pending] *= 4.0
+    return out

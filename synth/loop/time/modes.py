@@ -29,7 +29,7 @@ HERMITE = 1.0 / 384.0
 class Profile:
     """Coarse course of the signals: what the block plan is made from. K times, the first one 0.
 
-    time       (M, K) doubling after the first two
+    time       (M, K) increasing from 0 by a constant factor after the first two
     deviation  (M, S, K) x - x(inf)
     envelope   (M, S, K) bound of abs(x - x(inf)) from that time on
     fourth     (M, S, K) bound of the fourth derivative from that time on
@@ -37,6 +37,7 @@ class Profile:
                signal is monotone from that time on; inf where the slowest is a pair
     area       (M, S, K) bound of the integral of abs(x - x(inf)) from that time on; None when not asked for
     others     (M, S, K) the same without the slowest mode; None when not asked for
+    log_convex whether the bounds are sums of decaying exponentials
     """
 
     time: FloatArray
@@ -46,6 +47,7 @@ class Profile:
     rivals: FloatArray
     area: FloatArray | None
     others: FloatArray | None
+    log_convex: bool = True
 
 
 class Modes:
@@ -71,6 +73,15 @@ class Modes:
     def rows(self, index: IntArray) -> Modes:
         """The loops named by `index`."""
         return Modes(self.pole[index], self.residue[index])
+
+    def scaled(self, factor: FloatArray) -> Modes:
+        """Signals multiplied by factor (M, S)."""
+        return Modes(self.pole, self.residue * factor[:, :, None])
+
+    def largest(self) -> FloatArray:
+        """(M, S) largest abs(r)."""
+        out: FloatArray = self.size.max(axis=2, initial=0.0)
+        return out
 
     def later(self, signals: list[int], delay: FloatArray) -> Modes:
         """The chosen signals seen from `delay` (M,) on: x(t + delay)."""
@@ -269,6 +280,22 @@ def step_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -> M
                 value += top[:, k, None]
             np.multiply(value, factor, out=residue[:, i])
     return Modes(pole, residue)
+
+
+def crowding(poles: ComplexArray) -> FloatArray:
+    """(M,) about how much larger residues are than they would be with the poles apart: the loss of digits.
+
+    The product of the relative distances of the most crowded pole, where they are below 1, inverted. inf where poles
+    coincide.
+    """
+    size = np.abs(poles)
+    gap = np.abs(poles[:, :, None] - poles[:, None, :])
+    gap /= np.maximum(size[:, :, None], size[:, None, :])
+    index = np.arange(poles.shape[1])
+    gap[:, index, index] = 1.0
+    with np.errstate(divide="ignore", over="ignore"):
+        out: FloatArray = 1.0 / np.minimum(gap, 1.0).prod(axis=2).min(axis=1, initial=1.0)
+    return out
 
 
 def limits(loops: Loops, signals: tuple[str, ...]) -> tuple[FloatArray, FloatArray]:

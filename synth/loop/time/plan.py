@@ -43,21 +43,24 @@ class Plan:
     owner: IntArray
 
 
-def reach(time: FloatArray, curve: FloatArray, level: FloatArray) -> FloatArray:
-    """(M,) earliest sure time at which a decreasing log-convex curve (M, K) is <= level (M,).
+def reach(profile: Profile, curve: FloatArray, level: FloatArray) -> FloatArray:
+    """(M,) earliest sure time at which a decreasing curve (M, K) of the profile is <= level (M,).
 
-    Between two times it is read off the chord of its logarithm, which lies above it. The last time where it is
-    never reached.
+    Between two times a log-convex curve is read off the chord of its logarithm, which lies above it. The last time
+    where the level is never reached.
     """
-    below = curve <= level[:, None]
+    time, below = profile.time, curve <= level[:, None]
     k = np.where(below.any(axis=1), below.argmax(axis=1), curve.shape[1] - 1)
     row = np.arange(len(k))
+    right = time[row, k]
+    if not profile.log_convex:
+        return right
     before = np.maximum(k - 1, 0)
     high, low = curve[row, before], curve[row, k]
     with np.errstate(all="ignore"):
         part = np.log(high / level) / np.log(high / low)
     part = np.where((part >= 0.0) & (part <= 1.0), part, 1.0)
-    left, right = time[row, before], time[row, k]
+    left = time[row, before]
     out: FloatArray = np.where(k == 0, time[:, 0], left + part * (right - left))
     return out
 

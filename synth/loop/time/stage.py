@@ -10,7 +10,8 @@ from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops
 from synth.loop.quantities import Measure
 from synth.loop.time.answers import Answers, Area, Passage, Supremum, answer
-from synth.loop.time.modes import Modes, limits, step_modes
+from synth.loop.time.clusters import ClusterModes, cluster_modes
+from synth.loop.time.modes import Modes, crowding, limits, step_modes
 
 REACHES = {
     "overshoot": "y",
@@ -25,6 +26,9 @@ REACHES = {
     "disturbance_area": "d",
 }
 """Which signal each quantity is read from."""
+
+CROWDED = 1e5
+"""Crowding of the poles from which on close poles are taken together."""
 
 
 @dataclass
@@ -50,9 +54,20 @@ def time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...])
         return TimeStage({m: np.zeros(0) for m in asked}, {})
     needed = {REACHES[m.quantity] for m in asked}
     signals = tuple(s for s in ("y", "u", "d") if s in needed)
-    modes = step_modes(loops, poles, signals)
-    start, end = limits(loops, signals)
-    return _Reading(loops, modes, signals, start, end, asked).read()
+    close = crowding(poles) > CROWDED
+    if not close.any():
+        return _Reading(loops, step_modes(loops, poles, signals), signals, asked).read()
+    values = {m: np.full(len(loops), np.nan) for m in asked}
+    approximate: dict[Measure, BoolArray] = {}
+    for rows, make in ((np.flatnonzero(~close), step_modes), (np.flatnonzero(close), cluster_modes)):
+        if rows.size:
+            some = loops.rows(rows)
+            part = _Reading(some, make(some, poles[rows], signals), signals, asked).read()
+            for m in asked:
+                values[m][rows] = part.values[m]
+            for m, doubt in part.approximate.items():
+                approximate.setdefault(m, np.zeros(len(loops), dtype=bool))[rows] = doubt
+    return TimeStage(values, approximate)
 
 
 class _Reading:
@@ -61,25 +76,24 @@ class _Reading:
     def __init__(
         self,
         loops: Loops,
-        modes: Modes,
+        modes: Modes | ClusterModes,
         signals: tuple[str, ...],
-        start: FloatArray,
-        end: FloatArray,
         asked: tuple[Measure, ...],
     ) -> None:
         self.loops, self.asked = loops, asked
         self.index = {name: i for i, name in enumerate(signals)}
         self.tracks = loops.denominator[:, -1] == 0.0  # L has a pole at 0: the static error is exactly 0
         self.has_end = np.ones(len(loops), dtype=bool)
+        start, end = limits(loops, signals)
         unit = np.maximum(np.abs(start), np.abs(end))
         if "y" in self.index:
             # y is counted in units of its final value: z = y / y(inf)
             y = self.index["y"]
             self.has_end = end[:, y] != 0.0
             final = np.where(self.has_end, end[:, y], 1.0)
-            residue = modes.residue.copy()
-            residue[:, y] *= np.where(self.has_end, 1.0 / final, 0.0)[:, None]
-            modes = Modes(modes.pole, residue)
+            factor = np.ones(end.shape)
+            factor[:, y] = np.where(self.has_end, 1.0 / final, 0.0)
+            modes = modes.scaled(factor)
             unit[:, y] = np.maximum(1.0, np.abs(start[:, y] / final))
         self.modes, self.unit, self.end = modes, unit, end
         self.suprema: dict[str, Supremum] = {}

@@ -1,0 +1,82 @@
+"""What is left when one mode alone remains: sup, last exit and area of Re(a e^(pt)), t >= 0, in closed form.
+
+M loops. p real or in the upper half plane, Re p < 0.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from synth.loop.arrays import ComplexArray, FloatArray
+
+
+def extremes(amplitude: ComplexArray, pole: ComplexArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Largest value and its time, least value and its time; 0 at time inf counts as the limit. (M,) each."""
+    at = _first_extremum(amplitude, pole)
+    half = _half_period(pole)
+    times = np.stack([np.zeros_like(at), at, at + half])
+    values = np.stack([_value(amplitude, pole, t) for t in times] + [np.zeros_like(at)])
+    times = np.concatenate([times, np.full((1, len(at)), np.inf)])
+    top, bottom = values.argmax(axis=0), values.argmin(axis=0)
+    column = np.arange(len(at))
+    return values[top, column], times[top, column], values[bottom, column], times[bottom, column]
+
+
+def last_exit(amplitude: ComplexArray, pole: ComplexArray, band: FloatArray) -> FloatArray:
+    """Last time at which abs(Re a e^(pt)) > band; NaN where it never is. (M,)."""
+    with np.errstate(all="ignore"):
+        real = pole.imag == 0.0
+        fall = np.log(np.abs(amplitude.real) / band) / -pole.real
+        smooth = np.where(np.abs(amplitude.real) > band, fall, np.nan)
+        at, half = _first_extremum(amplitude, pole), _half_period(pole)
+        peak = np.abs(_value(amplitude, pole, at))
+        # later extrema shrink by e^(Re p · half period) each
+        further = np.floor(np.log(peak / band) / (-pole.real * half))
+        exact = np.log(peak / band) / (-pole.real * half) == further
+        further = np.where(exact, further - 1.0, further)
+        low = np.where(peak > band, at + np.maximum(further, 0.0) * half, 0.0)
+        started = np.abs(amplitude.real) > band
+        high = np.where(peak > band, low + half, at)
+        for _ in range(60):
+            middle = 0.5 * (low + high)
+            out = np.abs(_value(amplitude, pole, middle)) > band
+            # before the next extremum the size falls to 0 and rises to less than the band: one passage
+            low, high = np.where(out, middle, low), np.where(out, high, middle)
+        swinging = np.where((peak > band) | started, high, np.nan)
+    out_time: FloatArray = np.where(real, smooth, swinging)
+    return out_time
+
+
+def area(amplitude: ComplexArray, pole: ComplexArray) -> FloatArray:
+    """Integral of abs(Re a e^(pt)) from 0 to infinity. (M,)."""
+    with np.errstate(all="ignore"):
+        real = pole.imag == 0.0
+        half = _half_period(pole)
+        phase = np.angle(amplitude)
+        zero = np.mod(np.pi / 2.0 - phase, np.pi) / pole.imag
+        whole = (amplitude / pole).real
+        at_zero = (amplitude / pole * np.exp(pole * zero)).real
+        ratio = np.exp(pole.real * half)
+        swinging = np.abs(at_zero - whole) + np.abs(at_zero) * (1.0 + ratio) / (1.0 - ratio)
+    out: FloatArray = np.where(real, np.abs(amplitude.real / pole.real), swinging)
+    return out
+
+
+def _value(amplitude: ComplexArray, pole: ComplexArray, time: FloatArray) -> FloatArray:
+    with np.errstate(all="ignore"):
+        out: FloatArray = np.where(np.isfinite(time), (amplitude * np.exp(pole * np.nan_to_num(time))).real, 0.0)
+    return out
+
+
+def _half_period(pole: ComplexArray) -> FloatArray:
+    with np.errstate(divide="ignore"):
+        out: FloatArray = np.where(pole.imag > 0.0, np.pi / np.maximum(pole.imag, 0.0), np.inf)
+    return out
+
+
+def _first_extremum(amplitude: ComplexArray, pole: ComplexArray) -> FloatArray:
+    """First t >= 0 at which the slope Re(a p e^(pt)) is 0; inf for a real pole."""
+    with np.errstate(all="ignore"):
+        at = np.mod(np.pi / 2.0 - np.angle(amplitude * pole), np.pi) / pole.imag
+    out: FloatArray = np.where(pole.imag > 0.0, at, np.inf)
+    return out

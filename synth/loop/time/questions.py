@@ -1,0 +1,60 @@
+"""What can be asked of the signals of a batch, and the answers.
+
+M loops. Signals are counted from their values at infinity. Only what is asked for is computed.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from synth.loop.arrays import FloatArray
+
+
+@dataclass(frozen=True, slots=True)
+class Supremum:
+    """sup of sign · (x + offset) over the signs given, and never below floor. offset, floor (M,)."""
+
+    signal: int
+    signs: tuple[float, ...]
+    offset: FloatArray
+    floor: FloatArray
+
+
+@dataclass(frozen=True, slots=True)
+class Passage:
+    """First time outside low <= x <= high, or (last) the last time outside it."""
+
+    signal: int
+    low: float
+    high: float
+    last: bool
+
+
+@dataclass(frozen=True, slots=True)
+class Area:
+    """Integral of abs(x)."""
+
+    signal: int
+
+
+@dataclass(slots=True)
+class Answers:
+    """Arrays (M,) in the order of the questions.
+
+    suprema, times   value, and where it is taken (NaN: only as a limit)
+    passages         time; 0 where the signal is outside from the start (first) or never (last); inf: first, never
+    areas, doubts    value, and bound of its relative error
+    seen             time up to which the blocks of the plan reached
+    supremum_ends, passage_ends   times after which nothing can change the answer; past `seen` where it is not proven
+    """
+
+    suprema: list[FloatArray] = field(default_factory=list)
+    times: list[FloatArray] = field(default_factory=list)
+    passages: list[FloatArray] = field(default_factory=list)
+    areas: list[FloatArray] = field(default_factory=list)
+    doubts: list[FloatArray] = field(default_factory=list)
+    seen: FloatArray = field(default_factory=lambda: np.zeros(0))
+    supremum_ends: list[FloatArray] = field(default_factory=list)
+    passage_ends: list[FloatArray] = field(default_factory=list)

@@ -1,0 +1,163 @@
+"""The method of steps: the loop's own output of one delay ago drives the open loop over the next delay, exactly.
+
+M loops, n order, P panels to a delay, S signals. Scaled time. Each delay is cut into panels so short that the open
+loop's response on one is a polynomial of degree 12 to about 1e-10; the open loop is carried over a panel by the Radau
+IIA method of 12 stages (order 23 at the panel's end, and as stable as the open loop is for poles too fast to resolve).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
+from synth.loop.closed_loop import Loops
+from synth.loop.time.collocation import FROM_NODES, NODES, POINTS, SPREAD, STAGES, TO_NODES
+
+
+@dataclass(frozen=True, slots=True)
+class March:
+    """Signals over the first delays of each loop, in own time τ: u at τ, and y and d one delay later, at τ + θ.
+
+    sizes   (P,) lengths of the panels of a delay, parts of θ
+    values  (M, most, P, S, 13) at the nodes of each panel; NaN beyond a loop's own number of delays
+    """
+
+    sizes: FloatArray
+    values: FloatArray
+
+
+def ladder(fine: int, coarse: int) -> FloatArray:
+    """Panel lengths of a delay: from 2^-fine behind the kink at its start, doubling, up to 2^-coarse at most."""
+    sizes = [2.0**-fine]
+    done = sizes[0]
+    while done < 1.0:
+        size = min(done, 2.0**-coarse)
+        sizes.append(size)
+        done += size
+    return np.array(sizes)
+
+
+def march(loops: Loops, numerators: FloatArray, sizes: FloatArray, delays: IntArray) -> March:
+    """Step responses over the first `delays` delays of each loop.
+
+    numerators : (M, S, n + 1), what is read off: N first (it closes the loop), then control or load or both.
+    sizes : (P,) panel lengths, parts of a delay; delays : (M,) how many delays each loop is followed for.
+
+    The error e of a unit reference step drives all: y = (N/D) e and d = (load/D) e, a delay later, as P S = P·S.
+    """
+    order = np.argsort(-delays, kind="stable")
+    loops, numerators, counts = loops.rows(order), numerators[order], delays[order]
+    kinds, which = np.unique(sizes, return_inverse=True)
+    maps = [_propagator(loops, numerators, kind * loops.dead_time) for kind in kinds]
+    rows, signals, n, most = len(loops), numerators.shape[1], loops.order, int(counts[0])
+    values = np.full((rows, most, len(sizes), signals, NODES), np.nan)
+    state = np.zeros((rows, n))
+    for k in range(most):
+        active = int(np.searchsorted(-counts, -k))  # loops followed for more than k delays
+        for i in range(len(sizes)):
+            given = np.empty((active, NODES + n, 1))
+            given[:, :NODES, 0] = 1.0 if k == 0 else 1.0 - values[:active, k - 1, i, 0]
+            given[:, NODES:, 0] = state[:active]
+            found = (maps[which[i]][:active] @ given)[:, :, 0]
+            values[:active, k, i] = found[:, : signals * NODES].reshape(active, signals, NODES)
+            state[:active] = found[:, signals * NODES :]
+    back = np.empty_like(values)
+    back[order] = values
+    return March(sizes, back)
+
+
+def _propagator(loops: Loops, numerators: FloatArray, length: FloatArray) -> FloatArray:
+    """Maps of (input at 13 nodes, n states) to (S outputs at 13 nodes, n states at the end), one panel.
+
+    length : (M,). Returns (M, 13 S + n, 13 + n).
+
+    States are ξ and its first n - 1 derivatives, D ξ = e. The stages of the Radau method are a rational function of
+    the fixed integration matrix; in its eigenvectors the open loop is met at six complex points σ = length·SPREAD
+    alone: the stages of ξ^(n) are (e - 1 Σ α_i ξ^(i)(0)) / α_n with α_i = Σ_{k<=i} a_k σ^(i-k), and every output
+    follows by the like sums γ of its own numerator.
+    """
+    rows, n, signals = len(loops), loops.order, numerators.shape[1]
+    lead = loops.denominator[:, :1]
+    a = (loops.denominator / lead)[:, ::-1]
+    c = (numerators / lead[:, :, None])[:, :, ::-1]
+    sigma = length[:, None] * SPREAD
+    alpha = [total[:, 0] for total in _sums(a[:, None, :], sigma)]
+    gamma = _sums(c, sigma)
+    ones = FROM_NODES.sum(axis=1)
+    highest = np.empty((rows, len(SPREAD), NODES + n), dtype=complex)
+    highest[:, :, 0] = 0.0
+    highest[:, :, 1:NODES] = FROM_NODES / alpha[n][:, :, None]
+    for i in range(n):
+        highest[:, :, NODES + i] = -ones * alpha[i] / alpha[n]
+    out = np.zeros((rows, signals * NODES + n, NODES + n))
+    taylor = _taylor(n, length)
+    for s in range(signals):
+        stages = highest * gamma[n][:, s, :, None]
+        at = s * NODES + 1
+        out[:, at : at + STAGES] = _to_nodes(stages)
+        # free polynomials of the states, Σ_{k<=i} c_k τ^(i-k)/(i-k)!
+        for i in range(n):
+            for k in range(i + 1):
+                out[:, at : at + STAGES, NODES + i] += c[:, s, k, None] * taylor[i - k]
+        direct = c[:, s, n]
+        out[:, s * NODES, 0] = direct
+        out[:, s * NODES, NODES:] = c[:, s, :n] - direct[:, None] * a[:, :n]
+    last = TO_NODES[-1]
+    power = np.ones_like(sigma)
+    for k in range(n - 1, -1, -1):
+        power = power * sigma
+        row = signals * NODES + k
+        out[:, row] = np.einsum("mj,mjc->mc", (last * power), highest).real
+        for i in range(k, n):
+            out[:, row, NODES + i] += taylor[i - k][:, -1]
+    return out
+
+
+def _sums(coefficients: FloatArray, sigma: ComplexArray) -> list[ComplexArray]:
+    """Σ_{k<=i} c_k σ^(i-k) for i = 0 .. n. (M, S, n + 1) ascending, (M, 6) -> n + 1 arrays (M, S, 6)."""
+    total = np.repeat(coefficients[:, :, :1].astype(complex), sigma.shape[1], axis=2)
+    out = [total]
+    for i in range(1, coefficients.shape[2]):
+        total = total * sigma[:, None, :] + coefficients[:, :, i, None]
+        out.append(total)
+    return out
+
+
+def _to_nodes(stages: ComplexArray) -> FloatArray:
+    """(M, 6, w) in the eigenvectors to (M, 12, w) at the points."""
+    both = np.concatenate([stages.real, stages.imag], axis=1)
+    matrix = np.concatenate([TO_NODES.real, -TO_NODES.imag], axis=1)
+    out: FloatArray = matrix @ both
+    return out
+
+
+def _taylor(n: int, length: FloatArray) -> list[FloatArray]:
+    """τ^i / i! at the points, i = 0 .. n - 1, each (M, 12)."""
+    out = [np.ones((len(length), STAGES))]
+    for i in range(1, n):
+        out.append(out[-1] * (length[:, None] * POINTS) / i)
+    return out
+
+
+def resolution(loops: Loops, open_poles: ComplexArray, slow_poles: ComplexArray) -> tuple[IntArray, IntArray]:
+    """How finely each loop's delay must be cut: (fine, coarse) of `ladder`, (M,) each.
+
+    open_poles : (M, r) roots of D; slow_poles : (M, q) closed-loop poles that stay; NaN padded.
+
+    The panel behind a kink must resolve the fastest open-loop pole. One that is well damped has died out where the
+    panels grow; one that is not must be resolved to the end of the delay.
+    """
+    delay = loops.dead_time[:, None]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        turns = np.abs(open_poles) * delay
+        needed = np.fmax.reduce(np.where(turns > 0.0, turns, 0.0) / 3.5, axis=1, initial=0.0)
+        lasting: BoolArray = (-open_poles.real < 0.75 * np.abs(open_poles)) & (open_poles.real * delay > -60.0)
+        swings = np.fmax.reduce(np.where(lasting, turns, 0.0) / 4.0, axis=1, initial=0.0)
+        staying = slow_poles.real * delay > -3.0
+        moves = np.fmax.reduce(np.where(staying, np.abs(slow_poles) * delay, 0.0) / 5.0, axis=1, initial=0.0)
+    coarse = np.ceil(np.log2(np.maximum(np.fmax(swings, moves), 1.0))).astype(np.intp)
+    fine = np.ceil(np.log2(np.maximum(needed, 1.0))).astype(np.intp)
+    coarse = np.minimum(coarse, 10)
+    return np.maximum(np.minimum(fine, 40), coarse), coarse
