@@ -149,7 +149,7 @@ def _search_options(parser: argparse.ArgumentParser) -> None:
     add("--seed", metavar="N", type=_whole, help="of the search (default: the spec's)")
     add("--budget", metavar="B", type=_budget, help="quick, normal or thorough (default: the spec's)")
     add("--time-limit", metavar='"20 s"', type=_time, help="end the search then, and keep the best so far")
-    add("--show", metavar="N", type=_rank, default=1, help="the candidate shown in full (default: 1)")
+    add("--show", metavar="N", type=_rank, help="the candidate shown in full (default: 1)")
     add("--study", metavar="URL", help="storage of the outer exploration; never printed or recorded")
 
 

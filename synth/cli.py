@@ -128,7 +128,9 @@ def _score(typed: argparse.Namespace) -> int:
     return _code(done.record)
 
 
-def _hand_out(record: Record, path: Path | None, typed: argparse.Namespace, in_full: int = 1) -> None:
+def _hand_out(
+    record: Record, path: Path | None, typed: argparse.Namespace, in_full: int | None = None
+) -> None:
     from synth.record import text_of
 
     if typed.json:

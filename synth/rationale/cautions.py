@@ -65,7 +65,7 @@ def _roots(polynomial: FloatArray) -> ComplexArray:
     unit = float(np.exp((np.log(abs(p[last])) - np.log(abs(p[0]))) / last))
     with np.errstate(over="ignore", under="ignore"):
         scaled = p * unit ** np.arange(len(p) - 1, -1, -1.0)
-    found: ComplexArray = unit * np.roots(scaled / np.abs(scaled).max()).astype(complex)
+    found: ComplexArray = np.asarray(np.roots(scaled / np.abs(scaled).max()) * unit, dtype=np.complex128)
     return found
 
 

@@ -31,7 +31,8 @@ def reason(spec: Spec, outcome: Outcome, rejection: Rejection) -> str:
         parts.append(f"{name_of(bound.measure)} {shown} of {limit_words(bound.side, bound.limit, unit)}")
     more = f", {count(len(worst) - LISTED, 'more requirement')} short" if len(worst) > LISTED else ""
     slack = percent(closest.worst_slack)
-    return f"Slack {slack} at best: {'; '.join(parts)}{more} ({surely(rejection.scan)})."
+    alias = f"As a {closest.structure}: slack" if closest.structure != rejection.structure else "Slack"
+    return f"{alias} {slack} at best: {'; '.join(parts)}{more} ({surely(rejection.scan)})."
 
 
 def surely(scan: Scan) -> str:

@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, Literal
 
-from synth.rationale.figures import count, figure, percent
+from synth.rationale.figures import count, percent
 from synth.rationale.scene import Scene
 from synth.rationale.sentences import said_binding
 from synth.rationale.words import parameter_name
@@ -97,15 +97,13 @@ def _could_be_better(outcome: Outcome, untouched: Candidate) -> list[tuple[str, 
 
 
 def _moves(new: Candidate, moved: dict[str, list[float]], index: int) -> tuple[str, dict[str, Any]]:
-    parts = []
-    for key, (old, now) in moved.items():
-        change = f"{100.0 * (now / old - 1.0):+.0f} %".replace("-", "−") if old else "from 0"
-        parts.append(f"{parameter_name(key)} {figure(old)} to {figure(now)} ({change})")
-    text = (
-        f"The same structure does it with other values: candidate {index + 1}, slack "
-        f"{percent(new.worst_slack)}; {', '.join(parts)}."
-    )
-    return text, {"rank": index + 1, "worst_slack": new.worst_slack, "moved": moved}
+    text = f"A {new.structure} with other values does it: candidate {index + 1}, slack {percent(new.worst_slack)}"
+    changes = {key: now / old - 1.0 for key, (old, now) in moved.items() if old}
+    if changes:
+        key = max(changes, key=lambda k: abs(changes[k]))
+        text += f". {parameter_name(key).capitalize()} moves most, by {percent(changes[key])}"
+    facts = {"rank": index + 1, "worst_slack": new.worst_slack, "moved": moved}
+    return f"{text}.", facts
 
 
 def _own_structure(outcome: Outcome, untouched: Candidate) -> tuple[str, dict[str, Any]]:

@@ -366,6 +366,7 @@ def rejected_part(given: Given, index: int) -> Rejected:
     if r.closest is not None:
         slack = r.closest.worst_by_requirement()
         part["closest"] = {
+            "structure": r.closest.structure,
             "parameters": dict(r.closest.parameters),
             "units": {p.key: p.unit for p in REGISTRY[r.closest.structure].parameters},
             "worst_slack": plain(r.closest.worst_slack),

@@ -192,6 +192,7 @@ class Candidate(TypedDict):
 
 
 class Closest(TypedDict):
+    structure: NotRequired[str]
     parameters: dict[str, float]
     worst_slack: Number
     binding: Binding | None

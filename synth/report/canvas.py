@@ -15,10 +15,10 @@ from rich.text import Text
 
 from synth.rationale.figures import figure
 
-Line = Literal["solid", "close", "dashed", "dotted", "sparse"]
+Line = Literal["solid", "long", "dashed", "dotted", "sparse"]
 _ON_OFF: dict[Line, tuple[int, int]] = {
     "solid": (1, 0),
-    "close": (3, 2),
+    "long": (14, 3),
     "dashed": (7, 4),
     "dotted": (1, 3),
     "sparse": (1, 5),

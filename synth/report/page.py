@@ -11,22 +11,26 @@ from synth.report.revision import revision
 from synth.report.trade import trade
 
 
-def page(record: Record, width: int, *, in_full: int = 1) -> list[Text]:
+def page(record: Record, width: int, *, in_full: int | None = None) -> list[Text]:
     """Verdict, cautions, the list, one candidate in full, what is not on offer.
 
-    in_full : rank of the candidate that is shown in full; where there is none of that rank, none is.
+    in_full : rank of the candidate that is shown in full; None takes the first, in a rerun the one that would
+    take over.
     """
-    lines = [summary.title(record, width), *summary.verdict(record, width)]
-    if record["revision"] is not None:
+    lines = [summary.title(record, width)]
+    if record["revision"] is not None:  # a rerun was asked about the one in service: that comes first
         lines.extend(revision(record, width))
+    lines.extend(summary.verdict(record, width))
     scoring = record.get("job") == "score"
     if not scoring:
         lines.extend(summary.ranked(record, width))
         lines.extend(summary.values(record, width))
     lines.extend(reach.prices(record, width))
-    chosen = _of_rank(record, in_full)
+    chosen = _of_rank(record, in_full if in_full is not None else _first_of_interest(record))
     if chosen is not None:
         lines.extend(account(record, chosen, width))
+    elif in_full is not None:
+        lines.append(Text(f"\nThere is no candidate {in_full}.", style="warn"))
     lines.extend(trade(record, width))
     lines.extend(reach.rejected(record, width))
     lines.extend(reach.limits(record, width))
@@ -41,6 +45,11 @@ def one_candidate(record: Record, candidate: Candidate, width: int) -> list[Text
 
 def _of_rank(record: Record, rank: int) -> Candidate | None:
     return next((c for c in record["candidates"] if c["rank"] == rank), None)
+
+
+def _first_of_interest(record: Record) -> int:
+    revision_part = record["revision"]
+    return (revision_part.get("successor") if revision_part is not None else None) or 1
 
 
 def _footer(record: Record, width: int) -> list[Text]:

@@ -158,7 +158,7 @@ def locus(view: View, candidate: Candidate, width: int) -> list[Text]:
     chart.curve((left, right), (0.0, 0.0), "axis", "sparse")
     chart.curve((0.0, 0.0), (0.0, top), "axis", "sparse")
     _boundaries(chart, view, left, top)
-    kinds: tuple[Line, ...] = ("solid", "close")
+    kinds: tuple[Line, ...] = ("solid", "long")
     for i, branch in enumerate(branches):
         chart.curve(_floats(branch["re"]), [abs(v) for v in _floats(branch["im"])], "second", kinds[i % 2])
     for points, letter, style in ((starts, "×", "head"), (ends, "○", "head"), (closed, "◆", "first")):

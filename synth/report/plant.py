@@ -77,7 +77,8 @@ def _parameters(check: Check) -> list[Text]:
     if not ranges:
         return []
     table = Columns(("<", ">", ">", "<", ">"), indent=2)
-    table.add("parameter (SI)", "nominal", "from", "", "to", style="dim")
+    spread = any(r["low"] != r["high"] for r in ranges)
+    table.add("parameter (SI)", "nominal", *(("from", "", "to") if spread else ()), style="dim")
     for r in ranges:
         if r["low"] != r["high"]:
             table.add(r["name"], figure(r["nominal"]), figure(r["low"]), "…", figure(r["high"]))

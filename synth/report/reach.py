@@ -19,9 +19,14 @@ def rejected(record: Record, width: int) -> list[Text]:
         return []
     lines = [heading("Structures not used", "and how near each came")]
     room = max(len(r["structure"]) for r in record["rejected"]) + 4
+    told: list[dict[str, float]] = []
     for r in record["rejected"]:
         text = Text(r["reason"])
         closest = r["closest"]
+        if closest is not None and closest["parameters"] in told:
+            closest = None  # the same setting, under its other name
+        elif closest is not None:
+            told.append(closest["parameters"])
         if closest is not None and any(number(s) < 0.0 for s in closest["slack"].values()):
             text.append(f" [{' · '.join(tuned(closest))}]", style="dim")
         label = Text.assemble("  ", (r["structure"].ljust(room - 2), "name"))
