@@ -80,3 +80,21 @@ def _first_extremum(amplitude: ComplexArray, pole: ComplexArray) -> FloatArray:
         at = np.mod(np.pi / 2.0 - np.angle(amplitude * pole), np.pi) / pole.imag
     out: FloatArray = np.where(pole.imag > 0.0, at, np.inf)
     return out
+
+
+def first_reach(amplitude: ComplexArray, pole: ComplexArray, level: FloatArray) -> FloatArray:
+    """First time at which Re a e^(pt) >= level, from below; inf where it never is. (M,)."""
+    at, half = _first_extremum(amplitude, pole), _half_period(pole)
+    with np.errstate(all="ignore"):
+        smooth = np.log(amplitude.real / level) / -pole.real
+        smooth = np.where((amplitude.real < level) & (level < 0.0), smooth, np.inf)
+        early = _value(amplitude, pole, at) >= level
+        late = _value(amplitude, pole, at + half) >= level
+        low, high = np.where(early, 0.0, at), np.where(early, at, at + half)
+        for _ in range(60):
+            middle = 0.5 * (low + high)
+            below = _value(amplitude, pole, middle) < level
+            low, high = np.where(below, middle, low), np.where(below, high, middle)
+        found = np.where(pole.imag == 0.0, smooth, np.where(early | late, high, np.inf))
+    out: FloatArray = np.where(amplitude.real >= level, 0.0, found)
+    return out

@@ -1,0 +1,197 @@
+"""Signals cut into panels, and what is read off them: extremes, passages and areas, each refined on its polynomial.
+
+M loops, B panels in order of loop and time, S signals.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.time.collocation import WHOLE, jet, primitive_coefficients, slope_matrix, value_matrix
+
+# Points at which a panel is looked at; between two neighbours a resolved signal turns by about a quarter radian.
+LOOKS = 17
+_X = np.linspace(0.0, 1.0, LOOKS)
+_VALUES, _SLOPES = value_matrix(_X), slope_matrix(_X)
+# Extrema whose height over their neighbours is below this part of the unit are rounding.
+RIPPLE = 1e-12
+
+
+@dataclass(frozen=True, slots=True)
+class Panels:
+    """owner (B,) loop of each panel; start, length (B,); values (B, S, 13); first (M,) number of its first panel."""
+
+    owner: IntArray
+    start: FloatArray
+    length: FloatArray
+    values: FloatArray
+    first: IntArray
+
+
+@dataclass(frozen=True, slots=True)
+class Trace:
+    """One signal of all panels, with its knots: the looks and, between them, every extremum. Monotone from knot to knot.
+
+    signal (B, 13); place, height (B, 2·17 - 1): where a look is followed by no extremum the odd entry is NaN.
+    """
+
+    panels: Panels
+    offset: FloatArray
+    signal: FloatArray
+    place: FloatArray
+    height: FloatArray
+
+    @classmethod
+    def of(cls, panels: Panels, signal: FloatArray, offset: FloatArray, unit: FloatArray) -> Trace:
+        """signal : (B, 13); offset (M,) what is added to panel times; unit (M,) size that rounding is relative to."""
+        looks, slopes = signal @ _VALUES, signal @ _SLOPES
+        place = np.full((len(signal), 2 * LOOKS - 1), np.nan)
+        height = np.full_like(place, np.nan)
+        place[:, ::2], height[:, ::2] = _X, looks
+        before, after = slopes[:, :-1], slopes[:, 1:]
+        turning = (before > 0.0) != (after > 0.0)
+        turning &= np.maximum(np.abs(before), np.abs(after)) > (RIPPLE * LOOKS * unit)[panels.owner, None]
+        panel, cell = np.nonzero(turning)
+        if panel.size:
+            low, high = _X[cell], _X[cell + 1]
+            a, b = before[panel, cell], after[panel, cell]
+            x = low + (high - low) * a / (a - b)
+            polynomial = primitive_coefficients(signal[panel])
+            for _ in range(5):
+                _, _, slope, bend = jet(polynomial, x)
+                with np.errstate(all="ignore"):
+                    step = slope / bend
+                x = np.clip(np.where(np.isfinite(step), x - step, x), low, high)
+            place[panel, 2 * cell + 1] = x
+            height[panel, 2 * cell + 1] = jet(polynomial, x)[1]
+        return cls(panels, offset, signal, place, height)
+
+    def time(self, panel: IntArray, x: FloatArray) -> FloatArray:
+        """Time of places x on the named panels."""
+        p = self.panels
+        out: FloatArray = p.start[panel] + x * p.length[panel] + self.offset[p.owner[panel]]
+        return out
+
+    def largest(self, sign: float) -> tuple[FloatArray, FloatArray]:
+        """sup of sign · signal and its first time, (M,) each."""
+        height = np.where(np.isnan(self.height), -np.inf, sign * self.height)
+        best_of_panel = height.max(axis=1)
+        best = np.maximum.reduceat(best_of_panel, self.panels.first)
+        number = np.where(best_of_panel == best[self.panels.owner], np.arange(len(height)), len(height))
+        panel = np.minimum.reduceat(number, self.panels.first)
+        knot = height[panel].argmax(axis=1)
+        return best, self.time(panel, self.place[panel, knot])
+
+    def largest_after(self, time: FloatArray) -> FloatArray:
+        """sup of abs(signal) at or after the given times (M,); -inf where the panels end before."""
+        p = self.panels
+        begin = p.start + self.offset[p.owner]
+        x = np.clip((time[p.owner] - begin) / p.length, 0.0, 1.0)
+        inside = (self.place >= x[:, None]) & (begin + p.length >= time[p.owner])[:, None]
+        best = np.where(inside, np.abs(self.height), -np.inf).max(axis=1)
+        cut = np.flatnonzero((x > 0.0) & (x < 1.0))
+        if cut.size:
+            edge = np.abs(jet(primitive_coefficients(self.signal[cut]), x[cut])[1])
+            best[cut] = np.maximum(best[cut], edge)
+        out: FloatArray = np.maximum.reduceat(best, p.first)
+        return out
+
+    def first_reach(self, level: float) -> FloatArray:
+        """First time at which signal >= level; inf where it is not reached. (M,)."""
+        width = self.height.shape[1]
+        with np.errstate(invalid="ignore"):
+            flat = (self.height >= level).ravel()
+        number = np.where(flat, np.arange(flat.size), flat.size).reshape(-1, width).min(axis=1)
+        first = np.minimum.reduceat(number, self.panels.first)
+        out = np.full(len(first), np.inf)
+        some = np.flatnonzero(first < flat.size)
+        panel, knot = first[some] // width, first[some] % width
+        before = self._neighbour(panel, knot, -1)
+        out[some] = self._passage(panel, before, knot, np.full(len(some), level))
+        return out
+
+    def last_exit(self, band: float) -> tuple[FloatArray, BoolArray]:
+        """Last time at which abs(signal) > band, NaN where never; and whether that is the very end. (M,) each."""
+        width = self.height.shape[1]
+        with np.errstate(invalid="ignore"):
+            flat = (np.abs(self.height) > band).ravel()
+        number = np.where(flat, np.arange(flat.size), -1).reshape(-1, width).max(axis=1)
+        last = np.maximum.reduceat(number, self.panels.first)
+        out = np.full(len(last), np.nan)
+        some = np.flatnonzero(last >= 0)
+        panel, knot = last[some] // width, last[some] % width
+        after = self._neighbour(panel, knot, 1)
+        level = np.where(self.height[panel, knot] > 0.0, band, -band)
+        out[some] = self._passage(panel, knot, after, level)
+        final = np.append(self.panels.first[1:], len(self.height)) - 1
+        return out, last == final * width + width - 1
+
+    def area(self) -> FloatArray:
+        """Integral of abs(signal) over the panels of each loop. (M,)."""
+        p = self.panels
+        whole = np.abs(self.signal @ WHOLE)
+        panel, left, right = self._zeros()
+        if panel.size:
+            x = self._root(panel, self.place[panel, left], self.place[panel, right], np.zeros(len(panel)))
+            inside = jet(primitive_coefficients(self.signal[panel]), x)[0]
+            cut = np.unique(panel)
+            where = np.concatenate([cut, panel, cut])
+            at = np.concatenate([np.zeros(len(cut)), x, np.ones(len(cut))])
+            primitive = np.concatenate([np.zeros(len(cut)), inside, self.signal[cut] @ WHOLE])
+            order = np.lexsort((at, where))
+            piece = np.abs(np.diff(primitive[order]))
+            same = np.diff(where[order]) == 0
+            whole[cut] = 0.0
+            np.add.at(whole, where[order][1:][same], piece[same])
+        out: FloatArray = np.add.reduceat(whole * p.length, p.first)
+        return out
+
+    def _zeros(self) -> tuple[IntArray, IntArray, IntArray]:
+        """Panels and neighbouring knots between which the signal changes sign."""
+        positive = self.height > 0.0
+        looks, middle = positive[:, ::2], positive[:, 1::2]
+        there = ~np.isnan(self.height[:, 1::2])
+        first = np.where(there, looks[:, :-1] != middle, looks[:, :-1] != looks[:, 1:])
+        second = there & (middle != looks[:, 1:])
+        panel_a, cell_a = np.nonzero(first)
+        panel_b, cell_b = np.nonzero(second)
+        right = np.where(there[panel_a, cell_a], 2 * cell_a + 1, 2 * cell_a + 2)
+        return (
+            np.concatenate([panel_a, panel_b]),
+            np.concatenate([2 * cell_a, 2 * cell_b + 1]),
+            np.concatenate([right, 2 * cell_b + 2]),
+        )
+
+    def _neighbour(self, panel: IntArray, knot: IntArray, way: int) -> IntArray:
+        """The knot next to each, within the panel (itself at the panel's end)."""
+        width = self.height.shape[1]
+        near = np.clip(knot + way, 0, width - 1)
+        far = np.clip(knot + 2 * way, 0, width - 1)
+        return np.where(np.isnan(self.height[panel, near]), far, near)
+
+    def _passage(self, panel: IntArray, left: IntArray, right: IntArray, level: FloatArray) -> FloatArray:
+        low, high = self.place[panel, left], self.place[panel, right]
+        return self.time(panel, self._root(panel, low, high, level))
+
+    def _root(self, panel: IntArray, low: FloatArray, high: FloatArray, level: FloatArray) -> FloatArray:
+        """Where the signal, monotone from low to high, takes the level: Newton, halving where it leaves the bracket."""
+        polynomial = primitive_coefficients(self.signal[panel])
+        rising = jet(polynomial, high)[1] > jet(polynomial, low)[1]
+        low, high = low.copy(), high.copy()
+        x = 0.5 * (low + high)
+        for _ in range(60):
+            _, value, slope, _ = jet(polynomial, x)
+            above = (value > level) == rising
+            high, low = np.where(above, x, high), np.where(above, low, x)
+            with np.errstate(all="ignore"):
+                newton = x - (value - level) / slope
+            good = (newton >= low) & (newton <= high)
+            better = np.where(good, newton, 0.5 * (low + high))
+            moved = np.abs(better - x).max(initial=0.0)
+            x = better
+            if moved < 1e-14:
+                break
+        return x

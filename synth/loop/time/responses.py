@@ -1,0 +1,183 @@
+"""Step responses of loops with dead time, from the first delay to the end: marched, then carried by the true modes.
+
+M loops, S signals. Own time τ: u at τ, y and d one delay later.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
+from synth.loop.closed_loop import Loops
+from synth.loop.poles.roots import closed_roots
+from synth.loop.polynomials import horner
+from synth.loop.time.collocation import GRID, NODES, TO_CHEBYSHEV
+from synth.loop.time.panels import Panels
+from synth.loop.time.steps import March, ladder, march, resolution
+from synth.loop.time.true_modes import TrueModes, alone_from, late_panels, true_modes, units
+
+# Delays after which a response that still goes on is handed to the modes, and the most that are ever marched.
+LONG, HANDOVER, MOST_DELAYS = 48, 14, 1536
+MOST_LATE = 4096
+# The modes are trusted where they meet the marched response over a whole delay to this part of its unit.
+AGREES = 3e-9
+# Other modes have died, or all have, at this part of the unit.
+DEAD = 3e-10
+# Last Chebyshev coefficients above this part of the largest value: the panels are cut finer.
+RESOLVED = 3e-9
+
+
+@dataclass(frozen=True, slots=True)
+class Responses:
+    """panels up to own time end (M,), and the single mode that is left then.
+
+    amplitude (M, S) complex and pole (M,): signal = final + Re(amplitude e^(pole (τ - end))) for τ > end.
+    unit, final (M, S); doubtful (M,) where neither could be had within the most delays or panels.
+    """
+
+    panels: Panels
+    end: FloatArray
+    amplitude: ComplexArray
+    pole: ComplexArray
+    final: FloatArray
+    unit: FloatArray
+    doubtful: BoolArray
+
+
+def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Responses:
+    """Responses of M stable loops. numerators (M, S, n + 1), N first; poles (M, q) true roots, NaN padded."""
+    delay = loops.dead_time
+    modes = true_modes(loops, numerators, poles)
+    unit = units(modes, delay)
+    alone = alone_from(modes, unit, DEAD)
+    with np.errstate(invalid="ignore", over="ignore"):
+        needed = np.ceil(np.nan_to_num(alone / delay, nan=np.inf, posinf=1e300)) + 1.0
+    least = _chain_delays(loops)
+    delays = np.where(needed > LONG, HANDOVER, np.maximum(needed, 2.0))
+    delays = np.minimum(np.maximum(delays, least), MOST_DELAYS).astype(np.intp)
+    fine, coarse = resolution(loops, closed_roots(loops.denominator), modes.pole)
+
+    rows = len(loops)
+    pieces: list[Panels] = []
+    amplitude = np.zeros((rows, numerators.shape[1]), dtype=complex)
+    end, doubtful = np.zeros(rows), np.zeros(rows, dtype=bool)
+    todo, coarser = np.arange(rows), np.zeros(rows, dtype=np.intp)
+    while todo.size:
+        again = []
+        for at in _classes(todo, fine, coarse, delays):
+            part = march(
+                loops.rows(at), numerators[at], ladder(int(fine[at].max()), int(coarse[at].max())), delays[at]
+            )
+            rough = _unresolved(part) & (coarser[at] < 4)
+            meets, quiet = _checked(part, delays[at], delay[at], modes.rows(at), unit[at])
+            longer = ~rough & ~(meets | quiet) & (delays[at] < MOST_DELAYS)
+            done = ~rough & ~longer
+            fine[at[rough]] += 1
+            coarse[at[rough]] += 1
+            coarser[at[rough]] += 1
+            delays[at[longer]] = np.minimum(2 * delays[at[longer]], MOST_DELAYS)
+            again.append(at[~done])
+            kept = at[done]
+            pieces.append(_flat(part, at, done, delays, delay))
+            end[kept] = delays[kept] * delay[kept]
+            amplitude[kept] = np.where(meets[done, None], modes.residue[kept, :, 0], 0.0)
+            doubtful[kept] = ~(meets | quiet)[done]
+        todo = np.concatenate(again)
+
+    going_on = amplitude.any(axis=1) & (alone > end)
+    if going_on.any():
+        at = np.flatnonzero(going_on)
+        owner, start, length, values = late_panels(modes.rows(at), unit[at], end[at], alone[at], MOST_LATE)
+        pieces.append(Panels(at[owner], start, length, values, np.zeros(0, dtype=np.intp)))
+        np.maximum.at(end, at[owner], start + length)
+        doubtful[at] |= end[at] < alone[at]
+    pole = modes.pole[:, 0]
+    amplitude = amplitude * np.exp(pole * end)[:, None]
+    return Responses(_assembled(pieces, rows), end, amplitude, pole, modes.final, unit, doubtful)
+
+
+def _chain_delays(loops: Loops) -> FloatArray:
+    """Delays after which the far roots, those that are not among the poles, have died: each shrinks by abs(N/D)."""
+    far = 9.0j / loops.dead_time[:, None]
+    with np.errstate(all="ignore"):
+        ratio = np.abs(horner(loops.numerator, far) / horner(loops.denominator, far))[:, 0]
+        ratio = np.fmax(ratio, np.abs(loops.numerator[:, 0] / loops.denominator[:, 0]))
+        out: FloatArray = np.ceil(23.0 / -np.log(np.clip(ratio, 1e-6, 0.985)))
+    return out
+
+
+def _classes(todo: IntArray, fine: IntArray, coarse: IntArray, delays: IntArray) -> list[IntArray]:
+    """Rows that are marched together: the same panels, and no more numbers at once than fit in 60 MB."""
+    out = []
+    if len(todo) <= 64:  # a few rows: one fine cut for all costs less than many calls
+        key = np.where(coarse[todo] > 1, 100 + coarse[todo], 0) * 1000 + np.where(fine[todo] > 4, fine[todo], 4)
+        key = np.where((fine[todo] == 0) & (coarse[todo] == 0), -1, key)
+    else:
+        key = coarse[todo] * 100 + fine[todo]
+    for one in np.unique(key):
+        at = todo[key == one]
+        at = at[np.argsort(-delays[at], kind="stable")]
+        panels = len(ladder(int(fine[at].max()), int(coarse[at].max())))
+        while at.size:
+            room = max(1, int(2.5e6 // (int(delays[at[0]]) * panels * NODES)))
+            out.append(at[:room])
+            at = at[room:]
+    return out
+
+
+def _unresolved(part: March) -> BoolArray:
+    """Whether any panel's polynomial has not settled in its last coefficients. (m,)."""
+    values = part.values
+    if values.size == 0:
+        return np.zeros(len(values), dtype=bool)
+    size = np.fmax.reduce(np.abs(values), axis=(1, 2, 4))
+    last = np.fmax.reduce(np.abs(values @ TO_CHEBYSHEV[:, -2:]), axis=(1, 2, 4))
+    out: BoolArray = (last > RESOLVED * size).any(axis=1)
+    return out
+
+
+def _checked(
+    part: March, delays: IntArray, delay: FloatArray, modes: TrueModes, unit: FloatArray
+) -> tuple[BoolArray, BoolArray]:
+    """Whether the modes meet the last delay marched, and whether the response has come to rest on it. (m,) each.
+
+    A stable loop that is at rest over one whole delay stays so; and what the modes leave out is itself a response of
+    the loop, as small later as it is over that delay.
+    """
+    m, _, panels, signals, _ = part.values.shape
+    last = part.values[np.arange(m), delays - 1]
+    begin = np.cumsum(part.sizes) - part.sizes
+    place = (begin[:, None] + part.sizes[:, None] * GRID).ravel()
+    time = (delays[:, None] - 1.0 + place) * delay[:, None]
+    sum_of_modes = modes.at(time).reshape(m, signals, panels, NODES).swapaxes(1, 2)
+    scale = np.maximum(unit, 1e-300)[:, None, :, None]
+    apart = np.nan_to_num(np.abs(last - sum_of_modes) / scale, nan=np.inf).max(axis=(1, 2, 3))
+    rest = np.nan_to_num(np.abs(last - modes.final[:, None, :, None]) / scale, nan=np.inf).max(axis=(1, 2, 3))
+    return apart <= AGREES, rest <= DEAD
+
+
+def _flat(part: March, at: IntArray, done: BoolArray, delays: IntArray, delay: FloatArray) -> Panels:
+    """The panels of the rows that are done; `first` is left to the assembly."""
+    m, most, panels, signals, _ = part.values.shape
+    counts = delays[at]
+    mask = done[:, None] & (np.arange(most) < counts[:, None])
+    row, k = np.nonzero(mask)
+    begin = np.cumsum(part.sizes) - part.sizes
+    owner = np.repeat(at[row], panels)
+    step = delay[owner]
+    start = (np.repeat(k, panels) + np.tile(begin, len(row))) * step
+    length = np.tile(part.sizes, len(row)) * step
+    return Panels(owner, start, length, part.values[row, k].reshape(-1, signals, NODES), np.zeros(0, dtype=np.intp))
+
+
+def _assembled(pieces: list[Panels], rows: int) -> Panels:
+    """All panels in order of loop and time."""
+    owner = np.concatenate([p.owner for p in pieces])
+    start = np.concatenate([p.start for p in pieces])
+    order = np.lexsort((start, owner))
+    length = np.concatenate([p.length for p in pieces])[order]
+    values = np.concatenate([p.values for p in pieces])[order]
+    owner = owner[order]
+    return Panels(owner, start[order], length, values, np.searchsorted(owner, np.arange(rows)))
