@@ -64,7 +64,7 @@ def _against_scipy(title: str, cases: list[tuple[str, Population, int]]) -> Tabl
         title,
         ["population", "loops a call", "core [us/loop]", "scipy [us/loop]", "ratio"],
         note=f"scipy: np.roots, three signal.step and one freqresp of 1000 points each, read off the grid; "
-        f"mean of {SAMPLE} loops. Medians of runs taken in turns.",
+        f"mean of {SAMPLE} loops. Processor time, medians of runs taken in turns.",
     )
     for name, population, repeats in cases:
         count, sample = len(population.plants), population.rows(SAMPLE)
@@ -130,7 +130,9 @@ def processes() -> Table:
     with context.Pool(2) as pool:
         parts = [0] * 8
         taken = interleaved(
-            {"one": lambda: [work() for _ in parts], "two": lambda: pool.map(_run_job, parts, chunksize=1)}, 3
+            {"one": lambda: [work() for _ in parts], "two": lambda: pool.map(_run_job, parts, chunksize=1)},
+            3,
+            wall=True,
         )
     table = Table(
         "Eight calls of 1024 loops, order 6",

@@ -81,12 +81,17 @@ def test_the_runner_refuses_what_it_does_not_have_and_writes_json(tmp_path):
     bad = subprocess.run([*run, "nothing"], capture_output=True, text=True, check=False)
     assert bad.returncode == 2
     assert "core" in bad.stderr
-    code = (
-        "import sys, runpy; sys.path.insert(0, sys.argv[1]); import tables, types; "
-        "fake = types.ModuleType('bench_core'); fake.QUESTIONS = [lambda: tables.Table('T', ['a'], [[1.0]])]; "
-        "sys.modules['bench_core'] = fake; sys.argv = ['run.py', 'core', '--json', sys.argv[2]]; "
-        "runpy.run_path(fake.__name__ and sys.path[0] + '/run.py', run_name='__main__')"
-    )
+    code = """
+import runpy, sys, types
+folder, path = sys.argv[1:]
+sys.path.insert(0, folder)
+import tables
+fake = types.ModuleType("bench_core")
+fake.QUESTIONS = [lambda: tables.Table("T", ["a"], [[1.0]])]
+sys.modules["bench_core"] = fake
+sys.argv = ["run.py", "core", "--json", path]
+runpy.run_path(folder + "/run.py", run_name="__main__")
+"""
     path = tmp_path / "figures.json"
     done = subprocess.run(
         [sys.executable, "-c", code, str(FOLDER), str(path)], capture_output=True, text=True, check=True

@@ -20,7 +20,7 @@ from synth.loop.time.stage import time_stage
 
 # Loops handled at once: large enough to drown the cost of a call, small enough to stay in cache and in
 # memory.
-CHUNK = 1024
+CHUNK = 2048
 USUAL_DAMPING = Measure("damping_ratio")
 
 
