@@ -124,9 +124,8 @@ def _check_format(data: Any, expected: str, path: Path, noun: str) -> None:
         raise _fault(f"not a {noun} of this program (no format {expected!r} in it)", path)
     found_family, _, found_version = written.partition("/")
     if found_family != family:
-        raise _fault(
-            f"a {noun} was expected and this is a {found_family.removeprefix('synth-')}", path, given=written
-        )
+        other = found_family.removeprefix("synth-")
+        raise _fault(f"a {noun} was expected, this file says {other}", path, given=written)
     if found_version.isdecimal() and int(found_version) > int(version):
         raise InputError(
             [
