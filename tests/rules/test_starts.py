@@ -1,4 +1,4 @@
-"""Starts: legal for every structure on every kind of plant, many stabilise, and they follow units and sign."""
+"""Starts: legal for every structure on every kind of plant, many stabilise; they follow units and sign."""
 
 import numpy as np
 import pytest

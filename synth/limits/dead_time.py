@@ -1,0 +1,31 @@
+"""Dead time: nothing happens before it is over. It bounds no rise time, which leaves it out."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from synth.limits.case import CaseView, Finding
+
+SOURCE = "causality: the output cannot answer a step of the reference before the dead time is over"
+
+
+def findings(view: CaseView) -> Iterator[Finding]:
+    """What the dead time of a case rules out."""
+    delay = view.facts.dead_time
+    if delay <= 0.0:
+        return
+    name = "dead time against settling and peak"
+    statement = (
+        f"The output stands still for the dead time of {delay:.4g} s: no settling, no peak and no smaller "
+        "tracking area before that."
+    )
+    facts: dict[str, float | str] = {"dead_time": delay}
+    found = False
+    for quantity in ("settling_time", "peak_time", "tracking_area"):
+        for bound in view.asked(quantity, "max"):
+            if quantity == "settling_time" and bound.measure.band >= 1.0:
+                continue  # a band that holds 0: settled from the start
+            found = True
+            yield Finding(name, SOURCE, statement, facts, bound, delay)
+    if not found:
+        yield Finding(name, SOURCE, statement, facts)
