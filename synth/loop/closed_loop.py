@@ -1,7 +1,8 @@
 """C and P to one nondimensional closed loop.
 
-Time is counted in units of a power of two of a second near the geometric mean of the closed-loop poles, and the
-plant's gain is divided out, so every grid and tolerance further up is relative. Scaling by powers of two is exact.
+Time is counted in units of a power of two of a second near the geometric mean of the closed-loop poles, and
+the plant's gain is divided out, so every grid and tolerance further up is relative. Scaling by powers of two
+is exact.
 The characteristic polynomial is formed from the uncancelled numerators and denominators, D_P D_C + N_P N_C.
 """
 
@@ -108,7 +109,7 @@ def product(a: FloatArray, b: FloatArray) -> FloatArray:
 
 
 def _stretched(polynomials: FloatArray, power: IntArray) -> tuple[FloatArray, IntArray]:
-    """p(s) in the variable s·2^power, divided by a power of two so that the largest coefficient is in [0.5, 1).
+    """p(s) in the variable s·2^power, divided by a power of two: the largest coefficient is in [0.5, 1).
 
     Returns the rows and the exponents taken out. Exact: exponents alone are touched.
     """
@@ -116,18 +117,18 @@ def _stretched(polynomials: FloatArray, power: IntArray) -> tuple[FloatArray, In
     mantissa, exponent = np.frexp(polynomials)
     shift = exponent - power[:, None] * np.arange(width - 1, -1, -1)[None, :]
     largest = np.where(mantissa != 0.0, shift, np.iinfo(shift.dtype).min).max(axis=1)
+    largest[(mantissa == 0.0).all(axis=1)] = 0  # a row of zeros has no size to take out
     return np.ldexp(mantissa, np.maximum(shift - largest[:, None], -2000).astype(np.int32)), largest
 
 
 def close(plants: Rational, compensators: Rational, plant_of: IntArray, compensator_of: IntArray) -> Loops:
     """Close the loops of the named pairs.
 
-    plant_of, compensator_of : (M,) row numbers. Within one call every D_P D_C must have the same exact degree and
-    every dead time be zero or every one positive (`evaluate` sorts them so).
+    plant_of, compensator_of : (M,) row numbers. Within one call every D_P D_C must have the same exact degree,
+    and every dead time be zero or every one positive (`evaluate` sorts them so).
     """
     dp = int(exact_degree(plants.denominator[plant_of[:1]])[0])
     dc = int(exact_degree(compensators.denominator[compensator_of[:1]])[0])
-    n = dp + dc
     plant_num, plant_den = trimmed(plants.numerator, dp)[plant_of], trimmed(plants.denominator, dp)[plant_of]
     comp_num = trimmed(compensators.numerator, dc)[compensator_of]
     comp_den = trimmed(compensators.denominator, dc)[compensator_of]
@@ -138,24 +139,29 @@ def close(plants: Rational, compensators: Rational, plant_of: IntArray, compensa
     plant_den, b = _stretched(plant_den, power)
     comp_num, c = _stretched(comp_num, power)
     comp_den, d = _stretched(comp_den, power)
-    with np.errstate(over="ignore"):  # a gain beyond the number range is inf here and an unstable loop above
+    # a gain beyond the number range is inf or NaN here and an unstable loop above
+    with np.errstate(over="ignore", invalid="ignore"):
         comp_num = np.ldexp(comp_num, np.clip(a - b + c - d, -4000, 4000).astype(np.int32)[:, None])
         gain = np.ldexp(1.0, np.clip(a - b, -4000, 4000).astype(np.int32))
-    numerator, denominator = product(plant_num, comp_num), product(plant_den, comp_den)
+        numerator, denominator = product(plant_num, comp_num), product(plant_den, comp_den)
+        control, load = product(comp_num, plant_den), product(plant_num, comp_den)
+        closed = numerator + denominator
     scale = np.ldexp(1.0, power.astype(np.int32))
     return Loops(
         numerator=numerator,
         denominator=denominator,
-        control=product(comp_num, plant_den),
-        load=product(plant_num, comp_den),
-        closed=numerator + denominator,
+        control=control,
+        load=load,
+        closed=closed,
         dead_time=delay / scale,
         time_scale=scale,
         plant_gain=gain,
     )
 
 
-def _time_power(plant_num: FloatArray, plant_den: FloatArray, comp_num: FloatArray, comp_den: FloatArray) -> IntArray:
+def _time_power(
+    plant_num: FloatArray, plant_den: FloatArray, comp_num: FloatArray, comp_den: FloatArray
+) -> IntArray:
     """log2 of the time scale: minus the mean log2 magnitude of the nonzero roots of D + N."""
 
     def log2(values: FloatArray) -> FloatArray:

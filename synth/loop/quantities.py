@@ -1,7 +1,7 @@
 """THE table of quantities: every number the program knows, written down once.
 
-The spec reader, the scoring core, the report and the record are all driven by it. To add a quantity, write the
-function that computes it in the stage it belongs to, and add a row here.
+The spec reader, the scoring core, the report and the record are all driven by it. To add a quantity, write
+the function that computes it in the stage it belongs to, and add a row here.
 
 Definitions: quantities.md of the project's design notes, restated in the docstring of each function.
 """
@@ -80,7 +80,14 @@ _ROWS = (
     Quantity("noise_gain", "noise gain", "u per y", "plant", "min", "frequency", gain_power=-1),
     Quantity("disturbance_peak", "disturbance peak", "y per d", "plant", "min", "time", gain_power=1),
     Quantity(
-        "disturbance_area", "disturbance area", "y s per d", "plant", "min", "time", time_power=1, gain_power=1
+        "disturbance_area",
+        "disturbance area",
+        "y s per d",
+        "plant",
+        "min",
+        "time",
+        time_power=1,
+        gain_power=1,
     ),
     Quantity(
         "disturbance_integral",
@@ -93,7 +100,15 @@ _ROWS = (
         gain_power=1,
     ),
     Quantity(
-        "disturbance_residue", "disturbance residue", "y per d", "plant", "min", "poles", 0.01, 0.0, gain_power=1
+        "disturbance_residue",
+        "disturbance residue",
+        "y per d",
+        "plant",
+        "min",
+        "poles",
+        0.01,
+        0.0,
+        gain_power=1,
     ),
 )
 
@@ -107,7 +122,7 @@ class Measure:
     band   settling_time: half width of the band round y∞, relative (0.02 is 2 %)
     below  damping_ratio: count exactly the poles with abs(p) <= below [rad/s]; None is the usual rule
     span   rise_time: start and end level, relative to y∞
-    after  late_deviation: 100 sup of abs(z - 1) from this time on [s]; the continuous stand-in for a settling time
+    after  late_deviation: 100 sup of abs(z - 1) from this time on [s], which stands in for a settling time
     """
 
     quantity: str
