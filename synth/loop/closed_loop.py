@@ -124,8 +124,8 @@ def _stretched(polynomials: FloatArray, power: IntArray) -> tuple[FloatArray, In
 def close(plants: Rational, compensators: Rational, plant_of: IntArray, compensator_of: IntArray) -> Loops:
     """Close the loops of the named pairs.
 
-    plant_of, compensator_of : (M,) row numbers. Within one call every D_P D_C must have the same exact degree,
-    and every dead time be zero or every one positive (`evaluate` sorts them so).
+    plant_of, compensator_of : (M,) row numbers. Within one call every D_P D_C must have the same exact
+    degree, and every dead time be zero or every one positive (`evaluate` sorts them so).
     """
     dp = int(exact_degree(plants.denominator[plant_of[:1]])[0])
     dc = int(exact_degree(compensators.denominator[compensator_of[:1]])[0])
