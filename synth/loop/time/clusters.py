@@ -58,7 +58,7 @@ class ClusterModes:
         weight = _basis(self.pole, delay[:, None])
         alpha = np.zeros((len(self), len(signals), *self.alpha.shape[2:]), dtype=complex)
         for i in range(TERMS):
-            alpha[..., : TERMS - i] += self.alpha[:, signals, :, i:] * weight[i][:, None, :, None]
+            alpha[..., : TERMS - i] += self.alpha[:, signals, :, i:] * weight[i][:, :, :, None]
         return ClusterModes(self.pole, alpha)
 
     def largest(self) -> FloatArray:

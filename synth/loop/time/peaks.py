@@ -66,8 +66,7 @@ def resolve(modes: Modes, peaks: Peaks, cells: Cells) -> None:
         upper = cells.range()[1]
         place, summit = cells.summit()
         upper = np.where(single, summit + cells.miss, upper)
-        known = np.maximum(cells.a, cells.b)
-        at = np.where(cells.b > cells.a, cells.t + cells.h, cells.t)
+        known = np.maximum(cells.a, cells.b) - 2.0 * peaks.tolerance[peaks.answer[cells.key]]
         lower = np.where(single, np.maximum(summit - cells.miss, known), known)
         floor = peaks.best.copy()
         np.maximum.at(floor, peaks.answer[cells.key], lower)
@@ -79,7 +78,7 @@ def resolve(modes: Modes, peaks: Peaks, cells: Cells) -> None:
             up = peaks.sign[few.key] > 0.0
             time, value = extremum(modes, few.loop, few.signal, few.t, few.h, guess, up)
             peaks.raise_to(few.key, peaks.sign[few.key] * (value + peaks.offset[few.key]), time)
-        peaks.raise_to(cells.key, known, at)
+        np.maximum.at(peaks.best, peaks.answer[cells.key], known)
         rest = useful & ~single & (upper > peaks.least(cells.key))
         if not rest.any():
             return

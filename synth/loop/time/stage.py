@@ -30,6 +30,9 @@ REACHES = {
 CROWDED = 1e5
 """Crowding of the poles from which on close poles are taken together."""
 
+FADED = 1e-9
+"""A late deviation of less is not looked at further; no band is so narrow."""
+
 
 @dataclass
 class TimeStage:
@@ -95,7 +98,7 @@ class _Reading:
             factor[:, y] = np.where(self.has_end, 1.0 / final, 0.0)
             modes = modes.scaled(factor)
             unit[:, y] = np.maximum(1.0, np.abs(start[:, y] / final))
-        self.modes, self.unit, self.end = modes, unit, end
+        self.modes, self.unit, self.start, self.end = modes, unit, start, end
         self.suprema: dict[str, Supremum] = {}
         self.passages: dict[tuple[float, float, bool], Passage] = {}
         self.areas: dict[str, Area] = {}
@@ -128,7 +131,8 @@ class _Reading:
             self.suprema[name] = Supremum(signal, (-1.0,), one, zero)
         elif name in ("control_peak", "disturbance_peak"):
             limit = self.end[:, signal]
-            self.suprema[name] = Supremum(signal, (1.0, -1.0), limit, np.abs(limit))
+            floor = np.maximum(np.abs(limit), np.abs(self.start[:, signal]))
+            self.suprema[name] = Supremum(signal, (1.0, -1.0), limit, floor)
         elif name == "rise_time":
             for level in m.span:
                 if level > 0.0:
@@ -174,6 +178,11 @@ class _Reading:
     def _late(self, m: Measure) -> FloatArray:
         """100 sup of abs(z - 1) from m.after on: the same question of the responses seen from then on."""
         later = self.modes.later([self.index["y"]], m.after / self.loops.time_scale)
-        zero = np.zeros(len(self.loops))
-        found = answer(later, np.zeros((len(self.loops), 1)), [Supremum(0, (1.0, -1.0), zero, zero)], [], [])
-        return 100.0 * found.suprema[0]
+        value: FloatArray = later.largest()[:, 0].copy()
+        rows = np.flatnonzero(value > FADED)  # what has died out by then is bounded well enough by its envelope
+        zero = np.zeros(len(rows))
+        if rows.size:
+            still = later.rows(rows)
+            found = answer(still, np.zeros((len(rows), 1)), [Supremum(0, (1.0, -1.0), zero, zero)], [], [])
+            value[rows] = found.suprema[0]
+        return 100.0 * value

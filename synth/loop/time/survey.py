@@ -64,19 +64,25 @@ class Survey:
         """Suprema over the samples, and when nothing larger can come."""
         best, places, tolerance, answer_of, signs, offsets = [], [], [], [], [], []
         self.question: list[list[int]] = []
+        self.sampled: list[tuple[FloatArray, FloatArray]] = []
+        row = np.arange(self.m)
         for w, q in enumerate(self.suprema):
             x = self.profile.deviation[:, q.signal]
-            known, top = q.floor.copy(), np.full(self.m, -np.inf)
+            known, when = q.floor.copy(), np.full(self.m, np.nan)
+            top = np.full(self.m, -np.inf)
             numbers = []
             for sign in q.signs:
-                extreme = x.max(axis=1) if sign > 0.0 else x.min(axis=1)
-                np.maximum(known, sign * (extreme + q.offset), out=known)
+                number = x.argmax(axis=1) if sign > 0.0 else x.argmin(axis=1)
+                extreme = sign * (x[row, number] + q.offset)
+                when = np.where(extreme > known, self.profile.time[row, number], when)
+                np.maximum(known, extreme, out=known)
                 np.maximum(top, sign * q.offset, out=top)
                 numbers.append(len(signs))
                 signs.append(sign)
                 offsets.append(q.offset)
                 answer_of.append(w)
             self.question.append(numbers)
+            self.sampled.append((known, when))
             fine = RESOLUTION * self.unit[:, q.signal]
             level = np.maximum(known - top, fine)
             quiet = reach(self.profile, self.profile.envelope[:, q.signal], level)
@@ -103,9 +109,9 @@ class Survey:
             return reach(self.profile, envelope, np.full(self.m, 0.98 * min(-p.low, p.high)))
         seen = onset(time, self.profile.deviation[:, p.signal] > p.high)
         if p.high < -RESOLUTION:
-            return np.minimum(seen, reach(self.profile, envelope, np.full(self.m, -p.high)))
+            return np.minimum(1.001 * seen, reach(self.profile, envelope, np.full(self.m, -0.98 * p.high)))
         fine = np.full(self.m, max(p.high, RESOLUTION))
-        return np.minimum(seen, np.minimum(reach(self.profile, envelope, fine), self.steady[p.signal]))
+        return np.minimum(1.001 * seen, np.minimum(reach(self.profile, envelope, fine), self.steady[p.signal]))
 
     def _area_end(self, q: Area) -> FloatArray:
         """Looks until the tail is a single mode or nothing; returns about the area, (M,)."""
@@ -153,13 +159,11 @@ class Survey:
         bottom: FloatArray,
     ) -> None:
         best = self.peaks.best[w * self.m : (w + 1) * self.m]
-        place = self.peaks.place[w * self.m : (w + 1) * self.m]
         for sign in q.signs:
             node = np.maximum.reduceat(top, s.first) if sign > 0.0 else -np.minimum.reduceat(bottom, s.first)
             node += sign * q.offset[s.owner]
-            higher = node > best[s.owner]
-            # a supremum at a node is one at t = 0+: any other lies beside a slope, in a cell that holds more
-            place[s.owner[higher]] = 0.0
+            # somewhat less than the node, so that the cell beside it stays in and gives the place too
+            node -= 2.0 * RESOLUTION * self.unit[s.owner, q.signal]
             best[s.owner] = np.maximum(best[s.owner], node)
         for number, sign in zip(self.question[w], q.signs, strict=True):
             reachable = (high if sign > 0.0 else -low) + sign * q.offset[cells.loop]
@@ -240,10 +244,12 @@ class Survey:
             peaks.resolve(self.modes, self.peaks, joined(self.doubt_peaks))
         for w in range(len(self.suprema)):
             mine, floor = slice(w * m, (w + 1) * m), self.suprema[w].floor
-            best = self.peaks.best[mine]
+            best, place = self.peaks.best[mine], self.peaks.place[mine]
+            known, when = self.sampled[w]
+            best, place = np.maximum(best, known), np.where(known > best, when, place)
             more = best > floor + self.peaks.tolerance[mine]  # less than that is rounding
             out.suprema.append(np.where(more, best, floor))
-            out.times.append(np.where(more, self.peaks.place[mine], np.nan))
+            out.times.append(np.where(more, place, np.nan))
         if self.passages:
             cells = joined(self.doubt_edges) if self.doubt_edges else no_cells()
             time = crossings.resolve(self.modes, self.edges, cells).reshape(len(self.passages), m)
