@@ -28,22 +28,20 @@ DELAY_SOURCE = (
 def least_overshoot(
     pole: float, dead_time: float, final: float, rise: float = 0.0, level: float = 0.9
 ) -> float:
-    """Overshoot over y∞ = final > 0 that a real unstable pole forces: E_θ E_r / y∞ - level (E_r - 1) - 1.
+    """Overshoot over y∞ = final > 0 that a real unstable pole forces: E_r (E_θ/y∞ - level) + level - 1.
 
     From 0 = ∫ (1 - y) e^(-pt) dt with y = 0 before θ, y <= level · y∞ for a time `rise` more, y <= its
     largest after that; E_θ = e^(pθ), E_r = e^(p rise). Falls as `final` rises. May be below 0: then nothing
     is forced.
     """
-    with np.errstate(over="ignore"):
-        growth_delay, growth_rise = np.exp(pole * dead_time), np.exp(pole * rise)
-        return float(growth_delay * growth_rise / final - level * (growth_rise - 1.0) - 1.0)
+    growth_delay, growth_rise = np.exp(min(pole * dead_time, 300.0)), np.exp(min(pole * rise, 300.0))
+    return float(growth_rise * (growth_delay / final - level) + level - 1.0)
 
 
 def longest_rise(pole: float, dead_time: float, final: float, overshoot: float, level: float = 0.9) -> float:
     """The same solved for the rise time (0 to `level`): inf where no overshoot is forced, 0 where none
     fits."""
-    with np.errstate(over="ignore"):
-        excess = float(np.exp(pole * dead_time)) / final - level
+    excess = float(np.exp(min(pole * dead_time, 300.0))) / final - level
     if excess <= 0.0:
         return np.inf
     return max(float(np.log((overshoot + 1.0 - level) / excess) / pole), 0.0)
