@@ -1,8 +1,8 @@
 """Where |L| = 1, where |T| passes |T(0)|/√2 and where L is real: all such frequencies of every loop.
 
-Each is a positive root of a polynomial in x = ω², bracketed by `isolation` and refined by Newton's method in ln ω on
-logarithms of the unsquared polynomials, which keeps the digits that squaring loses near light damping. With dead time
-the first kind alone is a polynomial's.
+Each is a positive root of a polynomial in x = ω², bracketed by `isolation` and refined by Newton's method in
+ln ω on logarithms of the unsquared polynomials, which keeps the digits that squaring loses near light
+damping. With dead time the first kind alone is a polynomial's.
 
 Letters: M loops, F crossings.
 """
@@ -72,8 +72,8 @@ def crossings(response: Response, kinds: tuple[int, ...]) -> Crossings:
         else:
             stack.append(_quadrature(response))
     brackets = isolate(np.concatenate(stack, axis=1))
-    kind = np.array(kinds, dtype=np.intp)[brackets.row // m]
-    return refine(response, kind, brackets, level)
+    found = np.array(kinds, dtype=np.intp)[brackets.row // m]
+    return refine(response, found, brackets, level)
 
 
 def _quadrature(response: Response) -> FloatArray:
@@ -100,14 +100,16 @@ class Equation(Protocol):
     """F equations in u = ln ω."""
 
     def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """What must vanish, its slope, and a number that is positive on the side `negative` of the brackets."""
+        """What must vanish, its slope, and a number positive on the side `negative` of the brackets."""
 
     def keep(self, index: IntArray) -> None:
         """Go on with these equations alone."""
 
 
 def newton(equation: Equation, bottom: FloatArray, top: FloatArray, negative: BoolArray) -> FloatArray:
-    """Roots u of F equations by Newton's method, kept inside the brackets; a step that leaves them is a bisection."""
+    """Roots u of F equations by Newton's method, kept inside the brackets; a step that leaves them is a
+    bisection.
+    """
     sign = np.where(negative, 1.0, -1.0)
     u = 0.5 * (bottom + top)
     result = np.empty(len(u))
@@ -148,7 +150,11 @@ class _Rational:
         self.phase = kind == PHASE
 
     def keep(self, index: IntArray) -> None:
-        self.columns, self.offset, self.phase = self.columns[..., index], self.offset[index], self.phase[index]
+        self.columns, self.offset, self.phase = (
+            self.columns[..., index],
+            self.offset[index],
+            self.phase[index],
+        )
 
     def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
         re, im = evaluate(self.columns, np.exp(u))  # (2 derivatives, 2 polynomials, F)

@@ -1,29 +1,29 @@
 """Frequency quantities of loops with dead time, exactly: L = N/D e^(-jωθ), rotated, never approximated.
 
-Gain crossovers do not feel the dead time and stay roots of a polynomial. Everything else is read between nodes that
-resolve the loop: L is smooth between them, so what is sought there is a sign change or the turning point of a smooth
-function, refined by Newton's method on the exact expression. The nodes are
+Gain crossovers do not feel the dead time and stay roots of a polynomial. Everything else is read between
+nodes that resolve the loop: L is smooth between them, so what is sought there is a sign change or the turning
+point of a smooth function, refined by Newton's method on the exact expression. The nodes are
   - logarithmic up to an angle ωθ of 2 rad, then a quarter of a radian apart; one list for all loops;
   - crowded round every lightly damped root of N, D and the control path, found in Bernstein form;
-  - continued downwards to below the smallest root, and upwards for as long as anything can still change an answer.
+  - continued downwards to below the smallest root, and upwards for as long as anything can still change an
+    answer.
 
-The upper end: |S| <= 1/(1 - |L|), |T| <= |L|/(1 - |L|), |C S| <= |C|/(1 - |L|), and a gain margin is |L|; so beyond the
-frequency where all bounds stay under what has been found there is nothing left to find.
+The upper end: |S| <= 1/(1 - |L|), |T| <= |L|/(1 - |L|), |C S| <= |C|/(1 - |L|), and a gain margin is |L|; so
+beyond the frequency where all bounds stay under what has been found there is nothing left to find.
 
 Letters: M loops, G nodes, F crossings or humps.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.frequency.crossings import FALL, PHASE, Crossings, fall_level, loop_at, newton
-from synth.loop.frequency.isolation import isolate, light_roots
+from synth.loop.frequency.isolation import isolate
+from synth.loop.frequency.nodes import HIGH, SHARED, STEP, further_nodes, zone_nodes
 from synth.loop.frequency.peaks import CURVES, climb
-from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, evaluate, log_rates
+from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, evaluate, log_rates, polynomial
 from synth.loop.frequency.samples import (
     Samples,
     fall_brackets,
@@ -33,18 +33,8 @@ from synth.loop.frequency.samples import (
     sample_shared,
 )
 
-_PER_OCTAVE = 6
-_STEP = 0.25  # rad
-_LOW, _BEND, _HIGH = 2.0**-14, 2.0, 8.0  # angles of the shared nodes: logarithmic, then linear
 _FARTHEST = 2000.0  # rad: where the search for ever smaller ripples ends
-_SHARED = np.concatenate(
-    (
-        _BEND * 2.0 ** (-np.arange(_PER_OCTAVE * 15, 0, -1) / _PER_OCTAVE),
-        np.arange(_BEND, _HIGH + _STEP / 2, _STEP),
-    )
-)
-_WINDOW = 128.0  # rad at either end of a long range of falls
-_SPAN = 20  # octaves of x below and, twice, above 1 in the table of the bound of |C S|
+_SPAN = 20  # octaves of x, times three, over which the bound of |C S| is followed upwards
 
 
 class _Findings:
@@ -63,19 +53,21 @@ class _Findings:
         self.best = np.array(
             [
                 np.maximum(
-                    ends[0, CURVES[k]] / np.abs(response.ends[0, CLOSED]), ends[1, CURVES[k]] / ends[1, D] * largest
+                    ends[0, CURVES[k]] / np.abs(response.ends[0, CLOSED]),
+                    ends[1, CURVES[k]] / ends[1, D] * largest,
                 )
                 for k in keys
             ]
         ).reshape(len(keys), self.m)
-        self.largest_up = gain  # |L| of the nearest crossing below 1; the circle |L(∞)| is one
+        self.largest_up = gain.copy()  # |L| of the nearest crossing below 1; the circle |L(∞)| is one
         self.gain_end = gain
 
     def upper_end(self) -> FloatArray:
-        """(M,) frequency above which |L| is so small that nothing found can be bettered; 0 where that is everywhere.
+        """(M,) frequency above which |L| is so small that nothing found can be bettered; 0 where that is
+        everywhere.
 
-        The highest root of a polynomial, |N|² = g² |D|², with the g that each answer allows. noise_gain is left with
-        a tenth: what ripples above that is looked for by `envelope_top`.
+        The highest root of a polynomial, |N|² = g² |D|², with the g that each answer allows. noise_gain is
+        left with a tenth: what ripples above that is looked for by `envelope_top`.
         """
         limits = []
         for i, key in enumerate(self.keys):
@@ -98,9 +90,11 @@ class _Findings:
         return out
 
     def fall_zone(self) -> tuple[FloatArray, FloatArray]:
-        """(M,) lowest and highest ω above the shared nodes where |T| may pass the level; an empty range is (inf, 0).
+        """(M,) lowest and highest ω above the shared nodes where |T| may pass the level; an empty range is
+        (inf, 0).
 
-        |T| lies between |L|/(1 + |L|) and |L|/(1 - |L|), so |L| lies between s/(1 + s) and s/(1 - s) where it passes.
+        |T| lies between |L|/(1 + |L|) and |L|/(1 - |L|), so |L| lies between s/(1 + s) and s/(1 - s) where it
+        passes.
         """
         size = np.sqrt(self.level)
         low, high = size / (1.0 + size), np.where(size < 1.0, size / np.maximum(1.0 - size, 1e-300), 0.0)
@@ -108,7 +102,7 @@ class _Findings:
         limits = ((low * 0.999, low > 0.0), (high * 1.001, high > 0.0))
         polynomials = [(g * g * squares[:, D] - squares[:, N]) * keep for g, keep in limits]
         brackets = isolate(np.concatenate(polynomials, axis=1))
-        floor = _HIGH / self.response.dead_time
+        floor = HIGH / self.response.dead_time
         row, edge, start = brackets.row % m, np.sqrt(brackets.high), np.sqrt(brackets.low)
         beyond = edge > floor[row]
         first, last = np.full(m, np.inf), np.zeros(m)
@@ -125,23 +119,35 @@ class _Findings:
         return first, last
 
     def envelope_top(self, above: FloatArray) -> tuple[IntArray, FloatArray]:
-        """(rows, ω) where |C|/(1 - |L|), which bounds |C S|, is largest above `above` [ω] and exceeds what is known.
+        """(rows, ω) where |C|/(1 - |L|), which bounds |C S|, is largest above `above` [ω] and exceeds what is
+        known.
 
         It is smooth, and |C S| touches it once a turn: no more than the turns beside its top need a look.
         """
         i = self.keys.index("noise_gain")
-        x = 2.0 ** np.arange(-_SPAN, 2 * _SPAN + 1.0)
-        powers = x[:, None] ** np.arange(len(self.response.squares))[None, :]
-        squares = self.response.squares
-        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-            inverse = 1.0 / (powers @ squares[:, D])
-            gain = np.sqrt((powers @ squares[:, N]) * inverse)
-            bound = np.sqrt((powers @ squares[:, CONTROL]) * inverse) / np.maximum(1.0 - gain, 1e-300)
-        w = np.sqrt(x)
-        bound = np.where((w[:, None] > above) & (gain < 1.0) & np.isfinite(bound), bound, 0.0)
+        # the bound at the frequency from which on it is asked for, then at every octave of x above
+        x = above * above * 2.0 ** np.arange(0.0, 3 * _SPAN)[:, None]
+        bound = self._noise_bound(x, np.arange(self.m))
         top = bound.argmax(axis=0)
         rows = np.flatnonzero(bound[top, np.arange(self.m)] > self.best[i] * (1.0 + 1e-8))
-        return rows, w[top[rows]]
+        if not rows.size:
+            return rows, np.empty(0)
+        centre, width = x[top[rows], rows], 1.0
+        for _ in range(3):
+            near = centre * 2.0 ** (width * np.linspace(-1.0, 1.0, 33))[:, None]
+            near = np.maximum(near, above[rows] ** 2)
+            centre = near[self._noise_bound(near, rows).argmax(axis=0), np.arange(len(rows))]
+            width /= 16.0
+        return rows, np.sqrt(centre)
+
+    def _noise_bound(self, x: FloatArray, rows: IntArray) -> FloatArray:
+        """|C|/(1 - |L|) at x (G, rows); 0 where |L| >= 1."""
+        squares = self.response.squares
+        n2, d2, c2 = (polynomial(squares[:, p, rows], x) for p in (N, D, CONTROL))
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            rest = np.sqrt(d2) - np.sqrt(n2)
+            bound: FloatArray = np.where(rest > 0.0, np.sqrt(c2) / rest, 0.0)
+        return np.where(np.isfinite(bound), bound, 0.0)
 
     def read(self, s: Samples, rows: IntArray) -> None:
         """Take in what lies between the nodes of loops `rows` (columns of `s`)."""
@@ -176,14 +182,18 @@ class _Findings:
         (row, a, b, negative), _ = fall_brackets(close, self.level[rows[column]])
         self._refine(FALL, rows[column][row], a, b, negative)
 
-    def _refine(self, kind: int, row: IntArray, low: FloatArray, high: FloatArray, negative: BoolArray) -> None:
+    def _refine(
+        self, kind: int, row: IntArray, low: FloatArray, high: FloatArray, negative: BoolArray
+    ) -> None:
         if not row.size:
             return
         equation = _Delayed(self.response, kind, row, self.level)
         with np.errstate(divide="ignore"):
             bottom = np.maximum(np.log(low), np.log(high) - 50.0)
         w = np.exp(newton(equation, bottom, np.log(high), negative))
-        found = Crossings(np.full(len(row), kind, dtype=np.intp), row, w, negative, loop_at(self.response, row, w))
+        found = Crossings(
+            np.full(len(row), kind, dtype=np.intp), row, w, negative, loop_at(self.response, row, w)
+        )
         self.found.append(found)
         if kind == PHASE:
             size = np.where(found.loop.real < 0.0, -found.loop.real, 0.0)
@@ -208,7 +218,11 @@ class _Delayed:
         self.offset = np.log(level[row]) if kind == FALL else np.zeros(len(row))
 
     def keep(self, index: IntArray) -> None:
-        self.columns, self.delay, self.offset = self.columns[..., index], self.delay[index], self.offset[index]
+        self.columns, self.delay, self.offset = (
+            self.columns[..., index],
+            self.delay[index],
+            self.offset[index],
+        )
 
     def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
         w = np.exp(u)
@@ -253,20 +267,24 @@ class _DelayedCurve:
 def delayed_quantities(
     response: Response, kinds: tuple[int, ...], keys: tuple[str, ...]
 ) -> tuple[list[Crossings], dict[str, FloatArray], BoolArray]:
-    """FALL and PHASE crossings that matter, suprema of the curves in `keys`, and whether falls recur for ever.
+    """FALL and PHASE crossings that matter, suprema of the curves in `keys`, and whether falls recur for
+    ever.
 
-    response : M stable loops, every dead time positive. Crossings beyond the frequency where they could be the
+    response : M stable loops, every dead time positive. Crossings beyond the frequency where they could be
+        the
     nearest are left out; a crossing may be listed twice.
     """
     findings = _Findings(response, kinds, keys)
     control = "noise_gain" in keys
     everyone = np.arange(response.loops)
-    findings.read(sample_shared(response, _SHARED, control=control), everyone)
-    zone = findings.fall_zone() if FALL in kinds else (np.full(response.loops, np.inf), np.zeros(response.loops))
-    end = np.maximum(np.maximum(findings.upper_end(), zone[1]), _HIGH / response.dead_time)
-    for rows, nodes in _further_nodes(response, control, end):
+    findings.read(sample_shared(response, SHARED, control=control), everyone)
+    zone = (
+        findings.fall_zone() if FALL in kinds else (np.full(response.loops, np.inf), np.zeros(response.loops))
+    )
+    end = np.maximum(np.maximum(findings.upper_end(), zone[1]), HIGH / response.dead_time)
+    for rows, nodes in further_nodes(response, control, end):
         findings.read(sample(response.rows(rows), nodes, control=control), rows)
-    high = np.full(response.loops, _HIGH)
+    high = np.full(response.loops, HIGH)
     while True:
         end = np.minimum(findings.upper_end() * response.dead_time, _FARTHEST)
         rows = np.flatnonzero(end > high)
@@ -275,106 +293,19 @@ def delayed_quantities(
         start = high[rows].min()
         rows = rows[high[rows] < 1.5 * start]
         reach = min(float(end[rows].max()), 4.0 * start)
-        angles = np.arange(start - 2.0 * _STEP, reach + _STEP, _STEP)
+        angles = np.arange(start - 2.0 * STEP, reach + STEP, STEP)
         findings.read(sample_shared(response.rows(rows), angles, control=control), rows)
         high[rows] = reach
     if FALL in kinds:
-        for rows, nodes in _zone_nodes(*zone, response.dead_time):
+        for rows, nodes in zone_nodes(zone[0], zone[1], response.dead_time):
             findings.read_falls(sample(response.rows(rows), nodes, control=False), rows)
     if control:
         rows, top = findings.envelope_top(high / response.dead_time)
         if rows.size:
             centre = top * response.dead_time[rows]
-            angles = np.maximum(centre + np.arange(-13.0, 13.0, _STEP)[:, None], 1e-3)
+            angles = np.maximum(centre + np.arange(-13.0, 13.0, STEP)[:, None], 1e-3)
             findings.read(sample(response.rows(rows), angles / response.dead_time[rows], control=True), rows)
     gain, size = np.abs(response.ends[1, N] / response.ends[1, D]), np.sqrt(findings.level)
     with np.errstate(divide="ignore"):
         recurring = (gain / np.maximum(1.0 - gain, 0.0) > size) & (size > gain / (1.0 + gain)) & (gain > 0.0)
     return findings.found, {k: findings.best[i] for i, k in enumerate(keys)}, recurring
-
-
-def _zone_nodes(
-    first: FloatArray, last: FloatArray, delay: FloatArray
-) -> Iterator[tuple[IntArray, FloatArray]]:
-    """Nodes a quarter of a radian apart from `first` to `last` [ω], both (M,): (rows, ω (G, rows)), rows repeated.
-
-    Of a long range its two ends: the lowest passage lies within a turn of the first edge where |L| falls steadily,
-    the highest within a turn of the last.
-    """
-    row = np.flatnonzero(first < last)
-    low, high = first[row] * delay[row], last[row] * delay[row]
-    long = high - low > 2.0 * _WINDOW
-    start = np.concatenate((low, high[long] - _WINDOW))
-    stop = np.concatenate((np.where(long, low + _WINDOW, high), high[long]))
-    row = np.concatenate((row, row[long]))
-    count = np.ceil((stop - start) / _STEP).astype(np.intp) + 4
-    for group in _alike(count):
-        steps = np.minimum(np.arange(-2, count[group].max())[:, None], count[group])
-        angles = np.maximum(start[group] + _STEP * steps, 1e-6)
-        yield row[group], angles / delay[row[group]]
-
-
-def _further_nodes(
-    response: Response, control: bool, end: FloatArray
-) -> Iterator[tuple[IntArray, FloatArray]]:
-    """Nodes below the shared list, for slow loops, and round lightly damped roots up to `end`: (rows, ω (G, rows))."""
-    with np.errstate(divide="ignore"):
-        depth = np.ceil(np.log2(_SHARED[0] / (_slowest(response) * response.dead_time)) * _PER_OCTAVE)
-    rows = np.flatnonzero(depth > 0)
-    if rows.size:
-        count = int(min(depth[rows].max(), 200 * _PER_OCTAVE))
-        ladder = 2.0 ** (np.arange(-count, 2) / _PER_OCTAVE)
-        yield rows, _SHARED[0] / response.dead_time[rows] * ladder[:, None]
-    polynomials = (N, D, CONTROL) if control else (N, D)
-    m = response.loops
-    row, x = light_roots(response.squares[:, polynomials].reshape(len(response.squares), -1))
-    row, w = row % m, np.sqrt(np.maximum(x, 0.0))
-    near = np.flatnonzero((w > 0.0) & (w < 1.1 * end[row]))
-    if near.size:
-        yield from _crowded(row[near], w[near], response.dead_time)
-
-
-def _crowded(row: IntArray, w: FloatArray, delay: FloatArray) -> Iterator[tuple[IntArray, FloatArray]]:
-    """Sorted nodes of each row, (rows, ω (G, rows)), with steps of the angle in between; padded with the last."""
-    order = np.lexsort((w, row))
-    row, w = row[order], w[order]
-    fresh = np.append(True, (row[1:] != row[:-1]) | (w[1:] > w[:-1] * (1.0 + 1e-12)))  # nested intervals share points
-    row, w = row[fresh], w[fresh]
-    near = (row[1:] == row[:-1]) & (w[1:] < 1.2 * w[:-1])
-    extra = np.where(near, np.minimum(np.ceil((w[1:] - w[:-1]) * delay[row[1:]] / _STEP), 64), 1).astype(np.intp)
-    if (extra > 1).any():
-        start = np.repeat(np.arange(len(extra)), extra)
-        within = np.arange(len(start)) - np.repeat(np.cumsum(extra) - extra, extra)
-        inserted = w[start] + (w[start + 1] - w[start]) * (within / extra[start])
-        row, w = np.append(row[start], row[-1]), np.append(inserted, w[-1])
-    rows, first, count = np.unique(row, return_index=True, return_counts=True)
-    for group in _alike(count):
-        nodes = np.minimum(np.arange(int(count[group].max()))[:, None], count[group] - 1) + first[group]
-        yield rows[group], w[nodes]
-
-
-def _alike(count: IntArray) -> Iterator[IntArray]:
-    """Groups of places with counts within a factor of two, of 200,000 nodes at most: the longest sets the size."""
-    order = np.argsort(count, kind="stable")
-    while order.size:
-        many = count[order] <= max(2 * int(count[order[0]]), 64)
-        group = order[many][: max(1, 200_000 // int(count[order[many][-1]]))]
-        order = order[len(group) :]
-        yield group
-
-
-def _slowest(response: Response) -> FloatArray:
-    """(M,) a lower bound of the magnitudes of all nonzero roots of N, D and N + D, over 4."""
-    out = np.full(response.loops, np.inf)
-    squares = response.squares
-    degree = np.arange(len(squares), dtype=float)
-    for p in (N, D, CLOSED):
-        size = np.abs(squares[:, p])
-        first = (size > 0.0).argmax(axis=0)
-        lowest = size[first, np.arange(response.loops)]
-        power = degree[:, None] - first
-        with np.errstate(divide="ignore", invalid="ignore"):
-            # Fujiwara's bound on the reciprocal polynomial in x = ω²
-            bound = np.where(power > 0, (lowest / size) ** (1.0 / power), np.inf).min(axis=0)
-        out = np.minimum(out, np.sqrt(0.5 * bound))
-    return 0.25 * out

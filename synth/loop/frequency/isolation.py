@@ -1,12 +1,12 @@
 """Every positive root of many polynomials at once, each in a bracket of its own: a certificate, not a search.
 
-A polynomial written in Bernstein form on an interval has at most as many roots there as its coefficients have sign
-changes, and the parity is right: no change proves that there is none, one change that there is exactly one. The
-positive axis is cut into octaves, which one matrix product turns into Bernstein form for all rows; octaves with two
-changes or more are halved until the count decides.
+A polynomial written in Bernstein form on an interval has at most as many roots there as its coefficients have
+sign changes, and the parity is right: no change proves that there is none, one change that there is exactly
+one. The positive axis is cut into octaves, which one matrix product turns into Bernstein form for all rows;
+octaves with two changes or more are halved until the count decides.
 
-Sources: J. M. Lane and R. F. Riesenfeld, Bounds on a polynomial, BIT 21 (1981); F. Rouillier and P. Zimmermann,
-Efficient isolation of polynomial's real roots, J. Comput. Appl. Math. 162 (2004).
+Sources: J. M. Lane and R. F. Riesenfeld, Bounds on a polynomial, BIT 21 (1981); F. Rouillier and P.
+Zimmermann, Efficient isolation of polynomial's real roots, J. Comput. Appl. Math. 162 (2004).
 
 Letters: m degree, R polynomials (rows of the batch, here columns of the arrays), F intervals.
 """
@@ -48,8 +48,8 @@ def isolate(polynomials: FloatArray, hint: FloatArray | None = None) -> Brackets
     Parameters
     ----------
     polynomials : (m + 1, R), ascending powers of x. A zero polynomial has no roots here.
-    hint : (R,) where an octave that cannot be decided is cut first, instead of in the middle: a point where the
-        polynomial is known to come close to zero. 0 for none.
+    hint : (R,) where an octave that cannot be decided is cut first, instead of in the middle: a point where
+        the polynomial is known to come close to zero. 0 for none.
 
     Returns
     -------
@@ -67,8 +67,8 @@ def isolate(polynomials: FloatArray, hint: FloatArray | None = None) -> Brackets
 def light_roots(polynomials: FloatArray) -> tuple[IntArray, FloatArray]:
     """Points that crowd round roots near the positive axis: (row, x), of polynomials positive on it.
 
-    Some two dozen for every interval that could not be decided: of |p(jω)|² they are the frequencies round a lightly
-    damped root of p, the closer together the lighter it is.
+    Some two dozen for every interval that could not be decided: of |p(jω)|² they are the frequencies round a
+    lightly damped root of p, the closer together the lighter it is.
     """
     near: list[tuple[IntArray, FloatArray, FloatArray]] = []
     _search(polynomials, None, [], near)
@@ -118,7 +118,7 @@ def _filled_signs(polynomials: FloatArray) -> BoolArray:
 
 @cache
 def _window(m: int) -> FloatArray:
-    """((m + 1) cells, m + 1): from powers of x to Bernstein coefficients, coefficient-major, cells ascending."""
+    """((m + 1) cells, m + 1): from powers of x to Bernstein coefficients, cells ascending."""
     out = np.zeros((m + 1, _CELLS, m + 1))
     first, last = 2.0 ** (-_OCTAVES // 2), 2.0 ** (_OCTAVES // 2)
     for j in range(m + 1):
@@ -139,7 +139,9 @@ def _scan(
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
     near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
 ) -> tuple[IntArray, IntArray]:
-    """One window, 2^(40 shift) times the central one: adds to `found`, returns rows with roots below and above it."""
+    """One window, 2^(40 shift) times the central one: adds to `found`, returns rows with roots below and
+    above it.
+    """
     m = len(polynomials) - 1
     matrix = _window(m)
     below, above = [], []
@@ -167,7 +169,15 @@ def _scan(
         if many.size:
             at = row[column[many]]
             cut = np.zeros(len(many)) if hint is None else hint[at] / low[many] - 1.0
-            _halve(coefficients[:, 1 + cell[many], column[many]], at, low[many], 2.0 * low[many], cut, found, near)
+            _halve(
+                coefficients[:, 1 + cell[many], column[many]],
+                at,
+                low[many],
+                2.0 * low[many],
+                cut,
+                found,
+                near,
+            )
     return np.concatenate(below), np.concatenate(above)
 
 
@@ -176,7 +186,8 @@ def _moved(p: FloatArray, shift: int) -> FloatArray:
     mantissa, exponent = np.frexp(p)
     exponent = exponent + (_OCTAVES * shift * np.arange(len(p)))[:, None]
     largest = np.where(mantissa != 0.0, exponent, -(2**30)).max(axis=0)
-    return np.ldexp(mantissa, np.clip(exponent - largest, -1100, 0).astype(np.int32))
+    out: FloatArray = np.ldexp(mantissa, np.clip(exponent - largest, -1100, 0).astype(np.int32))
+    return out
 
 
 def split(coefficients: FloatArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:

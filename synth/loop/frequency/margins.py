@@ -1,6 +1,7 @@
 """From crossings to bandwidth, crossover and margins. M loops.
 
-With Nyquist's count satisfied (the loop is stable) every margin is the nearest crossing; without one it is infinite.
+With Nyquist's count satisfied (the loop is stable) every margin is the nearest crossing; without one it is
+infinite.
 """
 
 from __future__ import annotations
@@ -27,7 +28,8 @@ def highest(m: int, row: IntArray, value: FloatArray, start: float = -np.inf) ->
 
 
 def fall_quantities(m: int, falls: Crossings, no_level: BoolArray) -> dict[str, FloatArray]:
-    """bandwidth: LOWEST ω where |T| falls through |T(0)|/√2, inf where it never does; highest_fall: the HIGHEST, NaN.
+    """bandwidth: LOWEST ω where |T| falls through |T(0)|/√2, inf where it never does; highest_fall: the
+    HIGHEST, NaN.
 
     falls : crossings of |T|, upward ones among them. no_level : (M,) T(0) = 0, both are absent.
     """
@@ -65,8 +67,8 @@ def gain_quantities(response: Response, gains: Crossings) -> dict[str, FloatArra
 def gain_margins(response: Response, phases: Crossings) -> dict[str, FloatArray]:
     """gain_margin_up, gain_margin_down and the smaller of them, gain_margin [dB]; inf where there is none.
 
-    Every ω with L real and negative counts, ω -> 0 and ω -> ∞ as limits; with dead time and L(∞) ≠ 0 the circle
-    |L(∞)|, which the curve follows for ever, is a limit too.
+    Every ω with L real and negative counts, ω -> 0 and ω -> ∞ as limits; with dead time and L(∞) ≠ 0 the
+    circle |L(∞)|, which the curve follows for ever, is a limit too.
     """
     m = response.loops
     negative = np.flatnonzero(phases.loop.real < 0.0)

@@ -1,11 +1,11 @@
 """Suprema of |S|, |T| and |C S| over all frequencies, with the proof that none higher was missed.
 
-A first peak comes from a coarse look (octaves of ω², the most lightly damped pole, both ends) and Newton's method.
-Then the level test: γ is an upper bound if and only if γ² |Δ|² - |P|² has no positive root in x = ω². Where it has,
-the curve is above γ between two roots, Newton starts there, and the test is repeated.
+A first peak comes from a coarse look (octaves of ω², the most lightly damped pole, both ends) and Newton's
+method. Then the level test: γ is an upper bound if and only if γ² |Δ|² - |P|² has no positive root in x = ω².
+Where it has, the curve is above γ between two roots, Newton starts there, and the test is repeated.
 
-Source of the level test: N. A. Bruinsma and M. Steinbuch, A fast algorithm to compute the H∞-norm of a transfer
-function matrix, Systems & Control Letters 14 (1990) 287-293; the roots are counted by `isolation`.
+Source of the level test: N. A. Bruinsma and M. Steinbuch, A fast algorithm to compute the H∞-norm of a
+transfer function matrix, Systems & Control Letters 14 (1990) 287-293; the roots are counted by `isolation`.
 
 Letters: M loops, R = kinds · M curves.
 """
@@ -33,8 +33,8 @@ _MOST_MARGIN = 2e-7
 def suprema(response: Response, poles: ComplexArray, keys: tuple[str, ...]) -> dict[str, FloatArray]:
     """(M,) suprema of the curves in `keys`, of stable loops without dead time.
 
-    Error: the value is that of a frequency found by Newton's method; the test excludes a higher peak by more than
-    1e-9 relative (1e-7 where damping of 1e-4 leaves no more digits in |Δ|²).
+    Error: the value is that of a frequency found by Newton's method; the test excludes a higher peak by more
+    than 1e-9 relative (1e-7 where damping of 1e-4 leaves no more digits in |Δ|²).
     """
     m = response.loops
     numerators = np.array([CURVES[k] for k in keys], dtype=np.intp)
@@ -134,7 +134,8 @@ def climb(
     """Newton's method on the slope of |Δ/P|² in ln ω, F starts at once; keeps the best value met.
 
     target : (F,) place in `best` and `at` (ω of the best) that each start may raise.
-    between : ω low, start, high: the slope's sign moves the ends in, and a step that leaves them is a bisection.
+    between : ω low, start, high: the slope's sign moves the ends in, and a step that leaves them is a
+        bisection.
     """
     if not target.size:
         return
@@ -197,7 +198,8 @@ def _margin(top: FloatArray, bottom: FloatArray, best: FloatArray, at: FloatArra
 def _between(
     row: IntArray, low: FloatArray, high: FloatArray
 ) -> tuple[IntArray, tuple[FloatArray, FloatArray, FloatArray, FloatArray]]:
-    """Where a curve is above the level: between a row's first and second root, its third and fourth, and so on.
+    """Where a curve is above the level: between a row's first and second root, its third and fourth, and so
+    on.
 
     Returns the rows and the brackets of both roots, four x in ascending order.
     """

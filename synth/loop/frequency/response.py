@@ -1,8 +1,8 @@
 """Polynomials on the imaginary axis, split into even and odd halves so that all arithmetic is real.
 
-p(jω) = e(x) + jω o(x) with x = ω². Everything is stored coefficient-major, (coefficients, ..., M), so that one
-operation runs over all loops. Derivatives are taken in u = ln ω, where d/du multiplies the term s^k by k: the
-stack holds p, dp/du and d²p/du² side by side and one Horner scheme serves all of them.
+p(jω) = e(x) + jω o(x) with x = ω². Everything is stored coefficient-major, (coefficients, ..., M), so that
+one operation runs over all loops. Derivatives are taken in u = ln ω, where d/du multiplies the term s^k by k:
+the stack holds p, dp/du and d²p/du² side by side and one Horner scheme serves all of them.
 
 Letters: h degree of the halves, M loops, F points (each belonging to a loop).
 """
@@ -24,7 +24,8 @@ N, D, CLOSED, CONTROL = 0, 1, 2, 3
 class Response:
     """N, D, N + D and C's share of the control path, of M loops, on the imaginary axis.
 
-    halves   (h + 1, 3, 2, 4 M): ascending powers of x; p, dp/du, d²p/du²; even and odd half; polynomial-major columns
+    halves   (h + 1, 3, 2, 4 M): ascending powers of x; p, dp/du, d²p/du²; even and odd half; polynomial-major
+        columns
     squares  (n + 1, 4, M): |p(jω)|² in ascending powers of x
     real, imaginary  (n + 1, M): N conj(D) = real(x) + jω imaginary(x)
     ends     (2, 4, M): the coefficients of s^0 and s^n
@@ -81,7 +82,9 @@ def square(halves: FloatArray, n: int) -> FloatArray:
     return cross(even, even, odd, odd, 1.0, 1, n)
 
 
-def cross(a: FloatArray, b: FloatArray, c: FloatArray, d: FloatArray, sign: float, shift: int, n: int) -> FloatArray:
+def cross(
+    a: FloatArray, b: FloatArray, c: FloatArray, d: FloatArray, sign: float, shift: int, n: int
+) -> FloatArray:
     """a b + sign x^shift c d for (h + 1, R) polynomials, cut to n + 1 coefficients (the rest is zero)."""
     h = len(a) - 1
     out = np.zeros((2 * h + 2, a.shape[1]))
@@ -105,3 +108,11 @@ def log_rates(re: FloatArray, im: FloatArray) -> tuple[FloatArray, FloatArray, F
     """|p|² and the logarithmic derivative p'/p (d/du): (|p|², real part, imaginary part)."""
     size = re[0] * re[0] + im[0] * im[0]
     return size, (re[1] * re[0] + im[1] * im[0]) / size, (im[1] * re[0] - re[1] * im[0]) / size
+
+
+def polynomial(coefficients: FloatArray, x: FloatArray) -> FloatArray:
+    """Horner's scheme: (m + 1, F) ascending coefficients at x (F,) or (G, F)."""
+    value = np.broadcast_to(coefficients[-1], x.shape)
+    for k in range(len(coefficients) - 2, -1, -1):
+        value = value * x + coefficients[k]
+    return value

@@ -17,7 +17,9 @@ _NEAR = 1.3  # squared height below the best, times this, at which a hump is sti
 
 @dataclass(frozen=True, slots=True)
 class Samples:
-    """Values at the nodes, (G, M): ω, |N|², |D|², |control|² (None when not asked for), |Δ|² and N conj(D) e^(-jωθ)."""
+    """Values at the nodes, (G, M): ω, |N|², |D|², |control|² (None when not asked for), |Δ|² and N conj(D)
+    e^(-jωθ).
+    """
 
     w: FloatArray
     numerator: FloatArray
@@ -41,7 +43,9 @@ def sample(response: Response, w: FloatArray, *, control: bool) -> Samples:
 
 
 def sample_shared(response: Response, angle: FloatArray, *, control: bool) -> Samples:
-    """Evaluate at ω = angle/θ with the same angles (G,) for every loop: matrix products and one row of cosines."""
+    """Evaluate at ω = angle/θ with the same angles (G,) for every loop: matrix products and one row of
+    cosines.
+    """
     h = len(response.halves) - 1
     m = response.loops
     # coefficients in powers of the angle: c_k (angle/θ)^k
@@ -95,7 +99,7 @@ def _assemble(
 Brackets = tuple[IntArray, FloatArray, FloatArray, BoolArray]  # row, low ω, high ω, negative just above low
 
 
-def _between(at: tuple[IntArray, IntArray], w: FloatArray, negative: BoolArray) -> Brackets:
+def _between(at: tuple[IntArray, ...], w: FloatArray, negative: BoolArray) -> Brackets:
     node, row = at
     return row, w[node, row], w[node + 1, row], negative[node, row]
 
@@ -111,7 +115,8 @@ def phase_brackets(s: Samples) -> Brackets:
 def fall_brackets(s: Samples, level: FloatArray) -> tuple[Brackets, tuple[IntArray, FloatArray]]:
     """Where |T|² passes `level` between two nodes, and (row, ω) of turning points that may hide two passages.
 
-    A node that is a local extremum of level |Δ|² - |N|² beside which the parabola through three nodes passes zero.
+    A node that is a local extremum of level |Δ|² - |N|² beside which the parabola through three nodes passes
+    zero.
     """
     f = level * s.closed - s.numerator
     negative = f < 0.0
@@ -120,7 +125,11 @@ def fall_brackets(s: Samples, level: FloatArray) -> tuple[Brackets, tuple[IntArr
         f = f / s.numerator  # level / |T|² - 1: of order one, whatever the slope of the polynomials
     low, middle, high = f[:-2], f[1:-1], f[2:]
     same = (negative[:-2] == negative[1:-1]) & (negative[2:] == negative[1:-1]) & (level > 0.0)
-    turn = same & (np.abs(middle) <= np.abs(low)) & (np.abs(middle) <= np.abs(high)) & (np.abs(middle) < 0.3)
+    # the parabola through the three nodes goes beyond the middle one by an eighth of its second difference at
+    # most
+    with np.errstate(invalid="ignore"):
+        reach = np.where(negative[1:-1], -1.0, 1.0) * (middle - 0.25 * (low + high - 2.0 * middle))
+    turn = same & (np.abs(middle) <= np.abs(low)) & (np.abs(middle) <= np.abs(high)) & (reach < 0.05)
     node, row = np.nonzero(turn)
     return brackets, (row, s.w[node + 1, row])
 
@@ -128,7 +137,8 @@ def fall_brackets(s: Samples, level: FloatArray) -> tuple[Brackets, tuple[IntArr
 def humps(
     s: Samples, top: FloatArray, best: FloatArray
 ) -> tuple[IntArray, tuple[FloatArray, FloatArray, FloatArray], FloatArray]:
-    """Local maxima of |P|/|Δ| at the nodes that come near `best`: (row, (ω before, at the top, after), node value).
+    """Local maxima of |P|/|Δ| at the nodes that come near `best`: (row, (ω before, at the top, after), node
+    value).
 
     top : (G, M) |P|². best : (M,) largest value known so far.
     """
@@ -136,7 +146,8 @@ def humps(
         inverse = s.closed / top  # smooth where the peak is sharp
     low, middle, high = inverse[:-2], inverse[1:-1], inverse[2:]
     floor = np.minimum(np.nanmin(inverse, axis=0), best**-2.0) * _NEAR
-    # the parabola through the three nodes dips below the middle one by an eighth of its second difference at most
+    # the parabola through the three nodes dips below the middle one by an eighth of its second difference at
+    # most
     dip = middle - 0.25 * (low + high - 2.0 * middle)
     node, row = np.nonzero((middle <= low) & (middle < high) & (dip <= floor))
     a, b, c = inverse[node, row], inverse[node + 1, row], inverse[node + 2, row]

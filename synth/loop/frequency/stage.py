@@ -25,14 +25,14 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
     ----------
     loops : M stable loops; dead time in all or in none.
     poles : (M, n) scaled closed-loop poles, used as a hint where to look first (NaN is passed over).
-    wanted : names of quantities; those of other stages are passed over. "highest_fall" is the HIGHEST ω at which |T|
-        falls through |T(0)|/√2: NaN where it never does or T(0) = 0, inf where falls recur for ever (dead time with
-        L(∞) ≠ 0).
+    wanted : names of quantities; those of other stages are passed over. "highest_fall" is the HIGHEST ω at
+        which |T| falls through |T(0)|/√2: NaN where it never does or T(0) = 0, inf where falls recur for ever
+        (dead time with L(∞) ≠ 0).
 
     Returns
     -------
-    (M,) scaled values by name: frequencies in 1/time_scale, margins in deg and dB, delay_margin in time_scale,
-    noise_gain in 1/plant_gain. NaN is absent, inf is meant.
+    (M,) scaled values by name: frequencies in 1/time_scale, margins in deg and dB, delay_margin in
+    time_scale, noise_gain in 1/plant_gain. NaN is absent, inf is meant.
     """
     wanted = wanted & KEYS
     if not wanted:
