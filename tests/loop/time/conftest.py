@@ -64,14 +64,12 @@ class Exact:
     def __init__(self, loops, i):
         with mp.workdps(60):
             closed = [mp.mpf(float(c)) for c in loops.closed[i]]
-            self.roots = mp.polyroots(closed, maxsteps=400, extraprec=400) if len(closed) > 1 else []
-            slope = mp.polyder(closed) if hasattr(mp, "polyder") else _derivative(closed)
+            slope = [c * (len(closed) - 1 - k) for k, c in enumerate(closed[:-1])]
+            self.roots = _roots(closed, slope)
             self.residues, self.limit = {}, {}
             for name, top in (("y", loops.numerator), ("u", loops.control), ("d", loops.load)):
                 row = [mp.mpf(float(c)) for c in top[i]]
-                self.residues[name] = [
-                    mp.polyval(row, p) / (p * mp.polyval(slope, p)) for p in self.roots
-                ]
+                self.residues[name] = [_horner(row, p) / (p * _horner(slope, p)) for p in self.roots]
                 self.limit[name] = row[-1] / closed[-1]
 
     def __call__(self, name, t, order=0):
@@ -101,9 +99,27 @@ class Exact:
         return np.unique(np.concatenate(parts))
 
 
-def _derivative(row):
-    n = len(row) - 1
-    return [c * (n - k) for k, c in enumerate(row[:-1])]
+def _horner(row, x):
+    value = mp.mpf(0)
+    for c in row:
+        value = value * x + c
+    return value
+
+
+def _roots(row, slope):
+    """All roots by Aberth's iteration from the double ones."""
+    roots = [mp.mpc(complex(x)) * (1 + mp.mpc(0, 1e-9) * k) for k, x in enumerate(np.roots([float(c) for c in row]))]
+    for _ in range(100):
+        moved = mp.mpf(0)
+        for k, p in enumerate(roots):
+            newton = _horner(row, p) / _horner(slope, p)
+            others = mp.fsum(1 / (p - q) for j, q in enumerate(roots) if j != k)
+            step = newton / (1 - newton * others)
+            roots[k] = p - step
+            moved = max(moved, abs(step / p))
+        if moved < mp.mpf(10) ** -50:
+            return roots
+    raise ValueError("no convergence")
 
 
 @pytest.fixture(name="unity_loop")
