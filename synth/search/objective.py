@@ -148,7 +148,7 @@ class Objective:
         """Score every row on the active cases of its structure, or on the cases given for each structure."""
         judged_on = self.active if cases is None else cases
         count = np.array([len(judged_on[s]) for s in range(len(self.structures))])[rows.structure]
-        most = int(count.max(initial=1))
+        most = max((len(chosen) for chosen in judged_on), default=1)  # one width, whichever rows are asked for
         table = np.full((len(self.structures), most), -1)
         for s, chosen in enumerate(judged_on):
             table[s, : min(len(chosen), most)] = chosen[:most]
