@@ -90,10 +90,21 @@ def _quadrature(response: Response) -> FloatArray:
 def refine(response: Response, kind: IntArray, brackets: Brackets, level: FloatArray) -> Crossings:
     """The crossings of bracketed roots of loops without dead time (or of kind GAIN)."""
     row = brackets.row % response.loops
-    equation = _Rational(response, kind, row, level)
+    squared = np.where(kind == FALL, level[row], 1.0)
+    equation = _Rational(response, kind, row, squared)
     u = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
     w = np.exp(u)
     return Crossings(kind, row, w, brackets.negative, loop_at(response, row, w))
+
+
+def gain_frequencies(response: Response, gain: FloatArray) -> tuple[IntArray, FloatArray]:
+    """(row, ω) of every frequency at which |L| is `gain` (M,); 0 asks for none."""
+    polynomials = (gain * gain * response.squares[:, D] - response.squares[:, N]) * (gain > 0.0)
+    brackets = isolate(polynomials)
+    row = brackets.row
+    equation = _Rational(response, np.full(len(row), GAIN, dtype=np.intp), row, gain[row] ** 2)
+    u = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
+    return row, np.exp(u)
 
 
 class Equation(Protocol):
@@ -142,11 +153,11 @@ def newton(equation: Equation, bottom: FloatArray, top: FloatArray, negative: Bo
 class _Rational:
     """ln|ratio|² less its level, or the angle of ±N/D nearest to zero, for loops without dead time."""
 
-    def __init__(self, response: Response, kind: IntArray, row: IntArray, level: FloatArray) -> None:
+    def __init__(self, response: Response, kind: IntArray, row: IntArray, squared: FloatArray) -> None:
         first = response.columns(N, row, 1)
         second = response.columns(np.where(kind == FALL, CLOSED, D), row, 1)
         self.columns = np.stack((first, second), axis=3)  # (h + 1, 2, 2, 2, F)
-        self.offset = np.where(kind == FALL, np.log(np.where(level > 0.0, level, 1.0))[row], 0.0)
+        self.offset = np.log(squared)
         self.phase = kind == PHASE
 
     def keep(self, index: IntArray) -> None:

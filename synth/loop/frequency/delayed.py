@@ -19,7 +19,15 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
-from synth.loop.frequency.crossings import FALL, PHASE, Crossings, fall_level, loop_at, newton
+from synth.loop.frequency.crossings import (
+    FALL,
+    PHASE,
+    Crossings,
+    fall_level,
+    gain_frequencies,
+    loop_at,
+    newton,
+)
 from synth.loop.frequency.isolation import isolate
 from synth.loop.frequency.nodes import HIGH, SHARED, STEP, further_nodes, zone_nodes
 from synth.loop.frequency.peaks import CURVES, climb
@@ -98,16 +106,13 @@ class _Findings:
         """
         size = np.sqrt(self.level)
         low, high = size / (1.0 + size), np.where(size < 1.0, size / np.maximum(1.0 - size, 1e-300), 0.0)
-        squares, m = self.response.squares, self.m
-        limits = ((low * 0.999, low > 0.0), (high * 1.001, high > 0.0))
-        polynomials = [(g * g * squares[:, D] - squares[:, N]) * keep for g, keep in limits]
-        brackets = isolate(np.concatenate(polynomials, axis=1))
         floor = HIGH / self.response.dead_time
-        row, edge, start = brackets.row % m, np.sqrt(brackets.high), np.sqrt(brackets.low)
-        beyond = edge > floor[row]
-        first, last = np.full(m, np.inf), np.zeros(m)
-        np.minimum.at(first, row[beyond], np.maximum(start, floor[row])[beyond])
-        np.maximum.at(last, row[beyond], edge[beyond])
+        first, last = np.full(self.m, np.inf), np.zeros(self.m)
+        for limit in (low * 0.999, high * 1.001):
+            row, edge = gain_frequencies(self.response, limit)
+            row, edge = row[edge > floor[row]], edge[edge > floor[row]]
+            np.minimum.at(first, row, edge)
+            np.maximum.at(last, row, edge)
         n_at, d_at = (_magnitude(self.response, p, floor) for p in (N, D))
         inside = (n_at > low * d_at) & ((n_at < high * d_at) | (high == 0.0)) & (low > 0.0)
         first[inside] = floor[inside]

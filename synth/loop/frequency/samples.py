@@ -144,8 +144,8 @@ def humps(
     """
     with np.errstate(divide="ignore", invalid="ignore"):
         inverse = s.closed / top  # smooth where the peak is sharp
+        floor = np.minimum(np.nanmin(inverse, axis=0), best**-2.0) * _NEAR  # best is 0 where P is
     low, middle, high = inverse[:-2], inverse[1:-1], inverse[2:]
-    floor = np.minimum(np.nanmin(inverse, axis=0), best**-2.0) * _NEAR
     # the parabola through the three nodes dips below the middle one by an eighth of its second difference at
     # most
     dip = middle - 0.25 * (low + high - 2.0 * middle)
