@@ -143,6 +143,10 @@ class _Evaluation:
                 return self.total(terms)
             case Product(factors):
                 return self.multiplied(factors)
+            case Power(Laplace(), exponent, _) if 0 < exponent <= MAX_DEGREE:
+                power = np.zeros((self.count, exponent + 1))
+                power[:, 0] = 1.0
+                return plain(power)
             case Power(base, exponent, position):
                 return self.raised(self.fraction(base), exponent, position)
             case Call("sqrt", argument, position):

@@ -83,7 +83,7 @@ def multiplied(start: FloatArray, factors: tuple[FloatArray, ...] | list[FloatAr
     _check_degree(start, *factors)
     out = start
     for factor in factors:
-        out = product(out, factor)
+        out = out * factor if out.shape[1] == 1 else product(out, factor)
     return out
 
 
