@@ -42,6 +42,7 @@ EFFORTS = {
 }
 PICKS = 6
 MOST_CASE_TURNS = 12
+HOPELESS = -5.0  # worst search slack beyond which the outer layer is not sent
 
 
 class Campaign:
@@ -72,6 +73,7 @@ class Campaign:
         self.begun = time.perf_counter()
         self.interrupted = False
         self.limited = False
+        self.explored = 0
         self.stage = "starts"
         self.stages: dict[str, float] = {}
         self._lap = self.begun
@@ -132,7 +134,34 @@ class Campaign:
             self.round(open_, None)
             self.enter("cases")
             self.examine(open_)
-        self.enter("rounds")
+        self.enter("exploration")
+        self._explore()
+
+    def _explore(self) -> None:
+        """The outer layer, where the rounds left doubt: hard sheets, and always on a thorough budget."""
+        open_ = [s.number for s in self.standings if s.parameters > 1 and self._doubtful(s)]
+        room = self.effort.evaluations - self.objective.evaluations
+        if not open_ or not self.effort.trials or room <= 0 or self.halted():
+            return
+        from synth.search.explore import explore
+
+        self.explored = explore(self, open_, self.effort.trials)
+        self.enter("cases")
+        self.examine(open_)
+
+    def _doubtful(self, standing: Standing) -> bool:
+        """Whether more of the same may have missed a basin of this structure.
+
+        On a thorough budget always; else where restarts do not agree, and either the structure has more than four
+        parameters, or there are several cases, or nothing meets the sheet.
+        """
+        if self.settings.budget == "thorough":
+            return True
+        if standing.settled or standing.best <= HOPELESS:
+            return False
+        several = len(self.objective.case_names) > 1
+        nothing = all(s.best < 0.0 for s in self.standings)
+        return standing.parameters > 4 or several or nothing
 
     def round(self, numbers: list[int], seeds: Rows | None) -> None:
         """Starts, picks and polish of these structures in lockstep; from the second round on with evolution."""
@@ -153,7 +182,7 @@ class Campaign:
                 standing.signs = signs or (1, -1)
             picks.append(index[distinct(rows.take(index), guide[index], PICKS)])
         later = [n for n in numbers if self.standings[n].rounds > 0]
-        self._polish(rows.take(np.concatenate(picks)), Pace())
+        self.polish_in(rows.take(np.concatenate(picks)), Pace())
         if later and self.effort.generations and not self.halted():
             self._evolve(later, rows, guide)
         share = (self.objective.evaluations - before) // max(len(numbers), 1)
@@ -178,12 +207,14 @@ class Campaign:
         origin = np.array([self.origin(r.rule, r.source) for r in rules])
         return joined([self.objective.rows_of(n, np.array([r.theta for r in rules]), origin), drawn])
 
-    def _polish(self, rows: Rows, pace: Pace) -> Polished:
+    def polish_in(self, rows: Rows, pace: Pace) -> Polished:
+        """Polish rows of any structures and take in where they end."""
         done = polish(self.objective, rows, pace=pace, stop=self.halted)
-        self._record(done)
+        self.record(done)
         return done
 
-    def _record(self, done: Polished) -> None:
+    def record(self, done: Polished) -> None:
+        """Take polished rows into the standings of their structures."""
         for n in np.unique(done.rows.structure):
             index = np.flatnonzero(done.rows.structure == n)
             index = index[np.argsort(~done.finished[index], kind="stable")]
@@ -211,7 +242,7 @@ class Campaign:
         for n in np.unique(members.structure):
             index = np.flatnonzero(members.structure == n)
             picks.append(index[distinct(members.take(index), score[index], 3, 0.05)])
-        self._polish(members.take(np.concatenate(picks)), Pace(radius=0.1, halve=()))
+        self.polish_in(members.take(np.concatenate(picks)), Pace(radius=0.1, halve=()))
 
     # -- plant cases
 
@@ -259,7 +290,7 @@ class Campaign:
                 parts.append(tops.take(np.arange(min(4, len(tops)))))
             standing = self.standings[n]
             standing.tops, standing.guides, standing.optima = None, np.zeros(0), []
-        self._polish(joined(parts), Pace(radius=0.15, halve=(3,)))
+        self.polish_in(joined(parts), Pace(radius=0.15, halve=(3,)))
         for n in numbers:
             self.standings[n].judge()
 

@@ -77,6 +77,7 @@ def propose(
         interrupted=campaign.interrupted,
         limited=campaign.limited,
         stages=dict(campaign.stages),
+        explored=campaign.explored,
     )
 
 
