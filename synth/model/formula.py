@@ -123,6 +123,7 @@ class _Evaluation:
         self.rows = rows
         self.count = len(rows)
         self.position = 0
+        self.s = plain(np.tile([1.0, 0.0], (self.count, 1)))
 
     def refuse(self, bad: BoolArray, message: str, position: int) -> None:
         for i in np.flatnonzero(bad):
@@ -138,7 +139,7 @@ class _Evaluation:
             case Name(name, _):
                 return plain(self.values[name][:, None])
             case Laplace():
-                return plain(np.tile([1.0, 0.0], (self.count, 1)))
+                return self.s
             case Sum(terms):
                 return self.total(terms)
             case Product(factors):

@@ -94,8 +94,11 @@ def _check_degree(*factors: FloatArray) -> None:
 
 def summed(a: FloatArray, b: FloatArray) -> FloatArray:
     """a + b; a coefficient that is nothing but rounding error is exactly 0, or it would be a pole far out."""
-    width = max(a.shape[1], b.shape[1])
-    a, b = trimmed(a, width - 1), trimmed(b, width - 1)
+    if a.shape[1] != b.shape[1]:
+        a, b = (b, a) if a.shape[1] < b.shape[1] else (a, b)
+        wider = np.zeros_like(a)
+        wider[:, a.shape[1] - b.shape[1] :] = b
+        b = wider
     total = a + b
     noise = np.abs(total) <= 8.0 * np.finfo(float).eps * np.minimum(np.abs(a), np.abs(b))
     return np.where(noise, 0.0, total) if noise.any() else total

@@ -219,12 +219,12 @@ def test_the_caret_stands_under_the_place():
     ids=["sum", "fractions", "product", "poles", "brackets", "signs", "powers", "continued", "long"],
 )
 def test_large_formulas_get_an_answer_or_a_refusal_in_time(text, outcome):
-    start = time.perf_counter()
+    start = time.process_time()  # other work on the machine does not count
     if outcome is None:
         rational(text, a=[1.0])
     else:
         assert complaint(text, a=[1.0]).message == outcome
-    assert time.perf_counter() - start < 2.0
+    assert time.process_time() - start < 2.0
 
 
 # against other arithmetic

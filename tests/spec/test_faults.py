@@ -390,12 +390,12 @@ def test_preference_search_and_reference(text, fault):
     ids=["names", "10 MB", "parameters", "cases", "bounds", "list"],
 )
 def test_large_texts_are_answered_in_time(text):
-    start = time.perf_counter()
+    start = time.process_time()  # other work on the machine does not count
     try:
         parse_spec(text)
     except InputError as error:
         assert len(error.faults) <= 201  # noqa: PT017
-    assert time.perf_counter() - start < 2.0
+    assert time.process_time() - start < 2.0
 
 
 PIECES = st.sampled_from(
