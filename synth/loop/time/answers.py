@@ -20,7 +20,7 @@ from synth.loop.time.survey import RESOLUTION, Survey
 FINE = 5e-3
 """Cubic error allowed in a cell, relative to the size of the signal. Cells that matter are split further."""
 
-PASS_BLOCKS = 1400
+PASS_BLOCKS = 2500
 """Blocks handled at once, so that a pass stays in cache."""
 
 LONG = 128

@@ -72,12 +72,13 @@ def _solve(
         with np.errstate(all="ignore"):
             ratio = f * f2 / (f1 * f1)
             step = -f / (f1 * (1.0 - 0.5 * ratio))
+        size, low_end, high_end = width[open_], left[open_], right[open_]
         aim = now + step
-        inside = (aim >= left[open_]) & (aim <= right[open_])
-        size = width[open_]
+        inside = (aim >= low_end - NEAR * size) & (aim <= high_end + NEAR * size)
+        aim = np.minimum(np.maximum(aim, low_end), high_end)  # a zero at an end may be aimed at from just outside
         done = inside & (np.abs(step) <= NEAR * size) & (np.abs(ratio) <= NEAR)
-        done |= (f == 0.0) | (right[open_] - left[open_] <= 4e-16 * right[open_])
-        aim = np.where(f == 0.0, now, np.where(inside, aim, 0.5 * (left[open_] + right[open_])))
+        done |= (f == 0.0) | (high_end - low_end <= 4e-16 * high_end)
+        aim = np.where(f == 0.0, now, np.where(inside, aim, 0.5 * (low_end + high_end)))
         step = aim - now
         if level is None:
             x = x + step * (f + step * (0.5 * f1 + step * f2 / 6.0))

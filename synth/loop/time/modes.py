@@ -65,6 +65,7 @@ class Modes:
         m, s, slots = residue.shape
         self._pole = np.ascontiguousarray(pole.T)
         self._residue = np.ascontiguousarray(residue.reshape(m * s, slots).T)
+        self._by_signal = np.ascontiguousarray(residue.transpose(1, 0, 2))
         self.fourth = self.size * (self.swing**4)[:, None]
 
     def __len__(self) -> int:
@@ -108,6 +109,10 @@ class Modes:
         decay = np.empty(grow.shape)
         decay[:2] = np.abs(grow[:2])
         for k in range(2, octaves + 1):
+            if k % 16 == 0:  # squaring doubles the rounding each time
+                grow[k] = np.exp(self.pole * (t0 * 2.0 ** (k - 1))[:, None])
+                decay[k] = np.abs(grow[k])
+                continue
             np.multiply(grow[k - 1], grow[k - 1], out=grow[k])
             np.multiply(decay[k - 1], decay[k - 1], out=decay[k])
         time = np.zeros((m, octaves + 1))
@@ -155,25 +160,25 @@ class Modes:
 
         The matrix of e^(p t) r by that of e^(p h k), k = 0..8, made by doubling: two exponentials a mode.
         """
-        residue = self.residue[loop] if signal is None else self.residue[loop, signal][:, None]
-        pole = self.pole[loop]
-        blocks, s, slots = residue.shape
+        m, s, slots = self.residue.shape
+        blocks = len(loop)
+        if signal is None:
+            residue = self._by_signal.take(loop, axis=1)
+        else:
+            residue = self.residue.reshape(m * s, slots).take(loop * s + signal, axis=0)[None]
+        s = len(residue)
+        pole = self.pole.take(loop, axis=0)
         step = pole * h[:, None]
-        right = np.empty((blocks, CELLS + 1, slots), dtype=complex)
-        right[:, 0] = 1.0
-        power = np.exp(step)
-        right[:, 1] = power
-        filled = 2
-        while filled <= CELLS:
-            power = right[:, filled - 1] * right[:, 1] if filled > 2 else power * power
-            take = min(filled, CELLS + 1 - filled)
-            np.multiply(right[:, :take], power[:, None], out=right[:, filled : filled + take])
-            filled += take
-        left = np.empty((blocks, 2 * s, slots), dtype=complex)
-        np.multiply(residue, np.exp(pole * t[:, None])[:, None], out=left[:, :s])
-        np.multiply(left[:, :s], step[:, None], out=left[:, s:])
+        right = np.empty((CELLS + 1, blocks, slots), dtype=complex)
+        right[0] = 1.0
+        np.exp(step, out=right[1])
+        for k in range(2, CELLS + 1):
+            np.multiply(right[k // 2], right[k - k // 2], out=right[k])
+        left = np.empty((2 * s, blocks, slots), dtype=complex)
+        np.multiply(residue, np.exp(pole * t[:, None]), out=left[:s])
+        np.multiply(left[:s], step, out=left[s:])
         np.conjugate(left, out=left)
-        table = np.matmul(_real(left), _real(right).transpose(0, 2, 1))
+        table = np.matmul(left.view(np.float64).transpose(1, 0, 2), right.view(np.float64).transpose(1, 2, 0))
         turned = np.ascontiguousarray(table.reshape(blocks, 2 * s * (CELLS + 1)).T)
         turned = turned.reshape(2 * s, CELLS + 1, blocks)
         return turned[:s], turned[s:]

@@ -17,6 +17,7 @@ class Scan:
 
     owner, first   (A,) loop numbers, and their first block; `last` the last
     loop, t, h     (P,)
+    local          (P,) number of the block's loop within `owner`
     value, slope   (S, 9, P) slope times h
     miss           (S, P) cubic error
     """
@@ -24,6 +25,7 @@ class Scan:
     owner: IntArray
     first: IntArray
     last: IntArray
+    local: IntArray
     loop: IntArray
     t: FloatArray
     h: FloatArray
@@ -89,4 +91,5 @@ def scan(
     """Evaluate the blocks (loop, t, h); `first` counts from 0 in this pass."""
     value, slope = modes.nodes(loop, t, h)
     last = np.append(first[1:], len(loop)) - 1
-    return Scan(owner, first, last, loop, t, h, value, slope, miss)
+    local = np.repeat(np.arange(len(owner)), last - first + 1)
+    return Scan(owner, first, last, local, loop, t, h, value, slope, miss)

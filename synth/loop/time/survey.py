@@ -208,8 +208,9 @@ class Survey:
             valid = cell >= 0
         order[some] = block * CELLS + cell
         # doubtful cells on the side where a passage would matter more
-        mine = order[np.searchsorted(s.owner, cells.loop)]
-        place = (doubtful % blocks_here) * CELLS + doubtful // blocks_here
+        at_cell, at_block = np.divmod(doubtful, blocks_here)
+        mine = order.take(s.local.take(at_block))
+        place = at_block * CELLS + at_cell
         touching = ((high > p.high) | (low < p.low)) & ((place > mine) if p.last else (place < mine))
         few = cells.rows(touching)
         passing = s.cells(p.signal, (cell * blocks_here + block)[valid], s.owner[some][valid])
