@@ -97,7 +97,8 @@ def _could_be_better(outcome: Outcome, untouched: Candidate) -> list[tuple[str, 
 
 
 def _moves(new: Candidate, moved: dict[str, list[float]], index: int) -> tuple[str, dict[str, Any]]:
-    text = f"A {new.structure} with other values does it: candidate {index + 1}, slack {percent(new.worst_slack)}"
+    slack = percent(new.worst_slack)
+    text = f"A {new.structure} with other values does it: candidate {index + 1}, slack {slack}"
     changes = {key: now / old - 1.0 for key, (old, now) in moved.items() if old}
     if changes:
         key = max(changes, key=lambda k: abs(changes[k]))

@@ -34,7 +34,7 @@ def verdict(spec: Spec, outcome: Outcome, violated: Sequence[Limit], *, subject:
     who = subject or f"the first candidate, {_article(first.structure)}"
     if first.meets_all:
         return _met(scene, who, subject is None)
-    return _missed(scene, who if subject else f"the nearest, {_article(first.structure)}", subject is None)
+    return _missed(scene, who if subject else f"the nearest, {_article(first.structure)},", subject is None)
 
 
 def _article(structure: str) -> str:

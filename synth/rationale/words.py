@@ -5,6 +5,7 @@ from __future__ import annotations
 from synth.loop.quantities import QUANTITIES, Measure
 from synth.rationale.figures import quantity
 
+NO_UNIT = ("-", "1")  # how sheets write that u or y has none
 WORD = {"min": "at least", "max": "at most"}
 
 
@@ -19,6 +20,8 @@ def plant_unit(unit: str, u: str = "", y: str = "") -> str:
 
     u, y : unit of the plant's input and output; a disturbance d enters at the input.
     """
+    if unit == "u" and u in NO_UNIT:
+        return ""
     own = {"u": u or "u", "d": u or "d", "y": y or "y"}
     return " ".join(own.get(part, part) for part in unit.split())
 

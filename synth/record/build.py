@@ -13,7 +13,6 @@ import numpy as np
 
 import synth
 from synth.loop.closed_loop import Rational
-from synth.loop.poles.stage import pole_stage
 from synth.loop.quantities import EVERY_QUANTITY
 from synth.rationale import Said, Scene, cautions, rationale, uncounted, worst_of
 from synth.rationale.closest import reason
@@ -40,6 +39,7 @@ from synth.record.format import (
 )
 from synth.record.numbers import plain
 from synth.record.plant_words import form_words
+from synth.record.poles import LoopPoles, every_pole, rows_of
 from synth.requirements import Bound
 from synth.search.outcome import Candidate as Found
 from synth.search.outcome import Outcome
@@ -117,7 +117,10 @@ def build(given: Given) -> Record:
             "limited": outcome.limited,
         },
     }
-    record["candidates"] = [candidate_part(given, i) for i in range(len(outcome.candidates))]
+    if outcome.candidates:
+        rows = rows_of([(c.numerator, c.denominator) for c in outcome.candidates])
+        every = every_pole(outcome.plants, rows)
+        record["candidates"] = [candidate_part(given, i, every[i]) for i in range(len(outcome.candidates))]
     record["cautions"] = _cautions(given, record)
     return record
 
@@ -209,8 +212,8 @@ def _roots(polynomial: Any) -> list[list[float]]:
     return sorted(found, key=lambda r: (math.hypot(*r), r[0], -r[1]))
 
 
-def candidate_part(given: Given, index: int) -> Candidate:
-    """One candidate, in full."""
+def candidate_part(given: Given, index: int, poles: Sequence[LoopPoles]) -> Candidate:
+    """One candidate, in full. poles : of its loop on every case."""
     spec, outcome = given.spec, given.outcome
     found = outcome.candidates[index]
     scene = Scene(spec, outcome, found)
@@ -251,7 +254,7 @@ def candidate_part(given: Given, index: int) -> Candidate:
         "rationale": [{"text": text, "facts": clean(fact.data)} for text, fact in rationale(scene)],
     }
     _settings(part, found)
-    _poles_and_curves(part, scene, loops)
+    _poles_and_curves(part, scene, loops, poles)
     return part
 
 
@@ -267,25 +270,24 @@ def _settings(part: Candidate, found: Found) -> None:
     part["units"] = units
 
 
-def _poles_and_curves(part: Candidate, scene: Scene, compensator: Rational) -> None:
+def _poles_and_curves(
+    part: Candidate, scene: Scene, compensator: Rational, poles: Sequence[LoopPoles]
+) -> None:
     """Poles on every case; the modes and the curves of the nominal one, where it is stable."""
     plants = scene.outcome.plants
-    for k, name in enumerate(scene.outcome.case_names):
-        loop = curves.one_loop(plants, compensator, k)
-        scale = float(loop.time_scale[0])
-        part["closed_loop_poles"][name] = curves.pole_list(pole_stage(loop, ()).poles[0], scale)
-        if scene.candidate.stable[k]:
-            found = curves.modes(plants.rows(np.array([k])), compensator)
-            part["uncounted_poles"][name] = _with_conjugates([m for m in found if not m["counted"]])
-            if k == 0:
-                part["modes"] = found
+    for name, found, stable in zip(scene.outcome.case_names, poles, scene.candidate.stable, strict=True):
+        part["closed_loop_poles"][name] = found.poles
+        if stable:
+            part["uncounted_poles"][name] = _with_conjugates([m for m in found.modes if not m["counted"]])
     if not scene.candidate.stable[0]:
         return
+    part["modes"] = poles[0].modes
     loop = curves.one_loop(plants, compensator)
+    slowest = scene.nominal("decay_rate")
     part["curves"] = {
-        "step": curves.step(loop, scene.nominal("settling_time")),
+        "step": curves.step(loop, scene.nominal("settling_time"), slowest),
         "loop": curves.loop_gain(loop, scene.nominal("crossover")),
-        "root_locus": curves.locus(loop, part["closed_loop_poles"][scene.case(0)]),
+        "root_locus": curves.locus(loop, poles[0].poles),
     }
 
 

@@ -1,4 +1,4 @@
-"""The curves a report draws, of the nominal loop: step, loop gain, locus; and its poles."""
+"""The curves a report draws, of the nominal loop: step, loop gain, locus."""
 
 from __future__ import annotations
 
@@ -8,20 +8,18 @@ from typing import Any, cast
 
 import numpy as np
 
-from synth.loop.arrays import ComplexArray, FloatArray, IntArray
+from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.closed_loop import Loops, Rational, close
-from synth.loop.modes_view import modes_of
 from synth.loop.poles.delayed import delayed_poles
 from synth.loop.poles.locus import root_locus
-from synth.loop.poles.stage import pole_stage
 from synth.loop.time.curves import step_curves
-from synth.record.format import Mode, Pole
+from synth.record.format import Pole
 from synth.record.numbers import plain
 
 STEP_POINTS = 240
 LOOP_POINTS = 200
 LOCUS_POINTS = 260  # of one branch
-DELAY_GAINS = 140  # gains at which the locus of a loop with dead time is looked at
+DELAY_GAINS = 110  # gains at which the locus of a loop with dead time is looked at
 DIGITS = 6  # a picture needs no more, and a record stays small
 
 
@@ -35,31 +33,14 @@ def short(values: Sequence[float] | FloatArray) -> list[Any]:
     return [plain(float(f"{v:.{DIGITS - 1}e}")) if math.isfinite(v) else plain(v) for v in map(float, values)]
 
 
-def modes(plant: Rational, compensator: Rational) -> list[Mode]:
-    """Closed-loop poles of the first row of each with their shares, largest first;
-
-    A pair once, its upper half.
-    """
-    return [
-        {"pole": [m.pole.real, m.pole.imag], "share": plain(m.share), "counted": m.counted}
-        for m in modes_of(plant, compensator).modes
-    ]
-
-
-def pole_list(poles: ComplexArray, scale: float) -> list[Pole]:
-    """(q,) scaled, NaN-padded poles as the record lists them, in rad/s."""
-    return [[float(p.real) / scale, float(p.imag) / scale] for p in poles if not math.isnan(p.real)]
-
-
-def step(loop: Loops, settling: float) -> dict[str, Any]:
+def step(loop: Loops, settling: float, slowest: float) -> dict[str, Any]:
     """y and u of a unit reference step of one stable loop, until a while after it has settled.
 
-    settling : settling time [s], NaN where it has none (the slowest pole decides then).
+    settling : settling time [s]; where it is NaN or 0 the slowest pole, decaying with `slowest` [1/s],
+    decides.
     """
     scale, gain = float(loop.time_scale[0]), float(loop.plant_gain[0])
-    poles = pole_stage(loop, ()).poles[0]
-    slowest = float(np.nanmin(-poles.real)) if np.isfinite(poles.real).any() else 1.0
-    end = 1.4 * settling / scale if math.isfinite(settling) and settling > 0.0 else 6.0 / max(slowest, 1e-12)
+    end = 1.4 * settling / scale if math.isfinite(settling) and settling > 0.0 else 6.0 / (slowest * scale)
     end += float(loop.dead_time[0])
     early = np.geomspace(1e-3 * end, end, STEP_POINTS // 3)
     t = np.unique(np.concatenate([np.linspace(0.0, end, STEP_POINTS - len(early)), early]))

@@ -80,6 +80,8 @@ def _requirements(view: View, candidate: Candidate, width: int) -> list[Text]:
 def _also(view: View, candidate: Candidate, width: int) -> list[Text]:
     """The quantities nobody asked for, in one paragraph: what a review wants to know all the same."""
     asked = {r["quantity"] for r in view.record["requirements"]}
+    if "gain_margin" in asked:  # its two sides have a line of their own below
+        asked |= {"gain_margin_up", "gain_margin_down"}
     parts = []
     for key, worst in candidate["quantities"].get("worst", {}).items():
         value = number(worst.get("value"))
@@ -104,7 +106,7 @@ def _footnotes(view: View, candidate: Candidate, width: int) -> list[Text]:
     up, down = view.worst(candidate, "gain_margin_up"), view.worst(candidate, "gain_margin_down")
     if "gain_margin" in asked and (math.isfinite(up) or math.isfinite(down)):
         peak = view.worst(candidate, "sensitivity_peak")
-        text = f"Gain margin upward {figure(up)} dB, downward {figure(down)} dB; Ms {figure(peak)}."
+        text = f"Gain margin upward {quantity(up, 'dB')}, downward {quantity(down, 'dB')}; Ms {figure(peak)}."
         out.append(hanging("  ", text, width, style="dim"))
     elif "gain_margin" in asked and math.isinf(view.worst(candidate, "gain_margin")):
         peak = view.worst(candidate, "sensitivity_peak")

@@ -182,7 +182,7 @@ class Chart:
         least_margin : columns kept for the numbers at the left, so that two charts stand under one another.
         """
         labels = {}
-        for tick in ticks(*self.y, max(2, self.canvas.rows // 3)):
+        for tick in ticks(*self.y, max(2, self.canvas.rows // 2)):
             labels[math.floor(self.place(self.x[0], tick)[1] / 4)] = figure(tick)
         margin = max([len(t) for t in labels.values()] + [least_margin])
         out = [Text(" " * indent + y_word, style="axis")] if y_word else []

@@ -143,7 +143,8 @@ def locus(view: View, candidate: Candidate, width: int) -> list[Text]:
     """
     curves = candidate["curves"].get("root_locus") or {}
     branches = curves.get("branches", [])
-    if not branches:
+    points = curves.get("points", [])
+    if not branches and not points:
         return []
     closed = [(re, abs(im)) for re, im in curves.get("closed", [])]
     starts = [(re, abs(im)) for re, im in curves.get("poles", [])]
@@ -161,8 +162,11 @@ def locus(view: View, candidate: Candidate, width: int) -> list[Text]:
     kinds: tuple[Line, ...] = ("solid", "long")
     for i, branch in enumerate(branches):
         chart.curve(_floats(branch["re"]), [abs(v) for v in _floats(branch["im"])], "second", kinds[i % 2])
-    for points, letter, style in ((starts, "×", "head"), (ends, "○", "head"), (closed, "◆", "first")):
-        for re, im in points:
+    for re, im in points:
+        x, y = chart.place(re, abs(im))
+        chart.canvas.dot(math.floor(x), math.floor(y), "second")
+    for roots, letter, style in ((starts, "×", "head"), (ends, "○", "head"), (closed, "◆", "first")):
+        for re, im in roots:
             chart.mark(re, im, letter, style)
     outside = [(re, im) for re, im in closed if not (left <= re <= right and im <= top)]
     lines = [heading("Root locus", "gain of C from 0 up; × open loop, ○ zeros, ◆ closed loop; upper half")]

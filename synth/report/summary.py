@@ -48,7 +48,10 @@ def ranked(record: Record, width: int) -> list[Text]:
     if not candidates:
         return []
     several = view.several_cases
-    lines = [heading("Candidates", _examined(record))]
+    examined = _examined(record)
+    lines = [heading("Candidates", examined if len(examined) + 12 <= width else "")]
+    if not lines[0].plain.endswith(examined):
+        lines.append(hanging("  ", examined, width, style="dim"))
     table = Columns((">", "<", ">", ">", "<"), indent=1)
     table.add("", "structure", "order", "slack", "held back by", style="dim")
     for c in candidates:

@@ -6,11 +6,12 @@ Plain and quiet; sense never rests on colour.
 from __future__ import annotations
 
 import os
+import re
 import sys
 from collections.abc import Sequence
-from io import StringIO
 from typing import IO
 
+from rich.cells import cell_len
 from rich.console import Console
 from rich.text import Text
 from rich.theme import Theme
@@ -66,7 +67,7 @@ def hanging(first: str | Text, body: str | Text, width: int, *, style: str = "")
     label = first if isinstance(first, Text) else Text(first)
     text = body.copy() if isinstance(body, Text) else Text(body, style=style)
     indent = label.cell_len
-    lines = text.wrap(_MEASURE, max(20, width - indent))
+    lines = text.divide(_breaks(text.plain, max(20, width - indent)))
     out = Text()
     out.append_text(label)
     for i, line in enumerate(lines):
@@ -77,7 +78,28 @@ def hanging(first: str | Text, body: str | Text, width: int, *, style: str = "")
     return out
 
 
-_MEASURE = Console(file=StringIO(), width=WIDEST)  # wrapping asks for a console, whatever it prints on
+def _breaks(text: str, room: int) -> list[int]:
+    """Where lines of at most `room` columns begin: at words, and never between a number and its unit."""
+    starts: list[int] = []
+    line = 0
+    words = list(re.finditer(r"[^ ]+", text))
+    groups: list[tuple[int, int]] = []  # what must stay together
+    for before, word in zip([None, *words], words, strict=False):
+        if before is not None and word.group().rstrip(".,;:)") in _UNITS and before.group()[-1].isdigit():
+            groups[-1] = (groups[-1][0], word.end())
+        else:
+            groups.append((word.start(), word.end()))
+    for start, end in groups:
+        if cell_len(text[line:end]) > room and start > line:
+            starts.append(start)
+            line = start
+        while cell_len(text[line:end]) > room:  # one word wider than a line
+            line += room
+            starts.append(line)
+    return starts
+
+
+_UNITS = frozenset("% s ms µs ns h d deg dB rad/s 1/s Hz V W K A N m mm bar l/min rad → ≤ ≥".split())
 
 
 def items(first: str | Text, parts: Sequence[str], width: int, *, between: str = " · ") -> Text:
