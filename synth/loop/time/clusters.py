@@ -179,8 +179,11 @@ def _basis(pole: ComplexArray, t: FloatArray) -> ComplexArray:
 def cluster_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -> ClusterModes:
     """The step responses of the named signals, each loop with the grouping of its poles that loses least.
 
-    poles : (M, n), n >= 1, of stable loops.
+    poles : (M, n), n >= 1, of stable loops. They are found anew: what matters here is that all of them together are
+    the exact poles of a nearby loop, as eigenvalues are. Polishing each by itself moves repeated poles within the
+    circle of their own uncertainty, eps^(1/k), and what they then belong to is that far off.
     """
+    poles = _eigenvalues(loops.closed)
     size = np.abs(poles)
     gap = np.abs(poles[:, :, None] - poles[:, None, :])
     smaller, larger = np.minimum(size[:, :, None], size[:, None, :]), np.maximum(size[:, :, None], size[:, None, :])
@@ -196,6 +199,16 @@ def cluster_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -
         better = loss < least
         near[better], least[better] = grouped[better], loss[better]
     return _clustered(loops, poles, signals, near)
+
+
+def _eigenvalues(closed: FloatArray) -> ComplexArray:
+    """Poles (M, n) as eigenvalues of the companion matrices: pairs exactly conjugate and side by side."""
+    rows, n = closed.shape[0], closed.shape[1] - 1
+    matrix = np.zeros((rows, n, n))
+    matrix[:, 0] = -closed[:, 1:] / closed[:, :1]
+    index = np.arange(n - 1)
+    matrix[:, index + 1, index] = 1.0
+    return np.linalg.eigvals(matrix).astype(complex)
 
 
 def _geometry(poles: ComplexArray, near: BoolArray) -> tuple[ComplexArray, FloatArray]:
