@@ -108,7 +108,7 @@ class _Findings:
         low, high = size / (1.0 + size), np.where(size < 1.0, size / np.maximum(1.0 - size, 1e-300), 0.0)
         floor = HIGH / self.response.dead_time
         first, last = np.full(self.m, np.inf), np.zeros(self.m)
-        for limit in (low * 0.999, high * 1.001):
+        for limit in (low * (1.0 - 1e-9), high * (1.0 + 1e-9)):
             row, edge = gain_frequencies(self.response, limit)
             row, edge = row[edge > floor[row]], edge[edge > floor[row]]
             np.minimum.at(first, row, edge)

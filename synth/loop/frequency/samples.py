@@ -148,7 +148,8 @@ def humps(
     low, middle, high = inverse[:-2], inverse[1:-1], inverse[2:]
     # the parabola through the three nodes dips below the middle one by an eighth of its second difference at
     # most
-    dip = middle - 0.25 * (low + high - 2.0 * middle)
+    with np.errstate(invalid="ignore"):
+        dip = middle - 0.25 * (low + high - 2.0 * middle)
     node, row = np.nonzero((middle <= low) & (middle < high) & (dip <= floor))
     a, b, c = inverse[node, row], inverse[node + 1, row], inverse[node + 2, row]
     w0, w1, w2 = s.w[node, row], s.w[node + 1, row], s.w[node + 2, row]
