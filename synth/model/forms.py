@@ -68,8 +68,9 @@ class PlantForm(ABC):
             raise FormError(f"no value for {', '.join(missing)}")
         count = cases if cases is not None else max((len(parameters[n]) for n in self.names), default=1)
         try:
-            numerator, denominator, delay = self._polynomials(parameters, count)
-        except OverflowError:
+            with np.errstate(over="raise", invalid="raise"):
+                numerator, denominator, delay = self._polynomials(parameters, count)
+        except (OverflowError, FloatingPointError):
             raise FormError("the coefficients leave the range of numbers") from None
         width = max(numerator.shape[1], denominator.shape[1])
         numerator = np.pad(numerator, ((0, 0), (width - numerator.shape[1], 0)))
