@@ -13,8 +13,8 @@ from synth.loop.poles.delayed import delayed_poles
 from synth.loop.poles.roots import closed_roots
 from synth.loop.quantities import Measure
 from synth.loop.time import last_mode
-from synth.loop.time.collocation import jet, primitive_coefficients
-from synth.loop.time.panels import Trace
+from synth.loop.time.collocation import WHOLE, jet, primitive_coefficients
+from synth.loop.time.panels import Outline, Trace
 from synth.loop.time.responses import LONG, Responses, responses
 from synth.loop.time.stage import TimeStage
 from synth.loop.time.steps import ladder, march, resolution
@@ -24,6 +24,8 @@ _OF_U = {"control_peak"}
 _OF_D = {"disturbance_peak", "disturbance_area"}
 # The most delays marched for a curve before the modes take over.
 MOST_DRAWN = 200
+# A change of sign within a panel is looked for where more than this part of the area may hang on it.
+NO_AREA = 1e-8
 
 
 def delayed_time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...]) -> TimeStage:
@@ -57,12 +59,37 @@ class _Reading:
         self.has_end = loops.numerator[:, -1] != 0.0
         # z - 1 where y has a final value, y itself where it returns to 0
         self.per = np.where(self.has_end, final, 1.0)
-        owner = self.found.panels.owner
         if names - _OF_U - _OF_D:
-            unit = self.found.unit[:, 0] / np.abs(self.per)
-            error = (self.found.panels.values[:, 0] - final[owner, None]) / self.per[owner, None]
-            self.z = Trace.of(self.found.panels, error, self.late, unit)
-            self.tail = self.found.amplitude[:, 0] / self.per
+            self._prepare(final)
+
+    def _prepare(self, final: FloatArray) -> None:
+        """z - 1, looked at closely in the panels where one of the measures may be decided."""
+        panels = self.found.panels
+        error = (panels.values[:, 0] - final[panels.owner, None]) / self.per[panels.owner, None]
+        unit = self.found.unit[:, 0] / np.abs(self.per)
+        outline = Outline.of(panels, error)
+        self.whole = np.abs(error @ WHOLE) * panels.length
+        about = np.add.reduceat(self.whole, panels.first) + self.late
+        chosen = np.zeros(len(error), dtype=bool)
+        for m in self.asked:
+            name = m.quantity
+            if name in ("overshoot", "peak_time"):
+                chosen |= outline.may_be_largest(1.0, 0.0)
+            elif name == "undershoot":
+                chosen |= outline.may_be_largest(-1.0, 1.0)
+            elif name == "rise_time":
+                for level in m.span:
+                    chosen |= outline.may_reach_first(level - 1.0)
+            elif name == "settling_time":
+                chosen |= outline.may_leave_last(m.band)
+            elif name == "tracking_area":
+                chosen |= outline.may_change_sign(NO_AREA * about)
+            elif name == "late_deviation":
+                after = (m.after / self.loops.time_scale - self.late)[panels.owner]
+                chosen |= panels.start + panels.length >= after
+        self.close = panels.only(chosen)
+        self.z = Trace.of(panels.rows(self.close), error[self.close], self.late, unit)
+        self.tail = self.found.amplitude[:, 0] / self.per
 
     def stage(self) -> TimeStage:
         """Values and flags of every measure asked for."""
@@ -101,11 +128,16 @@ class _Reading:
         """sup of abs of the signal: panels, the last mode's own extremes, and the value at infinity."""
         assert signal is not None
         f = self.found
-        trace = Trace.of(f.panels, f.panels.values[:, signal], offset, f.unit[:, signal])
+        values = f.panels.values[:, signal]
+        outline = Outline.of(f.panels, values)
+        close = f.panels.only(outline.may_be_largest(1.0, 0.0) | outline.may_be_largest(-1.0, 0.0))
+        trace = Trace.of(f.panels.rows(close), values[close], offset, f.unit[:, signal])
         top, _, bottom, _ = self._tail_extremes(f.amplitude[:, signal])
         final = f.final[:, signal]
         late = np.maximum(np.abs(final + top), np.abs(final + bottom))
-        out: FloatArray = np.maximum(np.maximum(trace.largest(1.0)[0], trace.largest(-1.0)[0]), late)
+        nodes = np.maximum.reduceat(np.maximum(outline.most, -outline.least), f.panels.first)
+        looked = np.maximum(trace.largest(1.0)[0], trace.largest(-1.0)[0])
+        out: FloatArray = np.maximum(np.maximum(nodes, looked), late)
         return out
 
     def _overshoot(self, name: str) -> FloatArray:
@@ -137,7 +169,7 @@ class _Reading:
         return np.where(np.isfinite(out), out, np.nan)
 
     def _settling(self, band: float) -> FloatArray:
-        early, _ = self.z.last_exit(band)
+        early = self.z.last_exit(band)
         late = last_mode.last_exit(self.tail, self.found.pole, np.full(len(self.loops), band))
         out = np.where(np.isfinite(late), self._after_end(late), early)
         # y is 0, so outside any band below 100 %, until the dead time has passed
@@ -152,14 +184,22 @@ class _Reading:
 
     def _tracking_area(self) -> FloatArray:
         """∫ abs(r - y) dt; y is 0 until θ. Where L has no pole at 0 the error stays, and so does the area."""
-        area = self.late + self.z.area() + last_mode.area(self.tail, self.found.pole)
+        piece = self.whole.copy()
+        piece[self.close] = self.z.area()
+        area = self.late + np.add.reduceat(piece, self.found.panels.first)
+        area += last_mode.area(self.tail, self.found.pole)
         return np.where(self.loops.denominator[:, -1] == 0.0, area, np.inf)
 
     def _disturbance_area(self) -> FloatArray:
         assert self.d is not None
         f = self.found
-        trace = Trace.of(f.panels, f.panels.values[:, self.d], self.late, f.unit[:, self.d])
-        area = trace.area() + last_mode.area(f.amplitude[:, self.d], f.pole)
+        values = f.panels.values[:, self.d]
+        piece = np.abs(values @ WHOLE) * f.panels.length
+        about = np.add.reduceat(piece, f.panels.first)
+        close = f.panels.only(Outline.of(f.panels, values).may_change_sign(NO_AREA * about))
+        trace = Trace.of(f.panels.rows(close), values[close], self.late, f.unit[:, self.d])
+        piece[close] = trace.area()
+        area = np.add.reduceat(piece, f.panels.first) + last_mode.area(f.amplitude[:, self.d], f.pole)
         return np.where(self.loops.load[:, -1] == 0.0, area, np.inf)
 
 
@@ -182,7 +222,8 @@ def delayed_step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatA
         count = int(np.floor(horizon[row])) + 1
         marched = min(count, MOST_DRAWN if count <= MOST_DRAWN else LONG)
         sizes = ladder(int(fine[row]) + 1, int(coarse[row]) + 1)
-        values = march(loops.rows(one), numerators[one], sizes, np.array([marched])).values[0]
+        leg = march(loops.rows(one), numerators[one], np.array([marched]), sizes, sizes, marched)[0]
+        values = leg.values[0]
         edges = np.concatenate([[0.0], np.cumsum(sizes)])
         for s, signal in enumerate((0, 1, 2)):
             time = own[s, row]

@@ -10,7 +10,14 @@ from dataclasses import dataclass
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
-from synth.loop.time.collocation import WHOLE, jet, primitive_coefficients, slope_matrix, value_matrix
+from synth.loop.time.collocation import (
+    TO_CHEBYSHEV,
+    WHOLE,
+    jet,
+    primitive_coefficients,
+    slope_matrix,
+    value_matrix,
+)
 
 # Points at which a panel is looked at; between two neighbours a resolved signal turns by about a quarter radian.
 LOOKS = 17
@@ -29,6 +36,74 @@ class Panels:
     length: FloatArray
     values: FloatArray
     first: IntArray
+
+    def only(self, chosen: BoolArray) -> IntArray:
+        """Numbers of the chosen panels (B,), and of the first and last of each loop, which never go missing."""
+        keep = chosen.copy()
+        keep[self.first] = True
+        keep[np.append(self.first[1:], len(keep)) - 1] = True
+        return np.flatnonzero(keep)
+
+    def rows(self, number: IntArray) -> Panels:
+        """The numbered panels, some of every loop, without their values."""
+        owner = self.owner[number]
+        none = np.zeros((len(number), 0, 0))
+        return Panels(
+            owner,
+            self.start[number],
+            self.length[number],
+            none,
+            np.searchsorted(owner, np.arange(len(self.first))),
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class Outline:
+    """What can be said of one signal without looking between nodes. All (B,): low and high enclose it on its panel,
+    least and most are its extremes over the nodes."""
+
+    panels: Panels
+    low: FloatArray
+    high: FloatArray
+    least: FloatArray
+    most: FloatArray
+
+    @classmethod
+    def of(cls, panels: Panels, signal: FloatArray) -> Outline:
+        """signal (B, 13). Each Chebyshev polynomial is between -1 and 1."""
+        weights = signal @ TO_CHEBYSHEV
+        spread = np.abs(weights[:, 1:]) @ np.ones(weights.shape[1] - 1)
+        by_node = np.ascontiguousarray(signal.T)
+        least, most = by_node[0].copy(), by_node[0].copy()
+        for values in by_node[1:]:
+            np.minimum(least, values, out=least)
+            np.maximum(most, values, out=most)
+        return cls(panels, weights[:, 0] - spread, weights[:, 0] + spread, least, most)
+
+    def may_be_largest(self, sign: float, floor: float) -> BoolArray:
+        """Panels that may hold the sup of sign · signal, where that is above floor."""
+        most, high = (self.most, self.high) if sign > 0.0 else (-self.least, -self.low)
+        best = np.maximum(np.maximum.reduceat(most, self.panels.first), floor)
+        return high > best[self.panels.owner]
+
+    def may_reach_first(self, level: float) -> BoolArray:
+        """Panels in which signal >= level may come first."""
+        number = np.arange(len(self.high))
+        sure = np.where(self.most >= level, number, len(number))
+        last = np.minimum.reduceat(sure, self.panels.first)
+        return (self.high >= level) & (number <= last[self.panels.owner])
+
+    def may_leave_last(self, band: float) -> BoolArray:
+        """Panels in which abs(signal) > band may come last."""
+        number = np.arange(len(self.high))
+        sure = np.where((self.most > band) | (self.least < -band), number, -1)
+        first = np.maximum.reduceat(sure, self.panels.first)
+        return ((self.high > band) | (self.low < -band)) & (number >= first[self.panels.owner])
+
+    def may_change_sign(self, negligible: FloatArray) -> BoolArray:
+        """Panels with a change of sign that matters: both signs enclose more area than `negligible` (M,)."""
+        over = np.minimum(self.high, -self.low) * self.panels.length
+        return over > negligible[self.panels.owner]
 
 
 @dataclass(frozen=True, slots=True)
@@ -113,8 +188,8 @@ class Trace:
         out[some] = self._passage(panel, before, knot, np.full(len(some), level))
         return out
 
-    def last_exit(self, band: float) -> tuple[FloatArray, BoolArray]:
-        """Last time at which abs(signal) > band, NaN where never; and whether that is the very end. (M,) each."""
+    def last_exit(self, band: float) -> FloatArray:
+        """Last time at which abs(signal) > band, NaN where never. (M,)."""
         width = self.height.shape[1]
         with np.errstate(invalid="ignore"):
             flat = (np.abs(self.height) > band).ravel()
@@ -126,11 +201,10 @@ class Trace:
         after = self._neighbour(panel, knot, 1)
         level = np.where(self.height[panel, knot] > 0.0, band, -band)
         out[some] = self._passage(panel, knot, after, level)
-        final = np.append(self.panels.first[1:], len(self.height)) - 1
-        return out, last == final * width + width - 1
+        return out
 
     def area(self) -> FloatArray:
-        """Integral of abs(signal) over the panels of each loop. (M,)."""
+        """Integral of abs(signal) over each panel of this trace. (B,)."""
         p = self.panels
         whole = np.abs(self.signal @ WHOLE)
         panel, left, right = self._zeros()
@@ -146,7 +220,7 @@ class Trace:
             same = np.diff(where[order]) == 0
             whole[cut] = 0.0
             np.add.at(whole, where[order][1:][same], piece[same])
-        out: FloatArray = np.add.reduceat(whole * p.length, p.first)
+        out: FloatArray = whole * p.length
         return out
 
     def _zeros(self) -> tuple[IntArray, IntArray, IntArray]:

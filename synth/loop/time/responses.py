@@ -15,7 +15,7 @@ from synth.loop.poles.roots import closed_roots
 from synth.loop.polynomials import horner
 from synth.loop.time.collocation import GRID, NODES, TO_CHEBYSHEV
 from synth.loop.time.panels import Panels
-from synth.loop.time.steps import March, ladder, march, resolution
+from synth.loop.time.steps import March, ladder, lasting_kinks, march, resolution
 from synth.loop.time.true_modes import TrueModes, alone_from, late_panels, true_modes, units
 
 # Delays after which a response that still goes on is handed to the modes, and the most that are ever marched.
@@ -57,7 +57,9 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Resp
     least = _chain_delays(loops)
     delays = np.where(needed > LONG, HANDOVER, np.maximum(needed, 2.0))
     delays = np.minimum(np.maximum(delays, least), MOST_DELAYS).astype(np.intp)
-    fine, coarse = resolution(loops, closed_roots(loops.denominator), modes.pole)
+    open_poles = closed_roots(loops.denominator)
+    fine, coarse = resolution(loops, open_poles, modes.pole)
+    kinks = lasting_kinks(loops, open_poles)
 
     rows = len(loops)
     pieces: list[Panels] = []
@@ -67,9 +69,8 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Resp
     while todo.size:
         again = []
         for at in _classes(todo, fine, coarse, delays):
-            part = march(
-                loops.rows(at), numerators[at], ladder(int(fine[at].max()), int(coarse[at].max())), delays[at]
-            )
+            cut, smooth = ladder(int(fine[at].max()), int(coarse[at].max())), ladder(*(int(coarse[at].max()),) * 2)
+            part = march(loops.rows(at), numerators[at], delays[at], cut, smooth, int(kinks[at].max()))
             rough = _unresolved(part) & (coarser[at] < 4)
             meets, quiet = _checked(part, delays[at], delay[at], modes.rows(at), unit[at])
             longer = ~rough & ~(meets | quiet) & (delays[at] < MOST_DELAYS)
@@ -77,10 +78,11 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Resp
             fine[at[rough]] += 1
             coarse[at[rough]] += 1
             coarser[at[rough]] += 1
+            kinks[at[rough]] *= 2.0
             delays[at[longer]] = np.minimum(2 * delays[at[longer]], MOST_DELAYS)
             again.append(at[~done])
             kept = at[done]
-            pieces.append(_flat(part, at, done, delays, delay))
+            pieces.extend(_flat(leg, at, done, delays, delay) for leg in part)
             end[kept] = delays[kept] * delay[kept]
             amplitude[kept] = np.where(meets[done, None], modes.residue[kept, :, 0], 0.0)
             doubtful[kept] = ~(meets | quiet)[done]
@@ -112,8 +114,7 @@ def _classes(todo: IntArray, fine: IntArray, coarse: IntArray, delays: IntArray)
     """Rows that are marched together: the same panels, and no more numbers at once than fit in 60 MB."""
     out = []
     if len(todo) <= 64:  # a few rows: one fine cut for all costs less than many calls
-        key = np.where(coarse[todo] > 1, 100 + coarse[todo], 0) * 1000 + np.where(fine[todo] > 4, fine[todo], 4)
-        key = np.where((fine[todo] == 0) & (coarse[todo] == 0), -1, key)
+        key = np.where(coarse[todo] > 1, coarse[todo], 0) * 100 + np.minimum((fine[todo] + 2) // 3, 3)
     else:
         key = coarse[todo] * 100 + fine[todo]
     for one in np.unique(key):
@@ -127,49 +128,53 @@ def _classes(todo: IntArray, fine: IntArray, coarse: IntArray, delays: IntArray)
     return out
 
 
-def _unresolved(part: March) -> BoolArray:
+def _unresolved(part: list[March]) -> BoolArray:
     """Whether any panel's polynomial has not settled in its last coefficients. (m,)."""
-    values = part.values
-    if values.size == 0:
-        return np.zeros(len(values), dtype=bool)
-    size = np.fmax.reduce(np.abs(values), axis=(1, 2, 4))
-    last = np.fmax.reduce(np.abs(values @ TO_CHEBYSHEV[:, -2:]), axis=(1, 2, 4))
+    size = np.maximum.reduce([np.fmax.reduce(np.abs(leg.values), axis=(1, 2, 4)) for leg in part])
+    lasts = [np.abs(leg.values @ TO_CHEBYSHEV[:, -2:]) for leg in part]
+    last = np.maximum.reduce([np.fmax.reduce(np.fmax.reduce(x, axis=1), axis=(1, 3)) for x in lasts])
     out: BoolArray = (last > RESOLVED * size).any(axis=1)
     return out
 
 
 def _checked(
-    part: March, delays: IntArray, delay: FloatArray, modes: TrueModes, unit: FloatArray
+    part: list[March], delays: IntArray, delay: FloatArray, modes: TrueModes, unit: FloatArray
 ) -> tuple[BoolArray, BoolArray]:
     """Whether the modes meet the last delay marched, and whether the response has come to rest on it. (m,) each.
 
     A stable loop that is at rest over one whole delay stays so; and what the modes leave out is itself a response of
     the loop, as small later as it is over that delay.
     """
-    m, _, panels, signals, _ = part.values.shape
-    last = part.values[np.arange(m), delays - 1]
-    begin = np.cumsum(part.sizes) - part.sizes
-    place = (begin[:, None] + part.sizes[:, None] * GRID).ravel()
-    time = (delays[:, None] - 1.0 + place) * delay[:, None]
-    sum_of_modes = modes.at(time).reshape(m, signals, panels, NODES).swapaxes(1, 2)
-    scale = np.maximum(unit, 1e-300)[:, None, :, None]
-    apart = np.nan_to_num(np.abs(last - sum_of_modes) / scale, nan=np.inf).max(axis=(1, 2, 3))
-    rest = np.nan_to_num(np.abs(last - modes.final[:, None, :, None]) / scale, nan=np.inf).max(axis=(1, 2, 3))
-    return apart <= AGREES, rest <= DEAD
+    meets, quiet = np.zeros(len(delays), dtype=bool), np.zeros(len(delays), dtype=bool)
+    for leg in part:
+        here = np.flatnonzero((delays > leg.begin) & (delays <= leg.begin + leg.values.shape[1]))
+        last = leg.values[here, delays[here] - 1 - leg.begin]
+        m, panels, signals, _ = last.shape
+        begin = np.cumsum(leg.sizes) - leg.sizes
+        place = (begin[:, None] + leg.sizes[:, None] * GRID).ravel()
+        time = (delays[here, None] - 1.0 + place) * delay[here, None]
+        some = modes.rows(here)
+        sum_of_modes = some.at(time).reshape(m, signals, panels, NODES).swapaxes(1, 2)
+        scale = np.maximum(unit[here], 1e-300)[:, None, :, None]
+        apart = np.nan_to_num(np.abs(last - sum_of_modes) / scale, nan=np.inf)
+        rest = np.nan_to_num(np.abs(last - some.final[:, None, :, None]) / scale, nan=np.inf)
+        meets[here] = apart.max(axis=(1, 2, 3)) <= AGREES
+        quiet[here] = rest.max(axis=(1, 2, 3)) <= DEAD
+    return meets, quiet
 
 
-def _flat(part: March, at: IntArray, done: BoolArray, delays: IntArray, delay: FloatArray) -> Panels:
+def _flat(leg: March, at: IntArray, done: BoolArray, delays: IntArray, delay: FloatArray) -> Panels:
     """The panels of the rows that are done; `first` is left to the assembly."""
-    m, most, panels, signals, _ = part.values.shape
-    counts = delays[at]
-    mask = done[:, None] & (np.arange(most) < counts[:, None])
+    _, held, panels, signals, _ = leg.values.shape
+    mask = done[:, None] & (leg.begin + np.arange(held) < delays[at, None])
     row, k = np.nonzero(mask)
-    begin = np.cumsum(part.sizes) - part.sizes
+    begin = np.cumsum(leg.sizes) - leg.sizes
     owner = np.repeat(at[row], panels)
     step = delay[owner]
-    start = (np.repeat(k, panels) + np.tile(begin, len(row))) * step
-    length = np.tile(part.sizes, len(row)) * step
-    return Panels(owner, start, length, part.values[row, k].reshape(-1, signals, NODES), np.zeros(0, dtype=np.intp))
+    start = (np.repeat(leg.begin + k, panels) + np.tile(begin, len(row))) * step
+    length = np.tile(leg.sizes, len(row)) * step
+    values = leg.values[row, k].reshape(-1, signals, NODES)
+    return Panels(owner, start, length, values, np.zeros(0, dtype=np.intp))
 
 
 def _assembled(pieces: list[Panels], rows: int) -> Panels:

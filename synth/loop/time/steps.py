@@ -13,17 +13,29 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.time.collocation import FROM_NODES, NODES, POINTS, SPREAD, STAGES, TO_NODES
+from synth.loop.polynomials import horner
+from synth.loop.time.collocation import (
+    FROM_NODES,
+    GRID,
+    NODES,
+    POINTS,
+    SPREAD,
+    STAGES,
+    TO_NODES,
+    value_matrix,
+)
 
 
 @dataclass(frozen=True, slots=True)
 class March:
-    """Signals over the first delays of each loop, in own time τ: u at τ, and y and d one delay later, at τ + θ.
+    """Signals over successive delays of each loop, in own time τ: u at τ, and y and d one delay later, at τ + θ.
 
+    begin   number of the first delay held
     sizes   (P,) lengths of the panels of a delay, parts of θ
-    values  (M, most, P, S, 13) at the nodes of each panel; NaN beyond a loop's own number of delays
+    values  (M, K, P, S, 13) at the nodes of each panel; NaN beyond a loop's own number of delays
     """
 
+    begin: int
     sizes: FloatArray
     values: FloatArray
 
@@ -39,33 +51,74 @@ def ladder(fine: int, coarse: int) -> FloatArray:
     return np.array(sizes)
 
 
-def march(loops: Loops, numerators: FloatArray, sizes: FloatArray, delays: IntArray) -> March:
+def march(
+    loops: Loops, numerators: FloatArray, delays: IntArray, fine: FloatArray, smooth: FloatArray, kinks: int
+) -> list[March]:
     """Step responses over the first `delays` delays of each loop.
 
     numerators : (M, S, n + 1), what is read off: N first (it closes the loop), then control or load or both.
-    sizes : (P,) panel lengths, parts of a delay; delays : (M,) how many delays each loop is followed for.
+    delays : (M,) how many delays each loop is followed for, descending.
+    fine, smooth : (P,) panel lengths, parts of a delay, over the first `kinks` delays and after them. The kink at each
+    multiple of θ is the smoother the later, and in the end excites the fast poles no more.
 
     The error e of a unit reference step drives all: y = (N/D) e and d = (load/D) e, a delay later, as P S = P·S.
     """
-    order = np.argsort(-delays, kind="stable")
-    loops, numerators, counts = loops.rows(order), numerators[order], delays[order]
+    most = int(delays.max(initial=0))
+    kinks = min(kinks, most)
+    state = np.zeros((len(loops), loops.order))
+    first = _leg(loops, numerators, delays, 0, kinks, fine, np.ones((len(loops), len(fine), NODES)), state)
+    if kinks == most:
+        return [first]
+    active = int(np.searchsorted(-delays, -kinks))
+    drive = np.ones((len(loops), len(smooth), NODES))
+    drive[:active] = 1.0 - _recut(first.values[:active, -1, :, 0], fine, smooth)
+    return [first, _leg(loops, numerators, delays, kinks, most, smooth, drive, state)]
+
+
+def _leg(
+    loops: Loops,
+    numerators: FloatArray,
+    delays: IntArray,
+    begin: int,
+    end: int,
+    sizes: FloatArray,
+    drive: FloatArray,
+    state: FloatArray,
+) -> March:
+    """Delays begin .. end - 1 with one cutting. drive (M, P, 13) is e over the first of them; state moves on."""
+    most = int(np.searchsorted(-delays, -begin))
     kinds, which = np.unique(sizes, return_inverse=True)
-    maps = [_propagator(loops, numerators, kind * loops.dead_time) for kind in kinds]
-    rows, signals, n, most = len(loops), numerators.shape[1], loops.order, int(counts[0])
-    values = np.full((rows, most, len(sizes), signals, NODES), np.nan)
-    state = np.zeros((rows, n))
-    for k in range(most):
-        active = int(np.searchsorted(-counts, -k))  # loops followed for more than k delays
+    some = loops.rows(np.arange(most))
+    maps = [_propagator(some, numerators[:most], kind * some.dead_time) for kind in kinds]
+    signals, n = numerators.shape[1], loops.order
+    values = np.full((len(loops), end - begin, len(sizes), signals, NODES), np.nan)
+    for k in range(begin, end):
+        active = int(np.searchsorted(-delays, -k))  # loops followed for more than k delays
+        given = np.empty((active, NODES + n, 1))
         for i in range(len(sizes)):
-            given = np.empty((active, NODES + n, 1))
-            given[:, :NODES, 0] = 1.0 if k == 0 else 1.0 - values[:active, k - 1, i, 0]
+            given[:, :NODES, 0] = drive[:active, i] if k == begin else 1.0 - values[:active, k - begin - 1, i, 0]
             given[:, NODES:, 0] = state[:active]
             found = (maps[which[i]][:active] @ given)[:, :, 0]
-            values[:active, k, i] = found[:, : signals * NODES].reshape(active, signals, NODES)
+            values[:active, k - begin, i] = found[:, : signals * NODES].reshape(active, signals, NODES)
             state[:active] = found[:, signals * NODES :]
-    back = np.empty_like(values)
-    back[order] = values
-    return March(sizes, back)
+    return March(begin, sizes, values)
+
+
+def _recut(values: FloatArray, old: FloatArray, new: FloatArray) -> FloatArray:
+    """A signal over one delay, (M, P, 13) on panels `old`, at the nodes of panels `new`, (M, P', 13)."""
+    edges = np.concatenate([[0.0], np.cumsum(old)])
+    out = np.empty((len(values), len(new), NODES))
+    start = 0.0
+    for j, size in enumerate(new):
+        place = start + size * GRID
+        # a node on an edge belongs to the panel it opens, but the last node to the panel it ends
+        at = np.clip(np.searchsorted(edges, place, side="right") - 1, 0, len(old) - 1)
+        at[-1] = np.clip(np.searchsorted(edges, place[-1], side="left") - 1, 0, len(old) - 1)
+        for i in np.unique(at):
+            here = at == i
+            out[:, j, here] = values[:, i] @ value_matrix((place[here] - edges[i]) / old[i])
+        start += size
+    return out
 
 
 def _propagator(loops: Loops, numerators: FloatArray, length: FloatArray) -> FloatArray:
@@ -161,3 +214,13 @@ def resolution(loops: Loops, open_poles: ComplexArray, slow_poles: ComplexArray)
     fine = np.ceil(np.log2(np.maximum(needed, 1.0))).astype(np.intp)
     coarse = np.minimum(coarse, 10)
     return np.maximum(np.minimum(fine, 40), coarse), coarse
+
+
+def lasting_kinks(loops: Loops, open_poles: ComplexArray) -> FloatArray:
+    """Delays after which kinks excite the fastest open-loop pole no more: each passes it through N/D again. (M,)."""
+    with np.errstate(all="ignore"):
+        fastest = np.fmax.reduce(np.abs(open_poles), axis=1, initial=0.0)
+        s = 1.0j * fastest[:, None]
+        ratio = np.abs(horner(loops.numerator, s) / horner(loops.denominator, s))[:, 0]
+        out: FloatArray = np.ceil(21.0 / -np.log(np.clip(np.nan_to_num(ratio), 1e-4, 0.985))) + 1.0
+    return out
