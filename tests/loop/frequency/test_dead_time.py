@@ -142,10 +142,14 @@ def test_rows_alone_agree_with_rows_in_company(delayed_loops, poles_of):
 def test_ten_turns_of_phase_lead_do_not_hide_the_crossing(measure):
     # the loop gain falls so slowly against the dead time that |L| = 0.999 ... 0.2 takes many turns
     m = measure(([[0.95]], [[1.0, 1.0]]), ([[1.0]], [[1.0]]), 40.0)
-    w = np.linspace(0.01, 3.0, 3_000_001)
+    w = np.linspace(0.001, 5.0, 3_000_001)
     loop = 0.95 / (1 + 1j * w) * np.exp(-40j * w)
     assert m["sensitivity_peak"] == pytest.approx(np.max(1 / np.abs(1 + loop)), rel=1e-6)
-    assert m["highest_fall"] > 20 * m["bandwidth"]
+    above = np.abs(loop / (1 + loop)) > 0.95 / 1.95 / np.sqrt(2)
+    falls = w[np.flatnonzero(above[:-1] & ~above[1:])]
+    assert len(falls) > 10
+    assert m["bandwidth"] == pytest.approx(falls[0], abs=2e-6)
+    assert m["highest_fall"] == pytest.approx(falls[-1], abs=2e-6)
 
 
 def test_the_noise_gain_of_a_lead_that_rises_beyond_the_crossover(measure):
