@@ -1,8 +1,9 @@
-"""From modes to answers: a plan, one pass over its blocks, the proof of what is left, and the long ones from their end.
+"""From modes to answers: a plan, one pass over its blocks, the proof of what is left, and the long ones from
+their end.
 
-A lightly damped loop takes thousands of blocks to die away. Its plan stops after LONG of them: what comes first has been
-seen by then, a last exit is looked for backwards from where the envelope meets the band, and an area's tail is that of
-the slowest mode.
+A lightly damped loop takes thousands of blocks to die away. Its plan stops after LONG of them: what comes
+first has been seen by then, a last exit is looked for backwards from where the envelope meets the band, and
+an area's tail is that of the slowest mode.
 """
 
 from __future__ import annotations
@@ -10,11 +11,10 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import FloatArray, IntArray
-from synth.loop.time.clusters import ClusterModes
-from synth.loop.time.modes import Modes
 from synth.loop.time.plan import Plan, blocks
 from synth.loop.time.questions import Answers, Area, Passage, Supremum
 from synth.loop.time.scan import scan
+from synth.loop.time.signals import Signals
 from synth.loop.time.survey import RESOLUTION, Survey
 
 FINE = 5e-3
@@ -27,11 +27,13 @@ LONG = 128
 """Blocks after which a plan stops."""
 
 SEGMENTS = 32
-"""Stretches of LONG blocks that a supremum or a first passage is followed over before it is given up as unproven."""
+"""Stretches of LONG blocks that a supremum or a first passage is followed over before it is given up as
+unproven.
+"""
 
 
 def answer(
-    modes: Modes | ClusterModes,
+    modes: Signals,
     unit: FloatArray,
     suprema: list[Supremum],
     passages: list[Passage],
@@ -61,7 +63,7 @@ def answer(
 
 
 def _direct(
-    modes: Modes | ClusterModes,
+    modes: Signals,
     unit: FloatArray,
     suprema: list[Supremum],
     passages: list[Passage],
@@ -94,7 +96,7 @@ def _passes(plan: Plan) -> list[tuple[int, int]]:
 
 
 def _follow_supremum(
-    modes: Modes | ClusterModes,
+    modes: Signals,
     unit: FloatArray,
     found: Answers,
     w: int,
@@ -119,7 +121,7 @@ def _follow_supremum(
 
 
 def _follow_passage(
-    modes: Modes | ClusterModes,
+    modes: Signals,
     unit: FloatArray,
     found: Answers,
     v: int,
@@ -137,7 +139,7 @@ def _follow_passage(
     found.passages[v][rows] = seen + part.passages[0]
 
 
-def _last_passage(modes: Modes | ClusterModes, p: Passage, rows: IntArray, end: FloatArray) -> FloatArray:
+def _last_passage(modes: Signals, p: Passage, rows: IntArray, end: FloatArray) -> FloatArray:
     """Last time outside, looked for in windows that reach further and further back from `end` (A,)."""
     out = np.zeros(len(rows))
     window = 40.0 / np.abs(modes.pole[rows]).min(axis=1)

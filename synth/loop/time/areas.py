@@ -6,12 +6,12 @@ import numpy as np
 
 from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.time.cells import Cells, joined
-from synth.loop.time.modes import Modes
+from synth.loop.time.signals import Signals
 
 ROUNDS = 5
 
 
-def zeros(modes: Modes, cells: Cells, negligible: FloatArray) -> Cells:
+def zeros(modes: Signals, cells: Cells, negligible: FloatArray) -> Cells:
     """Cells that hold one zero each, from cells that may hold none, one or more.
 
     negligible (V,) of each question: an area below this between two zeros need not be found.
@@ -34,15 +34,15 @@ def zeros(modes: Modes, cells: Cells, negligible: FloatArray) -> Cells:
 
 
 def area(
-    modes: Modes, signal: int, loops: IntArray, end: FloatArray, crossings: Cells
+    modes: Signals, signal: int, loops: IntArray, end: FloatArray, crossings: Cells
 ) -> tuple[FloatArray, FloatArray]:
     """Integral of abs(x) from 0 to infinity for the named loops, (A,), and a bound of its relative error.
 
     crossings : one zero a cell; its key is the number of the loop within `loops`. end (A,) a time after the
     last zero that counts; from there on the slowest mode stands for all.
 
-    The primitive is flat at a zero, so one evaluation at the cubic's zero, moved by a Newton step, has an error of
-    third order in that step.
+    The primitive is flat at a zero, so one evaluation at the cubic's zero, moved by a Newton step, has an
+    error of third order in that step.
     """
     count = len(loops)
     guess = crossings.t + crossings.crossing(np.zeros(len(crossings))) * crossings.h
@@ -60,9 +60,10 @@ def area(
     row = np.concatenate([np.arange(count), crossings.key, np.arange(count)])
     time = np.concatenate([np.full(count, -1.0), guess, np.maximum(end, 0.0)])
     order = np.lexsort((time, row))
-    row, primitive = row[order], primitive[order]
-    step = np.abs(np.diff(primitive)) * (row[1:] == row[:-1])
-    total: FloatArray = np.bincount(row[1:], weights=step, minlength=count)[:count]
+    row = row[order]
+    primitive = primitive[order]
+    change = np.abs(np.diff(primitive)) * (row[1:] == row[:-1])
+    total: FloatArray = np.bincount(row[1:], weights=change, minlength=count)[:count].astype(float)
     rest, error = modes.tail(loops, many, end)
     total += rest
     return total, error / np.maximum(total, 1e-300)

@@ -1,9 +1,9 @@
 """What the ends of a cell prove about its inside.
 
-Q cells. With a, b the end values and c, d the end slopes times the width, the cubic through them has the control
-points a, a + c/3, b - d/3, b and its slope c, turn, d; a curve stays within the hull of its control points. The
-signal differs from the cubic by at most `miss`, its slope from the cubic's by 3.08 miss and its second derivative
-by 32 miss (times width, width squared).
+Q cells. With a, b the end values and c, d the end slopes times the width, the cubic through them has the
+control points a, a + c/3, b - d/3, b and its slope c, turn, d; a curve stays within the hull of its control
+points. The signal differs from the cubic by at most `miss`, its slope from the cubic's by 3.08 miss and its
+second derivative by 32 miss (times width, width squared).
 Source: G. Birkhoff, A. Priver, Hermite interpolation errors for derivatives, J. Math. Phys. 46 (1967).
 """
 
@@ -12,7 +12,7 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
-from synth.loop.time.modes import CELLS, Modes
+from synth.loop.time.signals import CELLS, Signals
 
 SLOPE_MISS = np.sqrt(3.0) / 216.0 * 384.0
 BEND_MISS = 16.0
@@ -48,20 +48,25 @@ class Cells:
     @property
     def turn(self) -> FloatArray:
         """Middle control point of the slope."""
-        return 3.0 * (self.b - self.a) - self.c - self.d
+        out: FloatArray = 3.0 * (self.b - self.a) - self.c - self.d
+        return out
 
     def monotone(self) -> BoolArray:
         """Whether the slope provably keeps its sign."""
         turn, least = self.turn, SLOPE_MISS * self.miss
         low = np.minimum(np.minimum(self.c, self.d), turn)
         high = np.maximum(np.maximum(self.c, self.d), turn)
-        return (low > least) | (high < -least)
+        out: BoolArray = (low > least) | (high < -least)
+        return out
 
     def bent(self) -> BoolArray:
-        """Whether the second derivative provably keeps its sign: at most one extremum, at most two crossings."""
+        """Whether the second derivative provably keeps its sign: at most one extremum, at most two
+        crossings.
+        """
         turn, least = self.turn, BEND_MISS * self.miss
         one, two = turn - self.c, self.d - turn
-        return (np.minimum(one, two) > least) | (np.maximum(one, two) < -least)
+        out: BoolArray = (np.minimum(one, two) > least) | (np.maximum(one, two) < -least)
+        return out
 
     def range(self) -> tuple[FloatArray, FloatArray]:
         """Lower and upper bound of the signal in the cell."""
@@ -81,7 +86,8 @@ class Cells:
     def cubic(self, x: FloatArray) -> FloatArray:
         """Value of the cubic at x (0 to 1)."""
         third = self.c + self.d - 2.0 * (self.b - self.a)
-        return self.a + x * (self.c + x * (self.turn - self.c + x * third))
+        out: FloatArray = self.a + x * (self.c + x * (self.turn - self.c + x * third))
+        return out
 
     def crossing(self, level: FloatArray) -> FloatArray:
         """Place (0 to 1) where the cubic meets the level; for cells whose ends lie on either side of it."""
@@ -100,7 +106,7 @@ class Cells:
             x = np.where((x >= low) & (x <= high), x, 0.5 * (low + high))
         return x
 
-    def split(self, modes: Modes) -> Cells:
+    def split(self, modes: Signals) -> Cells:
         """Each cell in eight."""
         q, h = len(self), self.h / CELLS
         value, slope = modes.nodes(self.loop, self.t, h, self.signal)
@@ -117,7 +123,9 @@ def joined(parts: list[Cells]) -> Cells:
     """One list from several."""
     if len(parts) == 1:
         return parts[0]
-    return Cells(np.concatenate([p.place for p in parts], axis=1), np.concatenate([p.data for p in parts], axis=1))
+    return Cells(
+        np.concatenate([p.place for p in parts], axis=1), np.concatenate([p.data for p in parts], axis=1)
+    )
 
 
 def no_cells() -> Cells:

@@ -1,9 +1,10 @@
 """Step responses of loops whose poles nearly or exactly coincide.
 
-Apart, the residues of close poles are large and cancel; a multiple pole has none at all. So close poles are taken
-together: the share of a cluster of poles p_j = c + delta_j in a response with the transform G(s) / prod (s - p_j) is the
-divided difference of G(s) e^(s t) over its poles. With G(c + delta) = sum gamma_j delta^j and the complete homogeneous
-symmetric sums H_i of the delta's (the divided differences of powers) it is
+Apart, the residues of close poles are large and cancel; a multiple pole has none at all. So close poles are
+taken together: the share of a cluster of poles p_j = c + delta_j in a response with the transform G(s) /
+prod (s - p_j) is the divided difference of G(s) e^(s t) over its poles. With G(c + delta) = sum gamma_j
+delta^j and the complete homogeneous symmetric sums H_i of the delta's (the divided differences of powers) it
+is
 
     e^(c t) sum_k alpha_k t^k / k!         alpha_k = sum_j gamma_j H_(j + k - size + 1)
 
@@ -19,13 +20,18 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.time.modes import CELLS, HERMITE, Profile, numerator_of
+from synth.loop.time.residues import numerator_of
+from synth.loop.time.signals import CELLS, HERMITE, Profile
 
 TERMS = 32
-"""Powers of t and of delta that are kept: enough for a cluster a third as wide as it is far from anything else."""
+"""Powers of t and of delta that are kept: enough for a cluster a third as wide as it is far from anything
+else.
+"""
 
 REACHES = (1e-5, 1e-3, 1e-2, 0.04, 0.1, 0.2, 0.35)
-"""Distances, relative to their magnitude, up to which two poles are taken together; the best of them is used."""
+"""Distances, relative to their magnitude, up to which two poles are taken together; the best of them is
+used.
+"""
 
 STEPS = 4
 """Times of the profile an octave."""
@@ -81,7 +87,9 @@ class ClusterModes:
         return self._derived[order]
 
     def _area_coefficients(self) -> FloatArray:
-        """(M, S, C, TERMS) of a bound of the integral of abs(x) from t on: sum_j a_j t^j / j! e^(-sigma t)."""
+        """(M, S, C, TERMS) of a bound of the integral of abs(x) from t on: sum_j a_j t^j / j! e^(-sigma
+        t).
+        """
         fall = -self.pole.real[:, None, :]
         out = np.abs(self.alpha) / fall[..., None]
         for k in range(TERMS - 2, -1, -1):
@@ -121,7 +129,9 @@ class ClusterModes:
         fourth, envelope = self.bounds(loop, t)
         area = shaped(self._bound(self._area_coefficients(), loop, t)) if areas else None
         rivals = np.full((m, s, count + 1), np.inf)
-        return Profile(time, self.curves(time), shaped(envelope), shaped(fourth), rivals, area, area, log_convex=False)
+        return Profile(
+            time, self.curves(time), shaped(envelope), shaped(fourth), rivals, area, area, log_convex=False
+        )
 
     def cell_misses(self, loop: IntArray, signal: IntArray, t: FloatArray, h: FloatArray) -> FloatArray:
         """(8, P) cubic error in the cells of width h that start at t, for one signal each."""
@@ -134,7 +144,9 @@ class ClusterModes:
     def nodes(
         self, loop: IntArray, t: FloatArray, h: FloatArray, signal: IntArray | None = None
     ) -> tuple[FloatArray, FloatArray]:
-        """Values and slopes (times h) at the 9 ends of the 8 cells of width h that start at t: (S, 9, P) each."""
+        """Values and slopes (times h) at the 9 ends of the 8 cells of width h that start at t: (S, 9, P)
+        each.
+        """
         basis = _basis(self.pole[loop], t[:, None] + h[:, None] * np.arange(CELLS + 1))
         out = []
         for order in (0, 1):
@@ -143,8 +155,12 @@ class ClusterModes:
             out.append(np.ascontiguousarray(np.einsum("psck,kpwc->swp", part, basis).real))
         return out[0], out[1] * h
 
-    def jet(self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int) -> list[FloatArray]:
-        """Derivatives number first, first + 1, ... (-1: the primitive that vanishes at infinity), each (E,)."""
+    def jet(
+        self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int
+    ) -> list[FloatArray]:
+        """Derivatives number first, first + 1, ... (-1: the primitive that vanishes at infinity), each
+        (E,).
+        """
         basis = _basis(self.pole[loop], t[:, None])[:, :, 0]
         return [
             np.einsum("eck,kec->e", self._coefficients(order)[loop, signal], basis).real
@@ -179,14 +195,18 @@ def _basis(pole: ComplexArray, t: FloatArray) -> ComplexArray:
 def cluster_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -> ClusterModes:
     """The step responses of the named signals, each loop with the grouping of its poles that loses least.
 
-    poles : (M, n), n >= 1, of stable loops. They are found anew: what matters here is that all of them together are
-    the exact poles of a nearby loop, as eigenvalues are. Polishing each by itself moves repeated poles within the
-    circle of their own uncertainty, eps^(1/k), and what they then belong to is that far off.
+    poles : (M, n), n >= 1, of stable loops. They are found anew: what matters here is that all of them
+    together are the exact poles of a nearby loop, as eigenvalues are. Polishing each by itself moves
+    repeated poles within the circle of their own uncertainty, eps^(1/k), and what they then belong to is
+    that far off.
     """
     poles = _eigenvalues(loops.closed)
     size = np.abs(poles)
     gap = np.abs(poles[:, :, None] - poles[:, None, :])
-    smaller, larger = np.minimum(size[:, :, None], size[:, None, :]), np.maximum(size[:, :, None], size[:, None, :])
+    smaller, larger = (
+        np.minimum(size[:, :, None], size[:, None, :]),
+        np.maximum(size[:, :, None], size[:, None, :]),
+    )
     near = np.zeros(gap.shape, dtype=bool)
     least = np.full(len(loops), np.inf)
     for reach in REACHES:
@@ -212,7 +232,9 @@ def _eigenvalues(closed: FloatArray) -> ComplexArray:
 
 
 def _geometry(poles: ComplexArray, near: BoolArray) -> tuple[ComplexArray, FloatArray]:
-    """Centre of each pole's cluster, (M, n), and how wide the clusters are for their distance from all else, (M,)."""
+    """Centre of each pole's cluster, (M, n), and how wide the clusters are for their distance from all else,
+    (M,).
+    """
     mirrored = np.abs(poles[:, :, None] - poles[:, None, :].conj()) == 0.0
     folded = (near & mirrored).any(axis=2)  # a cluster with its own mirror image has a real centre
     centre = np.matmul(near, poles[:, :, None])[:, :, 0] / near.sum(axis=2)

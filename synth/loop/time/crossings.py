@@ -1,6 +1,7 @@
 """First arrivals and last exits, proven: no cell before (after) the one found can hold another.
 
-A question asks for the first or the last time at which a signal passes between inside, low <= x <= high, and outside.
+A question asks for the first or the last time at which a signal passes between inside, low <= x <= high, and
+outside.
 """
 
 from __future__ import annotations
@@ -9,10 +10,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.arrays import BoolArray, FloatArray
 from synth.loop.time.cells import Cells, joined, no_cells
 from synth.loop.time.events import crossing
-from synth.loop.time.modes import Modes
+from synth.loop.time.signals import Signals
 
 ROUNDS = 9
 ROUNDING = 1e-15
@@ -30,11 +31,11 @@ class Edges:
     last: BoolArray
 
 
-def resolve(modes: Modes, edges: Edges, cells: Cells) -> FloatArray:
+def resolve(modes: Signals, edges: Edges, cells: Cells) -> FloatArray:
     """(V,) time of the first or last passage within the cells given; NaN where there is none.
 
-    The cells of a question need not join, but whatever lies between them must be known to hold no passage that
-    matters.
+    The cells of a question need not join, but whatever lies between them must be known to hold no passage
+    that matters.
     """
     answers = len(edges.low)
     found = np.full(answers, np.nan)
@@ -87,6 +88,3 @@ def _foremost(cells: Cells, edges: Edges) -> Cells:
     keep = np.ones(len(key), dtype=bool)
     keep[1:] = key[1:] != key[:-1]
     return cells.rows(order[keep])
-
-
-__all__ = ["Edges", "IntArray", "resolve"]

@@ -7,7 +7,7 @@ import numpy as np
 from synth.loop.arrays import FloatArray
 from synth.loop.closed_loop import Loops
 from synth.loop.poles.roots import closed_roots
-from synth.loop.time.modes import limits, step_modes
+from synth.loop.time.residues import limits, step_modes
 
 
 def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:

@@ -1,7 +1,8 @@
-"""One stacked iteration for all events: crossings of levels and extrema, each in a bracket that holds just one.
+"""One stacked iteration for all events: crossings of levels and extrema, each in a bracket that holds just
+one.
 
-E events. Halley's step (E. Halley, 1694) on the exact modal sums, kept inside the bracket: from the cubic's guess one
-evaluation is mostly enough.
+E events. Halley's step (E. Halley, 1694) on the exact modal sums, kept inside the bracket: from the cubic's
+guess one evaluation is mostly enough.
 """
 
 from __future__ import annotations
@@ -9,7 +10,7 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
-from synth.loop.time.modes import Modes
+from synth.loop.time.signals import Signals
 
 NEAR = 1e-3
 """Step (in bracket widths) and curvature ratio below which Halley's error is of the order of their cube."""
@@ -18,7 +19,7 @@ ROUNDS = 60
 
 
 def crossing(
-    modes: Modes,
+    modes: Signals,
     loop: IntArray,
     signal: IntArray,
     low: FloatArray,
@@ -33,7 +34,7 @@ def crossing(
 
 
 def extremum(
-    modes: Modes,
+    modes: Signals,
     loop: IntArray,
     signal: IntArray,
     low: FloatArray,
@@ -46,7 +47,7 @@ def extremum(
 
 
 def _solve(
-    modes: Modes,
+    modes: Signals,
     loop: IntArray,
     signal: IntArray,
     low: FloatArray,
@@ -75,7 +76,9 @@ def _solve(
         size, low_end, high_end = width[open_], left[open_], right[open_]
         aim = now + step
         inside = (aim >= low_end - NEAR * size) & (aim <= high_end + NEAR * size)
-        aim = np.minimum(np.maximum(aim, low_end), high_end)  # a zero at an end may be aimed at from just outside
+        aim = np.minimum(
+            np.maximum(aim, low_end), high_end
+        )  # a zero at an end may be aimed at from just outside
         done = inside & (np.abs(step) <= NEAR * size) & (np.abs(ratio) <= NEAR)
         done |= (f == 0.0) | (high_end - low_end <= 4e-16 * high_end)
         aim = np.where(f == 0.0, now, np.where(inside, aim, 0.5 * (low_end + high_end)))

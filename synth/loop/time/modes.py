@@ -1,53 +1,17 @@
-"""The step responses of a loop as sums of modes: residues over the computed poles.
+"""The step responses of a loop as sums of modes.
 
-M loops, n poles, m mode slots (a complex pair is one slot, its upper pole), S signals, P blocks, E points.
-Signals are counted from their value at infinity:
+M loops, m mode slots (a complex pair is one slot, its upper pole), S signals, P blocks, E points. Signals
+are counted from their values at infinity:
 
     x(t) - x(inf) = Re sum_i r_i e^(p_i t)        the residue of a pair counts double
-
-The residues are products over the COMPUTED poles. Those are the exact poles of a nearby loop, so their errors
-cancel in the sum; residues from the derivative of the polynomial lose every digit at near-equal poles.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
-from synth.loop.closed_loop import Loops, trimmed
-
-CELLS = 8
-"""Cells of equal width in a block."""
-
-HERMITE = 1.0 / 384.0
-"""Error of the cubic through both end values and slopes, per h^4 and fourth derivative."""
-
-
-@dataclass(frozen=True, slots=True)
-class Profile:
-    """Coarse course of the signals: what the block plan is made from. K times, the first one 0.
-
-    time       (M, K) increasing from 0 by a constant factor after the first two
-    deviation  (M, S, K) x - x(inf)
-    envelope   (M, S, K) bound of abs(x - x(inf)) from that time on
-    fourth     (M, S, K) bound of the fourth derivative from that time on
-    rivals     (M, S, K) bound of the slope of all other modes over that of the slowest, where that is real; below 1 the
-               signal is monotone from that time on; inf where the slowest is a pair
-    area       (M, S, K) bound of the integral of abs(x - x(inf)) from that time on; None when not asked for
-    others     (M, S, K) the same without the slowest mode; None when not asked for
-    log_convex whether the bounds are sums of decaying exponentials
-    """
-
-    time: FloatArray
-    deviation: FloatArray
-    envelope: FloatArray
-    fourth: FloatArray
-    rivals: FloatArray
-    area: FloatArray | None
-    others: FloatArray | None
-    log_convex: bool = True
+from synth.loop.time.signals import CELLS, HERMITE, Profile
 
 
 class Modes:
@@ -128,12 +92,20 @@ class Modes:
         bound = np.matmul(np.concatenate(weights, axis=1), decay.transpose(1, 2, 0))
         parts = [bound[:, k * s : (k + 1) * s] for k in range(len(weights))]
         with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-            first = np.where(slow & (self.pole.imag == 0.0)[:, None], self.size * fall[:, None], 0.0).sum(axis=2)
+            first = np.where(slow & (self.pole.imag == 0.0)[:, None], self.size * fall[:, None], 0.0).sum(
+                axis=2
+            )
             slowest = decay.transpose(1, 0, 2)[np.arange(m)[:, None], :, self.first()]
             rivals = parts[2] / (first[:, :, None] * slowest)
         rivals[~(rivals >= 0.0)] = np.inf
         return Profile(
-            time, deviation, parts[0], parts[1], rivals, parts[3] if areas else None, parts[4] if areas else None
+            time,
+            deviation,
+            parts[0],
+            parts[1],
+            rivals,
+            parts[3] if areas else None,
+            parts[4] if areas else None,
         )
 
     def bounds(self, loop: IntArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -186,7 +158,9 @@ class Modes:
     def jet(
         self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int
     ) -> list[FloatArray]:
-        """Derivatives number first, first + 1, ... (-1: the primitive that vanishes at infinity), each (E,)."""
+        """Derivatives number first, first + 1, ... (-1: the primitive that vanishes at infinity), each
+        (E,).
+        """
         pole = self._pole.take(loop, axis=1)
         term = np.exp(pole * t)
         term *= self._residue.take(loop * self.residue.shape[1] + signal, axis=1)
@@ -209,10 +183,10 @@ class Modes:
     def tail(self, loop: IntArray, signal: IntArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Integral of abs(x) from t on, and a bound of its error. (E,) each.
 
-        Where the slowest mode is real and its slope outweighs all others', x keeps its sign: exact. Else the slowest
-        mode stands for all, and the others' areas bound the error. With f = r e^(p t) / p, the primitive of a
-        pair's mode, and abs f falling by e^(-pi sigma/omega) from zero to zero, the sum after the first zero is
-        abs(f(zero)) coth(pi sigma / (2 omega)).
+        Where the slowest mode is real and its slope outweighs all others', x keeps its sign: exact. Else the
+        slowest mode stands for all, and the others' areas bound the error. With f = r e^(p t) / p, the
+        primitive of a pair's mode, and abs f falling by e^(-pi sigma/omega) from zero to zero, the sum after
+        the first zero is abs(f(zero)) coth(pi sigma / (2 omega)).
         """
         slots = self.pole.shape[1]
         slot = self.first()[loop, signal]
@@ -237,75 +211,3 @@ def _real(array: ComplexArray) -> FloatArray:
     """A complex array (..., k) as a real one (..., 2 k), no copy when it is contiguous."""
     out: FloatArray = np.ascontiguousarray(array).view(np.float64)
     return out
-
-
-def numerator_of(loops: Loops, signal: str) -> FloatArray:
-    """(M, n + 1) numerator of T ("y"), C S ("u") or P S ("d") over the characteristic polynomial."""
-    rows = {"y": loops.numerator, "u": loops.control, "d": loops.load}[signal]
-    return trimmed(rows, loops.order)
-
-
-def upper_half(poles: ComplexArray) -> tuple[ComplexArray, FloatArray, IntArray]:
-    """Poles (M, n) of the upper half plane and the real ones, in their order.
-
-    Returns (M, m) poles with -1 in empty slots, (M, m) weights (2 a pair, 1 a real, 0 an empty slot) and the
-    column (M, m) each came from.
-    """
-    keep = poles.imag >= 0.0
-    m = int(keep.sum(axis=1).max(initial=0))
-    column: IntArray = np.argsort(~keep, axis=1, kind="stable")[:, :m]
-    pole = np.take_along_axis(poles, column, axis=1)
-    used = np.take_along_axis(keep, column, axis=1)
-    weight = np.where(used, np.where(pole.imag > 0.0, 2.0, 1.0), 0.0)
-    return np.where(used, pole, -1.0), weight, column
-
-
-def step_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -> Modes:
-    """Residues of the step responses of the named signals.
-
-    Error relative to the signal: about eps max abs(r) / max abs(x); infinite residues where poles coincide
-    exactly.
-    """
-    if poles.shape[1] == 0:  # a static loop
-        return Modes(np.full((len(loops), 1), -1.0 + 0.0j), np.zeros((len(loops), len(signals), 1), dtype=complex))
-    pole, weight, column = upper_half(poles)
-    m, slots = pole.shape
-    gap = pole[:, :, None] - poles[:, None, :]
-    np.put_along_axis(gap, column[:, :, None], 1.0, axis=2)
-    with np.errstate(all="ignore"):
-        factor = weight / (loops.closed[:, :1] * pole * gap.prod(axis=2))
-        factor[weight == 0.0] = 0.0
-        residue = np.empty((m, len(signals), slots), dtype=complex)
-        for i, name in enumerate(signals):
-            top = numerator_of(loops, name)
-            value = np.zeros((m, slots), dtype=complex)
-            value += top[:, :1]
-            for k in range(1, top.shape[1]):
-                value *= pole
-                value += top[:, k, None]
-            np.multiply(value, factor, out=residue[:, i])
-    return Modes(pole, residue)
-
-
-def crowding(poles: ComplexArray) -> FloatArray:
-    """(M,) about how much larger residues are than they would be with the poles apart: the loss of digits.
-
-    The product of the relative distances of the most crowded pole, where they are below 1, inverted. inf where poles
-    coincide.
-    """
-    size = np.abs(poles)
-    gap = np.abs(poles[:, :, None] - poles[:, None, :])
-    gap /= np.maximum(size[:, :, None], size[:, None, :])
-    index = np.arange(poles.shape[1])
-    gap[:, index, index] = 1.0
-    with np.errstate(divide="ignore", over="ignore"):
-        out: FloatArray = 1.0 / np.minimum(gap, 1.0).prod(axis=2).min(axis=1, initial=1.0)
-    return out
-
-
-def limits(loops: Loops, signals: tuple[str, ...]) -> tuple[FloatArray, FloatArray]:
-    """Values of the named signals at 0+ and at infinity, (M, S) each."""
-    top = [numerator_of(loops, name) for name in signals]
-    start = np.stack([p[:, 0] / loops.closed[:, 0] for p in top], axis=1)
-    end = np.stack([p[:, -1] / loops.closed[:, -1] for p in top], axis=1)
-    return start, end

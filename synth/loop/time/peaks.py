@@ -1,7 +1,7 @@
 """Suprema: the largest value a signal takes, proven over every cell.
 
-A question asks for the supremum of sign * (x + offset) over t >= 0. Its answer starts from what is known (nodes, limits)
-and is raised until no cell can hold more.
+A question asks for the supremum of sign * (x + offset) over t >= 0. Its answer starts from what is known
+(nodes, limits) and is raised until no cell can hold more.
 """
 
 from __future__ import annotations
@@ -13,7 +13,7 @@ import numpy as np
 from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.time.cells import Cells
 from synth.loop.time.events import extremum
-from synth.loop.time.modes import Modes
+from synth.loop.time.signals import Signals
 
 ROUNDS = 8
 
@@ -57,7 +57,7 @@ class Peaks:
         self.place[answer[higher]] = place[higher]
 
 
-def resolve(modes: Modes, peaks: Peaks, cells: Cells) -> None:
+def resolve(modes: Signals, peaks: Peaks, cells: Cells) -> None:
     """Raise every answer to its supremum over the cells (already in the terms of their question)."""
     for _ in range(ROUNDS):
         if len(cells) == 0:

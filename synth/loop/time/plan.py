@@ -1,9 +1,9 @@
 """Where to look: blocks of cells narrow enough to prove what a cubic says, and no further than needed.
 
-On a cell of width h the cubic through its end values and slopes misses the signal by at most h^4/384 times the
-largest fourth derivative (G. Birkhoff, A. Priver, Hermite interpolation errors for derivatives, J. Math. Phys.
-46 (1967)), which the sum of abs(r) abs(p)^4 e^(-sigma t) bounds from t on. The plan makes that error a small
-part of the signal, or of its envelope where that is less.
+On a cell of width h the cubic through its end values and slopes misses the signal by at most h^4/384 times
+the largest fourth derivative (G. Birkhoff, A. Priver, Hermite interpolation errors for derivatives, J. Math.
+Phys. 46 (1967)), which the sum of abs(r) abs(p)^4 e^(-sigma t) bounds from t on. The plan makes that error a
+small part of the signal, or of its envelope where that is less.
 """
 
 from __future__ import annotations
@@ -12,8 +12,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from synth.loop.arrays import FloatArray, IntArray
-from synth.loop.time.modes import CELLS, HERMITE, Modes, Profile
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.time.signals import CELLS, HERMITE, Profile, Signals
 
 TAIL = 0.02
 """Cubic error allowed, relative to the envelope."""
@@ -46,13 +46,13 @@ class Plan:
 def reach(profile: Profile, curve: FloatArray, level: FloatArray) -> FloatArray:
     """(M,) earliest sure time at which a decreasing curve (M, K) of the profile is <= level (M,).
 
-    Between two times a log-convex curve is read off the chord of its logarithm, which lies above it. The last time
-    where the level is never reached.
+    Between two times a log-convex curve is read off the chord of its logarithm, which lies above it. The
+    last time where the level is never reached.
     """
     time, below = profile.time, curve <= level[:, None]
     k = np.where(below.any(axis=1), below.argmax(axis=1), curve.shape[1] - 1)
     row = np.arange(len(k))
-    right = time[row, k]
+    right: FloatArray = time[row, k]
     if not profile.log_convex:
         return right
     before = np.maximum(k - 1, 0)
@@ -65,13 +65,14 @@ def reach(profile: Profile, curve: FloatArray, level: FloatArray) -> FloatArray:
     return out
 
 
-def onset(time: FloatArray, holds: FloatArray) -> FloatArray:
+def onset(time: FloatArray, holds: BoolArray) -> FloatArray:
     """(M,) first time from which `holds` (M, K) is true; inf where it is not."""
     return np.where(holds.any(axis=1), time[np.arange(len(time)), holds.argmax(axis=1)], np.inf)
 
 
 def widths(profile: Profile, ends: FloatArray, allowed: FloatArray) -> FloatArray:
-    """(M, K) cell width at each time that the most demanding signal allows; inf where none is looked at any more.
+    """(M, K) cell width at each time that the most demanding signal allows; inf where none is looked at any
+    more.
 
     ends (M, S) when each signal has been seen enough; allowed (M, S) cubic error allowed.
     """
@@ -83,7 +84,7 @@ def widths(profile: Profile, ends: FloatArray, allowed: FloatArray) -> FloatArra
     return out
 
 
-def blocks(modes: Modes, profile: Profile, ends: FloatArray, allowed: FloatArray, most: int) -> Plan:
+def blocks(modes: Signals, profile: Profile, ends: FloatArray, allowed: FloatArray, most: int) -> Plan:
     """Blocks from 0 to the last of the ends of each loop, at most `most` a loop (then the plan stops early).
 
     Where the widths of the table are followed through, one block more is a block's length further. So that a
@@ -121,7 +122,7 @@ def blocks(modes: Modes, profile: Profile, ends: FloatArray, allowed: FloatArray
 
 
 def _cut(
-    modes: Modes, loop: IntArray, t: FloatArray, h: FloatArray, ends: FloatArray, allowed: FloatArray
+    modes: Signals, loop: IntArray, t: FloatArray, h: FloatArray, ends: FloatArray, allowed: FloatArray
 ) -> Plan:
     """The blocks with the cubic error of each, and those with too much of it cut."""
     fourth, envelope = modes.bounds(loop, t)

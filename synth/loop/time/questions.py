@@ -44,10 +44,12 @@ class Answers:
     """Arrays (M,) in the order of the questions.
 
     suprema, times   value, and where it is taken (NaN: only as a limit)
-    passages         time; 0 where the signal is outside from the start (first) or never (last); inf: first, never
+    passages         time; 0 where the signal is outside from the start (first) or never (last); inf: first,
+                     never
     areas, doubts    value, and bound of its relative error
     seen             time up to which the blocks of the plan reached
-    supremum_ends, passage_ends   times after which nothing can change the answer; past `seen` where it is not proven
+    supremum_ends, passage_ends   times after which nothing can change the answer; past `seen` where it is
+                                  not proven
     """
 
     suprema: list[FloatArray] = field(default_factory=list)

@@ -1,4 +1,5 @@
-"""One pass over the planned blocks: node values, and the cells whose slope does not provably keep its sign."""
+"""One pass over the planned blocks: node values, and the cells whose slope does not provably keep its
+sign."""
 
 from __future__ import annotations
 
@@ -8,7 +9,7 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.time.cells import SLOPE_MISS, Cells
-from synth.loop.time.modes import Modes
+from synth.loop.time.signals import Signals
 
 
 @dataclass(slots=True)
@@ -80,7 +81,7 @@ class Scan:
 
 
 def scan(
-    modes: Modes,
+    modes: Signals,
     owner: IntArray,
     first: IntArray,
     loop: IntArray,

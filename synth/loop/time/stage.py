@@ -9,9 +9,11 @@ import numpy as np
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops
 from synth.loop.quantities import Measure
-from synth.loop.time.answers import Answers, Area, Passage, Supremum, answer
-from synth.loop.time.clusters import ClusterModes, cluster_modes
-from synth.loop.time.modes import Modes, crowding, limits, step_modes
+from synth.loop.time.answers import answer
+from synth.loop.time.clusters import cluster_modes
+from synth.loop.time.questions import Answers, Area, Passage, Supremum
+from synth.loop.time.residues import crowding, limits, step_modes
+from synth.loop.time.signals import Signals
 
 REACHES = {
     "overshoot": "y",
@@ -79,7 +81,7 @@ class _Reading:
     def __init__(
         self,
         loops: Loops,
-        modes: Modes | ClusterModes,
+        modes: Signals,
         signals: tuple[str, ...],
         asked: tuple[Measure, ...],
     ) -> None:
@@ -179,7 +181,9 @@ class _Reading:
         """100 sup of abs(z - 1) from m.after on: the same question of the responses seen from then on."""
         later = self.modes.later([self.index["y"]], m.after / self.loops.time_scale)
         value: FloatArray = later.largest()[:, 0].copy()
-        rows = np.flatnonzero(value > FADED)  # what has died out by then is bounded well enough by its envelope
+        rows = np.flatnonzero(
+            value > FADED
+        )  # what has died out by then is bounded well enough by its envelope
         zero = np.zeros(len(rows))
         if rows.size:
             still = later.rows(rows)

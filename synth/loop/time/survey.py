@@ -7,11 +7,10 @@ import numpy as np
 from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.time import areas, crossings, peaks
 from synth.loop.time.cells import Cells, joined, no_cells
-from synth.loop.time.clusters import ClusterModes
-from synth.loop.time.modes import CELLS, Modes, Profile
 from synth.loop.time.plan import Plan, onset, reach
 from synth.loop.time.questions import Answers, Area, Passage, Supremum
 from synth.loop.time.scan import Scan
+from synth.loop.time.signals import CELLS, Profile, Signals
 
 RESOLUTION = 1e-9
 """Suprema are proven to this part of the signal's size; less than that above the floor is rounding."""
@@ -25,7 +24,7 @@ class Survey:
 
     def __init__(
         self,
-        modes: Modes | ClusterModes,
+        modes: Signals,
         profile: Profile,
         unit: FloatArray,
         suprema: list[Supremum],
@@ -62,7 +61,12 @@ class Survey:
 
     def _known_peaks(self) -> peaks.Peaks:
         """Suprema over the samples, and when nothing larger can come."""
-        best, places, tolerance, answer_of, signs, offsets = [], [], [], [], [], []
+        best: list[FloatArray] = []
+        places: list[FloatArray] = []
+        tolerance: list[FloatArray] = []
+        answer_of: list[int] = []
+        signs: list[float] = []
+        offsets: list[FloatArray] = []
         self.question: list[list[int]] = []
         self.sampled: list[tuple[FloatArray, FloatArray]] = []
         row = np.arange(self.m)
@@ -111,7 +115,9 @@ class Survey:
         if p.high < -RESOLUTION:
             return np.minimum(1.001 * seen, reach(self.profile, envelope, np.full(self.m, -0.98 * p.high)))
         fine = np.full(self.m, max(p.high, RESOLUTION))
-        return np.minimum(1.001 * seen, np.minimum(reach(self.profile, envelope, fine), self.steady[p.signal]))
+        return np.minimum(
+            1.001 * seen, np.minimum(reach(self.profile, envelope, fine), self.steady[p.signal])
+        )
 
     def _area_end(self, q: Area) -> FloatArray:
         """Looks until the tail is a single mode or nothing; returns about the area, (M,)."""
@@ -130,7 +136,8 @@ class Survey:
 
     def look(self, s: Scan) -> None:
         """Take from one pass what it tells, and keep the cells that need more."""
-        signals = sorted({q.signal for q in (*self.suprema, *self.passages, *self.integrals)})
+        asked: list[Supremum | Passage | Area] = [*self.suprema, *self.passages, *self.integrals]
+        signals = sorted({q.signal for q in asked})
         for signal in signals:
             doubtful = s.doubtful(signal)
             block = doubtful % len(s.loop)
@@ -266,9 +273,11 @@ class Survey:
             weight = np.concatenate(self.weight) * (1e-2 * AREA_RESOLUTION)
             cells = areas.zeros(self.modes, cells, weight)
             for k, q in enumerate(self.integrals):
-                mine = cells.rows(cells.key // m == k)
-                mine = mine.keyed(mine.loop)
-                total, doubt = areas.area(self.modes, q.signal, np.arange(m), np.minimum(self.area_end[k], out.seen), mine)
+                held = cells.rows(cells.key // m == k)
+                held = held.keyed(held.loop)
+                total, doubt = areas.area(
+                    self.modes, q.signal, np.arange(m), np.minimum(self.area_end[k], out.seen), held
+                )
                 out.areas.append(total)
                 out.doubts.append(doubt)
         return out

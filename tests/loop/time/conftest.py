@@ -9,7 +9,7 @@ from synth.loop.poles.stage import pole_stage
 
 
 def unity_loop(poles, zeros=()):
-    """(loops, poles) of the unity loop whose T has these poles and zeros, T(0) = 1, and an integrator in L."""
+    """(loops, poles) of the unity loop whose T has these poles and zeros, and an integrator in L."""
     closed = np.real(np.poly(poles))
     top = np.atleast_1d(np.real(np.poly(zeros))) if len(zeros) else np.ones(1)
     top = np.concatenate([np.zeros(len(closed) - len(top)), top * closed[-1] / top[-1]])
@@ -20,7 +20,7 @@ def unity_loop(poles, zeros=()):
 
 
 def random_loops(rng, count, order, light=False, least_damping=0.02):
-    """Stable loops of PI and PID compensators (filtered) round random plants, spread over four decades of time."""
+    """Stable loops of filtered PI and PID compensators round random plants of widely spread poles."""
     plants, compensators = [], []
     for _ in range(count):
         roots = []
@@ -28,11 +28,16 @@ def random_loops(rng, count, order, light=False, least_damping=0.02):
             size = 10.0 ** rng.uniform(-1.5, 1.8)
             if len(roots) + 2 <= order - 2 and rng.random() < 0.5:
                 zeta = rng.uniform(0.01, 0.08) if light else rng.uniform(0.1, 1.0)
-                roots += [size * complex(-zeta, np.sqrt(1 - zeta**2)), size * complex(-zeta, -np.sqrt(1 - zeta**2))]
+                roots += [
+                    size * complex(-zeta, np.sqrt(1 - zeta**2)),
+                    size * complex(-zeta, -np.sqrt(1 - zeta**2)),
+                ]
             else:
                 roots.append(-size)
         den = np.real(np.poly(roots)) if roots else np.ones(1)
-        zeros = [-(10.0 ** rng.uniform(-1, 1.5)) * rng.choice([1, 1, 1, -1]) for _ in range(rng.integers(0, order))]
+        zeros = [
+            -(10.0 ** rng.uniform(-1, 1.5)) * rng.choice([1, 1, 1, -1]) for _ in range(rng.integers(0, order))
+        ]
         zeros = zeros[: max(len(roots) - 1, 0)]
         num = np.atleast_1d(np.real(np.poly(zeros))) if zeros else np.ones(1)
         num = num * den[-1] / num[-1]
@@ -108,7 +113,10 @@ def _horner(row, x):
 
 def _roots(row, slope):
     """All roots by Aberth's iteration from the double ones."""
-    roots = [mp.mpc(complex(x)) * (1 + mp.mpc(0, 1e-9) * k) for k, x in enumerate(np.roots([float(c) for c in row]))]
+    roots = [
+        mp.mpc(complex(x)) * (1 + mp.mpc(0, 1e-9) * k)
+        for k, x in enumerate(np.roots([float(c) for c in row]))
+    ]
     for _ in range(100):
         moved = mp.mpf(0)
         for k, p in enumerate(roots):

@@ -34,7 +34,9 @@ def refined(reference, name, times, index, order):
 @pytest.mark.parametrize("order", range(1, 13))
 def test_all_quantities(random_loops, exact, order):
     rng = np.random.default_rng(order)
-    loops, poles = random_loops(rng, 40 if order < 7 else 400, order, light=bool(order % 2), least_damping=0.01)
+    loops, poles = random_loops(
+        rng, 40 if order < 7 else 400, order, light=bool(order % 2), least_damping=0.01
+    )
     loops, poles = loops.rows(np.arange(min(4, len(loops)))), poles[:4]
     assert len(loops) >= 2
     got = time_stage(loops, poles, TIME)

@@ -27,7 +27,9 @@ def test_second_order(zeta, omega):
     start = (np.pi - angle) / root
 
     def primitive(x):  # of (1 - z), vanishing at infinity
-        return -np.exp(-zeta * x) * (2 * zeta * np.cos(root * x) + (2 * zeta**2 - 1) / root * np.sin(root * x))
+        return -np.exp(-zeta * x) * (
+            2 * zeta * np.cos(root * x) + (2 * zeta**2 - 1) / root * np.sin(root * x)
+        )
 
     area = abs(primitive(start) - primitive(0)) + abs(primitive(start)) / np.tanh(np.pi * zeta / (2 * root))
     np.testing.assert_allclose(got["overshoot"], 100 * first, rtol=1e-9)
@@ -145,4 +147,6 @@ def test_full_rise_is_absent_where_it_is_never_complete():
 def test_overshoot_below_a_hundredth_of_a_per_cent(zeta):
     """0.00137 % at 0.9634..., 0.0171 % at 0.94: the tail is followed until nothing can overshoot."""
     got = values(([1.0], [1.0, 2 * zeta, 0.0]), ([1.0], [1.0]))
-    np.testing.assert_allclose(got["overshoot"], 100 * np.exp(-np.pi * zeta / np.sqrt(1 - zeta**2)), rtol=1e-7)
+    np.testing.assert_allclose(
+        got["overshoot"], 100 * np.exp(-np.pi * zeta / np.sqrt(1 - zeta**2)), rtol=1e-7
+    )

@@ -7,7 +7,7 @@ import pytest
 from synth.loop.closed_loop import Loops
 from synth.loop.quantities import EVERY_QUANTITY, Measure
 from synth.loop.time.clusters import cluster_modes
-from synth.loop.time.modes import crowding, step_modes
+from synth.loop.time.residues import crowding, step_modes
 from synth.loop.time.stage import CROWDED, time_stage
 
 TIMES = np.concatenate([np.linspace(0.0, 15.0, 40), [25.0, 60.0]])
@@ -92,13 +92,15 @@ def test_repeated_real_pole(unity_loop, count):
 
 
 def test_double_pair_peaks(unity_loop):
-    """T = 25/(s^2 + 2 s + 5)^2: slope of y is 25/16 e^(-t) (sin 2t - 2t cos 2t), so the peak is at tan x = x, x = 2t."""
+    """T = 25/(s^2 + 2 s + 5)^2: y' = 25/16 e^(-t) (sin 2t - 2t cos 2t), so the peak is at tan 2t = 2t."""
     loops, found = unity_loop([-1 + 2j, -1 - 2j] * 2)
     measures = (Measure("overshoot"), Measure("peak_time"))
     got = time_stage(loops, found, measures).values
     x = float(mp.findroot(lambda v: mp.tan(v) - v, 4.49))
     np.testing.assert_allclose(got[measures[1]] * loops.time_scale, 2 * x / 4, rtol=1e-7)
-    at = float(mp.quad(lambda t: 25 / 16 * mp.exp(-t) * (mp.sin(2 * t) - 2 * t * mp.cos(2 * t)), [0, 1, x / 2]))
+    at = float(
+        mp.quad(lambda t: 25 / 16 * mp.exp(-t) * (mp.sin(2 * t) - 2 * t * mp.cos(2 * t)), [0, 1, x / 2])
+    )
     np.testing.assert_allclose(got[measures[0]], 100 * (at - 1), rtol=1e-8)
 
 

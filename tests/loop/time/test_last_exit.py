@@ -40,7 +40,7 @@ def test_grazing_extrema(unity_loop, zeta, count, gap):
 @pytest.mark.parametrize("ratio", [1e-2, 1e-3, 1e-4])
 @pytest.mark.parametrize("share", [0.03, 0.05, 0.3, -0.03, -0.05])
 def test_slow_dipole(unity_loop, ratio, share):
-    """A fast pair, and a slow pole beside a zero that leaves it a share of the response just above the band."""
+    """A fast pair, and a slow pole beside a zero that leaves it a share just above the band."""
     # T = (s/z + 1) / ((s/p + 1) fast): the residue of T/s at -p is -(1 - p/z) / fast(-p)
     p = ratio
     fast = [-1.0 + 1.0j, -1.0 - 1.0j]
@@ -93,7 +93,9 @@ def test_no_late_exit_among_many(random_loops, exact, order, light):
         got = time_stage(loops, poles, (measure,)).values[measure]
         final = loops.numerator[:, -1] / loops.closed[:, -1]
         # slopes of the polynomial, not the product over the poles that the code under test uses
-        residue = evaluate_rows(loops.numerator, poles) / (poles * evaluate_rows(slope_of(loops.closed), poles))
+        residue = evaluate_rows(loops.numerator, poles) / (
+            poles * evaluate_rows(slope_of(loops.closed), poles)
+        )
         residue /= final[:, None]
         life = np.log(np.maximum(np.abs(residue), 1e-3) * poles.shape[1] / 0.01) / -poles.real
         span = np.maximum(life.max(axis=1) - got, 1e-6)
@@ -121,7 +123,7 @@ def slope_of(rows):
 
 
 def test_lightly_damped_loops_are_read_from_their_end(unity_loop):
-    """zeta = 1e-5: 124,000 periods. The envelope e^(-zeta t)/root meets the band within half a period of the exit."""
+    """zeta = 1e-5: 62,000 periods. The envelope meets the band within half a period after the exit."""
     zeta = 1e-5
     root = np.sqrt(1 - zeta**2)
     loops, poles = unity_loop([-zeta + 1j * root, -zeta - 1j * root])

@@ -1,4 +1,4 @@
-"""Laws of the time stage: rows do not see each other, time has no unit, fewer questions give the same answers."""
+"""Laws: rows do not see each other, time has no unit, fewer questions give the same answers."""
 
 import numpy as np
 import pytest
@@ -20,7 +20,9 @@ TIME = (
 
 @pytest.mark.parametrize("order", [2, 4, 6, 9])
 def test_each_row_is_the_row_alone(random_loops, order):
-    loops, poles = random_loops(np.random.default_rng(order), 120, order, light=order == 4, least_damping=1e-3)
+    loops, poles = random_loops(
+        np.random.default_rng(order), 120, order, light=order == 4, least_damping=1e-3
+    )
     together = time_stage(loops, poles, TIME)
     assert len(loops) >= 5
     for i in range(0, len(loops), 7):
@@ -61,7 +63,11 @@ def test_time_has_no_unit(stretch, gain, zeta, lag):
     for i, m in enumerate(measures):
         power = stretch**m.row.time_power
         np.testing.assert_allclose(
-            other.values[0, 0, i], one.values[0, 0, i] * power, rtol=3e-6, atol=1e-8 * power, err_msg=m.quantity
+            other.values[0, 0, i],
+            one.values[0, 0, i] * power,
+            rtol=3e-6,
+            atol=1e-8 * power,
+            err_msg=m.quantity,
         )
 
 
@@ -73,11 +79,13 @@ def test_a_supremum_that_comes_late_is_followed(unity_loop):
     measures = (Measure("overshoot"), Measure("peak_time"))
     got = time_stage(loops, poles, measures).values
     t = np.linspace(0.0, 700.0, 2_000_001) / loops.time_scale[0]
-    residue = np.array([
-        np.polyval(loops.numerator[0], p)
-        / (p * loops.closed[0, 0] * np.prod([p - q for j, q in enumerate(poles[0]) if j != i]))
-        for i, p in enumerate(poles[0])
-    ])
+    residue = np.array(
+        [
+            np.polyval(loops.numerator[0], p)
+            / (p * loops.closed[0, 0] * np.prod([p - q for j, q in enumerate(poles[0]) if j != i]))
+            for i, p in enumerate(poles[0])
+        ]
+    )
     y = sum(2 * (r * np.exp(p * t)).real for r, p in zip(residue[::2], poles[0][::2], strict=True))
     np.testing.assert_allclose(got[measures[0]], 100 * y.max(), rtol=1e-6)
     np.testing.assert_allclose(got[measures[1]], t[y.argmax()], rtol=1e-5)
