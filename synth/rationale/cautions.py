@@ -7,8 +7,8 @@ import math
 import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray
-from synth.rationale.figures import count, figure, quantity
 from synth.rationale.scene import Scene
+from synth.wording.figures import count, figure, quantity
 
 HARDWARE = (
     "A model is not the machine: check sign, units and direction, limit the first trials, keep an emergency "

@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import math
 
-from synth.rationale.figures import count, figure, percent, quantity
 from synth.rationale.scene import Scene
-from synth.rationale.words import limit_words, name_of
 from synth.search.outcome import Outcome, Rejection, Scan
 from synth.spec import Spec
+from synth.wording.figures import count, figure, percent, quantity
+from synth.wording.names import limit_words, name_of
 
 LISTED = 2  # requirements named; the rest is counted
 

@@ -6,12 +6,12 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, Literal
 
-from synth.rationale.figures import count, percent
 from synth.rationale.scene import Scene
 from synth.rationale.sentences import said_binding
-from synth.rationale.words import parameter_name
 from synth.search.outcome import Candidate, Outcome
 from synth.spec import Spec
+from synth.wording.figures import count, percent
+from synth.wording.names import parameter_name
 
 Advice = Literal["keep", "retune", "restructure", "relax"]
 

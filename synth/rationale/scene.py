@@ -9,10 +9,10 @@ import numpy as np
 
 from synth.loop.arrays import FloatArray
 from synth.loop.quantities import Measure
-from synth.rationale.words import plant_unit, quantity_unit
 from synth.requirements import Bound
 from synth.search.outcome import Candidate, Outcome
 from synth.spec import Spec
+from synth.wording.names import plant_unit, quantity_unit
 
 
 @dataclass(frozen=True, slots=True)

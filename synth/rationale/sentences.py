@@ -7,9 +7,9 @@ from collections.abc import Callable
 
 from synth.rationale import facts
 from synth.rationale.facts import Fact
-from synth.rationale.figures import count, figure, percent, quantity
 from synth.rationale.scene import Scene
-from synth.rationale.words import limit_words, name_of, parameter_name
+from synth.wording.figures import count, figure, percent, quantity
+from synth.wording.names import limit_words, name_of, parameter_name
 
 MOVED = "10 %"  # by which each tuned value is moved in the fragility fact
 

@@ -8,11 +8,11 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from synth.rationale.figures import count, figure, percent, quantity
 from synth.rationale.scene import Scene
-from synth.rationale.words import limit_words, name_of
 from synth.search.outcome import Outcome
 from synth.spec import Spec
+from synth.wording.figures import count, figure, percent, quantity
+from synth.wording.names import limit_words, name_of
 
 if TYPE_CHECKING:
     from synth.limits import Limit

@@ -1,6 +1,5 @@
 """Records: their fields, how they are built, written, read and compared."""
 
-from synth.rationale.words import parameter_name, quantity_name
 from synth.record.files import text_of
 from synth.record.format import (
     ADOPTION_FORMAT,
@@ -35,6 +34,7 @@ from synth.record.store import (
     write_record,
 )
 from synth.record.wording import plant_unit, quantity_unit, requirement_name
+from synth.wording.names import parameter_name, quantity_name
 
 __all__ = [
     "ADOPTION_FORMAT",

@@ -16,7 +16,6 @@ from synth.loop.closed_loop import Rational
 from synth.loop.quantities import EVERY_QUANTITY
 from synth.rationale import Said, Scene, cautions, rationale, uncounted, worst_of
 from synth.rationale.closest import reason
-from synth.rationale.words import options_of
 from synth.record import curves
 from synth.record.format import (
     RECORD_FORMAT,
@@ -45,6 +44,7 @@ from synth.search.outcome import Candidate as Found
 from synth.search.outcome import Outcome
 from synth.spec import Spec
 from synth.structures import REGISTRY, SETTING_UNITS
+from synth.wording.names import options_of
 
 if TYPE_CHECKING:
     from synth.limits import Limit

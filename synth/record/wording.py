@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 from synth.loop.quantities import QUANTITIES
-from synth.rationale import words
 from synth.record.format import Requirement, SpecPart
+from synth.wording import names as words
 
 
 def quantity_unit(key: str, spec: SpecPart | None = None) -> str:

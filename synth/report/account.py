@@ -6,12 +6,12 @@ import math
 
 from rich.text import Text
 
-from synth.rationale.figures import figure, percent, quantity
 from synth.record import Candidate, Near, Record, Requirement, number, quantity_name
 from synth.report import pictures
 from synth.report.settings import forms, fraction, poles_table, tuned
 from synth.report.theme import Columns, hanging, heading, items
 from synth.report.view import View, order
+from synth.wording.figures import figure, percent, quantity
 
 
 def account(record: Record, candidate: Candidate, width: int) -> list[Text]:
@@ -72,7 +72,10 @@ def _requirements(view: View, candidate: Candidate, width: int) -> list[Text]:
         if line.cell_len > width:
             line.truncate(width, overflow="ellipsis")
     lines.extend(_also(view, candidate, width))
-    out = [heading("Requirements", "where each is nearest its limit; * holds the candidate back"), *lines]
+    out = [
+        heading("Requirements", "where each is nearest its limit; * holds the candidate back", width),
+        *lines,
+    ]
     out.extend(_footnotes(view, candidate, width))
     return out
 

@@ -13,7 +13,7 @@ from typing import Literal
 
 from rich.text import Text
 
-from synth.rationale.figures import figure
+from synth.wording.figures import figure
 
 Line = Literal["solid", "long", "dashed", "dotted", "sparse"]
 _ON_OFF: dict[Line, tuple[int, int]] = {

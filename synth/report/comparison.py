@@ -3,18 +3,18 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 from rich.text import Text
 
-from synth.rationale.figures import figure, percent, unit_for
 from synth.record import Candidate, Record, number, quantity_name, quantity_unit, requirement_name
 from synth.report.settings import tuned
 from synth.report.theme import Columns, hanging, heading, items
 from synth.report.view import SIGN, View, order
+from synth.wording.figures import figure, percent, unit_for
 
-CELL = 10
+INDENT, GAP = 2, 2
 ALWAYS = (
     "damping_ratio",
     "overshoot",
@@ -51,11 +51,17 @@ def comparison(named: Sequence[tuple[str, Record]], width: int) -> list[Text]:
         columns.extend(Column(f"{letter}{c['rank']}", record, c) for c in record["candidates"])
     if not columns:
         return [*lines, Text("\nno candidates in them")]
-    left = 28
-    room = max(1, (width - left - 2) // CELL)
+    rows = _rows(columns)
+    left = INDENT + max(len(label) for label, _ in rows)
+    cell = GAP + max(t.cell_len for _, cells in rows for t in cells)
+    room = max(1, (width - left) // cell)
     for start in range(0, len(columns), room):
-        lines.append(heading("Side by side", "worst plant case of each" if start == 0 else "continued"))
-        lines.extend(_block(columns[start : start + room]))
+        aside = ("worst plant case of each" if any_cases(named) else "") if start == 0 else "continued"
+        lines.append(heading("Side by side", aside, width))
+        table = Columns(("<", *(">" for _ in columns[start : start + room])), indent=INDENT, gap=GAP)
+        for label, cells in rows:
+            table.add(label, *cells[start : start + room])
+        lines.extend(table.lines())
     lines.append(Text("  * holds it back   ! falls short of its own sheet", style="dim"))
     lines.append(heading("Tuned values"))
     label = max(len(c.label) for c in columns) + 4
@@ -74,21 +80,33 @@ def _record_line(letter: str, file: str, record: Record, width: int) -> Text:
     return hanging(f"{letter}  " if letter else "", text, width)
 
 
-def _block(columns: Sequence[Column]) -> list[Text]:
-    table = Columns(("<", *(">" for _ in columns)))
-    table.add("", *(c.label for c in columns), style="dim")
-    table.add("structure", *(Text(c.candidate["structure"][: CELL - 1], style="name") for c in columns))
-    table.add("order", *(str(order(c.candidate)) for c in columns))
-    table.add("meets its sheet", *("yes" if c.candidate["meets_all"] else "no" for c in columns))
-    table.add("worst slack", *(percent(number(c.candidate["worst_slack"])) for c in columns))
+def any_cases(named: Sequence[tuple[str, Record]]) -> bool:
+    """Whether any of the records has more than the nominal case."""
+    return any(View(record).several_cases for _, record in named)
+
+
+def _rows(columns: Sequence[Column]) -> list[tuple[str, list[Text]]]:
+    """Label and cells; a space stands where others have a mark."""
+
+    def plain(label: str, texts: Iterable[str], style: str = "") -> tuple[str, list[Text]]:
+        return label, [Text(f"{t} ", style=style) for t in texts]
+
+    rows = [
+        plain("", (c.label for c in columns), "dim"),
+        plain("structure", (c.candidate["structure"] for c in columns), "name"),
+        plain("order", (str(order(c.candidate)) for c in columns)),
+        plain("meets its sheet", ("yes" if c.candidate["meets_all"] else "no" for c in columns)),
+        plain("worst slack", (percent(number(c.candidate["worst_slack"])) for c in columns)),
+    ]
     for key in _quantities(columns):
         values = [View(c.record).worst(c.candidate, key) for c in columns]
-        if not any(not math.isnan(v) for v in values):
+        if all(math.isnan(v) for v in values):
             continue
         unit = unit_for(_unit(key, columns), values)
         name = f"{quantity_name(key)}, {unit.word}" if unit.word else quantity_name(key)
-        table.add(name, *(_cell(c, key, unit.number(v, 3)) for c, v in zip(columns, values, strict=True)))
-    return table.lines()
+        cells = [_cell(c, key, unit.number(v, 3)) for c, v in zip(columns, values, strict=True)]
+        rows.append((name, cells))
+    return rows
 
 
 def _unit(key: str, columns: Sequence[Column]) -> str:

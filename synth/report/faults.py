@@ -7,8 +7,8 @@ from collections.abc import Sequence
 from rich.text import Text
 
 from synth.errors import Fault
-from synth.rationale.figures import count
 from synth.report.theme import hanging
+from synth.wording.figures import count
 
 MOST = 40  # faults drawn; a file with more is another kind of file
 

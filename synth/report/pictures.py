@@ -11,11 +11,11 @@ from typing import Any
 
 from rich.text import Text
 
-from synth.rationale.figures import figure, unit_for
 from synth.record import Candidate, Requirement, number
 from synth.report.canvas import Chart, Line
 from synth.report.theme import heading
 from synth.report.view import View
+from synth.wording.figures import figure, unit_for
 
 STEP_ROWS, LOOP_ROWS, PHASE_ROWS, LOCUS_ROWS = 13, 10, 6, 17
 WIDEST_PICTURE = 100
@@ -119,8 +119,10 @@ def loop_gain(candidate: Candidate, width: int) -> list[Text]:
     under.curve(w, phase, "first")
     for i in range(1, len(w)):
         if gain[i - 1] * gain[i] <= 0.0 and gain[i - 1] != gain[i]:
-            chart.mark(w[i], 0.0, "◆", "first")
-            under.mark(w[i], phase[i], "◆", "first")
+            part = gain[i - 1] / (gain[i - 1] - gain[i])
+            at = w[i - 1] * (w[i] / w[i - 1]) ** part
+            chart.mark(at, 0.0, "◆", "first")
+            under.mark(at, phase[i - 1] + part * (phase[i] - phase[i - 1]), "◆", "first")
     upper = chart.lines("", "  abs(L), dB", least_margin=5)[:-2]
     return [
         heading("Loop gain", "L = C P on the nominal plant; ◆ where abs(L) is 1"),
@@ -133,7 +135,7 @@ def _phase_range(phase: Sequence[float]) -> tuple[float, float]:
     finite = [p for p in phase if math.isfinite(p)] or [0.0]
     low = max(math.floor(min(finite) / 90.0) * 90.0, -540.0)
     high = math.ceil(max(finite) / 90.0) * 90.0
-    return (low, high) if high > low else (low - 90.0, high + 90.0)
+    return (low - 10.0, high + 10.0) if high > low else (low - 90.0, high + 90.0)
 
 
 def locus(view: View, candidate: Candidate, width: int) -> list[Text]:
@@ -169,7 +171,9 @@ def locus(view: View, candidate: Candidate, width: int) -> list[Text]:
         for re, im in roots:
             chart.mark(re, im, letter, style)
     outside = [(re, im) for re, im in closed if not (left <= re <= right and im <= top)]
-    lines = [heading("Root locus", "gain of C from 0 up; × open loop, ○ zeros, ◆ closed loop; upper half")]
+    lines = [
+        heading("Root locus", "gain of C from 0 up; × open loop, ○ zeros, ◆ closed loop; upper half", width)
+    ]
     lines.extend(chart.lines("rad/s", ""))
     if outside:
         far = ", ".join(

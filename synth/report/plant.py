@@ -7,11 +7,11 @@ from typing import cast
 
 from rich.text import Text
 
-from synth.rationale.figures import count, figure, quantity
 from synth.record import Check, Record, quantity_name
 from synth.report import reach, summary
 from synth.report.theme import Columns, hanging, heading
 from synth.report.view import View
+from synth.wording.figures import count, figure, quantity
 
 MOST_CASES = 12  # listed; the rest is counted
 

@@ -9,8 +9,8 @@ from rich.console import Console
 from rich.live import Live
 from rich.text import Text
 
-from synth.rationale.figures import percent
 from synth.search.outcome import Progress
+from synth.wording.figures import percent
 
 BAR = 24
 OFTEN = 0.1  # seconds between two looks

@@ -6,11 +6,11 @@ import math
 
 from rich.text import Text
 
-from synth.rationale.figures import quantity
 from synth.record import Record, number
 from synth.report.settings import tuned
 from synth.report.theme import Columns, hanging, heading
 from synth.report.view import SIGN, View
+from synth.wording.figures import quantity
 
 
 def rejected(record: Record, width: int) -> list[Text]:

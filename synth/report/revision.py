@@ -6,11 +6,12 @@ from typing import Any
 
 from rich.text import Text
 
-from synth.rationale.figures import ABSENT, figure, percent, quantity
 from synth.record import Earlier, Record, number, parameter_name
 from synth.report.theme import Columns, hanging, heading
 from synth.report.view import View
+from synth.wording.figures import ABSENT, figure, percent, quantity
 
+LONG = 24  # two values that need more room than this stand on a line of their own
 _ADVICE = {
     "keep": ("KEEP", "good", "meets everything on the revised plant, untouched."),
     "retune": ("RETUNE", "warn", "needs other values."),
@@ -64,7 +65,7 @@ def _changes(record: Record, width: int) -> list[Text]:
     for change in part["changes"]:
         where = f"{change['what']}, {change['case']}" if change["case"] else change["what"]
         old, new = _value(change["old"]), _value(change["new"])
-        if len(where) + len(old) + len(new) + 14 > width:
+        if len(old) + len(new) > LONG:
             long.append(hanging(f"  {where}: ", f"{old} → {new}", width))
             continue
         table.add(where, old, "→", new, _relative(change["old"], change["new"]))

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from rich.text import Text
 
-from synth.rationale.figures import MINUS, exact, figure, quantity
 from synth.record import Candidate, Closest, Compensator, Pole, SpecPart, parameter_name, plant_unit
-from synth.report.theme import Columns, items
+from synth.report.theme import Columns, hanging, items
+from synth.wording.figures import MINUS, exact, figure, quantity
 
 
 def tuned(candidate: Candidate | Closest) -> list[str]:
@@ -98,7 +98,8 @@ def forms(candidate: Candidate, spec: SpecPart, width: int) -> list[Text]:
     parts = [f"numerator {_polynomial(top)}", f"denominator {_polynomial(bottom)}"]
     out.append(items("  coefficients".ljust(room), parts, width, between=" "))
     if gain_unit != "u per y":
-        out.append(Text(f"  A gain is in {gain_unit}; coefficients in descending powers of s.", style="dim"))
+        text = f"A gain is in {gain_unit}; coefficients in descending powers of s."
+        out.append(hanging("  ", text, width, style="dim"))
     return out
 
 

@@ -6,11 +6,11 @@ import math
 
 from rich.text import Text
 
-from synth.rationale.figures import Unit, count, figure, percent, unit_for
 from synth.record import Candidate, Record, Requirement, quantity_name
 from synth.report.settings import tuned
 from synth.report.theme import Columns, hanging, heading, items
 from synth.report.view import SIGN, View, order
+from synth.wording.figures import Unit, count, figure, percent, unit_for
 
 INDENT, GAP = 2, 2
 ASIDE = ("control_peak", "sensitivity_peak", "settling_time")  # shown unasked, below what the sheet asks for
@@ -48,10 +48,7 @@ def ranked(record: Record, width: int) -> list[Text]:
     if not candidates:
         return []
     several = view.several_cases
-    examined = _examined(record)
-    lines = [heading("Candidates", examined if len(examined) + 12 <= width else "")]
-    if not lines[0].plain.endswith(examined):
-        lines.append(hanging("  ", examined, width, style="dim"))
+    lines = [heading("Candidates", _examined(record), width)]
     table = Columns((">", "<", ">", ">", "<"), indent=1)
     table.add("", "structure", "order", "slack", "held back by", style="dim")
     for c in candidates:

@@ -35,7 +35,7 @@ THEME = Theme(
     inherit=False,
 )
 
-NARROWEST = 60
+NARROWEST = 64
 WIDEST = 132  # lines longer than this are hard to follow, however wide the window
 
 
@@ -53,12 +53,15 @@ def console(file: IO[str] | None = None, width: int | None = None) -> Console:
     return out
 
 
-def heading(words: str, aside: str = "") -> Text:
-    """A section's first line: its words, and beside them what holds for the whole section."""
+def heading(words: str, aside: str = "", width: int = WIDEST) -> Text:
+    """A section's first line; beside it, or below where there is no room, what holds for all of it."""
     text = Text("\n")
     text.append(words, style="head")
-    if aside:
+    if aside and len(words) + 2 + len(aside) <= width:
         text.append(f"  {aside}", style="dim")
+    elif aside:
+        text.append("\n")
+        text.append_text(hanging("  ", aside, width, style="dim"))
     return text
 
 

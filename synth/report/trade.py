@@ -6,10 +6,10 @@ import math
 
 from rich.text import Text
 
-from synth.rationale.figures import unit_for
 from synth.record import Record, number, quantity_name, quantity_unit
 from synth.report.canvas import Chart
 from synth.report.theme import Columns, heading
+from synth.wording.figures import unit_for
 
 ROWS = 12
 MOST = 12  # points in the table; the picture has all

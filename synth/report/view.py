@@ -9,7 +9,6 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from synth.rationale.figures import Unit, unit_for
 from synth.record import (
     Candidate,
     Judged,
@@ -20,6 +19,7 @@ from synth.record import (
     quantity_unit,
     requirement_name,
 )
+from synth.wording.figures import Unit, unit_for
 
 SIGN = {"min": "≥", "max": "≤"}
 WORD = {"min": "at least", "max": "at most"}

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from synth.loop.quantities import QUANTITIES, Measure
-from synth.rationale.figures import quantity
+from synth.wording.figures import quantity
 
 NO_UNIT = ("-", "1")  # how sheets write that u or y has none
 WORD = {"min": "at least", "max": "at most"}
