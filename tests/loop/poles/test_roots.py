@@ -6,7 +6,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from synth.loop.poles.roots import closed_roots, routh_stable
+from synth.loop.poles.roots import _polished, closed_roots, routh_stable
 
 
 def reference_roots(row):
@@ -69,6 +69,26 @@ def test_real_roots_over_eight_decades():
     (found,) = closed_roots(np.poly(exact)[None, :])
     np.testing.assert_array_equal(found.imag, 0.0)
     np.testing.assert_allclose(found.real, exact, rtol=2e-14)
+
+
+def test_a_light_pair_beside_roots_thirty_decades_apart():
+    """Every root to its last digits, and the damping of the pair with it."""
+    row = np.array([2.73916896e-14, 7.04932740e01, 4.91122905, 3.72742722e02, 2.59585454e01, 6.08258153e-14])
+    (found,) = closed_roots(row[None, :])
+    exact = reference_roots(row)
+    assert largest_error(found, exact) < 1e-14
+    pair = found[found.imag > 0.0][0]
+    nearest = exact[np.argmin(np.abs(exact - pair))]
+    assert pair.real == pytest.approx(nearest.real, rel=1e-9)
+
+
+def test_the_polish_moves_roots_to_their_last_digits():
+    """From roots with an error of 1e-4 to rounding: the step itself, not LAPACK, is what is tested here."""
+    exact = np.array([-1.0, -2.5, -0.3 + 4.0j, -0.3 - 4.0j, -60.0])
+    row = np.real(np.poly(exact))[None, :]
+    off = exact * np.array([1.0 + 1e-4, 1.0 - 1e-4, 1.0 + 1e-4j, 1.0 - 1e-4j, 1.0 + 1e-4])
+    better = _polished(row, off[None, :])
+    np.testing.assert_allclose(better[0], exact, rtol=1e-14)
 
 
 @pytest.mark.parametrize(("multiplicity", "bound"), [(2, 1e-7), (3, 5e-5), (4, 1e-3)])
