@@ -10,11 +10,11 @@ from __future__ import annotations
 
 import numpy as np
 
-from synth.loop.arrays import FloatArray, IntArray
-from synth.loop.time.plan import Plan, blocks
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.time.plan import TAIL, Plan, blocks
 from synth.loop.time.questions import Answers, Area, Passage, Supremum
 from synth.loop.time.scan import scan
-from synth.loop.time.signals import Signals
+from synth.loop.time.signals import CELLS, HERMITE, Signals
 from synth.loop.time.survey import RESOLUTION, Survey
 
 FINE = 5e-3
@@ -25,6 +25,12 @@ PASS_BLOCKS = 2500
 
 LONG = 128
 """Blocks after which a plan stops."""
+
+WINDOW = 24
+"""Blocks of the first window in which a last exit is looked for."""
+
+MOST = 8192
+"""Blocks that such a window may grow to."""
 
 SEGMENTS = 32
 """Stretches of LONG blocks that a supremum or a first passage is followed over before it is given up as
@@ -45,7 +51,7 @@ def answer(
     unit : (M, S) a size of each signal that is known beforehand (its value at 0+ or at infinity), or 0.
     """
     found = _direct(modes, unit, suprema, passages, integrals, LONG)
-    if segments == 0 or np.isinf(found.seen).all():
+    if np.isinf(found.seen).all():
         return found
     for w, q in enumerate(suprema):
         rows = np.flatnonzero(found.supremum_ends[w] > found.seen)
@@ -56,7 +62,8 @@ def answer(
         if rows.size == 0:
             continue
         if p.last:
-            found.passages[v][rows] = _last_passage(modes, p, rows, found.passage_ends[v][rows])
+            time, open_ = _last_passage(modes, p, rows, found.passage_ends[v][rows])
+            found.passages[v][rows], found.open_passages[v][rows] = time, open_
         else:
             _follow_passage(modes, unit, found, v, p, rows[np.isinf(found.passages[v][rows])], segments)
     return found
@@ -110,11 +117,14 @@ def _follow_supremum(
     envelope = modes.bounds(rows, seen)[1][q.signal]
     more = envelope + top > best + RESOLUTION * unit[rows, q.signal]
     rows, seen, best = rows[more], seen[more], best[more]
-    if rows.size == 0:
+    if segments == 0:
+        found.open_suprema[w][rows] = True
+    if segments == 0 or rows.size == 0:
         return
     later = modes.rows(rows).later([q.signal], seen)
     on = Supremum(0, q.signs, q.offset[rows], best)
     part = answer(later, unit[rows][:, [q.signal]], [on], [], [], segments - 1)
+    found.open_suprema[w][rows] = part.open_suprema[0]
     higher = part.suprema[0] > best
     found.suprema[w][rows] = part.suprema[0]
     found.times[w][rows[higher]] = (seen + part.times[0])[higher]
@@ -130,27 +140,39 @@ def _follow_passage(
     segments: int,
 ) -> None:
     """Go on from where the plan stopped, for the loops that have not arrived yet."""
-    if rows.size == 0:
+    if segments == 0:
+        found.open_passages[v][rows] = True
+    if segments == 0 or rows.size == 0:
         return
     seen = found.seen[rows]
     later = modes.rows(rows).later([p.signal], seen)
     on = Passage(0, p.low, p.high, False)
     part = answer(later, unit[rows][:, [p.signal]], [], [on], [], segments - 1)
     found.passages[v][rows] = seen + part.passages[0]
+    found.open_passages[v][rows] = part.open_passages[0]
 
 
-def _last_passage(modes: Signals, p: Passage, rows: IntArray, end: FloatArray) -> FloatArray:
-    """Last time outside, looked for in windows that reach further and further back from `end` (A,)."""
-    out = np.zeros(len(rows))
-    window = 40.0 / np.abs(modes.pole[rows]).min(axis=1)
+def _last_passage(
+    modes: Signals, p: Passage, rows: IntArray, end: FloatArray
+) -> tuple[FloatArray, BoolArray]:
+    """Last time outside, looked for in windows that reach further and further back from `end` (A,).
+
+    Also returns where a window took more blocks than are allowed, so that its end was not seen.
+    """
+    out, open_ = np.zeros(len(rows)), np.zeros(len(rows), dtype=bool)
+    fourth, envelope = modes.bounds(rows, end)
+    with np.errstate(all="ignore"):
+        width = np.sqrt(np.sqrt(TAIL * envelope[p.signal] / (HERMITE * fourth[p.signal])))
+    window = np.where(np.isfinite(width), WINDOW * CELLS * width, end)
     pending = np.arange(len(rows))
     on = Passage(0, p.low, p.high, True)
     while pending.size:
         start = np.maximum(end[pending] - window[pending], 0.0)
         later = modes.rows(rows[pending]).later([p.signal], start)
-        part = _direct(later, np.zeros((len(pending), 1)), [], [on], [], 1 << 14)
+        part = _direct(later, np.zeros((len(pending), 1)), [], [on], [], MOST)
         out[pending] = start + part.passages[0]
-        again = (part.passages[0] == 0.0) & (start > 0.0)
+        open_[pending] = part.passage_ends[0] > part.seen
+        again = (part.passages[0] == 0.0) & (start > 0.0) & ~open_[pending]
         pending = pending[again]
         window[pending] *= 4.0
-    return out
+    return out, open_

@@ -91,6 +91,7 @@ class Cells:
 
     def crossing(self, level: FloatArray) -> FloatArray:
         """Place (0 to 1) where the cubic meets the level; for cells whose ends lie on either side of it."""
+        x: FloatArray
         with np.errstate(all="ignore"):
             x = (level - self.a) / (self.b - self.a)
         low, high = np.zeros(len(self)), np.ones(len(self))

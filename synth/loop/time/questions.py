@@ -9,7 +9,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from synth.loop.arrays import FloatArray
+from synth.loop.arrays import BoolArray, FloatArray
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,8 +48,8 @@ class Answers:
                      never
     areas, doubts    value, and bound of its relative error
     seen             time up to which the blocks of the plan reached
-    supremum_ends, passage_ends   times after which nothing can change the answer; past `seen` where it is
-                                  not proven
+    supremum_ends, passage_ends   times after which nothing can change the answer
+    open_suprema, open_passages   True where the search was given up before that time
     """
 
     suprema: list[FloatArray] = field(default_factory=list)
@@ -60,3 +60,5 @@ class Answers:
     seen: FloatArray = field(default_factory=lambda: np.zeros(0))
     supremum_ends: list[FloatArray] = field(default_factory=list)
     passage_ends: list[FloatArray] = field(default_factory=list)
+    open_suprema: list[BoolArray] = field(default_factory=list)
+    open_passages: list[BoolArray] = field(default_factory=list)

@@ -29,6 +29,9 @@ REACHES = {
 }
 """Which signal each quantity is read from."""
 
+AREA_ERROR = 1e-5
+"""Relative error bound above which an area is flagged."""
+
 CROWDED = 1e5
 """Crowding of the poles from which on close poles are taken together."""
 
@@ -116,13 +119,11 @@ class _Reading:
             list(self.passages.values()),
             list(self.areas.values()),
         )
-        values, approximate = {}, {}
-        for m in self.asked:
-            values[m] = self._value(m, found)
-            if m.quantity in self.areas:
-                doubt = found.doubts[list(self.areas).index(m.quantity)]
-                approximate[m] = (doubt > 1e-5) & np.isfinite(values[m])
-        return TimeStage(values, approximate)
+        self.approximate: dict[Measure, BoolArray] = {}
+        values = {m: self._value(m, found) for m in self.asked}
+        for m, doubt in self.approximate.items():
+            doubt &= np.isfinite(values[m])
+        return TimeStage(values, self.approximate)
 
     def _ask(self, m: Measure) -> None:
         zero, one = np.zeros(len(self.loops)), np.ones(len(self.loops))
@@ -149,44 +150,39 @@ class _Reading:
 
     def _value(self, m: Measure, found: Answers) -> FloatArray:
         name = m.quantity
-        if name in ("overshoot", "undershoot"):
-            value = 100.0 * found.suprema[list(self.suprema).index(name)]
-        elif name == "peak_time":
-            k = list(self.suprema).index("overshoot")
-            value = np.where(found.suprema[k] > 0.0, found.times[k], np.nan)
-        elif name in ("control_peak", "disturbance_peak"):
-            return found.suprema[list(self.suprema).index(name)]
-        elif name == "rise_time":
-            value = self._arrival(found, m.span[1]) - self._arrival(found, m.span[0])
+        if name in ("tracking_area", "disturbance_area"):
+            k = list(self.areas).index(name)
+            self.approximate[m] = found.doubts[k] > AREA_ERROR
+            returns = self.tracks if name == "tracking_area" else self.end[:, self.index["d"]] == 0.0
+            return np.where(returns, found.areas[k], np.inf)
+        if name == "rise_time":
+            value = self._arrival(m, found, m.span[1]) - self._arrival(m, found, m.span[0])
         elif name == "settling_time":
-            value = found.passages[list(self.passages).index((-m.band, m.band, True))]
-        elif name == "tracking_area":
-            return np.where(self.tracks, found.areas[list(self.areas).index(name)], np.inf)
-        elif name == "disturbance_area":
-            returns = self.end[:, self.index["d"]] == 0.0
-            return np.where(returns, found.areas[list(self.areas).index(name)], np.inf)
-        else:
+            k = list(self.passages).index((-m.band, m.band, True))
+            value, self.approximate[m] = found.passages[k], found.open_passages[k].copy()
+        elif name == "late_deviation":
             value = self._late(m)
+        else:
+            k = list(self.suprema).index("overshoot" if name == "peak_time" else name)
+            value, self.approximate[m] = found.suprema[k], found.open_suprema[k].copy()
+            if name in ("control_peak", "disturbance_peak"):
+                return value
+            value = 100.0 * value if name != "peak_time" else np.where(value > 0.0, found.times[k], np.nan)
         return np.where(self.has_end, value, np.nan)
 
-    def _arrival(self, found: Answers, level: float) -> FloatArray:
+    def _arrival(self, m: Measure, found: Answers, level: float) -> FloatArray:
         """First time at that part of the final value; NaN where it is never reached."""
         if level <= 0.0:
             return np.zeros(len(self.loops))
         key = (-np.inf, float(np.nextafter(level - 1.0, -2.0)), False)
-        time = found.passages[list(self.passages).index(key)]
-        return np.where(np.isfinite(time), time, np.nan)
+        k = list(self.passages).index(key)
+        self.approximate[m] = self.approximate.get(m, False) | found.open_passages[k]
+        return np.where(np.isfinite(found.passages[k]), found.passages[k], np.nan)
 
     def _late(self, m: Measure) -> FloatArray:
         """100 sup of abs(z - 1) from m.after on: the same question of the responses seen from then on."""
         later = self.modes.later([self.index["y"]], m.after / self.loops.time_scale)
-        value: FloatArray = later.largest()[:, 0].copy()
-        rows = np.flatnonzero(
-            value > FADED
-        )  # what has died out by then is bounded well enough by its envelope
-        zero = np.zeros(len(rows))
-        if rows.size:
-            still = later.rows(rows)
-            found = answer(still, np.zeros((len(rows), 1)), [Supremum(0, (1.0, -1.0), zero, zero)], [], [])
-            value[rows] = found.suprema[0]
-        return 100.0 * value
+        zero = np.zeros(len(self.loops))
+        found = answer(later, np.zeros((len(self.loops), 1)), [Supremum(0, (1.0, -1.0), zero, zero)], [], [])
+        self.approximate[m] = found.open_suprema[0].copy()
+        return 100.0 * found.suprema[0]

@@ -258,6 +258,7 @@ class Survey:
             more = best > floor + self.peaks.tolerance[mine]  # less than that is rounding
             out.suprema.append(np.where(more, best, floor))
             out.times.append(np.where(more, place, np.nan))
+            out.open_suprema.append(np.zeros(m, dtype=bool))
         if self.passages:
             cells = joined(self.doubt_edges) if self.doubt_edges else no_cells()
             time = crossings.resolve(self.modes, self.edges, cells).reshape(len(self.passages), m)
@@ -268,6 +269,7 @@ class Survey:
                     first = np.where(np.isnan(time[v]), np.inf, time[v])
                     start = self.profile.deviation[:, p.signal, 0]
                     out.passages.append(np.where((start > p.high) | (start < p.low), 0.0, first))
+        out.open_passages = [np.zeros(m, dtype=bool) for _ in self.passages]
         if self.integrals:
             cells = joined(self.doubt_zeros) if self.doubt_zeros else no_cells()
             weight = np.concatenate(self.weight) * (1e-2 * AREA_RESOLUTION)
