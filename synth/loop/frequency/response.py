@@ -107,7 +107,8 @@ def evaluate(columns: FloatArray, w: FloatArray) -> tuple[FloatArray, FloatArray
 def log_rates(re: FloatArray, im: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
     """|p|² and the logarithmic derivative p'/p (d/du): (|p|², real part, imaginary part)."""
     size = re[0] * re[0] + im[0] * im[0]
-    return size, (re[1] * re[0] + im[1] * im[0]) / size, (im[1] * re[0] - re[1] * im[0]) / size
+    with np.errstate(divide="ignore", invalid="ignore"):  # NaN at a root of p on the axis
+        return size, (re[1] * re[0] + im[1] * im[0]) / size, (im[1] * re[0] - re[1] * im[0]) / size
 
 
 def polynomial(coefficients: FloatArray, x: FloatArray) -> FloatArray:

@@ -50,9 +50,11 @@ def true_modes(loops: Loops, numerators: FloatArray, poles: ComplexArray) -> Tru
     numerators : (M, S, n + 1); poles : (M, q) NaN padded, pairs complete. A double root has no such residue: the
     caller compares the sum with the marched response and sees that it does not fit.
     """
+    if poles.shape[1] == 0:  # a static loop of nothing: one mode without a residue stands in
+        poles = np.full((len(poles), 1), np.nan, dtype=complex)
     upper = (poles.imag >= 0.0) & np.isfinite(poles.real)
     order = np.argsort(np.where(upper, -poles.real, np.inf), axis=1, kind="stable")
-    width = int(upper.sum(axis=1).max(initial=0))
+    width = int(upper.sum(axis=1).max(initial=1))
     pole = np.take_along_axis(np.where(upper, poles, np.nan), order, axis=1)[:, :width]
     there = np.isfinite(pole.real)
     safe = np.where(there, pole, -1.0)
