@@ -11,12 +11,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from synth.limits import dead_time, hidden, interpolation, low_frequency, unstable_poles, zeros
+from synth.limits import dead_time, disturbance, hidden, interpolation, low_frequency, unstable_poles, zeros
 from synth.limits.case import CaseView, Finding
 from synth.model import PlantCases
 from synth.requirements import Bound
 
-SCHOOLS = (hidden, low_frequency, zeros, unstable_poles, interpolation, dead_time)
+SCHOOLS = (hidden, low_frequency, zeros, unstable_poles, interpolation, dead_time, disturbance)
 
 
 @dataclass(frozen=True, slots=True)
