@@ -11,6 +11,7 @@ from synth.loop.arrays import FloatArray
 from synth.loop.closed_loop import Rational
 from synth.loop.evaluate import evaluate
 from synth.loop.quantities import EVERY_QUANTITY, Measure
+from synth.model import PlantCases
 from synth.requirements import slacks
 from synth.search.objective import stacked
 from synth.search.outcome import Candidate, Fragility, Outcome
@@ -90,17 +91,23 @@ def _fragility(spec: Spec, name: str, parameters: Mapping[str, float]) -> tuple[
 
 
 def with_worst_inside(spec: Spec, numerator: Sequence[float], denominator: Sequence[float]) -> Spec:
-    """The sheet with one more case where this compensator fails inside the tolerance box: its worst point."""
+    """The sheet with one more case where this compensator fails inside the tolerance box, and worse than on
+    the cases there are: its worst point."""
     inside = spec.cases.interior()
     if not len(inside):
         return spec
     needed = tuple(dict.fromkeys(b.measure for b in spec.bounds))
     compensator = Rational.of([float(v) for v in numerator], [float(v) for v in denominator])
-    found = evaluate(inside.rational, compensator, measures=needed, reference_step=spec.reference_step)
-    slack = slacks(spec.bounds, found.values, needed, inside.names).slack[0].min(axis=1)
-    slack = np.where(found.stable[0], slack, -np.inf)
+
+    def least(cases: PlantCases) -> FloatArray:
+        found = evaluate(cases.rational, compensator, measures=needed, reference_step=spec.reference_step)
+        slack = slacks(spec.bounds, found.values, needed, cases.names).slack[0].min(axis=1)
+        out: FloatArray = np.where(found.stable[0], slack, -np.inf)
+        return out
+
+    slack = least(inside)
     worst = int(slack.argmin())
-    if slack[worst] >= 0.0:
+    if slack[worst] >= min(0.0, float(least(spec.cases).min())):
         return spec
     plants = stacked(spec.cases.rational, inside.rational.rows(np.array([worst])))
     return replace(

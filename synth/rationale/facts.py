@@ -125,7 +125,9 @@ def fragility(scene: Scene) -> Fact | None:
 
 def simpler(scene: Scene) -> Fact | None:
     """How near the richest of the structures inside this one comes."""
-    own = REGISTRY[scene.candidate.structure]
+    own = REGISTRY.get(scene.candidate.structure)
+    if own is None:  # a compensator of no structure that is known here
+        return None
     scans = {s.structure: s for s in scene.outcome.scans}
     inside = [scans[name] for name in own.simpler if name in scans]
     if not inside:
@@ -157,7 +159,9 @@ def closest_of(scene: Scene, scan: Scan) -> Candidate | None:
 
 def richer(scene: Scene) -> Fact | None:
     """What the best structure with more tuned values would buy."""
-    own = REGISTRY[scene.candidate.structure]
+    own = REGISTRY.get(scene.candidate.structure)
+    if own is None:
+        return None
     more = [s for s in scene.outcome.scans if len(REGISTRY[s.structure].parameters) > len(own.parameters)]
     if not more:
         return None
