@@ -39,8 +39,7 @@ class Limit:
 
 
 def assess(cases: PlantCases, bounds: Sequence[Bound], reference_step: float = 1.0) -> tuple[Limit, ...]:
-    """Every limit that applies, violated ones first. For each limit and requirement the case that is
-    worst."""
+    """Every limit that applies, violated ones first; each on the case that is worst for its requirement."""
     worst: dict[tuple[str, str | None], tuple[Finding, str]] = {}
     for case in cases.cases:
         view = CaseView(case, tuple(b for b in bounds if b.judged_on(case.name)), reference_step)

@@ -39,8 +39,7 @@ def least_overshoot(
 
 
 def longest_rise(pole: float, dead_time: float, final: float, overshoot: float, level: float = 0.9) -> float:
-    """The same solved for the rise time (0 to `level`): inf where no overshoot is forced, 0 where none
-    fits."""
+    """The same solved for the rise time: inf where no overshoot is forced, 0 where no rise is fast enough."""
     excess = float(np.exp(min(pole * dead_time, 300.0))) / final - level
     if excess <= 0.0:
         return np.inf

@@ -25,8 +25,7 @@ SAMPLE = 64  # points of the box that stand for its corners where there are more
 
 @dataclass(frozen=True, slots=True)
 class ParameterRange:
-    """A parameter in SI: nominal value and the ends of its tolerance; low = high = nominal where it has
-    none."""
+    """A parameter in SI: nominal value and ends of its tolerance; low = high = nominal without one."""
 
     name: str
     nominal: float

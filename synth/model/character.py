@@ -117,8 +117,7 @@ def scales_of(plant: Plant) -> tuple[float, float]:
 def _split_hidden(
     num: FloatArray, den: FloatArray, zeros: ComplexArray, poles: ComplexArray
 ) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
-    """Common roots of N and D, and what is left of zeros and poles. Common means 0 within rounding, of
-    both."""
+    """Common roots of N and D (both 0 there within rounding), and what is left of zeros and poles."""
     zeros_left, poles_left, hidden = list(zeros), list(poles), []
     for zero in zeros:
         if not poles_left:

@@ -50,8 +50,7 @@ class PlantForm(ABC):
 
     @abstractmethod
     def at(self, s: ComplexArray, parameters: Mapping[str, float]) -> ComplexArray:
-        """P(s) with its dead time for one set of parameters, as written: nothing multiplied out. inf at a
-        pole."""
+        """P(s) with its dead time for one set of parameters, nothing multiplied out. inf at a pole."""
 
     @abstractmethod
     def _polynomials(self, parameters: Parameters, cases: int) -> Polynomials:
@@ -183,8 +182,7 @@ class RootForm(PlantForm):
 
 @dataclass(frozen=True, slots=True)
 class MatrixForm(PlantForm):
-    """State space A (n, n), B (n), C (n), D; uncontrollable and unobservable modes stay in the
-    polynomials."""
+    """State space A (n, n), B (n), C (n), D; uncontrollable and unobservable modes stay."""
 
     a: tuple[tuple[Scalar, ...], ...]
     b: tuple[Scalar, ...]

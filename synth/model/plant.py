@@ -95,8 +95,7 @@ class Plant:
 
 
 def roots_of(coefficients: FloatArray) -> ComplexArray:
-    """Roots of one polynomial (descending, no leading zeros), found in units that keep coefficients near
-    1."""
+    """Roots of one polynomial (descending, no leading zeros), found in units that keep them near 1."""
     nonzero = np.flatnonzero(coefficients)
     at_origin = len(coefficients) - 1 - int(nonzero[-1])
     rest = coefficients[: int(nonzero[-1]) + 1]
