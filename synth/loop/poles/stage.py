@@ -180,7 +180,11 @@ def _with_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray]:
     with np.errstate(divide="ignore", invalid="ignore"):
         chain = np.log(np.abs(loops.numerator[:, 0] / loops.denominator[:, 0])) / loops.dead_time
     abscissa = np.fmax(abscissa, chain)  # -inf where L(∞) = 0
-    return delayed_stable(loops) & (abscissa < 0.0), abscissa, poles
+    stable = delayed_stable(loops) & (abscissa < 0.0)
+    nothing = ~loops.numerator.any(axis=1)
+    if nothing.any():  # L = 0: the roots of D, and no dead time in them
+        stable[nothing] = routh_stable(loops.denominator[nothing])
+    return stable, abscissa, poles
 
 
 def _reaching(loops: Loops, poles: ComplexArray, reach: FloatArray) -> ComplexArray:

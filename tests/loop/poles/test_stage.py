@@ -210,6 +210,11 @@ def test_dead_time_statics_do_not_know_the_dead_time():
         assert values[0] == values[1]
 
 
+def test_dead_time_round_a_loop_of_nothing_is_the_open_loop():
+    for den, stable in (([1.0, 2.0, 1.0], True), ([1.0, 0.0, 0.157], False), ([1.0, -1.0], False)):
+        assert pole_stage(loop([0.0], den, [2.0], dead_time=0.5), POLES_STAGE).stable[0] == stable
+
+
 def test_decay_rate_with_dead_time_takes_in_the_chain():
     """L = 0.4 e^(-2s) (with a cancelled root at -5): the chain at ln 0.4 / θ is the slowest."""
     loops = loop([1.0, 5.0], [1.0, 5.0], [0.4], dead_time=2.0)
