@@ -6,47 +6,97 @@ of degree 12 through its values there. Matrices act from the right on rows of su
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.polynomial import chebyshev, legendre
+from numpy.typing import NDArray
 
 from synth.loop.arrays import ComplexArray, FloatArray
 
 STAGES = 12
 NODES = STAGES + 1
+LongArray = NDArray[Any]
 
 
-def _radau_points() -> FloatArray:
-    """Zeros of P_c - P_(c-1), moved to (0, 1]; the last is 1. Hairer and Wanner, Solving ODEs II, sec. IV.5."""
+_Long = np.longdouble  # where it is no longer than a double, about a digit of the responses is lost
+
+
+def _legendre(x: LongArray, degree: int) -> LongArray:
+    """P_0 .. P_degree at x, (len(x), degree + 1), in extended precision."""
+    values = [np.ones_like(x), x]
+    for k in range(2, degree + 1):
+        values.append(((2 * k - 1) * x * values[-1] - (k - 1) * values[-2]) / _Long(k))
+    return np.stack(values, axis=1)
+
+
+def _radau_points() -> LongArray:
+    """Zeros of P_c - P_(c-1) on [-1, 1]; the last is 1. Hairer and Wanner, Solving ODEs II, sec. IV.5."""
     weights = np.zeros(STAGES + 1)
     weights[-1], weights[-2] = 1.0, -1.0
-    points = np.sort(legendre.legroots(weights).real)
-    slope = legendre.legder(weights)
-    for _ in range(3):
-        points[:-1] -= legendre.legval(points[:-1], weights) / legendre.legval(points[:-1], slope)
-    points[-1] = 1.0
-    out: FloatArray = 0.5 * (points + 1.0)
-    return out
+    x = np.sort(legendre.legroots(weights).real).astype(_Long)
+    x[-1] = _Long(1)
+    inner = x[:-1]
+    for _ in range(4):
+        p = _legendre(inner, STAGES)
+        # (1 - x²) P_k' = k (P_(k-1) - x P_k)
+        slopes = [k * (p[:, k - 1] - inner * p[:, k]) / (1 - inner * inner) for k in (STAGES - 1, STAGES)]
+        inner -= (p[:, STAGES] - p[:, STAGES - 1]) / (slopes[1] - slopes[0])
+    return x
 
 
-def _integration() -> FloatArray:
-    """(c, c): integrals from 0 to each point of the polynomial through the values at the points."""
-    grid = 2.0 * POINTS - 1.0
-    rows = [legendre.legval(grid, legendre.legint(unit, lbnd=-1)) for unit in np.eye(STAGES)]
-    out: FloatArray = 0.5 * np.linalg.solve(legendre.legvander(grid, STAGES - 1).T, np.array(rows)).T
-    return out
+def _integration(x: LongArray) -> LongArray:
+    """(c, c): integrals over [0, point] of the polynomial through the values at the points, [0, 1] for [-1, 1]."""
+    p = _legendre(x, STAGES)
+    # ∫ P_k = (P_(k+1) - P_(k-1)) / (2k + 1) from -1
+    parts = [x + 1] + [(p[:, k + 1] - p[:, k - 1]) / _Long(2 * k + 1) for k in range(1, STAGES)]
+    return _Long(0.5) * np.stack(parts, axis=1) @ _inverse(p[:, :STAGES])
 
 
-POINTS: FloatArray = _radau_points()
+def _inverse(matrix: LongArray) -> LongArray:
+    """Inverse in extended precision: the double one, improved by Newton's iteration (Schulz, 1933)."""
+    kind = np.complex128 if np.iscomplexobj(matrix) else np.float64
+    found = np.linalg.inv(matrix.astype(kind)).astype(matrix.dtype)
+    for _ in range(4):
+        found = found @ (2 * np.eye(len(matrix), dtype=matrix.dtype) - matrix @ found)
+    return found
+
+
+def _eigen(matrix: LongArray) -> tuple[LongArray, LongArray]:
+    """Eigenvalues and vectors, each pair improved by Newton's method with residuals in extended precision.
+
+    The vectors are far from orthogonal (condition 7e5), so what doubles leave uncertain would show in the responses.
+    """
+    values, vectors = np.linalg.eig(matrix.astype(np.float64))
+    values, vectors = values.astype(np.clongdouble), vectors.astype(np.clongdouble)
+    size = len(matrix)
+    for i in range(size):
+        v, value = vectors[:, i], values[i]
+        anchor = int(np.argmax(np.abs(v)))
+        for _ in range(4):
+            jacobian = np.zeros((size + 1, size + 1), dtype=np.complex128)
+            jacobian[:size, :size] = (matrix - value * np.eye(size)).astype(np.complex128)
+            jacobian[:size, size] = -v.astype(np.complex128)
+            jacobian[size, anchor] = 1.0
+            residual = np.append((matrix @ v - value * v).astype(np.complex128), 0.0)
+            step = np.linalg.solve(jacobian, residual).astype(np.clongdouble)
+            v, value = v - step[:size], value - step[size]
+        vectors[:, i], values[i] = v, value
+    return values, vectors
+
+
+_points = _radau_points()
+POINTS: FloatArray = (0.5 * (_points + 1)).astype(np.float64)
 GRID: FloatArray = np.concatenate([[0.0], POINTS])
 """All 13 nodes of a panel."""
 
-_eigenvalues, _vectors = np.linalg.eig(_integration())
+_eigenvalues, _vectors = _eigen(_integration(_points))
 _upper = np.flatnonzero(_eigenvalues.imag > 0.0)
-SPREAD: ComplexArray = _eigenvalues[_upper]
+SPREAD: ComplexArray = _eigenvalues[_upper].astype(np.complex128)
 """(6,) eigenvalues of the integration matrix, upper half: integration over a panel of length h is h·SPREAD."""
-TO_NODES: ComplexArray = 2.0 * _vectors[:, _upper]
+TO_NODES: ComplexArray = (2 * _vectors[:, _upper]).astype(np.complex128)
 """(12, 6): values at the points are the real part of TO_NODES times what is known of the upper half."""
-FROM_NODES: ComplexArray = np.linalg.inv(_vectors)[_upper]
+FROM_NODES: ComplexArray = _inverse(_vectors)[_upper].astype(np.complex128)
 """(6, 12)."""
 
 _cheb = chebyshev.chebvander(2.0 * GRID - 1.0, STAGES)

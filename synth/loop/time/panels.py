@@ -25,6 +25,8 @@ _X = np.linspace(0.0, 1.0, LOOKS)
 _VALUES, _SLOPES = value_matrix(_X), slope_matrix(_X)
 # Extrema whose height over their neighbours is below this part of the unit are rounding.
 RIPPLE = 1e-12
+# Heights this close, relative to the unit, are one height.
+LEVEL = 1e-14
 
 
 @dataclass(frozen=True, slots=True)
@@ -118,6 +120,7 @@ class Trace:
     signal: FloatArray
     place: FloatArray
     height: FloatArray
+    unit: FloatArray
 
     @classmethod
     def of(cls, panels: Panels, signal: FloatArray, offset: FloatArray, unit: FloatArray) -> Trace:
@@ -142,7 +145,7 @@ class Trace:
                 x = np.clip(np.where(np.isfinite(step), x - step, x), low, high)
             place[panel, 2 * cell + 1] = x
             height[panel, 2 * cell + 1] = jet(polynomial, x)[1]
-        return cls(panels, offset, signal, place, height)
+        return cls(panels, offset, signal, place, height, unit)
 
     def time(self, panel: IntArray, x: FloatArray) -> FloatArray:
         """Time of places x on the named panels."""
@@ -155,9 +158,11 @@ class Trace:
         height = np.where(np.isnan(self.height), -np.inf, sign * self.height)
         best_of_panel = height.max(axis=1)
         best = np.maximum.reduceat(best_of_panel, self.panels.first)
-        number = np.where(best_of_panel == best[self.panels.owner], np.arange(len(height)), len(height))
+        # a level stretch is taken at its start: what differs by rounding is alike
+        near = best - LEVEL * np.maximum(np.abs(best), self.unit)
+        number = np.where(best_of_panel >= near[self.panels.owner], np.arange(len(height)), len(height))
         panel = np.minimum.reduceat(number, self.panels.first)
-        knot = height[panel].argmax(axis=1)
+        knot = (height[panel] >= near[:, None]).argmax(axis=1)
         return best, self.time(panel, self.place[panel, knot])
 
     def largest_after(self, time: FloatArray) -> FloatArray:

@@ -135,6 +135,9 @@ def _propagator(loops: Loops, numerators: FloatArray, length: FloatArray) -> Flo
     lead = loops.denominator[:, :1]
     a = (loops.denominator / lead)[:, ::-1]
     c = (numerators / lead[:, :, None])[:, :, ::-1]
+    direct = c[:, :, n].copy()  # what passes at once is kept exact: v = c_n e + Σ (c_k - c_n a_k) ξ^(k)
+    c = c - direct[:, :, None] * a[:, None, :]
+    c[:, :, n] = 0.0
     sigma = length[:, None] * SPREAD
     alpha = [total[:, 0] for total in _sums(a[:, None, :], sigma)]
     gamma = _sums(c, sigma)
@@ -150,13 +153,13 @@ def _propagator(loops: Loops, numerators: FloatArray, length: FloatArray) -> Flo
         stages = highest * gamma[n][:, s, :, None]
         at = s * NODES + 1
         out[:, at : at + STAGES] = _to_nodes(stages)
+        out[:, at + np.arange(STAGES), 1 + np.arange(STAGES)] += direct[:, s, None]
         # free polynomials of the states, Σ_{k<=i} c_k τ^(i-k)/(i-k)!
         for i in range(n):
             for k in range(i + 1):
                 out[:, at : at + STAGES, NODES + i] += c[:, s, k, None] * taylor[i - k]
-        direct = c[:, s, n]
-        out[:, s * NODES, 0] = direct
-        out[:, s * NODES, NODES:] = c[:, s, :n] - direct[:, None] * a[:, :n]
+        out[:, s * NODES, 0] = direct[:, s]
+        out[:, s * NODES, NODES:] = c[:, s, :n]
     last = TO_NODES[-1]
     power = np.ones_like(sigma)
     for k in range(n - 1, -1, -1):
