@@ -7,7 +7,8 @@ import numpy as np
 from synth.loop.arrays import FloatArray
 from synth.loop.closed_loop import Loops
 from synth.loop.poles.roots import closed_roots
-from synth.loop.time.residues import limits, step_modes
+from synth.loop.time.clusters import cluster_modes
+from synth.loop.time.residues import CROWDED, crowding, limits, step_modes
 
 
 def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
@@ -15,7 +16,7 @@ def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, Fl
 
     Parameters
     ----------
-    loops : M loops, stable or not.
+    loops : M loops, stable or not (NaN where a pole lies at 0, whose response has no modal limit).
     t : (T,) or (M, T) times >= 0 in units of each loop's time_scale; at 0 the value after the jump is given.
 
     Returns
@@ -28,7 +29,13 @@ def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, Fl
 
         delayed: tuple[FloatArray, FloatArray, FloatArray] = delayed_step_curves(loops, times)
         return delayed
-    modes = step_modes(loops, closed_roots(loops.closed), ("y", "u", "d"))
-    _, end = limits(loops, ("y", "u", "d"))
-    out = modes.curves(times) + end[:, :, None]
+    signals = ("y", "u", "d")
+    poles = closed_roots(loops.closed)
+    close = crowding(poles) > CROWDED
+    out = np.empty((len(loops), len(signals), times.shape[1]))
+    with np.errstate(all="ignore"):  # an unstable loop may leave the number range
+        for rows, make in ((np.flatnonzero(~close), step_modes), (np.flatnonzero(close), cluster_modes)):
+            if rows.size:
+                out[rows] = make(loops.rows(rows), poles[rows], signals).curves(times[rows])
+        out += limits(loops, signals)[1][:, :, None]
     return out[:, 0], out[:, 1], out[:, 2]

@@ -13,6 +13,9 @@ from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops, trimmed
 from synth.loop.time.modes import Modes
 
+CROWDED = 1e5
+"""Crowding of the poles from which on close poles are taken together."""
+
 
 def numerator_of(loops: Loops, signal: str) -> FloatArray:
     """(M, n + 1) numerator of T ("y"), C S ("u") or P S ("d") over the characteristic polynomial."""

@@ -12,7 +12,7 @@ from synth.loop.quantities import Measure
 from synth.loop.time.answers import answer
 from synth.loop.time.clusters import cluster_modes
 from synth.loop.time.questions import Answers, Area, Passage, Supremum
-from synth.loop.time.residues import crowding, limits, step_modes
+from synth.loop.time.residues import CROWDED, crowding, limits, step_modes
 from synth.loop.time.signals import Signals
 
 REACHES = {
@@ -31,9 +31,6 @@ REACHES = {
 
 AREA_ERROR = 1e-5
 """Relative error bound above which an area is flagged."""
-
-CROWDED = 1e5
-"""Crowding of the poles from which on close poles are taken together."""
 
 FADED = 1e-9
 """A late deviation of less is not looked at further; no band is so narrow."""

@@ -7,8 +7,8 @@ import pytest
 from synth.loop.closed_loop import Loops
 from synth.loop.quantities import EVERY_QUANTITY, Measure
 from synth.loop.time.clusters import cluster_modes
-from synth.loop.time.residues import crowding, step_modes
-from synth.loop.time.stage import CROWDED, time_stage
+from synth.loop.time.residues import CROWDED, crowding, step_modes
+from synth.loop.time.stage import time_stage
 
 TIMES = np.concatenate([np.linspace(0.0, 15.0, 40), [25.0, 60.0]])
 
