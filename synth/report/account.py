@@ -122,12 +122,26 @@ def _footnotes(view: View, candidate: Candidate, width: int) -> list[Text]:
         difference = figure(number(verified["largest_relative_difference"]), 2)
         if verified["agrees"]:
             text = f"A second opinion by other algorithms agrees within {difference}, relative."
+            text += _not_recomputed(verified.get("details", []))
             out.append(hanging("  ", text, width, style="dim"))
         else:
             text = f"A second opinion by other algorithms DISAGREES by {difference}, relative."
             details = "; ".join(verified.get("details", []))
             out.append(hanging("  ", f"{text} {details}".rstrip(), width, style="bad"))
     return out
+
+
+def _not_recomputed(details: list[str]) -> str:
+    """What the second opinion could not judge, by reason, each quantity once."""
+    reasons: dict[str, list[str]] = {}
+    for detail in details:
+        what, found, reason = detail.partition(" was not recomputed: ")
+        if found:
+            name = quantity_name(what.split(" on ")[0])
+            reasons.setdefault(reason, [])
+            if name not in reasons[reason]:
+                reasons[reason].append(name)
+    return "".join(f" Not recomputed: {', '.join(names)} ({reason})." for reason, names in reasons.items())
 
 
 def _poles(view: View, candidate: Candidate, width: int) -> list[Text]:
