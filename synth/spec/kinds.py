@@ -44,7 +44,6 @@ class Field:
     required: bool = False
 
 
-@dataclass(frozen=True, slots=True)
 class Text(Kind):
     """Any text."""
 
@@ -89,7 +88,6 @@ class Measured(Kind):
         return {**TEXT, "pattern": pattern, "examples": [units.sample(self.dimension).strip('"')]}
 
 
-@dataclass(frozen=True, slots=True)
 class Span(Kind):
     """Two levels of a rise, "10-90 %"."""
 
@@ -171,7 +169,6 @@ class Expression(Kind):
         return dict(TEXT) if self.in_s else {"type": ["number", "string"]}
 
 
-@dataclass(frozen=True, slots=True)
 class Root(Kind):
     """A zero or a pole: a number, a complex one as text, or a formula of a real one."""
 
@@ -197,7 +194,6 @@ class Root(Kind):
         return {"type": ["number", "string"]}
 
 
-@dataclass(frozen=True, slots=True)
 class DeadTime(Kind):
     """A time with its unit, or a formula of the parameters."""
 
@@ -246,7 +242,6 @@ class Many(Kind):
         return {"anyOf": [self.of.schema(), {**array, "minItems": 1}]} if self.single else array
 
 
-@dataclass(frozen=True, slots=True)
 class Vector(Kind):
     """n numbers or formulas: flat, or as a matrix of one row or one column. Reads a flat list."""
 
@@ -269,7 +264,6 @@ class Vector(Kind):
         return {"anyOf": [row, {"type": "array", "items": row}]}
 
 
-@dataclass(frozen=True, slots=True)
 class Direct(Kind):
     """One number or formula, which may stand in the brackets of a 1 × 1 matrix."""
 
