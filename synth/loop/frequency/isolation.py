@@ -21,9 +21,9 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 
-_OCTAVES = 40  # cells of one window: x from 2^-20 to 2^20, three decades of ω to either side
-_CELLS = _OCTAVES + 2  # and the two ends, to 0 and to infinity
-_WINDOWS = 40  # windows to either side before giving up: beyond any double
+_OCTAVES = 40  # of one window: x from 2^-20 to 2^20, three decades of ω to either side
+_RANGE = 480  # most powers of two that x^m may span on one side of a window
+_WINDOWS = 400  # windows to either side before giving up: beyond any double
 _NARROW = 1e-10  # relative width below which two roots are one touch
 _CROWD = np.arange(-2.0, 27.0) / 24.0  # places of nodes in an interval that could not be decided
 _BLOCK = 150_000  # doubles of one matrix product: it stays in the second-level cache
@@ -116,15 +116,24 @@ def _filled_signs(polynomials: FloatArray) -> BoolArray:
     return signs
 
 
+def _octaves(m: int) -> int:
+    """Octaves of one window for degree m: fewer for high degrees, so that no power leaves the range of doubles."""
+    return max(2, min(_OCTAVES, 2 * (_RANGE // max(m, 1))))
+
+
 @cache
 def _window(m: int) -> FloatArray:
-    """((m + 1) cells, m + 1): from powers of x to Bernstein coefficients, cells ascending."""
-    out = np.zeros((m + 1, _CELLS, m + 1))
-    first, last = 2.0 ** (-_OCTAVES // 2), 2.0 ** (_OCTAVES // 2)
+    """From powers of x to Bernstein coefficients, ((m + 1) cells, m + 1), cells ascending.
+
+    The cells are the octaves of the window and the two ends, to 0 and to infinity.
+    """
+    octaves = _octaves(m)
+    out = np.zeros((m + 1, octaves + 2, m + 1))
+    first, last = 2.0 ** (-octaves // 2), 2.0 ** (octaves // 2)
     for j in range(m + 1):
         for k in range(m + 1):
             octave = sum(comb(j, i) * comb(k, i) / comb(m, i) for i in range(min(j, k) + 1))
-            out[j, 1:-1, k] = octave * (first * 2.0 ** np.arange(_OCTAVES)) ** k
+            out[j, 1:-1, k] = octave * (first * 2.0 ** np.arange(octaves)) ** k
             out[j, 0, k] = comb(j, k) / comb(m, k) * first**k
             out[m - j, -1, m - k] = comb(j, k) / comb(m, k) * last ** (m - k)
     return out.reshape(-1, m + 1)
@@ -139,22 +148,22 @@ def _scan(
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
     near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
 ) -> tuple[IntArray, IntArray]:
-    """One window, 2^(40 shift) times the central one: adds to `found`, returns rows with roots below and
+    """One window, 2^(octaves · shift) times the central one: adds to `found`, returns rows with roots below and
     above it.
     """
     m = len(polynomials) - 1
-    matrix = _window(m)
+    matrix, octaves = _window(m), _octaves(m)
     below, above = [], []
     block = max(1, _BLOCK // len(matrix))
     for start in range(0, len(which), block):
         row = which[start : start + block]
         p = polynomials[:, row]
         if shift:
-            p = _moved(p, shift)
-        coefficients = (matrix @ p).reshape(m + 1, _CELLS, -1)
+            p = _moved(p, octaves * shift)
+        coefficients = (matrix @ p).reshape(m + 1, octaves + 2, -1)
         negative = coefficients < 0.0
         negative[0, 1:] = negative[m, :-1]  # one value, one sign: a root on a node is counted once
-        for end, place in ((0, 0), (m, _CELLS - 1)):
+        for end, place in ((0, 0), (m, octaves + 1)):
             exact_zero = coefficients[:, place] == 0.0
             if exact_zero[end].any():  # a root at 0 or at infinity is none: the sign next to it counts
                 negative[:, place] = np.where(exact_zero, signs[end, row], negative[:, place])
@@ -162,7 +171,7 @@ def _scan(
         below.append(row[count[0] > 0])
         above.append(row[count[-1] > 0])
         cell, column = np.nonzero(count[1:-1])
-        low = np.ldexp(1.0, cell - _OCTAVES // 2 + _OCTAVES * shift)
+        low = np.ldexp(1.0, cell - octaves // 2 + octaves * shift)
         single = count[1:-1][cell, column] == 1
         one, many = np.flatnonzero(single), np.flatnonzero(~single)
         found.append((row[column[one]], low[one], 2.0 * low[one], negative[0, 1 + cell[one], column[one]]))
@@ -181,10 +190,10 @@ def _scan(
     return np.concatenate(below), np.concatenate(above)
 
 
-def _moved(p: FloatArray, shift: int) -> FloatArray:
-    """Coefficients of p(2^(40 shift) x), each row divided by a power of two so that the largest is near 1."""
+def _moved(p: FloatArray, power: int) -> FloatArray:
+    """Coefficients of p(2^power x), each row divided by a power of two so that the largest is near 1."""
     mantissa, exponent = np.frexp(p)
-    exponent = exponent + (_OCTAVES * shift * np.arange(len(p)))[:, None]
+    exponent = exponent + (power * np.arange(len(p)))[:, None]
     largest = np.where(mantissa != 0.0, exponent, -(2**30)).max(axis=0)
     out: FloatArray = np.ldexp(mantissa, np.clip(exponent - largest, -1100, 0).astype(np.int32))
     return out

@@ -1,0 +1,197 @@
+"""A second opinion on a candidate: its claimed values recomputed by other algorithms than the core's."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from synth.loop.arrays import ComplexArray, FloatArray
+from synth.loop.quantities import QUANTITIES, Measure
+from synth.model.forms import PlantForm
+from synth.model.plant import Plant
+from synth.verify.frequency import frequency_values
+from synth.verify.roots import poles as exact_poles
+from synth.verify.subject import Subject
+from synth.verify.time import NotSimulated, respond, time_values
+
+TOLERANCE = 1e-4
+_REACH = 5.0
+_LEAST_SHARE = 0.02
+
+
+@dataclass(frozen=True, slots=True)
+class Verified:
+    """What the second opinion says.
+
+    agrees       no claimed value is further than 1e-4 from its second value, relative to max(abs(value), own
+        scale)
+    largest_relative_difference  of all that could be compared; inf where one side has no value or an infinite
+        one
+    details      a sentence for each value that differs, and for what could not be compared
+    differences  by quantity
+    """
+
+    agrees: bool
+    largest_relative_difference: float
+    details: tuple[str, ...]
+    differences: Mapping[str, float]
+
+
+def second_opinion(
+    form: PlantForm,
+    parameters: Mapping[str, float],
+    plant: Plant,
+    compensator: tuple[Sequence[float], Sequence[float]],
+    measures: Sequence[Measure],
+    claimed: Sequence[float] | FloatArray,
+    *,
+    reference_step: float = 1.0,
+    case: str = "",
+) -> Verified:
+    """Recompute `claimed` values (SI, one a measure) of a stable loop on one plant case.
+
+    form, parameters : the plant as the sheet states it, with the values of this case; plant : its
+    coefficients.
+    compensator : numerator and denominator, descending powers of s. case : named in the details.
+    """
+    num, den = (tuple(np.trim_zeros(np.asarray(p, dtype=float), "f")) for p in compensator)
+    subject = Subject(form, parameters, plant, num or (0.0,), den, reference_step)
+    values, missing = _values(subject, tuple(measures))
+    where = f" on {case}" if case else ""
+    details = [f"{_name(m)}{where} was not recomputed: {why}" for m, why in missing.items()]
+    differences: dict[str, float] = {}
+    for measure, claim in zip(measures, claimed, strict=True):
+        if measure not in values:
+            continue
+        difference = _difference(measure, float(claim), values[measure])
+        name = _name(measure)
+        differences[name] = max(difference, differences.get(name, 0.0))
+        if not difference <= TOLERANCE:
+            details.append(f"{name}{where}: claimed {claim:.6g}, second value {values[measure]:.6g}")
+    largest = max(differences.values(), default=0.0)
+    return Verified(bool(largest <= TOLERANCE), largest, tuple(details), differences)
+
+
+def together(opinions: Iterable[Verified]) -> Verified:
+    """One opinion over several plant cases: the worst of each."""
+    every = list(opinions)
+    differences: dict[str, float] = {}
+    for one in every:
+        for name, value in one.differences.items():
+            differences[name] = max(value, differences.get(name, 0.0))
+    return Verified(
+        all(one.agrees for one in every),
+        max((one.largest_relative_difference for one in every), default=0.0),
+        tuple(dict.fromkeys(d for one in every for d in one.details)),
+        differences,
+    )
+
+
+def _name(measure: Measure) -> str:
+    return measure.quantity
+
+
+def _difference(measure: Measure, claim: float, value: float) -> float:
+    if claim == value or (np.isnan(claim) and np.isnan(value)):
+        return 0.0
+    if not (np.isfinite(claim) and np.isfinite(value)):
+        return np.inf
+    return abs(claim - value) / max(abs(value), QUANTITIES[measure.quantity].scale or 0.0, 1e-300)
+
+
+def _values(
+    subject: Subject, measures: tuple[Measure, ...]
+) -> tuple[dict[Measure, float], dict[Measure, str]]:
+    """Second values, and why some have none."""
+    out: dict[Measure, float] = {}
+    missing: dict[Measure, str] = {}
+    names = {m.quantity for m in measures}
+    roots = exact_poles(subject)
+    statics = _statics(subject)
+    wanted = frozenset(n for n in names if QUANTITIES[n].stage == "frequency")
+    counting = names & {"damping_ratio", "natural_frequency"}
+    if counting and any(m.quantity != "damping_ratio" or m.below is None for m in measures):
+        wanted |= {"highest_fall"}
+    looked = frequency_values(subject, roots, wanted) if wanted else {}
+    for m in measures:
+        if m.quantity in looked:
+            out[m] = looked[m.quantity]
+        elif m.quantity in statics:
+            out[m] = statics[m.quantity]
+        elif m.quantity in ("damping_ratio", "decay_rate", "natural_frequency"):
+            if roots is None:
+                missing[m] = "the loop is of neutral type"
+            else:
+                out[m] = _of_poles(subject, m, roots, looked.get("highest_fall", np.nan))
+    timed = tuple(
+        m for m in measures if m.quantity != "late_deviation" and QUANTITIES[m.quantity].stage == "time"
+    )
+    if timed:
+        try:
+            out |= time_values(subject, respond(subject, roots), timed, statics["final_value"])
+        except NotSimulated as reason:
+            missing |= dict.fromkeys(timed, str(reason))
+    if max((v for m, v in out.items() if m.quantity == "overshoot"), default=np.inf) < 1e-2:
+        # where hardly anything overshoots, the time of the top says nothing
+        out = {m: v for m, v in out.items() if m.quantity != "peak_time"}
+    return out, missing
+
+
+def _statics(subject: Subject) -> dict[str, float]:
+    """Limits at s -> 0, in exact arithmetic."""
+    above, below = subject.exact()
+    load = subject.load()
+    closed = above[-1] + below[-1]
+    out: dict[str, float] = {}
+    if closed == 0:
+        return {"final_value": np.nan}
+    final = above[-1] / closed
+    out["final_value"] = float(final)
+    out["static_error"] = float(100 * abs(1 - final))
+    out["velocity_error"] = (
+        np.inf if below[-1] else float(abs(below[-2] / closed)) if len(below) > 1 else np.inf
+    )
+    residue = load[-1] / closed
+    out["disturbance_residue"] = float(abs(residue))
+    out["disturbance_integral"] = (
+        np.inf if residue else float(abs(load[-2] / closed)) if len(load) > 1 else 0.0
+    )
+    return out
+
+
+def _of_poles(subject: Subject, measure: Measure, roots: ComplexArray, highest_fall: float) -> float:
+    if measure.quantity == "decay_rate":
+        return float(-roots.real.max()) if roots.size else np.inf
+    size = np.abs(roots)
+    share = _shares(subject, roots)
+    above, _ = subject.exact()
+    if measure.below is not None and measure.quantity == "damping_ratio":
+        counted = size <= measure.below
+    elif not np.isfinite(highest_fall) or above[-1] == 0:
+        counted = np.ones(len(roots), dtype=bool)
+    else:
+        counted = size <= _REACH * highest_fall
+        if subject.dead_time == 0.0:
+            counted |= share >= _LEAST_SHARE
+    if measure.quantity == "damping_ratio":
+        ratio = -roots.real[counted] / size[counted]
+        return float(ratio.min()) if ratio.size else np.nan
+    pairs = counted & (roots.imag > 0.0)
+    if not pairs.any():
+        return np.nan
+    return float(size[pairs][share[pairs].argmax()])
+
+
+def _shares(subject: Subject, roots: ComplexArray) -> FloatArray:
+    """|residue of T/s| / |T(0)| of each pole, pairs doubled."""
+    above, below = (np.array([float(c) for c in p]) for p in subject.exact())
+    theta = subject.dead_time
+    with np.errstate(all="ignore"):
+        e = np.exp(-roots * theta)
+        n = np.polyval(above, roots)
+        slope = np.polyval(np.polyder(below), roots) + (np.polyval(np.polyder(above), roots) - theta * n) * e
+        final = above[-1] / (above[-1] + below[-1])
+        share: FloatArray = np.abs(n * e / (slope * roots)) / (abs(final) if final else 1.0)
+    return np.where(roots.imag != 0.0, 2.0, 1.0) * np.nan_to_num(share)
