@@ -11,7 +11,8 @@ from synth.jobs.finish import finish
 from synth.jobs.options import Done, Options
 from synth.limits import assess
 from synth.loop.quantities import QUANTITIES, Measure
-from synth.record import place_for
+from synth.record import place_for, plain
+from synth.record.format import Trade
 from synth.search.outcome import Settings, Task
 from synth.spec import Spec, read_spec
 
@@ -30,9 +31,7 @@ def propose(spec_path: str | Path, options: Options | None = None) -> Done:
     pair = trade_pair(options.trade)
     place = place_for(Path(spec_path), options.record) if options.keep else None
     limits, outcome = searched(spec, options)
-    trade = None
-    if pair is not None:
-        raise NotImplementedError
+    trade = _trade(spec, options, pair) if pair is not None else None
     return finish("propose", spec, outcome, limits=limits, place=place, trade=trade)
 
 
@@ -52,6 +51,26 @@ def searched(spec: Spec, options: Options, seeds: Sequence[Any] = ()) -> tuple[t
     impossible = any(limit.violates for limit in limits)
     settings = settings_of(spec, options, impossible=impossible)
     return limits, search(Task.of(spec), settings, options.progress, options.stop, seeds=seeds)
+
+
+def _trade(spec: Spec, options: Options, pair: tuple[Measure, Measure]) -> Trade:
+    """The front of two quantities, as a record holds it."""
+    from synth.search.tradeoff import tradeoff
+
+    points = tradeoff(Task.of(spec), *pair, settings_of(spec, options), options.progress, options.stop)
+    return {
+        "quantities": [measure.quantity for measure in pair],
+        "points": [
+            {
+                "structure": p.structure,
+                "parameters": dict(p.parameters),
+                "first": plain(p.first),
+                "second": plain(p.second),
+                "worst_slack": plain(p.worst_slack),
+            }
+            for p in points
+        ],
+    }
 
 
 def trade_pair(names: tuple[str, str] | None) -> tuple[Measure, Measure] | None:

@@ -119,10 +119,17 @@ def build(given: Given) -> Record:
     }
     if outcome.candidates:
         rows = rows_of([(c.numerator, c.denominator) for c in outcome.candidates])
-        every = every_pole(outcome.plants, rows)
+        every = every_pole(outcome.plants, rows, _counted_below(spec.bounds))
         record["candidates"] = [candidate_part(given, i, every[i]) for i in range(len(outcome.candidates))]
     record["cautions"] = _cautions(given, record)
     return record
+
+
+def _counted_below(bounds: Sequence[Bound]) -> float | None:
+    """Up to which size poles count [rad/s] where every damping requirement says one; None: the usual rule."""
+    sizes = [b.measure.below for b in bounds if b.measure.quantity == "damping_ratio"]
+    given = [size for size in sizes if size is not None]
+    return max(given) if given and len(given) == len(sizes) else None
 
 
 def spec_part(spec: Spec) -> SpecPart:

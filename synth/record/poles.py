@@ -41,8 +41,11 @@ def rows_of(compensators: Sequence[tuple[Sequence[float], Sequence[float]]]) -> 
     return Rational.of([padded(n) for n, _ in compensators], [padded(d) for _, d in compensators])
 
 
-def every_pole(plants: Rational, compensators: Rational) -> list[list[LoopPoles]]:
-    """Poles and modes of B compensators on K plants: out[b][k]."""
+def every_pole(plants: Rational, compensators: Rational, below: float | None = None) -> list[list[LoopPoles]]:
+    """Poles and modes of B compensators on K plants: out[b][k].
+
+    below : [rad/s] where the sheet says up to which size poles count; None is the usual rule.
+    """
     cases = len(plants)
     pair = np.arange(len(compensators) * cases)
     out = [LoopPoles([], []) for _ in pair]
@@ -60,7 +63,7 @@ def every_pole(plants: Rational, compensators: Rational) -> list[list[LoopPoles]
         for i, row in enumerate(rows[good]):
             scale = float(loops.time_scale[i])
             modes = [
-                _mode(complex(p) / scale, float(s), bool(c))
+                _mode(complex(p) / scale, float(s), bool(c) if below is None else abs(p) <= below * scale)
                 for p, s, c in zip(found[i], share[i], counted[i], strict=True)
                 if not math.isnan(p.real) and p.imag >= 0.0
             ]

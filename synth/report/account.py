@@ -148,13 +148,18 @@ def _poles(view: View, candidate: Candidate, width: int) -> list[Text]:
     if not candidate.get("modes"):
         return []
     lines = [heading("Closed-loop poles", "nominal plant"), poles_table(candidate)]
-    uncounted = [mode for mode in candidate["modes"] if not mode["counted"]]
-    if uncounted:
-        text = (
-            "Not counted in the damping ratio: above 5 times the frequency where abs(T) has fallen, "
-            "and under 2 % of the step."
-        )
-        lines.append(hanging("  ", text, width, style="dim"))
+    if any(not mode["counted"] for mode in candidate["modes"]):
+        below = [r.get("below") for r in view.record["requirements"] if r["quantity"] == "damping_ratio"]
+        given = [size for size in below if size is not None]
+        if given and len(given) == len(below):
+            rule = f"above {figure(max(given))} rad/s, as the sheet says"
+        else:
+            rule = (
+                "above 5 times the frequency where abs(T) has fallen, and under 2 % of the step"
+                if not any(case["dead_time"] for case in view.record["plant"]["cases"])
+                else "above 5 times the frequency where abs(T) has fallen"
+            )
+        lines.append(hanging("  ", f"Not counted in the damping ratio: {rule}.", width, style="dim"))
     return lines
 
 

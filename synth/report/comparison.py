@@ -64,9 +64,9 @@ def comparison(named: Sequence[tuple[str, Record]], width: int) -> list[Text]:
         lines.extend(table.lines())
     lines.append(Text("  * holds it back   ! falls short of its own sheet", style="dim"))
     lines.append(heading("Tuned values"))
-    label = max(len(c.label) for c in columns) + 4
+    indent = max(len(c.label) for c in columns) + 4
     for c in columns:
-        first = Text.assemble(f"  {c.label}".ljust(label), (c.candidate["structure"].ljust(13), "name"))
+        first = Text.assemble(f"  {c.label}".ljust(indent), (c.candidate["structure"].ljust(13), "name"))
         lines.append(items(first, tuned(c.candidate), width))
     if several:
         lines.extend(_limits(named, width))
