@@ -8,6 +8,8 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
+from synth.loop.poles.delayed import delayed_poles
+from synth.loop.poles.encirclement import delayed_stable, unit_crossings
 from synth.loop.poles.roots import closed_roots, routh_stable
 from synth.loop.poles.share import Spacing, damping_of, share_in_step, spaced
 from synth.loop.polynomials import coefficient
@@ -17,6 +19,9 @@ from synth.loop.quantities import Measure
 REACH = 5.0
 # ... and, without dead time, any pole whose share in the reference step is at least this.
 LEAST_SHARE = 0.02
+# With dead time, poles are fetched at first as if abs(T) fell at this many times the gain crossover (90 % of the
+# random designs of benchmarks/populations.py fall below 2.6 times it).
+FALL_OVER_CROSSOVER = 3.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -31,17 +36,21 @@ class PoleStage:
               decreasing real part, pairs together, upper half first, exactly conjugate; reals have imaginary
               part exactly 0.
     values    scaled values of the measures that are ready; NaN where absent
+    reach     (M,) all poles with abs(p) up to here are in `poles`; inf without dead time
     """
 
     stable: BoolArray
     abscissa: FloatArray
     poles: ComplexArray
     values: dict[Measure, FloatArray]
+    reach: FloatArray
 
     def rows(self, index: IntArray | BoolArray) -> PoleStage:
         """The loops named by `index`."""
         values = {m: v[index] for m, v in self.values.items()}
-        return PoleStage(self.stable[index], self.abscissa[index], self.poles[index], values)
+        return PoleStage(
+            self.stable[index], self.abscissa[index], self.poles[index], values, self.reach[index]
+        )
 
     def count(
         self, loops: Loops, measures: tuple[Measure, ...], highest_fall: FloatArray | None
@@ -56,7 +65,7 @@ class PoleStage:
             return {}
         if highest_fall is None:
             raise ValueError("counting poles needs the highest fall of abs(T)")
-        poles = _far_enough(loops, self.poles, highest_fall)
+        poles = _far_enough(loops, self.poles, self.reach, highest_fall)
         spacing = spaced(loops, poles)
         share, counted = _counted(loops, poles, spacing, highest_fall)
         out: dict[Measure, FloatArray] = {}
@@ -95,9 +104,10 @@ def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
     """
     names = {m.quantity for m in measures}
     if _delayed(loops):
-        stable, abscissa, poles = _with_dead_time(loops)
+        stable, abscissa, poles, reach = _with_dead_time(loops)
     else:
         stable, abscissa, poles = _without_dead_time(loops)
+        reach = np.full(len(loops), np.inf)
     values: dict[Measure, FloatArray] = {}
     statics = _statics(loops, stable, names)
     for measure in measures:
@@ -108,7 +118,7 @@ def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
             values[measure] = statics[name]
         elif name == "damping_ratio":
             values[measure] = _early_damping(loops, stable, poles, measure)
-    return PoleStage(stable, abscissa, poles, values)
+    return PoleStage(stable, abscissa, poles, values, reach)
 
 
 def counted_poles(
@@ -120,15 +130,27 @@ def counted_poles(
     Returns poles (M, q), share (M, q) as a ratio (of abs(T(0)); where T(0) = 0 the bare residue), counted (M,
     q). With dead time further poles are fetched, as far as the rule reaches, and share alone counts none.
     """
-    poles = _far_enough(loops, poles, highest_fall)
+    poles = _far_enough(loops, poles, np.zeros(len(loops)), highest_fall)
     return poles, *_counted(loops, poles, spaced(loops, poles), highest_fall)
 
 
-def _far_enough(loops: Loops, poles: ComplexArray, highest_fall: FloatArray) -> ComplexArray:
+def _far_enough(
+    loops: Loops, poles: ComplexArray, reach: FloatArray, highest_fall: FloatArray
+) -> ComplexArray:
     """With dead time the true poles as far out as the rule reaches; else the poles as they are."""
     if not _delayed(loops):
         return poles
-    return _reaching(loops, poles, REACH * np.where(np.isfinite(highest_fall), highest_fall, 0.0))
+    further = REACH * np.where(np.isfinite(highest_fall), highest_fall, 0.0)
+    short = np.flatnonzero(further > reach)
+    if short.size == 0:
+        return poles
+    fetched = _reaching(loops.rows(short), poles[short], further[short])
+    width = max(poles.shape[1], fetched.shape[1])
+    out = np.full((len(poles), width), np.nan, dtype=complex)
+    out[:, : poles.shape[1]] = poles
+    out[short] = np.nan
+    out[short, : fetched.shape[1]] = fetched
+    return out
 
 
 def _counted(
@@ -172,25 +194,27 @@ def _without_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArra
     return stable, abscissa, poles
 
 
-def _with_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray]:
-    from synth.loop.poles.delayed import delayed_poles, delayed_stable
-
-    poles = delayed_poles(loops, np.zeros(len(loops)))
+def _with_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray, FloatArray]:
+    # abs(T) falls for the last time not far above the crossover: as far as counting will most likely ask
+    stable = delayed_stable(loops)
+    with np.errstate(all="ignore"):
+        crossover = unit_crossings(loops.denominator, loops.numerator)
+    last = np.where(np.isfinite(crossover), crossover, 0.0).max(axis=1, initial=0.0)
+    reach = np.where(stable, REACH * FALL_OVER_CROSSOVER * last, 0.0)
+    poles = delayed_poles(loops, reach)
     abscissa = np.where(np.isnan(poles.real), -np.inf, poles.real).max(axis=1, initial=-np.inf)
     with np.errstate(divide="ignore", invalid="ignore"):
         chain = np.log(np.abs(loops.numerator[:, 0] / loops.denominator[:, 0])) / loops.dead_time
     abscissa = np.fmax(abscissa, chain)  # -inf where L(∞) = 0
-    stable = delayed_stable(loops) & (abscissa < 0.0)
+    stable &= abscissa < 0.0
     nothing = ~loops.numerator.any(axis=1)
     if nothing.any():  # L = 0: the roots of D, and no dead time in them
         stable[nothing] = routh_stable(loops.denominator[nothing])
-    return stable, abscissa, poles
+    return stable, abscissa, poles, reach
 
 
 def _reaching(loops: Loops, poles: ComplexArray, reach: FloatArray) -> ComplexArray:
     """Poles of loops with dead time as far out as `reach`, and never fewer than are known already."""
-    from synth.loop.poles.delayed import delayed_poles
-
     if not (reach > 0.0).any():
         return poles
     further: ComplexArray = delayed_poles(loops, reach)
