@@ -19,8 +19,8 @@ from synth.loop.quantities import Measure
 REACH = 5.0
 # ... and, without dead time, any pole whose share in the reference step is at least this.
 LEAST_SHARE = 0.02
-# With dead time, poles are fetched at first as if abs(T) fell at this many times the gain crossover: nine in ten
-# of the random designs of benchmarks/populations.py fall below 2.6 times it.
+# With dead time, poles are fetched at first as if abs(T) fell at this many times the gain crossover: nine in
+# ten of the random designs of benchmarks/populations.py fall below 2.6 times it.
 FALL_OVER_CROSSOVER = 3.0
 
 
