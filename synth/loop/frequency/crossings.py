@@ -22,6 +22,7 @@ from synth.loop.frequency.response import CLOSED, D, N, Response, cross, evaluat
 GAIN, FALL, PHASE = 0, 1, 2
 _ITERATIONS = 70  # bisection alone closes any bracket in fewer
 _SETTLED = 3e-14  # Newton step in ln ω
+_HOLDS = 1e-4  # what may be left of a logarithm or an angle at a root
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,9 +93,9 @@ def refine(response: Response, kind: IntArray, brackets: Brackets, level: FloatA
     row = brackets.row % response.loops
     squared = np.where(kind == FALL, level[row], 1.0)
     equation = _Rational(response, kind, row, squared)
-    u = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
-    w = np.exp(u)
-    return Crossings(kind, row, w, brackets.negative, loop_at(response, row, w))
+    u, holds = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
+    kind, row, w, down = kind[holds], row[holds], np.exp(u[holds]), brackets.negative[holds]
+    return Crossings(kind, row, w, down, loop_at(response, row, w))
 
 
 def gain_frequencies(response: Response, gain: FloatArray) -> tuple[IntArray, FloatArray]:
@@ -103,8 +104,8 @@ def gain_frequencies(response: Response, gain: FloatArray) -> tuple[IntArray, Fl
     brackets = isolate(polynomials)
     row = brackets.row
     equation = _Rational(response, np.full(len(row), GAIN, dtype=np.intp), row, gain[row] ** 2)
-    u = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
-    return row, np.exp(u)
+    u, holds = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
+    return row[holds], np.exp(u[holds])
 
 
 class Equation(Protocol):
@@ -117,14 +118,20 @@ class Equation(Protocol):
         """Go on with these equations alone."""
 
 
-def newton(equation: Equation, bottom: FloatArray, top: FloatArray, negative: BoolArray) -> FloatArray:
+def newton(
+    equation: Equation, bottom: FloatArray, top: FloatArray, negative: BoolArray
+) -> tuple[FloatArray, BoolArray]:
     """Roots u of F equations by Newton's method, kept inside the brackets; a step that leaves them is a
     bisection.
+
+    Returns u (F,) and whether the equation holds there: it does not in a bracket that rounding of the squared
+    polynomials made up (degrees above 40), or where the angle jumps.
     """
     sign = np.where(negative, 1.0, -1.0)
     u = 0.5 * (bottom + top)
-    result = np.empty(len(u))
+    result, holds = np.empty(len(u)), np.empty(len(u), dtype=bool)
     active = np.arange(len(u))
+    excess = result
     for iteration in range(_ITERATIONS):
         excess, slope, side = equation.at(u)
         with np.errstate(divide="ignore", invalid="ignore"):
@@ -142,12 +149,13 @@ def newton(equation: Equation, bottom: FloatArray, top: FloatArray, negative: Bo
         if finished == len(u):
             break
         if 4 * finished > len(u):
-            result[active[done]] = u[done]
+            result[active[done]], holds[active[done]] = u[done], np.abs(excess[done]) < _HOLDS
             keep = np.flatnonzero(~done)
             active, u, bottom, top, sign = active[keep], u[keep], bottom[keep], top[keep], sign[keep]
+            excess = excess[keep]
             equation.keep(keep)
-    result[active] = u
-    return result
+    result[active], holds[active] = u, np.abs(excess) < _HOLDS
+    return result, holds
 
 
 class _Rational:

@@ -195,10 +195,10 @@ class _Findings:
         equation = _Delayed(self.response, kind, row, self.level)
         with np.errstate(divide="ignore"):
             bottom = np.maximum(np.log(low), np.log(high) - 50.0)
-        w = np.exp(newton(equation, bottom, np.log(high), negative))
-        found = Crossings(
-            np.full(len(row), kind, dtype=np.intp), row, w, negative, loop_at(self.response, row, w)
-        )
+        u, holds = newton(equation, bottom, np.log(high), negative)
+        row, w, down = row[holds], np.exp(u[holds]), negative[holds]
+        kinds = np.full(len(row), kind, dtype=np.intp)
+        found = Crossings(kinds, row, w, down, loop_at(self.response, row, w))
         self.found.append(found)
         if kind == PHASE:
             size = np.where(found.loop.real < 0.0, -found.loop.real, 0.0)

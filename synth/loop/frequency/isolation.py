@@ -117,7 +117,7 @@ def _filled_signs(polynomials: FloatArray) -> BoolArray:
 
 
 def _octaves(m: int) -> int:
-    """Octaves of one window for degree m: fewer for high degrees, so that no power leaves the range of doubles."""
+    """Octaves of one window for degree m: fewer for high ones, so that no power leaves the number range."""
     return max(2, min(_OCTAVES, 2 * (_RANGE // max(m, 1))))
 
 
@@ -148,7 +148,7 @@ def _scan(
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
     near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
 ) -> tuple[IntArray, IntArray]:
-    """One window, 2^(octaves · shift) times the central one: adds to `found`, returns rows with roots below and
+    """One window, 2^(octaves · shift) times the central one, into `found`; returns rows with roots below and
     above it.
     """
     m = len(polynomials) - 1

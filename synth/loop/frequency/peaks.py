@@ -22,7 +22,8 @@ from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, evalu
 
 CURVES = {"sensitivity_peak": D, "complementary_peak": N, "noise_gain": CONTROL}
 
-_SPAN = 20  # the coarse look: x from 2^-20 to 2^20
+_SPAN = 20  # the coarse look: x from 2^-20 to 2^20 ...
+_RANGE = 480  # ... but x^n no further than 2^480
 _NEIGHBOUR = 2.0**0.5  # ratio of neighbouring ω of that look
 _STEPS = 60  # bisection alone needs half of them
 _ROUNDS = 12
@@ -69,7 +70,8 @@ def suprema(response: Response, poles: ComplexArray, keys: tuple[str, ...]) -> d
 def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tuple[FloatArray, FloatArray]:
     """Largest value seen of each curve and its frequency; 0 stands for an end, or the border of the look."""
     m = response.loops
-    x = 2.0 ** np.arange(-_SPAN, _SPAN + 1)
+    span = min(_SPAN, _RANGE // max(len(response.squares) - 1, 1))
+    x = 2.0 ** np.arange(-span, span + 1)
     powers = x[:, None] ** np.arange(len(response.squares))[None, :]
     bottom = powers @ response.squares[:, CLOSED]
     w = np.sqrt(x)
@@ -83,7 +85,7 @@ def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tu
         ratio = (powers @ response.squares[:, p]) / bottom
         top = ratio.argmax(axis=0)
         value = np.sqrt(ratio[top, columns])
-        place = np.where((top > 0) & (top < 2 * _SPAN), w[top], 0.0)
+        place = np.where((top > 0) & (top < 2 * span), w[top], 0.0)
         if light.size:
             seen = _size(response, np.full(len(light), p), light, lightest[light]) / below
             higher = seen > value[light]

@@ -193,3 +193,15 @@ def test_lag_with_dead_time(measure):
 def test_only_what_is_wanted_is_returned(measure):
     assert set(measure(([[1.0]], [[1.0, 1.0]]), P, keys={"crossover", "overshoot"})) == {"crossover"}
     assert measure(([[1.0]], [[1.0, 1.0]]), P, keys={"overshoot"}) == {}
+
+
+@pytest.mark.parametrize("n", [13, 20, 40, 60])
+def test_long_chains_of_equal_lags(measure, n):
+    k = 1.05
+    m = measure(([[1.0]], [np.poly(-np.ones(n)).tolist()]), gain(k))
+    crossover = np.sqrt(k ** (2 / n) - 1)
+    assert m["crossover"] == pytest.approx(crossover, rel=1e-10)
+    assert m["gain_margin"] == pytest.approx(-20 * np.log10(k * np.cos(np.pi / n) ** n), abs=1e-9)
+    assert m["phase_margin"] == pytest.approx(180 - n * np.degrees(np.arctan(crossover)), abs=1e-8)
+    w = np.linspace(0, 3 * np.tan(np.pi / n), 200_001)
+    assert m["sensitivity_peak"] == pytest.approx(np.max(1 / np.abs(1 + k / (1 + 1j * w) ** n)), rel=1e-6)
