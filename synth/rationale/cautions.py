@@ -16,6 +16,7 @@ HARDWARE = (
 )
 DELAY_PERIODS = 1.5  # sampling periods that hold and computation cost together
 EASY_SHARE = 0.1  # of the longest period; costs some tenth of the delay margin
+SLOW = 5.0  # times the settling time
 NEAR_VALID = 0.5  # of the frequency up to which the model was identified
 
 
@@ -26,6 +27,7 @@ def cautions(scene: Scene) -> list[str]:
         *_direction(scene),
         *_reach(scene),
         *_compensator(scene),
+        *_slow(scene),
         *_effort(scene),
         *_sampling(scene),
         *_noise(scene),
@@ -100,6 +102,18 @@ def _compensator(scene: Scene) -> list[str]:
     if worst.size == 0:
         return []
     return [f"The compensator is itself unstable (pole at {figure(float(worst.real.max()), 3)} rad/s)."]
+
+
+def _slow(scene: Scene) -> list[str]:
+    """A mode that the reference step hardly shows, and that every disturbance goes through."""
+    decay, case = scene.worst("decay_rate")
+    settling = float(scene.column("settling_time")[case])
+    if not (decay > 0.0 and settling > 0.0 and 1.0 / decay > SLOW * settling):
+        return []
+    return [
+        f"A slow mode, decaying to 1/e in {quantity(1.0 / decay, 's', 3)}{_on(scene, case)}, hardly shows in "
+        "the reference step; a disturbance dies out with it. decay_rate or disturbance_area would bound it."
+    ]
 
 
 def _effort(scene: Scene) -> list[str]:

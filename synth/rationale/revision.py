@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, Literal
@@ -10,7 +11,7 @@ from synth.rationale.scene import Scene
 from synth.rationale.sentences import said_binding
 from synth.search.outcome import Candidate, Outcome
 from synth.spec import Spec
-from synth.wording.figures import count, percent
+from synth.wording.figures import change, count, percent
 from synth.wording.names import parameter_name
 
 Advice = Literal["keep", "retune", "restructure", "relax"]
@@ -99,10 +100,10 @@ def _could_be_better(outcome: Outcome, untouched: Candidate) -> list[tuple[str, 
 def _moves(new: Candidate, moved: dict[str, list[float]], index: int) -> tuple[str, dict[str, Any]]:
     slack = percent(new.worst_slack)
     text = f"A {new.structure} with other values does it: candidate {index + 1}, slack {slack}"
-    changes = {key: now / old - 1.0 for key, (old, now) in moved.items() if old}
-    if changes:
-        key = max(changes, key=lambda k: abs(changes[k]))
-        text += f". {parameter_name(key).capitalize()} moves most, by {percent(changes[key])}"
+    ratios = {key: now / old for key, (old, now) in moved.items() if old and now / old > 0.0}
+    if ratios:
+        key = max(ratios, key=lambda k: abs(math.log(ratios[k])))
+        text += f". {parameter_name(key).capitalize()} moves most: {change(*moved[key])}"
     facts = {"rank": index + 1, "worst_slack": new.worst_slack, "moved": moved}
     return f"{text}.", facts
 

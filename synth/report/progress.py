@@ -37,7 +37,8 @@ class Watch:
     def __call__(self, progress: Progress) -> None:
         """Take a look; cheap when called too often."""
         now = time.monotonic()
-        if not self._console.is_terminal or now - self._begun < LATE or now - self._last < OFTEN:
+        seen = self._console.is_terminal and not self._console.is_dumb_terminal
+        if not seen or now - self._begun < LATE or now - self._last < OFTEN:
             return
         self._last = now
         if self._live is None:

@@ -9,7 +9,7 @@ from rich.text import Text
 from synth.record import Earlier, Record, number, parameter_name
 from synth.report.theme import Columns, hanging, heading
 from synth.report.view import View
-from synth.wording.figures import ABSENT, figure, percent, quantity
+from synth.wording.figures import ABSENT, change, figure, percent, quantity
 
 LONG = 24  # two values that need more room than this stand on a line of their own
 _ADVICE = {
@@ -47,9 +47,8 @@ def _moved(moved: dict[str, list[float]] | None, record: Record) -> list[Text]:
     )
     table = Columns(("<", ">", "<", ">", ">"), indent=4)
     for key, (old, new) in moved.items():
-        change = f"{100.0 * (new / old - 1.0):+.1f} %".replace("-", "−") if old else ""
         unit = units.get(key, "")
-        table.add(parameter_name(key), quantity(old, unit), "→", quantity(new, unit), change)
+        table.add(parameter_name(key), quantity(old, unit), "→", quantity(new, unit), change(old, new))
     return table.lines()
 
 
@@ -62,13 +61,13 @@ def _changes(record: Record, width: int) -> list[Text]:
         return [*lines, Text("  nothing in plant or requirements")]
     table = Columns(("<", ">", "<", ">", "<"))
     long = []
-    for change in part["changes"]:
-        where = f"{change['what']}, {change['case']}" if change["case"] else change["what"]
-        old, new = _value(change["old"]), _value(change["new"])
+    for one in part["changes"]:
+        where = f"{one['what']}, {one['case']}" if one["case"] else one["what"]
+        old, new = _value(one["old"]), _value(one["new"])
         if len(old) + len(new) > LONG:
             long.append(hanging(f"  {where}: ", f"{old} → {new}", width))
             continue
-        table.add(where, old, "→", new, _relative(change["old"], change["new"]))
+        table.add(where, old, "→", new, _relative(one["old"], one["new"]))
     return [*lines, *table.lines(), *long]
 
 
@@ -90,7 +89,7 @@ def _relative(old: Any, new: Any) -> str:
     plain = all(isinstance(v, int | float) and not isinstance(v, bool) for v in (old, new))
     if not plain or not old:
         return ""
-    return f"({100.0 * (new / old - 1.0):+.0f} %)".replace("-", "−")
+    return f"({change(old, new)})"
 
 
 def _earlier(record: Record, width: int) -> list[Text]:

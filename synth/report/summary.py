@@ -48,7 +48,8 @@ def ranked(record: Record, width: int) -> list[Text]:
     if not candidates:
         return []
     several = view.several_cases
-    lines = [heading("Candidates", _examined(record), width)]
+    words = "Candidates" if candidates[0]["meets_all"] else "Nearest found, none meets the sheet"
+    lines = [heading(words, _examined(record), width)]
     table = Columns((">", "<", ">", ">", "<"), indent=1)
     table.add("", "structure", "order", "slack", "held back by", style="dim")
     for c in candidates:

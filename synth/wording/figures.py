@@ -87,6 +87,18 @@ def percent(value: float) -> str:
     return f"{sign}{text} %"
 
 
+def change(old: float, new: float) -> str:
+    """From one value to another: "+9.5 %", or "×60" beyond a factor of five; "" where the old one is 0."""
+    if old == 0.0:
+        return ""
+    ratio = new / old
+    if ratio >= 5.0:
+        return f"×{figure(ratio, 2)}"
+    if 0.0 < ratio <= 0.2:
+        return f"÷{figure(1.0 / ratio, 2)}"
+    return percent(ratio - 1.0)
+
+
 def pole(re: float, im: float, digits: int = 4) -> str:
     """A pole; a pair is given by its upper half."""
     if im == 0.0:

@@ -20,10 +20,14 @@ def plant_unit(unit: str, u: str = "", y: str = "") -> str:
 
     u, y : unit of the plant's input and output; a disturbance d enters at the input.
     """
-    if unit == "u" and u in NO_UNIT:
-        return ""
     own = {"u": u or "u", "d": u or "d", "y": y or "y"}
-    return " ".join(own.get(part, part) for part in unit.split())
+    sides = [
+        " ".join(own.get(part, part) for part in side.split() if own.get(part) not in NO_UNIT)
+        for side in unit.split(" per ")
+    ]
+    if len(sides) == 2 and sides[1]:
+        return f"{sides[0]} per {sides[1]}".strip()
+    return sides[0]
 
 
 def quantity_unit(key: str, u: str = "", y: str = "") -> str:

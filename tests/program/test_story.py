@@ -84,7 +84,7 @@ def test_the_story_of_a_revision(sheet, synth):
     kept = synth("rerun", sheet)
     assert kept.code == 0
     assert kept.out.splitlines()[3].startswith("  KEEP  The adopted PI")
-    assert "K  2  →  1.98  (−1 %)" in kept.out
+    assert "K  2  →  1.98  (−1.0 %)" in kept.out
     record = json.loads((sheet.parent / "records" / "block-002.json").read_text())
     assert record["predecessor"]["file"] == "block-001.json"
     assert record["revision"]["advice"] == "keep"

@@ -61,7 +61,7 @@ def test_advice_changes_and_earlier_candidates(record, drawn):
         "    integral time  0.25 s  →  0.3 s  +20.0 %\n"
         "\n"
         "What changed  from the predecessor's sheet to this one\n"
-        "  I                    1  →    1.3  (+30 %)\n"
+        "  I                    1  →    1.3  (+30.0 %)\n"
         "  operating case, ice  —  →  I 1.5\n"
         "  plant: K/(s*(I*s + f)) → K*exp(-0.01*s)/(s*(I*s + f)*(T*s + 1))\n"
         "\n"

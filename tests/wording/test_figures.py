@@ -4,7 +4,7 @@ import math
 
 import pytest
 
-from synth.wording.figures import exact, figure, percent, quantity, unit_for
+from synth.wording.figures import change, exact, figure, percent, quantity, unit_for
 
 
 @pytest.mark.parametrize(
@@ -71,3 +71,18 @@ def test_tuned_values_keep_every_digit_that_was_scored():
     assert exact(0.0018163) == "0.0018163"
     assert exact(3.0) == "3"
     assert float(exact(1.0 / 3.0)) == 1.0 / 3.0
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "text"),
+    [
+        (2.0, 2.2, "+10.0 %"),
+        (2.0, 1.5, "−25.0 %"),
+        (29.0, 1740.0, "×60"),
+        (10.0, 1.0, "÷10"),
+        (1.0, -1.0, "−200 %"),
+        (0.0, 1.0, ""),
+    ],
+)
+def test_a_change_in_percent_or_as_a_factor(old, new, text):
+    assert change(old, new) == text
