@@ -1,7 +1,7 @@
 """True roots of D(s) + N(s) e^(-s θ), all of them within a circle, counted to be sure that none is missing.
 
-M loops, q roots. Scaled time. Seeds come from a rational stand-in of the delay near the origin and from the chain of
-far roots beyond; every root returned solves the transcendental equation itself.
+M loops, q roots. Scaled time. Seeds come from a rational stand-in of the delay near the origin and from the
+chain of far roots beyond; every root returned solves the transcendental equation itself.
 """
 
 from __future__ import annotations
@@ -27,12 +27,15 @@ __all__ = ["characteristic", "delayed_poles", "delayed_stable"]
 
 # Radius, in units of 1/θ, within which every root is always sought; it holds the first chain pair.
 NEAREST = 7.0
-# Radius, in units of 1/θ, beyond which no roots are returned: the chain has long settled on its asymptote there.
+# Radius, in units of 1/θ, beyond which no roots are returned: the chain has long settled on its asymptote
+# there.
 FARTHEST = 400.0
 # Order of the rational stand-in of the delay whose roots are the near seeds.
 STAND_IN = 4
 # So many of the rightmost are returned however far out they lie.
 RIGHTMOST = 6
+# Where seeds that do not exist are put, in units of 1/θ: too far to push anything.
+FAR_AWAY = 1e9
 
 
 def delayed_poles(loops: Loops, reach: FloatArray) -> ComplexArray:
@@ -45,15 +48,17 @@ def delayed_poles(loops: Loops, reach: FloatArray) -> ComplexArray:
 
     Returns
     -------
-    (M, q), NaN at the end of a row; ordered by decreasing real part, pairs side by side, upper half first, exactly
-    conjugate; real roots have imaginary part exactly 0. Relative error about eps × condition (test_delayed_poles).
+    (M, q), NaN at the end of a row; ordered by decreasing real part, pairs side by side, upper half first,
+    exactly conjugate; real roots have imaginary part exactly 0. Relative error about eps × condition
+    (test_delayed_poles).
 
     Notes
     -----
-    Seeds: roots of D Q + N P, P/Q the diagonal Padé quotient of e^(-s θ), and s = (ln(-N/D) + 2πjk)/θ on the chain.
-    All are moved together by Aberth's iteration on the transcendental function (Math. Comp. 27, 1973), which keeps
-    two from meeting in one root. The number within the circle is then checked by the argument principle, and the
-    rightmost by the bound abs(N/D) < e^(θ Re p) outside the circle or by the count right of a line.
+    Seeds: roots of D Q + N P, P/Q the diagonal Padé quotient of e^(-s θ), and s = (ln(-N/D) + 2πjk)/θ on the
+    chain. All are moved together by Aberth's iteration on the transcendental function (Math. Comp. 27, 1973),
+    which keeps two from meeting in one root. The number within the circle is then checked by the argument
+    principle, and the rightmost by the bound abs(N/D) < e^(θ Re p) outside the circle or by the count right
+    of a line.
     """
     if len(loops) == 0:
         return np.zeros((0, 0), dtype=complex)
@@ -91,7 +96,7 @@ def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
         at = np.flatnonzero(size == one)
         some, far = loops.rows(at), radius[at]
         with np.errstate(all="ignore"):  # rows that are not finite and seeds that run away end as NaN
-            roots = _kept(some, _refined(some, _seeds(some, int(pairs[at].max()))))
+            roots = _kept(some, _refined(some, _seeds(some, int(pairs[at].max())), far))
             for _ in range(4):
                 seeds = missing_roots(some, roots, far)
                 wanting = np.flatnonzero(np.isfinite(seeds.real).any(axis=1))
@@ -99,7 +104,7 @@ def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
                     break
                 more = np.concatenate([roots[wanting], seeds[wanting]], axis=1)
                 part = some.rows(wanting)
-                roots = _joined(roots, wanting, _kept(part, _refined(part, more)))
+                roots = _joined(roots, wanting, _kept(part, _refined(part, more, far[wanting])))
             outside = ~(np.abs(roots) <= far[:, None] * (1.0 + 1e-12))
             best = np.where(outside, -np.inf, roots.real).max(axis=1, initial=-np.inf)
             outside &= ~(roots.real > best[:, None])
@@ -126,7 +131,9 @@ def _near_seeds(loops: Loops) -> ComplexArray:
     order = loops.order
     total = np.zeros((len(loops), order + m + 1))
     for k in range(m + 1):
-        total[:, k : k + order + 1] += below[:, k, None] * loops.denominator + above[:, k, None] * loops.numerator
+        total[:, k : k + order + 1] += (
+            below[:, k, None] * loops.denominator + above[:, k, None] * loops.numerator
+        )
     return closed_roots(total)
 
 
@@ -140,55 +147,66 @@ def _chain_seeds(loops: Loops, pairs: int) -> ComplexArray:
     level = np.log(-first.astype(complex))
     s = (level + turns) / delay
     for _ in range(4):
-        # the leading ratio by its own logarithm, which turns steadily with s, and the rest by the principal one
+        # the leading ratio by its own logarithm, which turns steadily with s, and the rest by the principal
+        # one
         rest = horner(loops.numerator, s) / (horner(loops.denominator, s) * first) * s**falls
         better = (level - falls * np.log(s) + np.log(rest) + turns) / delay
         s = np.where(np.isfinite(better), better, s)
     return np.concatenate([s, np.conj(s)], axis=1)
 
 
-def _refined(loops: Loops, seeds: ComplexArray) -> ComplexArray:
-    """Aberth's iteration from all seeds at once, then Newton's on each root."""
-    roots = np.where(np.isfinite(seeds), seeds, np.nan)
+def _refined(loops: Loops, seeds: ComplexArray, radius: FloatArray) -> ComplexArray:
+    """Aberth's iteration from all seeds at once, then Newton's on each root.
+
+    A row is done when every root near or within its circle stands still: seeds that wander outside concern
+    nobody.
+    """
+    lost = ~np.isfinite(seeds)
     # a pair that starts exactly conjugate could never split into two reals
-    roots = roots * (1.0 + 1e-4j * (1.0 + np.arange(roots.shape[1]) % 3))
-    active = np.arange(len(loops))
-    for _ in range(14):
+    tilt = 1.0 + 1e-4j * (1.0 + np.arange(seeds.shape[1]) % 3)
+    roots = np.where(lost, FAR_AWAY / loops.dead_time[:, None], seeds) * tilt
+    active, some = np.arange(len(loops)), loops
+    index = np.arange(seeds.shape[1])
+    for _ in range(12):
         here = roots[active]
-        some = loops.rows(active)
         value, slope = characteristic(some, here)
         apart = here[:, :, None] - here[:, None, :]
-        index = np.arange(here.shape[1])
-        apart[:, index, index] = np.inf
+        apart[:, index, index] = 1.0
+        np.reciprocal(apart, out=apart)
+        apart[:, index, index] = 0.0
         newton = value / slope
-        step = newton / (1.0 - newton * np.nansum(1.0 / apart, axis=2))
-        size = np.abs(here)
+        step = newton / (1.0 - newton * apart.sum(axis=2))
+        size, long = np.abs(here), np.abs(step)
         limit = 0.5 * size + 0.5 / some.dead_time[:, None]
-        long = np.abs(step)
         step = np.where(long > limit, step * (limit / long), step)
-        step = np.where(np.isfinite(step), step, 0.0)
+        step[~np.isfinite(step) | lost[active]] = 0.0
         roots[active] = here - step
-        moving = (long > 1e-5 * size + 1e-12).any(axis=1)
+        moving = ((long > 1e-5 * size + 1e-12) & (size < 1.5 * radius[active, None])).any(axis=1)
         if not moving.any():
             break
         active = active[moving]
+        some = loops.rows(active)
     for _ in range(2):
         value, slope = characteristic(loops, roots)
         step = value / slope
         fine = np.abs(step) < 1e-3 * np.abs(roots) + 1e-12
         roots = np.where(fine, roots - step, roots)
-    return roots
+    roots[lost] = np.nan
+    out: ComplexArray = roots
+    return out
 
 
 def _kept(loops: Loops, roots: ComplexArray) -> ComplexArray:
-    """Converged roots, each once, made conjugate: upper half and reals first found, lower half by reflection."""
+    """Converged roots, each once, made conjugate: upper half and reals first found, lower half by
+    reflection."""
     with np.errstate(all="ignore"):
         value, slope = characteristic(loops, roots)
         late = np.exp(-roots.real * loops.dead_time[:, None])
         size = np.abs(roots)
         rounding = magnitude_sum(loops.denominator, size) + magnitude_sum(loops.numerator, size) * late
         good = (np.abs(value) <= 1e-11 * rounding) & np.isfinite(value)
-        # the distance to the true root that rounding leaves open, as for a double root where the slope is small
+        # the distance to the true root that rounding leaves open, as for a double root where the slope is
+        # small
         fuzz = np.sqrt(np.finfo(float).eps) * 1e-3 * size + 1e-15 * rounding / np.abs(slope)
         fuzz = np.minimum(fuzz, 1e-4 * size) + 1e-300
     upper = np.where(good, roots.real + 1j * np.abs(roots.imag), np.nan)
@@ -212,9 +230,14 @@ def _kept(loops: Loops, roots: ComplexArray) -> ComplexArray:
 
 
 def _ordered(roots: ComplexArray) -> ComplexArray:
-    """By decreasing real part, upper half of a pair before its lower half, NaN last, empty columns dropped."""
+    """By decreasing real part, upper half of a pair before its lower half, NaN last, empty columns
+    dropped."""
     bad = np.isnan(roots.real)
-    keys = (np.where(bad, 0.0, -roots.imag), np.where(bad, 0.0, -np.abs(roots.imag)), np.where(bad, np.inf, -roots.real))
+    keys = (
+        np.where(bad, 0.0, -roots.imag),
+        np.where(bad, 0.0, -np.abs(roots.imag)),
+        np.where(bad, np.inf, -roots.real),
+    )
     out = np.take_along_axis(roots, np.lexsort(keys, axis=1), axis=1)
     width = int((~bad).sum(axis=1).max(initial=0))
     return out[:, :width]
@@ -231,7 +254,8 @@ def _joined(whole: ComplexArray, at: IntArray, part: ComplexArray) -> ComplexArr
 
 
 def _trimmed(found: ComplexArray, asked: FloatArray) -> ComplexArray:
-    """Drop what a wider search for the rightmost root brought in: outside `asked` a few rightmost ones stay."""
+    """Drop what a wider search for the rightmost root brought in: outside `asked` a few rightmost ones
+    stay."""
     with np.errstate(invalid="ignore"):
         keep = np.abs(found) <= asked[:, None] * (1.0 + 1e-12)
     keep[:, :RIGHTMOST] = True
@@ -244,8 +268,8 @@ def _trimmed(found: ComplexArray, asked: FloatArray) -> ComplexArray:
 def _with_rightmost(loops: Loops, found: ComplexArray) -> ComplexArray:
     """`found` with the rightmost root or pair added, from the count right of a line alone.
 
-    The line is bisected to where the last root leaves its right side; the crossing frequency where L is nearest -1
-    there is the root's imaginary part.
+    The line is bisected to where the last root leaves its right side; the crossing frequency where L is
+    nearest -1 there is the root's imaginary part.
     """
     low = np.where(np.isnan(found.real), -np.inf, found.real).max(axis=1, initial=-np.inf)
     low = np.fmax(low, -FARTHEST / loops.dead_time)
@@ -272,18 +296,24 @@ def _with_rightmost(loops: Loops, found: ComplexArray) -> ComplexArray:
         best = np.nan_to_num(np.abs(value) / scale, nan=np.inf).argmin(axis=1)
         seed = np.take_along_axis(points, best[:, None], axis=1)
         seeds = np.concatenate([seed, np.where(seed.imag > 0.0, np.conj(seed), np.nan)], axis=1)
-        return _kept(loops, _refined(loops, np.concatenate([found, seeds], axis=1)))
+        everywhere = np.full(len(low), np.inf)
+        return _kept(loops, _refined(loops, np.concatenate([found, seeds], axis=1), everywhere))
 
 
 def _holds_rightmost(loops: Loops, found: ComplexArray, radius: FloatArray) -> BoolArray:
-    """Whether no root outside the circle lies right of the rightmost one found (or of the far chain). (M,)."""
+    """Whether no root outside the circle lies right of the rightmost one found (or of the far chain).
+    (M,)."""
     chain = chain_abscissa(loops)
     with np.errstate(all="ignore"):
         best = np.where(np.isnan(found.real), -np.inf, found.real).max(axis=1, initial=-np.inf)
         far = np.abs(loops.denominator[:, 0]) * radius**loops.order
-        rest = magnitude_sum(loops.denominator[:, 1:], radius[:, None])[:, 0] if loops.order else np.zeros(len(loops))
+        rest = (
+            magnitude_sum(loops.denominator[:, 1:], radius[:, None])[:, 0]
+            if loops.order
+            else np.zeros(len(loops))
+        )
         most = magnitude_sum(loops.numerator, radius[:, None])[:, 0]
-        sure = (far > rest) & (most < (far - rest) * np.exp(loops.dead_time * best))
+        sure: BoolArray = (far > rest) & (most < (far - rest) * np.exp(loops.dead_time * best))
     doubtful = np.flatnonzero(~sure)
     if doubtful.size:
         line = np.maximum(best, chain)[doubtful] + 1e-6 / loops.dead_time[doubtful]
@@ -292,6 +322,7 @@ def _holds_rightmost(loops: Loops, found: ComplexArray, radius: FloatArray) -> B
         sure[doubtful[readable]] = ~(count > 0.0)
         empty = ~np.isfinite(best)[doubtful]
         # without N, or where the row is not finite, there may be nothing to find
-        nothing = ~loops.numerator[doubtful].any(axis=1) | ~np.isfinite(loops.closed[doubtful]).all(axis=1)
-        sure[doubtful[empty]] = nothing[empty]
+        alone = ~np.any(loops.numerator[doubtful], axis=1, keepdims=True)[:, 0]
+        broken = ~np.isfinite(loops.closed[doubtful].sum(axis=1))
+        sure[doubtful[empty]] = (alone | broken)[empty]
     return sure

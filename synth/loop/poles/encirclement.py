@@ -1,4 +1,4 @@
-"""How many roots of D(s) + N(s) e^(-s θ) lie right of a vertical line: an exact count, no approximation of the delay.
+"""How many roots of D(s) + N(s) e^(-s θ) lie right of a vertical line: an exact count.
 
 M loops, n order of D. Scaled time. Nothing here knows an approximation of e^(-s θ).
 """
@@ -17,10 +17,11 @@ ON_THE_LINE = 1e-12
 
 
 def delayed_stable(loops: Loops) -> BoolArray:
-    """Whether every root of D + N e^(-s θ) lies strictly in the left half plane, and stays there under a small lag.
+    """Whether every root of D + N e^(-s θ) lies strictly in the left half plane, and stays there under a
+    small lag.
 
-    loops : dead_time (M,) > 0. Returns (M,). abs(L(∞)) >= 1 is not stable (a chain of roots on or right of the
-    axis), nor is a root on the axis, nor a row that is not finite.
+    loops : dead_time (M,) > 0. Returns (M,). abs(L(∞)) >= 1 is not stable (a chain of roots on or right of
+    the axis), nor is a root on the axis, nor a row that is not finite.
     """
     count, touching = roots_right_of(loops, np.zeros(len(loops)))
     stable: BoolArray = (count == 0.0) & ~touching
@@ -28,11 +29,10 @@ def delayed_stable(loops: Loops) -> BoolArray:
 
 
 def chain_abscissa(loops: Loops) -> FloatArray:
-    """Real part that the far roots tend to where L(∞) is not 0: ln abs(L(∞)) / θ; -inf where it is 0. (M,)."""
+    """Real part that the far roots tend to where L(∞) is not 0: ln abs(L(∞)) / θ; -inf where it is 0.
+    (M,)."""
     with np.errstate(divide="ignore", invalid="ignore"):
-        out: FloatArray = (
-            np.log(np.abs(loops.numerator[:, 0] / loops.denominator[:, 0])) / loops.dead_time
-        )
+        out: FloatArray = np.log(np.abs(loops.numerator[:, 0] / loops.denominator[:, 0])) / loops.dead_time
     return out
 
 
@@ -40,18 +40,19 @@ def roots_right_of(loops: Loops, line: FloatArray) -> tuple[FloatArray, BoolArra
     """Number of roots with real part above `line`, and whether one lies on the line itself.
 
     loops : dead_time (M,) > 0; line : (M,) scaled 1/time.
-    Returns count (M,) as floats, inf where the far chain of roots is not left of the line, NaN for a row that is
-    not finite; touching (M,).
+    Returns count (M,) as floats, inf where the far chain of roots is not left of the line, NaN for a row that
+    is not finite; touching (M,).
 
     Notes
     -----
-    Argument principle on s = line + jω. Between the frequencies where abs(N) = abs(D), which are the real roots of
-    a polynomial of degree n in ω², one of the two terms outweighs the other and the argument of the sum stays
-    within 90 degrees of the argument of the larger. The argument of N and D follows from their roots and that of
-    the delay is -ω θ, so the change of argument is known segment by segment with no sampling at all, and rounding
-    would have to reach half a turn to spoil the count; a root within about 1e-10 of the line is the exception.
-    The crossing frequencies are those of K. Walton and J. E. Marshall, Direct method for TDS stability analysis,
-    IEE Proc. D 134 (1987) 101-107, who step through the delays instead.
+    Argument principle on s = line + jω. Between the frequencies where abs(N) = abs(D), which are the real
+    roots of a polynomial of degree n in ω², one of the two terms outweighs the other and the argument of the
+    sum stays within 90 degrees of the argument of the larger. The argument of N and D follows from their
+    roots and that of the delay is -ω θ, so the change of argument is known segment by segment with no
+    sampling at all, and rounding would have to reach half a turn to spoil the count; a root within about
+    1e-10 of the line is the exception. The crossing frequencies are those of K. Walton and J. E. Marshall,
+    Direct method for TDS stability analysis, IEE Proc. D 134 (1987) 101-107, who step through the delays
+    instead.
     """
     rows, order = len(loops), loops.order
     with np.errstate(all="ignore"):  # rows that are not finite run on; they are NaN at the end
@@ -75,7 +76,8 @@ def roots_right_of(loops: Loops, line: FloatArray) -> tuple[FloatArray, BoolArra
 
 
 def moved(polynomials: FloatArray, shift: FloatArray) -> FloatArray:
-    """Coefficients of p(s + shift), row by row, by repeated synthetic division. (M, n + 1), (M,) -> (M, n + 1)."""
+    """Coefficients of p(s + shift), row by row, by repeated synthetic division. (M, n + 1), (M,) -> (M, n +
+    1)."""
     out = polynomials.copy()
     if not shift.any():
         return out
@@ -99,7 +101,8 @@ def squared_on_axis(polynomials: FloatArray) -> FloatArray:
 
 
 def unit_crossings(denominator: FloatArray, numerator: FloatArray) -> FloatArray:
-    """Frequencies ω > 0 with abs(N(jω)) = abs(D(jω)), ascending, padded with inf. (M, n + 1) twice -> (M, n)."""
+    """Frequencies ω > 0 with abs(N(jω)) = abs(D(jω)), ascending, padded with inf. (M, n + 1) twice -> (M,
+    n)."""
     squares = closed_roots(squared_on_axis(denominator) - squared_on_axis(numerator))
     real = (squares.imag == 0.0) & (squares.real > 0.0)
     out: FloatArray = np.sort(np.sqrt(np.where(real, squares.real, np.inf)), axis=1)

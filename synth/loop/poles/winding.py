@@ -1,4 +1,4 @@
-"""A count of roots inside a circle, to prove that a list of roots is complete, and where the missing ones must be.
+"""A count of roots inside a circle, to prove a list of roots complete, and where missing ones must be.
 
 M loops, q roots, K points on the upper half of the circle. Scaled time.
 """
@@ -12,7 +12,8 @@ from synth.loop.closed_loop import Loops
 from synth.loop.poles.roots import closed_roots
 from synth.loop.polynomials import horner
 
-# Largest turn of the divided function between neighbouring points that is trusted; half a turn would be ambiguous.
+# Largest turn of the divided function between neighbouring points that is trusted; half a turn would be
+# ambiguous.
 LARGEST_STEP = 1.5
 MOST_POINTS = 1 << 15
 # At most this many missing roots are located at a time; the rest show up in the next round.
@@ -20,15 +21,16 @@ MOST_MISSING = 8
 
 
 def missing_roots(loops: Loops, roots: ComplexArray, radius: FloatArray) -> ComplexArray:
-    """Seeds for the roots of D + N e^(-s θ) inside abs(s) = radius that `roots` lacks; NaN where none is missing.
+    """Seeds for the roots of D + N e^(-s θ) inside abs(s) = radius that `roots` lacks; NaN where none is
+    missing.
 
     roots : (M, q), NaN padded, conjugate; radius : (M,). Returns (M, 8).
 
-    Argument principle on h = Δ / Π (s - p), whose winding is the number that is missing. The circle is widened a
-    little where a known root lies close to it. The missing roots z follow from their power sums,
+    Argument principle on h = Δ / Π (s - p), whose winding is the number that is missing. The circle is
+    widened a little where a known root lies close to it. The missing roots z follow from their power sums,
     Σ z^k = -(k R^k / 2π) ∫ e^(jkφ) ln(h (s/R)^(-m)) dφ, by Newton's identities.
-    Source: L. M. Delves and J. N. Lyness, A numerical method for locating the zeros of an analytic function, Math.
-    Comp. 21 (1967) 543-560.
+    Source: L. M. Delves and J. N. Lyness, A numerical method for locating the zeros of an analytic function,
+    Math. Comp. 21 (1967) 543-560.
     """
     circle = _clear_radius(roots, radius)
     out = np.full((len(loops), MOST_MISSING), np.nan, dtype=complex)
@@ -66,11 +68,14 @@ def _clear_radius(roots: ComplexArray, radius: FloatArray) -> FloatArray:
     return out
 
 
-def _divided(loops: Loops, roots: ComplexArray, radius: FloatArray, points: int) -> tuple[ComplexArray, FloatArray]:
-    """h along the upper half circle, each value up to a positive factor of its row and point, and its logarithm.
+def _divided(
+    loops: Loops, roots: ComplexArray, radius: FloatArray, points: int
+) -> tuple[ComplexArray, FloatArray]:
+    """h along the upper half circle, each value up to a positive factor of its row and point, and its
+    logarithm.
 
-    Returns unit (M, points + 1), h / abs(h), and size (M, points + 1), ln abs(h), both with each root p divided out as
-    1 - p/s.
+    Returns unit (M, points + 1), h / abs(h), and size (M, points + 1), ln abs(h), both with each root p
+    divided out as 1 - p/s.
     """
     s = radius[:, None] * np.exp(1j * np.linspace(0.0, np.pi, points + 1))
     delay = loops.dead_time[:, None]
@@ -88,7 +93,8 @@ def _divided(loops: Loops, roots: ComplexArray, radius: FloatArray, points: int)
 
 
 def _turning(unit: ComplexArray, known: IntArray) -> tuple[FloatArray, BoolArray]:
-    """Argument of h along the half circle, starting at 0, (M, points + 1), and the rows whose steps are too long.
+    """Argument of h along the half circle, starting at 0, (M, points + 1), and the rows whose steps are too
+    long.
 
     known : (M,) roots divided out; each left a factor s to divide by, whose turning is one angle apiece.
     """

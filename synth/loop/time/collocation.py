@@ -1,7 +1,7 @@
 """A panel of time as 13 values: the Radau points, and the exact algebra of polynomials through them.
 
-Nodes: x = 0 and the 12 Radau points of (0, 1], the last of which is 1. A signal on a panel of length h is the polynomial
-of degree 12 through its values there. Matrices act from the right on rows of such values.
+Nodes: x = 0 and the 12 Radau points of (0, 1], the last of which is 1. A signal on a panel of length h is the
+polynomial of degree 12 through its values there. Matrices act from the right on rows of such values.
 """
 
 from __future__ import annotations
@@ -46,7 +46,8 @@ def _radau_points() -> LongArray:
 
 
 def _integration(x: LongArray) -> LongArray:
-    """(c, c): integrals over [0, point] of the polynomial through the values at the points, [0, 1] for [-1, 1]."""
+    """(c, c): integrals over [0, point] of the polynomial through the values at the points, [0, 1] for [-1,
+    1]."""
     p = _legendre(x, STAGES)
     # ∫ P_k = (P_(k+1) - P_(k-1)) / (2k + 1) from -1
     parts = [x + 1] + [(p[:, k + 1] - p[:, k - 1]) / _Long(2 * k + 1) for k in range(1, STAGES)]
@@ -65,7 +66,8 @@ def _inverse(matrix: LongArray) -> LongArray:
 def _eigen(matrix: LongArray) -> tuple[LongArray, LongArray]:
     """Eigenvalues and vectors, each pair improved by Newton's method with residuals in extended precision.
 
-    The vectors are far from orthogonal (condition 7e5), so what doubles leave uncertain would show in the responses.
+    The vectors are far from orthogonal (condition 7e5), so what doubles leave uncertain would show in the
+    responses.
     """
     values, vectors = np.linalg.eig(matrix.astype(np.float64))
     values, vectors = values.astype(np.clongdouble), vectors.astype(np.clongdouble)
@@ -93,19 +95,20 @@ GRID: FloatArray = np.concatenate([[0.0], POINTS])
 _eigenvalues, _vectors = _eigen(_integration(_points))
 _upper = np.flatnonzero(_eigenvalues.imag > 0.0)
 SPREAD: ComplexArray = _eigenvalues[_upper].astype(np.complex128)
-"""(6,) eigenvalues of the integration matrix, upper half: integration over a panel of length h is h·SPREAD."""
+"""(6,) eigenvalues of the integration matrix, upper half: integration over a panel of length h is
+h·SPREAD."""
 TO_NODES: ComplexArray = (2 * _vectors[:, _upper]).astype(np.complex128)
 """(12, 6): values at the points are the real part of TO_NODES times what is known of the upper half."""
 FROM_NODES: ComplexArray = _inverse(_vectors)[_upper].astype(np.complex128)
 """(6, 12)."""
 
-_cheb = chebyshev.chebvander(2.0 * GRID - 1.0, STAGES)
-TO_CHEBYSHEV: FloatArray = np.linalg.inv(_cheb).T
+TO_CHEBYSHEV: FloatArray = np.linalg.inv(chebyshev.chebvander(2.0 * GRID - 1.0, STAGES).astype(float)).T
 """(13, 13): values @ TO_CHEBYSHEV are the coefficients."""
 
 
-def _matrix(of_chebyshev: FloatArray) -> FloatArray:
-    return TO_CHEBYSHEV @ of_chebyshev
+def _matrix(of_chebyshev: NDArray[Any]) -> FloatArray:
+    out: FloatArray = TO_CHEBYSHEV @ of_chebyshev
+    return out
 
 
 def value_matrix(x: FloatArray) -> FloatArray:
@@ -132,7 +135,8 @@ WHOLE: FloatArray = TO_PRIMITIVE @ np.ones(NODES + 1)
 
 
 def primitive_coefficients(values: FloatArray) -> FloatArray:
-    """Rows of values (E, 13) to (E, 14): coefficients, ascending powers of 2x - 1, of the integral from x = 0."""
+    """Rows of values (E, 13) to (E, 14): coefficients, ascending powers of 2x - 1, of the integral from x =
+    0."""
     out: FloatArray = values @ TO_PRIMITIVE
     return out
 

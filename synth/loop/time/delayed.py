@@ -1,6 +1,7 @@
 """Quantities of the step responses of loops with dead time, exact from the first delay to the end.
 
-M loops. Nothing here approximates e^(-s θ): see steps.py for the early response and true_modes.py for the late one.
+M loops. Nothing here approximates e^(-s θ): see steps.py for the early response and true_modes.py for the
+late one.
 """
 
 from __future__ import annotations
@@ -31,8 +32,8 @@ NO_AREA = 1e-8
 def delayed_time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...]) -> TimeStage:
     """The time-stage measures among `measures`, for M stable loops with dead time.
 
-    poles : (M, q) true roots, NaN padded, the rightmost among them. Values are scaled; NaN where absent; y is counted
-    from the step of r, so every time includes the dead time.
+    poles : (M, q) true roots, NaN padded, the rightmost among them. Values are scaled; NaN where absent; y is
+    counted from the step of r, so every time includes the dead time.
     """
     asked = tuple(m for m in measures if m.row.stage == "time")
     if not asked or len(loops) == 0:
@@ -121,7 +122,9 @@ class _Reading:
             raise ValueError(f"no reading of {name!r}")
         return np.where(self.has_end, out, np.nan)
 
-    def _tail_extremes(self, amplitude: ComplexArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    def _tail_extremes(
+        self, amplitude: ComplexArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
         return last_mode.extremes(amplitude, self.found.pole)
 
     def _peak(self, signal: int | None, offset: FloatArray) -> FloatArray:

@@ -10,7 +10,9 @@ import numpy as np
 from synth.loop.arrays import ComplexArray, FloatArray
 
 
-def extremes(amplitude: ComplexArray, pole: ComplexArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+def extremes(
+    amplitude: ComplexArray, pole: ComplexArray
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
     """Largest value and its time, least value and its time; 0 at time inf counts as the limit. (M,) each."""
     at = _first_extremum(amplitude, pole)
     half = _half_period(pole)
@@ -64,7 +66,9 @@ def area(amplitude: ComplexArray, pole: ComplexArray) -> FloatArray:
 
 def _value(amplitude: ComplexArray, pole: ComplexArray, time: FloatArray) -> FloatArray:
     with np.errstate(all="ignore"):
-        out: FloatArray = np.where(np.isfinite(time), (amplitude * np.exp(pole * np.nan_to_num(time))).real, 0.0)
+        out: FloatArray = np.where(
+            np.isfinite(time), (amplitude * np.exp(pole * np.nan_to_num(time))).real, 0.0
+        )
     return out
 
 

@@ -1,4 +1,4 @@
-"""Signals cut into panels, and what is read off them: extremes, passages and areas, each refined on its polynomial.
+"""Signals cut into panels, and what is read off them: extremes, passages and areas, each refined.
 
 M loops, B panels in order of loop and time, S signals.
 """
@@ -19,7 +19,8 @@ from synth.loop.time.collocation import (
     value_matrix,
 )
 
-# Points at which a panel is looked at; between two neighbours a resolved signal turns by about a quarter radian.
+# Points at which a panel is looked at; between two neighbours a resolved signal turns by about a quarter
+# radian.
 LOOKS = 17
 _X = np.linspace(0.0, 1.0, LOOKS)
 _VALUES, _SLOPES = value_matrix(_X), slope_matrix(_X)
@@ -31,7 +32,8 @@ LEVEL = 1e-14
 
 @dataclass(frozen=True, slots=True)
 class Panels:
-    """owner (B,) loop of each panel; start, length (B,); values (B, S, 13); first (M,) number of its first panel."""
+    """owner (B,) loop of each panel; start, length (B,); values (B, S, 13); first (M,) number of its first
+    panel."""
 
     owner: IntArray
     start: FloatArray
@@ -40,7 +42,8 @@ class Panels:
     first: IntArray
 
     def only(self, chosen: BoolArray) -> IntArray:
-        """Numbers of the chosen panels (B,), and of the first and last of each loop, which never go missing."""
+        """Numbers of the chosen panels (B,), and of the first and last of each loop, which never go
+        missing."""
         keep = chosen.copy()
         keep[self.first] = True
         keep[np.append(self.first[1:], len(keep)) - 1] = True
@@ -61,8 +64,8 @@ class Panels:
 
 @dataclass(frozen=True, slots=True)
 class Outline:
-    """What can be said of one signal without looking between nodes. All (B,): low and high enclose it on its panel,
-    least and most are its extremes over the nodes."""
+    """What can be said of one signal without looking between nodes. All (B,): low and high enclose it on its
+    panel, least and most are its extremes over the nodes."""
 
     panels: Panels
     low: FloatArray
@@ -110,7 +113,8 @@ class Outline:
 
 @dataclass(frozen=True, slots=True)
 class Trace:
-    """One signal of all panels, with its knots: the looks and, between them, every extremum. Monotone from knot to knot.
+    """One signal of all panels, with its knots: the looks and, between them, every extremum. Monotone from
+    knot to knot.
 
     signal (B, 13); place, height (B, 2·17 - 1): where a look is followed by no extremum the odd entry is NaN.
     """
@@ -124,7 +128,8 @@ class Trace:
 
     @classmethod
     def of(cls, panels: Panels, signal: FloatArray, offset: FloatArray, unit: FloatArray) -> Trace:
-        """signal : (B, 13); offset (M,) what is added to panel times; unit (M,) size that rounding is relative to."""
+        """signal : (B, 13); offset (M,) what is added to panel times; unit (M,) size that rounding is
+        relative to."""
         looks, slopes = signal @ _VALUES, signal @ _SLOPES
         place = np.full((len(signal), 2 * LOOKS - 1), np.nan)
         height = np.full_like(place, np.nan)
@@ -256,7 +261,8 @@ class Trace:
         return self.time(panel, self._root(panel, low, high, level))
 
     def _root(self, panel: IntArray, low: FloatArray, high: FloatArray, level: FloatArray) -> FloatArray:
-        """Where the signal, monotone from low to high, takes the level: Newton, halving where it leaves the bracket."""
+        """Where the signal, monotone from low to high, takes the level: Newton, halving where it leaves the
+        bracket."""
         polynomial = primitive_coefficients(self.signal[panel])
         rising = jet(polynomial, high)[1] > jet(polynomial, low)[1]
         low, high = low.copy(), high.copy()

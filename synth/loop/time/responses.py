@@ -1,4 +1,4 @@
-"""Step responses of loops with dead time, from the first delay to the end: marched, then carried by the true modes.
+"""Step responses of loops with dead time to the end: marched, then carried on by the true modes.
 
 M loops, S signals. Own time τ: u at τ, y and d one delay later.
 """
@@ -51,6 +51,10 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Resp
     delay = loops.dead_time
     modes = true_modes(loops, numerators, poles)
     unit = units(modes, delay)
+    # close poles may leave the sum of their modes worthless: y at least is judged by what it is known to come
+    # to
+    final = np.abs(modes.final[:, 0])
+    unit[:, 0] = np.where(final > 0.0, final, unit[:, 0])
     alone = alone_from(modes, unit, DEAD)
     with np.errstate(invalid="ignore", over="ignore"):
         needed = np.ceil(np.nan_to_num(alone / delay, nan=np.inf, posinf=1e300)) + 1.0
@@ -69,7 +73,10 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Resp
     while todo.size:
         again = []
         for at in _classes(todo, fine, coarse, delays):
-            cut, smooth = ladder(int(fine[at].max()), int(coarse[at].max())), ladder(*(int(coarse[at].max()),) * 2)
+            cut, smooth = (
+                ladder(int(fine[at].max()), int(coarse[at].max())),
+                ladder(*(int(coarse[at].max()),) * 2),
+            )
             part = march(loops.rows(at), numerators[at], delays[at], cut, smooth, int(kinks[at].max()))
             rough = _unresolved(part) & (coarser[at] < 4)
             meets, quiet = _checked(part, delays[at], delay[at], modes.rows(at), unit[at])
@@ -101,8 +108,9 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Resp
 
 
 def _chain_delays(loops: Loops) -> FloatArray:
-    """Delays after which the far roots, those that are not among the poles, have died: each shrinks by abs(N/D)."""
-    far = 9.0j / loops.dead_time[:, None]
+    """Delays after which the far roots, those that are not among the poles, have died: each shrinks by
+    abs(N/D)."""
+    far = (9.0j / loops.dead_time[:, None]).astype(complex)
     with np.errstate(all="ignore"):
         ratio = np.abs(horner(loops.numerator, far) / horner(loops.denominator, far))[:, 0]
         ratio = np.fmax(ratio, np.abs(loops.numerator[:, 0] / loops.denominator[:, 0]))
@@ -140,10 +148,11 @@ def _unresolved(part: list[March]) -> BoolArray:
 def _checked(
     part: list[March], delays: IntArray, delay: FloatArray, modes: TrueModes, unit: FloatArray
 ) -> tuple[BoolArray, BoolArray]:
-    """Whether the modes meet the last delay marched, and whether the response has come to rest on it. (m,) each.
+    """Whether the modes meet the last delay marched, and whether the response has come to rest on it. (m,)
+    each.
 
-    A stable loop that is at rest over one whole delay stays so; and what the modes leave out is itself a response of
-    the loop, as small later as it is over that delay.
+    A stable loop that is at rest over one whole delay stays so; and what the modes leave out is itself a
+    response of the loop, as small later as it is over that delay.
     """
     meets, quiet = np.zeros(len(delays), dtype=bool), np.zeros(len(delays), dtype=bool)
     for leg in part:

@@ -1,8 +1,9 @@
-"""The method of steps: the loop's own output of one delay ago drives the open loop over the next delay, exactly.
+"""The method of steps: the loop's own output of one delay ago drives the open loop over the next.
 
-M loops, n order, P panels to a delay, S signals. Scaled time. Each delay is cut into panels so short that the open
-loop's response on one is a polynomial of degree 12 to about 1e-10; the open loop is carried over a panel by the Radau
-IIA method of 12 stages (order 23 at the panel's end, and as stable as the open loop is for poles too fast to resolve).
+M loops, n order, P panels to a delay, S signals. Scaled time. Each delay is cut into panels so short that the
+open loop's response on one is a polynomial of degree 12 to about 1e-10; the open loop is carried over a panel
+by the Radau IIA method of 12 stages (order 23 at the panel's end, and as stable as the open loop is for poles
+too fast to resolve).
 """
 
 from __future__ import annotations
@@ -25,10 +26,13 @@ from synth.loop.time.collocation import (
     value_matrix,
 )
 
+_REAL_TO_NODES = np.concatenate([TO_NODES.real, -TO_NODES.imag], axis=1)
+
 
 @dataclass(frozen=True, slots=True)
 class March:
-    """Signals over successive delays of each loop, in own time τ: u at τ, and y and d one delay later, at τ + θ.
+    """Signals over successive delays of each loop, in own time τ: u at τ, and y and d one delay later, at τ +
+    θ.
 
     begin   number of the first delay held
     sizes   (P,) lengths of the panels of a delay, parts of θ
@@ -41,7 +45,8 @@ class March:
 
 
 def ladder(fine: int, coarse: int) -> FloatArray:
-    """Panel lengths of a delay: from 2^-fine behind the kink at its start, doubling, up to 2^-coarse at most."""
+    """Panel lengths of a delay: from 2^-fine behind the kink at its start, doubling, up to 2^-coarse at
+    most."""
     sizes = [2.0**-fine]
     done = sizes[0]
     while done < 1.0:
@@ -58,10 +63,11 @@ def march(
 
     numerators : (M, S, n + 1), what is read off: N first (it closes the loop), then control or load or both.
     delays : (M,) how many delays each loop is followed for, descending.
-    fine, smooth : (P,) panel lengths, parts of a delay, over the first `kinks` delays and after them. The kink at each
-    multiple of θ is the smoother the later, and in the end excites the fast poles no more.
+    fine, smooth : (P,) panel lengths, parts of a delay, over the first `kinks` delays and after them. The
+    kink at each multiple of θ is the smoother the later, and in the end excites the fast poles no more.
 
-    The error e of a unit reference step drives all: y = (N/D) e and d = (load/D) e, a delay later, as P S = P·S.
+    The error e of a unit reference step drives all: y = (N/D) e and d = (load/D) e, a delay later, as P S =
+    P·S.
     """
     most = int(delays.max(initial=0))
     kinks = min(kinks, most)
@@ -85,18 +91,23 @@ def _leg(
     drive: FloatArray,
     state: FloatArray,
 ) -> March:
-    """Delays begin .. end - 1 with one cutting. drive (M, P, 13) is e over the first of them; state moves on."""
+    """Delays begin .. end - 1 with one cutting. drive (M, P, 13) is e over the first of them; state moves
+    on."""
     most = int(np.searchsorted(-delays, -begin))
     kinds, which = np.unique(sizes, return_inverse=True)
     some = loops.rows(np.arange(most))
-    maps = [_propagator(some, numerators[:most], kind * some.dead_time) for kind in kinds]
+    stacked = some.rows(np.tile(np.arange(most), len(kinds)))
+    lengths = np.repeat(kinds, most) * stacked.dead_time
+    maps = np.split(_propagator(stacked, np.tile(numerators[:most], (len(kinds), 1, 1)), lengths), len(kinds))
     signals, n = numerators.shape[1], loops.order
     values = np.full((len(loops), end - begin, len(sizes), signals, NODES), np.nan)
     for k in range(begin, end):
         active = int(np.searchsorted(-delays, -k))  # loops followed for more than k delays
         given = np.empty((active, NODES + n, 1))
         for i in range(len(sizes)):
-            given[:, :NODES, 0] = drive[:active, i] if k == begin else 1.0 - values[:active, k - begin - 1, i, 0]
+            given[:, :NODES, 0] = (
+                drive[:active, i] if k == begin else 1.0 - values[:active, k - begin - 1, i, 0]
+            )
             given[:, NODES:, 0] = state[:active]
             found = (maps[which[i]][:active] @ given)[:, :, 0]
             values[:active, k - begin, i] = found[:, : signals * NODES].reshape(active, signals, NODES)
@@ -126,10 +137,11 @@ def _propagator(loops: Loops, numerators: FloatArray, length: FloatArray) -> Flo
 
     length : (M,). Returns (M, 13 S + n, 13 + n).
 
-    States are ξ and its first n - 1 derivatives, D ξ = e. The stages of the Radau method are a rational function of
-    the fixed integration matrix; in its eigenvectors the open loop is met at six complex points σ = length·SPREAD
-    alone: the stages of ξ^(n) are (e - 1 Σ α_i ξ^(i)(0)) / α_n with α_i = Σ_{k<=i} a_k σ^(i-k), and every output
-    follows by the like sums γ of its own numerator.
+    States are ξ and its first n - 1 derivatives, D ξ = e. The stages of the Radau method are a rational
+    function of the fixed integration matrix; in its eigenvectors the open loop is met at six complex points σ
+    = length·SPREAD
+    alone: the stages of ξ^(n) are (e - 1 Σ α_i ξ^(i)(0)) / α_n with α_i = Σ_{k<=i} a_k σ^(i-k), and every
+    output follows by the like sums γ of its own numerator.
     """
     rows, n, signals = len(loops), loops.order, numerators.shape[1]
     lead = loops.denominator[:, :1]
@@ -140,34 +152,34 @@ def _propagator(loops: Loops, numerators: FloatArray, length: FloatArray) -> Flo
     c[:, :, n] = 0.0
     sigma = length[:, None] * SPREAD
     alpha = [total[:, 0] for total in _sums(a[:, None, :], sigma)]
-    gamma = _sums(c, sigma)
+    gamma = _sums(c, sigma)[n]
     ones = FROM_NODES.sum(axis=1)
     highest = np.empty((rows, len(SPREAD), NODES + n), dtype=complex)
+    inverse = 1.0 / alpha[n]
     highest[:, :, 0] = 0.0
-    highest[:, :, 1:NODES] = FROM_NODES / alpha[n][:, :, None]
+    highest[:, :, 1:NODES] = FROM_NODES * inverse[:, :, None]
     for i in range(n):
-        highest[:, :, NODES + i] = -ones * alpha[i] / alpha[n]
+        highest[:, :, NODES + i] = -ones * alpha[i] * inverse
     out = np.zeros((rows, signals * NODES + n, NODES + n))
+    read = out[:, : signals * NODES].reshape(rows, signals, NODES, NODES + n)
+    read[:, :, 1:] = _to_nodes(highest[:, None] * gamma[:, :, :, None])
+    stage = np.arange(1, NODES)
+    read[:, :, stage, stage] += direct[:, :, None]
+    read[:, :, 0, 0] = direct
+    read[:, :, 0, NODES:] = c[:, :, :n]
+    if n == 0:
+        return out
+    # free polynomials of the states: Σ_{k<=i} c_k τ^(i-k)/(i-k)! read off, τ^(i-k)/(i-k)! in the states
+    # themselves
     taylor = _taylor(n, length)
-    for s in range(signals):
-        stages = highest * gamma[n][:, s, :, None]
-        at = s * NODES + 1
-        out[:, at : at + STAGES] = _to_nodes(stages)
-        out[:, at + np.arange(STAGES), 1 + np.arange(STAGES)] += direct[:, s, None]
-        # free polynomials of the states, Σ_{k<=i} c_k τ^(i-k)/(i-k)!
-        for i in range(n):
-            for k in range(i + 1):
-                out[:, at : at + STAGES, NODES + i] += c[:, s, k, None] * taylor[i - k]
-        out[:, s * NODES, 0] = direct[:, s]
-        out[:, s * NODES, NODES:] = c[:, s, :n]
-    last = TO_NODES[-1]
-    power = np.ones_like(sigma)
-    for k in range(n - 1, -1, -1):
-        power = power * sigma
-        row = signals * NODES + k
-        out[:, row] = np.einsum("mj,mjc->mc", (last * power), highest).real
-        for i in range(k, n):
-            out[:, row, NODES + i] += taylor[i - k][:, -1]
+    shifted = np.zeros((rows, signals, n, n))
+    for j in range(n):
+        shifted[:, :, j, j:] = c[:, :, : n - j]
+    read[:, :, 1:, NODES:] += taylor[:, None] @ shifted
+    powers = sigma[:, None, :] ** np.arange(n, 0, -1)[:, None]
+    out[:, signals * NODES :] = ((TO_NODES[-1] * powers) @ highest).real
+    for k in range(n):
+        out[:, signals * NODES + k, NODES + k :] += taylor[:, -1, : n - k]
     return out
 
 
@@ -182,18 +194,17 @@ def _sums(coefficients: FloatArray, sigma: ComplexArray) -> list[ComplexArray]:
 
 
 def _to_nodes(stages: ComplexArray) -> FloatArray:
-    """(M, 6, w) in the eigenvectors to (M, 12, w) at the points."""
-    both = np.concatenate([stages.real, stages.imag], axis=1)
-    matrix = np.concatenate([TO_NODES.real, -TO_NODES.imag], axis=1)
-    out: FloatArray = matrix @ both
+    """(M, S, 6, w) in the eigenvectors to (M, S, 12, w) at the points."""
+    both = np.concatenate([stages.real, stages.imag], axis=2)
+    out: FloatArray = _REAL_TO_NODES @ both
     return out
 
 
-def _taylor(n: int, length: FloatArray) -> list[FloatArray]:
-    """τ^i / i! at the points, i = 0 .. n - 1, each (M, 12)."""
-    out = [np.ones((len(length), STAGES))]
+def _taylor(n: int, length: FloatArray) -> FloatArray:
+    """τ^i / i! at the points, i = 0 .. n - 1: (M, 12, n)."""
+    out = np.ones((len(length), STAGES, n))
     for i in range(1, n):
-        out.append(out[-1] * (length[:, None] * POINTS) / i)
+        out[:, :, i] = out[:, :, i - 1] * (length[:, None] * POINTS) / i
     return out
 
 
@@ -202,14 +213,16 @@ def resolution(loops: Loops, open_poles: ComplexArray, slow_poles: ComplexArray)
 
     open_poles : (M, r) roots of D; slow_poles : (M, q) closed-loop poles that stay; NaN padded.
 
-    The panel behind a kink must resolve the fastest open-loop pole. One that is well damped has died out where the
-    panels grow; one that is not must be resolved to the end of the delay.
+    The panel behind a kink must resolve the fastest open-loop pole. One that is well damped has died out
+    where the panels grow; one that is not must be resolved to the end of the delay.
     """
     delay = loops.dead_time[:, None]
     with np.errstate(invalid="ignore", divide="ignore"):
         turns = np.abs(open_poles) * delay
         needed = np.fmax.reduce(np.where(turns > 0.0, turns, 0.0) / 3.5, axis=1, initial=0.0)
-        lasting: BoolArray = (-open_poles.real < 0.75 * np.abs(open_poles)) & (open_poles.real * delay > -60.0)
+        lasting: BoolArray = (-open_poles.real < 0.75 * np.abs(open_poles)) & (
+            open_poles.real * delay > -60.0
+        )
         swings = np.fmax.reduce(np.where(lasting, turns, 0.0) / 4.0, axis=1, initial=0.0)
         staying = slow_poles.real * delay > -3.0
         moves = np.fmax.reduce(np.where(staying, np.abs(slow_poles) * delay, 0.0) / 5.0, axis=1, initial=0.0)
@@ -220,7 +233,8 @@ def resolution(loops: Loops, open_poles: ComplexArray, slow_poles: ComplexArray)
 
 
 def lasting_kinks(loops: Loops, open_poles: ComplexArray) -> FloatArray:
-    """Delays after which kinks excite the fastest open-loop pole no more: each passes it through N/D again. (M,)."""
+    """Delays after which kinks excite the fastest open-loop pole no more: each passes it through N/D again.
+    (M,)."""
     with np.errstate(all="ignore"):
         fastest = np.fmax.reduce(np.abs(open_poles), axis=1, initial=0.0)
         s = 1.0j * fastest[:, None]

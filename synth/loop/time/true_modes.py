@@ -47,8 +47,8 @@ class TrueModes:
 def true_modes(loops: Loops, numerators: FloatArray, poles: ComplexArray) -> TrueModes:
     """Residues at simple roots: numerator(p) / (p Δ'(p)).
 
-    numerators : (M, S, n + 1); poles : (M, q) NaN padded, pairs complete. A double root has no such residue: the
-    caller compares the sum with the marched response and sees that it does not fit.
+    numerators : (M, S, n + 1); poles : (M, q) NaN padded, pairs complete. A double root has no such residue:
+    the caller compares the sum with the marched response and sees that it does not fit.
     """
     if poles.shape[1] == 0:  # a static loop of nothing: one mode without a residue stands in
         poles = np.full((len(poles), 1), np.nan, dtype=complex)
@@ -81,7 +81,8 @@ def units(modes: TrueModes, delay: FloatArray) -> FloatArray:
 
 
 def alone_from(modes: TrueModes, unit: FloatArray, fine: float) -> FloatArray:
-    """Own time from which the rightmost mode alone is left in every signal, or not even it, to `fine` units. (M,)."""
+    """Own time from which the rightmost mode alone is left in every signal, or not even it, to `fine` units.
+    (M,)."""
     with np.errstate(all="ignore"):
         size = np.abs(modes.residue) * modes.pole.shape[1] / (fine * unit[:, :, None])
         fade = np.where(size > 1.0, np.log(size), 0.0) / -modes.pole.real[:, None, :]
@@ -95,8 +96,8 @@ def late_panels(
 ) -> tuple[IntArray, FloatArray, FloatArray, FloatArray]:
     """Panels of the modes' sum from `start` to `end` (M,), at most `most` to a loop.
 
-    Returns owner (B,), start (B,), length (B,) and values (B, S, 13), in order of loop and time. Lengths are powers of
-    two of the shortest of the loop, so a loop needs few tables of exponentials.
+    Returns owner (B,), start (B,), length (B,) and values (B, S, 13), in order of loop and time. Lengths are
+    powers of two of the shortest of the loop, so a loop needs few tables of exponentials.
     """
     rate = np.abs(modes.pole)
     first = 2.0 ** np.floor(np.log2(2.0 / rate.max(axis=1)))

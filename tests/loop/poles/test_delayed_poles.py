@@ -1,4 +1,5 @@
-"""True roots with dead time: Lambert's function, residuals in high precision, completeness, the order of a row."""
+"""True roots with dead time: Lambert's function, residuals in high precision, completeness, the order of a
+row."""
 
 import mpmath
 import numpy as np
@@ -25,7 +26,8 @@ def horner(coefficients, s):
 
 
 def random_loops(rng, m, order, degree):
-    """Plants with dead time of mixed kind: integrators, lightly damped, unstable; delays over five decades."""
+    """Plants with dead time of mixed kind: integrators, lightly damped, unstable; delays over five
+    decades."""
     den = np.ones((m, 1))
     from synth.loop.closed_loop import product
 
@@ -46,7 +48,9 @@ def test_first_order_roots_are_lamberts(pole, gain):
     loops = closed([[gain]], [[1.0, pole]], delay)
     found = delayed_poles(loops, np.full(1, 60.0) * loops.time_scale)[0] / loops.time_scale[0]
     found = found[np.isfinite(found)]
-    exact = np.array([lambertw(-gain * delay * np.exp(pole * delay), j) for j in range(-9, 10)]) / delay - pole
+    exact = (
+        np.array([lambertw(-gain * delay * np.exp(pole * delay), j) for j in range(-9, 10)]) / delay - pole
+    )
     inside = exact[np.abs(exact) <= 60.0]
     assert len(found) == len(inside) >= 14
     np.testing.assert_allclose(

@@ -6,7 +6,13 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from synth.loop.closed_loop import Rational, close
-from synth.loop.poles.encirclement import chain_abscissa, delayed_stable, moved, roots_right_of, squared_on_axis
+from synth.loop.poles.encirclement import (
+    chain_abscissa,
+    delayed_stable,
+    moved,
+    roots_right_of,
+    squared_on_axis,
+)
 
 
 def closed(num, den, delay):
@@ -17,7 +23,8 @@ def closed(num, den, delay):
 
 
 def contour_count(loops, row, line):
-    """Right-half-plane roots by unwrapping the argument along a dense line; retarded or mildly neutral loops."""
+    """Right-half-plane roots by unwrapping the argument along a dense line; retarded or mildly neutral
+    loops."""
     d, n, delay = loops.denominator[row], loops.numerator[row], loops.dead_time[row]
     w = np.concatenate([np.linspace(0.0, 40.0, 20_001), np.geomspace(40.0, 4e4, 20_001)[1:]])
     s = line + 1j * w
@@ -28,7 +35,10 @@ def contour_count(loops, row, line):
 @pytest.mark.parametrize("delay", [0.01, 1.0, 37.0])
 def test_integrator_is_stable_up_to_a_quarter_turn(delay):
     # K/s e^(-θs): stable for 0 < K θ < π/2, then a further pair each 2π
-    gains = np.array([-1e-3, 1e-6, 0.3, 1.0, np.pi / 2 - 1e-9, np.pi / 2 + 1e-9, 2.0, 5 * np.pi / 2 + 0.01]) / delay
+    gains = (
+        np.array([-1e-3, 1e-6, 0.3, 1.0, np.pi / 2 - 1e-9, np.pi / 2 + 1e-9, 2.0, 5 * np.pi / 2 + 0.01])
+        / delay
+    )
     loops = closed(gains[:, None], [[1.0, 0.0]], delay)
     assert delayed_stable(loops).tolist() == [False, True, True, True, True, False, False, False]
     count, _ = roots_right_of(loops, np.zeros(len(loops)))
@@ -36,7 +46,7 @@ def test_integrator_is_stable_up_to_a_quarter_turn(delay):
 
 
 def test_a_root_on_the_axis_is_not_stable():
-    count, touching = roots_right_of(closed([[np.pi / 2]], [[1.0, 0.0]], 1.0), np.zeros(1))
+    _, touching = roots_right_of(closed([[np.pi / 2]], [[1.0, 0.0]], 1.0), np.zeros(1))
     assert touching[0]
     assert not delayed_stable(closed([[np.pi / 2]], [[1.0, 0.0]], 1.0))[0]
     # D(0) + N(0) = 0: a root at the origin, whatever the delay
@@ -80,8 +90,12 @@ def test_pockets_of_stability_as_the_delay_grows():
 def test_count_agrees_with_a_dense_contour(line):
     rng = np.random.default_rng(7)
     m = 25
-    den = np.c_[np.ones(m), rng.uniform(-0.5, 2, m), rng.uniform(0, 2, m), rng.uniform(-0.3, 1, m), np.zeros(m)]
-    num = np.c_[rng.uniform(-0.8, 1, m), rng.uniform(-1, 1, m), rng.uniform(-1, 2, m), rng.uniform(-0.2, 0.5, m)]
+    den = np.c_[
+        np.ones(m), rng.uniform(-0.5, 2, m), rng.uniform(0, 2, m), rng.uniform(-0.3, 1, m), np.zeros(m)
+    ]
+    num = np.c_[
+        rng.uniform(-0.8, 1, m), rng.uniform(-1, 1, m), rng.uniform(-1, 2, m), rng.uniform(-0.2, 0.5, m)
+    ]
     loops = closed(num, den, rng.uniform(0.1, 3.0, m))
     count, _ = roots_right_of(loops, np.full(m, line))
     expected = np.array([contour_count(loops, i, line) for i in range(m)])

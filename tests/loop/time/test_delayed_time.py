@@ -103,7 +103,10 @@ class Reference:
         if high <= low:
             return float(v[i]), float(t[i])
         found = minimize_scalar(
-            lambda s: -factor * self.signal(which, s), bounds=(low, high), method="bounded", options={"xatol": 1e-11}
+            lambda s: -factor * self.signal(which, s),
+            bounds=(low, high),
+            method="bounded",
+            options={"xatol": 1e-11},
         )
         return (-float(found.fun), float(found.x)) if -found.fun > v[i] else (float(v[i]), float(t[i]))
 
@@ -112,7 +115,11 @@ class Reference:
             return float(high)
         high = min(high, np.nextafter((int(low / self.theta + 1e-9) + 1) * self.theta, 0.0))
         a, b = self.signal(which, low) - level, self.signal(which, high) - level
-        return float(high) if a * b > 0.0 else float(brentq(lambda s: self.signal(which, s) - level, low, high, xtol=1e-13))
+        return (
+            float(high)
+            if a * b > 0.0
+            else float(brentq(lambda s: self.signal(which, s) - level, low, high, xtol=1e-13))
+        )
 
 
 TIME = tuple(m for m in EVERY_QUANTITY if m.row.stage == "time")
@@ -135,7 +142,8 @@ def stage(loops, measures=TIME):
 
 
 def integrating_response(gain, delay, t):
-    """y of K/s e^(-θs) in unity feedback: the finite alternating series Σ (-1)^m (K (t - (m+1)θ))^(m+1)/(m+1)!."""
+    """y of K/s e^(-θs) in unity feedback: the finite alternating series Σ (-1)^m (K (t -
+    (m+1)θ))^(m+1)/(m+1)!."""
     total = np.zeros_like(t)
     for m in range(int(t.max() / delay) + 1):
         late = np.maximum(t - (m + 1) * delay, 0.0)
@@ -156,7 +164,8 @@ def test_curve_is_the_alternating_series(delay):
 
 
 def test_integrating_plant_hand_values():
-    # K θ = 1, second delay: y = τ - (τ-1)²/2 with τ = t - θ in delays: top 3/2 at τ = 2, no later peak is higher
+    # K θ = 1, second delay: y = τ - (τ-1)²/2 with τ = t - θ in delays: top 3/2 at τ = 2, no later peak is
+    # higher
     values, _ = stage(closed([[0.5]], [[1.0, 0.0]], 2.0))
     assert values["overshoot"][0] == pytest.approx(50.0, rel=1e-7)
     assert values["peak_time"][0] == pytest.approx(6.0, rel=1e-7)
@@ -236,7 +245,9 @@ def test_every_quantity_against_an_independent_march(kind):
         for name, value in expected.items():
             floor = 1.0 if name in ("overshoot", "undershoot") else 0.0
             error = abs(ours[name][row] - value)
-            assert error <= 1e-6 * max(abs(value), floor) or (np.isnan(value) and np.isnan(ours[name][row])), name
+            assert error <= 1e-6 * max(abs(value), floor) or (
+                np.isnan(value) and np.isnan(ours[name][row])
+            ), name
         if loops.denominator[row, -1] == 0.0:
             tracking = reference.area(0, 1.0) + loops.dead_time[row]
             assert ours["tracking_area"][row] == pytest.approx(tracking, rel=1e-5)
@@ -246,7 +257,8 @@ def test_every_quantity_against_an_independent_march(kind):
 
 
 def test_marching_on_and_the_modes_agree():
-    # with a delay small against the dynamics the response is handed to the modes early; a march to the end agrees
+    # with a delay small against the dynamics the response is handed to the modes early; a march to the end
+    # agrees
     loops = closed([[1.0]], [[30.0, 1.0]], 0.25, [[4.0, 0.3]], [[1.0, 0.0]])
     t = np.linspace(0.0, 0.25 * 190.0, 777) / loops.time_scale[0]
     marched = delayed_step_curves(loops, t)
@@ -257,7 +269,8 @@ def test_marching_on_and_the_modes_agree():
 
 @pytest.mark.parametrize("ratio", [1e-4, 1e-2])
 def test_small_delay_tends_to_the_loop_without(ratio):
-    # second-order closed loop, ζ = 0.5: 16.303 % overshoot without delay; a small delay moves it in proportion
+    # second-order closed loop, ζ = 0.5: 16.303 % overshoot without delay; a small delay moves it in
+    # proportion
     loops = closed([[1.0]], [[1.0, 1.0, 0.0]], ratio)
     values, _ = stage(loops)
     without = 100.0 * np.exp(-np.pi * 0.5 / np.sqrt(0.75))
@@ -267,7 +280,8 @@ def test_small_delay_tends_to_the_loop_without(ratio):
 
 
 def test_lightly_damped_loop_settles_at_the_last_exit():
-    # integral control with the gain just below the stability limit: hundreds of swings, settled by the last mode
+    # integral control with the gain just below the stability limit: hundreds of swings, settled by the last
+    # mode
     loops = closed([[1.56]], [[1.0, 0.0]], 1.0)
     values, flags = stage(loops)
     pole = delayed_poles(loops, np.zeros(1))[0, 0] / loops.time_scale[0]
