@@ -32,6 +32,12 @@ WINDOW = 24
 MOST = 8192
 """Blocks that such a window may grow to."""
 
+AREA_ERROR = 1e-5
+"""Relative error bound above which more blocks are spent on an area, and above which it is flagged."""
+
+AREA_MOST, AT_ONCE = 1024, 64
+"""Those blocks, and the loops that are given them at once."""
+
 SEGMENTS = 32
 """Stretches of LONG blocks that a supremum or a first passage is followed over before it is given up as
 unproven.
@@ -57,6 +63,8 @@ def answer(
         rows = np.flatnonzero(found.supremum_ends[w] > found.seen)
         if rows.size:
             _follow_supremum(modes, unit, found, w, q, rows, segments)
+    for k, r in enumerate(integrals):
+        _go_on_with_area(modes, unit, found, k, r)
     for v, p in enumerate(passages):
         rows = np.flatnonzero(found.passage_ends[v] > found.seen)
         if rows.size == 0:
@@ -100,6 +108,15 @@ def _passes(plan: Plan) -> list[tuple[int, int]]:
         out.append((start, stop))
         start = stop
     return out
+
+
+def _go_on_with_area(modes: Signals, unit: FloatArray, found: Answers, k: int, r: Area) -> None:
+    """More blocks for the loops whose tail is not that of one mode."""
+    rows = np.flatnonzero(found.doubts[k] > AREA_ERROR)
+    for some in np.split(rows, range(AT_ONCE, len(rows), AT_ONCE)):
+        if some.size:
+            part = _direct(modes.rows(some), unit[some], [], [], [r], AREA_MOST)
+            found.areas[k][some], found.doubts[k][some] = part.areas[0], part.doubts[0]
 
 
 def _follow_supremum(

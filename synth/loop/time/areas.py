@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import FloatArray, IntArray
-from synth.loop.time.cells import Cells, joined
+from synth.loop.time.cells import FEW, MANY, Cells, foremost, joined
 from synth.loop.time.signals import Signals
 
 ROUNDS = 5
@@ -28,6 +28,8 @@ def zeros(modes: Signals, cells: Cells, negligible: FloatArray) -> Cells:
         sliver = np.minimum(-low, high) * cells.h
         pending = ~clean & ~proven & ((sliver > negligible[cells.key]) | changes)
         cells = cells.rows(pending)
+        if len(cells) > MANY:
+            cells = foremost(cells, -cells.h, FEW)
         if k < ROUNDS and len(cells):
             cells = cells.split(modes)
     return joined(out) if out else cells

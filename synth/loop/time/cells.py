@@ -14,6 +14,11 @@ import numpy as np
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.time.signals import CELLS, Signals
 
+MANY = 50_000
+"""Cells in doubt at one time beyond which only the FEW most promising of each question are followed."""
+
+FEW = 32
+
 SLOPE_MISS = np.sqrt(3.0) / 216.0 * 384.0
 BEND_MISS = 16.0
 
@@ -118,6 +123,17 @@ class Cells:
         data[4], data[5] = slope[0, :-1], slope[0, 1:]
         data[6] = modes.cell_misses(self.loop, self.signal, self.t, h)
         return Cells(np.tile(self.place, CELLS), data.reshape(7, CELLS * q))
+
+
+def foremost(cells: Cells, rank: FloatArray, most: int) -> Cells:
+    """Of the cells of each question the `most` of least rank."""
+    order = np.lexsort((rank, cells.key))
+    key = cells.key[order]
+    number = np.arange(len(key))
+    begin = np.ones(len(key), dtype=bool)
+    begin[1:] = key[1:] != key[:-1]
+    start = np.maximum.accumulate(np.where(begin, number, 0))
+    return cells.rows(order[number - start < most])
 
 
 def joined(parts: list[Cells]) -> Cells:

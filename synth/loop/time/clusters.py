@@ -25,7 +25,7 @@ from synth.loop.time.signals import CELLS, HERMITE, Profile
 
 TERMS = 32
 """Powers of t and of delta that are kept: enough for a cluster a third as wide as it is far from anything
-else.
+else, and as its decay rate.
 """
 
 REACHES = (1e-5, 1e-3, 1e-2, 0.04, 0.1, 0.2, 0.35)
@@ -207,7 +207,7 @@ def cluster_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -
         np.minimum(size[:, :, None], size[:, None, :]),
         np.maximum(size[:, :, None], size[:, None, :]),
     )
-    near = np.zeros(gap.shape, dtype=bool)
+    near = np.repeat(np.eye(poles.shape[1], dtype=bool)[None], len(loops), axis=0)
     least = np.full(len(loops), np.inf)
     for reach in REACHES:
         grouped = gap <= reach * smaller
@@ -241,8 +241,9 @@ def _geometry(poles: ComplexArray, near: BoolArray) -> tuple[ComplexArray, Float
     centre = np.where(folded, centre.real, centre)
     away = np.abs(centre[:, :, None] - poles[:, None, :])
     width = np.where(near, away, 0.0).max(axis=2)
-    clear = np.minimum(np.where(near, np.inf, away).min(axis=2), np.abs(centre))
-    return centre, (width / clear).max(axis=1)
+    # powers of delta meet those of 1/(distance of other poles) and, until the cluster decays, of 1/sigma
+    clear = np.minimum(np.where(near, np.inf, away).min(axis=2), np.abs(centre.real))
+    return centre, (width / np.maximum(clear, 1e-300)).max(axis=1)
 
 
 def _clustered(loops: Loops, poles: ComplexArray, signals: tuple[str, ...], near: BoolArray) -> ClusterModes:

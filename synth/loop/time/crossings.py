@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray
-from synth.loop.time.cells import Cells, joined, no_cells
+from synth.loop.time.cells import FEW, MANY, Cells, foremost, joined, no_cells
 from synth.loop.time.events import crossing
 from synth.loop.time.signals import Signals
 
@@ -24,11 +24,13 @@ class Edges:
     """V questions.
 
     low, high  (V,) the edges; last (V,) whether the last exit is asked for, not the first one
+    dropped    (V,) set where cells in doubt had to be given up
     """
 
     low: FloatArray
     high: FloatArray
     last: BoolArray
+    dropped: BoolArray
 
 
 def resolve(modes: Signals, edges: Edges, cells: Cells) -> FloatArray:
@@ -59,7 +61,8 @@ def resolve(modes: Signals, edges: Edges, cells: Cells) -> FloatArray:
         if k == ROUNDS:
             clean = right_way  # the width is 1e-8 of a cell
         if clean.any():
-            sure = _foremost(joined([sure, cells.rows(clean)]), edges)
+            sure = joined([sure, cells.rows(clean)])
+            sure = foremost(sure, np.where(edges.last[sure.key], -sure.t, sure.t), 1)
         pending = ~clean & ~monotone & touches
         when = np.full(answers, np.nan)
         when[sure.key] = sure.t
@@ -67,6 +70,12 @@ def resolve(modes: Signals, edges: Edges, cells: Cells) -> FloatArray:
         with np.errstate(invalid="ignore"):
             beaten = np.where(last, cells.t < limit, cells.t > limit)
         cells = cells.rows(pending & ~beaten)
+        if len(cells) > MANY:
+            kept = foremost(cells, np.where(edges.last[cells.key], -cells.t, cells.t), FEW)
+            edges.dropped[
+                np.bincount(cells.key, minlength=answers) > np.bincount(kept.key, minlength=answers)
+            ] = True
+            cells = kept
         if k < ROUNDS and len(cells):
             cells = cells.split(modes)
     if len(sure):
@@ -78,13 +87,3 @@ def resolve(modes: Signals, edges: Edges, cells: Cells) -> FloatArray:
             modes, sure.loop, sure.signal, sure.t, sure.h, guess, level, sure.b > sure.a
         )
     return found
-
-
-def _foremost(cells: Cells, edges: Edges) -> Cells:
-    """Of the cells of each question the first (or last)."""
-    rank = np.where(edges.last[cells.key], -cells.t, cells.t)
-    order = np.lexsort((rank, cells.key))
-    key = cells.key[order]
-    keep = np.ones(len(key), dtype=bool)
-    keep[1:] = key[1:] != key[:-1]
-    return cells.rows(order[keep])

@@ -10,8 +10,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from synth.loop.arrays import FloatArray, IntArray
-from synth.loop.time.cells import Cells
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.time.cells import FEW, MANY, Cells, foremost
 from synth.loop.time.events import extremum
 from synth.loop.time.signals import Signals
 
@@ -25,6 +25,7 @@ class Peaks:
     best, place   (W,) largest value known and where it was found (NaN: at no time, a limit or a floor)
     tolerance     (W,) a gain below this does not count
     answer, sign, offset   (V,) of each question
+    dropped       (W,) set where cells in doubt had to be given up
     """
 
     best: FloatArray
@@ -33,6 +34,7 @@ class Peaks:
     answer: IntArray
     sign: FloatArray
     offset: FloatArray
+    dropped: BoolArray
 
     def seen(self, cells: Cells) -> Cells:
         """The cells in terms of their question, sign * (x + offset)."""
@@ -80,6 +82,13 @@ def resolve(modes: Signals, peaks: Peaks, cells: Cells) -> None:
             peaks.raise_to(few.key, peaks.sign[few.key] * (value + peaks.offset[few.key]), time)
         np.maximum.at(peaks.best, peaks.answer[cells.key], known)
         rest = useful & ~single & (upper > peaks.least(cells.key))
+        if np.count_nonzero(rest) > MANY:
+            kept = foremost(cells.rows(rest), -upper[rest], FEW)
+            lost = np.bincount(cells.key[rest], minlength=len(peaks.sign)) > np.bincount(
+                kept.key, minlength=len(peaks.sign)
+            )
+            peaks.dropped[peaks.answer[lost]] = True
+            cells, rest = kept, np.ones(len(kept), dtype=bool)
         if not rest.any():
             return
         cells = peaks.seen(cells.rows(rest).split(modes))

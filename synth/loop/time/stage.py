@@ -9,7 +9,7 @@ import numpy as np
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops
 from synth.loop.quantities import Measure
-from synth.loop.time.answers import answer
+from synth.loop.time.answers import AREA_ERROR, answer
 from synth.loop.time.clusters import cluster_modes
 from synth.loop.time.questions import Answers, Area, Passage, Supremum
 from synth.loop.time.residues import CROWDED, crowding, limits, step_modes
@@ -28,9 +28,6 @@ REACHES = {
     "disturbance_area": "d",
 }
 """Which signal each quantity is read from."""
-
-AREA_ERROR = 1e-5
-"""Relative error bound above which an area is flagged."""
 
 FADED = 1e-9
 """A late deviation of less is not looked at further; no band is so narrow."""
@@ -57,6 +54,12 @@ def time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...])
         return delayed
     if not asked or len(loops) == 0:
         return TimeStage({m: np.zeros(0) for m in asked}, {})
+    with np.errstate(all="ignore"):  # rows at the edge of the number range run on with what they have
+        return _plain_stage(loops, poles, asked)
+
+
+def _plain_stage(loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...]) -> TimeStage:
+    """Loops with simple poles by their modes, those with crowded ones by clusters."""
     needed = {REACHES[m.quantity] for m in asked}
     signals = tuple(s for s in ("y", "u", "d") if s in needed)
     close = crowding(poles) > CROWDED

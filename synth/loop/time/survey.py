@@ -48,6 +48,7 @@ class Survey:
             np.repeat([p.low for p in passages], self.m),
             np.repeat([p.high for p in passages], self.m),
             np.repeat(np.array([p.last for p in passages], dtype=bool), self.m),
+            np.zeros(len(passages) * self.m, dtype=bool),
         )
 
     def _extend(self, signal: int, end: FloatArray) -> FloatArray:
@@ -105,6 +106,7 @@ class Survey:
             np.concatenate([*[w * self.m + loops for w in answer_of], empty]).astype(np.intp),
             np.repeat(signs, self.m),
             np.concatenate([*offsets, empty]),
+            np.zeros(len(best) * self.m, dtype=bool),
         )
 
     def _passage_end(self, p: Passage) -> FloatArray:
@@ -258,7 +260,7 @@ class Survey:
             more = best > floor + self.peaks.tolerance[mine]  # less than that is rounding
             out.suprema.append(np.where(more, best, floor))
             out.times.append(np.where(more, place, np.nan))
-            out.open_suprema.append(np.zeros(m, dtype=bool))
+            out.open_suprema.append(self.peaks.dropped[mine])
         if self.passages:
             cells = joined(self.doubt_edges) if self.doubt_edges else no_cells()
             time = crossings.resolve(self.modes, self.edges, cells).reshape(len(self.passages), m)
@@ -269,7 +271,7 @@ class Survey:
                     first = np.where(np.isnan(time[v]), np.inf, time[v])
                     start = self.profile.deviation[:, p.signal, 0]
                     out.passages.append(np.where((start > p.high) | (start < p.low), 0.0, first))
-        out.open_passages = [np.zeros(m, dtype=bool) for _ in self.passages]
+        out.open_passages = list(self.edges.dropped.reshape(len(self.passages), m))
         if self.integrals:
             cells = joined(self.doubt_zeros) if self.doubt_zeros else no_cells()
             weight = np.concatenate(self.weight) * (1e-2 * AREA_RESOLUTION)

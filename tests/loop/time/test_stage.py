@@ -8,6 +8,7 @@ from hypothesis import strategies as st
 from synth.loop.closed_loop import Rational
 from synth.loop.evaluate import evaluate
 from synth.loop.quantities import EVERY_QUANTITY, Measure
+from synth.loop.time import areas, crossings, peaks
 from synth.loop.time.answers import LONG
 from synth.loop.time.stage import time_stage
 
@@ -109,3 +110,48 @@ def test_no_loops_and_no_questions(unity_loop):
     empty = time_stage(loops.rows(none), poles[none], TIME)
     assert all(v.shape == (0,) for v in empty.values.values())
     assert time_stage(loops, poles, ()).values == {}
+
+
+@pytest.mark.parametrize("order", [3, 7, 11])
+def test_wild_loops_are_read_or_flagged(order):
+    """Poles over ten decades, damping down to 1e-4: every value is there, no warning, no endless search."""
+    rng = np.random.default_rng(order)
+    top, bottom = [], []
+    for _ in range(60):
+        roots = []
+        while len(roots) < order:
+            size, zeta = 10.0 ** rng.uniform(-5, 5), min(10.0 ** rng.uniform(-4, 0), 0.999)
+            if len(roots) + 2 <= order and rng.random() < 0.5:
+                roots += [size * complex(-zeta, s * np.sqrt(1 - zeta**2)) for s in (1, -1)]
+            else:
+                roots.append(-size)
+        closed = np.real(np.poly(roots))
+        width = int(rng.integers(1, order + 1))
+        row = np.pad((closed * rng.uniform(-0.5, 0.9, order + 1))[-width:], (order + 1 - width, 0))
+        row[-1] = closed[-1]
+        top.append(row)
+        bottom.append(closed - row)
+    found = evaluate(Rational.of(np.array(top), np.array(bottom)), Rational.of([1.0], [1.0]), measures=TIME)
+    assert found.stable.mean() > 0.8
+    for name in (
+        "overshoot",
+        "undershoot",
+        "settling_time",
+        "control_peak",
+        "disturbance_peak",
+        "tracking_area",
+    ):
+        assert np.isfinite(found[name][found.stable]).all()
+
+
+def test_a_flood_of_doubtful_cells_is_cut_and_flagged(random_loops, monkeypatch):
+    loops, poles = random_loops(np.random.default_rng(8), 60, 6, light=True)
+    whole = time_stage(loops, poles, TIME)
+    for module in (crossings, peaks, areas):
+        monkeypatch.setattr(module, "MANY", 10)
+        monkeypatch.setattr(module, "FEW", 1)
+    cut = time_stage(loops, poles, TIME)
+    for m in (Measure("settling_time"), Measure("overshoot"), Measure("control_peak")):
+        wrong = np.abs(cut.values[m] - whole.values[m]) > 1e-6 * np.abs(whole.values[m]) + 1e-8
+        assert not (wrong & ~cut.approximate[m]).any()
+    assert any(cut.approximate[m].any() for m in TIME)
