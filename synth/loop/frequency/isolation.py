@@ -87,7 +87,12 @@ def _search(
 ) -> None:
     """All windows that hold roots, beginning with the central one."""
     signs = _filled_signs(polynomials)
-    rows = np.flatnonzero(changes(signs))  # Descartes on the whole axis: often there is nothing to do
+    count = changes(signs)  # Descartes on the whole axis: often there is nothing to do
+    if near is None:
+        _single(polynomials, signs, np.flatnonzero(count == 1), found)
+        rows = np.flatnonzero(count > 1)
+    else:
+        rows = np.flatnonzero(count)
     work = [(rows, 0, 0)] if rows.size else []
     while work:
         which, shift, side = work.pop()
@@ -96,6 +101,36 @@ def _search(
             work.append((below, shift - 1, -1))
         if side >= 0 and above.size and shift < _WINDOWS:
             work.append((above, shift + 1, 1))
+
+
+def _single(
+    polynomials: FloatArray,
+    signs: BoolArray,
+    rows: IntArray,
+    found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
+) -> None:
+    """Brackets for polynomials with one positive root: the signs at the octaves are enough."""
+    m = len(polynomials) - 1
+    octaves = _octaves(m)
+    exponent = np.arange(-(octaves // 2), octaves // 2 + 1)
+    powers = np.ldexp(1.0, (exponent[:, None] * np.arange(m + 1)).astype(np.int32))
+    work = [(rows, 0, 0)] if rows.size else []
+    while work:
+        which, shift, side = work.pop()
+        p = polynomials[:, which]
+        if shift:
+            p = _moved(p, octaves * shift)
+        negative, first = powers @ p < 0.0, signs[0, which]
+        passed = negative != first
+        before, after = passed[0], ~passed[-1]
+        inside = np.flatnonzero(~before & ~after)
+        if inside.size:
+            low = np.ldexp(1.0, exponent[passed[:, inside].argmax(axis=0) - 1] + octaves * shift)
+            found.append((which[inside], low, 2.0 * low, first[inside]))
+        if side <= 0 and before.any() and shift > -_WINDOWS:
+            work.append((which[before], shift - 1, -1))
+        if side >= 0 and after.any() and shift < _WINDOWS:
+            work.append((which[after], shift + 1, 1))
 
 
 def changes(negative: BoolArray) -> FloatArray:
