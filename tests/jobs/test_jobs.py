@@ -16,13 +16,7 @@ from synth.jobs.score import coefficients, score
 from synth.jobs.scoring import outcome_of, scored
 from synth.record import read_record
 from synth.spec import read_spec
-
-try:
-    from synth.verify import Verified
-except ImportError:
-    from collections import namedtuple
-
-    Verified = namedtuple("Verified", "agrees largest_relative_difference details")
+from synth.verify import Verified
 
 
 def test_a_notebook_gets_a_record_and_silence(sheet, capsys):
@@ -87,7 +81,7 @@ def test_who_disagrees_goes_last_and_is_marked(sheet, monkeypatch):
     outcome = outcome_of(spec, found, 0.0)
 
     def doubtful(spec, outcome):
-        return [Verified(i > 0, 0.5 if i == 0 else 1e-9, ("peak 1 against 2",)) for i in range(2)]
+        return [Verified(i > 0, 0.5 if i == 0 else 1e-9, ("peak 1 against 2",), {}) for i in range(2)]
 
     monkeypatch.setattr(finish, "opinions", doubtful)
     record = finish.finish("score", spec, outcome, limits=(), place=None).record

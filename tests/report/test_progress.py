@@ -2,8 +2,10 @@
 
 import io
 
+from rich.console import Console
+
 from synth.report.progress import Watch, drawn
-from synth.report.theme import console
+from synth.report.theme import THEME, console
 from synth.search.outcome import Progress
 
 LOOK = Progress("polish", 3000, 6000, 1.25, ("PI", 0.081), {"P": -0.31, "PI": 0.081, "lag": -0.02})
@@ -33,8 +35,7 @@ def test_nothing_is_shown_where_nobody_looks():
 def test_a_terminal_sees_it_and_keeps_nothing_of_it(monkeypatch):
     monkeypatch.setenv("TERM", "xterm")
     file = io.StringIO()
-    out = console(file, width=80)
-    out._force_terminal = True
+    out = Console(file=file, theme=THEME, width=80, force_terminal=True)
     watch = Watch(out)
     with watch:
         watch._begun -= 10.0
