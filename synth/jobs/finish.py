@@ -42,6 +42,11 @@ def finish(
     place : where to write, checked before the run; None writes nothing. said : the verdict sentence, made
     here where it is not given.
     """
+    if (
+        job != "score"
+    ):  # what does not stabilise every case is no candidate; its structure is told as rejected
+        stable = tuple(c for c in outcome.candidates if c.stable.all())
+        outcome = replace(outcome, candidates=stable)
     verified = opinions(spec, outcome)
     order = sorted(range(len(outcome.candidates)), key=lambda i: not _agrees(verified[i]))  # stable
     outcome = replace(outcome, candidates=tuple(outcome.candidates[i] for i in order))

@@ -134,8 +134,14 @@ def simpler(scene: Scene) -> Fact | None:
         return None
     # the richest first; of equally rich ones the one that comes nearest
     best = max(inside, key=lambda s: (len(REGISTRY[s.structure].parameters), s.best_slack))
-    data: dict[str, Any] = {"structure": best.structure, "slack": best.best_slack, "scan": best.exhaustive}
     closest = closest_of(scene, best)
+    listed = any(c.structure == best.structure for c in scene.outcome.candidates)
+    data: dict[str, Any] = {
+        "structure": best.structure,
+        "slack": best.best_slack,
+        "scan": best.exhaustive,
+        "stabilises": best.best_slack >= 0.0 or listed or closest is not None,
+    }
     if closest is not None and closest.binding is not None:
         number, bound = scene.bound(closest.binding[0])
         k = scene.outcome.case_names.index(closest.binding[1])
@@ -174,6 +180,7 @@ def richer(scene: Scene) -> Fact | None:
             "gain": best.best_slack - scene.candidate.worst_slack,
             "parameters": len(REGISTRY[best.structure].parameters),
             "own_parameters": len(own.parameters),
+            "settled": best.settled,
         },
     )
 

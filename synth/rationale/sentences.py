@@ -109,6 +109,8 @@ def _simpler(fact: Fact, scene: Scene) -> str:
     who = f"A {d['structure']}, which is simpler,"
     if d["slack"] >= 0.0:
         return f"{who} meets everything too, with a slack of {percent(d['slack'])}."
+    if not d["stabilises"]:
+        return f"{who} was not found to stabilise every case ({how})."
     if "requirement" not in d:
         return f"{who} comes no nearer than a slack of {percent(d['slack'])} ({how})."
     _, bound = scene.bound(d["requirement"])

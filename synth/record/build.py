@@ -7,7 +7,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, cast
 
 import numpy as np
 
@@ -122,7 +122,7 @@ def build(given: Given) -> Record:
         every = every_pole(outcome.plants, rows, _counted_below(spec.bounds))
         record["candidates"] = [candidate_part(given, i, every[i]) for i in range(len(outcome.candidates))]
     record["cautions"] = _cautions(given, record)
-    return record
+    return cast(Record, clean(record))  # a number that numpy made is a number here
 
 
 def _counted_below(bounds: Sequence[Bound]) -> float | None:

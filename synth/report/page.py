@@ -8,6 +8,7 @@ from synth.record import Candidate, Record
 from synth.report import reach, summary
 from synth.report.account import account
 from synth.report.revision import revision
+from synth.report.theme import items
 from synth.report.trade import trade
 
 
@@ -62,4 +63,6 @@ def _footer(record: Record, width: int) -> list[Text]:
             parts.append(f"budget {budget}")
     if search.get("limited"):
         parts.append("ended by the time limit: another machine may find other candidates")
-    return [Text(), Text(" · ".join(parts), style="dim")]
+    line = items("", parts, width)
+    line.stylize("dim")
+    return [Text(), line]

@@ -17,7 +17,10 @@ def rejected(record: Record, width: int) -> list[Text]:
     """Structures without a place in the list, each with its closest approach."""
     if not record["rejected"]:
         return []
-    lines = [heading("Structures not used", "and how near each came")]
+    met = record["verdict"] == "met"
+    lines = [
+        heading("Structures not used", "and how near each came") if met else heading("How near each came")
+    ]
     room = max(len(r["structure"]) for r in record["rejected"]) + 4
     told: list[dict[str, float]] = []
     for r in record["rejected"]:

@@ -137,7 +137,8 @@ def _value(view: View, candidate: Candidate, requirement: Requirement, scale: Un
     binds = binding is not None and binding["requirement"] == requirement["id"]
     short = not slack >= 0.0
     mark = "!" if short else "*" if binds else " "
-    text = Text(scale.number(value, 3) + mark)
+    unstable = math.isinf(slack) and math.isfinite(value)  # it has poles, and nothing else
+    text = Text(("unstable" if unstable else scale.number(value, 3)) + mark)
     text.stylize("short" if short else "binds" if binds else "")
     return text
 
