@@ -47,6 +47,10 @@ def searched(spec: Spec, options: Options, seeds: Sequence[Any] = ()) -> tuple[t
     """The limits of the plant, then the search."""
     from synth.search import propose as search
 
+    if options.study is not None:  # an address that cannot be used is told now, not when the search needs it
+        from synth.search.explore import storage_of
+
+        storage_of(options.study)
     limits = assess(spec.cases, spec.bounds, spec.reference_step)
     impossible = any(limit.violates for limit in limits)
     settings = settings_of(spec, options, impossible=impossible)

@@ -129,8 +129,9 @@ def _richer(fact: Fact, scene: Scene) -> str:
     more = d["parameters"] - d["own_parameters"]
     extra = count(more, "more tuned value")
     if not d["gain"] > 1e-3:
+        far = "" if d["settled"] else ", as far as it was searched"
         return (
-            f"More would buy nothing: with {extra} a {d['structure']} has a slack of {percent(d['slack'])}."
+            f"More buys nothing: with {extra} a {d['structure']} has a slack of {percent(d['slack'])}{far}."
         )
     if math.isinf(d["gain"]):
         return f"With {extra} a {d['structure']} has a slack of {percent(d['slack'])}."
