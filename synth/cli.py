@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import argparse
 import os
+import re
 import signal
 import sys
 import tempfile
@@ -266,7 +267,9 @@ def _own_fault(fault: Exception, typed: argparse.Namespace | None) -> int:
     secret = getattr(typed, "study", None)
     line = str(fault).splitlines()[0] if str(fault) else ""
     if secret:
-        text, line = text.replace(secret, "(study)"), line.replace(secret, "(study)")
+        password = re.search(r":([^:/@]+)@", secret)
+        for part in (secret, password.group(1) if password else secret):
+            text, line = text.replace(part, "(study)"), line.replace(part, "(study)")
     where = "no place to write the details"
     with suppress(OSError):
         handle, where = tempfile.mkstemp(prefix="synth-fault-", suffix=".txt")
