@@ -16,7 +16,7 @@ from synth.loop.quantities import Measure
 from synth.rules import starts
 from synth.search.archive import Rows, distinct, joined
 from synth.search.evolution import evolve
-from synth.search.gain_line import Intervals, stable_gains
+from synth.search.gain_line import Intervals, refined, stable_gains
 from synth.search.objective import Objective
 from synth.search.outcome import Progress, ProgressCall, Settings, StopCall, Task
 from synth.search.polish import Pace, Polished, polish
@@ -170,19 +170,24 @@ class Campaign:
         if seeds is not None and len(seeds):
             parts.append(seeds)
         rows = joined(parts)
-        scores = self.objective.score(rows)
+        scores = self.objective.score(rows, hasty=True)
         guide = scores.guide()
         picks = []
         for n in numbers:
             index = np.flatnonzero(rows.structure == n)
             standing = self.standings[n]
+            if standing.parameters == 1:
+                line_rows, line_guide = refined(self.objective, rows.take(index), guide[index])
+                standing.record(line_rows, line_guide, len(line_rows))
+                continue
             if standing.rounds == 0:
                 alive = scores.stable[index]
                 signs = tuple(s for s in (1, -1) if np.any(alive & (rows.sign[index] == s)))
                 standing.signs = signs or (1, -1)
             picks.append(index[distinct(rows.take(index), guide[index], PICKS)])
         later = [n for n in numbers if self.standings[n].rounds > 0]
-        self.polish_in(rows.take(np.concatenate(picks)), Pace())
+        if picks:
+            self.polish_in(rows.take(np.concatenate(picks)), Pace())
         if later and self.effort.generations and not self.halted():
             self._evolve(later, rows, guide)
         share = (self.objective.evaluations - before) // max(len(numbers), 1)
@@ -234,7 +239,7 @@ class Campaign:
                 parts.append(members.take(np.arange(min(size, len(members)))))
         if not parts:
             return
-        rng = np.random.default_rng([self.settings.seed, self.objective.evaluations])
+        rng = np.random.default_rng([self.settings.seed, *[self.standings[n].rounds for n in numbers]])
         members, score = evolve(
             self.objective, joined(parts), generations=self.effort.generations, rng=rng, stop=self.halted
         )

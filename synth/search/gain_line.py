@@ -8,11 +8,15 @@ from synth.loop.arrays import FloatArray
 from synth.loop.closed_loop import Rational, close
 from synth.loop.evaluate import stacks
 from synth.loop.poles.gain_line import stable_gain_intervals
+from synth.search.archive import Rows
+from synth.search.objective import Objective
 
 FURTHEST = 16.0  # ln of the gain, in units of the plant's own; an end at infinity is walked as far as this
 EDGE = np.array(
     [1e-6, 1e-4, 1e-3, 1e-2]
 )  # distance from an end, relative to the interval: optima like to sit there
+
+SUBDIVISIONS, PARTS = 6, 4
 
 Intervals = tuple[tuple[float, float], ...]
 
@@ -61,3 +65,35 @@ def covering(intervals: Intervals, sign: int, gain_scale: float, count: int) -> 
     gains = np.unique(np.concatenate(parts))
     out: FloatArray = gains[(gains > 0.0) & np.isfinite(gains)]
     return out
+
+
+def refined(objective: Objective, rows: Rows, guide: FloatArray, count: int = 3) -> tuple[Rows, FloatArray]:
+    """The best points of a dense line, each narrowed down between its neighbours by repeated subdivision.
+
+    rows of one structure of one parameter, guide (S,). Returns `count` rows at most, and their guides.
+    """
+    x, best = rows.x[:, 0], np.argsort(-guide, kind="stable")[:count]
+    spacing = np.array([_gap(x[rows.sign == rows.sign[i]], float(x[i])) for i in best])
+    centre, score = rows.take(best), guide[best]
+    low, high = (float(end[0]) for end in objective.boxes[int(rows.structure[0])])
+    for _ in range(SUBDIVISIONS):
+        offsets = np.linspace(-1.0, 1.0, 2 * PARTS + 1)
+        points = centre.take(np.repeat(np.arange(len(best)), offsets.size))
+        moved = points.x.copy()
+        moved[:, 0] = np.clip(moved[:, 0] + (spacing[:, None] * offsets).ravel(), low, high)
+        points = points.at(moved)
+        reached = objective.score(points).guide().reshape(len(best), -1)
+        choice = reached.argmax(axis=1) + np.arange(len(best)) * offsets.size
+        better = reached.max(axis=1) > score
+        x_new = np.where(better[:, None], points.x[choice], centre.x)
+        centre, score = centre.at(x_new), np.maximum(score, reached.max(axis=1))
+        spacing = spacing / PARTS
+    return centre, score
+
+
+def _gap(x: FloatArray, at: float) -> float:
+    """Distance to the further of the two neighbours of `at` among x."""
+    below, above = x[x < at], x[x > at]
+    gaps = [at - float(below.max())] if below.size else []
+    gaps += [float(above.min()) - at] if above.size else []
+    return max(gaps, default=0.1)

@@ -17,14 +17,16 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.closed_loop import Rational
-from synth.loop.evaluate import evaluate
+from synth.loop.evaluate import Screen, evaluate
 from synth.loop.quantities import Measure
 from synth.requirements import judged, slack_of
 from synth.search.archive import Archive, Rows
 from synth.search.outcome import Task
 from synth.search.scales import Scales, scales_of
+from synth.structures import Structure
 
 ABSENT = -12.0  # search slack of a quantity that a stable loop does not have; below any compressed slack
+REACH = 3.5 * float(np.log(10.0))  # of corners, beyond the slowest and the fastest mark
 UNSTABLE = -20.0  # and of every requirement on a loop that is not stable, less a term in the abscissa
 
 
@@ -78,7 +80,7 @@ class Objective:
         self.plants = task.plants
         self.case_names = task.case_names
         self.scales: Scales = scales_of(task.plants)
-        self.boxes = [s.box() for s in task.structures]
+        self.boxes = [_box(s, task, self.scales) for s in task.structures]
         self.active: list[tuple[int, ...]] = [(0,) for _ in task.structures]
         self.archive = Archive()
         self.evaluations = 0
@@ -92,6 +94,7 @@ class Objective:
                 self._late[r] = len(late)
                 late.append(Measure("late_deviation", after=bound.limit))
         self._stand_ins = tuple(late)
+        self.screen = _screen(task)
         self.judged = judged(self.task.bounds, self.case_names)
 
     @contextmanager
@@ -133,6 +136,17 @@ class Objective:
         start = np.full(len(theta), -1) if origin is None else origin
         return Rows(np.full(len(theta), s), wide, sign, start)
 
+    def limits(self, rows: Rows) -> tuple[FloatArray, FloatArray, BoolArray]:
+        """(S, V) lower and upper ends of the coordinates, and which of them the row has."""
+        low, high = np.zeros(rows.x.shape), np.zeros(rows.x.shape)
+        free = np.zeros(rows.x.shape, dtype=bool)
+        for s in np.unique(rows.structure):
+            index = rows.structure == s
+            box = self.boxes[int(s)]
+            low[index, : len(box[0])], high[index, : len(box[1])] = box
+            free[index, : len(box[0])] = True
+        return low, high, free
+
     def realise(self, rows: Rows) -> Rational:
         """C(s) of every row, padded to one width."""
         width = 1 + max((self.structures[int(s)].order for s in np.unique(rows.structure)), default=0)
@@ -144,11 +158,24 @@ class Objective:
             denominator[index, width - made.denominator.shape[1] :] = made.denominator
         return Rational(numerator, denominator, np.zeros(len(rows)))
 
-    def score(self, rows: Rows, cases: list[tuple[int, ...]] | None = None, remember: bool = True) -> Scores:
-        """Score every row on the active cases of its structure, or on the cases given for each structure."""
+    def score(
+        self,
+        rows: Rows,
+        cases: list[tuple[int, ...]] | None = None,
+        *,
+        remember: bool = True,
+        hasty: bool = False,
+    ) -> Scores:
+        """Score every row on the active cases of its structure, or on the cases given for each structure.
+
+        hasty : do not follow the responses of loops that ring for long or come near to instability; what is not
+        looked at counts as absent. For starts, of which the best are wanted.
+        """
         judged_on = self.active if cases is None else cases
         count = np.array([len(judged_on[s]) for s in range(len(self.structures))])[rows.structure]
-        most = max((len(chosen) for chosen in judged_on), default=1)  # one width, whichever rows are asked for
+        most = max(
+            (len(chosen) for chosen in judged_on), default=1
+        )  # one width, whichever rows are asked for
         table = np.full((len(self.structures), most), -1)
         for s, chosen in enumerate(judged_on):
             table[s, : min(len(chosen), most)] = chosen[:most]
@@ -158,9 +185,10 @@ class Objective:
         found = evaluate(
             self.plants,
             self.realise(rows),
-            measures=(*self.measures, *self._stand_ins),
+            measures=(*self.measures, *self._stand_ins, *((Measure("damping_ratio"),) if hasty else ())),
             reference_step=self.task.reference_step,
             pairs=(row, case[row, slot]),
+            screen=self.screen if hasty else None,
         )
         self.evaluations += len(row)
         exact, search = self.slacks(found.values, found.stable, found.abscissa, case[row, slot])
@@ -212,6 +240,36 @@ class Objective:
                 out[:, q] = np.where(np.isnan(column), -np.inf, column).max(axis=1)
         out[absent.any(axis=1)] = np.nan
         return out
+
+
+def _screen(task: Task) -> Screen:
+    """Far on the wrong side of what the sheet asks, or of what any sheet would."""
+    damping = [b.limit for b in task.bounds if b.measure.quantity == "damping_ratio" and b.side == "min"]
+    peak = [b.limit for b in task.bounds if b.measure.quantity == "sensitivity_peak" and b.side == "max"]
+    return Screen(
+        least_damping=min(0.02, *[0.1 * d for d in damping]) if damping else 0.02,
+        most_peak=max(30.0, *[1.0 + 20.0 * (p - 1.0) for p in peak]) if peak else 30.0,
+    )
+
+
+def _box(structure: Structure, task: Task, scales: Scales) -> tuple[FloatArray, FloatArray]:
+    """Range of every search coordinate: the structure's own, and REACH beyond all that plant and sheet speak of.
+
+    A corner further out than that is no corner: it only blurs the arithmetic. The gain is left free.
+    """
+    marks = [*np.log(scales.marks * scales.time)]
+    for bound in task.bounds:
+        row = bound.measure.row
+        if row.time_power and not row.gain_power and 0.0 < bound.limit < np.inf:
+            marks.append(np.log(bound.limit / scales.time) * -row.time_power)
+    bottom, top = min(marks) - REACH, max(marks) + REACH
+    low, high = structure.box()
+    for j, parameter in enumerate(structure.parameters):
+        if j > 0 and parameter.role == "time" and not np.isfinite(low[j]):
+            low[j], high[j] = -top, -bottom
+        elif j > 0 and parameter.role == "frequency" and not np.isfinite(low[j]):
+            low[j], high[j] = bottom, top
+    return low, high
 
 
 def compressed(slack: FloatArray) -> FloatArray:

@@ -1,14 +1,16 @@
-"""Sequential linear programming on the maximin slack, all starts of all structures in lockstep.
+"""Sequential programming on the maximin slack, all starts of all structures in lockstep.
 
-S rows, V search coordinates (padded), C constraint values a row.
+S rows, V search coordinates (padded), C constraint values a row, G cases of the quantity to improve.
 
-One iteration: forward differences of every slack, the step of a small linear programme inside a trust region, three
-trial points along it, and the radius follows what was gained. A call of the core costs much the same for one row as
-for a hundred, so the rows move together and each iteration is two calls.
+One iteration: forward differences of every slack, the step of a small programme inside a trust region, three trial
+points along it, and the radius follows what was gained. The programme is linear in the slacks and carries the
+curvature of their weighted sum, gathered from the differences of successive iterations, so that an optimum that lies
+in no corner of the constraints is found as fast as one that does. A call of the core costs much the same for one row
+as for a hundred, so the rows move together and each iteration is two calls.
 
-Source of the method: R. Fletcher and E. Sainz de la Maza, "Nonlinear programming and nonsmooth optimization by
-successive linear programming", Mathematical Programming 43 (1989) 235-256. Figures (steps, factors, limits) were
-measured on the problem families of benchmarks/problems.py.
+Sources: R. Fletcher and E. Sainz de la Maza, "Nonlinear programming and nonsmooth optimization by successive linear
+programming", Mathematical Programming 43 (1989) 235-256; the update of the curvature is that of Broyden, Fletcher,
+Goldfarb and Shanno (1970). Figures (steps, factors, limits) were measured on the families of benchmarks/problems.py.
 """
 
 from __future__ import annotations
@@ -27,7 +29,7 @@ from synth.search.objective import Objective
 TRIALS = (1.0, 0.5, 0.2)
 GROWTH = (1.8, 0.9, 0.45)  # of the radius when the trial of the same place was best
 SHRINK = 0.22  # when none was better
-LEAST_RADIUS = 2e-4
+LARGEST_RADIUS = 1.5
 CLIFF = 3.0  # a difference larger than this fell off the edge of stability
 STEEPEST = 60.0
 
@@ -51,15 +53,15 @@ class Pace:
     radius, least   of the trust region at the start and at the end
     iterations      at most
     halve           after these iterations the worse half of each structure's rows is dropped, down to `field`
-    curvature       second differences as well: for optima that lie in no corner of the constraints
+    second          second differences in place of gathered curvature: dearer, for the last digits of an optimum
     """
 
-    radius: float = 0.25
-    least: float = LEAST_RADIUS
+    radius: float = 0.3
+    least: float = 2e-4
     iterations: int = 14
     halve: tuple[int, ...] = (3, 6)
     field: int = 3
-    curvature: bool = False
+    second: bool = False
 
 
 def polish(
@@ -70,174 +72,220 @@ def polish(
     pace: Pace | None = None,
     stop: Callable[[], bool] | None = None,
 ) -> Polished:
-    """Improve every row until its trust region has shrunk, or the pace says so."""
+    """Improve every row until its trust region has shrunk, or the pace says so. `stop` is asked once an iteration."""
     pace = pace or Pace()
     goals = goals or Goals.same(len(rows))
-    scores = objective.score(rows)
-    state = terms(objective, goals, scores)
-    x, merit, worst, stable = rows.x.copy(), state.merit(), scores.worst(), scores.stable.copy()
-    radius = np.full(len(rows), pace.radius)
-    running = np.ones(len(rows), dtype=bool)
-    dropped = np.zeros(len(rows), dtype=bool)
-    constraint, cap, gain = state.constraint, state.cap, state.gain
-    low, high = _boxes(objective, rows)
-    free = _free(objective, rows)
+    field = _Field(objective, rows, goals, pace.radius)
     for iteration in range(pace.iterations):
-        index = np.flatnonzero(running)
+        index = np.flatnonzero(field.running)
         if index.size == 0 or (stop is not None and stop()):
             break
-        here = rows.take(index).at(x[index])
-        now = Terms(constraint[index], cap[index], None if gain is None else gain[index])
-        aims = goals.take(index)
-        room = np.where(free[index], radius[index, None], 0.0)
-        least = -np.minimum(room, np.maximum(x[index] - low[index], 0.0))
-        most = np.minimum(room, np.maximum(high[index] - x[index], 0.0))
-        slope, gain_slope = _slopes(objective, here, aims, now, radius[index], high[index], free[index])
-
-        def step_with(
-            curvature: FloatArray | None,
-            now: Terms = now,
-            slope: FloatArray = slope,
-            gain_slope: FloatArray | None = gain_slope,
-            least: FloatArray = least,
-            most: FloatArray = most,
-        ) -> Step:
-            return maximin_step(
-                now.constraint,
-                slope,
-                least,
-                most,
-                gain=now.gain,
-                gain_slope=gain_slope,
-                weight=1.0 if now.gain is None else PENALTY,
-                cap=now.cap,
-                curvature=curvature,
-            )
-
-        step = step_with(None)
-        if pace.curvature:
-            step = step_with(_curvature(objective, here, aims, now, step, radius[index], free[index]))
-        points = [here.at(np.clip(here.x + t * step.d, low[index], high[index])) for t in TRIALS]
-        tried = objective.score(joined(points))
-        ahead = terms(objective, _repeated(aims, len(TRIALS)), tried)
-        merits = ahead.merit().reshape(len(TRIALS), -1)
-        choice = merits.argmax(axis=0)
-        better = merits[choice, np.arange(index.size)] > merit[index] + 1e-12
-        taken = choice * index.size + np.arange(index.size)
-        factor = np.where(better, np.array(GROWTH)[choice], SHRINK)
-        moved, source = index[better], taken[better]
-        x[moved] = joined(points).x[source]
-        merit[moved] = ahead.merit()[source]
-        constraint[moved] = ahead.constraint[source]
-        if gain is not None and ahead.gain is not None:
-            gain[moved] = ahead.gain[source]
-        worst[moved], stable[moved] = tried.worst()[source], tried.stable[source]
-        radius[index] = np.minimum(radius[index] * factor, 1.5)
-        running[index] = radius[index] >= pace.least
+        field.advance(index, pace)
         if iteration + 1 in pace.halve:
-            losers = _losers(rows.structure, goals, merit, running | ~dropped, pace.field)
-            dropped |= losers
-            running &= ~losers
-    return Polished(rows.at(x), merit, worst, stable, ~dropped)
+            losers = _losers(rows.structure, goals, field.merit, ~field.dropped, pace.field)
+            field.dropped |= losers
+            field.running &= ~losers
+    return Polished(rows.at(field.x), field.merit, field.worst, field.stable, ~field.dropped)
 
 
-def _slopes(
-    objective: Objective,
-    rows: Rows,
-    goals: Goals,
-    now: Terms,
-    radius: FloatArray,
-    high: FloatArray,
-    free: BoolArray,
-) -> tuple[FloatArray, FloatArray | None]:
-    """Forward differences of every constraint (S, C, V) and of the gain (S, A, V); backward at an upper bound."""
-    row, variable = np.nonzero(free)
-    length = np.maximum(0.02 * radius, 2e-5)[row]
-    length = np.where(rows.x[row, variable] + length > high[row, variable], -length, length)
-    moved = rows.x[row]
-    moved[np.arange(len(row)), variable] += length
-    scores = objective.score(rows.take(row).at(moved), remember=False)
-    there = terms(objective, goals.take(row), scores)
+@dataclass(slots=True)
+class _Known:
+    """What a row remembers of its last iteration: coordinates (S, V), slopes (S, C, V) and (S, G, V), multipliers
+    (S, C) and (S, G), the curvature gathered so far (S, V, V), and whether there was an iteration (S,)."""
 
-    def spread(ahead: FloatArray, base: FloatArray) -> FloatArray:
-        with np.errstate(invalid="ignore"):
-            change = ahead - base[row]
-        change = np.where(np.isfinite(change) & (np.abs(change) <= CLIFF), change, 0.0)
-        out = np.zeros((*base.shape, rows.x.shape[1]))
-        out[row, :, variable] = np.clip(change / length[:, None], -STEEPEST, STEEPEST)
+    x: FloatArray
+    slope: FloatArray
+    gain_slope: FloatArray
+    multipliers: FloatArray
+    gain_multipliers: FloatArray
+    curvature: FloatArray
+    usable: BoolArray
+
+
+class _Field:
+    """The rows of one polish and where they stand."""
+
+    def __init__(self, objective: Objective, rows: Rows, goals: Goals, radius: float) -> None:
+        self.objective, self.rows, self.goals = objective, rows, goals
+        scores = objective.score(rows)
+        state = terms(objective, goals, scores)
+        self.x = rows.x.copy()
+        self.constraint, self.cap, self.gain = state.constraint, state.cap, state.gain
+        self.merit, self.worst, self.stable = state.merit(), scores.worst(), scores.stable.copy()
+        self.radius = np.full(len(rows), radius)
+        self.running = np.ones(len(rows), dtype=bool)
+        self.dropped = np.zeros(len(rows), dtype=bool)
+        self.low, self.high, self.free = objective.limits(rows)
+        count, variables = rows.x.shape
+        cases = 0 if self.gain is None else self.gain.shape[1]
+        self.known = _Known(
+            self.x.copy(),
+            np.zeros((*self.constraint.shape, variables)),
+            np.zeros((count, cases, variables)),
+            np.zeros(self.constraint.shape),
+            np.zeros((count, cases)),
+            np.zeros((count, variables, variables)),
+            np.zeros(count, dtype=bool),
+        )
+
+    def advance(self, index: IntArray, pace: Pace) -> None:
+        """One iteration of the rows named by `index`."""
+        here = self.rows.take(index).at(self.x[index])
+        goals = self.goals.take(index)
+        now = Terms(self.constraint[index], self.cap[index], None if self.gain is None else self.gain[index])
+        slope, gain_slope = self._slopes(index, here, goals, now)
+        if pace.second:
+            first = self._step(index, now, slope, gain_slope, None)
+            curvature = self._second_differences(index, here, goals, now, first)
+        else:
+            curvature = self._gathered(index, slope, gain_slope)
+        step = self._step(index, now, slope, gain_slope, curvature)
+        self._remember(index, slope, gain_slope, step)
+        self._try(index, here, goals, step, pace)
+
+    def _step(
+        self,
+        index: IntArray,
+        now: Terms,
+        slope: FloatArray,
+        gain_slope: FloatArray | None,
+        curvature: FloatArray | None,
+    ) -> Step:
+        room = np.where(self.free[index], self.radius[index, None], 0.0)
+        return maximin_step(
+            now.constraint,
+            slope,
+            -np.minimum(room, np.maximum(self.x[index] - self.low[index], 0.0)),
+            np.minimum(room, np.maximum(self.high[index] - self.x[index], 0.0)),
+            gain=now.gain,
+            gain_slope=gain_slope,
+            weight=1.0 if now.gain is None else PENALTY,
+            cap=now.cap,
+            curvature=curvature,
+        )
+
+    def _try(self, index: IntArray, here: Rows, goals: Goals, step: Step, pace: Pace) -> None:
+        """Score the trial points, move to the best where it is better, and let the radius follow."""
+        low, high = self.low[index], self.high[index]
+        points = joined([here.at(np.clip(here.x + t * step.d, low, high)) for t in TRIALS])
+        tried = self.objective.score(points)
+        ahead = terms(self.objective, _repeated(goals, len(TRIALS)), tried)
+        merits = ahead.merit()
+        choice = merits.reshape(len(TRIALS), -1).argmax(axis=0)
+        source = choice * index.size + np.arange(index.size)
+        better = merits[source] > self.merit[index] + 1e-12
+        moved, source = index[better], source[better]
+        self.x[moved], self.merit[moved] = points.x[source], merits[source]
+        self.constraint[moved] = ahead.constraint[source]
+        if self.gain is not None and ahead.gain is not None:
+            self.gain[moved] = ahead.gain[source]
+        self.worst[moved], self.stable[moved] = tried.worst()[source], tried.stable[source]
+        factor = np.where(better, np.array(GROWTH)[choice], SHRINK)
+        self.radius[index] = np.minimum(self.radius[index] * factor, LARGEST_RADIUS)
+        self.running[index] = self.radius[index] >= pace.least
+
+    def _slopes(
+        self, index: IntArray, here: Rows, goals: Goals, now: Terms
+    ) -> tuple[FloatArray, FloatArray | None]:
+        """Forward differences of every constraint (S, C, V) and of the gain (S, G, V); backward at an upper end."""
+        row, variable = np.nonzero(self.free[index])
+        length = np.maximum(0.02 * self.radius[index], 2e-5)[row]
+        beyond = here.x[row, variable] + length > self.high[index][row, variable]
+        length = np.where(beyond, -length, length)
+        moved = here.x[row]
+        moved[np.arange(len(row)), variable] += length
+        there = self._terms_at(here.take(row).at(moved), goals.take(row))
+
+        def spread(ahead: FloatArray, base: FloatArray) -> FloatArray:
+            out = np.zeros((*base.shape, here.x.shape[1]))
+            slope = _change(ahead, base[row]) / length[:, None]
+            out[row, :, variable] = np.clip(slope, -STEEPEST, STEEPEST)
+            return out
+
+        gain_slope = None
+        if now.gain is not None and there.gain is not None:
+            gain_slope = spread(there.gain, now.gain)
+        return spread(there.constraint, now.constraint), gain_slope
+
+    def _terms_at(self, rows: Rows, goals: Goals) -> Terms:
+        return terms(self.objective, goals, self.objective.score(rows, remember=False))
+
+    def _gathered(self, index: IntArray, slope: FloatArray, gain_slope: FloatArray | None) -> FloatArray:
+        """Curvature of the levels as the last multipliers weigh them, updated by what the slopes did since."""
+        known = self.known
+        moved = self.x[index] - known.x[index]
+        turned = -np.einsum("sc,scv->sv", known.multipliers[index], slope - known.slope[index])
+        if gain_slope is not None:
+            turned -= np.einsum(
+                "sc,scv->sv", known.gain_multipliers[index], gain_slope - known.gain_slope[index]
+            )
+        known.curvature[index] = updated(known.curvature[index], moved, turned, known.usable[index])
+        out: FloatArray = known.curvature[index]
         return out
 
-    gain_slope = None
-    if now.gain is not None and there.gain is not None:
-        gain_slope = spread(there.gain, now.gain)
-    return spread(there.constraint, now.constraint), gain_slope
+    def _remember(
+        self, index: IntArray, slope: FloatArray, gain_slope: FloatArray | None, step: Step
+    ) -> None:
+        known = self.known
+        known.x[index], known.slope[index], known.multipliers[index] = self.x[index], slope, step.multipliers
+        if gain_slope is not None:
+            known.gain_slope[index], known.gain_multipliers[index] = gain_slope, step.gain_multipliers
+        known.usable[index] = True
 
+    def _second_differences(
+        self, index: IntArray, here: Rows, goals: Goals, now: Terms, step: Step
+    ) -> FloatArray:
+        """The same curvature from second differences, its negative eigenvalues cut off. (S, V, V)
 
-def _curvature(
-    objective: Objective,
-    rows: Rows,
-    goals: Goals,
-    now: Terms,
-    step: Step,
-    radius: FloatArray,
-    free: BoolArray,
-) -> FloatArray:
-    """Second differences of -(multipliers · levels), its negative eigenvalues cut off. (S, V, V)
-
-    They know nothing of the box: a point beyond it is only looked at, never kept.
-    """
-    count, variables = rows.x.shape
-    length = np.clip(0.3 * radius, 2e-3, 5e-2)
-    one, other = np.triu_indices(variables)
-    moves = np.zeros((2 * variables + one.size, variables))
-    moves[np.arange(variables), np.arange(variables)] = 1.0
-    moves[np.arange(variables, 2 * variables), np.arange(variables)] = -1.0
-    moves[2 * variables + np.arange(one.size), one] += 1.0
-    moves[2 * variables + np.arange(one.size), other] += 1.0
-    wanted = (free[:, None, :] | (moves == 0.0)[None, :, :]).all(axis=2)
-    wanted[:, 2 * variables :] &= one != other
-    row, move = np.nonzero(wanted)
-    scores = objective.score(rows.take(row).at(rows.x[row] + length[row, None] * moves[move]), remember=False)
-    there = terms(objective, goals.take(row), scores)
-
-    def weighed(ahead: FloatArray, base: FloatArray, multipliers: FloatArray) -> FloatArray:
-        with np.errstate(invalid="ignore"):
-            change = ahead - base[row]
-        change = np.where(np.isfinite(change) & (np.abs(change) <= CLIFF), change, 0.0)
-        out: FloatArray = -(multipliers[row] * change).sum(axis=1)
+        They know nothing of the box: a point beyond it is only looked at, never kept.
+        """
+        count, variables = here.x.shape
+        free = self.free[index]
+        length = np.clip(0.3 * self.radius[index], 2e-3, 5e-2)
+        one, other = np.triu_indices(variables, 1)
+        unit = np.eye(variables)
+        moves = np.concatenate([unit, -unit, unit[one] + unit[other]])
+        row, move = np.nonzero((free[:, None, :] | (moves == 0.0)[None, :, :]).all(axis=2))
+        points = here.take(row).at(here.x[row] + length[row, None] * moves[move])
+        there = self._terms_at(points, goals.take(row))
+        flat = -(step.multipliers[row] * _change(there.constraint, now.constraint[row])).sum(axis=1)
+        if now.gain is not None and there.gain is not None:
+            flat -= (step.gain_multipliers[row] * _change(there.gain, now.gain[row])).sum(axis=1)
+        change = np.zeros((count, len(moves)))
+        change[row, move] = flat
+        ahead, behind = change[:, :variables], change[:, variables : 2 * variables]
+        mixed = np.where(
+            free[:, one] & free[:, other], change[:, 2 * variables :] - ahead[:, one] - ahead[:, other], 0.0
+        )
+        hessian = np.zeros((count, variables, variables))
+        hessian[:, one, other] = hessian[:, other, one] = mixed
+        hessian[:, np.arange(variables), np.arange(variables)] = ahead + behind
+        value, vector = np.linalg.eigh(hessian / length[:, None, None] ** 2)
+        out: FloatArray = (vector * np.maximum(value, 0.0)[:, None, :]) @ vector.transpose(0, 2, 1)
         return out
 
-    flat = weighed(there.constraint, now.constraint, step.multipliers)
-    if now.gain is not None and there.gain is not None:
-        flat = flat + weighed(there.gain, now.gain, step.gain_multipliers)
-    change = np.zeros((count, len(moves)))
-    change[row, move] = flat
-    ahead, behind = change[:, :variables], change[:, variables : 2 * variables]
-    hessian = np.zeros((count, variables, variables))
-    mixed = change[:, 2 * variables :] - ahead[:, one] - ahead[:, other]
-    mixed = np.where(wanted[:, 2 * variables :], mixed, 0.0)
-    hessian[:, one, other] = mixed
-    hessian[:, other, one] = mixed
-    hessian[:, np.arange(variables), np.arange(variables)] = ahead + behind
-    hessian /= length[:, None, None] ** 2
-    value, vector = np.linalg.eigh(hessian)
-    out: FloatArray = (vector * np.maximum(value, 0.0)[:, None, :]) @ vector.transpose(0, 2, 1)
+
+def _change(ahead: FloatArray, base: FloatArray) -> FloatArray:
+    """Differences, 0 where one of them is absent or fell off a cliff."""
+    with np.errstate(invalid="ignore"):
+        change = ahead - base
+    out: FloatArray = np.where(np.isfinite(change) & (np.abs(change) <= CLIFF), change, 0.0)
     return out
 
 
-def _boxes(objective: Objective, rows: Rows) -> tuple[FloatArray, FloatArray]:
-    low = np.full(rows.x.shape, -np.inf)
-    high = np.full(rows.x.shape, np.inf)
-    for s in np.unique(rows.structure):
-        index = rows.structure == s
-        box = objective.boxes[int(s)]
-        low[index, : len(box[0])], high[index, : len(box[1])] = box
-    return low, high
-
-
-def _free(objective: Objective, rows: Rows) -> BoolArray:
-    count = np.array([len(s.parameters) for s in objective.structures])[rows.structure]
-    out: BoolArray = np.arange(rows.x.shape[1])[None, :] < count[:, None]
+def updated(curvature: FloatArray, moved: FloatArray, turned: FloatArray, usable: BoolArray) -> FloatArray:
+    """H (S, V, V) after a move s (S, V) over which the gradient turned by y (S, V); kept where y·s is not positive,
+    so H stays positive semidefinite."""
+    product = (moved * turned).sum(axis=1)
+    size = np.sqrt((moved**2).sum(axis=1) * (turned**2).sum(axis=1))
+    use = usable & (product > 1e-4 * size) & (size > 0.0)
+    along = np.einsum("svw,sw->sv", curvature, moved)
+    energy = (moved * along).sum(axis=1)
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        down = along[:, :, None] * along[:, None, :] / energy[:, None, None]
+        up = turned[:, :, None] * turned[:, None, :] / product[:, None, None]
+    down = np.where((energy > 1e-12)[:, None, None], down, 0.0)
+    out: FloatArray = np.where(use[:, None, None], curvature - down + up, curvature)
     return out
 
 

@@ -180,6 +180,7 @@ def _corners(structure: Structure, u: FloatArray, low: float, high: float) -> Fl
 
 def _rows(objective: Objective, s: int, x: FloatArray, sign: int, source: int) -> Rows:
     wide = np.zeros((len(x), objective.width))
-    wide[:, : x.shape[1]] = x
+    low, high = objective.boxes[s]
+    wide[:, : len(low)] = np.clip(x[:, : len(low)], low, high)
     count = len(x)
     return Rows(np.full(count, s), wide, np.full(count, float(sign)), np.full(count, source))

@@ -19,7 +19,7 @@ from synth.search.polish import Pace, polish
 
 EXTREMES = ("control_peak", "settling_time")
 MARGIN = 1e-6  # of slack kept beyond the reserve, so that the last digits of a polish cannot fall short of it
-WISH_PACE = Pace(radius=0.2, iterations=40, least=1e-5, halve=(4, 8), field=2, curvature=True)
+WISH_PACE = Pace(radius=0.2, iterations=40, least=1e-5, halve=(4, 8), field=2, second=True)
 EXTREME_PACE = Pace(radius=0.3, iterations=8, least=2e-3, halve=())
 
 
