@@ -13,7 +13,7 @@ from synth.loop.closed_loop import Loops, Rational, close
 from synth.loop.poles.delayed import delayed_poles
 from synth.loop.poles.locus import root_locus
 from synth.loop.time.curves import step_curves
-from synth.record.format import Pole
+from synth.record.format import Branch, LocusCurve, LoopCurve, Pole, StepCurve
 from synth.record.numbers import plain
 
 STEP_POINTS = 240
@@ -33,7 +33,7 @@ def short(values: Sequence[float] | FloatArray) -> list[Any]:
     return [plain(float(f"{v:.{DIGITS - 1}e}")) if math.isfinite(v) else plain(v) for v in map(float, values)]
 
 
-def step(loop: Loops, settling: float, slowest: float) -> dict[str, Any]:
+def step(loop: Loops, settling: float, slowest: float) -> StepCurve:
     """y and u of a unit reference step of one stable loop, until a while after it has settled.
 
     settling : settling time [s]; where it is NaN or 0 the slowest pole, decaying with `slowest` [1/s],
@@ -48,7 +48,7 @@ def step(loop: Loops, settling: float, slowest: float) -> dict[str, Any]:
     return {"case": "nominal", "t": short(t * scale), "y": short(y[0]), "u": short(u[0] / gain)}
 
 
-def loop_gain(loop: Loops, crossover: float) -> dict[str, Any]:
+def loop_gain(loop: Loops, crossover: float) -> LoopCurve:
     """abs(L) in dB and its phase in degrees, unwrapped, over the decades round the crossover."""
     scale = float(loop.time_scale[0])
     centre = crossover * scale if math.isfinite(crossover) and crossover > 0.0 else 1.0
@@ -62,10 +62,10 @@ def loop_gain(loop: Loops, crossover: float) -> dict[str, Any]:
     return {"w": short(w / scale), "gain_db": short(gain), "phase_deg": short(np.degrees(phase))}
 
 
-def locus(loop: Loops, closed: list[Pole]) -> dict[str, Any]:
+def locus(loop: Loops, closed: list[Pole]) -> LocusCurve:
     """Closed-loop poles as the gain of C goes from 0 up; with dead time as points, without as branches."""
     scale = float(loop.time_scale[0])
-    out: dict[str, Any] = {"parameter": "gain", "closed": [[*map(float, p)] for p in closed]}
+    out: LocusCurve = {"parameter": "gain", "closed": [[*map(float, p)] for p in closed]}
     numerator = np.trim_zeros(loop.numerator[0], "f")
     denominator = np.trim_zeros(loop.denominator[0], "f")
     if len(numerator) == 0 or len(numerator) > len(denominator):
@@ -78,7 +78,7 @@ def locus(loop: Loops, closed: list[Pole]) -> dict[str, Any]:
         return out
     found = root_locus(numerator, denominator)
     keep = _spread(found.branches.shape[1], LOCUS_POINTS)
-    branches = []
+    branches: list[Branch] = []
     for row in found.branches[:, keep]:
         if (row.imag < 0.0).sum() > (row.imag > 0.0).sum():
             continue  # the mirror image of another branch

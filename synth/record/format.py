@@ -161,6 +161,47 @@ class Sentence(TypedDict):
     facts: dict[str, Any]
 
 
+class StepCurve(TypedDict, total=False):
+    """y and u of a unit reference step over t [s], as long as one another;
+
+    Empty for a loop that is not stable.
+    """
+
+    case: str
+    t: list[Number]
+    y: list[Number]
+    u: list[Number]
+
+
+class LoopCurve(TypedDict, total=False):
+    w: list[Number]
+    gain_db: list[Number]
+    phase_deg: list[Number]
+
+
+class Branch(TypedDict):
+    re: list[Number]
+    im: list[Number]
+
+
+class LocusCurve(TypedDict, total=False):
+    """Closed-loop poles as a parameter goes from 0 up: branches, or with dead time points."""
+
+    parameter: str
+    closed: list[Pole]
+    poles: list[Pole]
+    zeros: list[Pole]
+    branches: list[Branch]
+    points: list[Pole]
+    gain: list[Number]
+
+
+class Curves(TypedDict):
+    step: StepCurve
+    root_locus: LocusCurve
+    loop: NotRequired[LoopCurve]
+
+
 class Candidate(TypedDict):
     rank: int
     structure: str
@@ -175,7 +216,7 @@ class Candidate(TypedDict):
     closed_loop_poles: dict[str, list[Pole]]
     uncounted_poles: dict[str, list[Pole]]
     verified: Verified | None
-    curves: dict[str, Any]
+    curves: Curves
     rationale: list[Sentence]
     also: NotRequired[list[str]]
     units: NotRequired[dict[str, str]]

@@ -24,7 +24,7 @@ def _fields(kind: Any) -> dict[str, tuple[Any, bool]]:
     out = {}
     for name, hint in hints.items():
         late = get_origin(hint) is NotRequired
-        out[name] = (get_args(hint)[0] if late else hint, not late)
+        out[name] = (get_args(hint)[0] if late else hint, not late and name in kind.__required_keys__)
     return out
 
 

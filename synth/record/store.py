@@ -14,8 +14,10 @@ from pathlib import Path
 from typing import cast
 
 from synth.errors import Fault, InputError
+from synth.record.consistency import contradictions
 from synth.record.files import read_document, text_of, write_new
 from synth.record.format import ADOPTION_FORMAT, RECORD_FORMAT, Adoption, Record
+from synth.record.shape import MOST
 
 TRIES = 1000  # names tried one after another when others write at the same time
 
@@ -144,7 +146,11 @@ def _numbers(folder: Path, before: str, after: str) -> list[int]:
 def read_record(path: Path) -> Stored:
     """A record, checked. InputError with one line a fault where it is not one this program can read."""
     data, sha = read_document(path, RECORD_FORMAT, Record, "record")
-    return Stored(path, sha, cast(Record, data))
+    record = cast(Record, data)
+    broken = contradictions(record)[:MOST]
+    if broken:
+        raise InputError(Fault(f"damaged record: {what}", file=str(path)) for what in broken)
+    return Stored(path, sha, record)
 
 
 def read_adoption(path: Path) -> StoredAdoption:

@@ -105,7 +105,7 @@ def effort(view: View, candidate: Candidate, width: int) -> list[Text]:
 
 def loop_gain(candidate: Candidate, width: int) -> list[Text]:
     """abs(L) and its phase over frequency, crossovers marked; nominal plant."""
-    curve = candidate["curves"].get("loop", {})
+    curve: Any = candidate["curves"].get("loop", {})
     w, gain, phase = (_floats(curve.get(key, [])) for key in ("w", "gain_db", "phase_deg"))
     if len(w) < 2:
         return []
