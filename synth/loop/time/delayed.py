@@ -218,13 +218,13 @@ def delayed_step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatA
     poles = delayed_poles(loops, np.zeros(len(loops)))
     modes = true_modes(loops, numerators, poles)
     out = np.zeros((3, len(loops), t.shape[1]))
-    fine, coarse = resolution(loops, closed_roots(loops.denominator), modes.pole)
+    fine, coarse, hold = resolution(loops, closed_roots(loops.denominator), modes.pole)
     own = np.stack([t - delay, t, t - delay])
     for row in range(len(loops)):
         one = np.array([row])
         count = int(np.floor(horizon[row])) + 1
         marched = min(count, MOST_DRAWN if count <= MOST_DRAWN else LONG)
-        sizes = ladder(int(fine[row]) + 1, int(coarse[row]) + 1)
+        sizes = ladder(int(fine[row]) + 1, int(coarse[row]) + 1, int(hold[row]))
         leg = march(loops.rows(one), numerators[one], np.array([marched]), sizes, sizes, marched)[0]
         values = leg.values[0]
         edges = np.concatenate([[0.0], np.cumsum(sizes)])

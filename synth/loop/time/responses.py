@@ -20,6 +20,8 @@ from synth.loop.time.true_modes import TrueModes, alone_from, late_panels, true_
 
 # Delays after which a response that still goes on is handed to the modes, and the most that are ever marched.
 LONG, HANDOVER, MOST_DELAYS = 48, 14, 1536
+# The most panels marched for one loop; what is not decided by then is flagged.
+MOST_PANELS = 6144
 MOST_LATE = 4096
 # The modes are trusted where they meet the marched response over a whole delay to this part of its unit.
 AGREES = 3e-9
@@ -50,11 +52,11 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Resp
     """Responses of M stable loops. numerators (M, S, n + 1), N first; poles (M, q) true roots, NaN padded."""
     delay = loops.dead_time
     modes = true_modes(loops, numerators, poles)
-    unit = units(modes, delay)
-    # close poles may leave the sum of their modes worthless: y at least is judged by what it is known to come
-    # to
+    early = _early_size(loops, numerators)
+    unit = np.maximum(units(modes, delay), early)
+    # close poles may leave the sum of their modes worthless: y at least is judged by what it comes to
     final = np.abs(modes.final[:, 0])
-    unit[:, 0] = np.where(final > 0.0, final, unit[:, 0])
+    unit[:, 0] = np.where(final > 0.0, np.maximum(final, early[:, 0]), unit[:, 0])
     alone = alone_from(modes, unit, DEAD)
     with np.errstate(invalid="ignore", over="ignore"):
         needed = np.ceil(np.nan_to_num(alone / delay, nan=np.inf, posinf=1e300)) + 1.0
@@ -62,8 +64,8 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Resp
     delays = np.where(needed > LONG, HANDOVER, np.maximum(needed, 2.0))
     delays = np.minimum(np.maximum(delays, least), MOST_DELAYS).astype(np.intp)
     open_poles = closed_roots(loops.denominator)
-    fine, coarse = resolution(loops, open_poles, modes.pole)
-    kinks = lasting_kinks(loops, open_poles)
+    fine, coarse, hold = resolution(loops, open_poles, modes.pole)
+    kinks = lasting_kinks(loops, open_poles, coarse)
 
     rows = len(loops)
     pieces: list[Panels] = []
@@ -72,15 +74,15 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray) -> Resp
     todo, coarser = np.arange(rows), np.zeros(rows, dtype=np.intp)
     while todo.size:
         again = []
-        for at in _classes(todo, fine, coarse, delays):
-            cut, smooth = (
-                ladder(int(fine[at].max()), int(coarse[at].max())),
-                ladder(*(int(coarse[at].max()),) * 2),
-            )
+        for at in _classes(todo, fine, coarse, hold, delays):
+            even = int(coarse[at].max())
+            cut, smooth = ladder(int(fine[at].max()), even, int(hold[at].max())), ladder(even, even)
+            longest = max(MOST_PANELS // len(cut), 2)
+            delays[at] = np.minimum(delays[at], longest)
             part = march(loops.rows(at), numerators[at], delays[at], cut, smooth, int(kinks[at].max()))
-            rough = _unresolved(part) & (coarser[at] < 4)
+            rough = _unresolved(part) & (coarser[at] < 3) & (len(cut) < MOST_PANELS // 16)
             meets, quiet = _checked(part, delays[at], delay[at], modes.rows(at), unit[at])
-            longer = ~rough & ~(meets | quiet) & (delays[at] < MOST_DELAYS)
+            longer = ~rough & ~(meets | quiet) & (delays[at] < min(MOST_DELAYS, longest))
             done = ~rough & ~longer
             fine[at[rough]] += 1
             coarse[at[rough]] += 1
@@ -118,17 +120,34 @@ def _chain_delays(loops: Loops) -> FloatArray:
     return out
 
 
-def _classes(todo: IntArray, fine: IntArray, coarse: IntArray, delays: IntArray) -> list[IntArray]:
+def _early_size(loops: Loops, numerators: FloatArray) -> FloatArray:
+    """A size of each signal in its first delay: a mean of the open loop's step response, weight s e^(-st).
+    (M, S).
+
+    Where the loop has come to rest long before a delay is over, the modes see nothing of what there was.
+    """
+    s = (6.0 / loops.dead_time)[:, None] * 4.0 ** np.arange(16) + 0.0j
+    with np.errstate(all="ignore"):
+        below = horner(loops.denominator, s)
+        sizes = [np.abs(horner(numerators[:, i], s) / below).max(axis=1) for i in range(numerators.shape[1])]
+    out: FloatArray = np.nan_to_num(np.stack(sizes, axis=1))
+    return out
+
+
+def _classes(
+    todo: IntArray, fine: IntArray, coarse: IntArray, hold: IntArray, delays: IntArray
+) -> list[IntArray]:
     """Rows that are marched together: the same panels, and no more numbers at once than fit in 60 MB."""
     out = []
     if len(todo) <= 64:  # a few rows: one fine cut for all costs less than many calls
         key = np.where(coarse[todo] > 1, coarse[todo], 0) * 100 + np.minimum((fine[todo] + 2) // 3, 3)
+        key += 10 * hold[todo]
     else:
-        key = coarse[todo] * 100 + fine[todo]
+        key = (hold[todo] * 100 + coarse[todo]) * 100 + fine[todo]
     for one in np.unique(key):
         at = todo[key == one]
         at = at[np.argsort(-delays[at], kind="stable")]
-        panels = len(ladder(int(fine[at].max()), int(coarse[at].max())))
+        panels = len(ladder(int(fine[at].max()), int(coarse[at].max()), int(hold[at].max())))
         while at.size:
             room = max(1, int(2.5e6 // (int(delays[at[0]]) * panels * NODES)))
             out.append(at[:room])

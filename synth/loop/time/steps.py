@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
+from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 from synth.loop.polynomials import horner
 from synth.loop.time.collocation import (
@@ -27,6 +27,10 @@ from synth.loop.time.collocation import (
 )
 
 _REAL_TO_NODES = np.concatenate([TO_NODES.real, -TO_NODES.imag], axis=1)
+
+
+# Cuts of a delay go no finer than 2^-this, kept up all along or behind a kink alone.
+COARSEST, FINEST = 8, 40
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,13 +48,17 @@ class March:
     values: FloatArray
 
 
-def ladder(fine: int, coarse: int) -> FloatArray:
-    """Panel lengths of a delay: from 2^-fine behind the kink at its start, doubling, up to 2^-coarse at
-    most."""
+def ladder(fine: int, coarse: int, hold: int = 0) -> FloatArray:
+    """Panel lengths of a delay: 2^-fine behind the kink at its start, then growing to 2^-coarse at most.
+
+    There are about 2^hold panels to every doubling of the time since the kink; with 0 each is as long as all
+    before it.
+    """
     sizes = [2.0**-fine]
     done = sizes[0]
     while done < 1.0:
-        size = min(done, 2.0**-coarse)
+        # a power of two that still fits the grid of its own size, so that the delay comes out whole
+        size = min(max(2.0 ** np.floor(np.log2(done)) / 2**hold, 2.0**-fine), 2.0**-coarse)
         sizes.append(size)
         done += size
     return np.array(sizes)
@@ -208,36 +216,45 @@ def _taylor(n: int, length: FloatArray) -> FloatArray:
     return out
 
 
-def resolution(loops: Loops, open_poles: ComplexArray, slow_poles: ComplexArray) -> tuple[IntArray, IntArray]:
-    """How finely each loop's delay must be cut: (fine, coarse) of `ladder`, (M,) each.
+def resolution(
+    loops: Loops, open_poles: ComplexArray, slow_poles: ComplexArray
+) -> tuple[IntArray, IntArray, IntArray]:
+    """How finely each loop's delay must be cut: (fine, coarse, hold) of `ladder`, (M,) each.
 
     open_poles : (M, r) roots of D; slow_poles : (M, q) closed-loop poles that stay; NaN padded.
 
     The panel behind a kink must resolve the fastest open-loop pole. One that is well damped has died out
-    where the panels grow; one that is not must be resolved to the end of the delay.
+    where the panels grow. One that is not lets them grow more slowly, or, where that is cheaper, not at all.
     """
     delay = loops.dead_time[:, None]
     with np.errstate(invalid="ignore", divide="ignore"):
-        turns = np.abs(open_poles) * delay
-        needed = np.fmax.reduce(np.where(turns > 0.0, turns, 0.0) / 3.5, axis=1, initial=0.0)
-        lasting: BoolArray = (-open_poles.real < 0.75 * np.abs(open_poles)) & (
-            open_poles.real * delay > -60.0
-        )
-        swings = np.fmax.reduce(np.where(lasting, turns, 0.0) / 4.0, axis=1, initial=0.0)
+        turns = np.nan_to_num(np.abs(open_poles) * delay)
+        damping = np.where(turns > 0.0, -open_poles.real / np.abs(open_poles), 1.0)
+        even = np.log2(np.maximum(turns / 4.0, 1.0))
+        slower = np.ceil(np.log2(np.clip(1.5 / damping, 1.0, 1e6)))
+        lasting = (damping < 0.75) & (turns > 0.0)
+        holding = lasting & (damping > 0.0) & (slower + 2.0 < even)
+        swings = np.where(lasting & ~holding, even, 0.0).max(axis=1, initial=0.0)
+        grows = np.where(holding, slower, 0.0).max(axis=1, initial=0.0)
+        needed = np.log2(np.maximum(turns / 3.5, 1.0)).max(axis=1, initial=0.0)
         staying = slow_poles.real * delay > -3.0
-        moves = np.fmax.reduce(np.where(staying, np.abs(slow_poles) * delay, 0.0) / 5.0, axis=1, initial=0.0)
-    coarse = np.ceil(np.log2(np.maximum(np.fmax(swings, moves), 1.0))).astype(np.intp)
-    fine = np.ceil(np.log2(np.maximum(needed, 1.0))).astype(np.intp)
-    coarse = np.minimum(coarse, 10)
-    return np.maximum(np.minimum(fine, 40), coarse), coarse
+        moves = np.where(staying, np.abs(slow_poles) * delay / 5.0, 1.0).max(axis=1, initial=1.0)
+    coarse = np.ceil(np.maximum(swings, np.log2(np.maximum(moves, 1.0)))).astype(np.intp)
+    coarse = np.minimum(coarse, COARSEST)
+    fine = np.maximum(np.minimum(np.ceil(needed).astype(np.intp), FINEST), coarse)
+    return fine, coarse, np.minimum(grows.astype(np.intp), COARSEST)
 
 
-def lasting_kinks(loops: Loops, open_poles: ComplexArray) -> FloatArray:
-    """Delays after which kinks excite the fastest open-loop pole no more: each passes it through N/D again.
-    (M,)."""
+def lasting_kinks(loops: Loops, open_poles: ComplexArray, coarse: IntArray) -> FloatArray:
+    """Delays after which kinks excite no pole that 2^-coarse of a delay leaves far from resolved. (M,).
+
+    Each delay passes them through N/D once more, which at such a pole's frequency is small.
+    """
+    size = np.abs(open_poles)
     with np.errstate(all="ignore"):
-        fastest = np.fmax.reduce(np.abs(open_poles), axis=1, initial=0.0)
-        s = 1.0j * fastest[:, None]
-        ratio = np.abs(horner(loops.numerator, s) / horner(loops.denominator, s))[:, 0]
-        out: FloatArray = np.ceil(21.0 / -np.log(np.clip(np.nan_to_num(ratio), 1e-4, 0.985))) + 1.0
+        fast = size * loops.dead_time[:, None] > 12.0 * 2.0 ** coarse[:, None]
+        s = np.where(fast, 1.0j * size, 1.0j)
+        ratio = np.abs(horner(loops.numerator, s) / horner(loops.denominator, s))
+        most = np.where(fast, np.nan_to_num(ratio), 0.0).max(axis=1, initial=0.0)
+        out: FloatArray = np.ceil(21.0 / -np.log(np.clip(most, 1e-4, 0.985))) + 1.0
     return out
