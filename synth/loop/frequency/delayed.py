@@ -18,7 +18,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.frequency.crossings import (
     FALL,
     PHASE,
@@ -41,7 +41,9 @@ from synth.loop.frequency.samples import (
     sample_shared,
 )
 
-_FARTHEST = 2000.0  # rad: where the search for ever smaller ripples ends
+_LIGHT = 0.3  # damping below which a closed-loop pole is a resonance
+_BLOCK = 200_000  # nodes, times loops, looked at in one go
+_FARTHEST = 20_000.0  # rad: where the search for ever smaller ripples ends
 _SPAN = 20  # octaves of x, times three, over which the bound of |C S| is followed upwards
 
 
@@ -153,6 +155,16 @@ class _Findings:
             rest = np.sqrt(d2) - np.sqrt(n2)
             bound: FloatArray = np.where(rest > 0.0, np.sqrt(c2) / rest, 0.0)
         return np.where(np.isfinite(bound), bound, 0.0)
+
+    def climb_resonances(self, poles: ComplexArray) -> None:
+        """Start at every lightly damped closed-loop pole that is known, (M, q) padded with NaN."""
+        with np.errstate(invalid="ignore"):
+            row, place = np.nonzero((poles.imag > 0.0) & (-poles.real < _LIGHT * poles.imag))
+        w = poles.imag[row, place]
+        for i, key in enumerate(self.keys if row.size else ()):
+            curve = np.full(len(row), CURVES[key], dtype=np.intp)
+            around = (w / 1.2, w, w * 1.2)
+            climb(_DelayedCurve(self.response, curve, row), row, around, self.best[i], self.at[i])
 
     def read(self, s: Samples, rows: IntArray) -> None:
         """Take in what lies between the nodes of loops `rows` (columns of `s`)."""
@@ -270,7 +282,7 @@ class _DelayedCurve:
 
 
 def delayed_quantities(
-    response: Response, kinds: tuple[int, ...], keys: tuple[str, ...]
+    response: Response, poles: ComplexArray, kinds: tuple[int, ...], keys: tuple[str, ...]
 ) -> tuple[list[Crossings], dict[str, FloatArray], BoolArray]:
     """FALL and PHASE crossings that matter, suprema of the curves in `keys`, and whether falls recur for
     ever.
@@ -282,6 +294,7 @@ def delayed_quantities(
     findings = _Findings(response, kinds, keys)
     control = "noise_gain" in keys
     everyone = np.arange(response.loops)
+    findings.climb_resonances(poles)
     findings.read(sample_shared(response, SHARED, control=control), everyone)
     zone = (
         findings.fall_zone() if FALL in kinds else (np.full(response.loops, np.inf), np.zeros(response.loops))
@@ -298,8 +311,10 @@ def delayed_quantities(
         start = high[rows].min()
         rows = rows[high[rows] < 1.5 * start]
         reach = min(float(end[rows].max()), 4.0 * start)
-        angles = np.arange(start - 2.0 * STEP, reach + STEP, STEP)
-        findings.read(sample_shared(response.rows(rows), angles, control=control), rows)
+        piece = max(64, _BLOCK // len(rows)) * STEP
+        for low in np.arange(start, reach, piece):
+            angles = np.arange(low - 2.0 * STEP, min(low + piece, reach) + STEP, STEP)
+            findings.read(sample_shared(response.rows(rows), angles, control=control), rows)
         high[rows] = reach
     if FALL in kinds:
         for rows, nodes in zone_nodes(zone[0], zone[1], response.dead_time):

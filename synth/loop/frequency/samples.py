@@ -12,7 +12,7 @@ import numpy as np
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.frequency.response import CONTROL, D, N, Response
 
-_NEAR = 1.3  # squared height below the best, times this, at which a hump is still climbed
+_NEAR = 4.0  # square of how far below the best a hump is still climbed
 
 
 @dataclass(frozen=True, slots=True)
@@ -143,18 +143,22 @@ def humps(
     top : (G, M) |P|². best : (M,) largest value known so far.
     """
     with np.errstate(divide="ignore", invalid="ignore"):
-        inverse = s.closed / top  # smooth where the peak is sharp
-        floor = np.minimum(np.nanmin(inverse, axis=0), best**-2.0) * _NEAR  # best is 0 where P is
+        inverse = s.closed / top
+    floor = np.minimum(np.nanmin(inverse, axis=0), best**-2.0)
     low, middle, high = inverse[:-2], inverse[1:-1], inverse[2:]
-    # the parabola through the three nodes dips below the middle one by an eighth of its second difference at
-    # most
-    with np.errstate(invalid="ignore"):
-        dip = middle - 0.25 * (low + high - 2.0 * middle)
-    node, row = np.nonzero((middle <= low) & (middle < high) & (dip <= floor))
-    a, b, c = inverse[node, row], inverse[node + 1, row], inverse[node + 2, row]
+    local = (middle <= low) & (middle < high) & (middle <= floor * _NEAR)
+    # |Δ|² less the share of |P|² that would equal the best: smooth even where |P| nearly vanishes near a peak
+    rest = s.closed - floor * top
+    low, middle, high = rest[:-2], rest[1:-1], rest[2:]
+    # the parabola through three nodes goes below the middle one by an eighth of its second difference at most
+    hidden = (middle <= low) & (middle < high) & (middle - 0.25 * (low + high - 2.0 * middle) < 0.0)
+    # from a node that is a maximum the way leads up, whatever lies beside it; from a hidden one, the vertex
+    kind, node, row = np.nonzero(np.stack((local, hidden)))
+    a, b, c = rest[node, row], rest[node + 1, row], rest[node + 2, row]
     w0, w1, w2 = s.w[node, row], s.w[node + 1, row], s.w[node + 2, row]
     with np.errstate(divide="ignore", invalid="ignore"):
         up, down = (c - b) / (w2 - w1), (b - a) / (w1 - w0)
-        at = 0.5 * (w0 + w1) - 0.5 * down * (w2 - w0) / (up - down)
-        value = 1.0 / np.sqrt(b)
-    return row, (w0, np.where((at > w0) & (at < w2), at, w1), w2), value
+        vertex = 0.5 * (w0 + w1) - 0.5 * down * (w2 - w0) / (up - down)
+        value = 1.0 / np.sqrt(inverse[node + 1, row])
+    start = np.where((kind == 1) & (vertex > w0) & (vertex < w2), vertex, w1)
+    return row, (w0, start, w2), value

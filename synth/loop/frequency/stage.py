@@ -48,7 +48,7 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
         others = tuple(k for k in kinds if k != GAIN)
         recurring = np.zeros(len(loops), dtype=bool)
         if others or curves:
-            found, out, recurring = delayed_quantities(response, others, curves)
+            found, out, recurring = delayed_quantities(response, poles, others, curves)
         if GAIN in kinds:
             found.append(crossings(response, (GAIN,)))
     else:
