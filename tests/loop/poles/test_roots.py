@@ -97,6 +97,16 @@ def test_repeated_roots_come_as_near_as_rounding_lets_them(multiplicity, bound):
     assert largest_error(found, np.array([-1.0] + [-3.0] * multiplicity)) < bound
 
 
+@pytest.mark.parametrize("others", [[], [-1.0, -10.0, -0.2], [-2.0 + 1.0j, -2.0 - 1.0j]])
+@pytest.mark.parametrize("copies", [2, 3, 4, 5, 6, 8])
+def test_a_repeated_root_stays_a_root_of_nearly_the_same_polynomial(copies, others):
+    """The copies lie about eps^(1/copies) off, but in a ring: the product over all roots is the row again."""
+    row = np.real(np.poly([-3.0] * copies + others))
+    (found,) = closed_roots(row[None, :])
+    again = np.real(np.poly(found))
+    assert np.abs(again - row).max() / np.abs(row).max() < 5e-14
+
+
 def test_pairs_stand_together_upper_first_exactly_conjugate_by_decreasing_real_part():
     rows = spread_polynomials(9, 300, 0.5, seed=4)
     for roots in closed_roots(rows):
