@@ -50,6 +50,12 @@ def ranked(record: Record, width: int) -> list[Text]:
     several = view.several_cases
     words = "Candidates" if candidates[0]["meets_all"] else "Nearest found, none meets the sheet"
     lines = [heading(words, _examined(record), width)]
+    prefer = record["spec"].get("prefer")
+    if prefer:
+        least = "smallest" if prefer["sense"] == "min" else "largest"
+        reserve = f", with {100.0 * prefer['reserve']:g} % of slack kept" if prefer["reserve"] else ""
+        words = f"those that meet everything by {quantity_name(prefer['quantity'])}, {least} first{reserve}"
+        lines.append(hanging("  ", words, width, style="dim"))
     table = Columns((">", "<", ">", ">", "<"), indent=1)
     table.add("", "structure", "order", "slack", "held back by", style="dim")
     for c in candidates:
@@ -145,8 +151,10 @@ def _value(view: View, candidate: Candidate, requirement: Requirement, scale: Un
 
 def _asides(view: View, shown: list[Candidate]) -> list[tuple[str, list[str]]]:
     asked = {r["quantity"] for r in view.record["requirements"]}
+    prefer = view.record["spec"].get("prefer")
+    wanted = [prefer["quantity"]] if prefer else []
     out = []
-    for key in ASIDE:
+    for key in dict.fromkeys((*wanted, *ASIDE)):
         found = [view.worst(c, key) for c in shown]
         if key in asked or not any(math.isfinite(v) for v in found):
             continue
