@@ -16,12 +16,13 @@ from fractions import Fraction
 
 import numpy as np
 
-from synth.loop.arrays import ComplexArray, FloatArray
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.verify.subject import Exact, Subject
 
 _BITS = 180  # 54 digits
 _MOST = 40
 _POINTS = 24
+_CHAIN = 40  # roots of the chain beyond those of the matrix
 
 Fixed = tuple[int, int]  # real and imaginary part in units of 2^-_BITS
 
@@ -123,14 +124,10 @@ def _delayed(above: Exact, below: Exact, delay: float) -> ComplexArray:
     with np.errstate(all="ignore"):
         roots = np.linalg.eigvals(matrix)
         roots = roots[(roots.imag >= 0.0) & (np.abs(roots) < 2.0 * _POINTS)]
-        dd, db = np.polyder(d), np.polyder(b)
-        for _ in range(12):
-            e = np.exp(-roots)
-            value = np.polyval(d, roots) + np.polyval(b, roots) * e
-            slope = np.polyval(dd, roots) + (np.polyval(db, roots) - np.polyval(b, roots)) * e
-            step = value / slope
-            roots = roots - step
-        good = np.isfinite(roots) & (np.abs(step) < 1e-9 * (1.0 + np.abs(roots)))
+        # far roots repeat about every 2π along the chain: continue it upwards from the outermost
+        outer = roots[np.argsort(roots.imag)[-2:]]
+        chain = (outer[:, None] + 2j * np.pi * np.arange(1, _CHAIN)).ravel()
+        roots, good = _newton(d, b, np.concatenate((roots, chain)))
     out: list[complex] = []
     for r in roots[good]:
         r = complex(r.real, abs(r.imag) if abs(r.imag) > 1e-9 * abs(r) else 0.0)
@@ -138,6 +135,20 @@ def _delayed(above: Exact, below: Exact, delay: float) -> ComplexArray:
             out.append(r)
     upper = np.array(out, dtype=complex) / delay
     return np.concatenate((upper, upper[upper.imag > 0.0].conj()))
+
+
+def _newton(d: FloatArray, b: FloatArray, roots: ComplexArray) -> tuple[ComplexArray, BoolArray]:
+    """Newton's method on D(p) + N(p) e^(-p), and which have settled."""
+    dd, db = np.polyder(d), np.polyder(b)
+    step = np.full(len(roots), np.inf, dtype=complex)
+    for _ in range(14):
+        e = np.exp(-roots)
+        value = np.polyval(d, roots) + np.polyval(b, roots) * e
+        slope = np.polyval(dd, roots) + (np.polyval(db, roots) - np.polyval(b, roots)) * e
+        step = value / slope
+        roots = roots - step
+    good: BoolArray = np.isfinite(roots) & (np.abs(step) < 1e-9 * (1.0 + np.abs(roots)))
+    return roots, good
 
 
 def _chebyshev(count: int) -> tuple[FloatArray, FloatArray]:

@@ -21,10 +21,10 @@ from synth.loop.arrays import ComplexArray, FloatArray
 from synth.loop.quantities import Measure
 from synth.verify.subject import Subject
 
-_PER_TURN = 36  # nodes in a period of the fastest mode that still counts
+_PER_TURN = 64  # nodes in a period of the fastest mode that still counts
 _DEAD = 1e-9  # amplitude at which a mode no longer counts
-_MOST_NODES = 60_000
-_MOST_STEPS = 15_000  # with dead time
+_MOST_NODES = 100_000
+_MOST_STEPS = 20_000  # with dead time
 
 
 class NotSimulated(Exception):
@@ -184,12 +184,10 @@ def _with_dead_time(subject: Subject, poles: ComplexArray | None) -> Response:
     slowest = -poles.real.max() * theta if poles is not None and poles.size else 0.3
     if through > 0.0:
         slowest = min(slowest, -np.log(through))
-    open_poles = (
-        np.concatenate([np.roots(q) for q in (subject.plant.denominator, subject.denominator)]) * theta
-    )
-    fast = float(np.abs(open_poles).max(initial=0.5))
+    every = (subject.plant.numerator, subject.plant.denominator, subject.numerator, subject.denominator)
+    fast = float(max(np.abs(np.roots(q)).max(initial=1.0 / theta) * theta for q in every))
     turns = int(np.ceil(-np.log(1e-7) / max(slowest, 1e-9))) + 2
-    m = int(np.clip(np.ceil(_PER_TURN * fast / (2.0 * np.pi)), 4, 400))
+    m = int(np.clip(np.ceil(_PER_TURN * fast / (2.0 * np.pi)), 16, 400))
     if m * turns > _MOST_STEPS:
         raise NotSimulated(f"more than {_MOST_STEPS} steps")
     ramp = np.linspace(0.0, 1.0, m + 1)

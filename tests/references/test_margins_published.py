@@ -1,4 +1,4 @@
-"""Margins that textbooks and tuning rules print, through the core: to half a unit of the last printed digit."""
+"""Margins that textbooks and tuning rules print, through the core: to half a unit of the last digit."""
 
 from __future__ import annotations
 
@@ -21,7 +21,7 @@ def half_unit(text):
 
 
 def polynomials(c):
-    """Numerator and denominator of a controller; an unfiltered derivative is improper, so it joins the plant."""
+    """Numerator and denominator of a controller; improper ones (no filter) will join the plant."""
     k, ti, td = c.get("K", 1.0), c.get("Ti"), c.get("Td", 0.0)
     match c["form"]:
         case "P":

@@ -27,7 +27,6 @@ class Response:
     halves   (h + 1, 3, 2, 4 M): ascending powers of x; p, dp/du, d²p/du²; even and odd half; polynomial-major
         columns
     squares  (n + 1, 4, M): |p(jω)|² in ascending powers of x
-    real, imaginary  (n + 1, M): N conj(D) = real(x) + jω imaginary(x)
     ends     (2, 4, M): the coefficients of s^0 and s^n
     dead_time  (M,)
     """

@@ -161,3 +161,26 @@ def test_the_noise_gain_of_a_lead_that_rises_beyond_the_crossover(measure):
     sampled = np.max(np.abs(c / (1 + c / (1j * w) * np.exp(-0.05j * w))))
     assert m["noise_gain"] >= sampled * (1 - 1e-9)
     assert m["noise_gain"] == pytest.approx(sampled, rel=1e-4)
+
+
+def test_a_peak_beside_a_near_zero_of_the_numerator_is_found(measure):
+    # C S has light zeros, the plant's poles at 1.96 rad/s, and its peak at 2.1 rad/s beside them
+    plant = ([[0.5986]], [[1 / 3.83735, 0.08518, 1.0]])
+    compensator = ([[0.5438815, 0.3583349]], [[1.5178025, 0.0]])
+    m = measure(plant, compensator, 0.2211)
+    s = 1j * np.linspace(0.5, 8.0, 2_000_001)
+    c = np.polyval(compensator[0][0], s) / np.polyval(compensator[1][0], s)
+    loop = c * 0.5986 / np.polyval(plant[1][0], s) * np.exp(-0.2211 * s)
+    assert m["noise_gain"] == pytest.approx(np.max(np.abs(c / (1 + loop))), rel=1e-8)
+
+
+def test_a_resonance_hundreds_of_turns_out_is_found(measure):
+    # dead time 300 s, a light mode at 5 rad/s: 240 turns away from the crossover
+    den = np.polymul([1.0, 0.05], [1 / 25, 0.002, 1.0])
+    m = measure(([[0.05]], [den.tolist()]), ([[0.1]], [[1.0]]), 300.0)
+    s = 1j * np.linspace(4.5, 5.5, 4_000_001)
+    loop = 0.005 / np.polyval(den, s) * np.exp(-300 * s)
+    near = np.max(1 / np.abs(1 + loop))
+    slow = 1j * np.linspace(1e-4, 1.0, 2_000_001)
+    far = np.max(1 / np.abs(1 + 0.005 / np.polyval(den, slow) * np.exp(-300 * slow)))
+    assert m["sensitivity_peak"] == pytest.approx(max(near, far), rel=1e-6)
