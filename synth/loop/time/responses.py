@@ -31,6 +31,10 @@ DEAD = 3e-10
 RESOLVED = 3e-9
 
 
+# Values of a panel to its last two Chebyshev coefficients and its values at both ends.
+_ENDS = np.concatenate([TO_CHEBYSHEV[:, -2:], np.eye(NODES)[:, [0, -1]]], axis=1)
+
+
 @dataclass(frozen=True, slots=True)
 class Responses:
     """panels up to own time end (M,), and the single mode that is left then.
@@ -157,9 +161,15 @@ def _classes(
 
 def _unresolved(part: list[March]) -> BoolArray:
     """Whether any panel's polynomial has not settled in its last coefficients. (m,)."""
-    size = np.maximum.reduce([np.fmax.reduce(np.abs(leg.values), axis=(1, 2, 4)) for leg in part])
-    lasts = [np.abs(leg.values @ TO_CHEBYSHEV[:, -2:]) for leg in part]
-    last = np.maximum.reduce([np.fmax.reduce(np.fmax.reduce(x, axis=1), axis=(1, 3)) for x in lasts])
+    sizes, lasts = [], []
+    for leg in part:
+        shape = leg.values.shape
+        # one product for all panels: numpy would make a call for each of many small ones
+        ends = np.abs(leg.values.reshape(-1, NODES) @ _ENDS).reshape(*shape[:-1], 4)
+        most = np.fmax.reduce(np.fmax.reduce(ends, axis=1), axis=1)
+        lasts.append(most[:, :, :2].max(axis=2))
+        sizes.append(most[:, :, 2:].max(axis=2))
+    size, last = np.fmax.reduce(sizes), np.fmax.reduce(lasts)
     out: BoolArray = (last > RESOLVED * size).any(axis=1)
     return out
 

@@ -367,3 +367,18 @@ def test_nothing_asked_and_no_loops():
     assert delayed_time_stage(loops, delayed_poles(loops, np.zeros(1)), ()).values == {}
     none = loops.rows(np.zeros(0, dtype=int))
     assert delayed_time_stage(none, np.zeros((0, 0), dtype=complex), TIME).values[TIME[0]].shape == (0,)
+
+
+# S. Skogestad, "Simple analytic rules for model reduction and PID controller tuning", J. Process Control 13
+# (2003) 291-309, case E12: IAE of a load step with the SIMC setting, printed "0.15" (recalled, not looked up).
+E12 = ([[18.0, 9.0, 1.0]], [[80.0, 98.0, 19.0, 1.0]], 0.3)
+
+
+def test_printed_area_of_a_load_response():
+    gain, integral = 7.4074074074074066, 1.0
+    loops = closed(*E12, [[gain * integral, gain]], [[integral, 0.0]])
+    values, flags = stage(loops, (Measure("disturbance_area"),))
+    assert values["disturbance_area"][0] == pytest.approx(0.15, abs=0.005)
+    # an independent march to t = 36 gives 0.14817727 and leaves 5.404e-7 there, falling with 0.1652 1/s
+    assert values["disturbance_area"][0] == pytest.approx(0.14817727 + 5.404e-7 / 0.1652, rel=1e-6)
+    assert not flags["disturbance_area"][0]
