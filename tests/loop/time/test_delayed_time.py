@@ -370,7 +370,8 @@ def test_nothing_asked_and_no_loops():
 
 
 # S. Skogestad, "Simple analytic rules for model reduction and PID controller tuning", J. Process Control 13
-# (2003) 291-309, case E12: IAE of a load step with the SIMC setting, printed "0.15" (recalled, not looked up).
+# (2003) 291-309, case E12: IAE of a load step with the SIMC setting, printed "0.15" (recalled, not looked
+# up).
 E12 = ([[18.0, 9.0, 1.0]], [[80.0, 98.0, 19.0, 1.0]], 0.3)
 
 
