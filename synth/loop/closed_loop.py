@@ -85,6 +85,11 @@ class Loops:
         return replace(self, **{f: getattr(self, f)[index] for f in self.__slots__})
 
 
+def joined(first: Loops, second: Loops) -> Loops:
+    """Two stacks of one order as one."""
+    return Loops(*(np.concatenate([getattr(first, f), getattr(second, f)]) for f in Loops.__slots__))
+
+
 def exact_degree(polynomials: FloatArray) -> IntArray:
     """Degree of each row, counting no leading zeros; -1 for a row of zeros. (R, w) -> (R,)."""
     nonzero = polynomials != 0.0

@@ -109,13 +109,13 @@ def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
         stable, abscissa, poles = _without_dead_time(loops)
         reach = np.full(len(loops), np.inf)
     values: dict[Measure, FloatArray] = {}
-    statics = _statics(loops, stable, names)
+    still = statics(loops, stable, names)
     for measure in measures:
         name = measure.quantity
         if name == "decay_rate":
             values[measure] = -abscissa
-        elif name in statics:
-            values[measure] = statics[name]
+        elif name in still:
+            values[measure] = still[name]
         elif name == "damping_ratio":
             values[measure] = _early_damping(loops, stable, poles, measure)
     return PoleStage(stable, abscissa, poles, values, reach)
@@ -221,7 +221,7 @@ def _reaching(loops: Loops, poles: ComplexArray, reach: FloatArray) -> ComplexAr
     return further
 
 
-def _statics(loops: Loops, stable: BoolArray, names: set[str]) -> dict[str, FloatArray]:
+def statics(loops: Loops, stable: BoolArray, names: set[str]) -> dict[str, FloatArray]:
     """Limits at s -> 0 from the last two coefficients; a dead time does not enter them.
 
     The characteristic function at 0 is D(0) + N(0), not 0 for a stable loop. Coefficients of 0 stay 0 through
