@@ -82,7 +82,7 @@ def percent(value: float) -> str:
     size = abs(scaled)
     text = f"{size:.0f}" if size >= 99.5 else f"{size:.1f}" if size >= 0.095 else f"{size:.2g}"
     if size > 1e5:
-        text = f"{size:.1e}"
+        text = figure(size, 2)
     sign = "+" if scaled > 0.0 else MINUS if scaled < 0.0 else ""
     return f"{sign}{text} %"
 
