@@ -29,8 +29,9 @@ from synth.record import (
     predecessor_of,
     read_record,
 )
-from synth.record.build import clean, plant_part, requirement_part, spec_part
+from synth.record.build import plant_part, requirement_part, spec_part
 from synth.record.changes import changes
+from synth.record.clean import clean
 from synth.record.format import Compensator, Revision
 from synth.search.outcome import Candidate, Outcome
 from synth.spec import Spec, read_spec
