@@ -112,7 +112,7 @@ def evaluate(
     for rows in stacks(plants, compensators, plant_of, compensator_of):
         loops = close(plants, compensators, plant_of[rows], compensator_of[rows])
         if replaced and loops.dead_time[0] > 0.0:
-            rows, loops = _fill_by_stand_in(out, rows, loops)
+            rows, loops = _fill_by_stand_in(out, rows, loops, screen or Screen())
         if rows.size:
             _fill(out, rows, loops, screen or Screen())
     for i, measure in enumerate(measures):
@@ -209,7 +209,9 @@ def _fill(out: Evaluation, rows: IntArray, loops: Loops, screen: Screen) -> None
         out.reached[rows] = 2
 
 
-def _fill_by_stand_in(out: Evaluation, rows: IntArray, loops: Loops) -> tuple[IntArray, Loops]:
+def _fill_by_stand_in(
+    out: Evaluation, rows: IntArray, loops: Loops, screen: Screen
+) -> tuple[IntArray, Loops]:
     """The stages with a rational stand-in for the dead time; returns the loops that need the exact way."""
     wanted = out.measures
     fit = worthwhile(loops)
@@ -241,9 +243,19 @@ def _fill_by_stand_in(out: Evaluation, rows: IntArray, loops: Loops) -> tuple[In
     still = statics(loops, np.ones(len(rows), dtype=bool), {m.quantity for m in wanted})
     found |= {w: still[w.quantity] for w in wanted if w.quantity in still}
     found |= {w: -abscissa for w in wanted if w.quantity == "decay_rate"}
-    found |= responses(loops, stand_in, poles, wanted)
     _write(out, rows, loops, found, None)
-    out.reached[rows] = 2
+    out.reached[rows] = 1
+    keep = np.ones(len(rows), dtype=bool)
+    for measure, value in found.items():
+        if measure.quantity == "damping_ratio":
+            keep &= ~(value < screen.least_damping)
+        elif measure.quantity == "sensitivity_peak":
+            keep &= ~(value > screen.most_peak)
+    rows = rows[keep]
+    if rows.size and any(m.row.stage == "time" for m in wanted):
+        loops = loops.rows(keep)
+        _write(out, rows, loops, responses(loops, stand_in.rows(keep), poles[keep], wanted), None)
+        out.reached[rows] = 2
     return left, loops_left
 
 

@@ -19,7 +19,7 @@ from synth.search.evolution import evolve
 from synth.search.gain_line import Intervals, refined, stable_gains
 from synth.search.objective import Objective
 from synth.search.outcome import Progress, ProgressCall, Settings, StopCall, Task
-from synth.search.polish import Pace, Polished, polish
+from synth.search.polish import EXACT_PACE, Pace, Polished, polish
 from synth.search.standing import FINE, Standing
 from synth.search.starts import SOURCES, line, sample
 
@@ -41,7 +41,11 @@ EFFORTS = {
     "thorough": Effort(600_000, 8, 192, 20, 400),
 }
 PICKS = 6
+EXACT_TOPS = 2
 MOST_CASE_TURNS = 12
+FAR = (
+    -0.5
+)  # a structure that stays short of this is not pursued beyond two rounds where another meets the sheet
 HOPELESS = -5.0  # worst search slack beyond which the outer layer is not sent
 
 
@@ -122,12 +126,37 @@ class Campaign:
 
     def run(self, seeds: Rows | None = None) -> None:
         """Search every structure to a verdict, as far as the budget goes."""
+        with self.objective.approximating():
+            self._run(seeds)
+        self.settle_exactly()
+
+    def settle_exactly(self) -> None:
+        """Where a stand-in led the way, the tops of every structure end in a short exact polish."""
+        if not self.objective.delayed:
+            return
+        self.enter("exact")
+        tops = [
+            s.tops.take(np.arange(min(EXACT_TOPS, len(s.tops)))) for s in self.standings if s.tops is not None
+        ]
+        if not tops:
+            return
+        done = polish(self.objective, joined(tops), pace=EXACT_PACE)
+        for n in np.unique(done.rows.structure):
+            index = np.flatnonzero(done.rows.structure == n)
+            self.standings[int(n)].restate(done.rows.take(index), done.merit[index])
+
+    def _run(self, seeds: Rows | None) -> None:
         numbers = list(range(len(self.standings)))
         self.round(numbers, seeds)
         self.enter("cases")
         self.examine(numbers)
         for _ in range(1, self.effort.rounds):
-            open_ = [s.number for s in self.standings if not s.settled]
+            met = any(s.best >= 0.0 for s in self.standings)
+            open_ = [
+                s.number
+                for s in self.standings
+                if not s.settled and (s.rounds < 2 or s.best > FAR or not met)
+            ]
             if not open_ or self.halted() or self.objective.evaluations >= self.effort.evaluations:
                 break
             self.enter("rounds")

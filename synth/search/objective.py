@@ -71,6 +71,8 @@ class Objective:
     kept       those of them that the archive remembers
     active     for each structure the case numbers it is judged on; starts with the nominal
     evaluations  loops scored so far (one compensator on one plant)
+    delayed    whether some case has dead time; by_stand_in: whether time responses with dead time come from the
+               rational stand-in at the moment, as they do while the search is on its way
     """
 
     def __init__(self, task: Task, extra: tuple[Measure, ...] = ()) -> None:
@@ -84,6 +86,8 @@ class Objective:
         self.active: list[tuple[int, ...]] = [(0,) for _ in task.structures]
         self.archive = Archive()
         self.evaluations = 0
+        self.delayed = bool((task.plants.dead_time > 0.0).any())
+        self.by_stand_in = False
         wanted = [b.measure for b in task.bounds] + list(extra)
         self.measures = self.kept = tuple(dict.fromkeys(wanted))
         self.column = [self.measures.index(b.measure) for b in task.bounds]
@@ -106,6 +110,16 @@ class Objective:
             yield
         finally:
             self.measures = before
+
+    @contextmanager
+    def approximating(self) -> Iterator[None]:
+        """Let time responses with dead time come from the rational stand-in for a while."""
+        before = self.by_stand_in
+        self.by_stand_in = self.delayed
+        try:
+            yield
+        finally:
+            self.by_stand_in = before
 
     def add_cases(self, plants: Rational, names: tuple[str, ...]) -> None:
         """Make further plants cases of the search (points inside the tolerance box that failed)."""
@@ -189,6 +203,7 @@ class Objective:
             reference_step=self.task.reference_step,
             pairs=(row, case[row, slot]),
             screen=self.screen if hasty else None,
+            rational=self.by_stand_in,
         )
         self.evaluations += len(row)
         exact, search = self.slacks(found.values, found.stable, found.abscissa, case[row, slot])

@@ -9,13 +9,24 @@ from dataclasses import replace
 import numpy as np
 
 from synth.loop.arrays import FloatArray
+from synth.model.cases import PlantCase
 from synth.search.archive import Rows, joined
 from synth.search.campaign import Campaign
-from synth.search.finals import Draft, candidates, drafts_of, named, rounded, scorecards, with_fragility
+from synth.search.finals import (
+    Draft,
+    candidates,
+    drafts_of,
+    realised,
+    rounded,
+    scorecards,
+    simplest,
+    with_fragility,
+)
 from synth.search.outcome import Candidate, Outcome, ProgressCall, Rejection, Scan, Settings, StopCall, Task
 from synth.search.prices import price_list
 from synth.search.ranking import chosen, different
-from synth.search.wishes import Wished, extremes, preferred
+from synth.search.wishes import Wished, extremes, others, preferred
+from synth.structures import by_name
 
 Seed = tuple[str, Sequence[float]]
 BOX_TURNS = 4  # how often points inside the tolerance box may send the search on
@@ -40,7 +51,7 @@ def propose(
     extra = (wish.measure,) if wish is not None and wish.measure is not None else ()
     campaign = Campaign(task, settings, extra=extra, progress=progress, stop=stop)
     campaign.run(_seed_rows(campaign, seeds))
-    found, listed = _listed(campaign)
+    found, listed, wish_rows = _listed(campaign)
     examined = 0
     for _ in range(BOX_TURNS):
         if task.interior is None or not listed:
@@ -49,7 +60,7 @@ def propose(
         examined = len(task.interior)
         if not failing or campaign.halted():
             break
-        found, listed = _listed(campaign)
+        found, listed, wish_rows = _listed(campaign, wish_rows)
     else:
         listed, _ = _inside(campaign, listed)
     objective = campaign.objective
@@ -81,21 +92,13 @@ def propose(
     )
 
 
-def rescore(
-    task: Task, drafts: Sequence[tuple[str, Sequence[float]]], plants: object = None
-) -> tuple[Candidate, ...]:
-    """Score given compensators of known structures as they are: nothing is rounded, renamed or ranked.
+def rescore(task: Task, given: Sequence[Seed]) -> tuple[Candidate, ...]:
+    """Score compensators of known structures on the task's cases as they are: nothing is rounded, renamed or ranked.
 
-    drafts : (structure, tuned values in SI).
+    given : (structure, tuned values in SI) each; a structure need not be among the task's. Raises KeyError for one
+    that there is not.
     """
-    del plants
-    by_name = {s.name: s for s in task.structures}
-    from synth.structures import by_name as registered
-
-    made = [
-        Draft(by_name.get(name) or registered(name), np.asarray(theta, dtype=float), goal="given")
-        for name, theta in drafts
-    ]
+    made = [Draft(by_name(name), np.asarray(theta, dtype=float), goal="given") for name, theta in given]
     return candidates(task, made, task.plants, task.case_names)
 
 
@@ -110,24 +113,27 @@ def _seed_rows(campaign: Campaign, seeds: Sequence[Seed]) -> Rows | None:
     return joined(parts) if parts else None
 
 
-def _listed(campaign: Campaign) -> tuple[list[Candidate], list[Candidate]]:
-    """Every candidate found, and the list to report."""
+def _listed(
+    campaign: Campaign, earlier: Wished | None = None
+) -> tuple[list[Candidate], list[Candidate], Wished | None]:
+    """Every candidate found, the list to report, and where the preference led (to go on from, as `earlier`)."""
     task, objective = campaign.task, campaign.objective
-    wished = [w for w in (preferred(campaign), extremes(campaign)) if w is not None]
+    best = preferred(campaign, earlier)
+    wished = [w for w in (best, extremes(campaign), others(campaign)) if w is not None]
     campaign.enter("finals")
     drafts: list[Draft] = []
     for standing in campaign.standings:
         if standing.tops is not None:
-            need = 0.0
             several = standing.tops.take(np.arange(min(2, len(standing.tops))))
-            drafts += drafts_of(objective, several, "worst slack", campaign.origins, need)
+            drafts += drafts_of(objective, several, "worst slack", campaign.origins)
     for wish in wished:
         drafts += _wished_drafts(campaign, wish)
-    drafts = [named(d, task.structures) for d in drafts]
+    drafts, looked = simplest(task, drafts, objective.plants, objective.case_names)
     drafts, scored = rounded(task, drafts, objective.plants, objective.case_names)
+    objective.evaluations += looked
     found = list(candidates(task, drafts, objective.plants, objective.case_names))
     objective.evaluations += scored + len(drafts) * len(objective.plants)
-    return found, chosen(task, found, 1.0 / objective.scales.time)
+    return found, chosen(task, found, 1.0 / objective.scales.time), best
 
 
 def _wished_drafts(campaign: Campaign, wish: Wished) -> list[Draft]:
@@ -145,8 +151,6 @@ def _inside(campaign: Campaign, listed: list[Candidate]) -> tuple[list[Candidate
     names = tuple(c.name for c in task.interior_cases)
     drafts = _again(campaign, listed)
     measures = tuple(dict.fromkeys(b.measure for b in task.bounds))
-    from synth.search.finals import realised
-
     cards = scorecards(task, realised(drafts), task.interior, names, measures)
     objective.evaluations += len(drafts) * len(task.interior)
     worst = cards.slack.min(axis=2)
@@ -162,19 +166,20 @@ def _inside(campaign: Campaign, listed: list[Candidate]) -> tuple[list[Candidate
         return out, False
     index = np.array(fails, dtype=np.intp)
     objective.add_cases(task.interior.rows(index), tuple(names[i] for i in fails))
-    campaign.examine(list(range(len(campaign.standings))))
+    with objective.approximating():
+        campaign.examine(list(range(len(campaign.standings))))
+    campaign.settle_exactly()
     return out, True
 
 
 def _again(campaign: Campaign, listed: list[Candidate]) -> list[Draft]:
-    by_name = {s.name: s for s in campaign.task.structures}
-    return [Draft(by_name[c.structure], np.array(list(c.parameters.values()))) for c in listed]
+    return [Draft(by_name(c.structure), np.array(list(c.parameters.values()))) for c in listed]
 
 
-def _added(campaign: Campaign) -> tuple[object, ...]:
+def _added(campaign: Campaign) -> tuple[PlantCase, ...]:
     extra = campaign.objective.case_names[len(campaign.task.case_names) :]
-    by_name = {c.name: c for c in campaign.task.interior_cases}
-    return tuple(by_name[name] for name in extra)
+    inside = {c.name: c for c in campaign.task.interior_cases}
+    return tuple(inside[name] for name in extra)
 
 
 def _scan(campaign: Campaign, n: int) -> Scan:

@@ -55,6 +55,13 @@ class Standing:
         self.optima += [float(g) for g in guides[:finished]]
         self.restarts += finished
 
+    def restate(self, rows: Rows, guides: FloatArray) -> None:
+        """The same points, moved a little and scored exactly; what is known of restarts stays."""
+        order = distinct(rows, guides, len(rows), 0.0)
+        shift = float(guides[order[0]]) - self.best
+        self.tops, self.guides = rows.take(order), guides[order]
+        self.optima = [o + shift for o in self.optima]
+
     def judge(self) -> None:
         """Settled when enough restarts agree on the best."""
         if self.parameters == 1:
