@@ -1,5 +1,5 @@
-"""Published and computed optima: under the same bound the program reaches the same value, or a better one where
-its set of compensators is wider. Sources in optima.toml."""
+"""Published and computed optima: under the same bound the program reaches the same value, or a better one
+where its set of compensators is wider. Sources in optima.toml."""
 
 import tomllib
 from decimal import Decimal
