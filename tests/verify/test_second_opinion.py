@@ -54,6 +54,16 @@ def test_agrees_with_the_core(formula, num, den):
     assert len(opinion.differences) >= 15
 
 
+def test_a_load_response_with_a_slow_tail_comes_back():
+    # a cooler with the heavy dough under a PI-lead; its slowest pole carries far more than the peak of y
+    gain, reset, zero, pole = -6.135, 37.71, 0.01579, 2.068
+    formula = "-0.42*exp(-8*s)/((71.25*s+1)*(18*s+1))"
+    top, bottom = np.polymul([reset, 1.0], [1.0 / zero, 1.0]), np.polymul([reset, 0.0], [1.0 / pole, 1.0])
+    opinion = judge(formula, list(gain * top), list(bottom))
+    assert opinion.agrees, opinion.details
+    assert opinion.differences["disturbance_area"] < 1e-5
+
+
 @pytest.mark.parametrize("index", range(len(EVERY_QUANTITY)), ids=lambda i: EVERY_QUANTITY[i].quantity)
 def test_catches_a_value_that_is_wrong_by_a_thousandth(index):
     def change(values):
