@@ -197,16 +197,15 @@ def storage_of(url: str | None) -> Any:
     """
     if url is None:
         return None
-    import optuna
+    from optuna.storages import JournalStorage, RDBStorage
+    from optuna.storages.journal import JournalFileBackend, JournalRedisBackend
 
     try:
         if "://" not in url:
-            path = url.removeprefix("journal:")
-            backend = optuna.storages.journal.JournalFileBackend(path)
-            return optuna.storages.JournalStorage(backend)
+            return JournalStorage(JournalFileBackend(url.removeprefix("journal:")))
         if url.startswith("redis"):
-            return optuna.storages.JournalStorage(optuna.storages.journal.JournalRedisBackend(url))
-        return optuna.storages.RDBStorage(url)
+            return JournalStorage(JournalRedisBackend(url))
+        return RDBStorage(url)
     except Exception as error:
         raise _unusable(error) from None
 

@@ -20,8 +20,10 @@ from synth.search.objective import Objective, stacked
 from synth.search.outcome import Candidate, Fragility, Task
 from synth.structures import Structure, same_function
 
+ALIKE = 0.02  # ln: a pole and a zero nearer than this are struck when a simpler name is looked for
 FEWEST_DIGITS, MOST_DIGITS = 4, 12
 ROUNDING_LOSS = 1e-3
+HOLD = 1e-4  # relative
 NUDGE = 0.10  # of one tuned value, for the fragility
 
 
@@ -36,6 +38,7 @@ class Draft:
     start: str = ""
     source: str = ""
     need: float = 0.0  # worst slack that rounding must not lose
+    hold: Measure | None = None  # quantity of which rounding may lose HOLD at most
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,7 +93,8 @@ def named(draft: Draft, structures: tuple[Structure, ...]) -> Draft:
     """The same function under the simplest of the given structures, with the other names beside it."""
     made = draft.structure.realise(draft.theta[None, :])
     allowed = {s.name for s in structures}
-    names = [(s, t) for s, t in same_function(made.numerator[0], made.denominator[0]) if s.name in allowed]
+    found = same_function(made.numerator[0], made.denominator[0], ALIKE)
+    names = [(s, t) for s, t in found if s.name in allowed]
     if not names:
         return draft
     first, theta = names[0]
@@ -102,6 +106,26 @@ def named(draft: Draft, structures: tuple[Structure, ...]) -> Draft:
     return replace(draft, structure=first, theta=theta, also=others)
 
 
+def simplest(
+    task: Task, drafts: list[Draft], plants: Rational, case_names: tuple[str, ...]
+) -> tuple[list[Draft], int]:
+    """Each draft under its simplest name, where that costs less than ROUNDING_LOSS of its worst slack and nothing
+    that it needs. Returns the drafts and how many loops were scored for it."""
+    renamed = [named(d, task.structures) for d in drafts]
+    index = [
+        i for i, (a, b) in enumerate(zip(drafts, renamed, strict=True)) if a.structure is not b.structure
+    ]
+    if not index:
+        return renamed, 0
+    measures = tuple(dict.fromkeys(b.measure for b in task.bounds))
+    both = [drafts[i] for i in index] + [renamed[i] for i in index]
+    worst = scorecards(task, realised(both), plants, case_names, measures).slack.min(axis=(1, 2))
+    for k, i in enumerate(index):
+        if not _keeps(float(worst[k]), float(worst[k + len(index)]), drafts[i].need):
+            renamed[i] = drafts[i]
+    return renamed, len(both) * len(plants)
+
+
 def rounded(
     task: Task, drafts: list[Draft], plants: Rational, case_names: tuple[str, ...]
 ) -> tuple[list[Draft], int]:
@@ -109,15 +133,19 @@ def rounded(
 
     Returns the drafts and how many loops were scored for it.
     """
-    measures = tuple(dict.fromkeys(b.measure for b in task.bounds))
+    held = [d.hold for d in drafts if d.hold is not None]
+    measures = tuple(dict.fromkeys([*(b.measure for b in task.bounds), *held]))
 
-    def worst(some: list[Draft]) -> FloatArray:
-        out: FloatArray = scorecards(task, realised(some), plants, case_names, measures).slack.min(
-            axis=(1, 2)
-        )
-        return out
+    def scored_as(some: list[Draft]) -> tuple[FloatArray, FloatArray]:
+        """Worst slack, and the held quantity on its worst case (NaN where none is held)."""
+        cards = scorecards(task, realised(some), plants, case_names, measures)
+        kept = np.full(len(some), np.nan)
+        for i, d in enumerate(some):
+            if d.hold is not None:
+                kept[i] = np.abs(cards.values[i, :, measures.index(d.hold)]).max()
+        return cards.slack.min(axis=(1, 2)), kept
 
-    before = worst(drafts)
+    before, kept_before = scored_as(drafts)
     result = list(drafts)
     scored = len(drafts)
     pending = list(range(len(drafts)))
@@ -129,12 +157,14 @@ def rounded(
             for i in pending
             for d in digits
         ]
-        after = worst([t for _, t in tries])
+        after, kept_after = scored_as([t for _, t in tries])
+        with np.errstate(invalid="ignore"):
+            moved = np.abs(kept_after / kept_before[[i for i, _ in tries]] - 1.0) > HOLD
         scored += len(tries)
         left = []
         for i in pending:
-            mine = [(t, a) for (j, t), a in zip(tries, after, strict=True) if j == i]
-            kept = [t for t, a in mine if _keeps(before[i], float(a), drafts[i].need)]
+            mine = [(t, a, m) for (j, t), a, m in zip(tries, after, moved, strict=True) if j == i]
+            kept = [t for t, a, m in mine if not m and _keeps(float(before[i]), float(a), drafts[i].need)]
             if kept:
                 result[i] = kept[0]
             else:

@@ -3,7 +3,7 @@
 S rows, A active cases, C constraint values a row, R requirements.
 
 A row aims at the worst slack, or at one quantity while the worst slack keeps a reserve. The second is written as an
-exact penalty: benefit + PENALTY · min(0, least constraint). Merits of rows with different aims are not comparable.
+exact penalty: benefit + penalty · min(0, least constraint). Merits of rows with different aims are not comparable.
 """
 
 from __future__ import annotations
@@ -17,18 +17,19 @@ from synth.loop.quantities import Measure
 from synth.search.objective import Objective, Scores, compressed
 from synth.search.outcome import Aim
 
-# Above the multiplier any optimum met so far: e-fold of the quantity bought by one unit of slack (test_polish).
-PENALTY = 20.0
+PENALTY = 20.0  # enough to begin with; who needs a point that surely keeps the reserve raises it
 WORST_SLACK = Aim()
 
 
 @dataclass(frozen=True, slots=True)
 class Goals:
-    """aims, and for each row which one (S,), and the level (S,) of its second quantity (NaN where it has none)."""
+    """aims, and for each row which one (S,), and the level (S,) of its second quantity (NaN where it has none);
+    penalty, what a unit of slack short of the reserve costs against an e-fold of the quantity."""
 
     aims: tuple[Aim, ...]
     aim: IntArray
     level: FloatArray
+    penalty: float = PENALTY
 
     @classmethod
     def same(cls, count: int, aim: Aim = WORST_SLACK) -> Goals:
@@ -37,7 +38,7 @@ class Goals:
 
     def take(self, index: IntArray) -> Goals:
         """The goals of the rows named by `index`."""
-        return Goals(self.aims, self.aim[index], self.level[index])
+        return Goals(self.aims, self.aim[index], self.level[index], self.penalty)
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,19 +48,20 @@ class Terms:
     constraint: FloatArray
     cap: FloatArray
     gain: FloatArray | None
+    penalty: float = PENALTY
 
     def merit(self) -> FloatArray:
         """(S,) what a polish makes larger."""
-        level = np.minimum(self.constraint.min(axis=1), self.cap)
+        level: FloatArray = np.minimum(self.constraint.min(axis=1), self.cap)
         if self.gain is None:
             return level
-        out: FloatArray = PENALTY * level + self.gain.min(axis=1)
+        out: FloatArray = self.penalty * level + self.gain.min(axis=1)
         return out
 
 
 def terms(objective: Objective, goals: Goals, scores: Scores) -> Terms:
     """Constraints, cap and benefit of every row."""
-    rows, cases, requirements = scores.search.shape
+    rows, cases = scores.search.shape[:2]
     search = scores.search
     if all(a == WORST_SLACK for a in goals.aims):
         return Terms(search.reshape(rows, -1), np.full(rows, np.inf), None)
@@ -87,7 +89,7 @@ def terms(objective: Objective, goals: Goals, scores: Scores) -> Terms:
             )
             beside[index] = np.where(scores.case[index] >= 0, compressed(room), np.inf)
     constraint = np.concatenate([search.reshape(rows, -1), beside], axis=1)
-    return Terms(constraint, cap, gain)
+    return Terms(constraint, cap, gain, goals.penalty)
 
 
 def benefit(measure: Measure, sense: str, value: FloatArray) -> FloatArray:

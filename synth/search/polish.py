@@ -22,7 +22,7 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.search.archive import Rows, joined
-from synth.search.goals import PENALTY, Goals, Terms, terms
+from synth.search.goals import Goals, Terms, terms
 from synth.search.linear_step import Step, maximin_step
 from synth.search.objective import Objective
 
@@ -151,7 +151,12 @@ class _Field:
         """One iteration of the rows named by `index`."""
         here = self.rows.take(index).at(self.x[index])
         goals = self.goals.take(index)
-        now = Terms(self.constraint[index], self.cap[index], None if self.gain is None else self.gain[index])
+        now = Terms(
+            self.constraint[index],
+            self.cap[index],
+            None if self.gain is None else self.gain[index],
+            goals.penalty,
+        )
         slope, gain_slope = self._slopes(index, here, goals, now)
         if pace.second:
             first = self._step(index, now, slope, gain_slope, None)
@@ -178,7 +183,7 @@ class _Field:
             np.minimum(room, np.maximum(self.high[index] - self.x[index], 0.0)),
             gain=now.gain,
             gain_slope=gain_slope,
-            weight=1.0 if now.gain is None else PENALTY,
+            weight=1.0 if now.gain is None else now.penalty,
             cap=now.cap,
             curvature=curvature,
         )
@@ -309,7 +314,7 @@ def updated(curvature: FloatArray, moved: FloatArray, turned: FloatArray, usable
 
 
 def _repeated(goals: Goals, times: int) -> Goals:
-    return Goals(goals.aims, np.tile(goals.aim, times), np.tile(goals.level, times))
+    return Goals(goals.aims, np.tile(goals.aim, times), np.tile(goals.level, times), goals.penalty)
 
 
 def _losers(structure: IntArray, goals: Goals, merit: FloatArray, alive: BoolArray, field: int) -> BoolArray:

@@ -9,8 +9,7 @@ import numpy as np
 
 from synth.search.archive import joined
 from synth.search.campaign import Campaign
-from synth.search.finals import drafts_of, named, rounded, scorecards
-from synth.search.finals import realised as realise_drafts
+from synth.search.finals import Draft, drafts_of, named, realised, rounded, scorecards
 from synth.search.goals import Goals
 from synth.search.outcome import Aim, Price
 from synth.search.polish import Pace, polish
@@ -46,11 +45,11 @@ def price_list(campaign: Campaign) -> tuple[Price, ...]:
     return _prices(campaign, [replace(d, need=-np.inf) for d in drafts], [aim_of[i] for i in last])
 
 
-def _prices(campaign: Campaign, drafts: list, aim_of: list[int]) -> tuple[Price, ...]:  # type: ignore[type-arg]
+def _prices(campaign: Campaign, drafts: list[Draft], aim_of: list[int]) -> tuple[Price, ...]:
     task, objective = campaign.task, campaign.objective
     drafts, scored = rounded(task, drafts, objective.plants, objective.case_names)
     measures = tuple(dict.fromkeys(b.measure for b in task.bounds))
-    cards = scorecards(task, realise_drafts(drafts), objective.plants, objective.case_names, measures)
+    cards = scorecards(task, realised(drafts), objective.plants, objective.case_names, measures)
     objective.evaluations += scored + len(drafts) * len(objective.plants)
     found: list[Price] = []
     for i, r in enumerate(aim_of):

@@ -138,7 +138,7 @@ def _listed(
 
 def _wished_drafts(campaign: Campaign, wish: Wished) -> list[Draft]:
     made = drafts_of(campaign.objective, wish.rows, "", campaign.origins, wish.need)
-    return [replace(d, goal=g) for d, g in zip(made, wish.goals, strict=True)]
+    return [replace(d, goal=g, hold=wish.hold) for d, g in zip(made, wish.goals, strict=True)]
 
 
 def _inside(campaign: Campaign, listed: list[Candidate]) -> tuple[list[Candidate], bool]:

@@ -112,11 +112,12 @@ def line(objective: Objective, s: int, intervals: Intervals, signs: tuple[int, .
     band = plant_band(objective)
     size = np.abs(response(objective.task.plants, band.at(np.linspace(0.0, 1.0, 60)))) / objective.scales.gain
     size = size[np.isfinite(size) & (size > 0.0)]
-    reach = np.clip([-np.log(size.max()) - DECADE, -np.log(size.min()) + DECADE], -14.0, 14.0)
+    bottom = max(-float(np.log(size.max())) - DECADE, -14.0)
+    top = min(-float(np.log(size.min())) + DECADE, 14.0)
     parts = []
     for sign in signs:
         gains = covering(intervals, sign, objective.scales.gain, count)
-        logs = np.log(gains * objective.scales.gain) if gains.size else np.linspace(*reach, 16)
+        logs = np.log(gains * objective.scales.gain) if gains.size else np.linspace(bottom, top, 16)
         x = np.zeros((logs.size, objective.width))
         x[:, 0] = logs
         rows = _rows(objective, s, x, sign, 3)

@@ -12,7 +12,7 @@ from dataclasses import replace
 import numpy as np
 
 from synth.loop.arrays import FloatArray
-from synth.loop.quantities import Measure
+from synth.loop.quantities import Measure, Side
 from synth.search.archive import Rows, joined
 from synth.search.campaign import Campaign
 from synth.search.finals import drafts_of, named, realised, rounded, scorecards
@@ -68,7 +68,7 @@ def tradeoff(
     return _front(campaign, joined([*found, sweep.rows]), first, second, senses)
 
 
-def _sense(measure: Measure) -> str:
+def _sense(measure: Measure) -> Side:
     return "max" if measure.row.better == "max" else "min"
 
 
@@ -101,7 +101,7 @@ def _nearest(campaign: Campaign, rows: Rows, measure: Measure, level: float, cou
 
 
 def _front(
-    campaign: Campaign, rows: Rows, first: Measure, second: Measure, senses: tuple[str, str]
+    campaign: Campaign, rows: Rows, first: Measure, second: Measure, senses: tuple[Side, Side]
 ) -> tuple[FrontPoint, ...]:
     """Rounded, scored on all cases, and those that no other beats in both."""
     task, objective = campaign.task, campaign.objective

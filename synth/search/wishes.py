@@ -1,39 +1,119 @@
-"""After the worst slack: the preferred quantity, and the extremes that make a list worth choosing from.
+"""After the worst slack: the preferred quantity, and the alternatives that make a list worth choosing from.
 
 Starts are the tops of each structure and the best of the archive, so little is scored that was not near already.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from synth.loop.arrays import IntArray
+from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.quantities import Measure
 from synth.search.archive import Rows, distinct, joined
 from synth.search.campaign import Campaign
 from synth.search.goals import Goals, benefit
 from synth.search.outcome import Aim, Task
-from synth.search.polish import Pace, polish
+from synth.search.polish import Pace, Polished, polish
+from synth.search.standing import FINE
 
 EXTREMES = ("control_peak", "settling_time")
 MARGIN = 1e-6  # of slack kept beyond the reserve, so that the last digits of a polish cannot fall short of it
-WISH_PACE = Pace(radius=0.2, iterations=40, least=1e-5, halve=(4, 8), field=2, second=True)
-EXTREME_PACE = Pace(radius=0.3, iterations=8, least=2e-3, halve=())
+CASE_TURNS = 8
+PENALTIES = (200.0, 2_000.0, 20_000.0)
+WISH_PACE = Pace(radius=0.2, iterations=20, least=1e-4, halve=(3, 6), field=2)
+AGAIN_PACE = Pace(radius=0.05, iterations=20, least=1e-5, halve=(3,), field=1, second=True)
+EXTREME_PACE = Pace(radius=0.3, iterations=8, least=5e-3, halve=())
+EXTREME_AGAIN = Pace(radius=0.05, iterations=3, least=2e-3, halve=())
+OTHERS = 3  # rows of the archive looked at for a second candidate of a structure
+OTHERS_APART = 0.25
 
 
 @dataclass(frozen=True, slots=True)
 class Wished:
-    """rows, what each is best at, and the worst slack each has to keep."""
+    """rows, what each is best at, the worst slack each has to keep, and the quantity whose digits matter."""
 
     rows: Rows
     goals: tuple[str, ...]
     need: float
+    hold: Measure | None = None
 
 
-def extreme_measures(task: Task) -> tuple[Measure, ...]:
-    """The quantities whose extremes are offered as alternatives; with the options the sheet uses."""
+def preferred(campaign: Campaign, earlier: Wished | None = None) -> Wished | None:
+    """Improve the preferred quantity in every structure that keeps the reserve; None without a wish.
+
+    earlier : what was found before the last cases came in, to go on from.
+    """
+    wish = campaign.task.prefer
+    if wish is None or wish.measure is None:
+        return None
+    campaign.enter("preference")
+    aim = Aim(wish.measure, wish.sense, wish.reserve + MARGIN)
+    parts = [] if earlier is None else [earlier.rows]
+    for standing in campaign.standings:
+        if standing.tops is None or standing.best < wish.reserve:
+            continue
+        if earlier is not None and np.any(earlier.rows.structure == standing.number):
+            continue
+        parts.append(standing.tops.take(np.arange(min(3, len(standing.tops)))))
+        parts.append(_from_archive(campaign, standing.number, aim))
+    if not parts:
+        return None
+    rows = joined(parts)
+    done, _ = _confirmed(campaign, rows, Goals.same(len(rows), aim), WISH_PACE, AGAIN_PACE)
+    good = np.flatnonzero(done.finished & done.stable & (done.worst >= wish.reserve))
+    return Wished(done.rows.take(good), (wish.measure.row.name,) * good.size, wish.reserve, wish.measure)
+
+
+def extremes(campaign: Campaign) -> Wished | None:
+    """From the best of every structure that meets the sheet: least control peak, fastest settling."""
+    reserve = _reserve(campaign)
+    heads = [
+        s.tops.take(np.array([0])) for s in campaign.standings if s.tops is not None and s.best >= reserve
+    ]
+    if not heads:
+        return None
+    campaign.enter("alternatives")
+    measures = _extreme_measures(campaign.task)
+    aims = tuple(Aim(m, "min", reserve + MARGIN) for m in measures)
+    rows = joined(heads * len(aims))
+    goals = Goals(aims, np.repeat(np.arange(len(aims)), len(heads)), np.full(len(rows), np.nan))
+    with campaign.objective.asking(measures):
+        done, goals = _confirmed(campaign, rows, goals, EXTREME_PACE, EXTREME_AGAIN)
+    good = np.flatnonzero(done.stable & (done.worst >= reserve))
+    return Wished(
+        done.rows.take(good), tuple(f"least {measures[int(a)].row.name}" for a in goals.aim[good]), reserve
+    )
+
+
+def others(campaign: Campaign) -> Wished | None:
+    """Scored rows that meet the sheet and lie apart from the best of their structure: seconds for a short list."""
+    reserve = _reserve(campaign)
+    rows, slack, _, _ = campaign.objective.archive.all()
+    worst = slack.min(axis=1)
+    parts = []
+    for standing in campaign.standings:
+        if standing.tops is None or standing.best < reserve:
+            continue
+        fit: IntArray = np.flatnonzero((rows.structure == standing.number) & (worst >= reserve))
+        fit = fit[np.argsort(-worst[fit], kind="stable")[:300]]
+        if fit.size:
+            pick = distinct(rows.take(fit), worst[fit], OTHERS + 1, OTHERS_APART)
+            parts.append(rows.take(fit[pick]))
+    if not parts:
+        return None
+    found = joined(parts)
+    good = np.flatnonzero(_on_all_cases(campaign, found).min(axis=1) >= reserve)
+    return Wished(found.take(good), ("worst slack",) * good.size, reserve)
+
+
+def _reserve(campaign: Campaign) -> float:
+    return campaign.task.prefer.reserve if campaign.task.prefer is not None else 0.0
+
+
+def _extreme_measures(task: Task) -> tuple[Measure, ...]:
+    """The quantities whose extremes are offered as alternatives, with the options the sheet uses."""
     out = []
     for key in EXTREMES:
         own = [b.measure for b in task.bounds if b.measure.quantity == key]
@@ -41,44 +121,56 @@ def extreme_measures(task: Task) -> tuple[Measure, ...]:
     return tuple(out)
 
 
-def preferred(campaign: Campaign) -> Wished | None:
-    """Improve the preferred quantity in every structure that keeps the reserve, or nearly; None without a wish."""
-    wish = campaign.task.prefer
-    if wish is None or wish.measure is None:
-        return None
-    campaign.enter("preference")
-    aim = Aim(wish.measure, wish.sense, wish.reserve + MARGIN)
-    parts = []
-    for standing in campaign.standings:
-        if standing.tops is None or standing.best < wish.reserve:
-            continue
-        parts.append(standing.tops.take(np.arange(min(3, len(standing.tops)))))
-        parts.append(_from_archive(campaign, standing.number, aim))
-    parts = [p for p in parts if len(p)]
-    if not parts:
-        return None
-    rows = joined(parts)
-    done = polish(campaign.objective, rows, Goals.same(len(rows), aim), pace=WISH_PACE, stop=campaign.halted)
-    good = np.flatnonzero(done.finished & done.stable & (done.worst >= wish.reserve))
-    return Wished(done.rows.take(good), (wish.measure.row.name,) * good.size, wish.reserve)
+def _on_all_cases(campaign: Campaign, rows: Rows) -> FloatArray:
+    """(S, K) exact worst slack of each case."""
+    objective = campaign.objective
+    everything = [tuple(range(len(objective.case_names)))] * len(objective.structures)
+    out: FloatArray = objective.score(rows, everything, remember=False).exact.min(axis=2)
+    return out
 
 
-def extremes(campaign: Campaign) -> Wished | None:
-    """From the best of every structure that meets the sheet: least control peak, fastest settling."""
-    heads = [s for s in campaign.standings if s.tops is not None and s.best >= 0.0]
-    if not heads:
-        return None
-    campaign.enter("alternatives")
-    reserve = campaign.task.prefer.reserve if campaign.task.prefer is not None else 0.0
-    aims = tuple(Aim(m, "min", reserve + MARGIN) for m in extreme_measures(campaign.task))
-    tops = [s.tops.take(np.array([0])) for s in heads if s.tops is not None]
-    rows = joined(tops * len(aims))
-    goals = Goals(aims, np.repeat(np.arange(len(aims)), len(tops)), np.full(len(rows), np.nan))
-    with campaign.objective.asking(tuple(a.measure for a in aims if a.measure is not None)):
-        done = polish(campaign.objective, rows, goals, pace=EXTREME_PACE, stop=campaign.halted)
-    good = np.flatnonzero(done.stable & (done.worst >= reserve))
-    names = [f"least {aims[int(a)].measure.row.name}" for a in goals.aim[good]]  # type: ignore[union-attr]
-    return Wished(done.rows.take(good), tuple(names), reserve)
+def _confirmed(
+    campaign: Campaign, rows: Rows, goals: Goals, pace: Pace, again: Pace
+) -> tuple[Polished, Goals]:
+    """Polish, roughly and then to the end; then, as long as a case that is not active is violated, make it active and polish on."""
+    objective = campaign.objective
+    with objective.approximating():
+        first = polish(objective, rows, goals, pace=pace, stop=campaign.halted)
+    kept = np.flatnonzero(first.finished)
+    rows, goals = first.rows.take(kept), goals.take(kept)
+    done = _keeping(campaign, rows, goals, again)
+    for _ in range(CASE_TURNS):
+        if len(objective.case_names) == 1 or campaign.halted():
+            break
+        by_case = _on_all_cases(campaign, done.rows)
+        changed = set()
+        for i in np.flatnonzero(done.finished):
+            s, worst = int(done.rows.structure[i]), int(by_case[i].argmin())
+            if by_case[i, worst] < done.worst[i] - FINE and worst not in objective.active[s]:
+                objective.active[s] = (*objective.active[s], worst)
+                changed.add(s)
+        if not changed:
+            break
+        kept = np.flatnonzero(done.finished)
+        rows, goals = done.rows.take(kept), goals.take(kept)
+        done = _keeping(campaign, rows, goals, again)
+    return done, goals
+
+
+def _keeping(campaign: Campaign, rows: Rows, goals: Goals, pace: Pace) -> Polished:
+    """Polish with a penalty that is raised until every row keeps its reserve, or nearly all there is was tried."""
+    reserve = np.array([aim.reserve for aim in goals.aims])[goals.aim] - MARGIN
+    done = None
+    for penalty in PENALTIES:
+        done = polish(
+            campaign.objective, rows, replace(goals, penalty=penalty), pace=pace, stop=campaign.halted
+        )
+        if bool(np.all((done.worst >= reserve) | ~done.finished)) or campaign.halted():
+            break
+        rows = done.rows
+    if done is None:
+        raise ValueError("there is no penalty to polish with")
+    return done
 
 
 def _from_archive(campaign: Campaign, number: int, aim: Aim, count: int = 3) -> Rows:
@@ -88,7 +180,8 @@ def _from_archive(campaign: Campaign, number: int, aim: Aim, count: int = 3) -> 
         raise ValueError("an aim at the worst slack needs no archive")
     judged = cases >= len(campaign.objective.active[number])
     fit: IntArray = np.flatnonzero((rows.structure == number) & judged & (slack.min(axis=1) >= aim.reserve))
-    gain = benefit(aim.measure, aim.sense, values[fit, campaign.objective.measures.index(aim.measure)])
-    order = fit[np.argsort(-gain, kind="stable")[:200]]
-    gain = np.sort(gain)[::-1][:200]
-    return rows.take(order[distinct(rows.take(order), gain, count)] if order.size else order)
+    gain = benefit(aim.measure, aim.sense, values[fit, campaign.objective.kept.index(aim.measure)])
+    order = np.argsort(-gain, kind="stable")[:200]
+    if order.size == 0:
+        return rows.take(fit)
+    return rows.take(fit[order[distinct(rows.take(fit[order]), gain[order], count)]])
