@@ -17,6 +17,9 @@ from synth.loop.time.signals import Signals
 
 ROUNDS = 8
 
+LEVEL = 1e-14
+"""Cells in which the signal moves by less, relative to itself, are as good as constant: all else is rounding."""
+
 
 @dataclass(slots=True)
 class Peaks:
@@ -80,8 +83,13 @@ def resolve(modes: Signals, peaks: Peaks, cells: Cells) -> None:
             up = peaks.sign[few.key] > 0.0
             time, value = extremum(modes, few.loop, few.signal, few.t, few.h, guess, up)
             peaks.raise_to(few.key, peaks.sign[few.key] * (value + peaks.offset[few.key]), time)
+        level = useful & ~single & _level(cells)
+        if level.any():
+            few = cells.rows(level)
+            at_end = few.b > few.a
+            peaks.raise_to(few.key, np.where(at_end, few.b, few.a), np.where(at_end, few.t + few.h, few.t))
         np.maximum.at(peaks.best, peaks.answer[cells.key], known)
-        rest = useful & ~single & (upper > peaks.least(cells.key))
+        rest = useful & ~single & ~level & (upper > peaks.least(cells.key))
         if np.count_nonzero(rest) > MANY:
             kept = foremost(cells.rows(rest), -upper[rest], FEW)
             lost = np.bincount(cells.key[rest], minlength=len(peaks.sign)) > np.bincount(
@@ -94,3 +102,10 @@ def resolve(modes: Signals, peaks: Peaks, cells: Cells) -> None:
         cells = peaks.seen(cells.rows(rest).split(modes))
         cells = cells.rows((cells.range()[1] > peaks.least(cells.key)) & ~cells.monotone())
     peaks.raise_to(cells.key, np.maximum(cells.a, cells.b), cells.t)
+
+
+def _level(cells: Cells) -> BoolArray:
+    """Whether the signal stands still in a cell, as far as doubles can tell: a plateau has no one summit."""
+    moves = np.maximum(np.maximum(np.abs(cells.c), np.abs(cells.d)), np.abs(cells.b - cells.a))
+    out: BoolArray = np.maximum(moves, cells.miss) <= LEVEL * np.maximum(np.abs(cells.a), np.abs(cells.b))
+    return out
