@@ -130,6 +130,8 @@ def _follow_supremum(
 ) -> None:
     """Go on from where the plan stopped, for the loops whose envelope still allows more."""
     seen, best = found.seen[rows], found.suprema[w][rows]
+    if q.since is not None:
+        seen = np.maximum(seen, q.since[rows])
     top = np.maximum.reduce([sign * q.offset[rows] for sign in q.signs])
     envelope = modes.bounds(rows, seen)[1][q.signal]
     more = envelope + top > best + RESOLUTION * unit[rows, q.signal]

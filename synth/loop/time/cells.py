@@ -112,6 +112,17 @@ class Cells:
             x = np.where((x >= low) & (x <= high), x, 0.5 * (low + high))
         return x
 
+    def since(self, time: FloatArray, value: FloatArray, slope: FloatArray) -> Cells:
+        """The cells without what lies before `time` (Q,), where the signal has that value and slope."""
+        cut = time > self.t
+        part = np.where(cut, (self.t + self.h - time) / self.h, 1.0)
+        data = self.data.copy()
+        data[[1, 4, 5]] *= part
+        data[6] *= part**4
+        data[0, cut], data[2, cut] = time[cut], value[cut]
+        data[4, cut] = slope[cut] * data[1, cut]
+        return Cells(self.place, data)
+
     def split(self, modes: Signals) -> Cells:
         """Each cell in eight."""
         q, h = len(self), self.h / CELLS

@@ -18,7 +18,7 @@ from synth.loop.time.signals import Signals
 ROUNDS = 8
 
 LEVEL = 1e-14
-"""Cells in which the signal moves by less, relative to itself, are as good as constant: all else is rounding."""
+"""Cells in which the signal moves by less, relative to itself, are constant: what is left is rounding."""
 
 
 @dataclass(slots=True)

@@ -14,12 +14,16 @@ from synth.loop.arrays import BoolArray, FloatArray
 
 @dataclass(frozen=True, slots=True)
 class Supremum:
-    """sup of sign · (x + offset) over the signs given, and never below floor. offset, floor (M,)."""
+    """sup of sign · (x + offset) over the signs given, and never below floor. offset, floor (M,).
+
+    since : (M,) from that time on alone; None: over all times.
+    """
 
     signal: int
     signs: tuple[float, ...]
     offset: FloatArray
     floor: FloatArray
+    since: FloatArray | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -29,9 +29,6 @@ REACHES = {
 }
 """Which signal each quantity is read from."""
 
-FADED = 1e-9
-"""A late deviation of less is not looked at further; no band is so narrow."""
-
 
 @dataclass
 class TimeStage:
@@ -104,7 +101,7 @@ class _Reading:
             modes = modes.scaled(factor)
             unit[:, y] = np.maximum(1.0, np.abs(start[:, y] / final))
         self.modes, self.unit, self.start, self.end = modes, unit, start, end
-        self.suprema: dict[str, Supremum] = {}
+        self.suprema: dict[str | Measure, Supremum] = {}
         self.passages: dict[tuple[float, float, bool], Passage] = {}
         self.areas: dict[str, Area] = {}
 
@@ -136,6 +133,8 @@ class _Reading:
             limit = self.end[:, signal]
             floor = np.maximum(np.abs(limit), np.abs(self.start[:, signal]))
             self.suprema[name] = Supremum(signal, (1.0, -1.0), limit, floor)
+        elif name == "late_deviation":
+            self.suprema[m] = Supremum(signal, (1.0, -1.0), zero, zero, m.after / self.loops.time_scale)
         elif name == "rise_time":
             for level in m.span:
                 if level > 0.0:
@@ -160,10 +159,9 @@ class _Reading:
         elif name == "settling_time":
             k = list(self.passages).index((-m.band, m.band, True))
             value, self.approximate[m] = found.passages[k], found.open_passages[k].copy()
-        elif name == "late_deviation":
-            value = self._late(m)
         else:
-            k = list(self.suprema).index("overshoot" if name == "peak_time" else name)
+            key = {"peak_time": "overshoot", "late_deviation": m}.get(name, name)
+            k = list(self.suprema).index(key)
             value, self.approximate[m] = found.suprema[k], found.open_suprema[k].copy()
             if name in ("control_peak", "disturbance_peak"):
                 return value
@@ -178,11 +176,3 @@ class _Reading:
         k = list(self.passages).index(key)
         self.approximate[m] = self.approximate.get(m, False) | found.open_passages[k]
         return np.where(np.isfinite(found.passages[k]), found.passages[k], np.nan)
-
-    def _late(self, m: Measure) -> FloatArray:
-        """100 sup of abs(z - 1) from m.after on: the same question of the responses seen from then on."""
-        later = self.modes.later([self.index["y"]], m.after / self.loops.time_scale)
-        zero = np.zeros(len(self.loops))
-        found = answer(later, np.zeros((len(self.loops), 1)), [Supremum(0, (1.0, -1.0), zero, zero)], [], [])
-        self.approximate[m] = found.open_suprema[0].copy()
-        return 100.0 * found.suprema[0]

@@ -71,8 +71,15 @@ class Survey:
         self.question: list[list[int]] = []
         self.sampled: list[tuple[FloatArray, FloatArray]] = []
         row = np.arange(self.m)
+        self.entry: dict[int, tuple[FloatArray, FloatArray]] = {}  # value and slope at `since`
         for w, q in enumerate(self.suprema):
             x = self.profile.deviation[:, q.signal]
+            first, begin = x[:, 0], self.profile.time[:, 0]
+            if q.since is not None:
+                value, slope = self.modes.jet(row, np.full(self.m, q.signal), q.since, 0, 2)
+                self.entry[w] = value, slope
+                first, begin = value, q.since
+                x = np.where(self.profile.time < begin[:, None], first[:, None], x)
             known, when = q.floor.copy(), np.full(self.m, np.nan)
             top = np.full(self.m, -np.inf)
             numbers = []
@@ -92,10 +99,10 @@ class Survey:
             level = np.maximum(known - top, fine)
             quiet = reach(self.profile, self.profile.envelope[:, q.signal], level)
             self.peak_end.append(self._extend(q.signal, np.minimum(quiet, self.steady[q.signal])))
-            start = x[:, 0] + q.offset
+            start = first + q.offset
             start = np.maximum.reduce([sign * start for sign in q.signs])
             best.append(np.maximum(q.floor, start))
-            places.append(np.where(start > q.floor, 0.0, np.nan))
+            places.append(np.where(start > q.floor, begin, np.nan))
             tolerance.append(fine)
         loops = np.arange(self.m)
         empty = np.zeros(0)
@@ -168,6 +175,13 @@ class Survey:
         bottom: FloatArray,
     ) -> None:
         best = self.peaks.best[w * self.m : (w + 1) * self.m]
+        counts = cells.t < self.peak_end[w][cells.loop]
+        if q.since is not None:
+            since = q.since[s.loop]
+            early = s.t + s.h * np.arange(CELLS + 1)[:, None] < since
+            top = np.where(early, -np.inf, s.value[q.signal]).max(axis=0)
+            bottom = np.where(early, np.inf, s.value[q.signal]).min(axis=0)
+            counts &= cells.t + cells.h > q.since[cells.loop]
         for sign in q.signs:
             node = np.maximum.reduceat(top, s.first) if sign > 0.0 else -np.minimum.reduceat(bottom, s.first)
             node += sign * q.offset[s.owner]
@@ -177,7 +191,9 @@ class Survey:
         for number, sign in zip(self.question[w], q.signs, strict=True):
             reachable = (high if sign > 0.0 else -low) + sign * q.offset[cells.loop]
             matters = reachable > best[cells.loop] + RESOLUTION * self.unit[cells.loop, q.signal]
-            few = cells.rows(matters & (cells.t < self.peak_end[w][cells.loop]))
+            few = cells.rows(matters & counts)
+            if q.since is not None:
+                few = few.since(q.since[few.loop], *(part[few.loop] for part in self.entry[w]))
             self.doubt_peaks.append(self.peaks.seen(few.keyed(few.loop + number * self.m)))
 
     def _look_for_passage(
