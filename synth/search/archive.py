@@ -50,8 +50,8 @@ def joined(parts: list[Rows]) -> Rows:
 class Archive:
     """Append-only memory of scored rows.
 
-    slack (S, R) exact, least over the cases each row was judged on; values (S, Q) worst case by the sense of the
-    quantity; cases (S,) how many cases that was.
+    slack (S, R) exact, least over the cases each row was judged on; values (S, Q) worst case by the sense of
+    the quantity; cases (S,) how many cases that was.
     """
 
     def __init__(self) -> None:
@@ -83,8 +83,8 @@ class Archive:
 
 
 def distinct(rows: Rows, guide: FloatArray, count: int, apart: float = 0.15) -> IntArray:
-    """Numbers of the best `count` rows of one structure that differ by more than `apart` in some coordinate (or in
-    sign), best first. guide (S,), larger is better."""
+    """Numbers of the best `count` rows of one structure that differ by more than `apart` in some coordinate
+    (or in sign), best first. guide (S,), larger is better."""
     chosen: list[int] = []
     for i in np.argsort(-guide, kind="stable"):
         near = [

@@ -1,7 +1,8 @@
 """The campaign: structures take turns until each is settled or has used its share.
 
-Rounds of starts and polish for all structures in lockstep; the cases that bind join the active set; structures whose
-restarts do not agree get more starts and a short differential evolution. What it finds is left in `standings`.
+Rounds of starts and polish for all structures in lockstep; the cases that bind join the active set;
+structures whose restarts do not agree get more starts and a short differential evolution. What it finds is
+left in `standings`.
 """
 
 from __future__ import annotations
@@ -181,8 +182,8 @@ class Campaign:
     def _doubtful(self, standing: Standing) -> bool:
         """Whether more of the same may have missed a basin of this structure.
 
-        On a thorough budget always; else where restarts do not agree, and either the structure has more than four
-        parameters, or there are several cases, or nothing meets the sheet.
+        On a thorough budget always; else where restarts do not agree, and either the structure has more than
+        four parameters, or there are several cases, or nothing meets the sheet.
         """
         if self.settings.budget == "thorough":
             return True
@@ -193,7 +194,8 @@ class Campaign:
         return standing.parameters > 4 or several or nothing
 
     def round(self, numbers: list[int], seeds: Rows | None) -> None:
-        """Starts, picks and polish of these structures in lockstep; from the second round on with evolution."""
+        """Starts, picks and polish of these structures in lockstep; from the second round on with
+        evolution."""
         before = self.objective.evaluations
         parts = [self._starts(n) for n in numbers]
         if seeds is not None and len(seeds):
@@ -281,8 +283,8 @@ class Campaign:
     # -- plant cases
 
     def examine(self, numbers: list[int]) -> None:
-        """Confirm the best of each structure on all cases; the worst violated case joins its active set, and the
-        structure is polished on from its tops."""
+        """Confirm the best of each structure on all cases; the worst violated case joins its active set, and
+        the structure is polished on from its tops."""
         if len(self.objective.case_names) == 1:
             return
         for _ in range(MOST_CASE_TURNS):

@@ -1,10 +1,11 @@
-"""A short differential evolution of several structures in lockstep: finds other basins where the polish stood still.
+"""A short differential evolution of several structures in lockstep: finds other basins where the polish
+stood still.
 
 S members in all, V coordinates. One generation is one call of the core.
 
-Source: R. Storn and K. Price, "Differential evolution", J. Global Optimization 11 (1997) 341-359; here the variant
-that starts from the best member (best/1/bin) for half of the trials and from a random one for the rest, with the
-difference weight drawn anew for every trial.
+Source: R. Storn and K. Price, "Differential evolution", J. Global Optimization 11 (1997) 341-359; here the
+variant that starts from the best member (best/1/bin) for half of the trials and from a random one for the
+rest, with the difference weight drawn anew for every trial.
 """
 
 from __future__ import annotations

@@ -1,12 +1,14 @@
-"""The outer layer, by Optuna: where to send the polish on sheets on which starts and polish alone may miss a basin.
+"""The outer layer, by Optuna: where to send the polish on sheets on which starts and polish alone may miss a
+basin.
 
-One study a structure. A trial is a centre in search coordinates; it is scored as a batch of points round it and
-polished a few iterations, all studies in lockstep. What the campaign knows already is handed over as finished trials.
-Studies live in memory, or in a storage from which they are resumed, by several machines at once if need be.
+One study a structure. A trial is a centre in search coordinates; it is scored as a batch of points round it
+and polished a few iterations, all studies in lockstep. What the campaign knows already is handed over as
+finished trials. Studies live in memory, or in a storage from which they are resumed, by several machines at
+once if need be.
 
-Optuna is imported here alone, and only when something is explored: it costs more time to load than most sheets take
-to search. Sampler: J. Bergstra, R. Bardenet, Y. Bengio and B. Kégl, "Algorithms for hyper-parameter optimization",
-NIPS 24 (2011), in Optuna's multivariate form.
+Optuna is imported here alone, and only when something is explored: it costs more time to load than most
+sheets take to search. Sampler: J. Bergstra, R. Bardenet, Y. Bengio and B. Kégl, "Algorithms for
+hyper-parameter optimization", NIPS 24 (2011), in Optuna's multivariate form.
 """
 
 from __future__ import annotations
@@ -219,7 +221,7 @@ def _unusable(error: Exception) -> InputError:
                 "the storage of the study cannot be used",
                 key="--study",
                 given=f"(not shown; the driver says {type(error).__name__})",
-                allowed="a file path (journal), or a URL that Optuna takes: sqlite:///..., mysql://..., redis://...",
+                allowed="a file path (journal), or a URL that Optuna takes (sqlite, mysql, redis ...)",
             )
         ]
     )

@@ -53,7 +53,8 @@ class Scorecards:
 
 
 def all_measures(task: Task) -> tuple[Measure, ...]:
-    """Every quantity of the table, then what requirements and preference ask for with options of their own."""
+    """Every quantity of the table, then what requirements and preference ask for with options of their
+    own."""
     own = [b.measure for b in task.bounds]
     if task.prefer is not None and task.prefer.measure is not None:
         own.append(task.prefer.measure)
@@ -109,8 +110,8 @@ def named(draft: Draft, structures: tuple[Structure, ...]) -> Draft:
 def simplest(
     task: Task, drafts: list[Draft], plants: Rational, case_names: tuple[str, ...]
 ) -> tuple[list[Draft], int]:
-    """Each draft under its simplest name, where that costs less than ROUNDING_LOSS of its worst slack and nothing
-    that it needs. Returns the drafts and how many loops were scored for it."""
+    """Each draft under its simplest name, where that costs less than ROUNDING_LOSS of its worst slack and
+    nothing that it needs. Returns the drafts and how many loops were scored for it."""
     renamed = [named(d, task.structures) for d in drafts]
     index = [
         i for i, (a, b) in enumerate(zip(drafts, renamed, strict=True)) if a.structure is not b.structure
@@ -129,7 +130,8 @@ def simplest(
 def rounded(
     task: Task, drafts: list[Draft], plants: Rational, case_names: tuple[str, ...]
 ) -> tuple[list[Draft], int]:
-    """Each draft with as few digits as lose less than ROUNDING_LOSS of its worst slack and nothing that it needs.
+    """Each draft with as few digits as lose less than ROUNDING_LOSS of its worst slack and nothing that it
+    needs.
 
     Returns the drafts and how many loops were scored for it.
     """

@@ -22,14 +22,16 @@ Intervals = tuple[tuple[float, float], ...]
 
 
 def stable_gains(plants: Rational) -> Intervals:
-    """Open intervals of K in u = K e that stabilise every plant, in ascending order; none where nothing does."""
+    """Open intervals of K in u = K e that stabilise every plant, in ascending order; none where nothing
+    does."""
     unit = Rational.of([1.0], [1.0])
     count = len(plants)
     plant_of, ones = np.arange(count), np.zeros(count, dtype=np.intp)
     common: Intervals = ((-np.inf, np.inf),)
     for rows in stacks(plants, unit, plant_of, ones):
         loops = close(plants, unit, plant_of[rows], ones[rows])
-        # the loops have the plant's gain divided out of P and multiplied into C: k is still the gain of C itself
+        # the loops have the plant's gain divided out of P and multiplied into C: k is still the gain of C
+        # itself
         for intervals in stable_gain_intervals(loops):
             common = _intersection(common, tuple((i.low, i.high) for i in intervals))
     return common

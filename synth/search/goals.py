@@ -2,8 +2,9 @@
 
 S rows, A active cases, C constraint values a row, R requirements.
 
-A row aims at the worst slack, or at one quantity while the worst slack keeps a reserve. The second is written as an
-exact penalty: benefit + penalty · min(0, least constraint). Merits of rows with different aims are not comparable.
+A row aims at the worst slack, or at one quantity while the worst slack keeps a reserve. The second is
+written as an exact penalty: benefit + penalty · min(0, least constraint). Merits of rows with different aims
+are not comparable.
 """
 
 from __future__ import annotations
@@ -23,8 +24,8 @@ WORST_SLACK = Aim()
 
 @dataclass(frozen=True, slots=True)
 class Goals:
-    """aims, and for each row which one (S,), and the level (S,) of its second quantity (NaN where it has none);
-    penalty, what a unit of slack short of the reserve costs against an e-fold of the quantity."""
+    """aims, and for each row which one (S,), and the level (S,) of its second quantity (NaN where it has
+    none); penalty, what a unit of slack short of the reserve costs against an e-fold of the quantity."""
 
     aims: tuple[Aim, ...]
     aim: IntArray
@@ -43,7 +44,8 @@ class Goals:
 
 @dataclass(frozen=True, slots=True)
 class Terms:
-    """constraint (S, C), +inf where absent; cap (S,); gain (S, A) or None where every row aims at the slack."""
+    """constraint (S, C), +inf where absent; cap (S,); gain (S, A) or None where every row aims at the
+    slack."""
 
     constraint: FloatArray
     cap: FloatArray

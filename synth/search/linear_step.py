@@ -6,11 +6,12 @@ S programmes, V variables (1 to 5), C slacks, G cases of the quantity to improve
     subject to  t <= s_r + g_r·d  (r = 1..C),   t <= cap,   u <= f_k + h_k·d  (k = 1..G),   low <= d <= high
 
 Without f, H and cap it is the linear programme of a maximin step; with f and a cap it is the step of an exact
-penalty, which improves the worst case of one quantity while every slack stays above a reserve; with H it follows
-curvature.
+penalty, which improves the worst case of one quantity while every slack stays above a reserve; with H it
+follows curvature.
 
-Source: S. Mehrotra, "On the implementation of a primal-dual interior point method", SIAM J. Optimization 2 (1992)
-575-601: predictor, corrector, and the choice of the centring by the cube of the predicted fall of the gap.
+Source: S. Mehrotra, "On the implementation of a primal-dual interior point method", SIAM J. Optimization 2
+(1992) 575-601: predictor, corrector, and the choice of the centring by the cube of the predicted fall of the
+gap.
 """
 
 from __future__ import annotations
@@ -26,7 +27,8 @@ ITERATIONS = 25  # most of them end after 8 to 14
 
 @dataclass(frozen=True, slots=True)
 class Step:
-    """d (S, V), the level t (S,) it promises, and the multipliers of the slacks (S, C) and of the cases (S, G)."""
+    """d (S, V), the level t (S,) it promises, and the multipliers of the slacks (S, C) and of the cases (S,
+    G)."""
 
     d: FloatArray
     level: FloatArray
@@ -57,7 +59,8 @@ def maximin_step(
 
     Returns
     -------
-    Step; accurate to about 1e-8 of the slacks' spread (test_linear_step compares with scipy.optimize.linprog).
+    Step; accurate to about 1e-8 of the slacks' spread (test_linear_step compares with
+    scipy.optimize.linprog).
     """
     count, constraints = slack.shape
     variables = slope.shape[2]

@@ -2,9 +2,9 @@
 
 S rows, A active cases at most (padded), R requirements, Q measures, K cases known.
 
-Two slacks are kept. The exact one decides what is met. The search slack has the same sign and a slope where the
-exact one has none: compressed below -1, a continuous stand-in for a settling time that is not met, and far below
-everything a bounded term in the spectral abscissa for a loop that is not stable.
+Two slacks are kept. The exact one decides what is met. The search slack has the same sign and a slope where
+the exact one has none: compressed below -1, a continuous stand-in for a settling time that is not met, and
+far below everything a bounded term in the spectral abscissa for a loop that is not stable.
 """
 
 from __future__ import annotations
@@ -71,8 +71,8 @@ class Objective:
     kept       those of them that the archive remembers
     active     for each structure the case numbers it is judged on; starts with the nominal
     evaluations  loops scored so far (one compensator on one plant)
-    delayed    whether some case has dead time; by_stand_in: whether time responses with dead time come from the
-               rational stand-in at the moment, as they do while the search is on its way
+    delayed    whether some case has dead time; by_stand_in: whether time responses with dead time come from
+               the rational stand-in at the moment, as they do while the search is on its way
     """
 
     def __init__(self, task: Task, extra: tuple[Measure, ...] = ()) -> None:
@@ -182,8 +182,8 @@ class Objective:
     ) -> Scores:
         """Score every row on the active cases of its structure, or on the cases given for each structure.
 
-        hasty : do not follow the responses of loops that ring for long or come near to instability; what is not
-        looked at counts as absent. For starts, of which the best are wanted.
+        hasty : do not follow the responses of loops that ring for long or come near to instability; what is
+        not looked at counts as absent. For starts, of which the best are wanted.
         """
         judged_on = self.active if cases is None else cases
         count = np.array([len(judged_on[s]) for s in range(len(self.structures))])[rows.structure]
@@ -268,7 +268,8 @@ def _screen(task: Task) -> Screen:
 
 
 def _box(structure: Structure, task: Task, scales: Scales) -> tuple[FloatArray, FloatArray]:
-    """Range of every search coordinate: the structure's own, and REACH beyond all that plant and sheet speak of.
+    """Range of every search coordinate: the structure's own, and REACH beyond all that plant and sheet speak
+    of.
 
     A corner further out than that is no corner: it only blurs the arithmetic. The gain is left free.
     """

@@ -133,15 +133,18 @@ class Candidate:
     """One compensator as proposed: rounded values, scored on every case.
 
     structure, also  its name, and other structures that realise the same function
-    parameters       key -> tuned value, SI, in the structure's order; rounded (what is printed is what was scored)
+    parameters       key -> tuned value, SI, in the structure's order; rounded (what is printed is what was
+                     scored)
     numerator, denominator  C(s), descending powers
-    meets_all        every requirement, on every case (points inside the tolerance box that became cases included)
+    meets_all        every requirement, on every case (points inside the tolerance box that became cases
+                     included)
     measures         Q: what `values` holds, every quantity of the table and every requirement's own measure
     values           (K, Q), NaN is absent; `approximate` same shape
     stable           (K,)
     slack            (K, R), +inf where a requirement is not judged on that case
     worst_slack      least of it; `binding` = (requirement id, case name)
-    start, source    where the search set out from ("SIMC, closed-loop time 0.2 s"), and who published that rule
+    start, source    where the search set out from ("SIMC, closed-loop time 0.2 s"), and who published that
+                     rule
     goal             what it is the best at ("worst slack", "least control_peak", "disturbance_integral")
     ranked           why it stands where it stands
     """
@@ -177,7 +180,8 @@ class Candidate:
 class Scan:
     """How a structure was searched.
 
-    exhaustive   "exact" (the whole gain line), "dense" (a grid that covers the box, with its resolution) or "search"
+    exhaustive   "exact" (the whole gain line), "dense" (a grid that covers the box, with its resolution) or
+                 "search"
     restarts     polished starts; `agreeing` of them ended within 0.002 of the best
     resolution   of a dense scan, largest ratio between neighbouring values of a parameter
     settled      the optimum is taken as found

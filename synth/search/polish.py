@@ -2,15 +2,16 @@
 
 S rows, V search coordinates (padded), C constraint values a row, G cases of the quantity to improve.
 
-One iteration: forward differences of every slack, the step of a small programme inside a trust region, three trial
-points along it, and the radius follows what was gained. The programme is linear in the slacks and carries the
-curvature of their weighted sum, gathered from the differences of successive iterations, so that an optimum that lies
-in no corner of the constraints is found as fast as one that does. A call of the core costs much the same for one row
-as for a hundred, so the rows move together and each iteration is two calls.
+One iteration: forward differences of every slack, the step of a small programme inside a trust region, three
+trial points along it, and the radius follows what was gained. The programme is linear in the slacks and
+carries the curvature of their weighted sum, gathered from the differences of successive iterations, so that
+an optimum that lies in no corner of the constraints is found as fast as one that does. A call of the core
+costs much the same for one row as for a hundred, so the rows move together and each iteration is two calls.
 
-Sources: R. Fletcher and E. Sainz de la Maza, "Nonlinear programming and nonsmooth optimization by successive linear
-programming", Mathematical Programming 43 (1989) 235-256; the update of the curvature is that of Broyden, Fletcher,
-Goldfarb and Shanno (1970). Figures (steps, factors, limits) were measured on the families of benchmarks/problems.py.
+Sources: R. Fletcher and E. Sainz de la Maza, "Nonlinear programming and nonsmooth optimization by successive
+linear programming", Mathematical Programming 43 (1989) 235-256; the update of the curvature is the symmetric
+rank-one one of A. R. Conn, N. I. M. Gould and Ph. L. Toint, Mathematical Programming 50 (1991) 177-195.
+Figures (steps, factors, limits) were measured on the families of benchmarks/problems.py.
 """
 
 from __future__ import annotations
@@ -53,10 +54,11 @@ class Pace:
     radius, least   of the trust region at the start and at the end
     iterations      at most
     halve           after these iterations the worse half of each structure's rows is dropped, down to `field`
-    second          second differences in place of gathered curvature: dearer, for the last digits of an optimum
+    second          second differences in place of gathered curvature: dearer, for the last digits of an
+                    optimum
     """
 
-    radius: float = 0.3
+    radius: float = 0.4
     least: float = 2e-4
     iterations: int = 14
     halve: tuple[int, ...] = (3, 6)
@@ -72,7 +74,8 @@ def polish(
     pace: Pace | None = None,
     stop: Callable[[], bool] | None = None,
 ) -> Polished:
-    """Improve every row until its trust region has shrunk, or the pace says so. `stop` is asked once an iteration."""
+    """Improve every row until its trust region has shrunk, or the pace says so. `stop` is asked once an
+    iteration."""
     pace = pace or Pace()
     goals = goals or Goals.same(len(rows))
     field = _Field(objective, rows, goals, pace.radius)
@@ -109,8 +112,9 @@ def polish_to_exact(
 
 @dataclass(slots=True)
 class _Known:
-    """What a row remembers of its last iteration: coordinates (S, V), slopes (S, C, V) and (S, G, V), multipliers
-    (S, C) and (S, G), the curvature gathered so far (S, V, V), and whether there was an iteration (S,)."""
+    """What a row remembers of its last iteration: coordinates (S, V), slopes (S, C, V) and (S, G, V),
+    multipliers (S, C) and (S, G), the curvature gathered so far (S, V, V), and whether there was an
+    iteration (S,)."""
 
     x: FloatArray
     slope: FloatArray
@@ -211,7 +215,8 @@ class _Field:
     def _slopes(
         self, index: IntArray, here: Rows, goals: Goals, now: Terms
     ) -> tuple[FloatArray, FloatArray | None]:
-        """Forward differences of every constraint (S, C, V) and of the gain (S, G, V); backward at an upper end."""
+        """Forward differences of every constraint (S, C, V) and of the gain (S, G, V); backward at an upper
+        end."""
         row, variable = np.nonzero(self.free[index])
         length = np.maximum(0.02 * self.radius[index], 2e-5)[row]
         beyond = here.x[row, variable] + length > self.high[index][row, variable]
@@ -235,7 +240,8 @@ class _Field:
         return terms(self.objective, goals, self.objective.score(rows, remember=False))
 
     def _gathered(self, index: IntArray, slope: FloatArray, gain_slope: FloatArray | None) -> FloatArray:
-        """Curvature of the levels as the last multipliers weigh them, updated by what the slopes did since."""
+        """Curvature of the levels as the last multipliers weigh them, updated by what the slopes did
+        since."""
         known = self.known
         moved = self.x[index] - known.x[index]
         turned = -np.einsum("sc,scv->sv", known.multipliers[index], slope - known.slope[index])
@@ -244,8 +250,7 @@ class _Field:
                 "sc,scv->sv", known.gain_multipliers[index], gain_slope - known.gain_slope[index]
             )
         known.curvature[index] = updated(known.curvature[index], moved, turned, known.usable[index])
-        out: FloatArray = known.curvature[index]
-        return out
+        return positive(known.curvature[index])
 
     def _remember(
         self, index: IntArray, slope: FloatArray, gain_slope: FloatArray | None, step: Step
@@ -284,9 +289,7 @@ class _Field:
         hessian = np.zeros((count, variables, variables))
         hessian[:, one, other] = hessian[:, other, one] = mixed
         hessian[:, np.arange(variables), np.arange(variables)] = ahead + behind
-        value, vector = np.linalg.eigh(hessian / length[:, None, None] ** 2)
-        out: FloatArray = (vector * np.maximum(value, 0.0)[:, None, :]) @ vector.transpose(0, 2, 1)
-        return out
+        return positive(hessian / length[:, None, None] ** 2)
 
 
 def _change(ahead: FloatArray, base: FloatArray) -> FloatArray:
@@ -298,18 +301,22 @@ def _change(ahead: FloatArray, base: FloatArray) -> FloatArray:
 
 
 def updated(curvature: FloatArray, moved: FloatArray, turned: FloatArray, usable: BoolArray) -> FloatArray:
-    """H (S, V, V) after a move s (S, V) over which the gradient turned by y (S, V); kept where y·s is not positive,
-    so H stays positive semidefinite."""
-    product = (moved * turned).sum(axis=1)
-    size = np.sqrt((moved**2).sum(axis=1) * (turned**2).sum(axis=1))
-    use = usable & (product > 1e-4 * size) & (size > 0.0)
-    along = np.einsum("svw,sw->sv", curvature, moved)
-    energy = (moved * along).sum(axis=1)
-    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        down = along[:, :, None] * along[:, None, :] / energy[:, None, None]
-        up = turned[:, :, None] * turned[:, None, :] / product[:, None, None]
-    down = np.where((energy > 1e-12)[:, None, None], down, 0.0)
-    out: FloatArray = np.where(use[:, None, None], curvature - down + up, curvature)
+    """H (S, V, V) after a move s (S, V) over which the gradient turned by y (S, V): the symmetric rank-one
+    update, which starts from nothing and is exact for a quadratic after V moves. Skipped where it is ill
+    determined."""
+    missing = turned - np.einsum("svw,sw->sv", curvature, moved)
+    weight = (missing * moved).sum(axis=1)
+    size = np.sqrt((missing**2).sum(axis=1) * (moved**2).sum(axis=1))
+    use = usable & (np.abs(weight) > 1e-3 * size) & (size > 0.0)
+    change = missing[:, :, None] * missing[:, None, :] / np.where(use, weight, 1.0)[:, None, None]
+    out: FloatArray = np.where(use[:, None, None], curvature + change, curvature)
+    return out
+
+
+def positive(curvature: FloatArray) -> FloatArray:
+    """The part of H (S, V, V) with positive eigenvalues."""
+    value, vector = np.linalg.eigh(curvature)
+    out: FloatArray = (vector * np.maximum(value, 0.0)[:, None, :]) @ vector.transpose(0, 2, 1)
     return out
 
 

@@ -1,5 +1,5 @@
-"""The price list of a sheet that is not met: for each requirement, what it would have to be for a structure to meet
-all the rest, computed by improving that quantity alone while everything else stays met."""
+"""The price list of a sheet that is not met: for each requirement, what it would have to be for a structure
+to meet all the rest, computed by improving that quantity alone while everything else stays met."""
 
 from __future__ import annotations
 
@@ -91,7 +91,8 @@ def _outward(value: float, side: str) -> float:
 
 
 def _undominated(found: list[Price]) -> tuple[Price, ...]:
-    """Of each requirement and structure the cheapest; then only structures that ask less than every simpler one."""
+    """Of each requirement and structure the cheapest; then only structures that ask less than every simpler
+    one."""
     out = []
     for requirement in dict.fromkeys(p.requirement for p in found):
         mine = sorted(

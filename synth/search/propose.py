@@ -44,7 +44,8 @@ def propose(
 
     seeds : (structure, tuned values in SI) of earlier candidates to set out from as well.
     stop : asked often; True ends the search and keeps what is best so far (`interrupted`).
-    The same task, settings and seeds give the same outcome bit for bit, unless a time limit or `stop` ends it.
+    The same task, settings and seeds give the same outcome bit for bit, unless a time limit or `stop` ends
+    it.
     """
     settings = settings or Settings()
     wish = task.prefer
@@ -93,10 +94,11 @@ def propose(
 
 
 def rescore(task: Task, given: Sequence[Seed]) -> tuple[Candidate, ...]:
-    """Score compensators of known structures on the task's cases as they are: nothing is rounded, renamed or ranked.
+    """Score compensators of known structures on the task's cases as they are: nothing is rounded, renamed or
+    ranked.
 
-    given : (structure, tuned values in SI) each; a structure need not be among the task's. Raises KeyError for one
-    that there is not.
+    given : (structure, tuned values in SI) each; a structure need not be among the task's. Raises KeyError
+    for one that there is not.
     """
     made = [Draft(by_name(name), np.asarray(theta, dtype=float), goal="given") for name, theta in given]
     return candidates(task, made, task.plants, task.case_names)
@@ -116,7 +118,8 @@ def _seed_rows(campaign: Campaign, seeds: Sequence[Seed]) -> Rows | None:
 def _listed(
     campaign: Campaign, earlier: Wished | None = None
 ) -> tuple[list[Candidate], list[Candidate], Wished | None]:
-    """Every candidate found, the list to report, and where the preference led (to go on from, as `earlier`)."""
+    """Every candidate found, the list to report, and where the preference led (to go on from, as
+    `earlier`)."""
     task, objective = campaign.task, campaign.objective
     best = preferred(campaign, earlier)
     wished = [w for w in (best, extremes(campaign), others(campaign)) if w is not None]
@@ -142,8 +145,8 @@ def _wished_drafts(campaign: Campaign, wish: Wished) -> list[Draft]:
 
 
 def _inside(campaign: Campaign, listed: list[Candidate]) -> tuple[list[Candidate], bool]:
-    """Judge the list on the points inside the tolerance box. The worst failing point of each candidate becomes a
-    case of the search, which goes on from there; True when that happened."""
+    """Judge the list on the points inside the tolerance box. The worst failing point of each candidate
+    becomes a case of the search, which goes on from there; True when that happened."""
     task, objective = campaign.task, campaign.objective
     if task.interior is None:
         return listed, False

@@ -1,8 +1,8 @@
 """The order of what is proposed, and which candidates count as different.
 
-Without a preference: worst slack less COMPLEXITY for each tuned value; with one: that quantity on its worst case, among
-those that keep the reserve. What meets everything comes first. At most two of one structure; two are different
-when abs(ln(C1/C2)) exceeds APART somewhere within a decade of the crossover.
+Without a preference: worst slack less COMPLEXITY for each tuned value; with one: that quantity on its worst
+case, among those that keep the reserve. What meets everything comes first. At most two of one structure; two
+are different when abs(ln(C1/C2)) exceeds APART somewhere within a decade of the crossover.
 """
 
 from __future__ import annotations
@@ -135,7 +135,8 @@ def _response(c: Candidate, w: FloatArray) -> ComplexArray:
 
 
 def chosen(task: Task, found: list[Candidate], fallback: float) -> list[Candidate]:
-    """The list to report, in order: what is best of every structure, then seconds of a structure, all different.
+    """The list to report, in order: what is best of every structure, then seconds of a structure, all
+    different.
 
     Where something meets everything, only such are listed; else the closest approaches.
     """

@@ -2,10 +2,12 @@
 
 B points, P parameters. Nondimensional logarithms throughout; a low-discrepancy set feeds the first three:
 
-design        crossover, phase margin and the structure's own freedoms drawn; C placed, gain from abs(L(jω_c)) = 1
+design        crossover, phase margin and the structure's own freedoms drawn; C placed, gain from
+              abs(L(jω_c)) = 1
 crossover     crossover drawn and gain solved, corners free around it
 wide          everything log-uniform, three decades each way round the plant's own scales
-rules         published settings on this plant (synth.rules), at several crossovers and closed-loop time constants
+rules         published settings on this plant (synth.rules), at several crossovers and closed-loop time
+              constants
 """
 
 from __future__ import annotations
@@ -31,8 +33,8 @@ def halton(count: int, dimensions: int, seed: int) -> FloatArray:
     """Low-discrepancy points in (0, 1), shifted at random. (count, dimensions)
 
     Source: J. H. Halton, Numerische Mathematik 2 (1960) 84-90; the random shift is that of R. Cranley and
-    T. N. L. Patterson, SIAM J. Numerical Analysis 13 (1976) 904-914. (scipy.stats has richer ones, at half a second
-    of import.)
+    T. N. L. Patterson, SIAM J. Numerical Analysis 13 (1976) 904-914. (scipy.stats has richer ones, at half a
+    second of import.)
     """
     out = np.empty((count, dimensions))
     for d in range(dimensions):
@@ -66,10 +68,11 @@ def plant_band(objective: Objective) -> Band:
 
 
 def asked_band(bounds: tuple[Bound, ...]) -> Band | None:
-    """Where the requirements point at: half a decade round the crossovers that they suggest, None without any.
+    """Where the requirements point at: half a decade round the crossovers that they suggest, None without
+    any.
 
-    Rules of thumb for a loop with a phase margin near 60°: crossover about 0.6 of the bandwidth, 2 over the rise time,
-    4 over the settling time, 4 over the peak time.
+    Rules of thumb for a loop with a phase margin near 60°: crossover about 0.6 of the bandwidth, 2 over the
+    rise time, 4 over the settling time, 4 over the peak time.
     """
     thumbs = {"bandwidth": 0.6, "crossover": 1.0, "decay_rate": 1.5}
     times = {"rise_time": 2.0, "settling_time": 4.0, "peak_time": 4.0}
@@ -107,8 +110,8 @@ def sample(objective: Objective, s: int, count: int, seed: int, signs: tuple[int
 
 
 def line(objective: Objective, s: int, intervals: Intervals, signs: tuple[int, ...], count: int) -> Rows:
-    """One parameter: the whole gain line, dense on the intervals that stabilise; log-uniform over the reach of
-    abs(1/P) where there is none, so that a closest approach can still be told."""
+    """One parameter: the whole gain line, dense on the intervals that stabilise; log-uniform over the reach
+    of abs(1/P) where there is none, so that a closest approach can still be told."""
     band = plant_band(objective)
     size = np.abs(response(objective.task.plants, band.at(np.linspace(0.0, 1.0, 60)))) / objective.scales.gain
     size = size[np.isfinite(size) & (size > 0.0)]
@@ -165,8 +168,8 @@ def _wide(objective: Objective, s: int, count: int, seed: int, sign: int) -> Row
 
 
 def _corners(structure: Structure, u: FloatArray, low: float, high: float) -> FloatArray:
-    """Search coordinates: those with a range of their own spread over it, the free ones over (low, high), where a
-    time constant runs against its corner frequency."""
+    """Search coordinates: those with a range of their own spread over it, the free ones over (low, high),
+    where a time constant runs against its corner frequency."""
     bottom, top = structure.box()
     x = np.empty(u.shape)
     for j, parameter in enumerate(structure.parameters):

@@ -1,7 +1,8 @@
 """The front of two quantities among candidates that meet the rest: a sweep of the polish.
 
-For levels of the first quantity between its two extremes the second is improved, every level and every structure
-in lockstep. A sweep was chosen over a multi-objective sampler by measurement (benchmarks/bench_front.py).
+For levels of the first quantity between its two extremes the second is improved, every level and every
+structure in lockstep. A sweep was chosen over a multi-objective sampler by measurement
+(benchmarks/bench_front.py).
 """
 
 from __future__ import annotations
@@ -34,7 +35,8 @@ def tradeoff(
     progress: ProgressCall | None = None,
     stop: StopCall | None = None,
 ) -> tuple[FrontPoint, ...]:
-    """The front of two quantities over all structures, ordered by the first; empty where nothing meets the sheet.
+    """The front of two quantities over all structures, ordered by the first; empty where nothing meets the
+    sheet.
 
     Which way is better is the table's; a quantity without one (crossover) counts as better when smaller.
     """
@@ -91,7 +93,8 @@ def _range(campaign: Campaign, rows: Rows, measure: Measure) -> tuple[float, flo
 
 
 def _nearest(campaign: Campaign, rows: Rows, measure: Measure, level: float, count: int) -> Rows:
-    """For each structure the end from which the level is nearer; `rows` holds both ends, one after the other."""
+    """For each structure the end from which the level is nearer; `rows` holds both ends, one after the
+    other."""
     values = _values(campaign, rows, measure)
     index = []
     for i in range(count):

@@ -1,6 +1,7 @@
 """After the worst slack: the preferred quantity, and the alternatives that make a list worth choosing from.
 
-Starts are the tops of each structure and the best of the archive, so little is scored that was not near already.
+Starts are the tops of each structure and the best of the archive, so little is scored that was not near
+already.
 """
 
 from __future__ import annotations
@@ -88,7 +89,8 @@ def extremes(campaign: Campaign) -> Wished | None:
 
 
 def others(campaign: Campaign) -> Wished | None:
-    """Scored rows that meet the sheet and lie apart from the best of their structure: seconds for a short list."""
+    """Scored rows that meet the sheet and lie apart from the best of their structure: seconds for a short
+    list."""
     reserve = _reserve(campaign)
     rows, slack, _, _ = campaign.objective.archive.all()
     worst = slack.min(axis=1)
@@ -132,7 +134,8 @@ def _on_all_cases(campaign: Campaign, rows: Rows) -> FloatArray:
 def _confirmed(
     campaign: Campaign, rows: Rows, goals: Goals, pace: Pace, again: Pace
 ) -> tuple[Polished, Goals]:
-    """Polish, roughly and then to the end; then, as long as a case that is not active is violated, make it active and polish on."""
+    """Polish, roughly and then to the end; then, as long as a case that is not active is violated, make it
+    active and polish on."""
     objective = campaign.objective
     with objective.approximating():
         first = polish(objective, rows, goals, pace=pace, stop=campaign.halted)
@@ -158,7 +161,8 @@ def _confirmed(
 
 
 def _keeping(campaign: Campaign, rows: Rows, goals: Goals, pace: Pace) -> Polished:
-    """Polish with a penalty that is raised until every row keeps its reserve, or nearly all there is was tried."""
+    """Polish with a penalty that is raised until every row keeps its reserve, or nearly all there is was
+    tried."""
     reserve = np.array([aim.reserve for aim in goals.aims])[goals.aim] - MARGIN
     done = None
     for penalty in PENALTIES:
