@@ -16,6 +16,7 @@ from synth.loop.closed_loop import Loops, Rational, close, exact_degree, joined
 from synth.loop.frequency.stage import frequency_stage
 from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.roots import closed_roots
+from synth.loop.poles.doubt import doubts
 from synth.loop.poles.stage import PoleStage, needs_counting, pole_stage, statics
 from synth.loop.quantities import EVERY_QUANTITY, Measure
 from synth.loop.stand_in import damping, responses, without_dead_time, worthwhile
@@ -174,6 +175,7 @@ def _fill(out: Evaluation, rows: IntArray, loops: Loops, screen: Screen) -> None
     out.abscissa[rows] = stage.abscissa / loops.time_scale
     _write(out, rows, loops, stage.values, None)
     rows, loops, stage = _kept(rows, loops, stage, stage.stable)
+    _write_doubts(out, rows, loops, stage, stage.values)
     if rows.size and screen.least_damping > 0.0:
         sure = stage.surely_counted_damping(loops)
         early = sure < screen.least_damping
@@ -196,6 +198,7 @@ def _fill(out: Evaluation, rows: IntArray, loops: Loops, screen: Screen) -> None
         _write(out, rows, loops, {w: found[w.quantity] for w in wanted if w.quantity in found}, None)
         counted = stage.count(loops, counting, found.get("highest_fall"))
         _write(out, rows, loops, counted, None)
+        _write_doubts(out, rows, loops, stage, counted)
         out.reached[rows] = 1
         keep = np.ones(len(rows), dtype=bool)
         if screen.least_damping > 0.0:
@@ -288,3 +291,13 @@ def _write(
             out.values[rows, i] = value
             if approximate is not None and measure in approximate:
                 out.approximate[rows, i] = approximate[measure]
+
+
+def _write_doubts(
+    out: Evaluation, rows: IntArray, loops: Loops, stage: PoleStage, values: dict[Measure, FloatArray]
+) -> None:
+    """Mark quantities of the poles that rounding leaves open."""
+    if rows.size and not loops.dead_time.any():
+        for measure, doubt in doubts(loops, stage.poles, values).items():
+            for i in (i for i, wanted in enumerate(out.measures) if wanted == measure):
+                out.approximate[rows, i] = doubt

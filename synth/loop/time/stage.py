@@ -6,11 +6,11 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 from synth.loop.quantities import Measure
 from synth.loop.time.answers import AREA_ERROR, answer
-from synth.loop.time.clusters import cluster_modes
+from synth.loop.time.clusters import ClusterModes, cluster_modes
 from synth.loop.time.questions import Answers, Area, Passage, Supremum
 from synth.loop.time.residues import CROWDED, crowding, limits, step_modes
 from synth.loop.time.signals import Signals
@@ -28,6 +28,9 @@ REACHES = {
     "disturbance_area": "d",
 }
 """Which signal each quantity is read from."""
+
+LOST = 3e-8
+"""The modes must add up to the known value at 0+ to this part of the quantity; else they have lost digits."""
 
 
 @dataclass
@@ -64,15 +67,33 @@ def _plain_stage(loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...]) 
         return _Reading(loops, step_modes(loops, poles, signals), signals, asked).read()
     values = {m: np.full(len(loops), np.nan) for m in asked}
     approximate: dict[Measure, BoolArray] = {}
-    for rows, make in ((np.flatnonzero(~close), step_modes), (np.flatnonzero(close), cluster_modes)):
+    together = np.flatnonzero(close)
+    clusters = cluster_modes(loops.rows(together), poles[together], signals)
+    whole = _in_range(clusters)
+    apart = np.concatenate([np.flatnonzero(~close), together[~whole]])
+    parts: list[tuple[IntArray, Signals]] = [(together[whole], clusters.rows(np.flatnonzero(whole)))]
+    if apart.size:
+        parts.append((apart, step_modes(loops.rows(apart), poles[apart], signals)))
+    for rows, modes in parts:
         if rows.size:
-            some = loops.rows(rows)
-            part = _Reading(some, make(some, poles[rows], signals), signals, asked).read()
+            part = _Reading(loops.rows(rows), modes, signals, asked).read()
             for m in asked:
                 values[m][rows] = part.values[m]
             for m, doubt in part.approximate.items():
                 approximate.setdefault(m, np.zeros(len(loops), dtype=bool))[rows] = doubt
     return TimeStage(values, approximate)
+
+
+def _in_range(clusters: ClusterModes) -> BoolArray:
+    """(M,) whether the powers of t stay within the number range, from 0 to the end of the slowest mode.
+
+    They leave it where one cluster is ten decades slower than the others; whether the sum of single modes
+    has kept its digits then is asked of every loop.
+    """
+    end = 30.0 / -clusters.pole.real.max(axis=1)
+    values = clusters.curves(end[:, None] * np.array([0.0, 0.1, 1.0]))
+    out: BoolArray = np.isfinite(values).all(axis=(1, 2))
+    return out
 
 
 class _Reading:
@@ -91,6 +112,8 @@ class _Reading:
         self.has_end = np.ones(len(loops), dtype=bool)
         start, end = limits(loops, signals)
         unit = np.maximum(np.abs(start), np.abs(end))
+        # twenty nearly equal poles under hardly any feedback: rounding in the numerator is all that is left
+        off = np.abs(modes.curves(np.zeros((len(loops), 1)))[:, :, 0] - (start - end))
         if "y" in self.index:
             # y is counted in units of its final value: z = y / y(inf)
             y = self.index["y"]
@@ -100,7 +123,8 @@ class _Reading:
             factor[:, y] = np.where(self.has_end, 1.0 / final, 0.0)
             modes = modes.scaled(factor)
             unit[:, y] = np.maximum(1.0, np.abs(start[:, y] / final))
-        self.modes, self.unit, self.start, self.end = modes, unit, start, end
+            off[:, y] /= np.abs(final)
+        self.modes, self.unit, self.start, self.end, self.off = modes, unit, start, end, off
         self.suprema: dict[str | Measure, Supremum] = {}
         self.passages: dict[tuple[float, float, bool], Passage] = {}
         self.areas: dict[str, Area] = {}
@@ -118,9 +142,20 @@ class _Reading:
         )
         self.approximate: dict[Measure, BoolArray] = {}
         values = {m: self._value(m, found) for m in self.asked}
-        for m, doubt in self.approximate.items():
-            doubt &= np.isfinite(values[m])
+        for m in self.asked:
+            doubt = self.approximate.get(m, np.zeros(len(self.loops), dtype=bool)) | self._lost(m, values[m])
+            self.approximate[m] = doubt & np.isfinite(values[m])
         return TimeStage(values, self.approximate)
+
+    def _lost(self, m: Measure, value: FloatArray) -> BoolArray:
+        """Where the modes do not add up at 0+; an area by the longest time the error could last."""
+        name = m.quantity
+        off = self.off[:, self.index[REACHES[name]]]
+        size = np.abs(value) if name in ("control_peak", "disturbance_peak") else np.ones(len(self.loops))
+        if name in ("tracking_area", "disturbance_area"):
+            size = np.abs(value) * -self.modes.pole.real.max(axis=1) * (AREA_ERROR / 1e-6)
+        out: BoolArray = ~(off <= LOST * size)
+        return out
 
     def _ask(self, m: Measure) -> None:
         zero, one = np.zeros(len(self.loops)), np.ones(len(self.loops))
