@@ -273,7 +273,7 @@ def time_values(
         elif name == "disturbance_peak":
             out[m] = max(_top(load, 1.0)[0], _top(load, -1.0)[0])
         elif name == "disturbance_area":
-            # whether y comes back is read off coefficients: a slow tail is still on its way where the nodes end
+            # read off coefficients: where the nodes end a slow tail is still on its way
             out[m] = _area(load, 0.0) if subject.load()[-1] == 0 else np.inf
     return out
 

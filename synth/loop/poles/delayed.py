@@ -31,20 +31,25 @@ NEAREST = 7.0
 # there.
 FARTHEST = 400.0
 # Order of the rational stand-in of the delay whose roots are the near seeds.
-STAND_IN = 4
+STAND_IN = 3
 # So many of the rightmost are returned however far out they lie.
 RIGHTMOST = 6
+# Rows up to which a call is dearer than the numbers in it.
+FEW = 128
 # Where seeds that do not exist are put, in units of 1/θ: too far to push anything.
 FAR_AWAY = 1e9
 
 
-def delayed_poles(loops: Loops, reach: FloatArray) -> ComplexArray:
+def delayed_poles(
+    loops: Loops, reach: FloatArray, open_poles: ComplexArray | None = None
+) -> ComplexArray:
     """All roots with abs(p) <= reach, and never fewer than the rightmost one or pair.
 
     Parameters
     ----------
     loops : dead_time (M,) > 0, scaled.
     reach : (M,) scaled 1/time; 0 for the nearest ones alone. Beyond 400/θ it is taken as 400/θ.
+    open_poles : (M, n) roots of D, where they are known already.
 
     Returns
     -------
@@ -55,22 +60,26 @@ def delayed_poles(loops: Loops, reach: FloatArray) -> ComplexArray:
     Notes
     -----
     Seeds: roots of D Q + N P, P/Q the diagonal Padé quotient of e^(-s θ), and s = (ln(-N/D) + 2πjk)/θ on the
-    chain. All are moved together by Aberth's iteration on the transcendental function (Math. Comp. 27, 1973),
-    which keeps two from meeting in one root. The number within the circle is then checked by the argument
-    principle, and the rightmost by the bound abs(N/D) < e^(θ Re p) outside the circle or by the count right
-    of a line.
+    chain. Newton's method takes each to a root of the transcendental function. The number within the circle
+    is then checked by the argument principle, which also says where roots are missing; where that does not
+    help, all seeds are moved together by Aberth's iteration (Math. Comp. 27, 1973), which keeps two from
+    meeting in one root. The rightmost is checked by the bound abs(N/D) < e^(θ Re p) outside the circle or by
+    the count right of a line.
     """
     if len(loops) == 0:
         return np.zeros((0, 0), dtype=complex)
+    if open_poles is None:
+        open_poles = closed_roots(loops.denominator)
     delay = loops.dead_time
     asked = np.clip(np.nan_to_num(reach), NEAREST / delay, FARTHEST / delay)
     radius = asked.copy()
-    found = _within(loops, radius)
-    short = np.flatnonzero(~_holds_rightmost(loops, found, radius))
+    found = _within(loops, radius, open_poles)
+    short = np.flatnonzero(~_holds_rightmost(loops, found, radius, open_poles))
     while short.size:
         radius[short] = np.minimum(3.0 * radius[short], FARTHEST / delay[short])
-        found = _joined(found, short, _within(loops.rows(short), radius[short]))
-        lacking = short[~_holds_rightmost(loops.rows(short), found[short], radius[short])]
+        found = _joined(found, short, _within(loops.rows(short), radius[short], open_poles[short]))
+        sure = _holds_rightmost(loops.rows(short), found[short], radius[short], open_poles[short])
+        lacking = short[~sure]
         short = lacking[radius[lacking] * delay[lacking] < 0.999 * FARTHEST]
         astray = np.setdiff1d(lacking, short)
         if astray.size:
@@ -87,24 +96,32 @@ def characteristic(loops: Loops, s: ComplexArray) -> tuple[ComplexArray, Complex
     return d + n * late, slope_d + (slope_n - delay * n) * late
 
 
-def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
+def _within(loops: Loops, radius: FloatArray, open_poles: ComplexArray) -> ComplexArray:
     """All roots of each row with abs(p) <= radius; rows of like size are worked on together."""
     pairs = np.ceil(1.5 * radius * loops.dead_time / (2.0 * np.pi)).astype(np.intp) + 1
     size = np.ceil(np.log2(pairs)).astype(np.intp)
+    if len(loops) <= FEW:  # a few rows: longer lists for all cost less than more calls
+        size = np.where(size <= 3, size.max(initial=0, where=size <= 3), size)
     found = np.full((len(loops), 0), np.nan, dtype=complex)
     for one in np.unique(size):
         at = np.flatnonzero(size == one)
-        some, far = loops.rows(at), radius[at]
+        some, far = (loops, radius) if len(at) == len(loops) else (loops.rows(at), radius[at])
         with np.errstate(all="ignore"):  # rows that are not finite and seeds that run away end as NaN
-            roots = _kept(some, _refined(some, _seeds(some, int(pairs[at].max())), far))
-            for _ in range(4):
-                seeds = missing_roots(some, roots, far)
-                wanting = np.flatnonzero(np.isfinite(seeds.real).any(axis=1))
+            seeds = _seeds(some, int(pairs[at].max()), open_poles[at])
+            roots = _kept(some, _by_newton(some, _upper(seeds), far), apart=False)
+            for attempt in range(6):
+                lacking = missing_roots(some, roots, far)
+                wanting = np.flatnonzero(np.isfinite(lacking.real).any(axis=1))
                 if wanting.size == 0:
                     break
-                more = np.concatenate([roots[wanting], seeds[wanting]], axis=1)
-                part = some.rows(wanting)
-                roots = _joined(roots, wanting, _kept(part, _refined(part, more, far[wanting])))
+                more = np.concatenate([roots[wanting], lacking[wanting]], axis=1)
+                part, reach = some.rows(wanting), far[wanting]
+                if attempt == 0:
+                    better = _kept(part, _by_newton(part, _upper(more), reach), apart=False)
+                else:
+                    # from the beginning, and with care
+                    better = _kept(part, _refined(part, seeds[wanting] if attempt == 1 else more, reach))
+                roots = _joined(roots, wanting, better)
             outside = ~(np.abs(roots) <= far[:, None] * (1.0 + 1e-12))
             best = np.where(outside, -np.inf, roots.real).max(axis=1, initial=-np.inf)
             outside &= ~(roots.real > best[:, None])
@@ -113,12 +130,74 @@ def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
     return found
 
 
-def _seeds(loops: Loops, pairs: int) -> ComplexArray:
+def _seeds(loops: Loops, pairs: int, open_poles: ComplexArray) -> ComplexArray:
     """Near seeds and `pairs` chain pairs; with long delays the poles of L too, near which roots gather."""
     seeds = [_near_seeds(loops), _chain_seeds(loops, pairs)]
     if pairs > 4:
-        seeds.append(closed_roots(loops.denominator))
+        seeds.append(open_poles)
     return np.concatenate(seeds, axis=1)
+
+
+def _upper(seeds: ComplexArray) -> ComplexArray:
+    """The real ones and those of the upper half plane, in as few columns as hold them."""
+    there = seeds.imag >= 0.0
+    order = np.argsort(~there, axis=1, kind="stable")[:, : int(there.sum(axis=1).max(initial=0))]
+    return np.take_along_axis(np.where(there, seeds, np.nan), order, axis=1)
+
+
+def _by_newton(loops: Loops, seeds: ComplexArray, radius: FloatArray) -> ComplexArray:
+    """Newton's method from each seed by itself; several may end in one root, and a real one stays real.
+
+    Loops stand along the last axis here, which is twice as fast as the other way round.
+    """
+    roots = np.ascontiguousarray(seeds.T)
+    above, below = np.ascontiguousarray(loops.numerator.T), np.ascontiguousarray(loops.denominator.T)
+    above = above[int((above != 0.0).any(axis=1).argmax()) :]
+    delay, near = loops.dead_time, 1.5 * radius
+    active, last = np.arange(len(loops)), 9
+    for turn in range(last + 1):
+        if turn == last:
+            active = np.arange(len(loops))  # one more step for all: it squares what is left
+        here = roots if active.size == len(loops) else roots[:, active]
+        value, slope = _characteristic(above[:, active], below[:, active], delay[active], here)
+        step = value / slope
+        size, long = np.abs(here), np.abs(step)
+        step *= np.minimum(1.0, (0.5 * size + 0.5 / delay[active]) / np.maximum(long, 1e-300))
+        step[~np.isfinite(step)] = 0.0
+        roots[:, active] = here - step
+        moving = ((long > 1e-6 * size + 1e-12) & (size < near[active])).any(axis=0)
+        if turn == last:
+            break
+        if not moving.any():
+            last = turn + 1
+        elif 2 * np.count_nonzero(moving) < active.size:
+            active = active[moving]
+    np.abs(roots.imag, out=roots.imag)  # the mirror image of a root that was left for its other half
+    return roots.T
+
+
+def _characteristic(
+    above: FloatArray, below: FloatArray, delay: FloatArray, s: ComplexArray
+) -> tuple[ComplexArray, ComplexArray]:
+    """Δ and dΔ/ds, coefficients first and loops last: (·, M), (n + 1, M), (M,), (q, M) -> (q, M) twice."""
+    d, slope_d = _value_and_slope(below, s)
+    n, slope_n = _value_and_slope(above, s)
+    late = np.exp(-s * delay)
+    n *= late
+    slope_n *= late
+    return d + n, slope_d + slope_n - delay * n
+
+
+def _value_and_slope(coefficients: FloatArray, s: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+    value = np.empty_like(s)
+    value[:] = coefficients[0]
+    slope = np.zeros_like(s)
+    for one in coefficients[1:]:
+        slope *= s
+        slope += value
+        value *= s
+        value += one
+    return value, slope
 
 
 def _near_seeds(loops: Loops) -> ComplexArray:
@@ -178,7 +257,7 @@ def _refined(loops: Loops, seeds: ComplexArray, radius: FloatArray) -> ComplexAr
         step = newton / (1.0 - newton * apart.sum(axis=2))
         size, long = np.abs(here), np.abs(step)
         limit = 0.5 * size + 0.5 / some.dead_time[:, None]
-        step = np.where(long > limit, step * (limit / long), step)
+        step = np.where(long > limit, step * (limit / np.maximum(long, 1e-300)), step)
         step[~np.isfinite(step) | lost[active]] = 0.0
         roots[active] = here - step
         moving = ((long > 1e-5 * size + 1e-12) & (size < 1.5 * radius[active, None])).any(axis=1)
@@ -196,18 +275,24 @@ def _refined(loops: Loops, seeds: ComplexArray, radius: FloatArray) -> ComplexAr
     return out
 
 
-def _kept(loops: Loops, roots: ComplexArray) -> ComplexArray:
+def _kept(loops: Loops, roots: ComplexArray, *, apart: bool = True) -> ComplexArray:
     """Converged roots, each once, made conjugate: upper half and reals first found, lower half by
-    reflection."""
+    reflection.
+
+    apart : the roots were kept from meeting, so two that lie close are two; else they are one found twice.
+    """
     with np.errstate(all="ignore"):
         value, slope = characteristic(loops, roots)
         late = np.exp(-roots.real * loops.dead_time[:, None])
         size = np.abs(roots)
         rounding = magnitude_sum(loops.denominator, size) + magnitude_sum(loops.numerator, size) * late
         good = (np.abs(value) <= 1e-11 * rounding) & np.isfinite(value)
-        # the distance to the true root that rounding leaves open, as for a double root where the slope is
-        # small
-        fuzz = np.sqrt(np.finfo(float).eps) * 1e-3 * size + 1e-15 * rounding / np.abs(slope)
+        # the distance to the true root that rounding and the last step leave open, as for a double root where
+        # the slope is small
+        left = 1e-15 * rounding if apart else 2e-15 * rounding + 4.0 * np.abs(value)
+        if not apart:  # Newton's method is slow at a double root: it is left to Aberth's
+            good &= np.abs(value) <= 1e-9 * size * np.abs(slope)
+        fuzz = np.sqrt(np.finfo(float).eps) * 1e-3 * size + left / np.abs(slope)
         fuzz = np.minimum(fuzz, 1e-4 * size) + 1e-300
     upper = np.where(good, roots.real + 1j * np.abs(roots.imag), np.nan)
     real = upper.imag <= np.minimum(1e-9 * size, fuzz)
@@ -219,7 +304,7 @@ def _kept(loops: Loops, roots: ComplexArray) -> ComplexArray:
     # the two halves of one pair, or one root found twice: the same half may not occur twice within rounding
     gap = np.abs(upper[:, :, None] - upper[:, None, :])
     earlier = np.tril(np.ones((upper.shape[1], upper.shape[1]), dtype=bool), -1)
-    twin = (gap <= fuzz[:, :, None]) & earlier
+    twin = (gap <= (fuzz[:, :, None] if apart else fuzz[:, :, None] + fuzz[:, None, :])) & earlier
     real = upper.imag == 0.0
     # of reals that coincide a double root keeps two, told apart by the halves they came in from
     same_half = below[:, :, None] == below[:, None, :]
@@ -300,20 +385,15 @@ def _with_rightmost(loops: Loops, found: ComplexArray) -> ComplexArray:
         return _kept(loops, _refined(loops, np.concatenate([found, seeds], axis=1), everywhere))
 
 
-def _holds_rightmost(loops: Loops, found: ComplexArray, radius: FloatArray) -> BoolArray:
+def _holds_rightmost(
+    loops: Loops, found: ComplexArray, radius: FloatArray, open_poles: ComplexArray
+) -> BoolArray:
     """Whether no root outside the circle lies right of the rightmost one found (or of the far chain).
     (M,)."""
     chain = chain_abscissa(loops)
     with np.errstate(all="ignore"):
         best = np.where(np.isnan(found.real), -np.inf, found.real).max(axis=1, initial=-np.inf)
-        far = np.abs(loops.denominator[:, 0]) * radius**loops.order
-        rest = (
-            magnitude_sum(loops.denominator[:, 1:], radius[:, None])[:, 0]
-            if loops.order
-            else np.zeros(len(loops))
-        )
-        most = magnitude_sum(loops.numerator, radius[:, None])[:, 0]
-        sure: BoolArray = (far > rest) & (most < (far - rest) * np.exp(loops.dead_time * best))
+        sure: BoolArray = _most_outside(loops, radius, open_poles, best) < np.exp(loops.dead_time * best)
     doubtful = np.flatnonzero(~sure)
     if doubtful.size:
         line = np.maximum(best, chain)[doubtful] + 1e-6 / loops.dead_time[doubtful]
@@ -326,3 +406,23 @@ def _holds_rightmost(loops: Loops, found: ComplexArray, radius: FloatArray) -> B
         broken = ~np.isfinite(loops.closed[doubtful].sum(axis=1))
         sure[doubtful[empty]] = (alone | broken)[empty]
     return sure
+
+
+def _most_outside(
+    loops: Loops, radius: FloatArray, open_poles: ComplexArray, line: FloatArray
+) -> FloatArray:
+    """A bound of abs(N/D) outside the circle and right of the line, (M,).
+
+    abs(N)/r^n falls with r. Each factor abs(s - p)/r of D is at least 1 - abs(p)/r; for p in the left half
+    plane its square is 1 + (abs(p)² + 2 Re(-p) Re s - 2 Im p Im s)/r², at least 1 + (abs(p)² + 2 Re(-p)
+    line)/r² - 2 abs(Im p)/r, which need not be near 0 where p is large.
+    """
+    r = radius[:, None]
+    top = magnitude_sum(loops.numerator / np.abs(loops.denominator[:, :1]), r)[:, 0] / radius**loops.order
+    size = np.abs(open_poles) / r
+    ends = size * size - 2.0 * open_poles.real / r * np.minimum(line / radius, 0.0)[:, None]
+    squared = 1.0 + np.minimum(ends, 0.0) - 2.0 * np.abs(open_poles.imag) / r
+    squared = np.where(open_poles.real <= 0.0, squared, 0.0)
+    least = np.maximum(np.maximum(1.0 - size, 0.0), np.sqrt(np.maximum(squared, 0.0)))
+    out: FloatArray = top / least.prod(axis=1)
+    return out
