@@ -30,7 +30,7 @@ class _Look:
         self.subject = subject
         self.w = _grid(subject, poles)
         self.l = self.loop(self.w)
-        above, below = subject.exact()
+        above, below = subject.exact
         total = above[-1] + below[-1]
         self.k = abs(float(above[0] / below[0]))
         self.sign_end = float(above[0] / below[0])

@@ -29,7 +29,7 @@ Fixed = tuple[int, int]  # real and imaginary part in units of 2^-_BITS
 
 def poles(subject: Subject) -> ComplexArray | None:
     """All poles [1/s]; with dead time those nearest the origin; None where it is of neutral type."""
-    above, below = subject.exact()
+    above, below = subject.exact
     if subject.dead_time == 0.0:
         return refined([a + b for a, b in zip(above, below, strict=True)])
     if above[0] != 0:

@@ -141,8 +141,8 @@ def _values(
 
 def _statics(subject: Subject) -> dict[str, float]:
     """Limits at s -> 0, in exact arithmetic."""
-    above, below = subject.exact()
-    load = subject.load()
+    above, below = subject.exact
+    load = subject.load
     closed = above[-1] + below[-1]
     out: dict[str, float] = {}
     if closed == 0:
@@ -166,7 +166,7 @@ def _of_poles(subject: Subject, measure: Measure, roots: ComplexArray, highest_f
         return float(-roots.real.max()) if roots.size else np.inf
     size = np.abs(roots)
     share = _shares(subject, roots)
-    above, _ = subject.exact()
+    above, _ = subject.exact
     if measure.below is not None and measure.quantity == "damping_ratio":
         counted = size <= measure.below
     elif not np.isfinite(highest_fall) or above[-1] == 0:
@@ -186,7 +186,7 @@ def _of_poles(subject: Subject, measure: Measure, roots: ComplexArray, highest_f
 
 def _shares(subject: Subject, roots: ComplexArray) -> FloatArray:
     """|residue of T/s| / |T(0)| of each pole, pairs doubled."""
-    above, below = (np.array([float(c) for c in p]) for p in subject.exact())
+    above, below = (np.array([float(c) for c in p]) for p in subject.exact)
     theta = subject.dead_time
     with np.errstate(all="ignore"):
         e = np.exp(-roots * theta)

@@ -6,9 +6,10 @@ need the coefficients, which are taken from the plant case and multiplied exactl
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
+from functools import cached_property
 
 import numpy as np
 
@@ -19,7 +20,7 @@ from synth.model.plant import Plant
 Exact = tuple[Fraction, ...]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)
 class Subject:
     """One closed loop, SI units.
 
@@ -51,25 +52,39 @@ class Subject:
         """P(jω), from the sheet's own words."""
         return self.form.at((1j * w).astype(complex), self.parameters)
 
+    @cached_property
     def exact(self) -> tuple[Exact, Exact]:
         """N_P N_C and D_P D_C without rounding, both as long as D."""
         below = _product(self.plant.denominator, self.denominator)
         above = _product(self.plant.numerator, self.numerator)
-        return (Fraction(0),) * (len(below) - len(above)) + above, below
+        return _padded(above, len(below)), below
 
+    @cached_property
     def load(self) -> Exact:
-        """N_P D_C without rounding."""
-        return _product(self.plant.numerator, self.denominator)
+        """N_P D_C without rounding, as long as D."""
+        return _padded(_product(self.plant.numerator, self.denominator), len(self.exact[1]))
 
-    def feedthrough(self) -> float:
-        """L(∞) without the dead time."""
-        above, below = self.exact()
-        return float(above[0] / below[0])
+    @cached_property
+    def control(self) -> Exact:
+        """D_P N_C without rounding, as long as D."""
+        return _padded(_product(self.plant.denominator, self.numerator), len(self.exact[1]))
+
+
+def scaled(polynomial: Sequence[Fraction], power: int) -> FloatArray:
+    """Descending coefficients for time counted in units of 2^-power seconds."""
+    degrees = np.arange(len(polynomial) - 1, -1, -1)
+    out: FloatArray = np.ldexp(np.array([float(c) for c in polynomial]), power * degrees)
+    return out
+
+
+def _padded(polynomial: Exact, length: int) -> Exact:
+    return (Fraction(0),) * (length - len(polynomial)) + polynomial
 
 
 def _product(a: tuple[float, ...], b: tuple[float, ...]) -> Exact:
     out = [Fraction(0)] * (len(a) + len(b) - 1)
-    for i, x in enumerate(a):
-        for j, y in enumerate(b):
-            out[i + j] += Fraction(x) * Fraction(y)
+    first, second = [Fraction(x) for x in a], [Fraction(y) for y in b]
+    for i, x in enumerate(first):
+        for j, y in enumerate(second):
+            out[i + j] += x * y
     return tuple(out)

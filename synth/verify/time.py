@@ -1,13 +1,9 @@
-"""Step responses again: exact exponentials of a state-space realisation, on a grid of their own.
+"""Step responses again: exact exponentials of a state-space realisation, on panels of their own.
 
-Without dead time the closed loop is advanced by the matrix exponential, step after step, the step doubling as
-fast modes die out. With dead time the method of steps is used: over one dead time after the other the delayed
-output is a known input, cubic between the nodes, and the open loop is advanced exactly for such an input.
-Between nodes values and slopes define a cubic; every quantity is read from these cubics. No poles' residues
-are involved.
-
-Source of the exponential with inputs: C. F. Van Loan, Computing integrals involving the matrix exponential,
-IEEE Trans. Automatic Control 23 (1978) 395-404.
+One realisation in controllable form drives all three responses. Without dead time the closed loop is advanced
+by exp(A h). With dead time the method of steps is used: over one dead time after the other the delayed output
+is a known polynomial on each panel and the open loop is advanced exactly under it; once only a few true poles
+are alive their modes take over, provided that they reproduce the last dead time simulated.
 """
 
 from __future__ import annotations
@@ -15,45 +11,25 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.linalg import expm
 
 from synth.loop.arrays import ComplexArray, FloatArray
 from synth.loop.quantities import Measure
-from synth.verify.subject import Subject
+from synth.verify.exponential import ladder
+from synth.verify.panels import NODES, PER_PANEL, POINTS, Trace, edges, plan
+from synth.verify.subject import Subject, scaled
 
-_PER_TURN = 64  # nodes in a period of the fastest mode that still counts
-_DEAD = 1e-9  # amplitude at which a mode no longer counts
-_MOST_NODES = 100_000
-_MOST_STEPS = 20_000  # with dead time
+_DEAD = 30.0  # a mode counts until it has shrunk by e^-30
+_DEAD_IN_A_TURN = 45.0  # layers carry powers of t as well
+_MOST_PANELS = 60_000
+_MOST_IN_A_TURN = 60
+_TURNS = (24, 64, 160, 400, 1000, 2500)
+_SETTLED = 1e-11
+_MATCH = 1e-9
+_RESOLVED = 1e-8
 
 
 class NotSimulated(Exception):
-    """The response takes more nodes than a second opinion may cost."""
-
-
-@dataclass(frozen=True, slots=True)
-class Trace:
-    """One signal as cubics: cell i runs from t[i] to t[i] + h[i], values and slopes at its two ends."""
-
-    t: FloatArray
-    h: FloatArray
-    left: FloatArray
-    right: FloatArray
-    slope_left: FloatArray
-    slope_right: FloatArray
-
-    def at(self, cell: int, x: FloatArray) -> FloatArray:
-        """Values in one cell at 0 <= x <= 1 of its width."""
-        h = self.h[cell]
-        a, b = self.left[cell], self.right[cell]
-        p, q = self.slope_left[cell] * h, self.slope_right[cell] * h
-        out: FloatArray = (
-            a * (1 - x) ** 2 * (1 + 2 * x)
-            + b * x**2 * (3 - 2 * x)
-            + p * x * (1 - x) ** 2
-            - q * x**2 * (1 - x)
-        )
-        return out
+    """The response takes more panels than a second opinion may cost."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,182 +43,238 @@ class Response:
 
 def respond(subject: Subject, poles: ComplexArray | None) -> Response:
     """Simulate until every mode has died out. Raises NotSimulated."""
-    if subject.dead_time > 0.0:
-        return _with_dead_time(subject, poles)
-    assert poles is not None
-    return _without_dead_time(subject, poles)
+    with np.errstate(over="ignore", under="ignore"):
+        if subject.dead_time > 0.0:
+            return _Delayed(subject, poles).response()
+        assert poles is not None
+        return _without_dead_time(subject, poles)
 
 
-def _realised(
-    numerator: tuple[float, ...], denominator: tuple[float, ...], unit: float
-) -> tuple[FloatArray, ...]:
-    """(A, b, c, d) in controllable form, time counted in `unit` seconds."""
-    scale = unit ** -np.arange(len(denominator) - 1, -1, -1.0)
-    den = np.asarray(denominator) * scale
-    num = np.concatenate((np.zeros(len(denominator) - len(numerator)), numerator)) * scale
-    num, den = num / den[0], den / den[0]
-    n = len(den) - 1
-    d = num[0]
-    a = np.diag(np.ones(n - 1), 1) if n else np.zeros((0, 0))
+@dataclass(frozen=True, slots=True)
+class _Realised:
+    """z of D(d/dt) z = v in a state x of n derivatives: x' = a x + b v, and the signals rows x + direct v.
+
+    The states are scaled by the sizes of D's roots, slowest first, so each row of `a` has the size of its
+    root and slow modes keep their digits.
+    """
+
+    a: FloatArray
+    b: FloatArray
+    rows: FloatArray
+    direct: FloatArray
+    first: float  # x of z = 1 at rest
+
+
+def _realised(polynomials: list[FloatArray], below: FloatArray, sizes: FloatArray) -> _Realised:
+    """polynomials : numerators of the signals over `below`, all (n + 1,) descending. sizes (n,) of the roots."""
+    n = len(below) - 1
+    top = np.array(polynomials) / below[0]
+    monic = below / below[0]
+    some = sizes[sizes > 0.0]
+    floor = float(some.min()) if some.size else 1.0
+    scale = np.concatenate(([1.0], np.cumprod(np.sort(np.maximum(sizes, floor)))))
+    direct = top[:, 0]
+    rows = (top[:, 1:] - direct[:, None] * monic[1:])[:, ::-1] * scale[:n]
+    a = np.diag(scale[1:n] / scale[: n - 1], 1) if n else np.zeros((0, 0))
     b = np.zeros(n)
     if n:
-        a[-1] = -den[1:][::-1]
-        b[-1] = 1.0
-    c = (num[1:] - d * den[1:])[::-1]
-    return a, b, c, np.array(d)
-
-
-def _open(subject: Subject, unit: float) -> tuple[FloatArray, ...]:
-    """States x = [plant, compensator], inputs (r, d, y): x' = A x + B (r, d, y); w = C x + D (r, d, y) is the
-    plant's output before the dead time, u = Cu x + Du (r, d, y)."""
-    ap, bp, cp, dp = _realised(subject.plant.numerator, subject.plant.denominator, unit)
-    ac, bc, cc, dc = _realised(subject.numerator, subject.denominator, unit)
-    n, m = len(bp), len(bc)
-    a = np.block([[ap, np.outer(bp, cc)], [np.zeros((m, n)), ac]])
-    e = np.array([1.0, 0.0, -1.0])  # r - y
-    load = np.array([0.0, 1.0, 0.0])
-    b = np.vstack((np.outer(bp, dc * e + load), np.outer(bc, e)))
-    c = np.concatenate((cp, dp * cc))
-    d = dp * (dc * e + load)
-    cu = np.concatenate((np.zeros(n), cc))
-    return a, b, c, d, cu, dc * e
+        a[-1] = -monic[1:][::-1] * scale[:n] / scale[n - 1]
+        b[-1] = 1.0 / scale[n - 1]
+    return _Realised(a, b, rows, direct, 1.0)
 
 
 def _without_dead_time(subject: Subject, poles: ComplexArray) -> Response:
     sizes = np.abs(poles)
-    unit = float(1.0 / np.exp(np.log(sizes).mean())) if sizes.size else 1.0
-    a, b, c, d, cu, du = _open(subject, unit)
-    # y = c x + d (r, d, y): close the algebraic loop
-    close = 1.0 / (1.0 - d[2])
-    cy, dy = c * close, d[:2] * close
-    acl, bcl = a + np.outer(b[:, 2], cy), b[:, :2] + np.outer(b[:, 2], dy)
-    cul, dul = cu + du[2] * cy, du[:2] + du[2] * dy
-    n = len(acl)
+    power = round(float(np.log2(sizes).mean())) if sizes.size else 0
+    unit = 2.0**-power
+    above, below = subject.exact
+    closed = scaled([a + b for a, b in zip(above, below, strict=True)], power)
+    closed = np.trim_zeros(closed, "f")
+    parts = [scaled(p, power) for p in (above, subject.control, subject.load)]
+    parts = [p[len(p) - len(closed) :] for p in parts]
+    final = np.array([p[-1] / closed[-1] for p in parts])
     p = poles * unit
-    parts = []
-    x = np.zeros((n, 2))
-    t = 0.0
-    nodes = 0
-    end = float(np.max(-np.log(_DEAD) / -p.real)) if p.size else 1.0
-    while t < end:
-        alive = p[np.exp(p.real * t) > _DEAD]
-        if not alive.size:
-            break
-        h = 2.0 * np.pi / (_PER_TURN * np.abs(alive).max())
-        # long enough for the fastest mode to halve, so that steps grow as fast as modes die
-        fastest = alive[np.abs(alive).argmax()]
-        count = int(np.clip(np.ceil(np.log(2.0) / -fastest.real / h), 64, _MOST_NODES))
-        count = min(count, max(2, int(np.ceil((end - t) / h)) + 1))
-        nodes += count
-        if nodes > _MOST_NODES:
-            raise NotSimulated(f"more than {_MOST_NODES} nodes")
-        block = _advance(acl, bcl, x, h, count)
-        parts.append((t + h * np.arange(count), np.full(count, h), block))
-        x = block[-1]
-        t += h * count
-    times = np.concatenate([q[0] for q in parts])
-    steps = np.concatenate([q[1] for q in parts])
-    left = np.concatenate([q[2][:-1] for q in parts])
-    right = np.concatenate([q[2][1:] for q in parts])
+    sizes = np.abs(p)
+    loop = _realised(parts, closed, sizes)
+    n = len(loop.a)
+    base = PER_PANEL / sizes.max() if n else 1.0
+    stages = plan(sizes, -p.real, base=base, start=0.0, whole=None, dead=_DEAD) if n else [(0, 1)]
+    if sum(count for _, count in stages) > _MOST_PANELS:
+        raise NotSimulated(f"more than {_MOST_PANELS} panels")
+    rungs = ladder(loop.a, None, base, max(level for level, _ in stages) + 1)
+    x = np.zeros(n)
+    if n:
+        x[0] = -1.0 / closed[-1] * closed[0]
+    found = []
+    for level, count in stages:
+        growth = rungs[level].growth
+        starts = _advance(growth[-1], x, count)
+        x = starts[-1] + growth[-1] @ starts[-1]
+        # (3, 16, n) rows of the signals at the nodes
+        reading = loop.rows[:, None, :] + np.einsum("sn,jnm->sjm", loop.rows, growth)
+        found.append(np.einsum("pm,sjm->spj", starts, reading))
+    levels, begins = edges(stages)
+    signals = np.concatenate(found, axis=1) + final[:, None, None]
+    start = begins * (base * unit)
+    length = (1 << levels) * (base * unit)
+    return Response(*(Trace(start, length, s) for s in signals))
 
-    def trace(c_row: FloatArray, d_row: FloatArray, k: int) -> Trace:
-        rate = c_row @ acl
-        kick = float(c_row @ bcl[:, k])
-        return Trace(
-            times * unit,
-            steps * unit,
-            left[:, :, k] @ c_row + d_row[k],
-            right[:, :, k] @ c_row + d_row[k],
-            (left[:, :, k] @ rate + kick) / unit,
-            (right[:, :, k] @ rate + kick) / unit,
+
+def _advance(growth: FloatArray, x: FloatArray, count: int) -> FloatArray:
+    """(count, n): x and what x + growth x makes of it again and again, by doubling the number known."""
+    out = np.empty((count, len(x)))
+    out[0] = x
+    known = 1
+    while known < count:
+        more = min(known, count - known)
+        out[known : known + more] = out[:more] + out[:more] @ growth.T
+        growth = 2.0 * growth + growth @ growth
+        known += more
+    return out
+
+
+class _Delayed:
+    """A loop with dead time, time counted in dead times ("turns"). Signals: y, u, and y under load."""
+
+    def __init__(self, subject: Subject, poles: ComplexArray | None) -> None:
+        theta = subject.dead_time
+        self.unit = theta
+        above, below = subject.exact
+        ratio = theta ** np.arange(len(below) - 1, -1, -1.0)
+        parts = (above, subject.control, subject.load)
+        powers = [np.array([float(c) for c in p]) / ratio for p in parts]
+        self.below = np.array([float(c) for c in below]) / ratio
+        lead = self.below[0]
+        self.below /= lead
+        self.parts = [p / lead for p in powers]
+        rest = self.below[-1] + self.parts[0][-1]
+        self.final = np.array([p[-1] / rest for p in self.parts])
+        self.rest = rest
+        self.open = np.roots(self.below)
+        self.poles = np.empty(0, dtype=complex) if poles is None else poles * theta
+        self.poles = self.poles[self.poles.imag >= 0.0]
+
+    def response(self) -> Response:
+        traces = self._traces(1.0)
+        if max(t.unresolved() for t in traces) > _RESOLVED:
+            traces = self._traces(2.0)
+        if max(t.unresolved() for t in traces) > 100.0 * _RESOLVED:
+            raise NotSimulated("its panels are too wide")
+        return Response(*(Trace(t.start * self.unit, t.length * self.unit, t.values) for t in traces))
+
+    def _turn(self, finer: float) -> None:
+        """What one dead time makes of (x at its begin, y - y∞ on its panels): `self.step`, and u and the load
+        response on the way."""
+        sizes = np.abs(self.open)
+        fastest = max(float(sizes.max(initial=0.0)), 1.0) * finer
+        depth = max(0, int(np.ceil(np.log2(fastest / PER_PANEL))))
+        whole = 1 << depth
+        base = 1.0 / whole
+        stages = plan(
+            sizes * finer, -self.open.real, base=base, start=0.0, whole=whole, dead=_DEAD_IN_A_TURN
+        )
+        levels, begins = edges(stages)
+        if len(levels) > _MOST_IN_A_TURN:
+            raise NotSimulated(f"more than {_MOST_IN_A_TURN} panels in a dead time")
+        self.begins, self.lengths = begins * base, (1 << levels) * base
+        loop = _realised(self.parts, self.below, sizes)
+        rungs = ladder(loop.a, loop.b, base, int(levels.max()) + 1)
+        self.n = n = len(loop.a)
+        wide = n + NODES * len(levels)
+        x = np.eye(n, wide)
+        out = np.zeros((3, len(levels), NODES, wide))
+        for i, level in enumerate(levels):
+            rung = rungs[level]
+            assert rung.driven is not None
+            own = slice(n + NODES * i, n + NODES * (i + 1))
+            states = x + rung.growth @ x
+            states[:, :, own] -= rung.driven
+            out[:, i] = np.einsum("sn,jnw->sjw", loop.rows, states)
+            out[:, i, :, own] -= loop.direct[:, None, None] * np.eye(NODES)
+            x = states[-1]
+        signals = out.reshape(3, -1, wide)
+        self.step = np.vstack((x, signals[0]))
+        self.reading = signals[1:]
+        self.begin = np.full(wide, -self.final[0])
+        self.begin[:n] = 0.0
+        if n:
+            self.begin[0] = -1.0 / self.rest
+
+    def _traces(self, finer: float) -> tuple[Trace, ...]:
+        self._turn(finer)
+        known = [self.begin]
+        for turns in _TURNS:
+            if turns * len(self.begins) > _MOST_PANELS:
+                break
+            while len(known) < turns:
+                known.append(self.step @ known[-1])
+            states = np.array(known)
+            y = states[:, self.n :]
+            u = states @ self.reading[0].T
+            after = states @ self.reading[1].T
+            load = np.vstack((np.full((1, y.shape[1]), -self.final[2]), after[:-1]))
+            errors = np.array([y, u, load])
+            most = np.abs(errors + self.final[:, None, None]).max(axis=(1, 2))
+            most[most == 0.0] = 1.0
+            left = (np.abs(errors[:, -1]).max(axis=1) / most).max()
+            if not np.isfinite(left):
+                break
+            if left < _SETTLED:
+                return self._joined(errors, turns, None)
+            modes = self._modes(turns)
+            now = self._of_modes(modes, (turns - 1 + self.begins)[:, None] + self.lengths[:, None] * POINTS)
+            gap = np.abs(now.reshape(3, -1) - errors[:, -1]).max(axis=1) / most
+            if gap.max() < _MATCH:
+                return self._joined(errors, turns, modes)
+        raise NotSimulated("it has not died out after many dead times")
+
+    def _modes(self, turns: int) -> tuple[ComplexArray, ComplexArray]:
+        """Poles (m,) still alive then, and their weights (3, m) in the three signals."""
+        p = self.poles
+        p = p[-p.real * (turns - 1) < _DEAD + 10.0]
+        top = self.parts[0]
+        e = np.exp(-p)
+        n = np.polyval(top, p)
+        slope = np.polyval(np.polyder(self.below), p) + (np.polyval(np.polyder(top), p) - n) * e
+        share = np.where(p.imag > 0.0, 2.0, 1.0) / (slope * p)
+        return p, np.array(
+            [n * e * share, np.polyval(self.parts[1], p) * share, np.polyval(self.parts[2], p) * e * share]
         )
 
-    return Response(trace(cy, dy, 0), trace(cul, dul, 0), trace(cy, dy, 1))
+    @staticmethod
+    def _of_modes(modes: tuple[ComplexArray, ComplexArray], t: FloatArray) -> FloatArray:
+        p, weights = modes
+        grown = np.exp(t[..., None] * p)
+        out: FloatArray = np.einsum("sm,...m->s...", weights, grown).real
+        return out
 
-
-def _advance(a: FloatArray, b: FloatArray, x: FloatArray, h: float, count: int) -> FloatArray:
-    """States (count + 1, n, inputs) under constant unit inputs, by doubling the number known."""
-    n, inputs = b.shape
-    big = np.zeros((n + inputs, n + inputs))
-    big[:n, :n], big[:n, n:] = a * h, b * h
-    power = expm(big)
-    out = np.empty((count + 1, n + inputs, inputs))
-    out[0, :n], out[0, n:] = x, np.eye(inputs)
-    known = 1
-    while known < count + 1:
-        more = min(known, count + 1 - known)
-        out[known : known + more] = power @ out[:more]
-        power = power @ power
-        known += more
-    return out[:, :n]
-
-
-def _with_dead_time(subject: Subject, poles: ComplexArray | None) -> Response:
-    theta = subject.dead_time
-    a, b, c, d, cu, du = _open(subject, theta)
-    through = abs(d[2])
-    slowest = -poles.real.max() * theta if poles is not None and poles.size else 0.3
-    if through > 0.0:
-        slowest = min(slowest, -np.log(through))
-    every = (subject.plant.numerator, subject.plant.denominator, subject.numerator, subject.denominator)
-    fast = float(max(np.abs(np.roots(q)).max(initial=1.0 / theta) * theta for q in every))
-    turns = int(np.ceil(-np.log(1e-7) / max(slowest, 1e-9))) + 2
-    m = int(np.clip(np.ceil(_PER_TURN * fast / (2.0 * np.pi)), 16, 400))
-    if m * turns > _MOST_STEPS:
-        raise NotSimulated(f"more than {_MOST_STEPS} steps")
-    ramp = np.linspace(0.0, 1.0, m + 1)
-    step, delayed, kick = _steps(a, b, 1.0 / m)
-    n = len(a)
-    past = np.zeros((4, m, 2))  # y in the cells of the last dead time: left, right, slope left, slope right
-    states = np.zeros((m + 1, n, 2))
-    seen, pushed = [], []
-    for _ in range(turns):
-        forced = np.tensordot(_powers(past), delayed, axes=(0, 1)).transpose(0, 2, 1) + kick
-        x = states[-1].copy()
-        states[0] = x
-        for k in range(m):
-            x = step @ x + forced[k]
-            states[k + 1] = x
-        now, push = np.empty((4, m, 2)), np.empty((4, m, 2))
-        for side, rows in ((0, states[:-1]), (1, states[1:])):
-            y, slope = past[side], past[2 + side]
-            rate = a @ rows + b[:, 2][:, None] * y[:, None, :] + b[:, :2]
-            now[side], now[2 + side] = c @ rows + d[:2] + d[2] * y, c @ rate + d[2] * slope
-            push[side], push[2 + side] = cu @ rows + du[:2] + du[2] * y, cu @ rate + du[2] * slope
-        seen.append(past)
-        pushed.append(push)
-        past = now
-    t = np.concatenate([(k + ramp[:-1]) * theta for k in range(turns)])
-    widths = np.full(len(t), theta / m)
-
-    def trace(parts: list[FloatArray], k: int) -> Trace:
-        left, right, slope_left, slope_right = np.concatenate(parts, axis=1)[:, :, k]
-        return Trace(t, widths, left, right, slope_left / theta, slope_right / theta)
-
-    return Response(trace(seen, 0), trace(pushed, 0), trace(seen, 1))
-
-
-def _steps(a: FloatArray, b: FloatArray, h: float) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """exp(A h), and what inputs add over one step: a delayed y of 1, s, s², s³ with s = 0..1, (n, 4); then r
-    and d of 1, (n, 2)."""
-    n = len(a)
-    big = np.zeros((n + 4, n + 4))
-    big[:n, :n], big[:n, n] = a * h, b[:, 2] * h
-    for j in range(3):
-        big[n + j, n + j + 1] = 1.0
-    power = expm(big)
-    # a chain of integrators: started from its j-th state it yields s^j/j!
-    delayed = power[:n, n:] * np.array([1.0, 1.0, 2.0, 6.0])
-    big = np.zeros((n + 2, n + 2))
-    big[:n, :n], big[:n, n:] = a * h, b[:, :2] * h
-    return power[:n, :n], delayed, expm(big)[:n, n:]
-
-
-def _powers(cells: FloatArray) -> FloatArray:
-    """(4, m, k) ends and slopes of m cubics of width 1/m to their coefficients of 1, s, s², s³."""
-    a, b = cells[0], cells[1]
-    p, q = cells[2] / cells.shape[1], cells[3] / cells.shape[1]
-    return np.array([a, p, 3.0 * (b - a) - 2.0 * p - q, 2.0 * (a - b) + p + q])
+    def _joined(
+        self, errors: FloatArray, turns: int, modes: tuple[ComplexArray, ComplexArray] | None
+    ) -> tuple[Trace, ...]:
+        start = (np.arange(turns)[:, None] + self.begins).ravel()
+        length = np.tile(self.lengths, turns)
+        values = errors.reshape(3, len(start), NODES)
+        if modes is not None and len(modes[0]):
+            p, weights = modes
+            sizes = np.abs(p)
+            base = PER_PANEL / float(sizes.max())
+            stages = plan(sizes, -p.real, base=base, start=float(turns), whole=None, dead=_DEAD)
+            if sum(count for _, count in stages) > _MOST_PANELS:
+                raise NotSimulated(f"more than {_MOST_PANELS} panels")
+            if stages:
+                levels, begins = edges(stages)
+                later = turns + begins * base
+                long = (1 << levels) * base
+                grown = np.exp(later[:, None] * p)
+                late = np.empty((3, len(later), NODES))
+                for level in np.unique(levels):
+                    own = levels == level
+                    within = np.exp(p[:, None] * (base * 2.0 ** float(level)) * POINTS)
+                    late[:, own] = ((grown[own] * weights[:, None, :]) @ within).real
+                start, length = np.concatenate((start, later)), np.concatenate((length, long))
+                values = np.concatenate((values, late), axis=1)
+        values = values + self.final[:, None, None]
+        return tuple(Trace(start, length, v) for v in values)
 
 
 def time_values(
@@ -256,102 +288,28 @@ def time_values(
         if name in ("overshoot", "undershoot", "rise_time", "peak_time", "settling_time") and final == 0.0:
             out[m] = np.nan
         elif name == "overshoot":
-            out[m] = 100.0 * max(0.0, _top(y, 1.0 / final)[0] - 1.0)
+            out[m] = 100.0 * max(0.0, y.top(np.sign(final))[0] / abs(final) - 1.0)
         elif name == "undershoot":
-            out[m] = 100.0 * max(0.0, _top(y, -1.0 / final)[0])
+            out[m] = 100.0 * max(0.0, y.top(-np.sign(final))[0] / abs(final))
         elif name == "peak_time":
-            value, when = _top(y, 1.0 / final)
-            out[m] = when if value > 1.0 + 1e-6 else np.nan
+            value, when = y.top(np.sign(final))
+            out[m] = when if value / abs(final) > 1.0 + 1e-6 else np.nan
         elif name == "rise_time":
-            out[m] = _first(y, m.span[1] * final) - _start(subject, y, m.span[0] * final)
+            out[m] = y.first(m.span[1] * final) - _start(subject, y, m.span[0] * final)
         elif name == "settling_time":
-            out[m] = _last_outside(y, final, m.band)
+            out[m] = y.last_outside(final, m.band)
         elif name == "tracking_area":
-            out[m] = _area(y, 1.0) if abs(final - 1.0) < 1e-12 else np.inf
+            out[m] = y.area(1.0) if abs(final - 1.0) < 1e-12 else np.inf
         elif name == "control_peak":
-            out[m] = abs(subject.reference_step) * max(_top(response.u, 1.0)[0], _top(response.u, -1.0)[0])
+            out[m] = abs(subject.reference_step) * max(response.u.top(1.0)[0], response.u.top(-1.0)[0])
         elif name == "disturbance_peak":
-            out[m] = max(_top(load, 1.0)[0], _top(load, -1.0)[0])
+            out[m] = max(load.top(1.0)[0], load.top(-1.0)[0])
         elif name == "disturbance_area":
-            # read off coefficients: where the nodes end a slow tail is still on its way
-            out[m] = _area(load, 0.0) if subject.load()[-1] == 0 else np.inf
+            # read off coefficients: where the panels end a slow tail is still on its way
+            out[m] = load.area(0.0) if subject.load[-1] == 0 else np.inf
     return out
-
-
-def _top(trace: Trace, factor: float) -> tuple[float, float]:
-    """Largest value of factor · trace, and when."""
-    y = factor * np.maximum(trace.left * np.sign(factor), trace.right * np.sign(factor)) * np.sign(factor)
-    best, when = -np.inf, 0.0
-    for cell in np.argsort(-y)[:3]:
-        for near in range(max(int(cell) - 1, 0), min(int(cell) + 2, len(y))):
-            x = np.linspace(0.0, 1.0, 201)
-            z = factor * trace.at(near, x)
-            j = int(np.argmax(z))
-            if z[j] > best:
-                fine = np.linspace(x[max(j - 1, 0)], x[min(j + 1, 200)], 201)
-                top = factor * trace.at(near, fine)
-                best = float(top.max())
-                when = float(trace.t[near] + trace.h[near] * fine[int(np.argmax(top))])
-    return best, when
-
-
-def _cross(trace: Trace, cell: int, level: float, last: bool) -> float:
-    """First (or last) passage of the level within a cell."""
-    low, high = 0.0, 1.0
-    for _ in range(4):
-        x = np.linspace(low, high, 65)
-        above = trace.at(cell, x) >= level
-        flips = np.flatnonzero(above[1:] != above[:-1])
-        if not flips.size:
-            return float(trace.t[cell] + trace.h[cell] * (high if last else low))
-        j = int(flips[-1] if last else flips[0])
-        low, high = x[j], x[j + 1]
-    return float(trace.t[cell] + trace.h[cell] * 0.5 * (low + high))
-
-
-def _first(trace: Trace, level: float) -> float:
-    """First time the signal reaches the level, from 0 towards it."""
-    sign = np.sign(level) if level != 0.0 else 1.0
-    hit_left, hit = trace.left * sign >= level * sign, trace.right * sign >= level * sign
-    cell = int(np.argmax(hit | hit_left))
-    return float(trace.t[cell]) if hit_left[cell] else _cross(trace, cell, level, last=False)
 
 
 def _start(subject: Subject, trace: Trace, level: float) -> float:
     """First passage of the lower level; for 0 % the moment y leaves 0, which is after the dead time."""
-    return subject.dead_time if level == 0.0 else _first(trace, level)
-
-
-def _last_outside(trace: Trace, final: float, band: float) -> float:
-    """Last time |y/y∞ - 1| > band; 0 where it never is."""
-    z_left, z_right = trace.left / final - 1.0, trace.right / final - 1.0
-    slope = np.maximum(np.abs(trace.slope_left), np.abs(trace.slope_right)) * trace.h / abs(final)
-    suspect = np.flatnonzero(np.maximum(np.abs(z_left), np.abs(z_right)) + 0.25 * slope > band)
-    for cell in suspect[::-1]:
-        x = np.linspace(0.0, 1.0, 129)
-        outside = np.abs(trace.at(int(cell), x) / final - 1.0) > band
-        if outside.any():
-            j = int(np.flatnonzero(outside)[-1])
-            if j == 128:
-                return float(trace.t[cell] + trace.h[cell])
-            low, high = x[j], x[j + 1]
-            for _ in range(30):
-                middle = 0.5 * (low + high)
-                z = abs(float(trace.at(int(cell), np.array([middle]))[0]) / final - 1.0)
-                low, high = (middle, high) if z > band else (low, middle)
-            return float(trace.t[cell] + trace.h[cell] * low)
-    return 0.0
-
-
-def _area(trace: Trace, level: float) -> float:
-    """∫ |signal - level| dt: cubics in closed form, cells with a change of sign by fine sums."""
-    a, b = trace.left - level, trace.right - level
-    p, q = trace.slope_left * trace.h, trace.slope_right * trace.h
-    whole = np.abs(trace.h * (0.5 * (a + b) + (p - q) / 12.0))
-    mixed = np.flatnonzero(
-        (a * b <= 0.0) | (np.minimum(np.abs(a), np.abs(b)) < 0.2 * np.maximum(np.abs(p), np.abs(q)))
-    )
-    x = ((np.arange(64) + 0.5) / 64.0).astype(float)
-    for cell in mixed:
-        whole[cell] = trace.h[cell] * np.abs(trace.at(int(cell), x) - level).mean()
-    return float(whole.sum())
+    return subject.dead_time if level == 0.0 else trace.first(level)

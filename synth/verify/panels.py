@@ -1,0 +1,197 @@
+"""A signal as polynomials on panels of time, and what is read off it: tops, passages, areas.
+
+Each panel carries the signal's values at the same 16 Chebyshev points, ends included, so a jump between two
+panels is told by their two values. Sources for the interpolation and the quadrature: C. W. Clenshaw and
+A. R. Curtis, A method for numerical integration on an automatic computer, Numer. Math. 2 (1960) 197-205.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from synth.loop.arrays import FloatArray, IntArray
+
+NODES = 16
+POINTS: FloatArray = 0.5 - 0.5 * np.cos(np.pi * np.arange(NODES) / (NODES - 1))
+_ORDERS = np.arange(NODES)
+_MOST_LOOKED_AT = 200  # panels that may hold the top
+
+
+def _vandermonde(x: FloatArray) -> FloatArray:
+    out: FloatArray = np.cos(np.arccos(np.clip(2.0 * x - 1.0, -1.0, 1.0))[..., None] * _ORDERS)
+    return out
+
+
+TO_COEFFICIENTS: FloatArray = np.linalg.inv(_vandermonde(POINTS))
+
+
+def basis(x: FloatArray) -> FloatArray:
+    """(..., 16): the weights of a panel's values in the value at x of its length, 0 <= x <= 1."""
+    out: FloatArray = _vandermonde(x) @ TO_COEFFICIENTS
+    return out
+
+
+_EVEN = np.linspace(0.0, 1.0, 65)
+_ZOOM = np.linspace(0.0, 1.0, 33)
+_CLOSE = np.unique(np.concatenate((_EVEN, POINTS)))
+_ON_CLOSE = basis(_CLOSE)
+_HALVES = np.linspace(0.0, 1.0, 129)  # ends and middles of 64 cells
+_ON_HALVES = basis(_HALVES)
+# ∫ T_k over the panel
+_MEANS = np.array([1.0 / (1.0 - k * k) if k % 2 == 0 else 0.0 for k in range(NODES)]) @ TO_COEFFICIENTS
+
+
+@dataclass(frozen=True, slots=True)
+class Trace:
+    """start (P,) and length (P,) of the panels [s], in order and without gaps; values (P, 16)."""
+
+    start: FloatArray
+    length: FloatArray
+    values: FloatArray
+
+    def peak(self) -> float:
+        """Largest size at the nodes."""
+        return float(np.abs(self.values).max(initial=0.0))
+
+    def unresolved(self) -> float:
+        """Largest of the last two Chebyshev coefficients, relative to the peak."""
+        last = np.abs(self.values @ TO_COEFFICIENTS[-2:].T).max(initial=0.0)
+        return float(last / max(self.peak(), 1e-300))
+
+    def top(self, sign: float) -> tuple[float, float]:
+        """Supremum of sign · signal, and when."""
+        v = sign * self.values
+        highest, lowest = v.max(axis=1), v.min(axis=1)
+        # sixteen points see a panel's top to a small part of what the signal does within it
+        might = highest + 0.1 * (highest - lowest)
+        look = np.flatnonzero(might >= highest.max())
+        if len(look) > _MOST_LOOKED_AT:
+            look = look[np.argsort(-might[look])[:_MOST_LOOKED_AT]]
+        close = v[look] @ _ON_CLOSE.T
+        best, when = -np.inf, 0.0
+        for i in np.argsort(-close.max(axis=1))[:3]:
+            panel, j = look[i], int(close[i].argmax())
+            low, high = _CLOSE[max(j - 1, 0)], _CLOSE[min(j + 1, len(_CLOSE) - 1)]
+            value, x = float(close[i, j]), float(_CLOSE[j])
+            for _ in range(3):
+                t = low + (high - low) * _ZOOM
+                z = basis(t) @ v[panel]
+                k = int(z.argmax())
+                if z[k] > value:
+                    value, x = float(z[k]), float(t[k])
+                low, high = t[max(k - 1, 0)], t[min(k + 1, len(t) - 1)]
+            if value > best:
+                best, when = value, float(self.start[panel] + self.length[panel] * x)
+        return best, when
+
+    def first(self, level: float) -> float:
+        """First time at which the signal has come from 0 to the level; NaN where it never does."""
+        v = (self.values - level) * (np.sign(level) or 1.0)
+        highest, lowest = v.max(axis=1), v.min(axis=1)
+        for panel in np.flatnonzero(highest + 0.1 * (highest - lowest) >= 0.0):
+            reached = _ON_CLOSE @ v[panel] >= 0.0
+            reached[0], reached[-1] = v[panel, 0] >= 0.0, v[panel, -1] >= 0.0
+            if reached.any():
+                return self._passage(int(panel), v[panel], int(reached.argmax()))
+        return np.nan
+
+    def last_outside(self, final: float, band: float) -> float:
+        """Last time at which |signal/final - 1| > band; 0 where it never is."""
+        v = np.abs(self.values / final - 1.0)
+        highest, lowest = v.max(axis=1), v.min(axis=1)
+        for panel in np.flatnonzero(highest + 0.1 * (highest - lowest) > band)[::-1]:
+            z = self.values[panel] / final - 1.0
+            outside = np.abs(_ON_CLOSE @ z) > band
+            if outside[-1]:
+                return float(self.start[panel] + self.length[panel])
+            if outside.any():
+                j = int(np.flatnonzero(outside)[-1])
+                side = np.sign(_ON_CLOSE[j] @ z)
+                return self._passage(int(panel), band - side * z, j + 1)
+        return 0.0
+
+    def _passage(self, panel: int, v: FloatArray, j: int) -> float:
+        """Where v comes up through 0 within a panel, between _CLOSE[j - 1] and _CLOSE[j]."""
+        low, high = (_CLOSE[j - 1], _CLOSE[j]) if j else (0.0, 0.0)
+        for _ in range(5 if j else 0):
+            t = low + (high - low) * _ZOOM
+            up = basis(t) @ v >= 0.0
+            up[0], up[-1] = False, True
+            k = int(up.argmax())
+            low, high = t[k - 1], t[k]
+        return float(self.start[panel] + self.length[panel] * 0.5 * (low + high))
+
+    def area(self, level: float) -> float:
+        """∫ |signal - level| dt."""
+        v = self.values - level
+        whole = np.abs(v @ _MEANS) * self.length
+        size = np.abs(v)
+        near = size.min(axis=1) < 0.1 * (v.max(axis=1) - v.min(axis=1))
+        mixed = near | (v.max(axis=1) * v.min(axis=1) <= 0.0)
+        most = size.max(axis=1) * self.length
+        # what all the small ones hold together does not count
+        mixed &= most * len(most) > 1e-9 * most.sum()
+        index = np.flatnonzero(mixed)
+        whole[index] = self.length[index] * _mean_size(v[index])
+        return float(whole.sum())
+
+
+def _mean_size(v: FloatArray) -> FloatArray:
+    """(P,) means of |polynomial| over panels (P, 16): Simpson's rule on 64 cells, a cell with a change of sign
+    by its chord."""
+    fine = v @ _ON_HALVES.T
+    a, m, b = fine[:, :-2:2], fine[:, 1::2], fine[:, 2::2]
+    cell = np.abs(a + 4.0 * m + b) / 6.0
+    total = np.abs(a) + np.abs(b)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        chord = 0.5 * (a * a + b * b) / total
+    turned = (a * b < 0.0) & (total > 0.0)
+    out: FloatArray = np.where(turned, chord, cell).mean(axis=1)
+    return out
+
+
+def plan(
+    sizes: FloatArray, decays: FloatArray, *, base: float, start: float, whole: int | None, dead: float
+) -> list[tuple[int, int]]:
+    """Panels for a sum of modes e^(pt), |p| = sizes, -Re p = decays: (level, how many) in order, a panel of a
+    level being base · 2^level long.
+
+    While a mode is alive (decay · t < dead) no panel is longer than 5/|p|. A panel begins at a multiple of its
+    own length after `start`. whole : where to stop, in units of base, a power of two; None: when all are dead.
+    """
+    out: list[tuple[int, int]] = []
+    order = np.argsort(-sizes)
+    dies = np.where(decays > 0.0, dead / np.maximum(decays, 1e-300), np.inf)
+    t = 0
+    for i in [*order, None]:
+        if i is None:
+            if whole is None:
+                break
+            until, level = whole, whole.bit_length() - 1
+        else:
+            until_time = (dies[i] - start) / base
+            if whole is not None:
+                until_time = min(until_time, float(whole))
+            until = int(np.ceil(min(until_time, 2.0**60)))
+            ratio = PER_PANEL / (sizes[i] * base) if sizes[i] > 0.0 else 2.0**60
+            level = max(int(np.floor(np.log2(ratio))), 0)
+            if whole is not None:
+                level = min(level, whole.bit_length() - 1)
+        while t < until:
+            now = level if t == 0 else min(level, (t & -t).bit_length() - 1)
+            count = 1 if now < level else -(-(until - t) // (1 << now))
+            out.append((now, count))
+            t += count << now
+    return out
+
+
+PER_PANEL = 5.0  # radians, or time constants, of the fastest mode alive in a panel
+
+
+def edges(stages: list[tuple[int, int]]) -> tuple[IntArray, IntArray]:
+    """Levels (P,) of the panels planned, and where they begin (P,), in units of the base."""
+    levels = np.repeat([s[0] for s in stages], [s[1] for s in stages]).astype(np.int64)
+    lengths = np.int64(1) << levels
+    return levels, np.concatenate(([0], np.cumsum(lengths)[:-1])).astype(np.int64)
