@@ -17,6 +17,7 @@ import hashlib
 import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -24,6 +25,7 @@ import numpy as np
 from synth.errors import Fault, InputError
 from synth.search.archive import Rows, distinct, joined
 from synth.search.campaign import Campaign
+from synth.search.journal import LOCKS, Lock, mend
 from synth.search.outcome import Task
 from synth.search.polish import Pace, polish
 from synth.search.starts import halton
@@ -43,7 +45,10 @@ def explore(campaign: Campaign, numbers: list[int], trials: int) -> int:
     """Explore these structures with `trials` trials in all; what is found joins their standings. Returns the
     number of trials told."""
     with _quiet():
-        return _explore(campaign, numbers, trials)
+        try:
+            return _explore(campaign, numbers, trials)
+        except OSError as error:  # a journal that cannot be written to any more
+            raise _unusable(error) from None
 
 
 def _explore(campaign: Campaign, numbers: list[int], trials: int) -> int:
@@ -204,7 +209,10 @@ def storage_of(url: str | None) -> Any:
 
     try:
         if "://" not in url:
-            return JournalStorage(JournalFileBackend(url.removeprefix("journal:")))
+            path = Path(url.removeprefix("journal:")).absolute()
+            mend(path)
+            lock: Any = Lock(path) if LOCKS else None
+            return JournalStorage(JournalFileBackend(str(path), lock))
         if url.startswith("redis"):
             return JournalStorage(JournalRedisBackend(url))
         return RDBStorage(url)
