@@ -33,9 +33,19 @@ def basis(x: FloatArray) -> FloatArray:
     return out
 
 
+def _differentiation() -> FloatArray:
+    """(16, 16): a panel's values to those of its slope, per panel length."""
+    angle = np.arccos(np.clip(2.0 * POINTS - 1.0, -1.0, 1.0))[1:-1, None]
+    inner = 2.0 * _ORDERS * np.sin(_ORDERS * angle) / np.sin(angle)
+    end = 2.0 * _ORDERS**2.0
+    out: FloatArray = np.vstack((end * (-1.0) ** (_ORDERS + 1), inner, end)) @ TO_COEFFICIENTS
+    return out
+
+
+_SLOPE = _differentiation()
 _EVEN = np.linspace(0.0, 1.0, 65)
 _ZOOM = np.linspace(0.0, 1.0, 33)
-_CLOSE = np.unique(np.concatenate((_EVEN, POINTS)))
+_CLOSE = np.unique(np.round(np.concatenate((_EVEN, POINTS)), 12))  # a node on the even grid counts once
 _ON_CLOSE = basis(_CLOSE)
 _HALVES = np.linspace(0.0, 1.0, 129)  # ends and middles of 64 cells
 _ON_HALVES = basis(_HALVES)
@@ -73,15 +83,13 @@ class Trace:
         best, when = -np.inf, 0.0
         for i in np.argsort(-close.max(axis=1))[:3]:
             panel, j = look[i], int(close[i].argmax())
+            x, value = _CLOSE[j], float(close[i, j])
+            # where a top is flat its slope still tells the place
+            fall = -(_SLOPE @ v[panel])
             low, high = _CLOSE[max(j - 1, 0)], _CLOSE[min(j + 1, len(_CLOSE) - 1)]
-            value, x = float(close[i, j]), float(_CLOSE[j])
-            for _ in range(3):
-                t = low + (high - low) * _ZOOM
-                z = basis(t) @ v[panel]
-                k = int(z.argmax())
-                if z[k] > value:
-                    value, x = float(z[k]), float(t[k])
-                low, high = t[max(k - 1, 0)], t[min(k + 1, len(t) - 1)]
+            if (basis(np.array([low, high])) @ fall * [-1.0, 1.0] > 0.0).all():
+                x = _upward(fall, low, high)
+                value = max(value, float(basis(np.array(x)) @ v[panel]))
             if value > best:
                 best, when = value, float(self.start[panel] + self.length[panel] * x)
         return best, when
@@ -114,14 +122,8 @@ class Trace:
 
     def _passage(self, panel: int, v: FloatArray, j: int) -> float:
         """Where v comes up through 0 within a panel, between _CLOSE[j - 1] and _CLOSE[j]."""
-        low, high = (_CLOSE[j - 1], _CLOSE[j]) if j else (0.0, 0.0)
-        for _ in range(5 if j else 0):
-            t = low + (high - low) * _ZOOM
-            up = basis(t) @ v >= 0.0
-            up[0], up[-1] = False, True
-            k = int(up.argmax())
-            low, high = t[k - 1], t[k]
-        return float(self.start[panel] + self.length[panel] * 0.5 * (low + high))
+        x = _upward(v, _CLOSE[j - 1], _CLOSE[j]) if j else 0.0
+        return float(self.start[panel] + self.length[panel] * x)
 
     def area(self, level: float) -> float:
         """∫ |signal - level| dt."""
@@ -138,17 +140,34 @@ class Trace:
         return float(whole.sum())
 
 
+def _upward(v: FloatArray, low: float, high: float) -> float:
+    """Where a panel's polynomial comes up through 0, negative at `low` and not at `high`."""
+    for _ in range(5):
+        t = low + (high - low) * _ZOOM
+        up = basis(t) @ v >= 0.0
+        up[0], up[-1] = False, True
+        k = int(up.argmax())
+        low, high = float(t[k - 1]), float(t[k])
+    return 0.5 * (low + high)
+
+
 def _mean_size(v: FloatArray) -> FloatArray:
-    """(P,) means of |polynomial| over panels (P, 16): Simpson's rule on 64 cells, a cell with a change of sign
-    by its chord."""
+    """(P,) means of |polynomial| over panels (P, 16): Simpson's rule on 64 cells, where the sign changes the
+    parabola in two parts."""
     fine = v @ _ON_HALVES.T
     a, m, b = fine[:, :-2:2], fine[:, 1::2], fine[:, 2::2]
     cell = np.abs(a + 4.0 * m + b) / 6.0
-    total = np.abs(a) + np.abs(b)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        chord = 0.5 * (a * a + b * b) / total
-    turned = (a * b < 0.0) & (total > 0.0)
-    out: FloatArray = np.where(turned, chord, cell).mean(axis=1)
+    turned = a * b < 0.0
+    a, m, b = a[turned], m[turned], b[turned]
+    bend, rise = 2.0 * (a - 2.0 * m + b), 4.0 * m - 3.0 * a - b
+    root = a / (a - b)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        for _ in range(3):
+            step = (a + root * (rise + root * bend)) / (rise + 2.0 * root * bend)
+            root = np.clip(root - np.nan_to_num(step), 0.0, 1.0)
+    before = root * (a + root * (rise / 2.0 + root * bend / 3.0))
+    cell[turned] = np.abs(before) + np.abs((a + 4.0 * m + b) / 6.0 - before)
+    out: FloatArray = cell.mean(axis=1)
     return out
 
 
