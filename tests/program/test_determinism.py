@@ -1,0 +1,79 @@
+"""One sheet, one seed, one version: one record, but for time stamps and seconds, whatever runs beside it."""
+
+import json
+import os
+import subprocess
+import sys
+from concurrent.futures import ThreadPoolExecutor
+
+import pytest
+
+SHEETS = {
+    "one case": """\
+[plant]
+transfer = "4 / (s*(s + 1)*(0.2*s + 1))"
+[requirements]
+overshoot = { max = "15 %" }
+phase_margin = { min = "40 deg" }
+[search]
+structures = ["lead", "PD"]
+budget = "quick"
+""",
+    "cases": """\
+[plant]
+transfer = "K*exp(-L*s) / (T*s + 1)"
+[parameters]
+K = { value = 2, tolerance = "20 %" }
+T = 1.5
+L = { value = "0.2 s", range = ["0.1 s", "0.3 s"] }
+[[cases]]
+name = "cold"
+T = 1.8
+[requirements]
+overshoot = { max = "10 %" }
+settling_time = { max = "4 s" }
+sensitivity_peak = { max = 1.8 }
+[search]
+structures = ["PI"]
+budget = "quick"
+""",
+}
+# how the processes differ: the order of sets, threads of the numerical library, time zone, width
+WORLDS = [
+    {"PYTHONHASHSEED": "0", "OPENBLAS_NUM_THREADS": "1"},
+    {"PYTHONHASHSEED": "1", "OPENBLAS_NUM_THREADS": "1", "TZ": "Asia/Tokyo", "COLUMNS": "40"},
+    {"PYTHONHASHSEED": "77", "OPENBLAS_NUM_THREADS": "2", "LC_ALL": "C"},
+]
+
+
+def record_of(folder, world, *words):
+    done = subprocess.run(
+        [sys.executable, "-m", "synth.cli", "propose", "sheet.toml", "--json", *words],
+        cwd=folder,
+        env=os.environ | world,
+        capture_output=True,
+        text=True,
+        check=False,
+    )
+    assert done.returncode in (0, 1), done.stderr
+    record = json.loads(done.stdout)
+    record["created"] = record["search"]["seconds"] = None
+    return json.dumps(record)
+
+
+@pytest.mark.parametrize("workers", [1, 2])
+@pytest.mark.parametrize("kind", SHEETS)
+def test_the_same_record_bit_for_bit(tmp_path, kind, workers):
+    (tmp_path / "sheet.toml").write_text(SHEETS[kind])
+    with ThreadPoolExecutor(workers) as pool:  # runs one after another, or two at once
+        found = list(pool.map(lambda world: record_of(tmp_path, world), WORLDS[: 3 if workers == 1 else 2]))
+    assert len(set(found)) == 1
+    assert json.loads(found[0])["candidates"]
+
+
+def test_another_seed_is_another_search(tmp_path):
+    (tmp_path / "sheet.toml").write_text(SHEETS["one case"])
+    one, other = (json.loads(record_of(tmp_path, WORLDS[0], "--seed", seed)) for seed in "05")
+    assert one["search"]["seed"] == 0
+    assert other["search"]["seed"] == 5
+    assert one["candidates"] != other["candidates"]
