@@ -202,12 +202,17 @@ class MatrixForm(PlantForm):
         )
         b, c = (np.array([_value(v, parameters) for v in row]) for row in (self.b, self.c))
         points: ComplexArray = np.asarray(s, dtype=complex)
-        out: ComplexArray = np.empty(points.shape, dtype=complex)
-        for index, point in np.ndenumerate(points):
-            try:
-                out[index] = c @ np.linalg.solve(point * np.eye(len(b)) - a, b)
-            except np.linalg.LinAlgError:
-                out[index] = np.inf
+        systems = points[..., None, None] * np.eye(len(b)) - a
+        out: ComplexArray
+        try:
+            out = np.linalg.solve(systems, b[:, None])[..., 0] @ c
+        except np.linalg.LinAlgError:  # a point on a pole spoils the whole stack: one by one
+            out = np.empty(points.shape, dtype=complex)
+            for index in np.ndindex(points.shape):
+                try:
+                    out[index] = c @ np.linalg.solve(systems[index], b)
+                except np.linalg.LinAlgError:
+                    out[index] = np.inf
         with np.errstate(invalid="ignore"):
             out = (out + _value(self.d, parameters)) * np.exp(-points * _value(self.dead_time, parameters))
         return out
