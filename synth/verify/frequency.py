@@ -11,6 +11,7 @@ from synth.verify.subject import Subject
 
 _PER_DECADE = 50
 _MOST = 6000
+_TURNED = 400  # ωθ up to which every turn of the phase is looked at
 _ZOOM = 33
 _PEAK_ROUNDS, _CROSSING_ROUNDS = 5, 7  # to (1/16)^5 and (1/32)^7 of a cell
 
@@ -30,6 +31,8 @@ class _Look:
         self.subject = subject
         self.w = _grid(subject, poles)
         self.l = self.loop(self.w)
+        if subject.dead_time > 0.0:
+            self._look_far(float(subject.dead_time))
         above, below = subject.exact
         total = above[-1] + below[-1]
         self.k = abs(float(above[0] / below[0]))
@@ -38,6 +41,21 @@ class _Look:
         self.start = float(above[-1] / below[-1]) if below[-1] else np.inf
         self.delayed = subject.dead_time > 0.0
         self.s_start = float(below[-1] / total) if total else np.nan
+
+    def _look_far(self, theta: float) -> None:
+        """Add the turns of e^(-jωθ) where a peak beyond the dense part of the grid would be: with the phase
+        free, |C S| is at most |C|/(1 - |L|), and each turn comes close to it."""
+        far = self.w > _TURNED / theta
+        size = np.abs(self.l[far])
+        if not far.any() or not (size < 1.0).all():
+            return
+        c = np.abs(self.subject.compensator(self.w[far]))
+        turn = 2.0 * np.pi / theta
+        here = {int((top / (1.0 - size)).argmax()) for top in (np.ones_like(size), size, c)}
+        middles = self.w[far][sorted(here)][:, None]
+        more = (middles + turn * np.linspace(-8.0, 8.0, 401)).ravel()
+        self.w = np.unique(np.concatenate((self.w, more[more > 0.0])))
+        self.l = self.loop(self.w)
 
     def loop(self, w: FloatArray) -> ComplexArray:
         return self.subject.stated(w) * self.subject.compensator(w)
@@ -195,6 +213,6 @@ def _grid(subject: Subject, poles: ComplexArray | None) -> FloatArray:
         width = max(abs(root.real), 1e-7 * abs(root))
         parts.append(abs(root.imag) + width * steps)
     if theta > 0.0:
-        parts.append(np.arange(1, 2000) * (0.2 / theta))
+        parts.append(np.arange(1, 5 * _TURNED) * (0.2 / theta))
     w = np.unique(np.concatenate(parts))
     return w[w > 0.0]
