@@ -85,9 +85,10 @@ def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tu
     columns = np.arange(m)
     for p in numerators:
         ends = np.abs(response.ends[:, p] / response.ends[:, CLOSED]).max(axis=0)
-        ratio = (powers @ response.squares[:, p]) / bottom
+        # |Δ|² that cancels to nothing at a node stands beside a pole all but on the axis, which is looked at below
+        ratio = np.divide(powers @ response.squares[:, p], bottom, out=np.zeros_like(bottom), where=bottom > 0.0)
         top = ratio.argmax(axis=0)
-        value = np.sqrt(ratio[top, columns])
+        value = np.sqrt(np.maximum(ratio[top, columns], 0.0))
         place = np.where((top > 0) & (top < 2 * span), w[top], 0.0)
         if light.size:
             seen = _size(response, np.full(len(light), p), light, lightest[light]) / below
