@@ -1,9 +1,10 @@
-"""Closed-loop poles again, to 50 digits: whole numbers instead of floating point.
+"""Closed-loop poles again, to 50 digits where that matters.
 
 Without dead time the characteristic polynomial is formed exactly and its roots are refined by Aberth's
-iteration in fixed point on Python's integers. With dead time the poles come from a matrix: the infinitesimal
-generator of the delay equation on Chebyshev points, each eigenvalue refined by Newton's method on the
-characteristic equation.
+iteration in fixed point on Python's integers. With dead time there are infinitely many. Seeds come from a
+matrix, the generator of the delay equation on Chebyshev points, and from the chain of roots that follows it;
+Newton's method settles them, a root that double precision leaves in doubt is polished with 50 digits, and
+the argument principle tells whether any is missing as far out as they are needed.
 
 Sources: O. Aberth, Iteration methods for finding all zeros of a polynomial simultaneously, Math. Comp. 27
 (1973) 339-344; D. Breda, S. Maset and R. Vermiglio, Pseudospectral differencing methods for characteristic
@@ -21,20 +22,31 @@ from synth.verify.subject import Exact, Subject
 
 _BITS = 180  # 54 digits
 _MOST = 40
-_POINTS = 24
-_CHAIN = 40  # roots of the chain beyond those of the matrix
+_POINTS = (24, 48)
+_SEEDS = 12  # of the chain, beyond what is asked for
+_FARTHEST = 600.0  # abs(p) θ
+_DOUBT = 1e-9  # relative error of a root above which it is polished
 
 Fixed = tuple[int, int]  # real and imaginary part in units of 2^-_BITS
 
 
-def poles(subject: Subject) -> ComplexArray | None:
-    """All poles [1/s]; with dead time those nearest the origin; None where it is of neutral type."""
+def poles(subject: Subject, reach: float = 0.0) -> ComplexArray | None:
+    """All poles [1/s]; with dead time those with abs(p) <= reach and a few dozen nearest the origin.
+
+    None where, with dead time, the count of the argument principle is not matched or `reach` is too far.
+    """
     above, below = subject.exact
     if subject.dead_time == 0.0:
         return refined([a + b for a, b in zip(above, below, strict=True)])
-    if above[0] != 0:
-        return None
-    return _delayed(above, below, subject.dead_time)
+    return _delayed(subject, reach)
+
+
+def chain(subject: Subject) -> float:
+    """Decay rate [1/s] that the poles of a loop with dead time and a direct path tend to; inf without one."""
+    above, below = subject.exact
+    if subject.dead_time == 0.0 or above[0] == 0:
+        return np.inf
+    return float(-np.log(abs(float(above[0] / below[0]))) / subject.dead_time)
 
 
 def refined(closed: list[Fraction]) -> ComplexArray:
@@ -102,53 +114,156 @@ def _polish(coefficients: list[int], start: complex, others: list[complex]) -> c
     return complex(re / (1 << _BITS), im / (1 << _BITS))
 
 
-def _delayed(above: Exact, below: Exact, delay: float) -> ComplexArray:
-    """Roots of D(s) + N(s) e^(-sθ) nearest the origin, N strictly proper."""
-    lead = below[0]
-    n = len(below) - 1
-    # in units of the delay: s = p/θ
-    theta = Fraction(delay)
-    d = np.array([float(c / lead * theta**k) for k, c in enumerate(below)])
-    b = np.array([float(c / lead * theta**k) for k, c in enumerate(above)])
-    if n == 0:
-        return np.empty(0, dtype=complex)
-    now = np.diag(np.ones(n - 1), 1)
-    now[-1] = -d[1:][::-1]
-    past = np.zeros((n, n))
-    past[-1] = -b[1:][::-1]
-    points, difference = _chebyshev(_POINTS)
-    matrix = np.kron(difference, np.eye(n))
-    matrix[:n] = 0.0
-    matrix[:n, :n], matrix[:n, -n:] = now, past
-    assert points[0] == 0.0
-    with np.errstate(all="ignore"):
-        roots = np.linalg.eigvals(matrix)
-        roots = roots[(roots.imag >= 0.0) & (np.abs(roots) < 2.0 * _POINTS)]
-        # far roots repeat about every 2π along the chain: continue it upwards from the outermost
-        outer = roots[np.argsort(roots.imag)[-2:]]
-        chain = (outer[:, None] + 2j * np.pi * np.arange(1, _CHAIN)).ravel()
-        roots, good = _newton(d, b, np.concatenate((roots, chain)))
-    out: list[complex] = []
-    for r in roots[good]:
-        r = complex(r.real, abs(r.imag) if abs(r.imag) > 1e-9 * abs(r) else 0.0)
-        if all(abs(r - o) > 1e-7 * (1.0 + abs(r)) for o in out):
-            out.append(r)
-    upper = np.array(out, dtype=complex) / delay
-    return np.concatenate((upper, upper[upper.imag > 0.0].conj()))
+def _delayed(subject: Subject, reach: float) -> ComplexArray | None:
+    """Roots of D(s) + N(s) e^(-sθ); inside they are counted in units of 1/θ, D's first coefficient is 1."""
+    (above, below), delay = subject.exact, subject.dead_time
+    d, b = (np.array([float(c / below[0]) for c in q]) * delay ** np.arange(len(q)) for q in (below, above))
+    far = max(reach * delay, 25.0)
+    if far > _FARTHEST:
+        return None
+    for points in _POINTS:
+        with np.errstate(all="ignore"):
+            seeds = np.concatenate((_generated(d, b, points), _chain(d, b, int(far / (2.0 * np.pi)) + _SEEDS)))
+            upper = _settled(d, b, seeds)
+            # the count is taken on a circle that keeps clear of the roots known
+            circles = far * np.linspace(1.0, 1.1, 12)
+            clear = np.abs(np.abs(upper) - circles[:, None]).min(axis=1, initial=np.inf)
+            circle = float(circles[clear.argmax()])
+            within = upper[np.abs(upper) < circle]
+            if int((within.imag > 0.0).sum() * 2 + (within.imag == 0.0).sum()) == _count(d, b, circle):
+                upper = _polished(subject, d, b, upper) / delay
+                return np.concatenate((upper, upper[upper.imag > 0.0].conj()))
+    return None
 
 
-def _newton(d: FloatArray, b: FloatArray, roots: ComplexArray) -> tuple[ComplexArray, BoolArray]:
-    """Newton's method on D(p) + N(p) e^(-p), and which have settled."""
+def _generated(d: FloatArray, b: FloatArray, points: int) -> ComplexArray:
+    """Eigenvalues of the generator on (x, output over the last dead time); those near the origin are roots."""
+    n = len(d) - 1
+    x, difference = _chebyshev(points)
+    assert x[0] == 0.0
+    # x' = A x - e w(-1), w(0) = c x - k w(-1) at the newest point, dw/dt = dw/dx at all older ones
+    a = np.diag(np.ones(max(n - 1, 0)), 1)[:n, :n]
+    if n:
+        a[-1] = -d[1:][::-1]
+    k = b[0]
+    c = (b[1:] - k * d[1:])[::-1]
+    matrix = np.zeros((n + points, n + points))
+    matrix[:n, :n] = a
+    if n:
+        matrix[n - 1, -1] = -1.0
+    matrix[n:, :n] = np.outer(difference[1:, 0], c)
+    matrix[n:, n:] = difference[1:, 1:]
+    matrix[n:, -1] -= k * difference[1:, 0]
+    roots = np.linalg.eigvals(matrix)
+    out: ComplexArray = roots[(roots.imag >= 0.0) & (np.abs(roots) < 2.0 * points)].astype(complex)
+    return out
+
+
+def _chain(d: FloatArray, b: FloatArray, count: int) -> ComplexArray:
+    """The far roots: p = log(-N/D) + 2πik, iterated."""
+    turn = 2j * np.pi * np.arange(1, count + 1)
+    p = turn.copy()
+    for _ in range(6):
+        p = turn + np.log(-np.polyval(b, p) / np.polyval(d, p))
+    return np.concatenate((p, p - 2j * np.pi))[np.isfinite(np.concatenate((p, p)))]
+
+
+def _settled(d: FloatArray, b: FloatArray, roots: ComplexArray) -> ComplexArray:
+    """Newton's method on D(p) + N(p) e^(-p): the different roots reached, upper half only."""
     dd, db = np.polyder(d), np.polyder(b)
     step = np.full(len(roots), np.inf, dtype=complex)
-    for _ in range(14):
+    for _ in range(8):
         e = np.exp(-roots)
-        value = np.polyval(d, roots) + np.polyval(b, roots) * e
-        slope = np.polyval(dd, roots) + (np.polyval(db, roots) - np.polyval(b, roots)) * e
-        step = value / slope
+        n = np.polyval(b, roots)
+        step = (np.polyval(d, roots) + n * e) / (
+            np.polyval(dd, roots) + (np.polyval(db, roots) - n) * e
+        )
         roots = roots - step
-    good: BoolArray = np.isfinite(roots) & (np.abs(step) < 1e-9 * (1.0 + np.abs(roots)))
-    return roots, good
+    size = np.abs(roots)
+    roots = roots[np.isfinite(roots) & (np.abs(step) < 1e-9 * size)]
+    real = np.abs(roots.imag) <= 1e-9 * np.abs(roots)
+    roots = np.where(real, roots.real, roots.real + 1j * np.abs(roots.imag))
+    near = np.abs(roots[:, None] - roots) <= 1e-7 * np.abs(roots)
+    out: ComplexArray = roots[~np.tril(near, -1).any(axis=1)]
+    return out
+
+
+def _count(d: FloatArray, b: FloatArray, radius: float) -> int:
+    """Roots with abs(p) < radius, by the turns of D e^(p/2) + N e^(-p/2) along the upper half circle."""
+    angle = np.linspace(0.0, np.pi, int(200 + 12 * radius))
+    for _ in range(8):
+        p = radius * np.exp(1j * angle)
+        value = np.polyval(d, p) * np.exp(0.5 * p) + np.polyval(b, p) * np.exp(-0.5 * p)
+        turned = np.angle(value[1:] / value[:-1])
+        wide = np.flatnonzero(np.abs(turned) > 1.0)
+        if not wide.size:
+            break
+        angle = np.insert(angle, wide + 1, 0.5 * (angle[wide] + angle[wide + 1]))
+    total = turned.sum() / np.pi
+    return round(float(total)) if np.isfinite(total) else -1
+
+
+def _polished(subject: Subject, d: FloatArray, b: FloatArray, roots: ComplexArray) -> ComplexArray:
+    """The roots whose rounding error is not small, refined with 50 digits."""
+    e = np.exp(-roots)
+    size = np.abs(roots)
+    terms = np.polyval(np.abs(d), size) + np.polyval(np.abs(b), size) * np.abs(e)
+    slope = np.polyval(np.polyder(d), roots) + (np.polyval(np.polyder(b), roots) - np.polyval(b, roots)) * e
+    roots = roots.astype(complex)
+    for i in np.flatnonzero(1e-15 * terms > _DOUBT * size * np.abs(slope)):
+        roots[i] = _newton_exact(subject, complex(roots[i]), complex(slope[i]))
+    return roots
+
+
+def _newton_exact(subject: Subject, root: complex, slope: complex) -> complex:
+    """Newton's method for one root [1/θ]: the residue in fixed point, the slope as double precision has it."""
+    (above, below), delay = subject.exact, Fraction(subject.dead_time)
+    # the variable is stretched by a power of two so that the root lies round 1
+    power = round(float(np.log2(abs(root))))
+    size = Fraction(2) ** power
+    n = len(below) - 1
+    rows = [[c / below[0] * delay**k * size ** (n - k) for k, c in enumerate(q)] for q in (below, above)]
+    scale = max(abs(c) for row in rows for c in row)
+    fixed = [[_to_fixed(c / scale) for c in row] for row in rows]
+    factor = float(scale / size) / slope
+    re, im = (_to_fixed(Fraction(x) / size) for x in (root.real, root.imag))
+    for _ in range(_MOST):
+        (dr, di), (nr, ni) = (_value(row, re, im) for row in fixed)
+        er, ei = _exponential(_shifted(-re, power), _shifted(-im, power))
+        fr, fi = dr + ((nr * er - ni * ei) >> _BITS), di + ((nr * ei + ni * er) >> _BITS)
+        step = complex(fr / (1 << _BITS), fi / (1 << _BITS)) * factor
+        re, im = re - _to_fixed(Fraction(step.real)), im - _to_fixed(Fraction(step.imag))
+        if abs(step) < 1e-17:
+            break
+    return complex(re / (1 << _BITS), im / (1 << _BITS)) * float(size)
+
+
+def _value(row: list[int], re: int, im: int) -> Fixed:
+    """A polynomial with real coefficients in fixed point."""
+    p, q = row[0], 0
+    for c in row[1:]:
+        p, q = ((p * re - q * im) >> _BITS) + c, (p * im + q * re) >> _BITS
+    return p, q
+
+
+def _shifted(x: int, power: int) -> int:
+    return x << power if power >= 0 else x >> -power
+
+
+def _exponential(re: int, im: int) -> Fixed:
+    """e^z in fixed point: the series of z/2^k, squared k times."""
+    halvings = max(0, max(abs(re), abs(im)).bit_length() - _BITS + 8)
+    re, im = re >> halvings, im >> halvings
+    tr, ti = 1 << _BITS, 0
+    sr, si = tr, ti
+    for k in range(1, 40):
+        tr, ti = ((tr * re - ti * im) >> _BITS) // k, ((tr * im + ti * re) >> _BITS) // k
+        if tr in (0, -1) and ti in (0, -1):
+            break
+        sr, si = sr + tr, si + ti
+    for _ in range(halvings):
+        sr, si = (sr * sr - si * si) >> _BITS, (sr * si) >> (_BITS - 1)
+    return sr, si
 
 
 def _chebyshev(count: int) -> tuple[FloatArray, FloatArray]:

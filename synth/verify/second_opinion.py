@@ -12,6 +12,7 @@ from synth.loop.quantities import QUANTITIES, Measure
 from synth.model.forms import PlantForm
 from synth.model.plant import Plant
 from synth.verify.frequency import frequency_values
+from synth.verify.roots import chain
 from synth.verify.roots import poles as exact_poles
 from synth.verify.subject import Subject
 from synth.verify.time import NotSimulated, respond, time_values
@@ -19,6 +20,7 @@ from synth.verify.time import NotSimulated, respond, time_values
 TOLERANCE = 1e-4
 _REACH = 5.0
 _LEAST_SHARE = 0.02
+_UNSURE = "the poles found do not match the count of the argument principle"
 
 
 @dataclass(frozen=True, slots=True)
@@ -121,10 +123,11 @@ def _values(
         elif m.quantity in statics:
             out[m] = statics[m.quantity]
         elif m.quantity in ("damping_ratio", "decay_rate", "natural_frequency"):
-            if roots is None:
-                missing[m] = "the loop is of neutral type"
+            value = _of_poles(subject, m, roots, looked.get("highest_fall", np.nan))
+            if isinstance(value, str):
+                missing[m] = value
             else:
-                out[m] = _of_poles(subject, m, roots, looked.get("highest_fall", np.nan))
+                out[m] = value
     timed = tuple(
         m for m in measures if m.quantity != "late_deviation" and QUANTITIES[m.quantity].stage == "time"
     )
@@ -161,20 +164,35 @@ def _statics(subject: Subject) -> dict[str, float]:
     return out
 
 
-def _of_poles(subject: Subject, measure: Measure, roots: ComplexArray, highest_fall: float) -> float:
+def _of_poles(
+    subject: Subject, measure: Measure, roots: ComplexArray | None, highest_fall: float
+) -> float | str:
+    """A quantity of the poles' stage, or why there is none."""
+    if roots is None:
+        return _UNSURE
     if measure.quantity == "decay_rate":
-        return float(-roots.real.max()) if roots.size else np.inf
+        return min(float(-roots.real.max()) if roots.size else np.inf, chain(subject))
+    above, _ = subject.exact
+    delayed = subject.dead_time > 0.0
+    everything = not np.isfinite(highest_fall) or above[-1] == 0
+    if measure.below is not None and measure.quantity == "damping_ratio":
+        reach, everything = measure.below, False
+    elif everything:
+        if delayed and measure.quantity == "damping_ratio":
+            return "all of infinitely many poles count"
+        reach = np.inf
+    else:
+        reach = _REACH * highest_fall
+    if delayed and not everything:
+        further = exact_poles(subject, reach)
+        if further is None:
+            return _UNSURE
+        roots = further
     size = np.abs(roots)
     share = _shares(subject, roots)
-    above, _ = subject.exact
-    if measure.below is not None and measure.quantity == "damping_ratio":
-        counted = size <= measure.below
-    elif not np.isfinite(highest_fall) or above[-1] == 0:
-        counted = np.ones(len(roots), dtype=bool)
-    else:
-        counted = size <= _REACH * highest_fall
-        if subject.dead_time == 0.0:
-            counted |= share >= _LEAST_SHARE
+    counted = size <= reach
+    if not delayed and measure.below is None:
+        counted |= share >= _LEAST_SHARE
     if measure.quantity == "damping_ratio":
         ratio = -roots.real[counted] / size[counted]
         return float(ratio.min()) if ratio.size else np.nan
