@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from synth.loop.arrays import FloatArray, IntArray
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,12 +48,13 @@ class Rational:
 
 @dataclass(frozen=True, slots=True)
 class Loops:
-    """M closed loops of one order n, nondimensional.
+    """M closed loops of order n, nondimensional.
 
     All polynomials (M, n + 1), descending powers of s·time_scale:
     numerator    N = N_P N_C            denominator  D = D_P D_C, leading coefficient never 0
     control      N_C D_P                load         N_P D_C
     closed       N + D  (the characteristic polynomial where dead_time is 0)
+    Of loops of several orders put `together`, n is the highest and zeros lead in the rows of the others.
     so that L = N/D e^(-s θ), T = N e^(-s θ)/Δ, C S = control/Δ, P S = load e^(-s θ)/Δ, Δ = D + N e^(-s θ).
 
     dead_time    (M,) θ in units of time_scale; all zero or all positive within one Loops
@@ -80,9 +81,33 @@ class Loops:
         """n, the order of D."""
         return int(self.denominator.shape[1]) - 1
 
-    def rows(self, index: IntArray) -> Loops:
+    def leading(self, polynomials: FloatArray) -> FloatArray:
+        """(M,) coefficient of s^n in each row, n the order of that row's loop."""
+        if self.denominator[:, 0].all():
+            return polynomials[:, 0]
+        out: FloatArray = polynomials[np.arange(len(self)), (self.denominator != 0.0).argmax(axis=1)]
+        return out
+
+    def cut(self) -> Loops:
+        """The same loops without the zeros that lead in all of them."""
+        spare = self.order - int(exact_degree(self.denominator).max(initial=0))
+        parts = {f: getattr(self, f)[:, spare:] for f in POLYNOMIALS}
+        return replace(self, **parts) if spare else self
+
+    def rows(self, index: IntArray | BoolArray) -> Loops:
         """The loops named by `index` (integers or a mask)."""
         return replace(self, **{f: getattr(self, f)[index] for f in self.__slots__})
+
+
+POLYNOMIALS = ("numerator", "denominator", "control", "load", "closed")
+
+
+def together(parts: list[Loops]) -> Loops:
+    """Stacks of several orders as one of the highest; zeros lead in the shorter rows."""
+    order = max(part.order for part in parts)
+    rows = {f: [trimmed(getattr(part, f), order) for part in parts] for f in POLYNOMIALS}
+    rest = {f: [getattr(part, f) for part in parts] for f in ("dead_time", "time_scale", "plant_gain")}
+    return Loops(**{f: np.concatenate(pieces) for f, pieces in (rows | rest).items()})
 
 
 def joined(first: Loops, second: Loops) -> Loops:

@@ -12,11 +12,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
-from synth.loop.closed_loop import Loops, Rational, close, exact_degree, joined
+from synth.loop.closed_loop import Loops, Rational, close, exact_degree, joined, together
 from synth.loop.frequency.stage import frequency_stage
+from synth.loop.poles.doubt import doubts
 from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.roots import closed_roots
-from synth.loop.poles.doubt import doubts
 from synth.loop.poles.stage import PoleStage, needs_counting, pole_stage, statics
 from synth.loop.quantities import EVERY_QUANTITY, Measure
 from synth.loop.stand_in import damping, responses, without_dead_time, worthwhile
@@ -25,6 +25,9 @@ from synth.loop.time.stage import time_stage
 # Loops handled at once: large enough to drown the cost of a call, small enough to stay in cache and in
 # memory.
 CHUNK = 2048
+# Stacks of fewer loops go on together once their poles are known, whatever their orders: what a few loops
+# cost is calls, not arithmetic.
+FEW = 256
 USUAL_DAMPING = Measure("damping_ratio")
 
 
@@ -92,8 +95,9 @@ def evaluate(
     reference_step : size of the reference step that control_peak is judged for.
     screen : thresholds below which a loop is not looked at further.
     pairs : (compensator row, plant row) of M chosen pairs; the result is then flat, (M, ...).
-    rational : let time responses with dead time come from a rational stand-in (synth.loop.stand_in). Some fifty
-        times faster and good to about 1e-3: for a search on its way, never for a figure that is reported.
+    rational : let time responses with dead time come from a rational stand-in (synth.loop.stand_in). Some
+        fifty times faster and good to about 1e-3: for a search on its way, never for a figure that is
+        reported.
 
     Returns
     -------
@@ -109,13 +113,23 @@ def evaluate(
         abscissa=np.full(m, np.nan),
         reached=np.zeros(m, dtype=np.intp),
     )
-    replaced = rational and all(m.quantity != "natural_frequency" for m in measures)  # needs shares of true poles
+    # a natural frequency needs the shares of true poles
+    replaced = rational and all(m.quantity != "natural_frequency" for m in measures)
+    until = screen or Screen()
+    few: list[Stack] = []
     for rows in stacks(plants, compensators, plant_of, compensator_of):
         loops = close(plants, compensators, plant_of[rows], compensator_of[rows])
         if replaced and loops.dead_time[0] > 0.0:
-            rows, loops = _fill_by_stand_in(out, rows, loops, screen or Screen())
-        if rows.size:
-            _fill(out, rows, loops, screen or Screen())
+            rows, loops = _fill_by_stand_in(out, rows, loops, until)
+        if rows.size == 0:
+            continue
+        stack = _fill_poles(out, rows, loops, until)
+        if len(stack[0]) < FEW and not loops.dead_time.any():
+            few.append(stack)
+        else:
+            _fill_responses(out, *stack, until)
+    if few:
+        _fill_responses(out, *_together(few), until)
     for i, measure in enumerate(measures):
         if measure.quantity == "control_peak":
             out.values[:, i] *= abs(reference_step)
@@ -164,12 +178,32 @@ def _order(rationals: Rational) -> IntArray:
     return out
 
 
-def _fill(out: Evaluation, rows: IntArray, loops: Loops, screen: Screen) -> None:
-    """Run one stack through the stages and write what each yields into its rows."""
-    wanted = out.measures
-    stages = {m.row.stage for m in wanted}
-    names = {m.quantity for m in wanted if m.row.stage == "frequency"}
+Stack = tuple[IntArray, Loops, PoleStage]
+"""Rows of the result, their loops and what is known of their poles."""
 
+
+def _together(parts: list[Stack]) -> Stack:
+    """Small stacks as one; poles are padded with NaN."""
+    parts = [part for part in parts if part[0].size] or parts[:1]
+    if len(parts) == 1:
+        return parts[0]
+    rows, loops, stages = (list(kind) for kind in zip(*parts, strict=True))
+    width = max(stage.poles.shape[1] for stage in stages)
+    known = PoleStage(
+        stable=np.concatenate([s.stable for s in stages]),
+        abscissa=np.concatenate([s.abscissa for s in stages]),
+        poles=np.concatenate(
+            [np.pad(s.poles, ((0, 0), (0, width - s.poles.shape[1])), constant_values=np.nan) for s in stages]
+        ),
+        values={m: np.concatenate([s.values[m] for s in stages]) for m in stages[0].values},
+        reach=np.concatenate([s.reach for s in stages]),
+    )
+    return np.concatenate(rows), together(loops), known
+
+
+def _fill_poles(out: Evaluation, rows: IntArray, loops: Loops, screen: Screen) -> Stack:
+    """Write what the poles of one stack say; returns the loops that are looked at further."""
+    wanted = out.measures
     stage = pole_stage(loops, wanted)  # stability, poles, and what needs no more than coefficients
     out.stable[rows] = stage.stable
     out.abscissa[rows] = stage.abscissa / loops.time_scale
@@ -183,9 +217,16 @@ def _fill(out: Evaluation, rows: IntArray, loops: Loops, screen: Screen) -> None
             if measure.quantity == "damping_ratio" and measure.below is None:
                 out.values[rows[early], i] = sure[early]
         rows, loops, stage = _kept(rows, loops, stage, ~early)
+    return rows, loops, stage
+
+
+def _fill_responses(out: Evaluation, rows: IntArray, loops: Loops, stage: PoleStage, screen: Screen) -> None:
+    """Run loops with known poles through the further stages and write what each yields."""
     if rows.size == 0:
         return
-
+    wanted = out.measures
+    stages = {m.row.stage for m in wanted}
+    names = {m.quantity for m in wanted if m.row.stage == "frequency"}
     counting = tuple(m for m in wanted if needs_counting(m))
     if screen.least_damping > 0.0 and USUAL_DAMPING not in counting:
         counting = (*counting, USUAL_DAMPING)

@@ -57,6 +57,38 @@ def test_chosen_pairs_and_the_whole_table_agree():
     np.testing.assert_allclose(some.abscissa, whole.abscissa[b, k], rtol=1e-9)
 
 
+def test_loops_of_many_orders_in_one_call_score_as_each_for_itself():
+    """Orders 0 to 8, repeated poles, a direct path, T(0) = 0 and unstable ones among them."""
+    plants = [
+        ([2.0], [1.0]),
+        ([1.0], [3.0, 1.0]),
+        ([1.0, 3.0], [1.0, 1.0]),
+        ([1.0, 0.0], [1.0, 1.4, 1.0]),
+        ([1.0], [1.0, 3.0, 3.0, 0.0]),
+        ([1.0], [1.0, 4.0, 6.0, 4.0, 1.0]),
+        ([0.1, 1.0], [1.0, 0.3, 4.0, 0.5, 1.0]),
+        ([1.0], list(np.poly([-1.0, -2.0, -2.0, -3.0, -30.0, -0.5]))),
+        ([1.0], [1.0, -1.0]),
+    ]
+    comps = [([0.4], [1.0]), ([1.5, 1.0], [1.5, 0.0]), ([2.0, 1.2, 0.3], [0.05, 1.0, 0.0])]
+    wide = [max(len(p[i]) for p in plants) for i in (0, 1)]
+    padded = [[[0.0] * (wide[i] - len(p[i])) + list(p[i]) for p in plants] for i in (0, 1)]
+    stack = Rational.of(
+        [[0.0] * (3 - len(c[0])) + c[0] for c in comps], [[0.0] * (3 - len(c[1])) + c[1] for c in comps]
+    )
+    measures = (*EVERY_QUANTITY, Measure("late_deviation", after=2.0), Measure("settling_time", band=0.05))
+    for screen in (None, Screen(least_damping=0.2, most_peak=3.0)):
+        whole = evaluate(Rational.of(*padded), stack, measures=measures, screen=screen)
+        assert 0 < whole.stable.sum() < whole.stable.size
+        for b, comp in enumerate(comps):
+            for k, plant in enumerate(plants):
+                alone = evaluate(Rational.of(*plant), Rational.of(*comp), measures=measures, screen=screen)
+                np.testing.assert_allclose(whole.values[b, k], alone.values[0, 0], rtol=1e-9, atol=1e-9)
+                assert whole.stable[b, k] == alone.stable[0, 0]
+                assert whole.reached[b, k] == alone.reached[0, 0]
+                np.testing.assert_array_equal(whole.approximate[b, k], alone.approximate[0, 0])
+
+
 def test_mixed_orders_and_dead_times_are_closed_apart():
     plants = Rational.of(
         [[0, 0, 1.0], [0, 0, 1.0], [0, 0, 2.0]], [[1.0, 1, 1], [0, 1.0, 1], [1.0, 2, 0]], [0, 0.3, 0]

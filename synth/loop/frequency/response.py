@@ -27,7 +27,7 @@ class Response:
     halves   (h + 1, 3, 2, 4 M): ascending powers of x; p, dp/du, d²p/du²; even and odd half; polynomial-major
         columns
     squares  (n + 1, 4, M): |p(jω)|² in ascending powers of x
-    ends     (2, 4, M): the coefficients of s^0 and s^n
+    ends     (2, 4, M): the coefficients of s^0 and s^n, n each loop's own order
     dead_time  (M,)
     """
 
@@ -72,7 +72,8 @@ def response_of(loops: Loops) -> Response:
         value = -row if i % 2 else row  # s^k = j^k ω^k
         halves[i, 0, half], halves[i, 1, half], halves[i, 2, half] = value, k * value, k * k * value
     squares = square(halves[:, 0], n).reshape(n + 1, 4, m)
-    return Response(halves, squares, ascending[[0, n]], loops.dead_time)
+    ends = np.stack([ascending[0], np.stack([loops.leading(part) for part in stack])])
+    return Response(halves, squares, ends, loops.dead_time)
 
 
 def square(halves: FloatArray, n: int) -> FloatArray:

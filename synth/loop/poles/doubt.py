@@ -35,12 +35,13 @@ def uncertainty(loops: Loops, poles: ComplexArray) -> FloatArray:
         noise = 2.0 * loops.order * np.finfo(float).eps * magnitude_sum(whole, size)
         _, slope = horner_slope(loops.closed, poles)
         off: FloatArray = noise / np.abs(slope)
-        rows = np.flatnonzero((~(off <= SUSPECT * size)).any(axis=1))
+        rows = np.flatnonzero((~(off <= SUSPECT * size) & ~np.isnan(poles)).any(axis=1))
         if rows.size:
             gap = np.abs(poles[rows][:, :, None] - poles[rows][:, None, :])
+            gap[np.isnan(gap)] = 1.0  # of padding
             own = np.arange(gap.shape[1])
             gap[:, own, own] = 0.0
-            lead = np.abs(loops.closed[rows, :1])
+            lead = np.abs(loops.leading(loops.closed)[rows, None])
             low, high = np.zeros((len(rows), len(own))), 2.0 * size[rows]
             for _ in range(40):
                 middle = 0.5 * (low + high)

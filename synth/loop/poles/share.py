@@ -50,7 +50,7 @@ def spaced(loops: Loops, poles: ComplexArray) -> Spacing:
         return none
     with np.errstate(all="ignore"):
         product, nearest = _product_and_nearest(poles)
-        slope = np.abs(loops.closed[:, :1] * product)
+        slope = np.abs(loops.leading(loops.closed)[:, None] * product)
         noise = 20.0 * count * np.finfo(float).eps * magnitude_sum(loops.closed, np.abs(poles))
         rows = np.flatnonzero((nearest * slope <= noise).any(axis=1))
         if rows.size == 0:
@@ -98,7 +98,8 @@ def residues(loops: Loops, poles: ComplexArray, spacing: Spacing | None = None) 
             turn = np.exp(-poles * theta)
             return top * turn / (poles * (slope + (top_slope - theta * top) * turn))
         spacing = spacing or spaced(loops, poles)
-        found = horner(loops.numerator, poles) / (poles * loops.closed[:, :1] * spacing.product)
+        leading = loops.leading(loops.closed)[:, None]
+        found = horner(loops.numerator, poles) / (poles * leading * spacing.product)
         some = spacing.rows
         if some.size:
             found[some] = _group_residues(loops.rows(some), poles[some], spacing.groups, found[some])

@@ -29,7 +29,7 @@ def upper_half(poles: ComplexArray) -> tuple[ComplexArray, FloatArray, IntArray]
     Returns (M, m) poles with -1 in empty slots, (M, m) weights (2 a pair, 1 a real, 0 an empty slot) and the
     column (M, m) each came from.
     """
-    keep = poles.imag >= 0.0
+    keep = (poles.imag >= 0.0) & ~np.isnan(poles)
     m = int(keep.sum(axis=1).max(initial=0))
     column: IntArray = np.argsort(~keep, axis=1, kind="stable")[:, :m]
     pole = np.take_along_axis(poles, column, axis=1)
@@ -51,9 +51,12 @@ def step_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -> M
     pole, weight, column = upper_half(poles)
     m, slots = pole.shape
     gap = pole[:, :, None] - poles[:, None, :]
+    padding = np.isnan(poles)
+    if padding.any():
+        gap[np.broadcast_to(padding[:, None, :], gap.shape)] = 1.0
     np.put_along_axis(gap, column[:, :, None], 1.0, axis=2)
     with np.errstate(all="ignore"):
-        factor = weight / (loops.closed[:, :1] * pole * gap.prod(axis=2))
+        factor = weight / (loops.leading(loops.closed)[:, None] * pole * gap.prod(axis=2))
         factor[weight == 0.0] = 0.0
         residue = np.empty((m, len(signals), slots), dtype=complex)
         for i, name in enumerate(signals):
@@ -79,13 +82,14 @@ def crowding(poles: ComplexArray) -> FloatArray:
     index = np.arange(poles.shape[1])
     gap[:, index, index] = 1.0
     with np.errstate(divide="ignore", over="ignore"):
-        out: FloatArray = 1.0 / np.minimum(gap, 1.0).prod(axis=2).min(axis=1, initial=1.0)
+        out: FloatArray = 1.0 / np.fmin(gap, 1.0).prod(axis=2).min(axis=1, initial=1.0)
     return out
 
 
 def limits(loops: Loops, signals: tuple[str, ...]) -> tuple[FloatArray, FloatArray]:
     """Values of the named signals at 0+ and at infinity, (M, S) each."""
     top = [numerator_of(loops, name) for name in signals]
-    start = np.stack([p[:, 0] / loops.closed[:, 0] for p in top], axis=1)
+    closed = loops.leading(loops.closed)
+    start = np.stack([loops.leading(p) / closed for p in top], axis=1)
     end = np.stack([p[:, -1] / loops.closed[:, -1] for p in top], axis=1)
     return start, end

@@ -44,7 +44,8 @@ class TimeStage:
 def time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...]) -> TimeStage:
     """The time-stage measures among `measures`, for M stable loops.
 
-    poles : (M, n) scaled closed-loop poles, pairs adjacent, upper first (with dead time: the roots found).
+    poles : (M, n) scaled closed-loop poles, pairs adjacent, upper first, NaN-padded (with dead time: the
+    roots found).
     """
     asked = tuple(m for m in measures if m.row.stage == "time")
     if (loops.dead_time > 0.0).any():
@@ -65,6 +66,8 @@ def _plain_stage(loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...]) 
     close = crowding(poles) > CROWDED
     if not close.any():
         return _Reading(loops, step_modes(loops, poles, signals), signals, asked).read()
+    if not loops.denominator[:, 0].all():
+        return _order_by_order(loops, poles, asked, close)
     values = {m: np.full(len(loops), np.nan) for m in asked}
     approximate: dict[Measure, BoolArray] = {}
     together = np.flatnonzero(close)
@@ -92,7 +95,23 @@ def _in_range(clusters: ClusterModes) -> BoolArray:
     """
     end = 30.0 / -clusters.pole.real.max(axis=1)
     values = clusters.curves(end[:, None] * np.array([0.0, 0.1, 1.0]))
-    out: BoolArray = np.isfinite(values).all(axis=(1, 2))
+    return np.asarray(np.isfinite(values).all(axis=(1, 2)))
+
+
+def _order_by_order(
+    loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...], crowded: BoolArray
+) -> TimeStage:
+    """A stack of several orders: its crowded loops (M,) for themselves, those of one order at a time."""
+    out = TimeStage({m: np.full(len(loops), np.nan) for m in asked}, {})
+    order = np.where(crowded, np.count_nonzero(~np.isnan(poles), axis=1), -1)
+    for n in np.unique(order):
+        rows = np.flatnonzero(order == n)
+        some = loops.rows(rows).cut()
+        part = _plain_stage(some, poles[rows, : some.order], asked)
+        for m in asked:
+            out.values[m][rows] = part.values[m]
+        for m, doubt in part.approximate.items():
+            out.approximate.setdefault(m, np.zeros(len(loops), dtype=bool))[rows] = doubt
     return out
 
 
@@ -195,7 +214,7 @@ class _Reading:
             k = list(self.passages).index((-m.band, m.band, True))
             value, self.approximate[m] = found.passages[k], found.open_passages[k].copy()
         else:
-            key = {"peak_time": "overshoot", "late_deviation": m}.get(name, name)
+            key = m if name == "late_deviation" else "overshoot" if name == "peak_time" else name
             k = list(self.suprema).index(key)
             value, self.approximate[m] = found.suprema[k], found.open_suprema[k].copy()
             if name in ("control_peak", "disturbance_peak"):
