@@ -40,9 +40,7 @@ FEW = 128
 FAR_AWAY = 1e9
 
 
-def delayed_poles(
-    loops: Loops, reach: FloatArray, open_poles: ComplexArray | None = None
-) -> ComplexArray:
+def delayed_poles(loops: Loops, reach: FloatArray, open_poles: ComplexArray | None = None) -> ComplexArray:
     """All roots with abs(p) <= reach, and never fewer than the rightmost one or pair.
 
     Parameters
@@ -140,7 +138,7 @@ def _seeds(loops: Loops, pairs: int, open_poles: ComplexArray) -> ComplexArray:
 
 def _upper(seeds: ComplexArray) -> ComplexArray:
     """The real ones and those of the upper half plane, in as few columns as hold them."""
-    there = seeds.imag >= 0.0
+    there = (seeds.imag >= 0.0) & np.isfinite(seeds.real)
     order = np.argsort(~there, axis=1, kind="stable")[:, : int(there.sum(axis=1).max(initial=0))]
     return np.take_along_axis(np.where(there, seeds, np.nan), order, axis=1)
 
@@ -398,7 +396,8 @@ def _holds_rightmost(
     if doubtful.size:
         line = np.maximum(best, chain)[doubtful] + 1e-6 / loops.dead_time[doubtful]
         readable = np.isfinite(line)
-        count, _ = roots_right_of(loops.rows(doubtful[readable]), line[readable])
+        at = doubtful[readable]
+        count, _ = roots_right_of(loops.rows(at), line[readable], open_poles[at])
         sure[doubtful[readable]] = ~(count > 0.0)
         empty = ~np.isfinite(best)[doubtful]
         # without N, or where the row is not finite, there may be nothing to find
@@ -408,9 +407,7 @@ def _holds_rightmost(
     return sure
 
 
-def _most_outside(
-    loops: Loops, radius: FloatArray, open_poles: ComplexArray, line: FloatArray
-) -> FloatArray:
+def _most_outside(loops: Loops, radius: FloatArray, open_poles: ComplexArray, line: FloatArray) -> FloatArray:
     """A bound of abs(N/D) outside the circle and right of the line, (M,).
 
     abs(N)/r^n falls with r. Each factor abs(s - p)/r of D is at least 1 - abs(p)/r; for p in the left half

@@ -16,14 +16,14 @@ from synth.loop.polynomials import horner
 ON_THE_LINE = 1e-12
 
 
-def delayed_stable(loops: Loops) -> BoolArray:
+def delayed_stable(loops: Loops, open_poles: ComplexArray | None = None) -> BoolArray:
     """Whether every root of D + N e^(-s θ) lies strictly in the left half plane, and stays there under a
     small lag.
 
-    loops : dead_time (M,) > 0. Returns (M,). abs(L(∞)) >= 1 is not stable (a chain of roots on or right of
+    loops : dead_time (M,) > 0; open_poles : (M, n) roots of D, where they are known. Returns (M,). abs(L(∞)) >= 1 is not stable (a chain of roots on or right of
     the axis), nor is a root on the axis, nor a row that is not finite.
     """
-    count, touching = roots_right_of(loops, np.zeros(len(loops)))
+    count, touching = roots_right_of(loops, np.zeros(len(loops)), open_poles)
     stable: BoolArray = (count == 0.0) & ~touching
     return stable
 
@@ -36,10 +36,12 @@ def chain_abscissa(loops: Loops) -> FloatArray:
     return out
 
 
-def roots_right_of(loops: Loops, line: FloatArray) -> tuple[FloatArray, BoolArray]:
+def roots_right_of(
+    loops: Loops, line: FloatArray, open_poles: ComplexArray | None = None
+) -> tuple[FloatArray, BoolArray]:
     """Number of roots with real part above `line`, and whether one lies on the line itself.
 
-    loops : dead_time (M,) > 0; line : (M,) scaled 1/time.
+    loops : dead_time (M,) > 0; line : (M,) scaled 1/time; open_poles : (M, n) roots of D, where known.
     Returns count (M,) as floats, inf where the far chain of roots is not left of the line, NaN for a row that
     is not finite; touching (M,).
 
@@ -67,7 +69,12 @@ def roots_right_of(loops: Loops, line: FloatArray) -> tuple[FloatArray, BoolArra
             count[usable] = 0.0
             return count, touching
         if usable.any():
-            change, near = _argument_change(denominator[usable], numerator[usable], loops.dead_time[usable])
+            from_d = closed_roots(denominator[usable]) if open_poles is None else open_poles[usable]
+            if open_poles is not None:
+                from_d = from_d - line[usable, None]
+            change, near = _argument_change(
+                denominator[usable], numerator[usable], loops.dead_time[usable], from_d
+            )
             right = 0.5 * order - change / np.pi
             whole = np.round(right)
             count[usable] = np.where(np.abs(right - whole) < 0.25, whole, np.nan)
@@ -110,7 +117,7 @@ def unit_crossings(denominator: FloatArray, numerator: FloatArray) -> FloatArray
 
 
 def _argument_change(
-    denominator: FloatArray, numerator: FloatArray, delay: FloatArray
+    denominator: FloatArray, numerator: FloatArray, delay: FloatArray, from_d: ComplexArray
 ) -> tuple[FloatArray, BoolArray]:
     """Change of arg(D + N e^(-jωθ)) from ω = 0 to ∞, less the bounded swing of the far chain; and roots met.
 
@@ -127,7 +134,7 @@ def _argument_change(
     numerator_above = there & (beyond % 2 == 0)
     change = np.where(numerator_above, angle, -angle).sum(axis=1)
 
-    from_d, from_n = closed_roots(denominator), closed_roots(numerator)
+    from_n = closed_roots(numerator)
     final = -np.sign(from_d.real).sum(axis=1) * (np.pi / 2.0)
     edges = np.concatenate([np.zeros((len(at), 1)), at], axis=1)
     arg_d, arg_n = _argument(from_d, edges), _argument(from_n, edges) - edges * delay[:, None]

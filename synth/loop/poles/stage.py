@@ -8,8 +8,8 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.poles.delayed import delayed_poles
-from synth.loop.poles.encirclement import delayed_stable, unit_crossings
+from synth.loop.poles.delayed import NEAREST, delayed_poles
+from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.roots import closed_roots, routh_stable
 from synth.loop.poles.share import Spacing, damping_of, share_in_step, spaced
 from synth.loop.polynomials import coefficient
@@ -19,9 +19,6 @@ from synth.loop.quantities import Measure
 REACH = 5.0
 # ... and, without dead time, any pole whose share in the reference step is at least this.
 LEAST_SHARE = 0.02
-# With dead time, poles are fetched at first as if abs(T) fell at this many times the gain crossover: nine in
-# ten of the random designs of benchmarks/populations.py fall below 2.6 times it.
-FALL_OVER_CROSSOVER = 3.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -195,13 +192,10 @@ def _without_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArra
 
 
 def _with_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray, FloatArray]:
-    # abs(T) falls for the last time not far above the crossover: as far as counting will most likely ask
-    stable = delayed_stable(loops)
-    with np.errstate(all="ignore"):
-        crossover = unit_crossings(loops.denominator, loops.numerator)
-    last = np.where(np.isfinite(crossover), crossover, 0.0).max(axis=1, initial=0.0)
-    reach = np.where(stable, REACH * FALL_OVER_CROSSOVER * last, 0.0)
-    poles = delayed_poles(loops, reach)
+    open_poles = closed_roots(loops.denominator)
+    stable = delayed_stable(loops, open_poles)
+    reach = NEAREST / loops.dead_time  # counting asks for more where it reaches further
+    poles = delayed_poles(loops, reach, open_poles)
     abscissa = np.where(np.isnan(poles.real), -np.inf, poles.real).max(axis=1, initial=-np.inf)
     with np.errstate(divide="ignore", invalid="ignore"):
         chain = np.log(np.abs(loops.numerator[:, 0] / loops.denominator[:, 0])) / loops.dead_time

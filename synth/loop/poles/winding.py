@@ -84,12 +84,31 @@ def _divided(
     small = np.exp(np.where(left, s, -s) * delay)
     d, n = horner(loops.denominator, s), horner(loops.numerator, s)
     value = np.where(left, d * small + n, d + n * small)
-    inverse = 1.0 / s
-    for k in range(roots.shape[1]):
-        value /= 1.0 - np.where(np.isnan(roots[:, k, None]), 0.0, roots[:, k, None]) * inverse
+    value /= _product(roots, 1.0 / s)
     size = np.abs(value)
     turned = np.exp(np.where(left, -1j * s.imag * delay, 0.0))
     return value / size * turned, np.log(size) - np.where(left, s.real * delay, 0.0)
+
+
+def _product(roots: ComplexArray, inverse: ComplexArray) -> ComplexArray:
+    """Π (1 - p/s) over the known roots, conjugate and NaN padded. (M, q), 1/s (M, K) -> (M, K).
+
+    A pair is 1 - 2 Re p/s + abs(p)²/s²: half as many products.
+    """
+    there = (roots.imag >= 0.0) & np.isfinite(roots.real)  # NaN may come with an imaginary part of 0
+    order = np.argsort(~there, axis=1, kind="stable")[:, : int(there.sum(axis=1).max(initial=0))]
+    upper = np.take_along_axis(np.where(there, roots, 0.0), order, axis=1)
+    pair = upper.imag > 0.0
+    first = np.where(pair, -2.0, -1.0) * upper.real
+    second = np.where(pair, upper.real**2 + upper.imag**2, 0.0)
+    out = np.ones_like(inverse)
+    for k in range(upper.shape[1]):
+        factor = inverse * second[:, k, None]
+        factor += first[:, k, None]
+        factor *= inverse
+        factor += 1.0
+        out *= factor
+    return out
 
 
 def _turning(unit: ComplexArray, known: IntArray) -> tuple[FloatArray, BoolArray]:
