@@ -127,7 +127,9 @@ def trimmed(polynomials: FloatArray, degree: int) -> FloatArray:
     width = polynomials.shape[1]
     if width >= degree + 1:
         return polynomials[:, width - degree - 1 :]
-    return np.pad(polynomials, ((0, 0), (degree + 1 - width, 0)))
+    out = np.zeros((polynomials.shape[0], degree + 1))
+    out[:, degree + 1 - width :] = polynomials
+    return out
 
 
 def product(a: FloatArray, b: FloatArray) -> FloatArray:

@@ -188,13 +188,15 @@ def _together(parts: list[Stack]) -> Stack:
     if len(parts) == 1:
         return parts[0]
     rows, loops, stages = (list(kind) for kind in zip(*parts, strict=True))
-    width = max(stage.poles.shape[1] for stage in stages)
+    poles = np.full((sum(map(len, rows)), max(s.poles.shape[1] for s in stages)), np.nan, dtype=complex)
+    done = 0
+    for stage in stages:
+        poles[done : done + len(stage.poles), : stage.poles.shape[1]] = stage.poles
+        done += len(stage.poles)
     known = PoleStage(
         stable=np.concatenate([s.stable for s in stages]),
         abscissa=np.concatenate([s.abscissa for s in stages]),
-        poles=np.concatenate(
-            [np.pad(s.poles, ((0, 0), (0, width - s.poles.shape[1])), constant_values=np.nan) for s in stages]
-        ),
+        poles=poles,
         values={m: np.concatenate([s.values[m] for s in stages]) for m in stages[0].values},
         reach=np.concatenate([s.reach for s in stages]),
     )
