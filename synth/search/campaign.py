@@ -41,7 +41,7 @@ EFFORTS = {
     "normal": Effort(60_000, 4, 96, 12, 40),
     "thorough": Effort(600_000, 8, 192, 20, 400),
 }
-PICKS = 6
+PICKS = 10
 EXACT_TOPS = 2
 MOST_CASE_TURNS = 12
 FAR = (

@@ -62,7 +62,7 @@ class Pace:
     least: float = 2e-4
     iterations: int = 14
     halve: tuple[int, ...] = (3, 6)
-    field: int = 3
+    field: int = 5
     second: bool = False
 
 

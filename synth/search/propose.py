@@ -12,6 +12,7 @@ from synth.loop.arrays import FloatArray
 from synth.model.cases import PlantCase
 from synth.search.archive import Rows, joined
 from synth.search.campaign import Campaign
+from synth.search.dense import dense_scans
 from synth.search.finals import (
     Draft,
     candidates,
@@ -53,6 +54,11 @@ def propose(
     campaign = Campaign(task, settings, extra=extra, progress=progress, stop=stop)
     campaign.run(_seed_rows(campaign, seeds))
     found, listed, wish_rows = _listed(campaign)
+    if not any(c.meets_all for c in listed) and not campaign.halted():
+        campaign.enter("dense scans")
+        if dense_scans(campaign):
+            campaign.examine(list(range(len(campaign.standings))))
+            found, listed, wish_rows = _listed(campaign, wish_rows)
     examined = 0
     for _ in range(BOX_TURNS):
         if task.interior is None or not listed:
@@ -189,7 +195,8 @@ def _scan(campaign: Campaign, n: int) -> Scan:
     standing = campaign.standings[n]
     return Scan(
         structure=campaign.task.structures[n].name,
-        exhaustive="exact" if standing.parameters == 1 else "search",
+        exhaustive="exact" if standing.parameters == 1 else "dense" if standing.resolution else "search",
+        resolution=standing.resolution,
         restarts=standing.restarts,
         agreeing=standing.agreeing,
         settled=standing.settled,

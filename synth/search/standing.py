@@ -23,6 +23,8 @@ class Standing:
     optima     merits of the polishes that ran to their end since the active cases last changed
     restarts   polishes that ran to their end, ever
     signs      of the gain that some start stabilised
+    resolution of the dense scan, where there was one: largest ratio between neighbouring values of a
+    parameter
     """
 
     number: int
@@ -35,6 +37,7 @@ class Standing:
     rounds: int = 0
     settled: bool = False
     evaluations: int = 0
+    resolution: float | None = None
 
     @property
     def best(self) -> float:

@@ -72,11 +72,11 @@ def test_rows_do_not_influence_each_other():
 
 def test_the_field_is_halved_per_structure():
     objective = Objective(servo(("PI", "lead")))
-    rows = joined([sample(objective, s, 12, 4).take(np.arange(6)) for s in range(2)])
+    rows = joined([sample(objective, s, 12, 4).take(np.arange(10)) for s in range(2)])
     done = polish(objective, rows, pace=Pace(iterations=7))
     for s in range(2):
         mine = done.rows.structure == s
-        assert done.finished[mine].sum() == 3
+        assert done.finished[mine].sum() == 5
         assert done.merit[mine & done.finished].min() >= done.merit[mine & ~done.finished].max() - 1.0
 
 
