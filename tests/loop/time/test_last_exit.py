@@ -4,6 +4,7 @@ import mpmath as mp
 import numpy as np
 import pytest
 
+from synth.loop.closed_loop import joined
 from synth.loop.quantities import Measure
 from synth.loop.time.stage import time_stage
 
@@ -83,31 +84,94 @@ def check_last_exit(reference, got, band):
 @pytest.mark.parametrize("order", [3, 4, 5, 6, 8, 10])
 @pytest.mark.parametrize("light", [False, True])
 def test_no_late_exit_among_many(random_loops, exact, order, light):
-    """2,400 random loops, half on lightly damped plants: dense times after the exit stay in the band."""
-    rng = np.random.default_rng(100 * order + light)
-    loops, poles = random_loops(rng, 1600 if order > 5 else 400, order, light)
-    loops, poles = loops.rows(np.arange(min(200, len(loops)))), poles[:200]
-    assert len(loops) >= 20
+    """2,400 stable random loops in all, half of them on lightly damped plants (zeta from 0.004 on).
+
+    Beyond the exit found: samples at 16 a radian of every mode while it lasts, every local maximum near the
+    band's edge refined, none outside. Before it: on the edge, and outside just before.
+    """
+    loops, poles = enough_loops(random_loops, order, light)
+    assert len(loops) == 200
     for band in (0.02, 0.05):
         measure = Measure("settling_time", band=band)
-        got = time_stage(loops, poles, (measure,)).values[measure]
-        final = loops.numerator[:, -1] / loops.closed[:, -1]
-        # slopes of the polynomial, not the product over the poles that the code under test uses
-        residue = evaluate_rows(loops.numerator, poles) / (
-            poles * evaluate_rows(slope_of(loops.closed), poles)
-        )
-        residue /= final[:, None]
-        life = np.log(np.maximum(np.abs(residue), 1e-3) * poles.shape[1] / 0.01) / -poles.real
-        span = np.maximum(life.max(axis=1) - got, 1e-6)
-        early = got[:, None] * (1 + 1e-6) + np.geomspace(1e-6, 1.0, 300) * span[:, None]
-        period = np.arange(1, 900) * (2 * np.pi / 24) / np.abs(poles.imag).max(axis=1).clip(1e-3)[:, None]
-        for times in (early, got[:, None] + period):
-            z = np.einsum("mi,mti->mt", residue, np.exp(poles[:, None, :] * times[:, :, None])).real
-            assert (np.abs(z) <= band * (1 + 1e-6)).all()
-        edge = np.abs(np.einsum("mi,mi->m", residue, np.exp(poles * got[:, None])).real)
-        for i in np.flatnonzero((got > 0) & (np.abs(edge - band) > 1e-7 * band)):
-            # slopes at crowded poles lose digits: these few in 40
+        stage = time_stage(loops, poles, (measure,))
+        got = stage.values[measure]
+        assert not stage.approximate[measure].any()
+        pole, residue = independent_modes(loops, poles)
+        row, late = highest_after(pole, residue, got, band)
+        doubted = set(row[late > band * (1 + 1e-7)])
+        edge = np.abs(np.einsum("mi,mi->m", residue, np.exp(pole * got[:, None])).real)
+        before = np.abs(np.einsum("mi,mi->m", residue, np.exp(pole * (got * (1 - 1e-5))[:, None])).real)
+        wrong = (np.abs(edge - band) > 1e-7 * band) | (before < band * (1 - 1e-3))
+        doubted |= set(np.flatnonzero((got > 0) & wrong))
+        assert len(doubted) < 20
+        for i in sorted(doubted):  # slopes at crowded poles lose digits: these few in 40
             check_last_exit(exact(loops, i), got[i], band)
+
+
+def enough_loops(random_loops, order, light):
+    """The first 200 loops that are stable, drawn in batches."""
+    rng = np.random.default_rng(100 * order + light)
+    parts = []
+    while sum(len(part[0]) for part in parts) < 200:
+        parts.append(random_loops(rng, 400, order, light, 0.004 if light else 0.02))
+    loops, poles = parts[0]
+    for more, their_poles in parts[1:]:
+        loops, poles = joined(loops, more), np.concatenate([poles, their_poles])
+    return loops.rows(np.arange(200)), poles[:200]
+
+
+def independent_modes(loops, poles):
+    """(M, m) upper poles and residues of z - 1, these from slopes of the polynomial.
+
+    The code under test takes products over the poles instead. Pairs count double; empty slots have residue 0.
+    """
+    final = loops.numerator[:, -1] / loops.closed[:, -1]
+    residue = evaluate_rows(loops.numerator, poles) / (poles * evaluate_rows(slope_of(loops.closed), poles))
+    residue = residue / final[:, None] * np.where(poles.imag > 0, 2.0, np.where(poles.imag == 0, 1.0, 0.0))
+    return poles, residue
+
+
+def highest_after(pole, residue, got, band):
+    """(row, height) of the local maxima of abs(z - 1) after the exit, and of each loop's largest sample."""
+    rows, heights = [], []
+    for k in range(pole.shape[1]):
+        p, r = pole[:, k], residue[:, k]
+        left = np.log(np.maximum(np.abs(r), 1e-12) * pole.shape[1] / band) / -p.real - got
+        life = np.where((p.imag >= 0) & (left > 0), left, 0.0)
+        count = np.minimum(np.ceil(16 * life * np.abs(p)), 6000).astype(int)
+        for some in np.array_split(np.argsort(count), 8):
+            most = count[some].max()
+            if most == 0:
+                continue
+            spread = np.linspace(0.0, 1.0, most + 1) * life[some, None]
+            t = got[some, None] * (1 + 1e-7) + spread
+            z = signal(pole[some], residue[some], t, 0)
+            rows.append(some)
+            heights.append(np.abs(z).max(axis=1))
+            inner = np.abs(z[:, 1:-1])
+            top = (inner >= np.abs(z[:, :-2])) & (inner >= np.abs(z[:, 2:])) & (inner > 0.9 * band)
+            at, place = np.nonzero(top)
+            if at.size:
+                loop, when = some[at], t[at, place + 1]
+                for _ in range(4):
+                    first, second = (
+                        signal(pole[loop], residue[loop], when[:, None], d)[:, 0] for d in (1, 2)
+                    )
+                    step = np.clip(first / second, t[at, place] - when, t[at, place + 2] - when)
+                    when = when - np.where(np.isfinite(step), step, 0.0)
+                when = np.clip(when, t[at, place], t[at, place + 2])
+                rows.append(loop)
+                heights.append(np.abs(signal(pole[loop], residue[loop], when[:, None], 0)[:, 0]))
+    return np.concatenate([*rows, np.zeros(0, dtype=int)]), np.concatenate([*heights, np.zeros(0)])
+
+
+def signal(pole, residue, t, derivative):
+    """Derivative of z - 1 at times (M, T) of each loop."""
+    out = np.zeros(t.shape)
+    for k in range(pole.shape[1]):
+        if residue[:, k].any():
+            out += (residue[:, k, None] * pole[:, k, None] ** derivative * np.exp(pole[:, k, None] * t)).real
+    return out
 
 
 def evaluate_rows(rows, at):
