@@ -54,20 +54,27 @@ class Subject:
 
     @cached_property
     def exact(self) -> tuple[Exact, Exact]:
-        """N_P N_C and D_P D_C without rounding, both as long as D."""
-        below = _product(self.plant.denominator, self.denominator)
-        above = _product(self.plant.numerator, self.numerator)
+        """N_P N_C and D_P D_C without rounding, both as long as D.
+
+        All products are divided by one power of two, so that those of D are near 1 and fit a double.
+        """
+        below = self._product(self.plant.denominator, self.denominator)
+        above = self._product(self.plant.numerator, self.numerator)
         return _padded(above, len(below)), below
 
     @cached_property
     def load(self) -> Exact:
         """N_P D_C without rounding, as long as D."""
-        return _padded(_product(self.plant.numerator, self.denominator), len(self.exact[1]))
+        return _padded(self._product(self.plant.numerator, self.denominator), len(self.exact[1]))
 
     @cached_property
     def control(self) -> Exact:
         """D_P N_C without rounding, as long as D."""
-        return _padded(_product(self.plant.denominator, self.numerator), len(self.exact[1]))
+        return _padded(self._product(self.plant.denominator, self.numerator), len(self.exact[1]))
+
+    def _product(self, a: tuple[float, ...], b: tuple[float, ...]) -> Exact:
+        plant, own = (np.frexp(np.abs(p).max())[1] for p in (self.plant.denominator, self.denominator))
+        return _product(a, b, Fraction(2) ** -(int(plant) + int(own)))
 
 
 def scaled(polynomial: Sequence[Fraction], power: int) -> FloatArray:
@@ -81,9 +88,9 @@ def _padded(polynomial: Exact, length: int) -> Exact:
     return (Fraction(0),) * (length - len(polynomial)) + polynomial
 
 
-def _product(a: tuple[float, ...], b: tuple[float, ...]) -> Exact:
+def _product(a: tuple[float, ...], b: tuple[float, ...], scale: Fraction) -> Exact:
     out = [Fraction(0)] * (len(a) + len(b) - 1)
-    first, second = [Fraction(x) for x in a], [Fraction(y) for y in b]
+    first, second = [Fraction(x) * scale for x in a], [Fraction(y) for y in b]
     for i, x in enumerate(first):
         for j, y in enumerate(second):
             out[i + j] += x * y
