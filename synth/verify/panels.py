@@ -8,6 +8,7 @@ A. R. Curtis, A method for numerical integration on an automatic computer, Numer
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -16,6 +17,8 @@ from synth.loop.arrays import FloatArray, IntArray
 NODES = 16
 POINTS: FloatArray = 0.5 - 0.5 * np.cos(np.pi * np.arange(NODES) / (NODES - 1))
 _ORDERS = np.arange(NODES)
+_UNSEEN = 0.1  # what a panel may do beyond its nodes, relative to what it does at them
+_PLATEAU = 1e-13
 _MOST_LOOKED_AT = 200  # panels that may hold the top
 
 
@@ -53,7 +56,7 @@ _ON_HALVES = basis(_HALVES)
 _MEANS = np.array([1.0 / (1.0 - k * k) if k % 2 == 0 else 0.0 for k in range(NODES)]) @ TO_COEFFICIENTS
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)
 class Trace:
     """start (P,) and length (P,) of the panels [s], in order and without gaps; values (P, 16)."""
 
@@ -61,9 +64,14 @@ class Trace:
     length: FloatArray
     values: FloatArray
 
+    @cached_property
+    def range(self) -> tuple[FloatArray, FloatArray]:
+        """(P,) least and largest value at the nodes of each panel."""
+        return self.values.min(axis=1), self.values.max(axis=1)
+
     def peak(self) -> float:
         """Largest size at the nodes."""
-        return float(np.abs(self.values).max(initial=0.0))
+        return float(max(-self.range[0].min(), self.range[1].max(), 0.0))
 
     def unresolved(self) -> float:
         """Largest of the last two Chebyshev coefficients, relative to the peak."""
@@ -72,44 +80,48 @@ class Trace:
 
     def top(self, sign: float) -> tuple[float, float]:
         """Supremum of sign · signal, and when."""
-        v = sign * self.values
-        highest, lowest = v.max(axis=1), v.min(axis=1)
-        # sixteen points see a panel's top to a small part of what the signal does within it
-        might = highest + 0.1 * (highest - lowest)
+        low, high = self.range
+        highest = high if sign > 0.0 else -low
+        might = highest + _UNSEEN * (high - low)
         look = np.flatnonzero(might >= highest.max())
         if len(look) > _MOST_LOOKED_AT:
             look = look[np.argsort(-might[look])[:_MOST_LOOKED_AT]]
-        close = v[look] @ _ON_CLOSE.T
+        v = sign * self.values[look]
+        close = v @ _ON_CLOSE.T
         best, when = -np.inf, 0.0
         for i in np.argsort(-close.max(axis=1))[:3]:
             panel, j = look[i], int(close[i].argmax())
             x, value = _CLOSE[j], float(close[i, j])
             # where a top is flat its slope still tells the place
-            fall = -(_SLOPE @ v[panel])
+            fall = -(_SLOPE @ v[i])
             low, high = _CLOSE[max(j - 1, 0)], _CLOSE[min(j + 1, len(_CLOSE) - 1)]
             if (basis(np.array([low, high])) @ fall * [-1.0, 1.0] > 0.0).all():
                 x = _upward(fall, low, high)
-                value = max(value, float(basis(np.array(x)) @ v[panel]))
+                value = max(value, float(basis(np.array(x)) @ v[i]))
             if value > best:
                 best, when = value, float(self.start[panel] + self.length[panel] * x)
-        return best, when
+        # a plateau is reached where it begins
+        level = np.flatnonzero(v[:, 0] >= best - _PLATEAU * abs(best))
+        return best, min(when, float(self.start[look[level]].min(initial=np.inf)))
 
     def first(self, level: float) -> float:
         """First time at which the signal has come from 0 to the level; NaN where it never does."""
-        v = (self.values - level) * (np.sign(level) or 1.0)
-        highest, lowest = v.max(axis=1), v.min(axis=1)
-        for panel in np.flatnonzero(highest + 0.1 * (highest - lowest) >= 0.0):
-            reached = _ON_CLOSE @ v[panel] >= 0.0
-            reached[0], reached[-1] = v[panel, 0] >= 0.0, v[panel, -1] >= 0.0
+        low, high = self.range
+        sign = np.sign(level) or 1.0
+        highest = high if sign > 0.0 else -low
+        for panel in np.flatnonzero(highest + _UNSEEN * (high - low) >= abs(level)):
+            v = (self.values[panel] - level) * sign
+            reached = _ON_CLOSE @ v >= 0.0
+            reached[0], reached[-1] = v[0] >= 0.0, v[-1] >= 0.0
             if reached.any():
-                return self._passage(int(panel), v[panel], int(reached.argmax()))
+                return self._passage(int(panel), v, int(reached.argmax()))
         return np.nan
 
     def last_outside(self, final: float, band: float) -> float:
         """Last time at which |signal/final - 1| > band; 0 where it never is."""
-        v = np.abs(self.values / final - 1.0)
-        highest, lowest = v.max(axis=1), v.min(axis=1)
-        for panel in np.flatnonzero(highest + 0.1 * (highest - lowest) > band)[::-1]:
+        low, high = self.range
+        largest = np.maximum(np.abs(low / final - 1.0), np.abs(high / final - 1.0))
+        for panel in np.flatnonzero(largest + _UNSEEN * (high - low) / abs(final) > band)[::-1]:
             z = self.values[panel] / final - 1.0
             outside = np.abs(_ON_CLOSE @ z) > band
             if outside[-1]:
@@ -127,16 +139,14 @@ class Trace:
 
     def area(self, level: float) -> float:
         """∫ |signal - level| dt."""
-        v = self.values - level
-        whole = np.abs(v @ _MEANS) * self.length
-        size = np.abs(v)
-        near = size.min(axis=1) < 0.1 * (v.max(axis=1) - v.min(axis=1))
-        mixed = near | (v.max(axis=1) * v.min(axis=1) <= 0.0)
-        most = size.max(axis=1) * self.length
+        low, high = self.range[0] - level, self.range[1] - level
+        whole = np.abs(self.values @ _MEANS - level) * self.length
+        mixed = np.maximum(low, -high) < _UNSEEN * (high - low)
+        most = np.maximum(-low, high) * self.length
         # what all the small ones hold together does not count
         mixed &= most * len(most) > 1e-9 * most.sum()
         index = np.flatnonzero(mixed)
-        whole[index] = self.length[index] * _mean_size(v[index])
+        whole[index] = self.length[index] * _mean_size(self.values[index] - level)
         return float(whole.sum())
 
 

@@ -33,11 +33,14 @@ Fixed = tuple[int, int]  # real and imaginary part in units of 2^-_BITS
 def poles(subject: Subject, reach: float = 0.0) -> ComplexArray | None:
     """All poles [1/s]; with dead time those with abs(p) <= reach and a few dozen nearest the origin.
 
-    None where, with dead time, the count of the argument principle is not matched or `reach` is too far.
+    None where some may be missing: their sums do not fit the coefficients, or, with dead time, their number
+    the count of the argument principle, or `reach` is too far.
     """
     above, below = subject.exact
     if subject.dead_time == 0.0:
-        return refined([a + b for a, b in zip(above, below, strict=True)])
+        closed = [a + b for a, b in zip(above, below, strict=True)]
+        found = refined(closed)
+        return found if _complete(found, closed) else None
     return _delayed(subject, reach)
 
 
@@ -72,6 +75,18 @@ def refined(closed: list[Fraction]) -> ComplexArray:
         for k, r in enumerate(start)
     ]
     return np.concatenate((np.array(out) * 2.0**power, np.zeros(zeros)))
+
+
+def _complete(roots: ComplexArray, closed: list[Fraction]) -> bool:
+    """Whether the sums of the roots and of their inverses are those of the polynomial: no root found twice."""
+    while closed and closed[0] == 0:
+        closed = closed[1:]
+    if len(roots) != len(closed) - 1 or not np.isfinite(roots).all():
+        return False
+    if not roots.size or closed[-1] == 0:
+        return True
+    sums = ((roots, closed[1] / closed[0]), (1.0 / roots, closed[-2] / closed[-1]))
+    return all(abs(complex(q.sum()) + float(c)) <= 1e-9 * float(np.abs(q).sum()) for q, c in sums)
 
 
 def _log2(value: Fraction) -> float:
