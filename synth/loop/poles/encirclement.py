@@ -20,8 +20,9 @@ def delayed_stable(loops: Loops, open_poles: ComplexArray | None = None) -> Bool
     """Whether every root of D + N e^(-s θ) lies strictly in the left half plane, and stays there under a
     small lag.
 
-    loops : dead_time (M,) > 0; open_poles : (M, n) roots of D, where they are known. Returns (M,). abs(L(∞)) >= 1 is not stable (a chain of roots on or right of
-    the axis), nor is a root on the axis, nor a row that is not finite.
+    loops : dead_time (M,) > 0; open_poles : (M, n) roots of D, where they are known. Returns (M,).
+    abs(L(∞)) >= 1 is not stable (a chain of roots on or right of the axis), nor is a root on the axis, nor a
+    row that is not finite.
     """
     count, touching = roots_right_of(loops, np.zeros(len(loops)), open_poles)
     stable: BoolArray = (count == 0.0) & ~touching

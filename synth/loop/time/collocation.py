@@ -141,6 +141,26 @@ def primitive_coefficients(values: FloatArray) -> FloatArray:
     return out
 
 
+def powers(x: FloatArray) -> FloatArray:
+    """(14, E): the powers 0 to 13 of 2x - 1."""
+    out = np.ones((NODES + 1, len(x)))
+    out[1:] = 2.0 * x - 1.0
+    np.multiply.accumulate(out, axis=0, out=out)
+    return out
+
+
+def derivative(coefficients: FloatArray) -> FloatArray:
+    """Coefficients (k, E), ascending powers of 2x - 1, of the derivative to x: (k - 1, E)."""
+    out: FloatArray = coefficients[1:] * (2.0 * np.arange(1, len(coefficients)))[:, None]
+    return out
+
+
+def total(coefficients: FloatArray, of_x: FloatArray) -> FloatArray:
+    """Values of the polynomials (k, E) where the powers are `of_x` (14, E). (E,)."""
+    out: FloatArray = (coefficients * of_x[: len(coefficients)]).sum(axis=0)
+    return out
+
+
 def jet(coefficients: FloatArray, x: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
     """Integral from 0, value, slope and curvature at x of each row. (E, 14), (E,) -> four (E,)."""
     g = 2.0 * x - 1.0

@@ -167,8 +167,12 @@ class _Reading:
         if level <= 0.0:
             return self.late.copy()
         early = self.z.first_reach(level - 1.0)
-        late = last_mode.first_reach(self.tail, self.found.pole, np.full(len(self.loops), level - 1.0))
-        out = np.where(np.isfinite(early), early, self._after_end(late))
+        out = early.copy()
+        left = np.flatnonzero(~np.isfinite(early))
+        if left.size:
+            levels = np.full(len(left), level - 1.0)
+            late = last_mode.first_reach(self.tail[left], self.found.pole[left], levels)
+            out[left] = self.found.end[left] + self.late[left] + late
         return np.where(np.isfinite(out), out, np.nan)
 
     def _settling(self, band: float) -> FloatArray:

@@ -5,9 +5,11 @@ M loops. p real or in the upper half plane, Re p < 0.
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 
-from synth.loop.arrays import ComplexArray, FloatArray
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 
 
 def extremes(
@@ -39,11 +41,13 @@ def last_exit(amplitude: ComplexArray, pole: ComplexArray, band: FloatArray) -> 
         low = np.where(peak > band, at + np.maximum(further, 0.0) * half, 0.0)
         started = np.abs(amplitude.real) > band
         high = np.where(peak > band, low + half, at)
-        for _ in range(60):
-            middle = 0.5 * (low + high)
-            out = np.abs(_value(amplitude, pole, middle)) > band
-            # before the next extremum the size falls to 0 and rises to less than the band: one passage
-            low, high = np.where(out, middle, low), np.where(out, high, middle)
+        some = np.flatnonzero(~real & ((peak > band) | started))
+        # before the next extremum the size falls to 0 and rises to less than the band: one passage
+        high[some] = _switch(
+            lambda t: np.abs((amplitude[some] * np.exp(pole[some] * t)).real) > band[some],
+            low[some],
+            high[some],
+        )
         swinging = np.where((peak > band) | started, high, np.nan)
     out_time: FloatArray = np.where(real, smooth, swinging)
     return out_time
@@ -62,6 +66,15 @@ def area(amplitude: ComplexArray, pole: ComplexArray) -> FloatArray:
         swinging = np.abs(at_zero - whole) + np.abs(at_zero) * (1.0 + ratio) / (1.0 - ratio)
     out: FloatArray = np.where(real, np.abs(amplitude.real / pole.real), swinging)
     return out
+
+
+def _switch(before: Callable[[FloatArray], BoolArray], low: FloatArray, high: FloatArray) -> FloatArray:
+    """The upper end of where `before`, true at low, has turned false at high, halved down to rounding."""
+    for _ in range(52 if low.size else 0):
+        middle = 0.5 * (low + high)
+        still = before(middle)
+        low, high = np.where(still, middle, low), np.where(still, high, middle)
+    return high
 
 
 def _value(amplitude: ComplexArray, pole: ComplexArray, time: FloatArray) -> FloatArray:
@@ -95,10 +108,10 @@ def first_reach(amplitude: ComplexArray, pole: ComplexArray, level: FloatArray) 
         early = _value(amplitude, pole, at) >= level
         late = _value(amplitude, pole, at + half) >= level
         low, high = np.where(early, 0.0, at), np.where(early, at, at + half)
-        for _ in range(60):
-            middle = 0.5 * (low + high)
-            below = _value(amplitude, pole, middle) < level
-            low, high = np.where(below, middle, low), np.where(below, high, middle)
+        some = np.flatnonzero((early | late) & (pole.imag != 0.0) & (amplitude.real < level))
+        high[some] = _switch(
+            lambda t: (amplitude[some] * np.exp(pole[some] * t)).real < level[some], low[some], high[some]
+        )
         found = np.where(pole.imag == 0.0, smooth, np.where(early | late, high, np.inf))
     out: FloatArray = np.where(amplitude.real >= level, 0.0, found)
     return out

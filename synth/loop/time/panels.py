@@ -13,9 +13,12 @@ from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.time.collocation import (
     TO_CHEBYSHEV,
     WHOLE,
+    derivative,
     jet,
+    powers,
     primitive_coefficients,
     slope_matrix,
+    total,
     value_matrix,
 )
 
@@ -28,6 +31,8 @@ _VALUES, _SLOPES = value_matrix(_X), slope_matrix(_X)
 RIPPLE = 1e-12
 # Heights this close, relative to the unit, are one height.
 LEVEL = 1e-14
+# A place on a panel is found when it moves by less than this part of the panel.
+SETTLED = 1e-13
 
 
 @dataclass(frozen=True, slots=True)
@@ -142,14 +147,20 @@ class Trace:
             low, high = _X[cell], _X[cell + 1]
             a, b = before[panel, cell], after[panel, cell]
             x = low + (high - low) * a / (a - b)
-            polynomial = primitive_coefficients(signal[panel])
+            value = _polynomial(signal[panel])
+            slope = derivative(value)
+            bend = derivative(slope)
             for _ in range(5):
-                _, _, slope, bend = jet(polynomial, x)
+                at = powers(x)
                 with np.errstate(all="ignore"):
-                    step = slope / bend
-                x = np.clip(np.where(np.isfinite(step), x - step, x), low, high)
+                    step = total(slope, at) / total(bend, at)
+                moved = np.clip(np.where(np.isfinite(step), x - step, x), low, high)
+                done = np.abs(moved - x).max() < 1e-9  # flat there: the height is good to the square
+                x = moved
+                if done:
+                    break
             place[panel, 2 * cell + 1] = x
-            height[panel, 2 * cell + 1] = jet(polynomial, x)[1]
+            height[panel, 2 * cell + 1] = total(value, powers(x))
         return cls(panels, offset, signal, place, height, unit)
 
     def time(self, panel: IntArray, x: FloatArray) -> FloatArray:
@@ -263,20 +274,28 @@ class Trace:
     def _root(self, panel: IntArray, low: FloatArray, high: FloatArray, level: FloatArray) -> FloatArray:
         """Where the signal, monotone from low to high, takes the level: Newton, halving where it leaves the
         bracket."""
-        polynomial = primitive_coefficients(self.signal[panel])
-        rising = jet(polynomial, high)[1] > jet(polynomial, low)[1]
+        value = _polynomial(self.signal[panel])
+        slope = derivative(value)
+        rising = total(value, powers(high)) > total(value, powers(low))
         low, high = low.copy(), high.copy()
         x = 0.5 * (low + high)
         for _ in range(60):
-            _, value, slope, _ = jet(polynomial, x)
-            above = (value > level) == rising
+            at = powers(x)
+            error = total(value, at) - level
+            above = (error > 0.0) == rising
             high, low = np.where(above, x, high), np.where(above, low, x)
             with np.errstate(all="ignore"):
-                newton = x - (value - level) / slope
-            good = (newton >= low) & (newton <= high)
-            better = np.where(good, newton, 0.5 * (low + high))
+                newton = x - error / total(slope, at)
+            # rounding may put a converged step just beyond its bracket: no reason to start over
+            good = (newton >= low - SETTLED) & (newton <= high + SETTLED)
+            better = np.where(good, np.clip(newton, low, high), 0.5 * (low + high))
             moved = np.abs(better - x).max(initial=0.0)
             x = better
-            if moved < 1e-14:
+            if moved < SETTLED:
                 break
         return x
+
+
+def _polynomial(signal: FloatArray) -> FloatArray:
+    """(E, 13) values to (13, E) coefficients, ascending powers of 2x - 1."""
+    return derivative(np.ascontiguousarray(primitive_coefficients(signal).T))
