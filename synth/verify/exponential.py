@@ -1,8 +1,8 @@
 """x' = A x + b v over a panel, exactly, for a v that is a polynomial there.
 
-The exponential and the part that v adds are built for a very short panel from a few terms of their series, and
-then doubled: two panels of a length make one of twice that length, v being restricted to its two halves. All
-lengths of a ladder come out on the way. What is doubled is exp(A h) - 1, so slow modes keep their digits
+The exponential and the part that v adds are built for a very short panel from a few terms of their series,
+and then doubled: two panels of a length make one of twice that length, v being restricted to its two halves.
+All lengths of a ladder come out on the way. What is doubled is exp(A h) - 1, so slow modes keep their digits
 beside fast ones.
 
 Source: C. Moler and C. Van Loan, Nineteen dubious ways to compute the exponential of a matrix, SIAM Review 20
@@ -27,7 +27,7 @@ _SHORT = 0.5  # |A| times the first length
 class Rung:
     """One length h of panel: x at the 16 nodes is x0 + growth @ x0 + driven @ v.
 
-    growth (16, n, n); driven (16, n, 16), v by its values at the nodes; None where nothing was asked to drive.
+    growth (16, n, n); driven (16, n, 16), v by its values at the nodes; None where nothing drives.
     """
 
     growth: FloatArray

@@ -15,8 +15,8 @@ import numpy as np
 from synth.loop.arrays import FloatArray, IntArray
 
 NODES = 16
-POINTS: FloatArray = 0.5 - 0.5 * np.cos(np.pi * np.arange(NODES) / (NODES - 1))
-_ORDERS = np.arange(NODES)
+POINTS: FloatArray = 0.5 - 0.5 * np.cos(np.pi * np.arange(NODES, dtype=float) / (NODES - 1))
+_ORDERS: FloatArray = np.arange(NODES, dtype=float)
 _UNSEEN = 0.1  # what a panel may do beyond its nodes, relative to what it does at them
 _PLATEAU = 1e-13
 _MOST_LOOKED_AT = 200  # panels that may hold the top
@@ -27,7 +27,7 @@ def _vandermonde(x: FloatArray) -> FloatArray:
     return out
 
 
-TO_COEFFICIENTS: FloatArray = np.linalg.inv(_vandermonde(POINTS))
+TO_COEFFICIENTS: FloatArray = np.linalg.inv(_vandermonde(POINTS)).astype(np.float64)
 
 
 def basis(x: FloatArray) -> FloatArray:
@@ -48,7 +48,9 @@ def _differentiation() -> FloatArray:
 _SLOPE = _differentiation()
 _EVEN = np.linspace(0.0, 1.0, 65)
 _ZOOM = np.linspace(0.0, 1.0, 33)
-_CLOSE = np.unique(np.round(np.concatenate((_EVEN, POINTS)), 12))  # a node on the even grid counts once
+_CLOSE: FloatArray = np.unique(
+    np.round(np.concatenate((_EVEN, POINTS)), 12)
+)  # a node on the even grid counts once
 _ON_CLOSE = basis(_CLOSE)
 _HALVES = np.linspace(0.0, 1.0, 129)  # ends and middles of 64 cells
 _ON_HALVES = basis(_HALVES)
@@ -187,8 +189,9 @@ def plan(
     """Panels for a sum of modes e^(pt), |p| = sizes, -Re p = decays: (level, how many) in order, a panel of a
     level being base · 2^level long.
 
-    While a mode is alive (decay · t < dead) no panel is longer than 5/|p|. A panel begins at a multiple of its
-    own length after `start`. whole : where to stop, in units of base, a power of two; None: when all are dead.
+    While a mode is alive (decay · t < dead) no panel is longer than 5/|p|. A panel begins at a multiple of
+    its own length after `start`. whole : where to stop, in units of base, a power of two; None: when all are
+    dead.
     """
     out: list[tuple[int, int]] = []
     order = np.argsort(-sizes)

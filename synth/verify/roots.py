@@ -17,8 +17,8 @@ from fractions import Fraction
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
-from synth.verify.subject import Exact, Subject
+from synth.loop.arrays import ComplexArray, FloatArray
+from synth.verify.subject import Subject
 
 _BITS = 180  # 54 digits
 _MOST = 40
@@ -78,7 +78,7 @@ def refined(closed: list[Fraction]) -> ComplexArray:
 
 
 def _complete(roots: ComplexArray, closed: list[Fraction]) -> bool:
-    """Whether the sums of the roots and of their inverses are those of the polynomial: no root found twice."""
+    """Whether the sums of the roots and of their inverses are the polynomial's: no root found twice."""
     while closed and closed[0] == 0:
         closed = closed[1:]
     if len(roots) != len(closed) - 1 or not np.isfinite(roots).all():
@@ -138,7 +138,8 @@ def _delayed(subject: Subject, reach: float) -> ComplexArray | None:
         return None
     for points in _POINTS:
         with np.errstate(all="ignore"):
-            seeds = np.concatenate((_generated(d, b, points), _chain(d, b, int(far / (2.0 * np.pi)) + _SEEDS)))
+            along = _chain(d, b, int(far / (2.0 * np.pi)) + _SEEDS)
+            seeds = np.concatenate((_generated(d, b, points), along))
             upper = _settled(d, b, seeds)
             # the count is taken on a circle that keeps clear of the roots known
             circles = far * np.linspace(1.0, 1.1, 12)
@@ -152,7 +153,7 @@ def _delayed(subject: Subject, reach: float) -> ComplexArray | None:
 
 
 def _generated(d: FloatArray, b: FloatArray, points: int) -> ComplexArray:
-    """Eigenvalues of the generator on (x, output over the last dead time); those near the origin are roots."""
+    """Eigenvalues of the generator on (x, output over the last dead time), near the origin close to poles."""
     n = len(d) - 1
     x, difference = _chebyshev(points)
     assert x[0] == 0.0
@@ -190,9 +191,7 @@ def _settled(d: FloatArray, b: FloatArray, roots: ComplexArray) -> ComplexArray:
     for _ in range(8):
         e = np.exp(-roots)
         n = np.polyval(b, roots)
-        step = (np.polyval(d, roots) + n * e) / (
-            np.polyval(dd, roots) + (np.polyval(db, roots) - n) * e
-        )
+        step = (np.polyval(d, roots) + n * e) / (np.polyval(dd, roots) + (np.polyval(db, roots) - n) * e)
         roots = roots - step
     size = np.abs(roots)
     roots = roots[np.isfinite(roots) & (np.abs(step) < 1e-9 * size)]
@@ -231,7 +230,7 @@ def _polished(subject: Subject, d: FloatArray, b: FloatArray, roots: ComplexArra
 
 
 def _newton_exact(subject: Subject, root: complex, slope: complex) -> complex:
-    """Newton's method for one root [1/θ]: the residue in fixed point, the slope as double precision has it."""
+    """Newton's method for one root [1/θ]: the residue in fixed point, the slope as it is known."""
     (above, below), delay = subject.exact, Fraction(subject.dead_time)
     # the variable is stretched by a power of two so that the root lies round 1
     power = round(float(np.log2(abs(root))))

@@ -199,7 +199,7 @@ def _of_poles(
         counted |= share >= _LEAST_SHARE
     if measure.quantity == "damping_ratio":
         ratio = -roots.real[counted] / size[counted]
-        return float(ratio.min()) if ratio.size else np.nan
+        return float(ratio.min(initial=1.0))
     pairs = counted & (roots.imag > 0.0)
     if not pairs.any():
         return np.nan

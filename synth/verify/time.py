@@ -72,7 +72,7 @@ class _Realised:
 
 
 def _realised(polynomials: list[FloatArray], below: FloatArray, sizes: FloatArray) -> _Realised:
-    """polynomials : numerators of the signals over `below`, all (n + 1,) descending. sizes (n,) of the roots."""
+    """polynomials : numerators over `below`, all (n + 1,) descending; sizes (n,) of its roots."""
     n = len(below) - 1
     top = np.array(polynomials) / below[0]
     monic = below / below[0]
@@ -176,14 +176,12 @@ class _Delayed:
     def _turn(self, finer: float) -> None:
         """What one dead time makes of (x at its begin, y - y∞ on its panels): `self.step`, and u and the load
         response on the way."""
-        sizes = np.abs(self.open)
+        sizes = np.abs(self.open).astype(np.float64)
         fastest = max(float(sizes.max(initial=0.0)), 1.0) * finer
         depth = max(0, int(np.ceil(np.log2(fastest / PER_PANEL))))
         whole = 1 << depth
         base = 1.0 / whole
-        stages = plan(
-            sizes * finer, -self.open.real, base=base, start=0.0, whole=whole, dead=_DEAD_IN_A_TURN
-        )
+        stages = plan(sizes * finer, -self.open.real, base=base, start=0.0, whole=whole, dead=_DEAD_IN_A_TURN)
         levels, begins = edges(stages)
         if len(levels) > _MOST_IN_A_TURN:
             raise NotSimulated(f"more than {_MOST_IN_A_TURN} panels in a dead time")
