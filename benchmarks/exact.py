@@ -86,7 +86,8 @@ class _Step:
 
     def scan(self, t: np.ndarray, derivative: int = 0) -> np.ndarray:
         p = np.array(self.poles, dtype=complex)
-        r = np.array([r * p**derivative for r, p in zip(self.residues, self.poles, strict=True)], dtype=complex)
+        weighted = [r * p**derivative for r, p in zip(self.residues, self.poles, strict=True)]
+        r = np.array(weighted, dtype=complex)
         total = np.full(t.shape, 0.0 if derivative else float(self.final))
         for pole, residue in zip(p, r, strict=True):
             total += (residue * np.exp(pole * t)).real

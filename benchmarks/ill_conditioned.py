@@ -17,7 +17,7 @@ Parts = tuple[list[float], list[float], list[float], list[float]]  # plant N, D;
 def population(
     kind: str, rows: int, *, share: tuple[float, float] = (0.05, 0.5), seed: int = 5
 ) -> Population:
-    """Loops of one kind; gains, as a share of the stability limit (of 1e3 where there is none), log-uniform."""
+    """Loops of one kind; gains log-uniform, as a share of the stability limit (of 1e3 without one)."""
     rng = np.random.default_rng([seed, *kind.encode()])
     drawn = [KINDS[kind](rng) for _ in range(rows)]
     plants = Rational.of(_rows([p[0] for p in drawn]), _rows([p[1] for p in drawn]))

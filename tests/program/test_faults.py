@@ -1,4 +1,4 @@
-"""What goes wrong around a run: kill -9 at any moment, no room, no folder, a jumping clock, a torn journal."""
+"""Faults around a run: kill -9 at any moment, no room, no folder, a clock that jumps, a torn journal."""
 
 import json
 import os

@@ -85,8 +85,9 @@ def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tu
     columns = np.arange(m)
     for p in numerators:
         ends = np.abs(response.ends[:, p] / response.ends[:, CLOSED]).max(axis=0)
-        # |Δ|² that cancels to nothing at a node stands beside a pole all but on the axis, which is looked at below
-        ratio = np.divide(powers @ response.squares[:, p], bottom, out=np.zeros_like(bottom), where=bottom > 0.0)
+        # |Δ|² that cancels to nothing at a node stands beside a pole all but on the axis: looked at below
+        above, size = powers @ response.squares[:, p], np.zeros_like(bottom)
+        ratio = np.divide(above, bottom, out=size, where=bottom > 0.0)
         top = ratio.argmax(axis=0)
         value = np.sqrt(np.maximum(ratio[top, columns], 0.0))
         place = np.where((top > 0) & (top < 2 * span), w[top], 0.0)

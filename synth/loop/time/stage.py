@@ -65,21 +65,26 @@ def _plain_stage(loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...]) 
     signals = tuple(s for s in ("y", "u", "d") if s in needed)
     close = crowding(poles) > CROWDED
     if not close.any():
-        return _Reading(loops, step_modes(loops, poles, signals), signals, asked).read()
+        modes = step_modes(loops, poles, signals)
+        if np.isfinite(modes.residue).all():
+            return _Reading(loops, modes, signals, asked).read()
     if not loops.denominator[:, 0].all():
         return _order_by_order(loops, poles, asked, close)
     values = {m: np.full(len(loops), np.nan) for m in asked}
     approximate: dict[Measure, BoolArray] = {}
-    together = np.flatnonzero(close)
-    clusters = cluster_modes(loops.rows(together), poles[together], signals)
-    whole = _in_range(clusters)
-    apart = np.concatenate([np.flatnonzero(~close), together[~whole]])
-    parts: list[tuple[IntArray, Signals]] = [(together[whole], clusters.rows(np.flatnonzero(whole)))]
-    if apart.size:
-        parts.append((apart, step_modes(loops.rows(apart), poles[apart], signals)))
-    for rows, modes in parts:
+    together, apart = np.flatnonzero(close), np.flatnonzero(~close)
+    parts: list[tuple[IntArray, Signals]] = []
+    if together.size:
+        clusters = cluster_modes(loops.rows(together), poles[together], signals)
+        whole = _in_range(clusters)
+        parts.append((together[whole], clusters.rows(np.flatnonzero(whole))))
+        apart = np.concatenate([apart, together[~whole]])
+    single = step_modes(loops.rows(apart), poles[apart], signals)
+    finite = np.isfinite(single.residue).all(axis=(1, 2))  # coefficients at the ends of the range: absent
+    parts.append((apart[finite], single.rows(np.flatnonzero(finite))))
+    for rows, some in parts:
         if rows.size:
-            part = _Reading(loops.rows(rows), modes, signals, asked).read()
+            part = _Reading(loops.rows(rows), some, signals, asked).read()
             for m in asked:
                 values[m][rows] = part.values[m]
             for m, doubt in part.approximate.items():
