@@ -144,6 +144,13 @@ def test_random_loops_agree_with_60_digits(random_loops, poles_of, order, light)
         assert max(errors.values()) < 1e-8, (i, errors)
 
 
+def test_loops_of_every_kind(special):
+    """Integrators, unstable plants, both gain margins, negative gains, direct paths, hidden modes ..."""
+    found = frequency_stage(*special, KEYS)
+    errors = worst(special[0], found, 0)
+    assert max(errors.values()) < 1e-8, errors
+
+
 @pytest.mark.parametrize("order", [3, 5])
 def test_time_constants_fifteen_decades_apart(random_loops, poles_of, order):
     loops = random_loops(order, order, 4, spread=9.0)

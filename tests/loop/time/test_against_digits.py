@@ -12,6 +12,7 @@ TIME = (
     Measure("settling_time", band=0.05),
     Measure("rise_time", span=(0.0, 0.5)),
 )
+RELATIVE = ("overshoot", "undershoot", "peak_time", "rise_time", "settling_time", "late_deviation")
 
 
 def agree(got, expected, scale, tolerance=1e-6):
@@ -44,11 +45,40 @@ def test_all_quantities(random_loops, exact, order):
         check(exact(loops, i), loops, i, {m: v[i] for m, v in got.values.items()})
 
 
+def test_loops_of_every_kind(special, exact):
+    """Integrators, unstable plants, negative gains, direct paths, hidden modes, no final value ..."""
+    loops, poles = special
+    late = Measure("late_deviation", after=3.0 * float(loops.time_scale[0]))
+    measures = (*(m for m in TIME if m.quantity != "late_deviation"), late)
+    got = time_stage(loops, poles, measures)
+    assert not any(doubt.any() for doubt in got.approximate.values())
+    check(exact(loops, 0), loops, 0, {m: v[0] for m, v in got.values.items()})
+
+
 def check(reference, loops, i, got):
-    final = float(reference.limit["y"])
+    value = {m.quantity: v for m, v in got.items()}
     times = reference.times()
     curves = {name: reference.dense(name, times) for name in "yud"}
-    z = curves["y"] / final
+    if reference.limit["y"] == 0:
+        assert all(np.isnan(value[name]) for name in RELATIVE)
+    else:
+        check_shape(reference, loops, i, got, times, curves["y"] / float(reference.limit["y"]))
+    for name, key, sizes in (("u", "control_peak", curves["u"]), ("d", "disturbance_peak", curves["d"])):
+        k = int(np.abs(sizes).argmax())
+        at = refined(reference, name, times, k, 1) if 0 < k < len(times) - 1 else times[k]
+        top = max(abs(float(reference(name, at))), abs(float(reference(name, times[k]))))
+        top = max(top, abs(float(reference.limit[name])))
+        agree(value[key], top, 0.0)
+    for key, name in (("tracking_area", "y"), ("disturbance_area", "d")):
+        if np.isfinite(value[key]):
+            agree(value[key], area(reference, name, times), 0.0, 1e-5)
+    assert np.isfinite(value["tracking_area"]) == (loops.denominator[i, -1] == 0.0)
+    assert np.isfinite(value["disturbance_area"]) == (reference.limit["d"] == 0)
+
+
+def check_shape(reference, loops, i, got, times, z):
+    """What is counted in parts of the final value; z: the response at the times, in those parts."""
+    final = float(reference.limit["y"])
     value = {m.quantity: v for m, v in got.items()}
 
     peak = int(z.argmax())
@@ -62,13 +92,6 @@ def check(reference, loops, i, got):
     dip = int(z.argmin())
     at = refined(reference, "y", times, dip, 1) if dip else 0.0
     agree(value["undershoot"], max(0.0, -100 * float(reference("y", at)) / final), 1.0)
-
-    for name, key, sizes in (("u", "control_peak", curves["u"]), ("d", "disturbance_peak", curves["d"])):
-        k = int(np.abs(sizes).argmax())
-        at = refined(reference, name, times, k, 1) if 0 < k < len(times) - 1 else times[k]
-        top = max(abs(float(reference(name, at))), abs(float(reference(name, times[k]))))
-        top = max(top, abs(float(reference.limit[name])))
-        agree(value[key], top, 0.0)
 
     for measure, v in got.items():
         if measure.quantity == "settling_time":
@@ -89,10 +112,6 @@ def check(reference, loops, i, got):
                     if t >= after:
                         best = max(best, abs(float(reference("y", t)) / final - 1))
             agree(v, 100 * best, 1.0)
-
-    for key, name in (("tracking_area", "y"), ("disturbance_area", "d")):
-        if np.isfinite(value[key]):
-            agree(value[key], area(reference, name, times), 0.0, 1e-5)
 
 
 def arrival(reference, times, z, level):

@@ -150,3 +150,12 @@ def test_overshoot_below_a_hundredth_of_a_per_cent(zeta):
     np.testing.assert_allclose(
         got["overshoot"], 100 * np.exp(-np.pi * zeta / np.sqrt(1 - zeta**2)), rtol=1e-7
     )
+
+
+@pytest.mark.parametrize("lead", [0.1, 0.02, 0.014, 1e-3])
+def test_undershoot_down_to_a_ten_thousandth_of_a_per_cent(lead):
+    """T = (1 - a s)/(s + 1)^2: least at t = a/(1 + a), where z = 1 - (1 + a) e^(-a/(1 + a)), about -a^2/2."""
+    got = values(([-lead, 1.0], [1.0, 2.0 + lead, 0.0]), ([1.0], [1.0]))
+    expected = -100.0 * (-np.expm1(-lead / (1.0 + lead)) - lead * np.exp(-lead / (1.0 + lead)))
+    np.testing.assert_allclose(got["undershoot"], expected, atol=1e-7)
+    assert got["overshoot"] == 0.0
