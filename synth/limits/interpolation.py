@@ -7,7 +7,7 @@ from collections.abc import Iterator, Sequence
 
 import numpy as np
 
-from synth.limits.case import CaseView, Finding
+from synth.limits.case import CaseView, Finding, in_words
 
 PEAK_SOURCE = (
     "S. Skogestad and I. Postlethwaite, Multivariable Feedback Control, 2nd ed. (2005), section 5.3; K. J. "
@@ -70,16 +70,12 @@ def findings(view: CaseView) -> Iterator[Finding]:
 
 def _with(view: CaseView) -> str:
     facts = view.facts
-    parts = ["unstable pole " + ", ".join(f"{p:.4g}" for p in map(_plain, facts.right_poles))]
+    parts = ["unstable pole " + ", ".join(dict.fromkeys(map(in_words, facts.right_poles)))]
     if facts.right_zeros:
-        parts.append("zero " + ", ".join(f"{z:.4g}" for z in map(_plain, facts.right_zeros)))
+        parts.append("zero " + ", ".join(dict.fromkeys(map(in_words, facts.right_zeros))))
     if facts.dead_time > 0.0:
         parts.append(f"dead time {facts.dead_time:.4g} s")
     return ", ".join(parts)
-
-
-def _plain(root: complex) -> complex | float:
-    return root.real if root.imag == 0.0 else root
 
 
 def _peaks(view: CaseView, peak: float) -> Iterator[Finding]:

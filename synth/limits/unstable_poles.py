@@ -7,7 +7,7 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from synth.limits.case import CaseView, Finding
+from synth.limits.case import CaseView, Finding, in_words
 
 OVERSHOOT_SOURCE = (
     "R. H. Middleton, Trade-offs in linear control system design, Automatica 27 (1991) 281-292: "
@@ -141,9 +141,8 @@ def _noise_gain(view: CaseView) -> Iterator[Finding]:
     least = least_noise_gain(view)
     fastest = max(view.facts.right_poles, key=lambda p: p.real)
     statement = (
-        f"To hold the unstable pole at s = {fastest:.4g} rad/s the compensator passes measurement noise to "
-        f"the "
-        f"actuator with a gain of at least {least:.4g} at some frequency."
+        f"To hold the unstable pole at s = {in_words(fastest)} rad/s the compensator passes noise of y "
+        f"to the actuator with a gain of at least {least:.4g} at some frequency."
     )
     facts: dict[str, float | str] = {"pole": float(fastest.real), "noise_gain": least}
     bounds = list(view.asked("noise_gain", "max"))
