@@ -17,9 +17,9 @@ from synth.loop.arrays import FloatArray, IntArray
 NODES = 16
 POINTS: FloatArray = 0.5 - 0.5 * np.cos(np.pi * np.arange(NODES, dtype=float) / (NODES - 1))
 _ORDERS: FloatArray = np.arange(NODES, dtype=float)
-_UNSEEN = 0.1  # what a panel may do beyond its nodes, relative to what it does at them
+_UNSEEN = 0.03  # what a panel may do beyond its nodes, relative to what it does at them
 _PLATEAU = 1e-13
-_MOST_LOOKED_AT = 200  # panels that may hold the top
+_MOST_LOOKED_AT = 4000  # panels that may hold the top
 
 
 def _vandermonde(x: FloatArray) -> FloatArray:
@@ -79,6 +79,12 @@ class Trace:
         """Largest of the last two Chebyshev coefficients, relative to the peak."""
         last = np.abs(self.values @ TO_COEFFICIENTS[-2:].T).max(initial=0.0)
         return float(last / max(self.peak(), 1e-300))
+
+    def at(self, t: float) -> float:
+        """The signal at a time; its value from the left where it jumps."""
+        panel = min(max(int(np.searchsorted(self.start, t)) - 1, 0), len(self.start) - 1)
+        x = (t - self.start[panel]) / self.length[panel]
+        return float(basis(np.array(x)) @ self.values[panel])
 
     def top(self, sign: float) -> tuple[float, float]:
         """Supremum of sign · signal, and when."""

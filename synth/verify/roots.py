@@ -24,7 +24,7 @@ _BITS = 180  # 54 digits
 _MOST = 40
 _POINTS = (24, 48)
 _SEEDS = 12  # of the chain, beyond what is asked for
-_FARTHEST = 600.0  # abs(p) θ
+_FARTHEST = 3000.0  # abs(p) θ
 _DOUBT = 1e-9  # relative error of a root above which it is polished
 
 Fixed = tuple[int, int]  # real and imaginary part in units of 2^-_BITS
@@ -139,7 +139,7 @@ def _delayed(subject: Subject, reach: float) -> ComplexArray | None:
     for points in _POINTS:
         with np.errstate(all="ignore"):
             along = _chain(d, b, int(far / (2.0 * np.pi)) + _SEEDS)
-            seeds = np.concatenate((_generated(d, b, points), along))
+            seeds = np.concatenate((_generated(d, b, points), along, np.roots(d)))
             upper = _settled(d, b, seeds)
             # the count is taken on a circle that keeps clear of the roots known
             circles = far * np.linspace(1.0, 1.1, 12)
@@ -203,18 +203,62 @@ def _settled(d: FloatArray, b: FloatArray, roots: ComplexArray) -> ComplexArray:
 
 
 def _count(d: FloatArray, b: FloatArray, radius: float) -> int:
-    """Roots with abs(p) < radius, by the turns of D e^(p/2) + N e^(-p/2) along the upper half circle."""
+    """Roots with abs(p) < radius, by the turns of D + N e^(-p) along the upper half circle."""
     angle = np.linspace(0.0, np.pi, int(200 + 12 * radius))
     for _ in range(8):
         p = radius * np.exp(1j * angle)
-        value = np.polyval(d, p) * np.exp(0.5 * p) + np.polyval(b, p) * np.exp(-0.5 * p)
-        turned = np.angle(value[1:] / value[:-1])
+        turned = _turned(d, b, p)
         wide = np.flatnonzero(np.abs(turned) > 1.0)
         if not wide.size:
             break
         angle = np.insert(angle, wide + 1, 0.5 * (angle[wide] + angle[wide + 1]))
     total = turned.sum() / np.pi
     return round(float(total)) if np.isfinite(total) else -1
+
+
+def right_of(subject: Subject, decay: float) -> int | None:
+    """How many poles of a loop with dead time have Re p > -decay, by the turns of D + N e^(-sθ) along that
+    line; None where the line is too long. With a direct path `decay` must be below that of the chain."""
+    (above, below), delay = subject.exact, subject.dead_time
+    d, b = (np.array([float(c / below[0]) for c in q]) * delay ** np.arange(len(q)) for q in (below, above))
+    x = -decay * delay
+    # from here on |N e^(-p)| stays below |D|, which turns as p^n does
+    w = np.geomspace(1e-9, _FARTHEST, 4000)
+    p = x + 1j * w
+    open_loop = np.abs(np.polyval(b, p) / np.polyval(d, p)) * np.exp(-x)
+    above_one = np.flatnonzero(~(open_loop < 0.97))
+    if above_one.size and above_one[-1] > len(w) - 20:
+        return None
+    end = max(w[above_one[-1]] if above_one.size else 0.0, float(np.abs(np.roots(d)).max(initial=1.0)), 1.0)
+    w = np.unique(
+        np.concatenate(
+            ([0.0], np.geomspace(1e-9, 4.0 * end, 1000), np.arange(0.0, min(4.0 * end, _FARTHEST), 0.3))
+        )
+    )
+    for _ in range(30):
+        p = x + 1j * w
+        turned = _turned(d, b, p)
+        wide = np.flatnonzero(np.abs(turned) > 1.0)
+        if not wide.size:
+            break
+        w = np.insert(w, wide + 1, 0.5 * (w[wide] + w[wide + 1]))
+    n = len(d) - 1
+    # what D still turns beyond the end: to nπ/2 in all
+    last = p[-1]
+    loop = np.angle(1.0 + np.polyval(b, last) / np.polyval(d, last) * np.exp(-last))
+    rest = sum(0.5 * np.pi - np.angle(last - root) for root in np.roots(d)) - loop
+    total = turned.sum() + float(rest)
+    return round(0.5 * n - total / np.pi) if np.isfinite(total) else None
+
+
+def _turned(d: FloatArray, b: FloatArray, p: ComplexArray) -> FloatArray:
+    """How far D + N e^(-p) turns from each point to the next, the points close enough; no overflow."""
+    left = p.real < 0.0
+    # to the left it is multiplied by e^Re p, which turns nothing
+    grown, shrunk = np.exp(np.where(left, p.real, 0.0)), np.exp(np.where(left, 0.0, -p.real))
+    value = np.polyval(d, p) * grown + np.polyval(b, p) * shrunk * np.exp(-1j * p.imag)
+    out: FloatArray = np.angle(value[1:] / value[:-1])
+    return out
 
 
 def _polished(subject: Subject, d: FloatArray, b: FloatArray, roots: ComplexArray) -> ComplexArray:

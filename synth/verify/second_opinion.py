@@ -12,7 +12,7 @@ from synth.loop.quantities import QUANTITIES, Measure
 from synth.model.forms import PlantForm
 from synth.model.plant import Plant
 from synth.verify.frequency import frequency_values
-from synth.verify.roots import chain
+from synth.verify.roots import chain, right_of
 from synth.verify.roots import poles as exact_poles
 from synth.verify.subject import Subject
 from synth.verify.time import NotSimulated, respond, time_values
@@ -175,7 +175,10 @@ def _of_poles(
     if roots is None:
         return _UNSURE
     if measure.quantity == "decay_rate":
-        return min(float(-roots.real.max()) if roots.size else np.inf, chain(subject))
+        decay = min(float(-roots.real.max()) if roots.size else np.inf, chain(subject))
+        if subject.dead_time > 0.0 and np.isfinite(decay) and right_of(subject, decay * (1.0 - 1e-4)) != 0:
+            return _UNSURE
+        return decay
     above, _ = subject.exact
     delayed = subject.dead_time > 0.0
     everything = not np.isfinite(highest_fall) or above[-1] == 0

@@ -161,27 +161,30 @@ class _Delayed:
         rest = self.below[-1] + self.parts[0][-1]
         self.final = np.array([p[-1] / rest for p in self.parts])
         self.rest = rest
-        self.open = np.roots(self.below)
+        self.open: ComplexArray = np.roots(self.below).astype(complex)
         self.poles = np.empty(0, dtype=complex) if poles is None else poles * theta
         self.poles = self.poles[self.poles.imag >= 0.0]
 
     def response(self) -> Response:
-        traces = self._traces(1.0)
-        if max(t.unresolved() for t in traces) > _RESOLVED:
-            traces = self._traces(2.0)
-        if max(t.unresolved() for t in traces) > 100.0 * _RESOLVED:
+        # where a layer outlives its turn, for many turns, the whole turn is as fine as its begin
+        for dead in (_DEAD_IN_A_TURN, np.inf):
+            traces = self._traces(dead)
+            unresolved = max(t.unresolved() for t in traces)
+            if unresolved < _RESOLVED:
+                break
+        if unresolved > 100.0 * _RESOLVED:
             raise NotSimulated("its panels are too wide")
         return Response(*(Trace(t.start * self.unit, t.length * self.unit, t.values) for t in traces))
 
-    def _turn(self, finer: float) -> None:
+    def _turn(self, dead: float) -> None:
         """What one dead time makes of (x at its begin, y - y∞ on its panels): `self.step`, and u and the load
         response on the way."""
-        sizes = np.abs(self.open).astype(np.float64)
-        fastest = max(float(sizes.max(initial=0.0)), 1.0) * finer
+        sizes: FloatArray = np.abs(self.open)
+        fastest = max(float(sizes.max(initial=0.0)), 1.0)
         depth = max(0, int(np.ceil(np.log2(fastest / PER_PANEL))))
         whole = 1 << depth
         base = 1.0 / whole
-        stages = plan(sizes * finer, -self.open.real, base=base, start=0.0, whole=whole, dead=_DEAD_IN_A_TURN)
+        stages = plan(sizes, -self.open.real, base=base, start=0.0, whole=whole, dead=dead)
         levels, begins = edges(stages)
         if len(levels) > _MOST_IN_A_TURN:
             raise NotSimulated(f"more than {_MOST_IN_A_TURN} panels in a dead time")
@@ -209,8 +212,8 @@ class _Delayed:
         if n:
             self.begin[0] = -1.0 / self.rest
 
-    def _traces(self, finer: float) -> tuple[Trace, ...]:
-        self._turn(finer)
+    def _traces(self, dead: float) -> tuple[Trace, ...]:
+        self._turn(dead)
         known = [self.begin]
         for turns in _TURNS:
             if turns * len(self.begins) > _MOST_PANELS:
