@@ -88,13 +88,15 @@ class Outline:
         for values in by_node[1:]:
             np.minimum(least, values, out=least)
             np.maximum(most, values, out=most)
-        return cls(panels, weights[:, 0] - spread, weights[:, 0] + spread, least, most)
+        # rounding must not put a bound inside the nodes: a panel that jumps to its extreme would go unseen
+        low, high = np.minimum(weights[:, 0] - spread, least), np.maximum(weights[:, 0] + spread, most)
+        return cls(panels, low, high, least, most)
 
     def may_be_largest(self, sign: float, floor: float) -> BoolArray:
         """Panels that may hold the sup of sign · signal, where that is above floor."""
         most, high = (self.most, self.high) if sign > 0.0 else (-self.least, -self.low)
-        best = np.maximum(np.maximum.reduceat(most, self.panels.first), floor)
-        return high > best[self.panels.owner]
+        best = np.maximum.reduceat(most, self.panels.first)
+        return (high >= best[self.panels.owner]) & (high > floor)
 
     def may_reach_first(self, level: float) -> BoolArray:
         """Panels in which signal >= level may come first."""

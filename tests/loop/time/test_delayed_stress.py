@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from scipy.signal import step
 
 from synth.loop.closed_loop import Rational
 from synth.loop.evaluate import evaluate
@@ -75,3 +76,17 @@ def test_nothing_is_missed(seed):
     worst, details = differences(seed, 8)
     assert not details
     assert max(worst.values()) < 1e-4
+
+
+def test_an_undershoot_that_lies_on_a_jump():
+    # a lag with a direct path under a filtered PID: y falls to its least value in a jump at 2 θ and rises
+    above, below, theta = [0.6534724708096705, 0.7446870649221047], [1.0, 0.7446870649221047], 0.0457356
+    num, den = [0.00989068, 0.07371324, 0.10897028], [0.01439329, 0.49195367, 0.0]
+    found = evaluate(
+        Rational.of([above], [below], theta), Rational.of([num], [den]), measures=(Measure("undershoot"),)
+    )
+    # until 2 θ y is the open loop's step response w; there it jumps down by L(∞)²
+    gain = above[0] * num[0] / den[0]
+    open_loop = (np.polymul(above, num), np.polymul(below, den))
+    _, w = step(open_loop, T=np.linspace(0.0, theta, 2001))
+    assert found.values[0, 0, 0] == pytest.approx(-100.0 * (w[-1] - gain**2), rel=1e-6)
