@@ -6,6 +6,9 @@ import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray
 
+ONE_THREAD = 250_000
+"""Multiplications in a matrix product up to which the usual libraries keep to one thread."""
+
 
 def horner(polynomials: FloatArray, points: ComplexArray) -> ComplexArray:
     """Values of each row at its own points.
@@ -38,6 +41,19 @@ def magnitude_sum(polynomials: FloatArray, radius: FloatArray) -> FloatArray:
     for k in range(1, polynomials.shape[1]):
         out *= radius
         out += np.abs(polynomials[:, k, None])
+    return out
+
+
+def in_strips(matrix: FloatArray, columns: FloatArray) -> FloatArray:
+    """matrix @ columns, (a, b) and (b, R) -> (a, R), in strips of columns narrow enough for one thread.
+
+    Handing products as small as these to several threads costs three times what it saves.
+    """
+    out = np.empty((matrix.shape[0], columns.shape[1]))
+    strip = max(1, ONE_THREAD // matrix.size)
+    for start in range(0, columns.shape[1], strip):
+        part = slice(start, start + strip)
+        np.matmul(matrix, columns[:, part], out=out[:, part])
     return out
 
 

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from synth.loop.polynomials import coefficient, horner, horner_slope, magnitude_sum
+from synth.loop.polynomials import coefficient, horner, horner_slope, in_strips, magnitude_sum
 
 
 def test_values_slopes_and_sizes():
@@ -26,3 +26,10 @@ def test_constants_and_coefficients_beyond_the_width():
     assert (slope == 0.0).all()
     assert coefficient(rows, 0).tolist() == [2.0, -3.0]
     assert coefficient(rows, 1).tolist() == [0.0, 0.0]
+
+
+def test_products_in_strips_are_products():
+    rng = np.random.default_rng(0)
+    matrix, columns = rng.normal(size=(300, 7)), rng.normal(size=(7, 1000))
+    np.testing.assert_allclose(in_strips(matrix, columns), matrix @ columns, rtol=1e-13, atol=1e-13)
+    assert in_strips(matrix, columns[:, :0]).shape == (300, 0)

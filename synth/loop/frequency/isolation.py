@@ -20,6 +20,7 @@ from math import comb
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.polynomials import in_strips
 
 _OCTAVES = 40  # of one window: x from 2^-20 to 2^20, three decades of ω to either side
 _RANGE = 480  # most powers of two that x^m may span on one side of a window
@@ -120,7 +121,7 @@ def _single(
         p = polynomials[:, which]
         if shift:
             p = _moved(p, octaves * shift)
-        negative, first = powers @ p < 0.0, signs[0, which]
+        negative, first = in_strips(powers, p) < 0.0, signs[0, which]
         passed = negative != first
         before, after = passed[0], ~passed[-1]
         inside = np.flatnonzero(~before & ~after)
@@ -195,7 +196,7 @@ def _scan(
         p = polynomials[:, row]
         if shift:
             p = _moved(p, octaves * shift)
-        coefficients = (matrix @ p).reshape(m + 1, octaves + 2, -1)
+        coefficients = in_strips(matrix, p).reshape(m + 1, octaves + 2, -1)
         negative = coefficients < 0.0
         negative[0, 1:] = negative[m, :-1]  # one value, one sign: a root on a node is counted once
         for end, place in ((0, 0), (m, octaves + 1)):

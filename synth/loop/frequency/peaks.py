@@ -19,6 +19,7 @@ import numpy as np
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.frequency.isolation import isolate
 from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, evaluate, log_rates
+from synth.loop.polynomials import in_strips
 
 CURVES = {"sensitivity_peak": D, "complementary_peak": N, "noise_gain": CONTROL}
 
@@ -76,7 +77,7 @@ def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tu
     span = min(_SPAN, _RANGE // max(len(response.squares) - 1, 1))
     x = 2.0 ** np.arange(-span, span + 1)
     powers = x[:, None] ** np.arange(len(response.squares))[None, :]
-    bottom = powers @ response.squares[:, CLOSED]
+    bottom = in_strips(powers, response.squares[:, CLOSED])
     w = np.sqrt(x)
     best, at = [], []
     lightest = _lightest(poles)
@@ -86,7 +87,7 @@ def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tu
     for p in numerators:
         ends = np.abs(response.ends[:, p] / response.ends[:, CLOSED]).max(axis=0)
         # |Δ|² that cancels to nothing at a node stands beside a pole all but on the axis: looked at below
-        above, size = powers @ response.squares[:, p], np.zeros_like(bottom)
+        above, size = in_strips(powers, response.squares[:, p]), np.zeros_like(bottom)
         ratio = np.divide(above, bottom, out=size, where=bottom > 0.0)
         top = ratio.argmax(axis=0)
         value = np.sqrt(np.maximum(ratio[top, columns], 0.0))

@@ -11,6 +11,7 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.frequency.response import CONTROL, D, N, Response
+from synth.loop.polynomials import in_strips
 
 _NEAR = 4.0  # square of how far below the best a hump is still climbed
 
@@ -57,7 +58,7 @@ def sample_shared(response: Response, angle: FloatArray, *, control: bool) -> Sa
 
     def at(polynomial: int) -> tuple[FloatArray, FloatArray]:
         columns = slice(polynomial * m, (polynomial + 1) * m)
-        return powers @ even[:, columns], odd_powers @ odd[:, columns]
+        return in_strips(powers, even[:, columns]), in_strips(odd_powers, odd[:, columns])
 
     c2 = None
     if control:
