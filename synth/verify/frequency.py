@@ -6,7 +6,7 @@ from collections.abc import Callable
 
 import numpy as np
 
-from synth.loop.arrays import ComplexArray, FloatArray, IntArray
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.verify.subject import Subject
 
 _PER_DECADE = 50
@@ -31,8 +31,6 @@ class _Look:
         self.subject = subject
         self.w = _grid(subject, poles)
         self.l = self.loop(self.w)
-        if subject.dead_time > 0.0:
-            self._look_far(float(subject.dead_time))
         above, below = subject.exact
         total = above[-1] + below[-1]
         self.k = abs(float(above[0] / below[0]))
@@ -41,6 +39,8 @@ class _Look:
         self.start = float(above[-1] / below[-1]) if below[-1] else np.inf
         self.delayed = subject.dead_time > 0.0
         self.s_start = float(below[-1] / total) if total else np.nan
+        if self.delayed:
+            self._look_far(float(subject.dead_time))
 
     def _look_far(self, theta: float) -> None:
         """Add the turns of e^(-jωθ) where a peak beyond the dense part of the grid would be: with the phase
@@ -52,10 +52,27 @@ class _Look:
         c = np.abs(self.subject.compensator(self.w[far]))
         turn = 2.0 * np.pi / theta
         here = {int((top / (1.0 - size)).argmax()) for top in (np.ones_like(size), size, c)}
-        middles = self.w[far][sorted(here)][:, None]
-        more = (middles + turn * np.linspace(-8.0, 8.0, 401)).ravel()
+        middles = [*self.w[far][sorted(here)], *self._turns_of_falls(self.w[far], size)]
+        more = (np.array(middles)[:, None] + turn * np.linspace(-8.0, 8.0, 401)).ravel()
         self.w = np.unique(np.concatenate((self.w, more[more > 0.0])))
         self.l = self.loop(self.w)
+
+    def _turns_of_falls(self, w: FloatArray, size: FloatArray) -> FloatArray:
+        """Where the turns of the phase begin and cease to carry |T| through |T(0)|/√2, from |L| at far w."""
+        level = abs(self.final) / np.sqrt(2.0)
+
+        def swept(size: FloatArray) -> BoolArray:
+            out: BoolArray = (size / (1.0 + size) < level) & (size < 1.0) & (size / (1.0 - size) > level)
+            return out
+
+        inside = swept(size)
+        found = []
+        for i in (
+            np.flatnonzero(inside[1:] != inside[:-1])[[0, -1]] if inside.any() and not inside.all() else []
+        ):
+            fine = np.geomspace(w[i], w[i + 1], 800)
+            found.append(fine[np.argmax(swept(np.abs(self.loop(fine))) != inside[i])])
+        return np.array(found)
 
     def loop(self, w: FloatArray) -> ComplexArray:
         return self.subject.stated(w) * self.subject.compensator(w)

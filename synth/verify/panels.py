@@ -81,8 +81,8 @@ class Trace:
         return float(last / max(self.peak(), 1e-300))
 
     def at(self, t: float) -> float:
-        """The signal at a time; its value from the left where it jumps."""
-        panel = min(max(int(np.searchsorted(self.start, t)) - 1, 0), len(self.start) - 1)
+        """The signal at a time."""
+        panel = max(int(np.searchsorted(self.start, t, side="right")) - 1, 0)
         x = (t - self.start[panel]) / self.length[panel]
         return float(basis(np.array(x)) @ self.values[panel])
 

@@ -224,17 +224,14 @@ def right_of(subject: Subject, decay: float) -> int | None:
     x = -decay * delay
     # from here on |N e^(-p)| stays below |D|, which turns as p^n does
     w = np.geomspace(1e-9, _FARTHEST, 4000)
-    p = x + 1j * w
+    p: ComplexArray = x + 1j * w
     open_loop = np.abs(np.polyval(b, p) / np.polyval(d, p)) * np.exp(-x)
     above_one = np.flatnonzero(~(open_loop < 0.97))
     if above_one.size and above_one[-1] > len(w) - 20:
         return None
     end = max(w[above_one[-1]] if above_one.size else 0.0, float(np.abs(np.roots(d)).max(initial=1.0)), 1.0)
-    w = np.unique(
-        np.concatenate(
-            ([0.0], np.geomspace(1e-9, 4.0 * end, 1000), np.arange(0.0, min(4.0 * end, _FARTHEST), 0.3))
-        )
-    )
+    turns = np.arange(0.0, min(4.0 * end, _FARTHEST), 0.3)
+    w = np.unique(np.concatenate((turns, np.geomspace(1e-9, 4.0 * end, 1000))))
     for _ in range(30):
         p = x + 1j * w
         turned = _turned(d, b, p)

@@ -166,9 +166,9 @@ class _Delayed:
         self.poles = self.poles[self.poles.imag >= 0.0]
 
     def response(self) -> Response:
-        # where a layer outlives its turn, for many turns, the whole turn is as fine as its begin
-        for dead in (_DEAD_IN_A_TURN, np.inf):
-            traces = self._traces(dead)
+        # where a layer outlives its turn, for many turns, the whole turn is finer than its begin
+        for dead, finer in ((_DEAD_IN_A_TURN, 1.0), (np.inf, 2.0)):
+            traces = self._traces(dead, finer)
             unresolved = max(t.unresolved() for t in traces)
             if unresolved < _RESOLVED:
                 break
@@ -176,15 +176,15 @@ class _Delayed:
             raise NotSimulated("its panels are too wide")
         return Response(*(Trace(t.start * self.unit, t.length * self.unit, t.values) for t in traces))
 
-    def _turn(self, dead: float) -> None:
+    def _turn(self, dead: float, finer: float) -> None:
         """What one dead time makes of (x at its begin, y - y∞ on its panels): `self.step`, and u and the load
         response on the way."""
         sizes: FloatArray = np.abs(self.open)
-        fastest = max(float(sizes.max(initial=0.0)), 1.0)
+        fastest = max(float(sizes.max(initial=0.0)), 1.0) * finer
         depth = max(0, int(np.ceil(np.log2(fastest / PER_PANEL))))
         whole = 1 << depth
         base = 1.0 / whole
-        stages = plan(sizes, -self.open.real, base=base, start=0.0, whole=whole, dead=dead)
+        stages = plan(finer * sizes, -self.open.real, base=base, start=0.0, whole=whole, dead=dead)
         levels, begins = edges(stages)
         if len(levels) > _MOST_IN_A_TURN:
             raise NotSimulated(f"more than {_MOST_IN_A_TURN} panels in a dead time")
@@ -212,8 +212,8 @@ class _Delayed:
         if n:
             self.begin[0] = -1.0 / self.rest
 
-    def _traces(self, dead: float) -> tuple[Trace, ...]:
-        self._turn(dead)
+    def _traces(self, dead: float, finer: float) -> tuple[Trace, ...]:
+        self._turn(dead, finer)
         known = [self.begin]
         for turns in _TURNS:
             if turns * len(self.begins) > _MOST_PANELS:

@@ -95,6 +95,19 @@ def test_catches_a_value_that_is_wrong_by_a_thousandth(index):
     assert any(measure.quantity in d and "nominal" in d for d in opinion.details)
 
 
+def test_on_a_plateau_any_time_is_the_peak_but_no_other():
+    formula, time = "exp(-s)/(0.01*s+1)", [m.quantity for m in EVERY_QUANTITY].index("peak_time")
+
+    def claims(when):
+        return judge(formula, [0.6], [1.0], lambda v: np.where(np.arange(len(v)) == time, when, v)).agrees
+
+    # 0.6 (1 - e^(-100 (t - 1))) until t = 2
+    assert claims(1.7)
+    assert claims(1.99)
+    assert not claims(1.05)
+    assert not claims(2.1)
+
+
 @pytest.mark.parametrize("wrong", [np.nan, np.inf])
 def test_catches_a_value_that_is_missing(wrong):
     def change(values):

@@ -10,7 +10,7 @@ import pytest
 
 from synth.model import forms
 from synth.model.plant import Plant
-from synth.verify.roots import _complete, _newton_exact, chain, poles, refined
+from synth.verify.roots import _complete, _newton_exact, chain, poles, refined, right_of
 from synth.verify.subject import Subject
 
 
@@ -67,6 +67,26 @@ def test_every_pole_within_reach_is_found_and_none_twice():
     assert len(inside) == round(float(turns))
     value = np.polyval(bottom, inside) + np.polyval(top, inside) * np.exp(-0.4 * inside)
     assert (np.abs(value) < 1e-9 * np.polyval(np.abs(bottom), np.abs(inside))).all()
+
+
+def test_poles_right_of_a_line_are_counted():
+    # a light mode far above 1/θ, beside a slow pole: none may hide
+    text = "exp(-0.5*s)/((s+1)*(1e-4*s^2+1e-4*s+1))"
+    form, plant = forms.from_formula(text), Plant.from_formula(text)
+    subject = Subject(form, {}, plant, (0.01,), (1.0,))
+    found = poles(subject)
+    decays = np.sort(-found.real)
+    assert 90 < np.abs(found[np.argmax(found.real)]) < 110
+    assert right_of(subject, decays[0] * 0.999) == 0
+    assert right_of(subject, decays[0] * 1.001) == 2
+    between = 0.5 * (decays[2] + decays[3])
+    assert right_of(subject, between) == 3
+
+
+def test_an_unstable_loop_has_poles_right_of_the_axis():
+    form, plant = forms.from_formula("exp(-s)/s"), Plant.from_formula("exp(-s)/s")
+    assert right_of(Subject(form, {}, plant, (1.5,), (1.0,)), 0.0) == 0
+    assert right_of(Subject(form, {}, plant, (1.6,), (1.0,)), 0.0) == 2
 
 
 def test_more_poles_than_can_be_counted_are_declined():
