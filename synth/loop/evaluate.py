@@ -213,6 +213,7 @@ def _fill_poles(out: Evaluation, rows: IntArray, loops: Loops, screen: Screen) -
     rows, loops, stage = _kept(rows, loops, stage, stage.stable)
     _write_doubts(out, rows, loops, stage, stage.values)
     if rows.size and screen.least_damping > 0.0:
+        stage = stage.with_shares(loops)
         sure = stage.surely_counted_damping(loops)
         early = sure < screen.least_damping
         for i, measure in enumerate(wanted):

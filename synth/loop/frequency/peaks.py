@@ -76,7 +76,7 @@ def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tu
     m = response.loops
     span = min(_SPAN, _RANGE // max(len(response.squares) - 1, 1))
     x = 2.0 ** np.arange(-span, span + 1)
-    powers = x[:, None] ** np.arange(len(response.squares))[None, :]
+    powers = np.vander(x, len(response.squares), increasing=True).astype(float)
     bottom = in_strips(powers, response.squares[:, CLOSED])
     w = np.sqrt(x)
     best, at = [], []

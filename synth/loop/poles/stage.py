@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -34,6 +34,7 @@ class PoleStage:
               part exactly 0.
     values    scaled values of the measures that are ready; NaN where absent
     reach     (M,) all poles with abs(p) up to here are in `poles`; inf without dead time
+    shares    spacing of the poles and share of each (M, n) where they are known already; else None
     """
 
     stable: BoolArray
@@ -41,6 +42,7 @@ class PoleStage:
     poles: ComplexArray
     values: dict[Measure, FloatArray]
     reach: FloatArray
+    shares: tuple[Spacing, FloatArray] | None = None
 
     def rows(self, index: IntArray | BoolArray) -> PoleStage:
         """The loops named by `index`."""
@@ -63,8 +65,8 @@ class PoleStage:
         if highest_fall is None:
             raise ValueError("counting poles needs the highest fall of abs(T)")
         poles = _far_enough(loops, self.poles, self.reach, highest_fall)
-        spacing = spaced(loops, poles)
-        share, counted = _counted(loops, poles, spacing, highest_fall)
+        spacing, share = self.shares or _spacing_and_share(loops, poles)
+        counted = _counted(loops, poles, share, highest_fall)
         out: dict[Measure, FloatArray] = {}
         for measure in wanted:
             if measure.quantity == "damping_ratio":
@@ -72,6 +74,10 @@ class PoleStage:
             else:
                 out[measure] = _natural_frequency(poles, share, counted, spacing)
         return out
+
+    def with_shares(self, loops: Loops) -> PoleStage:
+        """The same with the shares worked out; as it is with dead time, where poles are fetched as needed."""
+        return self if _delayed(loops) else replace(self, shares=_spacing_and_share(loops, self.poles))
 
     def surely_counted_damping(self, loops: Loops) -> FloatArray:
         """Least damping ratio of the poles that count whatever the bandwidth, for their share alone. (M,).
@@ -82,9 +88,8 @@ class PoleStage:
         if _delayed(loops):
             return np.ones(len(loops))
         with np.errstate(invalid="ignore"):
-            spacing = spaced(loops, self.poles)
-            sure = share_in_step(loops, self.poles, spacing) >= LEAST_SHARE
-            return least_damping(loops, self.poles, sure, spacing)
+            spacing, share = self.shares or _spacing_and_share(loops, self.poles)
+            return least_damping(loops, self.poles, share >= LEAST_SHARE, spacing)
 
 
 def needs_counting(measure: Measure) -> bool:
@@ -128,7 +133,8 @@ def counted_poles(
     q). With dead time further poles are fetched, as far as the rule reaches, and share alone counts none.
     """
     poles = _far_enough(loops, poles, np.zeros(len(loops)), highest_fall)
-    return poles, *_counted(loops, poles, spaced(loops, poles), highest_fall)
+    _, share = _spacing_and_share(loops, poles)
+    return poles, share, _counted(loops, poles, share, highest_fall)
 
 
 def _far_enough(
@@ -150,17 +156,20 @@ def _far_enough(
     return out
 
 
-def _counted(
-    loops: Loops, poles: ComplexArray, spacing: Spacing, highest_fall: FloatArray
-) -> tuple[FloatArray, BoolArray]:
-    """Share of each pole, and whether it counts."""
+def _spacing_and_share(loops: Loops, poles: ComplexArray) -> tuple[Spacing, FloatArray]:
+    spacing = spaced(loops, poles)
+    return spacing, share_in_step(loops, poles, spacing)
+
+
+def _counted(loops: Loops, poles: ComplexArray, share: FloatArray, highest_fall: FloatArray) -> BoolArray:
+    """Whether each pole counts, (M, q)."""
     everything = ~np.isfinite(highest_fall) | (coefficient(loops.numerator, 0) == 0.0)
-    share = share_in_step(loops, poles, spacing)
     with np.errstate(invalid="ignore"):
         counted = everything[:, None] | (np.abs(poles) <= REACH * highest_fall[:, None])
         if not _delayed(loops):
             counted |= share >= LEAST_SHARE
-    return share, counted & ~np.isnan(poles)
+    out: BoolArray = counted & ~np.isnan(poles)
+    return out
 
 
 def least_damping(
