@@ -45,9 +45,9 @@ class _Look:
     def _look_far(self, theta: float) -> None:
         """Add the turns of e^(-jωθ) where a peak beyond the dense part of the grid would be: with the phase
         free, |C S| is at most |C|/(1 - |L|), and each turn comes close to it."""
-        far = self.w > _TURNED / theta
+        far = (self.w > _TURNED / theta) & (np.abs(self.l) < 1.0)
         size = np.abs(self.l[far])
-        if not far.any() or not (size < 1.0).all():
+        if not far.any():
             return
         c = np.abs(self.subject.compensator(self.w[far]))
         turn = 2.0 * np.pi / theta

@@ -98,14 +98,8 @@ class Trace:
         close = v @ _ON_CLOSE.T
         best, when = -np.inf, 0.0
         for i in np.argsort(-close.max(axis=1))[:3]:
-            panel, j = look[i], int(close[i].argmax())
-            x, value = _CLOSE[j], float(close[i, j])
-            # where a top is flat its slope still tells the place
-            fall = -(_SLOPE @ v[i])
-            low, high = _CLOSE[max(j - 1, 0)], _CLOSE[min(j + 1, len(_CLOSE) - 1)]
-            if (basis(np.array([low, high])) @ fall * [-1.0, 1.0] > 0.0).all():
-                x = _upward(fall, low, high)
-                value = max(value, float(basis(np.array(x)) @ v[i]))
+            panel = look[i]
+            x, value = _summit(v[i], close[i], int(close[i].argmax()))
             if value > best:
                 best, when = value, float(self.start[panel] + self.length[panel] * x)
         # a plateau is reached where it begins
@@ -131,13 +125,18 @@ class Trace:
         largest = np.maximum(np.abs(low / final - 1.0), np.abs(high / final - 1.0))
         for panel in np.flatnonzero(largest + _UNSEEN * (high - low) / abs(final) > band)[::-1]:
             z = self.values[panel] / final - 1.0
-            outside = np.abs(_ON_CLOSE @ z) > band
-            if outside[-1]:
+            close = _ON_CLOSE @ z
+            size = np.abs(close)
+            if size[-1] > band:
                 return float(self.start[panel] + self.length[panel])
-            if outside.any():
-                j = int(np.flatnonzero(outside)[-1])
-                side = np.sign(_ON_CLOSE[j] @ z)
-                return self._passage(int(panel), band - side * z, j + 1)
+            # a summit between two points looked at may be outside where they are not
+            inner = (size[1:-1] >= size[:-2]) & (size[1:-1] >= size[2:]) & (size[1:-1] > band * (1.0 - 2e-3))
+            for j in np.flatnonzero((size > band) | np.concatenate(([False], inner, [False])))[::-1]:
+                side = np.sign(close[j])
+                x, height = (_CLOSE[j], size[j]) if size[j] > band else _summit(side * z, side * close, j)
+                if height > band:
+                    x = _upward(band - side * z, float(x), float(_CLOSE[j + 1]))
+                    return float(self.start[panel] + self.length[panel] * x)
         return 0.0
 
     def _passage(self, panel: int, v: FloatArray, j: int) -> float:
@@ -156,6 +155,18 @@ class Trace:
         index = np.flatnonzero(mixed)
         whole[index] = self.length[index] * _mean_size(self.values[index] - level)
         return float(whole.sum())
+
+
+def _summit(v: FloatArray, close: FloatArray, j: int) -> tuple[float, float]:
+    """Place and height of the summit near _CLOSE[j]; close : the panel's values at _CLOSE."""
+    x, height = float(_CLOSE[j]), float(close[j])
+    # where a top is flat its slope still tells the place
+    fall = -(_SLOPE @ v)
+    low, high = _CLOSE[max(j - 1, 0)], _CLOSE[min(j + 1, len(_CLOSE) - 1)]
+    if (basis(np.array([low, high])) @ fall * [-1.0, 1.0] > 0.0).all():
+        x = _upward(fall, low, high)
+        height = max(height, float(basis(np.array(x)) @ v))
+    return x, height
 
 
 def _upward(v: FloatArray, low: float, high: float) -> float:

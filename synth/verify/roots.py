@@ -224,7 +224,7 @@ def right_of(subject: Subject, decay: float) -> int | None:
     x = -decay * delay
     # from here on |N e^(-p)| stays below |D|, which turns as p^n does
     w = np.geomspace(1e-9, _FARTHEST, 4000)
-    p: ComplexArray = x + 1j * w
+    p: ComplexArray = (x + 1j * w).astype(complex)
     open_loop = np.abs(np.polyval(b, p) / np.polyval(d, p)) * np.exp(-x)
     above_one = np.flatnonzero(~(open_loop < 0.97))
     if above_one.size and above_one[-1] > len(w) - 20:
@@ -233,7 +233,7 @@ def right_of(subject: Subject, decay: float) -> int | None:
     turns = np.arange(0.0, min(4.0 * end, _FARTHEST), 0.3)
     w = np.unique(np.concatenate((turns, np.geomspace(1e-9, 4.0 * end, 1000))))
     for _ in range(30):
-        p = x + 1j * w
+        p = (x + 1j * w).astype(complex)
         turned = _turned(d, b, p)
         wide = np.flatnonzero(np.abs(turned) > 1.0)
         if not wide.size:

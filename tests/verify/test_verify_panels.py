@@ -49,6 +49,16 @@ def test_passages_solve_their_equation():
     assert np.isnan(RINGING.first(2.5))
 
 
+def test_a_last_exit_just_above_the_band_is_not_passed_over():
+    # the summits shrink by 1e-5 each: the last one outside exceeds the band by less than that
+    length = 2.2
+    start = np.arange(0, 4000 * length, length)
+    slow = trace(lambda t: 1 - 0.03 * np.exp(-3.2e-6 * t) * np.cos(2 * t), start, np.full(4000, length))
+    band = 0.03 * np.exp(-3.2e-6 * 2000 * np.pi)  # the summit at t = 2000 π, just below its own height
+    last = slow.last_outside(1.0, band * (1 - 1e-9))
+    assert last == pytest.approx(2000 * np.pi, rel=1e-6)
+
+
 def test_an_area_counts_both_sides():
     zeros = (np.arange(60) + 0.5) * np.pi / 2
     expected = sum(
