@@ -19,15 +19,15 @@ from synth.loop.time.collocation import (
     FROM_NODES,
     GRID,
     NODES,
-    POINTS,
     SPREAD,
     STAGES,
     TO_NODES,
     value_matrix,
 )
 
-_REAL_TO_NODES = np.concatenate([TO_NODES.real, -TO_NODES.imag], axis=1)
-
+# The same matrices for six complex numbers seen as twelve real ones, real and imaginary parts in turn.
+_FROM_NODES = np.ascontiguousarray(FROM_NODES.T).view(float)
+_TO_NODES = np.stack([TO_NODES.real.T, -TO_NODES.imag.T], axis=1).reshape(2 * len(SPREAD), STAGES)
 
 # Cuts of a delay go no finer than 2^-this, kept up all along or behind a kink alone.
 COARSEST, FINEST = 8, 40
@@ -104,22 +104,14 @@ def _leg(
     most = int(np.searchsorted(-delays, -begin))
     kinds, which = np.unique(sizes, return_inverse=True)
     some = loops.rows(np.arange(most))
-    stacked = some.rows(np.tile(np.arange(most), len(kinds)))
-    lengths = np.repeat(kinds, most) * stacked.dead_time
-    maps = np.split(_propagator(stacked, np.tile(numerators[:most], (len(kinds), 1, 1)), lengths), len(kinds))
-    signals, n = numerators.shape[1], loops.order
-    values = np.full((len(loops), end - begin, len(sizes), signals, NODES), np.nan)
+    panels = [_Panel.of(some, numerators[:most], kind * some.dead_time) for kind in kinds]
+    values = np.full((len(loops), end - begin, len(sizes), numerators.shape[1], NODES), np.nan)
     for k in range(begin, end):
         active = int(np.searchsorted(-delays, -k))  # loops followed for more than k delays
-        given = np.empty((active, NODES + n, 1))
+        here = [panel.rows(active) for panel in panels]
         for i in range(len(sizes)):
-            given[:, :NODES, 0] = (
-                drive[:active, i] if k == begin else 1.0 - values[:active, k - begin - 1, i, 0]
-            )
-            given[:, NODES:, 0] = state[:active]
-            found = (maps[which[i]][:active] @ given)[:, :, 0]
-            values[:active, k - begin, i] = found[:, : signals * NODES].reshape(active, signals, NODES)
-            state[:active] = found[:, signals * NODES :]
+            given = drive[:active, i] if k == begin else 1.0 - values[:active, k - begin - 1, i, 0]
+            values[:active, k - begin, i], state[:active] = here[which[i]].over(given, state[:active])
     return March(begin, sizes, values)
 
 
@@ -140,55 +132,94 @@ def _recut(values: FloatArray, old: FloatArray, new: FloatArray) -> FloatArray:
     return out
 
 
-def _propagator(loops: Loops, numerators: FloatArray, length: FloatArray) -> FloatArray:
-    """Maps of (input at 13 nodes, n states) to (S outputs at 13 nodes, n states at the end), one panel.
-
-    length : (M,). Returns (M, 13 S + n, 13 + n).
+@dataclass(frozen=True, slots=True)
+class _Panel:
+    """The open loop over one panel of a length of its own for each loop.
 
     States are ξ and its first n - 1 derivatives, D ξ = e. The stages of the Radau method are a rational
     function of the fixed integration matrix; in its eigenvectors the open loop is met at six complex points σ
-    = length·SPREAD
-    alone: the stages of ξ^(n) are (e - 1 Σ α_i ξ^(i)(0)) / α_n with α_i = Σ_{k<=i} a_k σ^(i-k), and every
-    output follows by the like sums γ of its own numerator.
+    = length·SPREAD alone: the stages of ξ^(n) are (e - 1 Σ α_i ξ^(i)(0)) / α_n with α_i = Σ_{k<=i} a_k
+    σ^(i-k), and every output follows by the like sums γ of its own numerator. What is particular to a loop is
+    small; the large products are with matrices that all loops share.
+
+    inverse   (M, 6) 1/α_n
+    gamma     (M, S, 6)
+    direct    (M, S) what passes at once is kept exact: v = c_n e + Σ (c_k - c_n a_k) ξ^(k)
+    of_state  (M, 12 + S n + n, n): the state's part in the stages, the outputs and the state at the end
+    to_state  (M, n, 12): the stages' part in the state at the end
+    shared    (12 + n, 13): stages and free polynomials to the nodes
     """
-    rows, n, signals = len(loops), loops.order, numerators.shape[1]
-    lead = loops.denominator[:, :1]
-    a = (loops.denominator / lead)[:, ::-1]
-    c = (numerators / lead[:, :, None])[:, :, ::-1]
-    direct = c[:, :, n].copy()  # what passes at once is kept exact: v = c_n e + Σ (c_k - c_n a_k) ξ^(k)
-    c = c - direct[:, :, None] * a[:, None, :]
-    c[:, :, n] = 0.0
-    sigma = length[:, None] * SPREAD
-    alpha = [total[:, 0] for total in _sums(a[:, None, :], sigma)]
-    gamma = _sums(c, sigma)[n]
-    ones = FROM_NODES.sum(axis=1)
-    highest = np.empty((rows, len(SPREAD), NODES + n), dtype=complex)
-    inverse = 1.0 / alpha[n]
-    highest[:, :, 0] = 0.0
-    highest[:, :, 1:NODES] = FROM_NODES * inverse[:, :, None]
-    for i in range(n):
-        highest[:, :, NODES + i] = -ones * alpha[i] * inverse
-    out = np.zeros((rows, signals * NODES + n, NODES + n))
-    read = out[:, : signals * NODES].reshape(rows, signals, NODES, NODES + n)
-    read[:, :, 1:] = _to_nodes(highest[:, None] * gamma[:, :, :, None])
-    stage = np.arange(1, NODES)
-    read[:, :, stage, stage] += direct[:, :, None]
-    read[:, :, 0, 0] = direct
-    read[:, :, 0, NODES:] = c[:, :, :n]
-    if n == 0:
-        return out
-    # free polynomials of the states: Σ_{k<=i} c_k τ^(i-k)/(i-k)! read off, τ^(i-k)/(i-k)! in the states
-    # themselves
-    taylor = _taylor(n, length)
-    shifted = np.zeros((rows, signals, n, n))
-    for j in range(n):
-        shifted[:, :, j, j:] = c[:, :, : n - j]
-    read[:, :, 1:, NODES:] += taylor[:, None] @ shifted
-    powers = sigma[:, None, :] ** np.arange(n, 0, -1)[:, None]
-    out[:, signals * NODES :] = ((TO_NODES[-1] * powers) @ highest).real
-    for k in range(n):
-        out[:, signals * NODES + k, NODES + k :] += taylor[:, -1, : n - k]
-    return out
+
+    inverse: ComplexArray
+    gamma: ComplexArray
+    direct: FloatArray
+    of_state: FloatArray
+    to_state: FloatArray
+    shared: FloatArray
+
+    @classmethod
+    def of(cls, loops: Loops, numerators: FloatArray, length: FloatArray) -> _Panel:
+        """numerators (M, S, n + 1); length (M,)."""
+        rows, n, signals = len(loops), loops.order, numerators.shape[1]
+        lead = loops.denominator[:, :1]
+        a = (loops.denominator / lead)[:, ::-1]
+        c = (numerators / lead[:, :, None])[:, :, ::-1]
+        direct = c[:, :, n].copy()
+        c = c - direct[:, :, None] * a[:, None, :]
+        c[:, :, n] = 0.0
+        sigma = length[:, None] * SPREAD
+        alpha = [total[:, 0] for total in _sums(a[:, None, :], sigma)]
+        gamma = _sums(c, sigma)[n]
+        inverse = 1.0 / alpha[n]
+        of_state = np.zeros((rows, 2 * len(SPREAD) + signals * n + n, n))
+        to_state = np.empty((rows, n, 2 * len(SPREAD)))
+        ones = FROM_NODES.sum(axis=1)
+        free = of_state[:, 12 : 12 + signals * n].reshape(rows, signals, n, n)
+        last = of_state[:, 12 + signals * n :]
+        taylor = np.ones(rows)  # length^i / i!
+        for i in range(n):
+            stage = ones * alpha[i] * inverse
+            of_state[:, 0:12:2, i], of_state[:, 1:12:2, i] = stage.real, stage.imag
+            end = TO_NODES[-1] * sigma ** (n - i)
+            to_state[:, i, 0::2], to_state[:, i, 1::2] = end.real, -end.imag
+            # free polynomials: Σ_{k<=j} c_k τ^(j-k)/(j-k)! read off, τ^(j-k)/(j-k)! in the states themselves
+            free[:, :, i, i:] = c[:, :, : n - i] * taylor[:, None, None]
+            for k in range(n - i):
+                last[:, k, k + i] = taylor
+            taylor = taylor * length / (i + 1)
+        shared = np.zeros((12 + n, NODES))
+        shared[:12, 1:] = _TO_NODES
+        shared[12:] = GRID ** np.arange(n)[:, None]
+        return cls(inverse, gamma, direct, of_state, to_state, shared)
+
+    def rows(self, count: int) -> _Panel:
+        """The first so many loops."""
+        if count == len(self.inverse):
+            return self
+        return _Panel(
+            self.inverse[:count],
+            self.gamma[:count],
+            self.direct[:count],
+            self.of_state[:count],
+            self.to_state[:count],
+            self.shared,
+        )
+
+    def over(self, drive: FloatArray, state: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Outputs (M, S, 13) at the nodes and states (M, n) at the end; drive (M, 13) is e."""
+        rows, n = state.shape
+        signals = self.direct.shape[1]
+        own = (self.of_state @ state[:, :, None])[:, :, 0]
+        stages = (drive[:, 1:] @ _FROM_NODES).view(complex) * self.inverse
+        stages -= np.ascontiguousarray(own[:, :12]).view(complex)
+        both = np.empty((rows, signals, 12 + n))
+        both[:, :, :12] = (self.gamma * stages[:, None, :]).view(float)
+        both[:, :, 12:] = own[:, 12 : 12 + signals * n].reshape(rows, signals, n)
+        out = (both.reshape(-1, 12 + n) @ self.shared).reshape(rows, signals, NODES)
+        if self.direct.any():
+            out += self.direct[:, :, None] * drive[:, None, :]
+        end: FloatArray = (self.to_state @ stages.view(float)[:, :, None])[:, :, 0]
+        return out, end + own[:, 12 + signals * n :]
 
 
 def _sums(coefficients: FloatArray, sigma: ComplexArray) -> list[ComplexArray]:
@@ -198,21 +229,6 @@ def _sums(coefficients: FloatArray, sigma: ComplexArray) -> list[ComplexArray]:
     for i in range(1, coefficients.shape[2]):
         total = total * sigma[:, None, :] + coefficients[:, :, i, None]
         out.append(total)
-    return out
-
-
-def _to_nodes(stages: ComplexArray) -> FloatArray:
-    """(M, S, 6, w) in the eigenvectors to (M, S, 12, w) at the points."""
-    both = np.concatenate([stages.real, stages.imag], axis=2)
-    out: FloatArray = _REAL_TO_NODES @ both
-    return out
-
-
-def _taylor(n: int, length: FloatArray) -> FloatArray:
-    """τ^i / i! at the points, i = 0 .. n - 1: (M, 12, n)."""
-    out = np.ones((len(length), STAGES, n))
-    for i in range(1, n):
-        out[:, :, i] = out[:, :, i - 1] * (length[:, None] * POINTS) / i
     return out
 
 
