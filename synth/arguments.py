@@ -79,7 +79,7 @@ def parse(words: Sequence[str]) -> argparse.Namespace:
             ]
         )
     parser = _parser(command)
-    found, rest = parser.parse_known_args(list(words[1:]))
+    found, rest = parser.parse_known_args(_joined(words[1:]))
     if rest:
         options = [o for a in parser._actions for o in a.option_strings]
         raise Usage(
@@ -93,6 +93,17 @@ def parse(words: Sequence[str]) -> argparse.Namespace:
         )
     found.command = command
     return found
+
+
+def _joined(words: Sequence[str]) -> list[str]:
+    """A compensator that begins with a minus belongs to its option: it is none itself."""
+    out: list[str] = []
+    for word in words:
+        if out and out[-1] == "--compensator" and re.match(r"-[\s\d.(a-z]", word):
+            out[-1] = f"--compensator={word}"
+        else:
+            out.append(word)
+    return out
 
 
 def help_text() -> str:

@@ -45,7 +45,10 @@ def main(words: Sequence[str] | None = None) -> int:
     except SystemExit as end:  # help of one command
         return int(end.code or 0)
     except InputError as trouble:
-        _print_faults(trouble.faults, typed)
+        try:
+            _print_faults(trouble.faults, typed)
+        except Exception as fault:
+            return _own_fault(fault, typed)
         return BAD_INPUT
     except KeyboardInterrupt:
         print("interrupted; nothing was written", file=sys.stderr)  # noqa: T201

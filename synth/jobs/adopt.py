@@ -33,6 +33,7 @@ def adopt(record_path: str | Path, rank: int, note: str | None = None) -> tuple[
         "rank": rank,
         "structure": candidate["structure"],
         "parameters": dict(candidate["parameters"]),
+        "units": {key: candidate.get("units", {}).get(key, "") for key in candidate["parameters"]},
         "compensator": candidate["compensator"],
         "verdict": "met" if candidate["meets_all"] else "not met",
         "note": note,

@@ -89,11 +89,14 @@ def _reach(scene: Scene) -> list[str]:
     error, case = scene.worst("static_error")
     if not error > 10.0:
         return []
-    share = figure(100.0 * float(scene.column("final_value")[case]), 3)
-    return [
-        f"The loop reaches only {share} % of the reference{_on(scene, case)}; "
-        "the sheet bounds no static error."
-    ]
+    reached = reach_words(float(scene.column("final_value")[case]))
+    return [f"The loop {reached}{_on(scene, case)}; the sheet bounds no static error."]
+
+
+def reach_words(final: float) -> str:
+    """ "reaches only 38 % of the reference", or "settles at 208 % of the reference" where it goes past it."""
+    verb = "settles at" if final > 1.0 else "reaches only"
+    return f"{verb} {figure(100.0 * final, 3)} % of the reference"
 
 
 def _compensator(scene: Scene) -> list[str]:

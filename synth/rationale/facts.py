@@ -14,6 +14,7 @@ import numpy as np
 
 from synth.rationale.scene import Scene
 from synth.search.outcome import Candidate, Scan
+from synth.search.ranking import COMPLEXITY
 from synth.structures import REGISTRY
 
 
@@ -133,12 +134,12 @@ def simpler(scene: Scene) -> Fact | None:
     if not inside:
         return None
     # the richest first; of equally rich ones the one that comes nearest
-    best = max(inside, key=lambda s: (len(REGISTRY[s.structure].parameters), s.best_slack))
+    best = max(inside, key=lambda s: (len(REGISTRY[s.structure].parameters), reached(scene, s)))
     closest = closest_of(scene, best)
     listed = any(c.structure == best.structure for c in scene.outcome.candidates)
     data: dict[str, Any] = {
         "structure": best.structure,
-        "slack": best.best_slack,
+        "slack": reached(scene, best),
         "scan": best.exhaustive,
         "stabilises": best.best_slack >= 0.0 or listed or closest is not None,
     }
@@ -163,6 +164,21 @@ def closest_of(scene: Scene, scan: Scan) -> Candidate | None:
     return None
 
 
+def reached(scene: Scene, scan: Scan) -> float:
+    """Largest worst slack that a structure is known to reach; -inf where it is not known to stabilise.
+
+    The search steers by stand-ins (how far a response is from its band at the limit, say), so what it calls
+    the slack of a point that falls short is none of the sheet's: there the scored candidates speak alone.
+    """
+    found = [c.worst_slack for c in _scored(scene) if scan.structure in (c.structure, *c.also)]
+    return max([*found, scan.best_slack] if scan.best_slack >= 0.0 else found, default=-math.inf)
+
+
+def _scored(scene: Scene) -> list[Candidate]:
+    closest = [r.closest for r in scene.outcome.rejections if r.closest is not None]
+    return [*scene.outcome.candidates, *closest]
+
+
 def richer(scene: Scene) -> Fact | None:
     """What the best structure with more tuned values would buy."""
     own = REGISTRY.get(scene.candidate.structure)
@@ -171,13 +187,16 @@ def richer(scene: Scene) -> Fact | None:
     more = [s for s in scene.outcome.scans if len(REGISTRY[s.structure].parameters) > len(own.parameters)]
     if not more:
         return None
-    best = max(more, key=lambda s: s.best_slack)
+    best = max(more, key=lambda s: reached(scene, s))
+    slack = reached(scene, best)
+    if math.isinf(slack):
+        return None
     return Fact(
         "richer",
         {
             "structure": best.structure,
-            "slack": best.best_slack,
-            "gain": best.best_slack - scene.candidate.worst_slack,
+            "slack": slack,
+            "gain": slack - scene.candidate.worst_slack,
             "parameters": len(REGISTRY[best.structure].parameters),
             "own_parameters": len(own.parameters),
             "settled": best.settled,
@@ -196,11 +215,16 @@ def rank(scene: Scene) -> Fact | None:
     """Why it stands where it stands."""
     if not scene.candidate.ranked:
         return None
-    return Fact(
-        "rank",
-        {
-            "ranked": scene.candidate.ranked,
-            "worst_slack": scene.candidate.worst_slack,
-            "parameters": len(scene.candidate.parameters),
-        },
-    )
+    candidate, prefer = scene.candidate, scene.spec.prefer
+    handicap = COMPLEXITY * len(candidate.parameters)
+    data: dict[str, Any] = {
+        "ranked": candidate.ranked,
+        "worst_slack": candidate.worst_slack,
+        "parameters": len(candidate.parameters),
+        "handicap": handicap,
+        "score": candidate.worst_slack - handicap,
+    }
+    if prefer is not None:
+        value, case = scene.worst(prefer.quantity)
+        data |= {"value": value, "case": scene.case(case), "reserve": prefer.reserve}
+    return Fact("rank", data)

@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, Literal
 
+from synth.rationale.facts import reached
 from synth.rationale.scene import Scene
 from synth.rationale.sentences import said_binding
 from synth.search.outcome import Candidate, Outcome
@@ -56,7 +57,7 @@ def decide(
         new = outcome.candidates[same[0]]
         moved = {k: [float(parameters[k]), float(v)] for k, v in new.parameters.items() if k in parameters}
         return Decision("retune", same[0], moved, [*evidence, _moves(new, moved, same[0])])
-    evidence.append(_own_structure(outcome, untouched))
+    evidence.append(_own_structure(spec, outcome, untouched))
     if met:
         new = outcome.candidates[met[0]]
         text = (
@@ -76,7 +77,7 @@ def _before_and_after(
     head = f"Untouched on the revised plant, {about}"
     if not untouched.stable.all():
         bad = [n for n, ok in zip(outcome.case_names, untouched.stable, strict=False) if not ok]
-        where = f" on {', '.join(bad[:3])}" if len(outcome.case_names) > 1 else ""
+        where = f" on {'; '.join(bad[:3])}" if len(outcome.case_names) > 1 else ""
         return f"{head} is unstable{where}{was}.", facts
     scene = Scene(spec, outcome, untouched)
     if untouched.meets_all:
@@ -108,15 +109,18 @@ def _moves(new: Candidate, moved: dict[str, list[float]], index: int) -> tuple[s
     return f"{text}.", facts
 
 
-def _own_structure(outcome: Outcome, untouched: Candidate) -> tuple[str, dict[str, Any]]:
+def _own_structure(spec: Spec, outcome: Outcome, untouched: Candidate) -> tuple[str, dict[str, Any]]:
     scan = next((s for s in outcome.scans if s.structure == untouched.structure), None)
     if scan is None:
         return f"A {untouched.structure} was not searched again.", {}
+    best = reached(Scene(spec, outcome, untouched), scan)
     sure = "" if scan.settled else " as far as it was searched"
     text = (
-        f"Retuned, a {untouched.structure} comes no nearer than a slack of {percent(scan.best_slack)}{sure}."
+        f"Retuned, a {untouched.structure} comes no nearer than a slack of {percent(best)}{sure}."
+        if math.isfinite(best)
+        else f"Retuned, a {untouched.structure} was not found to stabilise every case{sure}."
     )
-    return text, {"best_slack": scan.best_slack}
+    return text, {"best_slack": best}
 
 
 def _nothing_does(outcome: Outcome) -> tuple[str, dict[str, Any]]:

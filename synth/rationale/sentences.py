@@ -12,6 +12,11 @@ from synth.wording.figures import count, figure, percent, quantity
 from synth.wording.names import limit_words, name_of, parameter_name
 
 MOVED = "10 %"  # by which each tuned value is moved in the fragility fact
+_STARTS = {  # the search's own starts, in words that need no look into the program
+    "design coordinates": "a guess of crossover and phase lead",
+    "crossover with free corners": "a guess of crossover and corner frequencies",
+    "wide log-uniform": "a wide random guess of all its values",
+}
 
 
 def rationale(scene: Scene) -> list[tuple[str, Fact]]:
@@ -21,8 +26,21 @@ def rationale(scene: Scene) -> list[tuple[str, Fact]]:
 
 
 def _rank(fact: Fact, scene: Scene) -> str:
-    text = str(fact.data["ranked"])
-    return f"Its place in the list: {text.rstrip('.')}."
+    d = fact.data
+    words, _, further = str(d["ranked"]).rstrip(".").partition("; ")
+    prefer = scene.spec.prefer
+    if not scene.candidate.meets_all:
+        words = f"by how near it comes, a worst slack of {percent(d['worst_slack'])}"
+    elif words.startswith("worst slack"):
+        words = (
+            f"a worst slack of {percent(d['worst_slack'])}, less {percent(d['handicap']).lstrip('+')} for "
+            f"{count(d['parameters'], 'tuned value')}: {percent(d['score'])}"
+        )
+    elif prefer is not None:
+        unit = scene.unit(prefer.quantity.quantity)
+        words = f"by {name_of(prefer.quantity)}, {quantity(d['value'], unit)}{scene.on(d['case'])}"
+        words += f", with {percent(d['reserve']).lstrip('+')} of slack kept" if d["reserve"] else ""
+    return f"Its place in the list: {words}{'; ' if further else ''}{further}."
 
 
 def _phase(fact: Fact, scene: Scene) -> str:
@@ -59,7 +77,8 @@ def _statics(fact: Fact, scene: Scene) -> str:
 
 def _start(fact: Fact, scene: Scene) -> str:
     source = f" ({fact.data['source']})" if fact.data["source"] else ""
-    return f"The search came to it from {fact.data['start']}{source}."
+    start = _STARTS.get(fact.data["start"], fact.data["start"])
+    return f"The search came to it from {start}{source}."
 
 
 def said_binding(scene: Scene) -> str:
@@ -72,6 +91,8 @@ def _binding(fact: Fact, scene: Scene) -> str:
     d = fact.data
     _, bound = scene.bound(d["requirement"])
     unit = scene.unit(bound.measure.quantity)
+    if d["slack"] >= 1.0:
+        return "Nothing in the sheet holds it back: every slack is at its most, +100 %."
     verb = "Held back by" if d["slack"] >= 0.0 else "Falls short in"
     text = (
         f"{verb} {name_of(bound.measure)}{scene.on(d['case'])}: {quantity(d['value'], unit)} where "

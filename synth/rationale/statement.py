@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from synth.rationale.cautions import reach_words
 from synth.rationale.scene import Scene
 from synth.search.outcome import Outcome
 from synth.spec import Spec
@@ -56,8 +57,8 @@ def _met(scene: Scene, who: str, searched: bool) -> Said:
 
 def _least(scene: Scene) -> str:
     candidate = scene.candidate
-    if candidate.binding is None:
-        return "nothing holds it back"
+    if candidate.binding is None or candidate.worst_slack >= 1.0:
+        return "nothing holds it back: every slack is at its most, +100 %"
     requirement, case = candidate.binding
     _, bound = scene.bound(requirement)
     unit = scene.unit(bound.measure.quantity)
@@ -78,7 +79,7 @@ def _missed(scene: Scene, who: str, searched: bool) -> Said:
     }
     if not candidate.stable.all():
         bad = [scene.case(int(k)) for k in np.flatnonzero(~candidate.stable)]
-        listed = ", ".join(bad[:3]) + (f" and {len(bad) - 3} more" if len(bad) > 3 else "")
+        listed = "; ".join(bad[:3]) + (f" and {len(bad) - 3} more" if len(bad) > 3 else "")
         where = f" on {listed}" if len(scene.outcome.case_names) > 1 else ""
         return f"{who} does not stabilise the plant{where}.", facts
     parts = []
@@ -118,8 +119,7 @@ def _word_on_reach(scene: Scene) -> str:
     error, case = scene.worst("static_error")
     if not error > 10.0:
         return ""
-    share = figure(100.0 * float(final[case]), 3)
-    return f" It reaches only {share} % of the reference{scene.on(scene.case(case))}."
+    return f" It {reach_words(float(final[case]))}{scene.on(scene.case(case))}."
 
 
 def _nothing(outcome: Outcome) -> Said:

@@ -348,6 +348,7 @@ class Adoption(TypedDict):
     rank: int
     structure: str
     parameters: dict[str, float]
+    units: NotRequired[dict[str, str]]
     compensator: Compensator
     verdict: str
     note: str | None

@@ -99,8 +99,9 @@ def _also(view: View, candidate: Candidate, width: int) -> list[Text]:
 
 
 def _near(candidate: Candidate, requirement: Requirement) -> list[Near]:
+    """Further cases near the limit; where a quantity is absent, one line says it."""
     entry = candidate.get("judged", {}).get(requirement["id"])
-    return entry["near"] if entry else []
+    return [near for near in entry["near"] if math.isfinite(number(near["slack"]))] if entry else []
 
 
 def _footnotes(view: View, candidate: Candidate, width: int) -> list[Text]:

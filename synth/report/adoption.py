@@ -5,8 +5,8 @@ from __future__ import annotations
 from rich.text import Text
 
 from synth.record import Adoption
-from synth.report.settings import fraction, plain_values
-from synth.report.theme import hanging
+from synth.report.settings import fraction, tuned_values
+from synth.report.theme import hanging, items
 
 RELEASE = "This states a choice and is no release to service: a model is not the machine."
 
@@ -19,8 +19,10 @@ def adopted(adoption: Adoption, path: str, width: int) -> list[Text]:
     )
     lines = [head]
     if adoption["parameters"]:
-        lines.append(hanging("  ", plain_values(adoption["parameters"]), width))
+        lines.append(items("  ", tuned_values(adoption["parameters"], adoption.get("units", {})), width))
+    lines.append(Text())
     lines.extend(Text("  " + line) for line in fraction(adoption["compensator"]))
+    lines.append(Text())
     if adoption["verdict"] != "met":
         lines.append(hanging("  ", "It does not meet everything.", width, style="warn"))
     if adoption["note"]:

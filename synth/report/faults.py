@@ -28,9 +28,19 @@ def faults(found: Sequence[Fault], width: int, *, next_step: str = "") -> list[T
             ("allowed", fault.allowed),
             ("nearest", fault.nearest),
         )
-        lines.extend(hanging(Text(f"  {name:<9}", style="dim"), text, width) for name, text in rows if text)
+        for name, text in rows:
+            lines.extend(_row(name, text, width) if text else ())
     if len(found) > MOST:
         lines.append(Text(f"... and {len(found) - MOST} more"))
     end = f"{count(len(found), 'fault')} found; nothing was run."
     lines.append(Text(f"{end} {next_step}".rstrip()))
     return lines
+
+
+def _row(name: str, text: str, width: int) -> list[Text]:
+    """One fact of a fault. A caret on a line of its own keeps its place under the text."""
+    label = Text(f"  {name:<9}", style="dim")
+    body, newline, caret = text.partition("\n")
+    if newline and caret.strip() == "^" and label.cell_len + len(body) <= width:
+        return [Text.assemble(label, body), Text(" " * label.cell_len + caret)]
+    return [hanging(label, text, width)]

@@ -97,8 +97,10 @@ def effort(view: View, candidate: Candidate, width: int) -> list[Text]:
         chart.level(-limit["limit"], "control peak limit")
     chart.curve([v / scale.factor for v in t], u, "first")
     unit = view.quantity_unit("control_peak")
+    step = f"{figure(size)} {view.record['spec']['output']['unit']}".rstrip()
+    head = "u" if unit == "u" else f"u, {unit},"
     return [
-        heading("Control", f"u, {unit}, for a reference step of {figure(size)}"),
+        heading("Control", f"{head} for a reference step of {step}"),
         *chart.lines(scale.word, ""),
     ]
 

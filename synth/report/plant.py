@@ -22,7 +22,8 @@ def plant(check: Check, width: int) -> list[Text]:
     lines = [summary.title(record, width)]
     violated = [limit for limit in check["limits"] if limit["violates"]]
     if violated:
-        words = f"{count(len(violated), 'limit')} of the plant rule the sheet out; see below."
+        rules = count(len(violated), "limit of the plant rules", "limits of the plant rule")
+        words = f"{rules} the sheet out; see below."
         lines.append(
             Text("\n").append_text(hanging(Text.assemble(("IMPOSSIBLE", "bad"), "  "), words, width))
         )

@@ -6,7 +6,7 @@ import math
 
 from rich.text import Text
 
-from synth.record import Record, number
+from synth.record import LimitPart, Record, number
 from synth.report.settings import tuned
 from synth.report.theme import Columns, hanging, heading
 from synth.report.view import SIGN, View
@@ -75,14 +75,25 @@ def limits(record: Record, width: int) -> list[Text]:
         return []
     view = View(record)
     lines = [heading("Limits of the plant", "hold for any compensator in this loop")]
+    together: dict[tuple[str, str], list[LimitPart]] = {}  # one statement may rule out several requirements
     for limit in found:
-        text = Text(limit["statement"])
-        if limit["violates"]:
-            text.append(f" Violated by {view.name(limit['violates'])}.", style="bad")
-            relax = limit.get("relax")
-            requirement = view.requirements.get(limit["violates"])
-            if relax and requirement is not None and isinstance(relax.get("to"), int | float):
-                text.append(f" Relax it to {quantity(float(relax['to']), view.unit(requirement))}.")
-        text.append(f" [{limit['source']}]", style="dim")
+        together.setdefault((limit["statement"], limit["source"]), []).append(limit)
+    for (statement, source), same in together.items():
+        text = Text(statement)
+        violated = [view.name(limit["violates"]) for limit in same if limit["violates"]]
+        if violated:
+            text.append(f" Violated by {', '.join(violated)}.", style="bad")
+        for limit in same:
+            text.append(_relaxed(view, limit))
+        text.append(f" [{source}]", style="dim")
         lines.append(hanging("  - ", text, width))
     return lines
+
+
+def _relaxed(view: View, limit: LimitPart) -> str:
+    """To what a violated requirement would have to move, where that is known."""
+    relax = limit.get("relax")
+    requirement = view.requirements.get(limit["violates"] or "")
+    if not relax or requirement is None or not isinstance(relax.get("to"), int | float):
+        return ""
+    return f" Relax it to {quantity(float(relax['to']), view.unit(requirement))}."

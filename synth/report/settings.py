@@ -11,15 +11,15 @@ from synth.wording.figures import MINUS, exact, figure, quantity
 
 def tuned(candidate: Candidate | Closest) -> list[str]:
     """The tuned values with all the digits that were scored: "gain 3.1", "integral time 0.8 s"."""
+    return tuned_values(candidate["parameters"], candidate.get("units", {}))
+
+
+def tuned_values(parameters: dict[str, float], units: dict[str, str]) -> list[str]:
+    """The same of values and units that stand apart."""
     return [
-        f"{parameter_name(key)} {_with_unit(exact(value), unit_of(candidate, key))}"
-        for key, value in candidate["parameters"].items()
+        f"{parameter_name(key)} {_with_unit(exact(value), units.get(key, ''))}"
+        for key, value in parameters.items()
     ]
-
-
-def plain_values(parameters: dict[str, float]) -> str:
-    """Tuned values without their units, in SI."""
-    return " · ".join(f"{parameter_name(key)} {exact(value)}" for key, value in parameters.items())
 
 
 def unit_of(candidate: Candidate | Closest, name: str) -> str:

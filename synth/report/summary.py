@@ -6,7 +6,7 @@ import math
 
 from rich.text import Text
 
-from synth.record import Candidate, Record, Requirement, quantity_name
+from synth.record import Candidate, Record, Requirement, number, quantity_name
 from synth.report.settings import tuned
 from synth.report.theme import Columns, hanging, heading, items
 from synth.report.view import SIGN, View, order
@@ -95,6 +95,8 @@ def _examined(record: Record) -> str:
 def _held_by(view: View, candidate: Candidate, several: bool) -> str:
     binding = candidate["binding"]
     if binding is None:
+        return "nothing: every slack is 100 %"
+    if number(candidate["worst_slack"]) >= 1.0:
         return "nothing: every slack is 100 %"
     where = f", {binding['case']}" if several else ""
     return f"{view.name(binding['requirement'])}{where}"

@@ -121,6 +121,7 @@ def measured(value: object, dimension: Dimension) -> float:
             "this must be " + ("a number with its unit, in quotes" if units else "a number"), words
         )
     if not isinstance(value, str):
+        finite(value, words)
         if units:
             only = next(iter(units)) if len(units) == 1 else None
             near = f'"{_short(value)} {only}"' if only else None
