@@ -49,10 +49,16 @@ class _Look:
         size = np.abs(self.l[far])
         if not far.any():
             return
-        c = np.abs(self.subject.compensator(self.w[far]))
-        turn = 2.0 * np.pi / theta
-        here = {int((top / (1.0 - size)).argmax()) for top in (np.ones_like(size), size, c)}
-        middles = [*self.w[far][sorted(here)], *self._turns_of_falls(self.w[far], size)]
+        w, turn = self.w[far], 2.0 * np.pi / theta
+
+        def tops(w: FloatArray, size: FloatArray) -> list[int]:
+            c = np.abs(self.subject.compensator(w))
+            return [int((top / (1.0 - size)).argmax()) for top in (np.ones_like(size), size, c)]
+
+        middles = list(self._turns_of_falls(w, size))
+        for kind, i in enumerate(tops(w, size)):
+            fine = np.geomspace(w[max(i - 1, 0)], w[min(i + 1, len(w) - 1)], 400)
+            middles.append(fine[tops(fine, np.abs(self.loop(fine)))[kind]])
         more = (np.array(middles)[:, None] + turn * np.linspace(-8.0, 8.0, 401)).ravel()
         self.w = np.unique(np.concatenate((self.w, more[more > 0.0])))
         self.l = self.loop(self.w)
