@@ -174,11 +174,12 @@ def climb(
         w = np.exp(u)
         re, im = curve.at(w)
         size, rate, turn = log_rates(re, im)
-        value = np.sqrt(size[0] / size[1])
-        np.maximum.at(best, target, value)
+        with np.errstate(divide="ignore", invalid="ignore"):  # NaN where both are nothing, and no peak there
+            value = np.sqrt(size[0] / size[1])
+            bend = (re[2] * re[0] + im[2] * im[0]) / size - rate * rate + turn * turn
+        np.fmax.at(best, target, value)
         met = np.flatnonzero(best[target] == value)
         at[target[met]] = w[met]
-        bend = (re[2] * re[0] + im[2] * im[0]) / size - rate * rate + turn * turn
         slope, curvature = rate[0] - rate[1], bend[0] - bend[1]
         low, high = np.where(slope > 0.0, u, low), np.where(slope > 0.0, high, u)
         with np.errstate(divide="ignore", invalid="ignore"):
