@@ -9,6 +9,7 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
+from synth.loop.poles.newton import upper_half
 from synth.loop.poles.roots import closed_roots
 from synth.loop.polynomials import horner
 
@@ -95,9 +96,8 @@ def _product(roots: ComplexArray, inverse: ComplexArray) -> ComplexArray:
 
     A pair is 1 - 2 Re p/s + abs(p)²/s²: half as many products.
     """
-    there = (roots.imag >= 0.0) & np.isfinite(roots.real)  # NaN may come with an imaginary part of 0
-    order = np.argsort(~there, axis=1, kind="stable")[:, : int(there.sum(axis=1).max(initial=0))]
-    upper = np.take_along_axis(np.where(there, roots, 0.0), order, axis=1)
+    upper = upper_half(roots)
+    upper = np.where(np.isnan(upper.real), 0.0, upper)
     pair = upper.imag > 0.0
     first = np.where(pair, -2.0, -1.0) * upper.real
     second = np.where(pair, upper.real**2 + upper.imag**2, 0.0)

@@ -220,7 +220,14 @@ def _assembled(pieces: list[Panels], rows: int) -> Panels:
     owner = np.concatenate([p.owner for p in pieces])
     start = np.concatenate([p.start for p in pieces])
     order = np.lexsort((start, owner))
+    place = np.empty_like(order)
+    place[order] = np.arange(len(order))
+    # each piece goes to its place at once: gathered first, all values would be copied twice
+    values = np.empty((len(owner), *pieces[0].values.shape[1:]))
+    begin = 0
+    for p in pieces:
+        values[place[begin : begin + len(p.owner)]] = p.values
+        begin += len(p.owner)
     length = np.concatenate([p.length for p in pieces])[order]
-    values = np.concatenate([p.values for p in pieces])[order]
     owner = owner[order]
     return Panels(owner, start[order], length, values, np.searchsorted(owner, np.arange(rows)))
