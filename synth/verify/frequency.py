@@ -121,7 +121,8 @@ class _Look:
         y[~np.isfinite(y)] = 0.0
         inner = (y[1:-1] >= y[:-2]) & (y[1:-1] >= y[2:])
         top = np.flatnonzero(inner) + 1
-        top = top[np.argsort(-y[top])][:4]
+        # with dead time neighbouring turns are nearly as high, and the grid does not tell which is highest
+        top = top[np.argsort(-y[top])][: 16 if self.delayed else 4]
         best = float(np.max(y))
         if top.size:
             low, high = self.w[top - 1], self.w[top + 1]
