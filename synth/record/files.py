@@ -101,7 +101,11 @@ def read_document(path: Path, expected: str, kind: Any, noun: str) -> tuple[dict
     except json.JSONDecodeError as trouble:
         cut = trouble.pos >= len(text.rstrip())
         why = (
-            "the file is empty" if not text.strip() else "it ends in the middle" if cut else f"{trouble.msg}"
+            "the file is empty"
+            if not text.strip()
+            else "it ends in the middle"
+            if cut
+            else f"it is no JSON from column {trouble.colno} on"
         )
         raise _fault(f"not a whole {noun}: {why}", path, line=trouble.lineno) from None
     except (ValueError, RecursionError):

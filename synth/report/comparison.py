@@ -98,14 +98,14 @@ def _rows(columns: Sequence[Column]) -> list[tuple[str, list[Text]]]:
         plain("meets its sheet", ("yes" if c.candidate["meets_all"] else "no" for c in columns)),
         plain("worst slack", (percent(number(c.candidate["worst_slack"])) for c in columns)),
     ]
-    for key in _quantities(columns):
-        values = [View(c.record).worst(c.candidate, key) for c in columns]
+    for name, key in _quantities(columns).items():
+        values = [_value(c, name, key) for c in columns]
         if all(math.isnan(v) for v in values):
             continue
         unit = unit_for(_unit(key, columns), values)
-        name = f"{quantity_name(key)}, {unit.word}" if unit.word else quantity_name(key)
-        cells = [_cell(c, key, unit.number(v, 3)) for c, v in zip(columns, values, strict=True)]
-        rows.append((name, cells))
+        label = f"{name}, {unit.word}" if unit.word else name
+        cells = [_cell(c, name, unit.number(v, 3)) for c, v in zip(columns, values, strict=True)]
+        rows.append((label, cells))
     return rows
 
 
@@ -115,14 +115,24 @@ def _unit(key: str, columns: Sequence[Column]) -> str:
     return units.pop() if len(units) == 1 else quantity_unit(key)
 
 
-def _quantities(columns: Sequence[Column]) -> list[str]:
-    """What any of the sheets asks for, in their order, then a fixed few."""
-    asked = (r["quantity"] for c in columns for r in c.record["requirements"])
-    return list(dict.fromkeys((*asked, *ALWAYS)))
+def _quantities(columns: Sequence[Column]) -> dict[str, str]:
+    """Name and key of what any of the sheets asks for, in their order and with their bands, then of a fixed
+    few."""
+    asked = {requirement_name(r): r["quantity"] for c in columns for r in c.record["requirements"]}
+    return asked | {quantity_name(key): key for key in ALWAYS}
 
 
-def _cell(column: Column, key: str, text: str) -> Text:
-    ids = [r["id"] for r in column.record["requirements"] if r["quantity"] == key]
+def _value(column: Column, name: str, key: str) -> float:
+    """Worst value under that name; NaN where a sheet did not ask for this band, span or range of poles."""
+    view = View(column.record)
+    if name == quantity_name(key):
+        return view.worst(column.candidate, key)
+    asked = [r for r in column.record["requirements"] if requirement_name(r) == name]
+    return view.judged(column.candidate, asked[0])[0] if asked else math.nan
+
+
+def _cell(column: Column, name: str, text: str) -> Text:
+    ids = [r["id"] for r in column.record["requirements"] if requirement_name(r) == name]
     short = any(not number(column.candidate["slack"].get(i)) >= 0.0 for i in ids)
     binding = column.candidate["binding"]
     binds = binding is not None and binding["requirement"] in ids

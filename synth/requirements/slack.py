@@ -21,6 +21,9 @@ from synth.requirements.bounds import Bound
 
 # Worst slacks nearer than this are one; the next-worst decides.
 TIE = 1e-3
+# A value as near to its limit as this, relative, stands on it: a control peak that is the limit to the last
+# digit but one is met. Far below what the values are exact to.
+ROUNDING = 1e-12
 
 
 def slack_of(bound: Bound, values: FloatArray) -> FloatArray:
@@ -28,6 +31,7 @@ def slack_of(bound: Bound, values: FloatArray) -> FloatArray:
     with np.errstate(invalid="ignore", over="ignore"):
         gap = bound.limit - values if bound.side == "max" else values - bound.limit
         slack = np.minimum(gap / bound.unit, 1.0)
+        slack = np.where(np.abs(slack) < ROUNDING, 0.0, slack)
         slack = np.where(np.isnan(values), -np.inf, slack)
         row = bound.measure.row
         # the best value is on the good side of a "max" where smaller is better, of a "min" where larger is

@@ -59,7 +59,7 @@ def test_an_unstable_loop_is_scored_and_called_so(sheet):
     first = record["candidates"][0]
     assert first["meets_all"] is False
     assert first["worst_slack"] == "-inf"
-    assert "does not stabilise the plant on nominal, loaded" in record["statement"]["text"]
+    assert "does not stabilise the plant on nominal; loaded" in record["statement"]["text"]
     assert first["quantities"]["nominal"]["overshoot"] is None
     assert first["curves"] == {"step": {}, "root_locus": {}}
 
