@@ -68,7 +68,6 @@ class _Realised:
     b: FloatArray
     rows: FloatArray
     direct: FloatArray
-    first: float  # x of z = 1 at rest
 
 
 def _realised(polynomials: list[FloatArray], below: FloatArray, sizes: FloatArray) -> _Realised:
@@ -86,7 +85,7 @@ def _realised(polynomials: list[FloatArray], below: FloatArray, sizes: FloatArra
     if n:
         a[-1] = -monic[1:][::-1] * scale[:n] / scale[n - 1]
         b[-1] = 1.0 / scale[n - 1]
-    return _Realised(a, b, rows, direct, 1.0)
+    return _Realised(a, b, rows, direct)
 
 
 def _without_dead_time(subject: Subject, poles: ComplexArray) -> Response:
