@@ -109,6 +109,8 @@ def staging() -> Table:
         ("order 8, random starts", starts(8, 1024)),
         ("order 6, wide cloud (60 %)", cloud(6, 1024, 0.6)),
         ("order 8, wide cloud (60 %)", cloud(8, 1024, 0.6)),
+        ("order 6, wide cloud (120 %)", cloud(6, 1024, 1.2)),
+        ("order 8, wide cloud (120 %)", cloud(8, 1024, 1.2)),
         ("order 6, narrow cloud (2 %)", cloud(6, 1024, 0.02)),
         ("order 8, narrow cloud (2 %)", cloud(8, 1024, 0.02)),
     ):
