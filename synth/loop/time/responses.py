@@ -143,7 +143,7 @@ def _classes(
 ) -> list[IntArray]:
     """Rows that are marched together: the same panels, and no more numbers at once than fit in 60 MB."""
     out = []
-    if len(todo) <= 64:  # a few rows: one fine cut for all costs less than many calls
+    if len(todo) <= 300:  # one fine cut for all costs less than many calls
         key = np.where(coarse[todo] > 1, coarse[todo], 0) * 100 + np.minimum((fine[todo] + 2) // 3, 3)
         key += 10 * hold[todo]
     else:
