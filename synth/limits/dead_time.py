@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from synth.limits.case import CaseView, Finding
+from synth.wording.figures import quantity
 
 SOURCE = "causality: the output cannot answer a step of the reference before the dead time is over"
 
@@ -16,14 +17,14 @@ def findings(view: CaseView) -> Iterator[Finding]:
         return
     name = "dead time against settling and peak"
     statement = (
-        f"The output stands still for the dead time of {delay:.4g} s: no settling, no peak and no smaller "
-        "tracking area before that."
+        f"The output stands still for the dead time of {quantity(delay, 's')}: it neither settles nor peaks "
+        "before that, and the tracking area is no smaller."
     )
     facts: dict[str, float | str] = {"dead_time": delay}
     found = False
-    for quantity in ("settling_time", "peak_time", "tracking_area"):
-        for bound in view.asked(quantity, "max"):
-            if quantity == "settling_time" and bound.measure.band >= 1.0:
+    for key in ("settling_time", "peak_time", "tracking_area"):
+        for bound in view.asked(key, "max"):
+            if key == "settling_time" and bound.measure.band >= 1.0:
                 continue  # a band that holds 0: settled from the start
             found = True
             yield Finding(name, SOURCE, statement, facts, bound, delay)

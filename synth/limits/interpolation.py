@@ -8,6 +8,7 @@ from collections.abc import Iterator, Sequence
 import numpy as np
 
 from synth.limits.case import CaseView, Finding, in_words
+from synth.wording.figures import quantity
 
 PEAK_SOURCE = (
     "S. Skogestad and I. Postlethwaite, Multivariable Feedback Control, 2nd ed. (2005), section 5.3; K. J. "
@@ -70,12 +71,14 @@ def findings(view: CaseView) -> Iterator[Finding]:
 
 def _with(view: CaseView) -> str:
     facts = view.facts
-    parts = ["unstable pole " + ", ".join(dict.fromkeys(map(in_words, facts.right_poles)))]
+    poles = list(dict.fromkeys(map(in_words, facts.right_poles)))
+    parts = [f"the unstable {'pole' if len(poles) == 1 else 'poles'} at s = {', '.join(poles)} rad/s"]
     if facts.right_zeros:
-        parts.append("zero " + ", ".join(dict.fromkeys(map(in_words, facts.right_zeros))))
+        zeros = list(dict.fromkeys(map(in_words, facts.right_zeros)))
+        parts.append(f"the {'zero' if len(zeros) == 1 else 'zeros'} at s = {', '.join(zeros)} rad/s")
     if facts.dead_time > 0.0:
-        parts.append(f"dead time {facts.dead_time:.4g} s")
-    return ", ".join(parts)
+        parts.append(f"a dead time of {quantity(facts.dead_time, 's')}")
+    return " and ".join((", ".join(parts[:-1]), parts[-1])) if len(parts) > 1 else parts[0]
 
 
 def _peaks(view: CaseView, peak: float) -> Iterator[Finding]:
@@ -104,15 +107,15 @@ def best_phase_margin(peak: float) -> float:
 def _margins(view: CaseView, peak: float) -> Iterator[Finding]:
     best = {
         "gain_margin": (best_gain_margin(peak), "dB both up and down"),
-        "phase_margin": (best_phase_margin(peak), "degrees"),
+        "phase_margin": (best_phase_margin(peak), "deg"),
     }
-    for quantity, (value, unit) in best.items():
-        for bound in view.asked(quantity, "min"):
+    for key, (value, unit) in best.items():
+        for bound in view.asked(key, "min"):
             yield Finding(
-                f"right-half-plane poles with zeros or dead time against the {quantity.replace('_', ' ')}",
+                f"right-half-plane poles with zeros or dead time against the {key.replace('_', ' ')}",
                 MARGIN_SOURCE,
-                f"With {_with(view)} no loop has a {quantity.replace('_', ' ')} above {value:.4g} {unit}.",
-                {"peak": peak, quantity: value},
+                f"With {_with(view)} no loop has a {key.replace('_', ' ')} above {value:.4g} {unit}.",
+                {"peak": peak, key: value},
                 bound,
                 value,
             )

@@ -7,11 +7,13 @@ from collections.abc import Iterator
 import numpy as np
 
 from synth.limits.case import CaseView, Finding
+from synth.wording.figures import figure, quantity
 
 SOURCE = (
     "R. H. Middleton, Trade-offs in linear control system design, Automatica 27 (1991) 281-292: "
     "the transform of the step response vanishes at a zero of the plant"
 )
+SLIGHT = 0.01  # % of undershoot that is not worth a number
 CONDITIONS = "Holds for a real zero z > 0 and every stable loop."
 
 
@@ -47,8 +49,7 @@ def findings(view: CaseView) -> Iterator[Finding]:
     name = "right-half-plane zero against the tracking area"
     statement = (
         f"With the zero at s = {zero:.4g} rad/s the area between reference and response is at least "
-        f"{area:.4g} s, "
-        f"the dead time and 1/z. {CONDITIONS}"
+        f"{quantity(area, 's')}, the dead time and 1/z. {CONDITIONS}"
     )
     facts: dict[str, float | str] = {"zero": zero, "dead_time": delay, "tracking_area": area}
     for bound in view.asked("tracking_area", "max"):
@@ -66,17 +67,21 @@ def _undershoot(view: CaseView, zero: float, delay: float) -> Iterator[Finding]:
             name,
             SOURCE,
             f"The zero at s = {zero:.4g} rad/s makes the response start the wrong way: settling to 2 % "
-            f"within "
-            f"{time:.3g} s costs an undershoot of at least {least:.3g} %, earlier costs more. {CONDITIONS}",
+            f"within {quantity(time, 's', 3)} costs an undershoot of at least {figure(least, 3)} %, "
+            f"earlier costs more. {CONDITIONS}",
             {"zero": zero, "settling_time": time, "undershoot": least},
         )
     for bound in settled:
         band = bound.measure.band
         least = 100.0 * least_undershoot(zero, bound.limit, band, delay)
         says = (
-            f"With the zero at s = {zero:.4g} rad/s, settling to {100 * band:g} % within {bound.limit:.4g} "
-            f"s costs "
-            f"an undershoot of at least {least:.3g} %"
+            f"With the zero at s = {zero:.4g} rad/s, settling to {100 * band:g} % within "
+            f"{quantity(bound.limit, 's')} costs "
+            + (
+                f"an undershoot of at least {figure(least, 3)} %"
+                if least >= SLIGHT
+                else "next to no undershoot"
+            )
         )
         facts: dict[str, float | str] = {
             "zero": zero,
@@ -94,5 +99,5 @@ def _undershoot(view: CaseView, zero: float, delay: float) -> Iterator[Finding]:
                 yield Finding(name, SOURCE, f"{says}; none is allowed. {CONDITIONS}", facts, dip, least)
                 continue
             facts["settling_time_at_that_undershoot"] = time
-            says_more = f"; {dip.limit:g} % of undershoot allow no settling before {time:.4g} s"
+            says_more = f"; an undershoot of {dip.limit:g} % allows no settling before {quantity(time, 's')}"
             yield Finding(name, SOURCE, f"{says}{says_more}. {CONDITIONS}", facts, bound, time)

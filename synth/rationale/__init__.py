@@ -3,6 +3,7 @@
 from synth.rationale import cautions
 from synth.rationale.cautions import uncounted
 from synth.rationale.facts import Fact
+from synth.rationale.practice import remarks
 from synth.rationale.revision import Decision, decide
 from synth.rationale.scene import Scene, worst_of
 from synth.rationale.sentences import rationale
@@ -16,6 +17,7 @@ __all__ = [
     "cautions",
     "decide",
     "rationale",
+    "remarks",
     "uncounted",
     "verdict",
     "worst_of",

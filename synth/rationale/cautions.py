@@ -7,6 +7,7 @@ import math
 import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray
+from synth.rationale.practice import EFFORT, far_beyond, idle, poor_reach, reach_words
 from synth.rationale.scene import Scene
 from synth.wording.figures import count, figure, quantity
 
@@ -26,6 +27,7 @@ def cautions(scene: Scene) -> list[str]:
         *_stability(scene),
         *_direction(scene),
         *_reach(scene),
+        *_practice(scene),
         *_compensator(scene),
         *_slow(scene),
         *_effort(scene),
@@ -84,19 +86,15 @@ def _direction(scene: Scene) -> list[str]:
 
 
 def _reach(scene: Scene) -> list[str]:
-    if any(b.measure.quantity == "static_error" for b in scene.spec.bounds):
-        return []
-    error, case = scene.worst("static_error")
-    if not error > 10.0:
+    case = poor_reach(scene)
+    if case is None:
         return []
     reached = reach_words(float(scene.column("final_value")[case]))
     return [f"The loop {reached}{_on(scene, case)}; the sheet bounds no static error."]
 
 
-def reach_words(final: float) -> str:
-    """ "reaches only 38 % of the reference", or "settles at 208 % of the reference" where it goes past it."""
-    verb = "settles at" if final > 1.0 else "reaches only"
-    return f"{verb} {figure(100.0 * final, 3)} % of the reference"
+def _practice(scene: Scene) -> list[str]:
+    return [f"{text[:1].upper()}{text[1:]}." for text in (*idle(scene), *far_beyond(scene))]
 
 
 def _compensator(scene: Scene) -> list[str]:
@@ -129,9 +127,11 @@ def _effort(scene: Scene) -> list[str]:
         f"reference step of {step}, and for that alone. No actuator limit, rate limit or anti-windup is "
         "in the model."
     )
-    bounded = any(b.measure.quantity == "control_peak" for b in scene.spec.bounds)
-    if not bounded and any(_right_half(row) for row in scene.outcome.plants.denominator):
+    bounded = {b.measure.quantity for b in scene.spec.bounds}
+    if "control_peak" not in bounded and any(_right_half(row) for row in scene.outcome.plants.denominator):
         text += " The sheet sets no control_peak, and an unstable plant is lost once the actuator saturates."
+    elif not bounded & set(EFFORT):
+        text += " The sheet bounds neither control_peak nor noise_gain: the search spends both freely."
     return [text]
 
 

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from synth.rationale.cautions import reach_words
+from synth.rationale.practice import poor_reach, reach_words
 from synth.rationale.scene import Scene
 from synth.search.outcome import Outcome
 from synth.spec import Spec
@@ -114,12 +114,8 @@ def _word_on_reach(scene: Scene) -> str:
     final = scene.column("final_value")
     if (final < 0.0).any():
         return f" The loop drives backwards: y ends at {figure(float(np.nanmin(final)), 3)} of the reference."
-    if any(b.measure.quantity == "static_error" for b in scene.spec.bounds):
-        return ""
-    error, case = scene.worst("static_error")
-    if not error > 10.0:
-        return ""
-    return f" It {reach_words(float(final[case]))}{scene.on(scene.case(case))}."
+    case = poor_reach(scene)
+    return "" if case is None else f" It {reach_words(float(final[case]))}{scene.on(scene.case(case))}."
 
 
 def _nothing(outcome: Outcome) -> Said:

@@ -10,7 +10,7 @@ import numpy as np
 
 from synth.loop.closed_loop import Rational
 from synth.loop.quantities import EVERY_QUANTITY
-from synth.rationale import Scene, rationale, worst_of
+from synth.rationale import Scene, rationale, remarks, worst_of
 from synth.record import curves
 from synth.record.clean import clean
 from synth.record.format import Candidate, Compensator, Mode
@@ -85,6 +85,7 @@ def candidate_part(
         "source": found.source,
         "goal": found.goal,
         "ranked": found.ranked,
+        "remarks": remarks(scene) if found.stable.all() else [],
         "approximate": sorted(
             {m.quantity for q, m in enumerate(found.measures) if found.approximate[:, q].any()}
         ),

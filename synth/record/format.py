@@ -228,6 +228,7 @@ class Candidate(TypedDict):
     source: NotRequired[str]
     goal: NotRequired[str]
     ranked: NotRequired[str]
+    remarks: NotRequired[list[str]]  # what an engineer would not build it for
     approximate: NotRequired[list[str]]
     interior: NotRequired[dict[str, int | None]]
 

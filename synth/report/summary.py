@@ -74,6 +74,7 @@ def ranked(record: Record, width: int) -> list[Text]:
         lines.append(items("      ", tuned(c), width))
         if c.get("also"):
             lines.append(Text(f"      the same function is a {' and a '.join(c['also'])}", style="dim"))
+        lines.extend(hanging("      ", remark, width, style="warn") for remark in c.get("remarks", []))
         verified = c["verified"]
         if verified is not None and not verified["agrees"]:
             lines.append(
