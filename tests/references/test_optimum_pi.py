@@ -1,4 +1,4 @@
-"""The largest integral gain that a bound on Ms allows, through the whole search: one requirement and a preference.
+"""The largest integral gain that a bound on Ms allows, by the whole search: one requirement and a preference.
 
 A sample of the plants of optimum_pi.toml; the whole table is walked by benchmarks/bench_optimum.py.
 """
@@ -15,7 +15,10 @@ from synth.search import Aim, Task, propose
 from synth.structures import by_name
 
 TABLE = tomllib.loads((Path(__file__).parent / "optimum_pi.toml").read_text(encoding="utf-8"))["optimum"]
-SAMPLE = ("n8-Ms1.4", "a0.2-Ms1.4", "a0.2-Ms2.0", "z1-Ms1.6", "int2-Ms1.4", "osc1-Ms2.0", "fopdt1-Ms1.6", "unst-Ms1.6")
+SAMPLE = (
+    *("n8-Ms1.4", "a0.2-Ms1.4", "a0.2-Ms2.0", "z1-Ms1.6"),
+    *("int2-Ms1.4", "osc1-Ms2.0", "fopdt1-Ms1.6", "unst-Ms1.6"),
+)
 
 # K. J. Astrom, H. Panagopoulos and T. Hagglund, "Design of PI controllers based on non-convex optimization",
 # Automatica 34 (1998) 585-601, table of examples: gain and integral time as printed. Recalled, not looked up.
