@@ -1,6 +1,6 @@
 """The largest integral gain that a bound on Ms allows, for the whole table of published plants.
 
-One requirement and a preference, as a sheet would say it; the optima come from another route (the table's source).
+One requirement and a preference, as a sheet would say it; the optima come from another route.
 """
 
 from __future__ import annotations
