@@ -72,8 +72,8 @@ def main() -> int:
                     "rows": table.rows,
                 }
             )
-    if options.json:
-        options.json.write_text(json.dumps(record, indent=1, allow_nan=True) + "\n", encoding="utf-8")
+            if options.json:  # after every table: a run that is stopped leaves what it has
+                options.json.write_text(json.dumps(record, indent=1, allow_nan=True) + "\n", encoding="utf-8")
     return 0
 
 
