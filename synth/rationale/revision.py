@@ -12,8 +12,8 @@ from synth.rationale.scene import Scene
 from synth.rationale.sentences import said_binding
 from synth.search.outcome import Candidate, Outcome
 from synth.spec import Spec
-from synth.wording.figures import change, count, percent
-from synth.wording.names import parameter_name
+from synth.wording.figures import change, count, percent, quantity
+from synth.wording.names import name_of, parameter_name
 
 Advice = Literal["keep", "retune", "restructure", "relax"]
 
@@ -66,7 +66,9 @@ def decide(
         )
         facts = {"rank": met[0] + 1, "worst_slack": new.worst_slack}
         return Decision("restructure", met[0], None, [*evidence, (text, facts)])
-    return Decision("relax", 0 if outcome.candidates else None, None, [*evidence, _nothing_does(outcome)])
+    return Decision(
+        "relax", 0 if outcome.candidates else None, None, [*evidence, _nothing_does(spec, outcome)]
+    )
 
 
 def _before_and_after(
@@ -123,12 +125,22 @@ def _own_structure(spec: Spec, outcome: Outcome, untouched: Candidate) -> tuple[
     return text, {"best_slack": best}
 
 
-def _nothing_does(outcome: Outcome) -> tuple[str, dict[str, Any]]:
+def _nothing_does(spec: Spec, outcome: Outcome) -> tuple[str, dict[str, Any]]:
     if not outcome.candidates:
         return "Nothing that was searched meets the sheet on the revised plant.", {}
     first = outcome.candidates[0]
+    facts: dict[str, Any] = {"worst_slack": first.worst_slack}
     text = (
         f"Nothing that was searched meets the sheet on the revised plant; the nearest is a "
         f"{first.structure} with a slack of {percent(first.worst_slack)}."
     )
-    return text, {"worst_slack": first.worst_slack}
+    if outcome.prices:
+        price, scene = outcome.prices[0], Scene(spec, outcome, first)
+        bound = scene.bound(price.requirement)[1]
+        unit = scene.unit(bound.measure.quantity)
+        text += (
+            f" The cheapest single step: {name_of(bound.measure)} {quantity(price.limit, unit)} → "
+            f"{quantity(price.needed, unit)}, and a {price.structure} does it."
+        )
+        facts |= {"requirement": price.requirement, "limit": price.limit, "needed": price.needed}
+    return text, facts

@@ -40,9 +40,9 @@ def rejected(record: Record, width: int) -> list[Text]:
 def prices(record: Record, width: int) -> list[Text]:
     """When the sheet is not met: what each requirement would have to be for the rest to be met."""
     found = record.get("prices", [])
-    if not found:
-        return []
     view = View(record)
+    if not found:
+        return _no_price(record, width)
     lines = [heading("What it would take", "one limit moved, all the others met; cheapest first")]
     table = Columns(("<", ">", "<", "<", ">", "<"))
     for p in found:
@@ -61,6 +61,18 @@ def prices(record: Record, width: int) -> list[Text]:
         )
     lines.extend(line if line.cell_len <= width else _cut(line, width) for line in table.lines())
     return lines
+
+
+def _no_price(record: Record, width: int) -> list[Text]:
+    """Silence would read as if nothing had been tried."""
+    search = record["search"]
+    searched = record.get("job") != "score" and not search["interrupted"] and not search.get("limited")
+    if record["verdict"] != "not met" or len(record["requirements"]) < 2 or not searched:
+        return []
+    words = (
+        "No single limit was found that, moved alone, lets the others be met: the sheet is short in several."
+    )
+    return [heading("What it would take"), hanging("  ", words, width)]
 
 
 def _cut(line: Text, width: int) -> Text:

@@ -16,7 +16,7 @@ _ADVICE = {
     "keep": ("KEEP", "good", "meets everything on the revised plant, untouched."),
     "retune": ("RETUNE", "warn", "needs other values."),
     "restructure": ("RESTRUCTURE", "warn", "cannot do it with other values; another structure can."),
-    "relax": ("RELAX", "bad", "and nothing else that was searched meets the sheet."),
+    "relax": ("RELAX", "bad", "does not meet the sheet, and nothing else that was searched does."),
 }
 
 

@@ -14,7 +14,8 @@ from synth.search.goals import Goals
 from synth.search.outcome import Aim, Price
 from synth.search.polish import Pace, polish
 
-MARGIN = 1e-6
+MARGIN = 1e-4  # of slack kept in all the rest: a polish ends on its bounds to a few 1e-6, on either side
+FINE = 6  # significant digits where the usual ones would lose that margin
 PRICE_PACE = Pace(radius=0.3, iterations=14, least=1e-3, halve=(4,), field=1)
 
 
@@ -47,10 +48,15 @@ def price_list(campaign: Campaign) -> tuple[Price, ...]:
 
 def _prices(campaign: Campaign, drafts: list[Draft], aim_of: list[int]) -> tuple[Price, ...]:
     task, objective = campaign.task, campaign.objective
+    exact = [replace(d, theta=np.array([float(f"{v:.{FINE - 1}e}") for v in d.theta])) for d in drafts]
     drafts, scored = rounded(task, drafts, objective.plants, objective.case_names)
     measures = tuple(dict.fromkeys(b.measure for b in task.bounds))
     cards = scorecards(task, realised(drafts), objective.plants, objective.case_names, measures)
-    objective.evaluations += scored + len(drafts) * len(objective.plants)
+    worst = cards.slack.min(axis=1)  # (B, R)
+    lost = [len(task.bounds) > 1 and np.delete(w, r).min() < 0.0 for w, r in zip(worst, aim_of, strict=True)]
+    drafts = [e if out else d for e, d, out in zip(exact, drafts, lost, strict=True)]
+    cards = scorecards(task, realised(drafts), objective.plants, objective.case_names, measures)
+    objective.evaluations += scored + 2 * len(drafts) * len(objective.plants)
     found: list[Price] = []
     for i, r in enumerate(aim_of):
         bound = task.bounds[r]

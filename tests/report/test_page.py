@@ -130,3 +130,10 @@ def test_a_trade_off_is_a_table_and_a_picture(record, drawn):
     assert "Trade-off  settling time against control peak; everything else is met" in text
     assert "              0.2               20  PI" in text
     assert text.split("Trade-off")[1].split("Structures not used")[0].count("◆") == 4
+
+
+def test_where_no_single_limit_does_it_that_is_said(record, drawn):
+    record = record | {"verdict": "not met", "prices": []}
+    assert "What it would take\n  No single limit was found that, moved alone," in drawn(page(record, 80))
+    stopped = record | {"search": record["search"] | {"interrupted": True}}
+    assert "What it would take" not in drawn(page(stopped, 80))

@@ -78,7 +78,7 @@ def test_each_advice_has_its_words(record, drawn):
     for advice, words in (
         ("keep", "KEEP  The adopted PI meets everything on the revised plant, untouched."),
         ("restructure", "RESTRUCTURE  The adopted PI cannot do it with other values; another structure"),
-        ("relax", "RELAX  The adopted PI and nothing else that was searched meets the sheet."),
+        ("relax", "RELAX  The adopted PI does not meet the sheet, and nothing else that was"),
     ):
         revised["revision"]["advice"] = advice
         assert words in drawn(revision(revised, 80))

@@ -170,6 +170,8 @@ def test_a_sheet_that_cannot_be_met_is_priced():
         assert again.meets_all, p
         assert p.cost == pytest.approx(abs(p.needed - p.limit) / p.limit)
     assert not any(c.meets_all for c in out.candidates)
+    # the setting behind the cheapest price misses one limit alone: the nearest is at least as near
+    assert out.candidates[0].worst_slack >= -out.prices[0].cost
     how = {s.structure: s for s in out.scans}
     assert how["P"].exhaustive == "exact"
     for name in ("PI", "PD"):
