@@ -37,6 +37,7 @@ from synth.loop.frequency.samples import (
     fall_brackets,
     humps,
     phase_brackets,
+    phase_turns,
     sample,
     sample_shared,
 )
@@ -44,6 +45,7 @@ from synth.loop.frequency.samples import (
 _LIGHT = 0.3  # damping below which a closed-loop pole is a resonance
 _BLOCK = 200_000  # nodes, times loops, looked at in one go
 _FARTHEST = 20_000.0  # rad: where the search for ever smaller ripples ends
+_TOUCH = 1e-13  # arg(-L) that rounding cannot tell from zero
 _SPAN = 20  # octaves of x, times three, over which the bound of |C S| is followed upwards
 
 
@@ -179,6 +181,8 @@ class _Findings:
         if PHASE in self.kinds:
             row, low, high, negative = phase_brackets(s)
             self._refine(PHASE, rows[row], low, high, negative)
+            row, low, high, negative = phase_turns(s)
+            self._phase_turning(rows[row], low, high, negative)
         if FALL in self.kinds:
             self.read_falls(s, rows)
 
@@ -199,6 +203,23 @@ class _Findings:
         (row, a, b, negative), _ = fall_brackets(close, self.level[rows[column]])
         self._refine(FALL, rows[column][row], a, b, negative)
 
+    def _phase_turning(self, row: IntArray, low: FloatArray, high: FloatArray, negative: BoolArray) -> None:
+        """The two crossings of the negative axis either side of a point where arg(-L) turns back, if it does
+        so beyond the axis; where rounding does not tell, the point itself counts as one.
+        """
+        if not row.size:
+            return
+        u, turns = newton(_Turning(self.response, row), np.log(low), np.log(high), negative)
+        row, low, high, negative, w = row[turns], low[turns], high[turns], negative[turns], np.exp(u[turns])
+        loop = loop_at(self.response, row, w)
+        sine = loop.imag / np.abs(loop)
+        beyond = ((sine < 0.0) != negative) & (loop.real < 0.0)
+        two = beyond & (low < w) & (w < high)
+        low, high, middle, before = low[two], high[two], w[two], negative[two]
+        self._refine(PHASE, row[two], low, middle, before)
+        self._refine(PHASE, row[two], middle, high, ~before)
+        self._take(PHASE, np.flatnonzero((np.abs(sine) <= _TOUCH) & (loop.real < 0.0)), row, w, negative)
+
     def _refine(
         self, kind: int, row: IntArray, low: FloatArray, high: FloatArray, negative: BoolArray
     ) -> None:
@@ -208,7 +229,13 @@ class _Findings:
         with np.errstate(divide="ignore"):
             bottom = np.maximum(np.log(low), np.log(high) - 50.0)
         u, holds = newton(equation, bottom, np.log(high), negative)
-        row, w, down = row[holds], np.exp(u[holds]), negative[holds]
+        self._take(kind, np.flatnonzero(holds), row, np.exp(u), negative)
+
+    def _take(self, kind: int, index: IntArray, row: IntArray, w: FloatArray, down: BoolArray) -> None:
+        """Note the crossings named by `index`."""
+        if not index.size:
+            return
+        row, w, down = row[index], w[index], down[index]
         kinds = np.full(len(row), kind, dtype=np.intp)
         found = Crossings(kinds, row, w, down, loop_at(self.response, row, w))
         self.found.append(found)
@@ -259,6 +286,26 @@ class _Delayed:
         with np.errstate(divide="ignore"):
             excess = np.log(size[0] / size[1]) - self.offset
         return excess, 2.0 * (rate[0] - rate[1]), excess
+
+
+class _Turning:
+    """The slope of arg L in ln ω, zero where the phase turns back."""
+
+    def __init__(self, response: Response, row: IntArray) -> None:
+        self.columns = np.stack((response.columns(N, row, 2), response.columns(D, row, 2)), axis=3)
+        self.delay = response.dead_time[row]
+
+    def keep(self, index: IntArray) -> None:
+        self.columns, self.delay = self.columns[..., index], self.delay[index]
+
+    def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+        w = np.exp(u)
+        re, im = evaluate(self.columns, w)
+        size, rate, turn = log_rates(re, im)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            bend = (im[2] * re[0] - re[2] * im[0]) / size - 2.0 * rate * turn
+        slope = turn[0] - turn[1] - w * self.delay
+        return slope, bend[0] - bend[1] - w * self.delay, -slope
 
 
 class _DelayedCurve:

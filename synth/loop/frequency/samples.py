@@ -13,6 +13,8 @@ from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.frequency.response import CONTROL, D, N, Response
 from synth.loop.polynomials import in_strips
 
+_STEEP = 2.0  # tangent of arg(-L) from which on no node is near the negative axis
+_TANGENT = 0.02  # how near to it the parabola must come
 _NEAR = 4.0  # square of how far below the best a hump is still climbed
 
 
@@ -111,6 +113,23 @@ def phase_brackets(s: Samples) -> Brackets:
     left = s.real < 0.0
     crossing = (negative[1:] != negative[:-1]) & (left[1:] | left[:-1])
     return _between(np.nonzero(crossing), s.w, negative)
+
+
+def phase_turns(s: Samples) -> Brackets:
+    """Where arg(-L) turns back near zero and may cross it twice between the nodes: (row, ω before, ω after,
+    negative before).
+
+    A node where |arg(-L)| is smallest among three of one sign and beside which the parabola of its tangent
+    comes near zero, with room for four times the dip that equal steps would give.
+    """
+    negative = s.imaginary < 0.0
+    with np.errstate(divide="ignore", invalid="ignore"):
+        f = np.where(s.real < 0.0, np.minimum(np.abs(s.imaginary / s.real), _STEEP), _STEEP)
+    low, middle, high = f[:-2], f[1:-1], f[2:]
+    turn = (middle <= low) & (middle <= high) & (middle - 0.5 * (low + high - 2.0 * middle) < _TANGENT)
+    turn &= (negative[:-2] == negative[1:-1]) & (negative[2:] == negative[1:-1]) & (middle < _STEEP)
+    node, row = np.nonzero(turn)
+    return row, s.w[node, row], s.w[node + 2, row], negative[node, row]
 
 
 def fall_brackets(s: Samples, level: FloatArray) -> tuple[Brackets, tuple[IntArray, FloatArray]]:

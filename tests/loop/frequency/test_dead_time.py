@@ -184,3 +184,49 @@ def test_a_resonance_hundreds_of_turns_out_is_found(measure):
     slow = 1j * np.linspace(1e-4, 1.0, 2_000_001)
     far = np.max(1 / np.abs(1 + 0.005 / np.polyval(den, slow) * np.exp(-300 * slow)))
     assert m["sensitivity_peak"] == pytest.approx(max(near, far), rel=1e-6)
+
+
+COMPENSATOR = ([8.42424026598e-10, 1.54621968e-05, 0.2949], [1.3999942e-10, 4.961e-05, 0.0])
+
+
+def converter(capacitor, load=2.0):
+    """A step-down converter, duty ratio to voltage: (numerator, denominator)."""
+    inductor, resistance = 33e-6, 25e-3
+    middle = inductor / load + resistance * capacitor
+    return [24.0], [inductor * capacitor, middle, 1.0 + resistance / load]
+
+
+def converter_loop(plant, w):
+    s = 1j * w
+    ratio = np.polyval(plant[0], s) / np.polyval(plant[1], s) * np.exp(-2.5e-6 * s)
+    return ratio * np.polyval(COMPENSATOR[0], s) / np.polyval(COMPENSATOR[1], s)
+
+
+def test_a_close_pair_of_phase_crossings_limits_the_downward_margin(measure):
+    # L crosses the negative axis at 15071 and 15438 rad/s; between them its phase is a thousandth of a degree
+    # beyond it
+    plant = converter(216e-6)
+    found = measure(plant, COMPENSATOR, 2.5e-6)["gain_margin_down"]
+    w = np.linspace(14000.0, 16500.0, 25001)
+    crossed = np.flatnonzero(np.diff(np.sign(converter_loop(plant, w).imag)))
+    assert len(crossed) == 2
+    at = bisect(lambda x: converter_loop(plant, x).imag, w[crossed[1]], w[crossed[1] + 1])
+    assert found == pytest.approx(20.0 * np.log10(abs(converter_loop(plant, at))), rel=1e-6)
+    assert found == pytest.approx(20.42, abs=0.01)
+
+
+def test_a_phase_that_turns_back_just_beyond_the_negative_axis_is_told_from_one_just_short_of_it(measure):
+    w = np.linspace(8e3, 3e4, 400_001)
+    pairs = 0
+    for capacitor in np.linspace(214e-6, 222e-6, 33):
+        plant = converter(capacitor)
+        imaginary = converter_loop(plant, w).imag
+        found = measure(plant, COMPENSATOR, 2.5e-6, ("gain_margin_down",))["gain_margin_down"]
+        crossed = np.flatnonzero(np.diff(np.sign(imaginary)))
+        if not len(crossed):
+            assert found == np.inf
+            continue
+        pairs += 1
+        size = np.abs(converter_loop(plant, w[crossed])).min()
+        assert found == pytest.approx(20.0 * np.log10(size), abs=1e-3)
+    assert 0 < pairs < 33
