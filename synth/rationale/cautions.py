@@ -131,7 +131,7 @@ def _effort(scene: Scene) -> list[str]:
     if "control_peak" not in bounded and any(_right_half(row) for row in scene.outcome.plants.denominator):
         text += " The sheet sets no control_peak, and an unstable plant is lost once the actuator saturates."
     elif not bounded & set(EFFORT):
-        text += " The sheet bounds neither control_peak nor noise_gain: the search spends both freely."
+        text += " The sheet bounds neither control_peak nor noise_gain."
     return [text]
 
 

@@ -36,6 +36,7 @@ def _compensator(view: View, candidate: Candidate, width: int) -> list[Text]:
     lines = [heading(name, aside)]
     if candidate["parameters"]:
         lines.append(items("  ", tuned(candidate), width))
+    lines.extend(hanging("  ", remark, width, style="warn") for remark in candidate.get("remarks", []))
     lines.append(Text())
     lines.extend(Text("  " + line) for line in fraction(candidate["compensator"]))
     lines.append(Text())

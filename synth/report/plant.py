@@ -52,9 +52,7 @@ def _plant(check: Check, width: int) -> list[Text]:
     nominal = part["cases"][0]
     if nominal["dead_time"]:
         lines.append(Text(f"  dead time  {quantity(nominal['dead_time'], 's')}"))
-    gain = _steady(nominal["numerator"], nominal["denominator"])
-    if math.isfinite(gain):
-        lines.append(Text(f"  gain at zero frequency  {figure(gain)}"))
+    lines.append(Text(_low_frequency(nominal["numerator"], nominal["denominator"])))
     valid = spec.get("valid_to")
     if valid is not None:
         lines.append(Text(f"  valid to  {figure(valid)} rad/s ({figure(valid / (2.0 * math.pi))} Hz)"))
@@ -69,8 +67,21 @@ def _root(re: float, im: float) -> str:
     return f"{figure(re)} ± {figure(im)}j ({figure(size)} rad/s, damping ratio {figure(-re / size, 3)})"
 
 
-def _steady(numerator: list[float], denominator: list[float]) -> float:
-    return numerator[-1] / denominator[-1] if denominator[-1] else math.inf
+def _low_frequency(numerator: list[float], denominator: list[float]) -> str:
+    """The gain at zero frequency, or what is left of P(s) there where it integrates or differentiates."""
+    top, zeros = _last(numerator)
+    bottom, poles = _last(denominator)
+    gain, power = figure(top / bottom), poles - zeros
+    if power == 0:
+        return f"  gain at zero frequency  {gain}"
+    s = "s" if abs(power) == 1 else "s²" if abs(power) == 2 else f"s^{abs(power)}"
+    return f"  at low frequency  {gain}/{s}" if power > 0 else f"  at low frequency  {gain} {s}"
+
+
+def _last(polynomial: list[float]) -> tuple[float, int]:
+    """The last coefficient that is not 0, and how many zeros follow it."""
+    at = max(i for i, value in enumerate(polynomial) if value != 0.0)
+    return polynomial[at], len(polynomial) - 1 - at
 
 
 def _parameters(check: Check) -> list[Text]:

@@ -36,7 +36,7 @@ def verdict(record: Record, width: int) -> list[Text]:
     if record["search"]["interrupted"]:
         lines.append(Text("Interrupted: the best found so far, not the end of the search.", style="warn"))
     if record["cautions"]:
-        lines.append(heading("Cautions"))
+        lines.append(heading("Cautions", "with candidate 1" if len(record["candidates"]) > 1 else ""))
         lines.extend(hanging("  - ", caution, width) for caution in record["cautions"])
     return lines
 

@@ -33,3 +33,8 @@ def test_several_faults_and_what_is_not_known_is_left_out(drawn):
 
 def test_a_key_in_brackets_is_no_markup(drawn):
     assert "  key      [controller].[red]\n" in drawn(faults([Fault("x", key="[controller].[red]")], 80))
+
+
+def test_a_caret_keeps_its_place_under_the_text(drawn):
+    fault = Fault("`*` is missing between `2` and `s`", file="a.toml", line=2, given="2s/(s+1)\n ^")
+    assert "  given    2s/(s+1)\n            ^\n" in drawn(faults([fault], 80))
