@@ -23,7 +23,8 @@ from synth.loop.poles.delayed import delayed_poles
 from synth.loop.poles.share import spaced
 from synth.loop.poles.stage import REACH, least_damping, needs_counting
 from synth.loop.quantities import Measure
-from synth.loop.time.stage import TimeStage, time_stage
+from synth.loop.time.result import TimeStage
+from synth.loop.time.stage import time_stage
 
 ORDER = 4
 """Degree of R. On random loops (tests/loop/test_stand_in.py) the median error of every quantity is below 1e-4

@@ -6,7 +6,6 @@ polynomials, not from a sweep: on the axis D/N e^(sθ) must be real.
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 from functools import partial
 
@@ -14,6 +13,8 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops, product
+from synth.loop.poles.gain_intervals import Interval, intervals_between, without_rounding
+from synth.loop.poles.gain_line_delayed import delayed_intervals
 from synth.loop.poles.roots import closed_roots, routh_stable
 
 # Roots this near to the real axis, relative to their size, are taken as real: a double root splits by about
@@ -32,17 +33,6 @@ class Crossing:
     gain: float
 
 
-@dataclass(frozen=True, slots=True)
-class Interval:
-    """Open interval of loop gains; ends may be infinite."""
-
-    low: float
-    high: float
-
-    def __contains__(self, gain: float) -> bool:
-        return self.low < gain < self.high
-
-
 def stable_gain_intervals(loops: Loops) -> list[tuple[Interval, ...]]:
     """For each loop, all the factors k on its gain for which it is stable, as disjoint intervals in order.
 
@@ -51,8 +41,6 @@ def stable_gain_intervals(loops: Loops) -> list[tuple[Interval, ...]]:
     within it.
     """
     if len(loops) and loops.dead_time[0] > 0.0:
-        from synth.loop.poles.gain_line_delayed import delayed_intervals
-
         return delayed_intervals(loops)
     roots = closed_roots(_axis_polynomials(loops.numerator, loops.denominator))
     out = []
@@ -75,32 +63,6 @@ def axis_crossings(numerator: FloatArray, denominator: FloatArray) -> tuple[Cros
     return _crossings(num, den, roots)
 
 
-def intervals_between(
-    gains: FloatArray, stable_at: Callable[[FloatArray], BoolArray]
-) -> tuple[Interval, ...]:
-    """Stable intervals of the gain line, given all gains at which stability can change.
-
-    stable_at : function of an array of gains (G,) -> (G,) bool.
-    """
-    edges = np.unique(gains)
-    if edges.size == 0:
-        return (Interval(-np.inf, np.inf),) if stable_at(np.zeros(1))[0] else ()
-    ends = np.concatenate([[-np.inf], edges, [np.inf]])
-    inner = 0.5 * (edges[1:] + edges[:-1])
-    beyond = 1.0 + np.abs(edges[[0, -1]])
-    probes = np.concatenate([[edges[0] - beyond[0]], inner, [edges[-1] + beyond[1]]])
-    verdict = stable_at(probes)
-    joined = stable_at(edges)  # a gain listed for a touch that rounding made up does not part two intervals
-    out: list[Interval] = []
-    for k in np.flatnonzero(verdict):
-        low, high = float(ends[k]), float(ends[k + 1])
-        if out and out[-1].high == low and joined[k - 1]:
-            out[-1] = Interval(out[-1].low, high)
-        else:
-            out.append(Interval(low, high))
-    return tuple(out)
-
-
 def _stable_at(numerator: FloatArray, denominator: FloatArray, gains: FloatArray) -> BoolArray:
     closed = denominator + gains[:, None] * numerator
     verdict: BoolArray = routh_stable(closed) & (closed[:, 0] * denominator[0] > 0.0)
@@ -114,12 +76,6 @@ def _axis_polynomials(numerator: FloatArray, denominator: FloatArray) -> FloatAr
     plus, minus = product(odd_d, even_n), product(even_d, odd_n)
     size = product(np.abs(odd_d), np.abs(even_n)) + product(np.abs(even_d), np.abs(odd_n))
     return without_rounding(plus - minus, size)
-
-
-def without_rounding(polynomials: FloatArray, size: FloatArray) -> FloatArray:
-    """Coefficients that are no more than rounding of what cancelled in them, `size`, are 0."""
-    out: FloatArray = np.where(np.abs(polynomials) <= 1e-15 * size, 0.0, polynomials)
-    return out
 
 
 def _halves(polynomials: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -15,7 +15,7 @@ import numpy as np
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops, product
 from synth.loop.poles.encirclement import delayed_stable, squared_on_axis
-from synth.loop.poles.gain_line import Interval, intervals_between, without_rounding
+from synth.loop.poles.gain_intervals import Interval, intervals_between, without_rounding
 from synth.loop.poles.roots import closed_roots
 
 # Steps of the search along the axis: no root turns by more than this many degrees, the dead time by this

@@ -15,7 +15,8 @@ import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray
 from synth.loop.closed_loop import product
-from synth.loop.poles.gain_line import NEARLY_REAL, Crossing, axis_crossings, without_rounding
+from synth.loop.poles.gain_intervals import without_rounding
+from synth.loop.poles.gain_line import NEARLY_REAL, Crossing, axis_crossings
 from synth.loop.poles.roots import closed_roots
 from synth.loop.poles.tracing import traced
 

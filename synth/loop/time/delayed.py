@@ -17,7 +17,7 @@ from synth.loop.time import last_mode
 from synth.loop.time.collocation import WHOLE, jet, primitive_coefficients
 from synth.loop.time.panels import Outline, Trace
 from synth.loop.time.responses import LONG, Responses, responses
-from synth.loop.time.stage import TimeStage
+from synth.loop.time.result import TimeStage
 from synth.loop.time.steps import ladder, march, resolution
 from synth.loop.time.true_modes import true_modes
 

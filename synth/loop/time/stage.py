@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
@@ -13,6 +11,7 @@ from synth.loop.time.answers import AREA_ERROR, answer
 from synth.loop.time.clusters import ClusterModes, cluster_modes
 from synth.loop.time.questions import Answers, Area, Passage, Supremum
 from synth.loop.time.residues import CROWDED, crowding, limits, step_modes
+from synth.loop.time.result import TimeStage
 from synth.loop.time.signals import Signals
 
 REACHES = {
@@ -31,14 +30,6 @@ REACHES = {
 
 LOST = 3e-8
 """The modes must add up to the known value at 0+ to this part of the quantity; else they have lost digits."""
-
-
-@dataclass
-class TimeStage:
-    """values: scaled, (M,) a measure; approximate: (M,) True where the error bound was not reached."""
-
-    values: dict[Measure, FloatArray]
-    approximate: dict[Measure, BoolArray]
 
 
 def time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...]) -> TimeStage:

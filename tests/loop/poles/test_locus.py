@@ -6,7 +6,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from synth.loop.closed_loop import Rational, close
-from synth.loop.poles.gain_line import Interval, axis_crossings, stable_gain_intervals
+from synth.loop.poles.gain_intervals import Interval
+from synth.loop.poles.gain_line import axis_crossings, stable_gain_intervals
 from synth.loop.poles.locus import (
     asymptotes,
     branches_of,
