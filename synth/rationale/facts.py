@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 
+from synth.rationale.practice import poor_reach
 from synth.rationale.scene import Scene
 from synth.search.outcome import Candidate, Scan
 from synth.search.ranking import COMPLEXITY
@@ -125,7 +126,7 @@ def fragility(scene: Scene) -> Fact | None:
 
 
 def simpler(scene: Scene) -> Fact | None:
-    """How near the richest of the structures inside this one comes."""
+    """How near the structures inside this one come: the nearest of them."""
     own = REGISTRY.get(scene.candidate.structure)
     if own is None:  # a compensator of no structure that is known here
         return None
@@ -133,8 +134,8 @@ def simpler(scene: Scene) -> Fact | None:
     inside = [scans[name] for name in own.simpler if name in scans]
     if not inside:
         return None
-    # the richest first; of equally rich ones the one that comes nearest
-    best = max(inside, key=lambda s: (len(REGISTRY[s.structure].parameters), reached(scene, s)))
+    # the one that comes nearest; of equally near ones the richest
+    best = max(inside, key=lambda s: (reached(scene, s), len(REGISTRY[s.structure].parameters)))
     closest = closest_of(scene, best)
     listed = any(c.structure == best.structure for c in scene.outcome.candidates)
     data: dict[str, Any] = {
@@ -143,6 +144,7 @@ def simpler(scene: Scene) -> Fact | None:
         "scan": best.exhaustive,
         "stabilises": best.best_slack >= 0.0 or listed or closest is not None,
     }
+    data |= _little(scene, best, data["slack"])
     if closest is not None and closest.binding is not None:
         number, bound = scene.bound(closest.binding[0])
         k = scene.outcome.case_names.index(closest.binding[1])
@@ -179,6 +181,16 @@ def _scored(scene: Scene) -> list[Candidate]:
     return [*scene.outcome.candidates, *closest]
 
 
+def _little(scene: Scene, scan: Scan, slack: float) -> dict[str, Any]:
+    """The final value behind a structure's slack, where it is won by a loop that hardly follows."""
+    for c in _scored(scene):
+        if scan.structure in (c.structure, *c.also) and abs(c.worst_slack - slack) < 0.01:
+            other = Scene(scene.spec, scene.outcome, c)
+            case = poor_reach(other)
+            return {} if case is None else {"final_value": float(other.column("final_value")[case])}
+    return {}
+
+
 def richer(scene: Scene) -> Fact | None:
     """What the best structure with more tuned values would buy."""
     own = REGISTRY.get(scene.candidate.structure)
@@ -200,6 +212,7 @@ def richer(scene: Scene) -> Fact | None:
             "parameters": len(REGISTRY[best.structure].parameters),
             "own_parameters": len(own.parameters),
             "settled": best.settled,
+            **_little(scene, best, slack),
         },
     )
 

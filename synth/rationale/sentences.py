@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from typing import Any
 
 from synth.rationale import facts
 from synth.rationale.facts import Fact
+from synth.rationale.practice import reach_words
 from synth.rationale.scene import Scene
 from synth.wording.figures import count, figure, percent, quantity
 from synth.wording.names import limit_words, name_of, parameter_name
@@ -129,7 +131,7 @@ def _simpler(fact: Fact, scene: Scene) -> str:
     how = {"exact": "its whole gain line", "dense": "a dense scan", "search": "a search"}[d["scan"]]
     who = f"A {d['structure']}, which is simpler,"
     if d["slack"] >= 0.0:
-        return f"{who} meets everything too, with a slack of {percent(d['slack'])}."
+        return f"{who} meets everything too, with a slack of {percent(d['slack'])}{_but(d)}."
     if not d["stabilises"]:
         return f"{who} was not found to stabilise every case ({how})."
     if "requirement" not in d:
@@ -145,6 +147,14 @@ def _simpler(fact: Fact, scene: Scene) -> str:
     )
 
 
+def _but(data: dict[str, Any]) -> str:
+    """A slack that is won by hardly following the reference."""
+    if "final_value" not in data:
+        return ""
+    final = data["final_value"]
+    return ", but drives backwards" if final < 0.0 else f", but {reach_words(final)}"
+
+
 def _richer(fact: Fact, scene: Scene) -> str:
     d = fact.data
     more = d["parameters"] - d["own_parameters"]
@@ -152,13 +162,14 @@ def _richer(fact: Fact, scene: Scene) -> str:
     if not d["gain"] > 1e-3:
         far = "" if d["settled"] else ", as far as it was searched"
         return (
-            f"More buys nothing: with {extra} a {d['structure']} has a slack of {percent(d['slack'])}{far}."
+            f"More buys nothing: with {extra} a {d['structure']} has a slack of {percent(d['slack'])}{far}"
+            f"{_but(d)}."
         )
     if math.isinf(d["gain"]):
         return f"With {extra} a {d['structure']} has a slack of {percent(d['slack'])}."
     return (
         f"With {extra} a {d['structure']} would have a slack of {percent(d['slack'])}, "
-        f"{percent(d['gain'])} on top."
+        f"{percent(d['gain'])} on top{_but(d)}."
     )
 
 

@@ -4,6 +4,7 @@ import pytest
 
 from synth.jobs.options import Options
 from synth.jobs.score import score
+from synth.rationale.sentences import _but
 
 SHEET = """\
 [plant]
@@ -56,3 +57,9 @@ def test_a_loop_that_settles_above_the_reference_is_not_said_to_reach_only_208_p
 def test_a_loop_that_drives_backwards(scored):
     record = scored("(1 - s)/(s + 1)", "-0.5")  # T(0) = -0.5/0.5
     assert record["candidates"][0]["remarks"] == ["drives backwards: y ends at −1 of the reference"]
+
+
+def test_a_slack_won_by_hardly_following_is_not_praised():
+    assert _but({"final_value": 0.384}) == ", but reaches only 38.4 % of the reference"
+    assert _but({"final_value": -1e-6}) == ", but drives backwards"
+    assert _but({"slack": 0.3}) == ""
