@@ -21,7 +21,7 @@ from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops, product
 from synth.loop.poles.delayed import delayed_poles
 from synth.loop.poles.share import spaced
-from synth.loop.poles.stage import REACH, least_damping, needs_counting
+from synth.loop.poles.stage import REACH, least_damping, needs_counting, with_far_poles
 from synth.loop.quantities import Measure
 from synth.loop.time.result import TimeStage
 from synth.loop.time.stage import time_stage
@@ -118,7 +118,8 @@ def damping(
             true = delayed_poles(loops.rows(far), reach[far])
             with np.errstate(invalid="ignore"):
                 near = np.abs(true) <= reach[far, None]
-            out[measure][far] = least_damping(loops.rows(far), true, near)
+            least = least_damping(loops.rows(far), true, near)
+            out[measure][far] = with_far_poles(loops.rows(far), least, reach[far])
     return out
 
 

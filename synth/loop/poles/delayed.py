@@ -29,7 +29,7 @@ __all__ = ["characteristic", "delayed_poles", "delayed_stable"]
 # Radius, in units of 1/θ, within which every root is always sought; it holds the first chain pair.
 NEAREST = 7.0
 # Radius, in units of 1/θ, beyond which no roots are returned: the chain has long settled on its asymptote
-# there.
+# there, and its damping is read from `far`.
 FARTHEST = 400.0
 # Order of the rational stand-in of the delay whose roots are the near seeds.
 STAND_IN = 3
@@ -47,7 +47,7 @@ def delayed_poles(loops: Loops, reach: FloatArray, open_poles: ComplexArray | No
     Parameters
     ----------
     loops : dead_time (M,) > 0, scaled.
-    reach : (M,) scaled 1/time; 0 for the nearest ones alone. Beyond 400/θ it is taken as 400/θ.
+    reach : (M,) scaled 1/time; 0 for the nearest ones alone. Beyond 400/θ it is taken as 400/θ (see `far`).
     open_poles : (M, n) roots of D, where they are known already.
 
     Returns

@@ -8,8 +8,9 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.poles.delayed import NEAREST, delayed_poles
+from synth.loop.poles.delayed import FARTHEST, NEAREST, delayed_poles
 from synth.loop.poles.encirclement import delayed_stable
+from synth.loop.poles.far import far_damping
 from synth.loop.poles.roots import closed_roots, routh_stable
 from synth.loop.poles.share import Spacing, damping_of, share_in_step, spaced
 from synth.loop.polynomials import coefficient
@@ -70,7 +71,9 @@ class PoleStage:
         out: dict[Measure, FloatArray] = {}
         for measure in wanted:
             if measure.quantity == "damping_ratio":
-                out[measure] = least_damping(loops, poles, counted, spacing)
+                near = least_damping(loops, poles, counted, spacing)
+                reach = np.where(_all_count(loops, highest_fall), np.inf, REACH * highest_fall)
+                out[measure] = with_far_poles(loops, near, reach)
             else:
                 out[measure] = _natural_frequency(poles, share, counted, spacing)
         return out
@@ -163,12 +166,35 @@ def _spacing_and_share(loops: Loops, poles: ComplexArray) -> tuple[Spacing, Floa
 
 def _counted(loops: Loops, poles: ComplexArray, share: FloatArray, highest_fall: FloatArray) -> BoolArray:
     """Whether each pole counts, (M, q)."""
-    everything = ~np.isfinite(highest_fall) | (coefficient(loops.numerator, 0) == 0.0)
+    everything = _all_count(loops, highest_fall)
     with np.errstate(invalid="ignore"):
         counted = everything[:, None] | (np.abs(poles) <= REACH * highest_fall[:, None])
         if not _delayed(loops):
             counted |= share >= LEAST_SHARE
     out: BoolArray = counted & ~np.isnan(poles)
+    return out
+
+
+def _all_count(loops: Loops, highest_fall: FloatArray) -> BoolArray:
+    """Where every pole counts: T(0) = 0, or abs(T) never falls through, or for ever again. (M,)."""
+    out: BoolArray = ~np.isfinite(highest_fall) | (coefficient(loops.numerator, 0) == 0.0)
+    return out
+
+
+def with_far_poles(loops: Loops, near: FloatArray, reach: FloatArray) -> FloatArray:
+    """Least damping ratio `near` of the listed poles taken on to all with abs(p) <= reach. (M,) each.
+
+    With dead time there are poles beyond those that `delayed_poles` lists; with an infinite reach the ratio
+    is 0, which theirs tends to.
+    """
+    if not _delayed(loops):
+        return near
+    further = reach > FARTHEST / loops.dead_time
+    if not further.any():
+        return near
+    at = np.flatnonzero(further)
+    out = near.copy()
+    out[at] = np.minimum(near[at], far_damping(loops.rows(at), FARTHEST / loops.dead_time[at], reach[at]))
     return out
 
 
@@ -265,7 +291,8 @@ def _early_damping(loops: Loops, stable: BoolArray, poles: ComplexArray, measure
     if _delayed(loops):
         poles = _reaching(loops, poles, limit)
     with np.errstate(invalid="ignore"):
-        return least_damping(loops, poles, np.abs(poles) <= limit[:, None])
+        near = least_damping(loops, poles, np.abs(poles) <= limit[:, None])
+    return with_far_poles(loops, near, limit)
 
 
 def _natural_frequency(
