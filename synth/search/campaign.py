@@ -16,6 +16,7 @@ from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.quantities import Measure
 from synth.rules import starts
 from synth.search.archive import Rows, distinct, joined
+from synth.search.embed import embedded
 from synth.search.evolution import evolve
 from synth.search.gain_line import Intervals, refined, stable_gains
 from synth.search.objective import Objective
@@ -42,11 +43,21 @@ EFFORTS = {
     "thorough": Effort(600_000, 8, 192, 20, 400),
 }
 PICKS = 10
+LEAST_GENERATIONS = 4
+ROUGH_PACE = Pace(least=1e-3)  # where a stand-in leads: the last digits are not its own
+NARROW_ROUNDS = 4  # of a structure that misses by a hair where nothing meets: agreement is not enough there
+# By which a simpler structure has to stand higher before its points are tried in a larger one; the second
+# where a stand-in leads.
+LIFT, ROUGH_LIFT = 2e-4, 2e-3
+AGAIN_PACE = Pace(radius=0.15, iterations=10, halve=(3,))
+NESTED_PACE = Pace(radius=0.2, iterations=8, least=1e-3, halve=(2,), field=1)
+NESTED = 3  # of those points are polished
 EXACT_TOPS = 2
 MOST_CASE_TURNS = 12
-FAR = (
-    -0.5
-)  # a structure that stays short of this is not pursued beyond two rounds where another meets the sheet
+# Where another structure meets the sheet, one that stays short of the first is not pursued beyond two rounds,
+# and one that stays short of the second not beyond one.
+FAR, VERY_FAR = -0.5, -1.5
+FAR_CASE_TURNS = 3  # and its cases are looked at this often
 HOPELESS = -5.0  # worst search slack beyond which the outer layer is not sent
 
 
@@ -156,7 +167,8 @@ class Campaign:
             open_ = [
                 s.number
                 for s in self.standings
-                if not s.settled and (s.rounds < 2 or s.best > FAR or not met)
+                if (not s.settled and (not met or s.best > FAR or (s.rounds < 2 and s.best > VERY_FAR)))
+                or (not met and s.narrowly and s.rounds < NARROW_ROUNDS)
             ]
             if not open_ or self.halted() or self.objective.evaluations >= self.effort.evaluations:
                 break
@@ -166,6 +178,54 @@ class Campaign:
             self.examine(open_)
         self.enter("exploration")
         self._explore()
+        self.enter("nesting")
+        self.nest()
+
+    def nest(self) -> None:
+        """A structure that contains a simpler one comes out no worse: where the simpler one stands higher,
+        its best points are written in the parameters of the larger one and polished on.
+
+        Twice, since what a structure gains this way may lift one that contains it in turn.
+        """
+        for _ in range(2):
+            changed = self._lifted()
+            if not changed or self.halted():
+                break
+            self.examine(changed)
+
+    def _lifted(self) -> list[int]:
+        parts: list[Rows] = []
+        owners: list[int] = []
+        for large in self.standings:
+            if large.parameters == 1:
+                continue
+            lift = ROUGH_LIFT if self.objective.by_stand_in else LIFT
+            for small in self.standings:
+                if small.tops is None or small.best <= large.best + lift or small is large:
+                    continue
+                rows = embedded(
+                    self.objective, small.tops.take(np.arange(min(2, len(small.tops)))), large.number
+                )
+                if rows is None:
+                    continue
+                parts.append(rows)
+                owners.append(large.number)
+                active = self.objective.active
+                more = [c for c in active[small.number] if c not in active[large.number]]
+                if more:  # what the simpler one was judged on
+                    active[large.number] = (*active[large.number], *more)
+        if not parts:
+            return []
+        owners = sorted(set(owners))
+        before = {n: self.standings[n].best for n in owners}
+        rows = joined(parts)
+        guide = self.objective.score(rows).guide()
+        picks = [i[np.argsort(-guide[i], kind="stable")[:NESTED]] for i in _by_structure(rows)]
+        self.polish_in(rows.take(np.concatenate(picks)), NESTED_PACE)
+        changed = [n for n in owners if self.standings[n].best > before[n]]
+        for n in changed:
+            self.standings[n].judge()
+        return changed
 
     def _explore(self) -> None:
         """The outer layer, where the rounds left doubt: hard sheets, and always on a thorough budget."""
@@ -187,10 +247,12 @@ class Campaign:
         """
         if self.settings.budget == "thorough":
             return True
-        if standing.settled or standing.best <= HOPELESS:
+        nothing = all(s.best < 0.0 for s in self.standings)
+        if nothing and standing.narrowly:
+            return True
+        if standing.settled or standing.best <= (HOPELESS if nothing else FAR):
             return False
         several = len(self.objective.case_names) > 1
-        nothing = all(s.best < 0.0 for s in self.standings)
         return standing.parameters > 4 or several or nothing
 
     def round(self, numbers: list[int], seeds: Rows | None) -> None:
@@ -201,7 +263,9 @@ class Campaign:
         if seeds is not None and len(seeds):
             parts.append(seeds)
         rows = joined(parts)
-        scores = self.objective.score(rows, hasty=True)
+        # starts are told apart on one case, the last that was found to bind; the polish minds all that do
+        latest = [active[-1:] for active in self.objective.active]
+        scores = self.objective.score(rows, latest, hasty=True)
         guide = scores.guide()
         picks = []
         for n in numbers:
@@ -218,7 +282,7 @@ class Campaign:
             picks.append(index[distinct(rows.take(index), guide[index], PICKS)])
         later = [n for n in numbers if self.standings[n].rounds > 0]
         if picks:
-            self.polish_in(rows.take(np.concatenate(picks)), Pace())
+            self.polish_in(rows.take(np.concatenate(picks)), ROUGH_PACE if self.objective.delayed else Pace())
         if later and self.effort.generations and not self.halted():
             self._evolve(later, rows, guide)
         share = (self.objective.evaluations - before) // max(len(numbers), 1)
@@ -271,8 +335,10 @@ class Campaign:
         if not parts:
             return
         rng = np.random.default_rng([self.settings.seed, *[self.standings[n].rounds for n in numbers]])
+        dear = max(len(self.objective.active[n]) for n in numbers)  # each member is scored on that many cases
+        generations = max(self.effort.generations // dear, min(self.effort.generations, LEAST_GENERATIONS))
         members, score = evolve(
-            self.objective, joined(parts), generations=self.effort.generations, rng=rng, stop=self.halted
+            self.objective, joined(parts), generations=generations, rng=rng, stop=self.halted
         )
         picks = []
         for n in np.unique(members.structure):
@@ -287,8 +353,11 @@ class Campaign:
         the structure is polished on from its tops."""
         if len(self.objective.case_names) == 1:
             return
-        for _ in range(MOST_CASE_TURNS):
-            changed = self._violated(numbers)
+        for turn in range(MOST_CASE_TURNS):
+            met = any(s.best >= 0.0 for s in self.standings)
+            if met and turn >= FAR_CASE_TURNS:
+                numbers = [n for n in numbers if self.standings[n].best > FAR]
+            changed = self._violated(numbers) if numbers else []
             if not changed:
                 break
             self._restart(changed)
@@ -326,7 +395,7 @@ class Campaign:
                 parts.append(tops.take(np.arange(min(4, len(tops)))))
             standing = self.standings[n]
             standing.tops, standing.guides, standing.optima = None, np.zeros(0), []
-        self.polish_in(joined(parts), Pace(radius=0.15, halve=(3,)))
+        self.polish_in(joined(parts), AGAIN_PACE)
         for n in numbers:
             self.standings[n].judge()
 
@@ -335,3 +404,8 @@ class Campaign:
         found = [s for s in self.standings if s.tops is not None]
         rows = joined([self._top(s.number) for s in found])
         return np.array([s.number for s in found]), rows, np.array([s.best for s in found])
+
+
+def _by_structure(rows: Rows) -> list[IntArray]:
+    """Row numbers of each structure."""
+    return [np.flatnonzero(rows.structure == n) for n in np.unique(rows.structure)]

@@ -27,6 +27,7 @@ from synth.structures import Structure
 
 ABSENT = -12.0  # search slack of a quantity that a stable loop does not have; below any compressed slack
 REACH = 3.5 * float(np.log(10.0))  # of corners, beyond the slowest and the fastest mark
+SLOWER = 2.0 * float(np.log(10.0))  # and of an integral time beyond even that
 UNSTABLE = -20.0  # and of every requirement on a loop that is not stable, less a term in the abscissa
 
 
@@ -283,6 +284,8 @@ def _box(structure: Structure, task: Task, scales: Scales) -> tuple[FloatArray, 
     for j, parameter in enumerate(structure.parameters):
         if j > 0 and parameter.role == "time" and not np.isfinite(low[j]):
             low[j], high[j] = -top, -bottom
+            if parameter.key == "integral_time":  # so slow that a structure without it is contained
+                high[j] += SLOWER
         elif j > 0 and parameter.role == "frequency" and not np.isfinite(low[j]):
             low[j], high[j] = bottom, top
     return low, high

@@ -69,6 +69,7 @@ def propose(
         campaign.enter("dense scans")
         if dense_scans(campaign):
             campaign.examine(list(range(len(campaign.standings))))
+            campaign.nest()
             found, listed, wish_rows = _listed(campaign, wish_rows)
     examined = 0
     for _ in range(BOX_TURNS):

@@ -12,6 +12,7 @@ from synth.search.archive import Rows, distinct, joined
 AGREE = 2e-3  # optima this near to the best count as the same
 ENOUGH = 3  # agreeing optima that settle a structure ...
 ENOUGH_WIDE = 5  # ... and one of four or more parameters, before it is said that it cannot
+NARROW = 0.05  # of slack: a miss as small as this is doubted longer
 FINE = 1e-4  # an active-case optimum that loses less than this on the other cases stands
 
 
@@ -43,6 +44,11 @@ class Standing:
     def best(self) -> float:
         """Worst search slack of the best point; -inf before there is one."""
         return float(self.guides[0]) if self.guides.size else -np.inf
+
+    @property
+    def narrowly(self) -> bool:
+        """Whether it misses the sheet by so little that another basin may well meet it."""
+        return self.parameters > 1 and -NARROW < self.best < 0.0
 
     @property
     def agreeing(self) -> int:

@@ -1,8 +1,7 @@
 """The front of two quantities among candidates that meet the rest: a sweep of the polish.
 
 For levels of the first quantity between its two extremes the second is improved, every level and every
-structure in lockstep. A sweep was chosen over a multi-objective sampler by measurement
-(benchmarks/bench_front.py).
+structure in lockstep.
 """
 
 from __future__ import annotations

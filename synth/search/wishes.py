@@ -17,16 +17,22 @@ from synth.search.campaign import Campaign
 from synth.search.goals import Goals, benefit
 from synth.search.outcome import Aim, Task
 from synth.search.polish import Pace, Polished, polish
-from synth.search.standing import FINE
+from synth.search.standing import AGREE, FINE, Standing
+from synth.search.starts import sample
 
+TWINS = {"PI-lead": "PID", "lead": "PD"}  # the same functions over most of their range, under a simpler name
 EXTREMES = ("control_peak", "settling_time")
 MARGIN = 1e-6  # of slack kept beyond the reserve, so that the last digits of a polish cannot fall short of it
 CASE_TURNS = 8
 PENALTIES = (200.0, 2_000.0, 20_000.0)
-WISH_PACE = Pace(radius=0.2, iterations=20, least=1e-4, halve=(3, 6), field=2)
+WISH_PACE = Pace(radius=0.2, iterations=20, least=1e-4, halve=(3, 6), field=4)
 AGAIN_PACE = Pace(radius=0.05, iterations=20, least=1e-5, halve=(3,), field=1, second=True)
 EXTREME_PACE = Pace(radius=0.3, iterations=8, least=5e-3, halve=())
 EXTREME_AGAIN = Pace(radius=0.05, iterations=3, least=2e-3, halve=())
+FRESH = 192  # starts a structure drawn for the wish, and how many of them are polished
+FRESH_PICKS = 12
+FRESH_PENALTY = 2.0  # of a missing slack against an e-fold of the wish, when they are picked
+LAST_RADIUS = 0.01  # of the exact steps that follow a stand-in
 OTHERS = 3  # rows of the archive looked at for a second candidate of a structure
 OTHERS_APART = 0.25
 
@@ -59,6 +65,7 @@ def preferred(campaign: Campaign, earlier: Wished | None = None) -> Wished | Non
             continue
         parts.append(standing.tops.take(np.arange(min(3, len(standing.tops)))))
         parts.append(_from_archive(campaign, standing.number, aim))
+        parts.append(_fresh(campaign, standing, aim))
     if not parts:
         return None
     rows = joined(parts)
@@ -70,8 +77,13 @@ def preferred(campaign: Campaign, earlier: Wished | None = None) -> Wished | Non
 def extremes(campaign: Campaign) -> Wished | None:
     """From the best of every structure that meets the sheet: least control peak, fastest settling."""
     reserve = _reserve(campaign)
+    good_ones = [s for s in campaign.standings if s.tops is not None and s.best >= reserve]
+    best = {campaign.task.structures[s.number].name: s.best for s in good_ones}
     heads = [
-        s.tops.take(np.array([0])) for s in campaign.standings if s.tops is not None and s.best >= reserve
+        s.tops.take(np.array([0]))
+        for s in good_ones
+        if s.tops is not None
+        and best.get(TWINS.get(campaign.task.structures[s.number].name, ""), -np.inf) < s.best - AGREE
     ]
     if not heads:
         return None
@@ -134,14 +146,31 @@ def _on_all_cases(campaign: Campaign, rows: Rows) -> FloatArray:
 def _confirmed(
     campaign: Campaign, rows: Rows, goals: Goals, pace: Pace, again: Pace
 ) -> tuple[Polished, Goals]:
-    """Polish, roughly and then to the end; then, as long as a case that is not active is violated, make it
-    active and polish on."""
+    """Polish, roughly and then to the end, on every case that turns out to bind.
+
+    Where there is dead time the rational stand-in leads all the way there, and the exact quantities only have
+    the last steps to make.
+    """
     objective = campaign.objective
     with objective.approximating():
         first = polish(objective, rows, goals, pace=pace, stop=campaign.halted)
-    kept = np.flatnonzero(first.finished)
-    rows, goals = first.rows.take(kept), goals.take(kept)
-    done = _keeping(campaign, rows, goals, again)
+        kept = np.flatnonzero(first.finished)
+        rows, goals = first.rows.take(kept), goals.take(kept)
+        if objective.delayed:
+            near = _on_binding_cases(campaign, rows, goals, replace(again, second=False, least=1e-3))
+            kept = np.flatnonzero(near.finished)
+            rows, goals = near.rows.take(kept), goals.take(kept)
+            again = replace(again, radius=min(again.radius, LAST_RADIUS))
+            if len(objective.case_names) > 1:  # the digits of a table are asked for on one plant
+                again = replace(again, second=False, iterations=min(again.iterations, 8), least=5e-4)
+    return _on_binding_cases(campaign, rows, goals, again), goals
+
+
+def _on_binding_cases(campaign: Campaign, rows: Rows, goals: Goals, pace: Pace) -> Polished:
+    """Polish; then, as long as a case that is not active is violated, make it active and polish on what has
+    lost by it."""
+    objective = campaign.objective
+    done = _keeping(campaign, rows, goals, pace)
     for _ in range(CASE_TURNS):
         if len(objective.case_names) == 1 or campaign.halted():
             break
@@ -154,27 +183,59 @@ def _confirmed(
                 changed.add(s)
         if not changed:
             break
-        kept = np.flatnonzero(done.finished)
-        rows, goals = done.rows.take(kept), goals.take(kept)
-        done = _keeping(campaign, rows, goals, again)
-    return done, goals
+        index = np.flatnonzero(done.finished & np.isin(done.rows.structure, list(changed)))
+        done = _replaced(done, index, _keeping(campaign, done.rows.take(index), goals.take(index), pace))
+    return done
 
 
 def _keeping(campaign: Campaign, rows: Rows, goals: Goals, pace: Pace) -> Polished:
-    """Polish with a penalty that is raised until every row keeps its reserve, or nearly all there is was
-    tried."""
+    """Polish with a penalty that is raised, for the rows that are short of their reserve, until all keep it
+    or nearly all there is was tried."""
     reserve = np.array([aim.reserve for aim in goals.aims])[goals.aim] - MARGIN
-    done = None
+    done: Polished | None = None
+    index: IntArray = np.arange(len(rows))
     for penalty in PENALTIES:
-        done = polish(
-            campaign.objective, rows, replace(goals, penalty=penalty), pace=pace, stop=campaign.halted
-        )
-        if bool(np.all((done.worst >= reserve) | ~done.finished)) or campaign.halted():
+        there = replace(goals.take(index), penalty=penalty)
+        from_here = rows.take(index) if done is None else done.rows.take(index)
+        part = polish(campaign.objective, from_here, there, pace=pace, stop=campaign.halted)
+        done = part if done is None else _replaced(done, index, part)
+        index = np.flatnonzero((done.worst < reserve) & done.finished)
+        if index.size == 0 or campaign.objective.by_stand_in or campaign.halted():
             break
-        rows = done.rows
     if done is None:
         raise ValueError("there is no penalty to polish with")
     return done
+
+
+def _replaced(done: Polished, index: IntArray, part: Polished) -> Polished:
+    """The same with the rows named by `index` exchanged for those of `part`."""
+    x = done.rows.x.copy()
+    x[index] = part.rows.x
+    merit, worst, stable, finished = (
+        done.merit.copy(), done.worst.copy(), done.stable.copy(), done.finished.copy(),
+    )  # fmt: skip
+    merit[index], worst[index] = part.merit, part.worst
+    stable[index], finished[index] = part.stable, part.finished
+    return Polished(done.rows.at(x), merit, worst, stable, finished)
+
+
+def _fresh(campaign: Campaign, standing: Standing, aim: Aim) -> Rows:
+    """Starts drawn for the wish alone, the best by wish and missing slack together: the best slack may lie in
+    another basin than the best of the wish."""
+    if aim.measure is None:
+        raise ValueError("an aim at the worst slack needs no starts of its own")
+    objective = campaign.objective
+    drawn = sample(objective, standing.number, FRESH, campaign.settings.seed * 1013 + 7, standing.signs)
+    with objective.approximating():
+        scores = objective.score(drawn, hasty=True)
+    value = scores.values[:, :, objective.measures.index(aim.measure)]
+    gain = np.where(scores.case >= 0, benefit(aim.measure, aim.sense, value), np.inf).min(axis=1)
+    short = np.minimum(scores.guide() - aim.reserve, 0.0)
+    merit = np.where(scores.stable, gain + FRESH_PENALTY * short, -np.inf)
+    index: IntArray = np.flatnonzero(np.isfinite(merit))
+    if index.size == 0:
+        return drawn.take(index)
+    return drawn.take(index[distinct(drawn.take(index), merit[index], FRESH_PICKS)])
 
 
 def _from_archive(campaign: Campaign, number: int, aim: Aim, count: int = 3) -> Rows:
