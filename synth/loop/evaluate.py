@@ -76,6 +76,7 @@ class Evaluation:
         raise KeyError(measure)
 
 
+@np.errstate(over="ignore")  # what leaves the number range is inf or NaN, and what rests on it is absent
 def evaluate(
     plants: Rational,
     compensators: Rational,
@@ -251,7 +252,8 @@ def _fill_responses(out: Evaluation, rows: IntArray, loops: Loops, stage: PoleSt
             keep &= ~(found["sensitivity_peak"] > screen.most_peak)
         rows, loops, stage = _kept(rows, loops, stage, keep)
     if "time" in stages and rows.size:
-        response = time_stage(loops, stage.poles, wanted)
+        with np.errstate(invalid="ignore"):  # a response beyond the number range is absent
+            response = time_stage(loops, stage.poles, wanted)
         _write(out, rows, loops, response.values, response.approximate)
         out.reached[rows] = 2
 

@@ -5,6 +5,7 @@ Each function takes a scene and gives one fact, or None where there is nothing t
 
 from __future__ import annotations
 
+import cmath
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -34,9 +35,12 @@ def phase(scene: Scene) -> Fact | None:
         return None
     s = 1j * w
     plants = scene.outcome.plants
-    plant = complex(np.polyval(plants.numerator[0], s) / np.polyval(plants.denominator[0], s))
-    plant *= complex(np.exp(-s * float(plants.dead_time[0])))
-    c = complex(np.polyval(scene.candidate.numerator, s) / np.polyval(scene.candidate.denominator, s))
+    with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+        plant = complex(np.polyval(plants.numerator[0], s) / np.polyval(plants.denominator[0], s))
+        plant *= complex(np.exp(-s * float(plants.dead_time[0])))
+        c = complex(np.polyval(scene.candidate.numerator, s) / np.polyval(scene.candidate.denominator, s))
+    if not all(v != 0.0 and cmath.isfinite(v) for v in (plant, c)):  # beyond the number range: no phase
+        return None
     sign = low_frequency_sign(scene.candidate.numerator, scene.candidate.denominator)
     return Fact(
         "phase",

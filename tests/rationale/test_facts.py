@@ -3,6 +3,7 @@
 import cmath
 import math
 import re
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -11,6 +12,7 @@ from synth.jobs.options import Options
 from synth.jobs.propose import propose
 from synth.loop.closed_loop import Rational
 from synth.loop.evaluate import evaluate
+from synth.rationale.facts import phase
 from synth.spec import parse_spec
 from synth.structures import by_name
 from synth.wording.figures import figure, percent, quantity
@@ -167,3 +169,12 @@ def test_no_sentence_says_a_number_that_is_not_in_its_facts(record):
                 known |= {str(difference - sentence["facts"].get("own_parameters", 0))}
             for said in re.findall(r"\d+(?:\.\d+)?", sentence["text"]):
                 assert said in known, (said, sentence)
+
+
+def test_the_phase_is_left_out_where_coefficients_leave_the_number_range():
+    plants = Rational.of([1e250], [1e250, 1.0, 1.0])
+    candidate = SimpleNamespace(numerator=[1.0], denominator=[1.0])
+    scene = SimpleNamespace(
+        nominal=lambda quantity: 1e40, outcome=SimpleNamespace(plants=plants), candidate=candidate
+    )
+    assert phase(scene) is None  # and no warning, which would be an error here

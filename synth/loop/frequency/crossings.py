@@ -17,7 +17,7 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.frequency.isolation import Brackets, isolate
-from synth.loop.frequency.response import CLOSED, D, N, Response, cross, evaluate, log_rates
+from synth.loop.frequency.response import CLOSED, D, N, Response, cross, evaluate, log_rates, tamed
 
 GAIN, FALL, PHASE = 0, 1, 2
 _ITERATIONS = 70  # bisection alone closes any bracket in fewer
@@ -176,7 +176,7 @@ class _Rational:
         )
 
     def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-        re, im = evaluate(self.columns, np.exp(u))  # (2 derivatives, 2 polynomials, F)
+        re, im = tamed(*evaluate(self.columns, np.exp(u)))  # (2 derivatives, 2 polynomials, F)
         size, rate, turn = log_rates(re, im)
         with np.errstate(divide="ignore", invalid="ignore"):
             gain = np.log(size[0] / size[1]) - self.offset

@@ -31,7 +31,17 @@ from synth.loop.frequency.crossings import (
 from synth.loop.frequency.isolation import isolate
 from synth.loop.frequency.nodes import HIGH, SHARED, STEP, further_nodes, zone_nodes
 from synth.loop.frequency.peaks import CURVES, climb
-from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, evaluate, log_rates, polynomial
+from synth.loop.frequency.response import (
+    CLOSED,
+    CONTROL,
+    D,
+    N,
+    Response,
+    evaluate,
+    log_rates,
+    polynomial,
+    tamed,
+)
 from synth.loop.frequency.samples import (
     Samples,
     fall_brackets,
@@ -152,8 +162,8 @@ class _Findings:
     def _noise_bound(self, x: FloatArray, rows: IntArray) -> FloatArray:
         """|C|/(1 - |L|) at x (G, rows); 0 where |L| >= 1."""
         squares = self.response.squares
-        n2, d2, c2 = (polynomial(squares[:, p, rows], x) for p in (N, D, CONTROL))
         with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            n2, d2, c2 = (polynomial(squares[:, p, rows], x) for p in (N, D, CONTROL))
             rest = np.sqrt(d2) - np.sqrt(n2)
             bound: FloatArray = np.where(rest > 0.0, np.sqrt(c2) / rest, 0.0)
         return np.where(np.isfinite(bound), bound, 0.0)
@@ -270,7 +280,7 @@ class _Delayed:
 
     def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
         w = np.exp(u)
-        re, im = evaluate(self.columns, w)
+        re, im = tamed(*evaluate(self.columns, w))
         angle = w * self.delay
         if self.phase:
             _, _, turn = log_rates(re, im)
@@ -300,7 +310,7 @@ class _Turning:
 
     def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
         w = np.exp(u)
-        re, im = evaluate(self.columns, w)
+        re, im = tamed(*evaluate(self.columns, w))
         size, rate, turn = log_rates(re, im)
         with np.errstate(divide="ignore", invalid="ignore"):
             bend = (im[2] * re[0] - re[2] * im[0]) / size - 2.0 * rate * turn

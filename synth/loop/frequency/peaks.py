@@ -18,7 +18,7 @@ import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.frequency.isolation import isolate
-from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, evaluate, log_rates
+from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, evaluate, log_rates, tamed
 from synth.loop.polynomials import in_strips
 
 CURVES = {"sensitivity_peak": D, "complementary_peak": N, "noise_gain": CONTROL}
@@ -172,7 +172,7 @@ def climb(
         low, u, high = (np.log(x) for x in between)
     for _ in range(_STEPS):
         w = np.exp(u)
-        re, im = curve.at(w)
+        re, im = tamed(*curve.at(w))
         size, rate, turn = log_rates(re, im)
         with np.errstate(divide="ignore", invalid="ignore"):  # NaN where both are nothing, and no peak there
             value = np.sqrt(size[0] / size[1])

@@ -16,6 +16,7 @@ import numpy as np
 from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 
+_LARGE = 1e150  # values whose products with each other stay finite
 # places of the polynomials in the stack
 N, D, CLOSED, CONTROL = 0, 1, 2, 3
 
@@ -102,6 +103,19 @@ def evaluate(columns: FloatArray, w: FloatArray) -> tuple[FloatArray, FloatArray
         value *= x
         value += columns[k]
     return value[:, 0], value[:, 1] * w
+
+
+def tamed(re: FloatArray, im: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """The same values of several polynomials, (derivatives + 1, polynomials, F), over a power of two common
+    to each point where their squares would leave the number range; ratios and logarithmic rates do not feel
+    it.
+    """
+    if not re.size or max(re.max(), -re.min(), im.max(), -im.min()) < _LARGE:
+        return re, im
+    size = np.maximum(np.abs(re), np.abs(im)).max(axis=(0, 1))
+    _, exponent = np.frexp(size)
+    power = np.where(np.isfinite(size) & (size >= _LARGE), -exponent, 0)
+    return np.ldexp(re, power), np.ldexp(im, power)
 
 
 def log_rates(re: FloatArray, im: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from synth.loop.arrays import ComplexArray, FloatArray
+from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 from synth.loop.frequency.crossings import FALL, GAIN, PHASE, Crossings, crossings, fall_level, of_kind
 from synth.loop.frequency.delayed import delayed_quantities
@@ -18,6 +18,7 @@ PHASES = frozenset({"gain_margin", "gain_margin_up", "gain_margin_down"})
 KEYS = FALLS | GAINS | PHASES | frozenset(CURVES)
 
 
+@np.errstate(over="ignore")
 def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -> dict[str, FloatArray]:
     """Frequency quantities of stable loops.
 
@@ -32,14 +33,21 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
     Returns
     -------
     (M,) scaled values by name: frequencies in 1/time_scale, margins in deg and dB, delay_margin in
-    time_scale, noise_gain in 1/plant_gain. NaN is absent, inf is meant.
+    time_scale, noise_gain in 1/plant_gain. NaN is absent, inf is meant. Loops whose |N|², |D|² or θ^-n leaves
+    the number range have NaN throughout.
     """
     wanted = wanted & KEYS
     if not wanted:
         return {}
-    with np.errstate(over="ignore"):
-        response = response_of(loops)
+    response = response_of(loops)
+    readable = np.isfinite(response.squares).all(axis=(0, 1))
     delayed = bool((loops.dead_time > 0.0).any())
+    if delayed:  # coefficients are also read in powers of the angle ωθ
+        readable &= np.isfinite(loops.dead_time ** -(loops.order + 2.0))
+    if not readable.all():
+        some = np.flatnonzero(readable)
+        found_there = frequency_stage(loops.rows(some), poles[some], wanted) if some.size else {}
+        return {key: _spread(len(loops), some, found_there.get(key)) for key in wanted}
     kinds = tuple(k for k, keys in ((GAIN, GAINS), (FALL, FALLS), (PHASE, PHASES)) if wanted & keys)
     curves = tuple(k for k in CURVES if k in wanted)
     out: dict[str, FloatArray] = {}
@@ -65,3 +73,11 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
     if PHASE in kinds:
         out |= gain_margins(response, of_kind(found, PHASE))
     return {k: v for k, v in out.items() if k in wanted}
+
+
+def _spread(m: int, index: IntArray, values: FloatArray | None) -> FloatArray:
+    """(M,) with `values` at `index`, NaN elsewhere."""
+    out = np.full(m, np.nan)
+    if values is not None:
+        out[index] = values
+    return out

@@ -52,6 +52,7 @@ class PoleStage:
             self.stable[index], self.abscissa[index], self.poles[index], values, self.reach[index]
         )
 
+    @np.errstate(over="ignore")
     def count(
         self, loops: Loops, measures: tuple[Measure, ...], highest_fall: FloatArray | None
     ) -> dict[Measure, FloatArray]:
@@ -101,6 +102,7 @@ def needs_counting(measure: Measure) -> bool:
     return usual or measure.quantity == "natural_frequency"
 
 
+@np.errstate(over="ignore")
 def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
     """Stability, poles and the quantities of the poles' stage that need no frequency.
 
@@ -126,6 +128,7 @@ def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
     return PoleStage(stable, abscissa, poles, values, reach)
 
 
+@np.errstate(over="ignore")
 def counted_poles(
     loops: Loops, poles: ComplexArray, highest_fall: FloatArray
 ) -> tuple[ComplexArray, FloatArray, BoolArray]:
