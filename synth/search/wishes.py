@@ -17,8 +17,10 @@ from synth.search.campaign import Campaign
 from synth.search.goals import Goals, benefit
 from synth.search.outcome import Aim, Task
 from synth.search.polish import Pace, Polished, polish
+from synth.search.ranking import APART
+from synth.search.scales import response
 from synth.search.standing import AGREE, FINE, Standing
-from synth.search.starts import sample
+from synth.search.starts import plant_band, sample
 
 TWINS = {"PI-lead": "PID", "lead": "PD"}  # the same functions over most of their range, under a simpler name
 EXTREMES = ("control_peak", "settling_time")
@@ -35,6 +37,9 @@ FRESH_PENALTY = 2.0  # of a missing slack against an e-fold of the wish, when th
 LAST_RADIUS = 0.01  # of the exact steps that follow a stand-in
 OTHERS = 3  # rows of the archive looked at for a second candidate of a structure
 OTHERS_APART = 0.25
+SHORT = 5  # structures that meet the sheet; with fewer, the list may be short of seconds
+AROUND = 96  # points scored round the best of each then, at these distances
+AROUND_SIZES = (0.05, 0.1, 0.2)
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,6 +109,14 @@ def others(campaign: Campaign) -> Wished | None:
     """Scored rows that meet the sheet and lie apart from the best of their structure: seconds for a short
     list."""
     reserve = _reserve(campaign)
+    heads = [
+        s.tops.take(np.array([0])) for s in campaign.standings if s.tops is not None and s.best >= reserve
+    ]
+    if not heads:
+        return None
+    campaign.enter("alternatives")
+    if len(heads) < SHORT:
+        _look_around(campaign, joined(heads))
     rows, slack, _, _ = campaign.objective.archive.all()
     worst = slack.min(axis=1)
     parts = []
@@ -115,11 +128,41 @@ def others(campaign: Campaign) -> Wished | None:
         if fit.size:
             pick = distinct(rows.take(fit), worst[fit], OTHERS + 1, OTHERS_APART)
             parts.append(rows.take(fit[pick]))
+            parts.append(rows.take(fit[_other_loops(campaign, rows.take(fit), joined(heads))][:OTHERS]))
     if not parts:
         return None
     found = joined(parts)
     good = np.flatnonzero(_on_all_cases(campaign, found).min(axis=1) >= reserve)
     return Wished(found.take(good), ("worst slack",) * good.size, reserve)
+
+
+def _look_around(campaign: Campaign, heads: Rows) -> None:
+    """Score points round the best of every structure: what meets the sheet there joins the archive."""
+    objective = campaign.objective
+    rng = np.random.default_rng([campaign.settings.seed, 5])
+    around = heads.take(np.repeat(np.arange(len(heads)), AROUND))
+    low, high, free = objective.limits(around)
+    size = np.tile(np.repeat(AROUND_SIZES, AROUND // len(AROUND_SIZES)), len(heads))
+    moved = around.x + size[:, None] * rng.normal(size=around.x.shape)
+    with objective.approximating():
+        objective.score(around.at(np.where(free, np.clip(moved, low, high), around.x)), hasty=True)
+
+
+def _other_loops(campaign: Campaign, rows: Rows, heads: Rows) -> IntArray:
+    """Which rows are other loops than every one of the heads, in the sense of the list."""
+    objective = campaign.objective
+    w = plant_band(objective).at(np.linspace(0.0, 1.0, 241))
+    plant = response(objective.task.plants, w)[0]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        first, other = response(objective.realise(heads), w), response(objective.realise(rows), w)
+        apart = np.ones(len(rows), dtype=bool)
+        for one in first:
+            above = np.flatnonzero(np.abs(one * plant) > 1.0)
+            crossover = w[above[-1]] if above.size else 1.0 / objective.scales.time
+            near = np.abs(np.log10(w / crossover)) <= 1.0
+            apart &= np.abs(np.log(other[:, near] / one[near])).max(axis=1, initial=0.0) > APART
+    out: IntArray = np.flatnonzero(apart)
+    return out
 
 
 def _reserve(campaign: Campaign) -> float:
