@@ -279,5 +279,6 @@ def _rejection(
             reason = "it meets the sheet, and the list is long enough without it"
         return Rejection(scan.structure, reason, closest, {}, scan)
     worst = min(short, key=lambda k: short[k])
-    reason = f"comes no nearer than {short[worst]:.3g} of slack, short of {', '.join(short)}"
+    verb = "comes no nearer" if scan.settled else "was left, before its restarts agreed, no nearer"
+    reason = f"{verb} than {short[worst]:.3g} of slack, short of {', '.join(short)}"
     return Rejection(scan.structure, reason, closest, short, scan)
