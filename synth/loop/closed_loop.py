@@ -110,11 +110,6 @@ def together(parts: list[Loops]) -> Loops:
     return Loops(**{f: np.concatenate(pieces) for f, pieces in (rows | rest).items()})
 
 
-def joined(first: Loops, second: Loops) -> Loops:
-    """Two stacks of one order as one."""
-    return Loops(*(np.concatenate([getattr(first, f), getattr(second, f)]) for f in Loops.__slots__))
-
-
 def exact_degree(polynomials: FloatArray) -> IntArray:
     """Degree of each row, counting no leading zeros; -1 for a row of zeros. (R, w) -> (R,)."""
     nonzero = polynomials != 0.0

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
-from synth.loop.closed_loop import Loops, Rational, close, exact_degree, joined, together
+from synth.loop.closed_loop import Loops, Rational, close, exact_degree, together
 from synth.loop.frequency.stage import frequency_stage
 from synth.loop.poles.doubt import doubts
 from synth.loop.poles.encirclement import delayed_stable
@@ -96,9 +96,8 @@ def evaluate(
     reference_step : size of the reference step that control_peak is judged for.
     screen : thresholds below which a loop is not looked at further.
     pairs : (compensator row, plant row) of M chosen pairs; the result is then flat, (M, ...).
-    rational : let time responses with dead time come from a rational stand-in (synth.loop.stand_in). Some
-        fifty times faster and good to about 1e-3: for a search on its way, never for a figure that is
-        reported.
+    rational : let time responses with dead time come from a rational stand-in (synth.loop.stand_in). Two to
+        six times faster: for a search on its way, never for a figure that is reported.
 
     Returns
     -------
@@ -273,7 +272,7 @@ def _fill_by_stand_in(
     poles = closed_roots(stand_in.closed)
     abscissa = np.where(np.isnan(poles.real), -np.inf, poles.real).max(axis=1, initial=-np.inf)
     astray = stable & ~(abscissa < 0.0)  # the count is exact, so here the stand-in is wrong
-    left, loops_left = np.concatenate([left, rows[astray]]), joined(loops_left, loops.rows(astray))
+    left, loops_left = np.concatenate([left, rows[astray]]), together([loops_left, loops.rows(astray)])
     out.stable[rows] = stable
     out.abscissa[rows] = np.where(stable, abscissa, np.maximum(abscissa, 1e-3)) / loops.time_scale
     keep = stable & ~astray

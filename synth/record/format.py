@@ -113,11 +113,6 @@ class Judged(TypedDict):
     near: list[Near]
 
 
-class Worst(TypedDict):
-    value: Number
-    case: str | None
-
-
 class Mode(TypedDict):
     """A closed-loop pole (a pair once, upper half), its share of the step, whether it is counted."""
 

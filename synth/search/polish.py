@@ -94,22 +94,6 @@ def polish(
 EXACT_PACE = Pace(radius=0.02, iterations=4, least=2e-3, halve=())
 
 
-def polish_to_exact(
-    objective: Objective, rows: Rows, goals: Goals, *, pace: Pace, stop: Callable[[], bool] | None = None
-) -> tuple[Polished, Goals]:
-    """A polish whose result holds for the exact quantities; returns the goals of the rows that are left.
-
-    Where there is dead time the rational stand-in leads and a few exact steps follow.
-    """
-    if not objective.delayed:
-        return polish(objective, rows, goals, pace=pace, stop=stop), goals
-    with objective.approximating():
-        near = polish(objective, rows, goals, pace=pace, stop=stop)
-    kept = np.flatnonzero(near.finished)
-    goals = goals.take(kept)
-    return polish(objective, near.rows.take(kept), goals, pace=EXACT_PACE, stop=stop), goals
-
-
 @dataclass(slots=True)
 class _Known:
     """What a row remembers of its last iteration: coordinates (S, V), slopes (S, C, V) and (S, G, V),

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import FloatArray
+from synth.structures.factors import Factors
 
 
 def corner_angles(
@@ -57,3 +58,24 @@ def bump(zero: float, pole: float) -> dict[str, float]:
         "zero corner": float(zero),
         "pole corner": float(pole),
     }
+
+
+def corners_to_polynomials(
+    gain: FloatArray, zero: FloatArray, pole: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """gain (s/zero + 1)/(s/pole + 1), times zero·pole above and below: no corner is divided by. (B,) each"""
+    return np.column_stack([gain * pole, gain * zero * pole]), np.column_stack([zero, zero * pole])
+
+
+def realise_pair(theta: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Polynomials of (gain, zero, pole) rows: one pair of corners, be it a lead or a lag. (B, 3)"""
+    gain, zero, pole = theta.T
+    return corners_to_polynomials(gain, zero, pole)
+
+
+def recognise_pair(factors: Factors) -> FloatArray | None:
+    """(gain, zero, pole) of a function with one pair of real corners and no integrator; None for others."""
+    corners = factors.real_corners()
+    if factors.integrators or corners is None or (len(corners[0]), len(corners[1])) != (1, 1):
+        return None
+    return np.array([factors.gain, corners[0][0], corners[1][0]])

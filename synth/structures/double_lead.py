@@ -7,10 +7,9 @@ import numpy as np
 from synth.loop.arrays import FloatArray
 from synth.loop.closed_loop import product
 from synth.structures import lead
-from synth.structures.corners import bump, corner_angles
+from synth.structures.corners import bump, corner_angles, corners_to_polynomials
 from synth.structures.factors import REAL, Factors
 from synth.structures.family import Parameter, Ratio, Settings, Structure
-from synth.structures.lag import corners_to_polynomials
 
 
 def _realise(theta: FloatArray) -> tuple[FloatArray, FloatArray]:

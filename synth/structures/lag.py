@@ -5,23 +5,10 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import FloatArray
-from synth.structures.corners import bump, corner_angles
-from synth.structures.factors import Factors
+from synth.structures.corners import bump, corner_angles, realise_pair, recognise_pair
 from synth.structures.family import Parameter, Ratio, Settings, Structure
 
 MOST = 100.0  # z/p
-
-
-def corners_to_polynomials(
-    gain: FloatArray, zero: FloatArray, pole: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    """gain (s/zero + 1)/(s/pole + 1), times zero·pole above and below: no corner is divided by. (B,) each"""
-    return np.column_stack([gain * pole, gain * zero * pole]), np.column_stack([zero, zero * pole])
-
-
-def _realise(theta: FloatArray) -> tuple[FloatArray, FloatArray]:
-    gain, zero, pole = theta.T
-    return corners_to_polynomials(gain, zero, pole)
 
 
 def _place(crossover: FloatArray, phase: FloatArray, shares: FloatArray) -> FloatArray:
@@ -37,13 +24,6 @@ def _settings(theta: FloatArray) -> Settings:
         "standard": {"gain": gain, "zero corner": zero, "pole corner": pole},
         "ends": {"gain at zero frequency": gain, "gain at high frequency": gain * pole / zero},
     }
-
-
-def _recognise(factors: Factors) -> FloatArray | None:
-    corners = factors.real_corners()
-    if factors.integrators or corners is None or (len(corners[0]), len(corners[1])) != (1, 1):
-        return None
-    return np.array([factors.gain, corners[0][0], corners[1][0]])
 
 
 LAG = Structure(
@@ -65,8 +45,8 @@ LAG = Structure(
         "standard": "gain (s/zero corner + 1) / (s/pole corner + 1)",
         "ends": "from gain at zero frequency to gain at high frequency",
     },
-    _realise=_realise,
+    _realise=realise_pair,
     _place=_place,
     _settings=_settings,
-    _recognise=_recognise,
+    _recognise=recognise_pair,
 )

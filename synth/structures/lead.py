@@ -5,17 +5,10 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import FloatArray
-from synth.structures.corners import bump, corner_angles
-from synth.structures.factors import Factors
+from synth.structures.corners import bump, corner_angles, realise_pair, recognise_pair
 from synth.structures.family import Parameter, Ratio, Settings, Structure
-from synth.structures.lag import corners_to_polynomials
 
 MOST = 30.0  # p/z
-
-
-def _realise(theta: FloatArray) -> tuple[FloatArray, FloatArray]:
-    gain, zero, pole = theta.T
-    return corners_to_polynomials(gain, zero, pole)
 
 
 def _place(crossover: FloatArray, phase: FloatArray, shares: FloatArray) -> FloatArray:
@@ -39,13 +32,6 @@ def _settings(theta: FloatArray) -> Settings:
     return forms
 
 
-def _recognise(factors: Factors) -> FloatArray | None:
-    corners = factors.real_corners()
-    if factors.integrators or corners is None or (len(corners[0]), len(corners[1])) != (1, 1):
-        return None
-    return np.array([factors.gain, corners[0][0], corners[1][0]])
-
-
 LEAD = Structure(
     name="lead",
     formula="K (s/z + 1)/(s/p + 1), z < p",
@@ -65,8 +51,8 @@ LEAD = Structure(
         "standard": "gain (s/zero corner + 1) / (s/pole corner + 1)",
         "derivative": "gain (1 + derivative time s / (filter time s + 1))",
     },
-    _realise=_realise,
+    _realise=realise_pair,
     _place=_place,
     _settings=_settings,
-    _recognise=_recognise,
+    _recognise=recognise_pair,
 )

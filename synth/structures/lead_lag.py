@@ -7,15 +7,15 @@ import numpy as np
 from synth.loop.arrays import FloatArray
 from synth.loop.closed_loop import product
 from synth.structures import lag, lead
-from synth.structures.corners import between, bump, corner_angles
+from synth.structures.corners import between, bump, corner_angles, corners_to_polynomials
 from synth.structures.factors import Factors
 from synth.structures.family import Parameter, Ratio, Settings, Structure
 
 
 def _realise(theta: FloatArray) -> tuple[FloatArray, FloatArray]:
     gain, lead_zero, lead_pole, lag_zero, lag_pole = theta.T
-    top, bottom = lag.corners_to_polynomials(gain, lead_zero, lead_pole)
-    more, under = lag.corners_to_polynomials(np.ones_like(gain), lag_zero, lag_pole)
+    top, bottom = corners_to_polynomials(gain, lead_zero, lead_pole)
+    more, under = corners_to_polynomials(np.ones_like(gain), lag_zero, lag_pole)
     return product(top, more), product(bottom, under)
 
 

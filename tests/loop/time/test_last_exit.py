@@ -4,7 +4,7 @@ import mpmath as mp
 import numpy as np
 import pytest
 
-from synth.loop.closed_loop import joined
+from synth.loop.closed_loop import together
 from synth.loop.quantities import Measure
 from synth.loop.time.stage import time_stage
 
@@ -163,7 +163,7 @@ def enough_loops(random_loops, order, light):
         parts.append(random_loops(rng, 400, order, light, 0.004 if light else 0.02))
     loops, poles = parts[0]
     for more, their_poles in parts[1:]:
-        loops, poles = joined(loops, more), np.concatenate([poles, their_poles])
+        loops, poles = together([loops, more]), np.concatenate([poles, their_poles])
     return loops.rows(np.arange(200)), poles[:200]
 
 
