@@ -42,7 +42,13 @@ class InputError(SynthError):
 
 
 def nearest(name: str, allowed: Iterable[str]) -> str | None:
-    """The allowed name that looks most like `name`, or None when none is close."""
+    """The allowed name that looks most like `name`, or None when none is close.
+
+    A name of the very same letters comes first: letters that changed places are the commonest slip, and
+    "PDI" shares as long a run with PI as with PID.
+    """
+    typed = name.casefold()
     by_fold = {a.casefold(): a for a in allowed}
-    close = difflib.get_close_matches(name.casefold(), by_fold, n=1, cutoff=0.5)
+    shuffled = [fold for fold in by_fold if sorted(fold) == sorted(typed)]
+    close = difflib.get_close_matches(typed, shuffled or by_fold, n=1, cutoff=0.0 if shuffled else 0.5)
     return by_fold[close[0]] if close else None

@@ -67,7 +67,7 @@ max = 3
         (9, "requirements.bandwidth", "the bounds contradict each other: min stands above max",
          'min = "3 Hz", max = "10 rad/s"', "min at most max; they are 18.8496 and 10 rad/s", None),
         (10, "requirements.overshoot.max", "a percentage must carry its unit", "10", PERCENT, '"10 %"'),
-        (12, "search.structures[1]", "unknown structure", '"PDI"', STRUCTURES, "PI"),
+        (12, "search.structures[1]", "unknown structure", '"PDI"', STRUCTURES, "PID"),
         (13, "actuator", "`actuator` is not yet supported: the name is kept for a later version", None,
          "leave it out", None),
     ]  # fmt: skip
