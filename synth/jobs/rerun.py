@@ -13,7 +13,7 @@ from synth.jobs.finish import finish
 from synth.jobs.options import Done, Options
 from synth.jobs.propose import searched
 from synth.jobs.scoring import on_cases_of, scored, with_worst_inside
-from synth.rationale import decide
+from synth.rationale import GIVEN, decide
 from synth.record import (
     Adoption,
     Earlier,
@@ -43,19 +43,13 @@ MOST_ANCESTORS = 100  # how far back an adoption is looked for
 class InService:
     """The compensator the advice is about: the adopted one, or else the earlier first candidate."""
 
+    about: str  # who it is, in words
     adoption: StoredAdoption | None
     rank: int
     structure: str
     parameters: dict[str, float]
     compensator: Compensator
     slack_before: float
-
-    @property
-    def words(self) -> str:
-        """Who it is."""
-        if self.adoption is not None:
-            return f"the adopted {self.structure}"
-        return f"the earlier first candidate, a {self.structure} (none was adopted),"
 
 
 def rerun(spec_path: str | Path, against: str | Path | None = None, options: Options | None = None) -> Done:
@@ -114,7 +108,12 @@ def in_service(before: Stored) -> InService | None:
     if not before.record["candidates"]:
         return None
     first = before.record["candidates"][0]
+    if before.record.get("job") == "score":
+        about = "the compensator scored before (none was adopted)"
+    else:
+        about = f"the earlier first candidate (a {first['structure']}; none was adopted)"
     return InService(
+        about,
         None,
         first["rank"],
         first["structure"],
@@ -128,6 +127,7 @@ def _adopted(stored: StoredAdoption, record: Record) -> InService:
     adoption: Adoption = stored.adoption
     slack = next((c["worst_slack"] for c in record["candidates"] if c["rank"] == adoption["rank"]), None)
     return InService(
+        f"the adopted {'compensator' if adoption['structure'] == GIVEN else adoption['structure']}",
         stored,
         adoption["rank"],
         adoption["structure"],
@@ -170,12 +170,11 @@ def _revision(seen: Spec, outcome: Outcome, before: Stored, service: InService |
         seen,
         outcome,
         untouched,
-        about=service.words,
         slack_before=service.slack_before,
         parameters=service.parameters,
     )
     part["advice"] = decision.advice
-    part["about"] = service.words.rstrip(",")
+    part["about"] = service.about
     part["moved"] = decision.moved
     part["evidence"] = [{"text": text, "facts": clean(facts)} for text, facts in decision.evidence]
     part["successor"] = None if decision.successor is None else decision.successor + 1

@@ -13,7 +13,7 @@ from synth.jobs.options import Done, Options
 from synth.jobs.scoring import outcome_of, scored, with_worst_inside
 from synth.limits import assess
 from synth.model import FormulaError, parse
-from synth.rationale import verdict
+from synth.rationale import GIVEN, verdict
 from synth.record import place_for
 from synth.spec import read_spec
 from synth.structures import same_function
@@ -43,7 +43,7 @@ def score(spec_path: str | Path, compensator: str, options: Options | None = Non
         spec,
         numerator,
         denominator,
-        structure=structure.name if structure is not None else "given",
+        structure=structure.name if structure is not None else GIVEN,
         parameters=parameters,
         also=tuple(s.name for s, _ in names[1:]),
         fragile=bool(parameters),

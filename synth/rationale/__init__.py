@@ -4,12 +4,13 @@ from synth.rationale import cautions
 from synth.rationale.cautions import uncounted
 from synth.rationale.facts import Fact
 from synth.rationale.practice import remarks
-from synth.rationale.revision import Decision, decide
+from synth.rationale.revision import GIVEN, Decision, decide
 from synth.rationale.scene import Scene, worst_of
 from synth.rationale.sentences import rationale
 from synth.rationale.statement import Said, verdict
 
 __all__ = [
+    "GIVEN",
     "Decision",
     "Fact",
     "Said",

@@ -16,6 +16,7 @@ from synth.wording.figures import change, count, percent, quantity
 from synth.wording.names import name_of, parameter_name
 
 Advice = Literal["keep", "retune", "restructure", "relax"]
+GIVEN = "given"  # the structure of a compensator that a user brought and that is none of the known ones
 
 
 @dataclass(frozen=True, slots=True)
@@ -37,18 +38,16 @@ def decide(
     outcome: Outcome,
     untouched: Candidate,
     *,
-    about: str,
     slack_before: float,
     parameters: Mapping[str, float],
 ) -> Decision:
-    """Advice for one compensator.
+    """Advice for one compensator; the evidence calls it "it", the record says beside it whom that means.
 
     untouched     it, as it is, scored on the new plant
-    about         who it is, in words ("the adopted PI")
     slack_before  its worst slack on the old plant, NaN where unknown
     parameters    its tuned values
     """
-    evidence = [_before_and_after(spec, outcome, untouched, about, slack_before)]
+    evidence = [_before_and_after(spec, outcome, untouched, slack_before)]
     if untouched.meets_all:
         return Decision("keep", None, None, [*evidence, *_could_be_better(outcome, untouched)])
     met = [i for i, c in enumerate(outcome.candidates) if c.meets_all]
@@ -72,20 +71,21 @@ def decide(
 
 
 def _before_and_after(
-    spec: Spec, outcome: Outcome, untouched: Candidate, about: str, before: float
+    spec: Spec, outcome: Outcome, untouched: Candidate, before: float
 ) -> tuple[str, dict[str, Any]]:
-    was = f" (it had {percent(before)} on the old one)" if before == before else ""
+    known = not math.isnan(before)
+    was = f" (its slack on the old plant was {percent(before)})" if known else ""
     facts: dict[str, Any] = {"before": before, "after": untouched.worst_slack}
-    head = f"Untouched on the revised plant, {about}"
     if not untouched.stable.all():
         bad = [n for n, ok in zip(outcome.case_names, untouched.stable, strict=False) if not ok]
-        where = f" on {'; '.join(bad[:3])}" if len(outcome.case_names) > 1 else ""
-        return f"{head} is unstable{where}{was}.", facts
-    scene = Scene(spec, outcome, untouched)
+        more = f" and {len(bad) - 3} more" if len(bad) > 3 else ""
+        where = f" on {'; '.join(bad[:3])}{more}" if len(outcome.case_names) > 1 else ""
+        return f"Untouched, it is unstable{where}{was}.", facts
     if untouched.meets_all:
-        text = f"{head} still meets everything, with a slack of {percent(untouched.worst_slack)}{was}."
-        return f"{text} {said_binding(scene)}", facts
-    return f"{head} no longer meets everything{was}. {said_binding(scene)}", facts
+        how = "still meets" if before >= 0.0 else "meets"
+    else:
+        how = "no longer meets" if before >= 0.0 else "still does not meet" if known else "does not meet"
+    return f"Untouched, it {how} everything{was}. {said_binding(Scene(spec, outcome, untouched))}", facts
 
 
 def _could_be_better(outcome: Outcome, untouched: Candidate) -> list[tuple[str, dict[str, Any]]]:
@@ -114,9 +114,10 @@ def _moves(new: Candidate, moved: dict[str, list[float]], index: int) -> tuple[s
 def _own_structure(spec: Spec, outcome: Outcome, untouched: Candidate) -> tuple[str, dict[str, Any]]:
     scan = next((s for s in outcome.scans if s.structure == untouched.structure), None)
     if scan is None:
-        return f"A {untouched.structure} was not searched again.", {}
+        own = "Its form" if untouched.structure == GIVEN else f"A {untouched.structure}"
+        return f"{own} is not among the structures searched, so other values for it were not tried.", {}
     best = reached(Scene(spec, outcome, untouched), scan)
-    sure = "" if scan.settled else " as far as it was searched"
+    sure = "" if scan.settled else ", as far as it was searched"
     text = (
         f"Retuned, a {untouched.structure} comes no nearer than a slack of {percent(best)}{sure}."
         if math.isfinite(best)

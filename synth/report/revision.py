@@ -6,18 +6,19 @@ from typing import Any
 
 from rich.text import Text
 
-from synth.record import Earlier, Record, number, parameter_name
+from synth.record import Earlier, Record, number, parameter_name, quantity_name
 from synth.report.theme import Columns, hanging, heading
-from synth.report.view import View
+from synth.report.view import SIGN, View
 from synth.wording.figures import ABSENT, change, figure, percent, quantity
 
 LONG = 24  # two values that need more room than this stand on a line of their own
 _ADVICE = {
     "keep": ("KEEP", "good", "meets everything on the revised plant, untouched."),
     "retune": ("RETUNE", "warn", "needs other values."),
-    "restructure": ("RESTRUCTURE", "warn", "cannot do it with other values; another structure can."),
+    "restructure": ("RESTRUCTURE", "warn", "does not meet the sheet, and no other values for it were found that do; another does."),
     "relax": ("RELAX", "bad", "does not meet the sheet, and nothing else that was searched does."),
 }
+_NOTHING_EARLIER = "The earlier record has no candidate to judge: the verdict below is that of a new search."
 
 
 def revision(record: Record, width: int) -> list[Text]:
@@ -26,8 +27,8 @@ def revision(record: Record, width: int) -> list[Text]:
     if part is None:
         return []
     word, style, words = _ADVICE[part["advice"]]
-    about = part.get("about") or "the earlier record has no candidate"
-    text = f"{about[:1].upper()}{about[1:]} {words}" if part.get("about") else f"{about}."
+    about = part.get("about")
+    text = f"{about[:1].upper()}{about[1:]} {words}" if about else _NOTHING_EARLIER
     lines = [heading("Advice")]
     lines.append(hanging(Text.assemble("  ", (word, style), "  "), text, width))
     lines.extend(hanging("  - ", sentence["text"], width) for sentence in part.get("evidence", []))
@@ -61,9 +62,16 @@ def _changes(record: Record, width: int) -> list[Text]:
         return [*lines, Text("  nothing in plant or requirements")]
     table = Columns(("<", ">", "<", ">", "<"))
     long = []
+    view = View(record)
     for one in part["changes"]:
         where = f"{one['what']}, {one['case']}" if one["case"] else one["what"]
         old, new = _value(one["old"]), _value(one["new"])
+        key, _, side = one["what"].partition(".")
+        sign = SIGN.get(side.partition(".")[0])
+        if sign is not None:  # a limit that moved reads as everywhere else, not by its key
+            asked = one["what"] in view.requirements  # one that was dropped is not
+            where = f"{view.name(one['what']) if asked else quantity_name(key)} {sign}"
+            old, new = (_limit(limit, view.quantity_unit(key)) for limit in (one["old"], one["new"]))
         if len(old) + len(new) > LONG:
             long.append(hanging(f"  {where}: ", f"{old} → {new}", width))
             continue
@@ -85,6 +93,10 @@ def _value(value: Any) -> str:
     return str(value)
 
 
+def _limit(value: Any, unit: str) -> str:
+    return ABSENT if value is None else quantity(number(value), unit)
+
+
 def _relative(old: Any, new: Any) -> str:
     plain = all(isinstance(v, int | float) and not isinstance(v, bool) for v in (old, new))
     if not plain or not old:
@@ -100,17 +112,19 @@ def _earlier(record: Record, width: int) -> list[Text]:
     lines = [heading("Earlier candidates", "as they are, on the revised plant")]
     table = Columns((">", "<", ">", "<", ">", "<"), indent=1)
     table.add("", "structure", "slack was", "", "is", "held back by", style="dim")
-    if part["adopted"] is not None:
-        table.add(*_row(view, part["adopted"], "adopted"))
+    adopted = part["adopted"]
+    if adopted is not None and adopted not in part["earlier"]:  # it comes from an older record than these
+        table.add(*_row(view, adopted, f"{adopted['structure']} (adopted, rank {adopted['rank']})", ""))
     for earlier in part["earlier"]:
-        table.add(*_row(view, earlier, ""))
+        mark = " (adopted)" if earlier == adopted else ""
+        table.add(*_row(view, earlier, f"{earlier['structure']}{mark}", str(earlier["rank"] or "")))
     for line in table.lines():
         line.truncate(width, overflow="ellipsis")
         lines.append(line)
     return lines
 
 
-def _row(view: View, earlier: Earlier, mark: str) -> list[str | Text]:
+def _row(view: View, earlier: Earlier, name: str, rank: str) -> list[str | Text]:
     binding = earlier["binding"]
     held = ""
     if binding is not None:
@@ -118,6 +132,4 @@ def _row(view: View, earlier: Earlier, mark: str) -> list[str | Text]:
         held = f"{view.name(binding['requirement'])}{case}"
     slack = Text(percent(number(earlier["worst_slack"])))
     slack.stylize("" if earlier["meets_all"] else "short")
-    name = f"{earlier['structure']} ({mark}, rank {earlier['rank']})" if mark else earlier["structure"]
-    rank = "" if mark else str(earlier["rank"] or "")
     return [rank, name, percent(number(earlier.get("was"))), "→", slack, held]

@@ -66,18 +66,44 @@ def test_advice_changes_and_earlier_candidates(record, drawn):
         "  plant: K/(s*(I*s + f)) → K*exp(-0.01*s)/(s*(I*s + f)*(T*s + 1))\n"
         "\n"
         "Earlier candidates  as they are, on the revised plant\n"
-        "    structure             slack was         is  held back by\n"
-        "    PI (adopted, rank 1)     +8.0 %  →  −4.0 %  overshoot, I high\n"
-        " 1  PI                       +8.0 %  →  −4.0 %  overshoot, I high\n"
-        " 2  lead                     +2.0 %  →      −∞\n"
+        "    structure     slack was         is  held back by\n"
+        " 1  PI (adopted)     +8.0 %  →  −4.0 %  overshoot, I high\n"
+        " 2  lead             +2.0 %  →      −∞\n"
     )
+
+
+def test_one_adopted_from_an_older_record_has_a_row_of_its_own(record, drawn):
+    revised = _revised(record)
+    revised["revision"]["adopted"]["was"] = 0.09
+    text = drawn(revision(revised, 80))
+    assert "\n    PI (adopted, rank 1)     +9.0 %  →  −4.0 %  overshoot, I high\n" in text
+    assert "\n 1  PI                       +8.0 %  →  −4.0 %  overshoot, I high\n" in text
+
+
+def test_a_limit_that_moved_reads_with_its_unit_and_side(record, drawn):
+    revised = _revised(record)
+    revised["revision"]["changes"] = [
+        {"what": "settling_time.max", "case": None, "old": 2.5, "new": 2.0},
+        {"what": "bandwidth.min", "case": None, "old": 3.0, "new": None},
+    ]
+    assert drawn(revision(revised, 80)).split("\n\n")[1].splitlines()[1:] == [
+        "  settling time (5 %) ≤    2.5 s  →  2 s  (−20.0 %)",
+        "  bandwidth ≥            3 rad/s  →    —",
+    ]
+
+
+def test_a_record_without_a_candidate_leaves_nothing_to_keep(record, drawn):
+    revised = _revised(record)
+    del revised["revision"]["about"]
+    text = drawn(revision(revised, 80))
+    assert "RETUNE  The earlier record has no candidate to judge: the verdict below is\n" in text
 
 
 def test_each_advice_has_its_words(record, drawn):
     revised = _revised(record)
     for advice, words in (
         ("keep", "KEEP  The adopted PI meets everything on the revised plant, untouched."),
-        ("restructure", "RESTRUCTURE  The adopted PI cannot do it with other values; another structure"),
+        ("restructure", "RESTRUCTURE  The adopted PI does not meet the sheet, and no other values for"),
         ("relax", "RELAX  The adopted PI does not meet the sheet, and nothing else that was"),
     ):
         revised["revision"]["advice"] = advice
