@@ -41,14 +41,13 @@ FEW = 128
 FAR_AWAY = 1e9
 
 
-def delayed_poles(loops: Loops, reach: FloatArray, open_poles: ComplexArray | None = None) -> ComplexArray:
+def delayed_poles(loops: Loops, reach: FloatArray) -> ComplexArray:
     """All roots with abs(p) <= reach, and never fewer than the rightmost one or pair.
 
     Parameters
     ----------
     loops : dead_time (M,) > 0, scaled.
     reach : (M,) scaled 1/time; 0 for the nearest ones alone. Beyond 400/θ it is taken as 400/θ (see `far`).
-    open_poles : (M, n) roots of D, where they are known already.
 
     Returns
     -------
@@ -62,28 +61,33 @@ def delayed_poles(loops: Loops, reach: FloatArray, open_poles: ComplexArray | No
     chain. Newton's method takes each to a root of the transcendental function. The number within the circle
     is then checked by the argument principle, which also says where roots are missing; where that does not
     help, all seeds are moved together by Aberth's iteration (Math. Comp. 27, 1973), which keeps two from
-    meeting in one root. The rightmost is checked by the bound abs(N/D) < e^(θ Re p) outside the circle or by
-    the count right of a line.
+    meeting in one root. The rightmost is checked by the count right of a line just beyond it.
     """
+    poles, _ = proven_poles(loops, reach)
+    return poles
+
+
+def proven_poles(loops: Loops, reach: FloatArray) -> tuple[ComplexArray, BoolArray]:
+    """The same, and where the count has proven that no root lies more than 1e-6/θ right of the rightmost one
+    (or of the far chain), (M,)."""
     if len(loops) == 0:
-        return np.zeros((0, 0), dtype=complex)
-    if open_poles is None:
-        open_poles = closed_roots(loops.denominator)
+        return np.zeros((0, 0), dtype=complex), np.zeros(0, dtype=bool)
     delay = loops.dead_time
     asked = np.clip(np.nan_to_num(reach), NEAREST / delay, FARTHEST / delay)
     radius = asked.copy()
-    found = _within(loops, radius, open_poles)
-    short = np.flatnonzero(~_holds_rightmost(loops, found, radius, open_poles))
+    found = _within(loops, radius)
+    proven, sure = _rightmost_proven(loops, found)
+    short = np.flatnonzero(~sure)
     while short.size:
         radius[short] = np.minimum(3.0 * radius[short], FARTHEST / delay[short])
-        found = _joined(found, short, _within(loops.rows(short), radius[short], open_poles[short]))
-        sure = _holds_rightmost(loops.rows(short), found[short], radius[short], open_poles[short])
+        found = _joined(found, short, _within(loops.rows(short), radius[short]))
+        proven[short], sure = _rightmost_proven(loops.rows(short), found[short])
         lacking = short[~sure]
         short = lacking[radius[lacking] * delay[lacking] < 0.999 * FARTHEST]
         astray = np.setdiff1d(lacking, short)
         if astray.size:
             found = _joined(found, astray, _with_rightmost(loops.rows(astray), found[astray]))
-    return _trimmed(found, asked)
+    return _trimmed(found, asked), proven
 
 
 def characteristic(loops: Loops, s: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
@@ -95,7 +99,7 @@ def characteristic(loops: Loops, s: ComplexArray) -> tuple[ComplexArray, Complex
     return d + n * late, slope_d + (slope_n - delay * n) * late
 
 
-def _within(loops: Loops, radius: FloatArray, open_poles: ComplexArray) -> ComplexArray:
+def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
     """All roots of each row with abs(p) <= radius; rows of like size are worked on together."""
     pairs = np.ceil(1.5 * radius * loops.dead_time / (2.0 * np.pi)).astype(np.intp) + 1
     size = np.ceil(np.log2(pairs)).astype(np.intp)
@@ -106,7 +110,7 @@ def _within(loops: Loops, radius: FloatArray, open_poles: ComplexArray) -> Compl
         at = np.flatnonzero(size == one)
         some, far = (loops, radius) if len(at) == len(loops) else (loops.rows(at), radius[at])
         with np.errstate(all="ignore"):  # rows that are not finite and seeds that run away end as NaN
-            seeds = _seeds(some, int(pairs[at].max()), open_poles[at])
+            seeds = _seeds(some, int(pairs[at].max()))
             roots = _kept(some, by_newton(some, upper_half(seeds), far), apart=False)
             for attempt in range(6):
                 lacking = missing_roots(some, roots, far)
@@ -129,11 +133,11 @@ def _within(loops: Loops, radius: FloatArray, open_poles: ComplexArray) -> Compl
     return found
 
 
-def _seeds(loops: Loops, pairs: int, open_poles: ComplexArray) -> ComplexArray:
+def _seeds(loops: Loops, pairs: int) -> ComplexArray:
     """Near seeds and `pairs` chain pairs; with long delays the poles of L too, near which roots gather."""
     seeds = [_near_seeds(loops), _chain_seeds(loops, pairs)]
     if pairs > 4:
-        seeds.append(open_poles)
+        seeds.append(closed_roots(loops.denominator))
     return np.concatenate(seeds, axis=1)
 
 
@@ -322,43 +326,19 @@ def _with_rightmost(loops: Loops, found: ComplexArray) -> ComplexArray:
         return _kept(loops, _refined(loops, np.concatenate([found, seeds], axis=1), everywhere))
 
 
-def _holds_rightmost(
-    loops: Loops, found: ComplexArray, radius: FloatArray, open_poles: ComplexArray
-) -> BoolArray:
-    """Whether no root outside the circle lies right of the rightmost one found (or of the far chain).
-    (M,)."""
+def _rightmost_proven(loops: Loops, found: ComplexArray) -> tuple[BoolArray, BoolArray]:
+    """Whether the count right of a line just beyond the rightmost root found (or the far chain) is 0, and
+    whether nothing more can be expected of a wider circle. (M,) twice."""
     chain = chain_abscissa(loops)
-    with np.errstate(all="ignore"):
-        best = np.where(np.isnan(found.real), -np.inf, found.real).max(axis=1, initial=-np.inf)
-        sure: BoolArray = _most_outside(loops, radius, open_poles, best) < np.exp(loops.dead_time * best)
-    doubtful = np.flatnonzero(~sure)
-    if doubtful.size:
-        line = np.maximum(best, chain)[doubtful] + 1e-6 / loops.dead_time[doubtful]
-        readable = np.isfinite(line)
-        at = doubtful[readable]
-        count, _ = roots_right_of(loops.rows(at), line[readable], open_poles[at])
-        sure[doubtful[readable]] = ~(count > 0.0)
-        empty = ~np.isfinite(best)[doubtful]
-        # without N, or where the row is not finite, there may be nothing to find
-        alone = ~np.any(loops.numerator[doubtful], axis=1, keepdims=True)[:, 0]
-        broken = ~np.isfinite(loops.closed[doubtful].sum(axis=1))
-        sure[doubtful[empty]] = (alone | broken)[empty]
-    return sure
-
-
-def _most_outside(loops: Loops, radius: FloatArray, open_poles: ComplexArray, line: FloatArray) -> FloatArray:
-    """A bound of abs(N/D) outside the circle and right of the line, (M,).
-
-    abs(N)/r^n falls with r. Each factor abs(s - p)/r of D is at least 1 - abs(p)/r; for p in the left half
-    plane its square is 1 + (abs(p)² + 2 Re(-p) Re s - 2 Im p Im s)/r², at least 1 + (abs(p)² + 2 Re(-p)
-    line)/r² - 2 abs(Im p)/r, which need not be near 0 where p is large.
-    """
-    r = radius[:, None]
-    top = magnitude_sum(loops.numerator / np.abs(loops.denominator[:, :1]), r)[:, 0] / radius**loops.order
-    size = np.abs(open_poles) / r
-    ends = size * size - 2.0 * open_poles.real / r * np.minimum(line / radius, 0.0)[:, None]
-    squared = 1.0 + np.minimum(ends, 0.0) - 2.0 * np.abs(open_poles.imag) / r
-    squared = np.where(open_poles.real <= 0.0, squared, 0.0)
-    least = np.maximum(np.maximum(1.0 - size, 0.0), np.sqrt(np.maximum(squared, 0.0)))
-    out: FloatArray = top / least.prod(axis=1)
-    return out
+    best = np.where(np.isnan(found.real), -np.inf, found.real).max(axis=1, initial=-np.inf)
+    line = np.maximum(best, chain) + 1e-6 / loops.dead_time
+    readable = np.isfinite(line)
+    count, _ = roots_right_of(loops, np.where(readable, line, 0.0))
+    proven: BoolArray = readable & (count == 0.0)
+    sure = readable & ~(count > 0.0)
+    empty = np.flatnonzero(~np.isfinite(best))
+    if empty.size:  # without N, or where the row is not finite, there may be nothing to find
+        alone = ~np.any(loops.numerator[empty], axis=1, keepdims=True)[:, 0]
+        broken = ~np.isfinite(loops.closed[empty].sum(axis=1))
+        sure[empty] = alone | broken
+    return proven, sure

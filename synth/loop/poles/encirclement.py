@@ -9,6 +9,7 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops
+from synth.loop.poles.crossing_count import count_by_crossings, squared_on_axis
 from synth.loop.poles.roots import closed_roots
 from synth.loop.polynomials import horner
 
@@ -16,15 +17,15 @@ from synth.loop.polynomials import horner
 ON_THE_LINE = 1e-12
 
 
-def delayed_stable(loops: Loops, open_poles: ComplexArray | None = None) -> BoolArray:
+def delayed_stable(loops: Loops) -> BoolArray:
     """Whether every root of D + N e^(-s θ) lies strictly in the left half plane, and stays there under a
     small lag.
 
-    loops : dead_time (M,) > 0; open_poles : (M, n) roots of D, where they are known. Returns (M,).
+    loops : dead_time (M,) > 0. Returns (M,).
     abs(L(∞)) >= 1 is not stable (a chain of roots on or right of the axis), nor is a root on the axis, nor a
     row that is not finite.
     """
-    count, touching = roots_right_of(loops, np.zeros(len(loops)), open_poles)
+    count, touching = roots_right_of(loops, np.zeros(len(loops)))
     stable: BoolArray = (count == 0.0) & ~touching
     return stable
 
@@ -37,25 +38,22 @@ def chain_abscissa(loops: Loops) -> FloatArray:
     return out
 
 
-def roots_right_of(
-    loops: Loops, line: FloatArray, open_poles: ComplexArray | None = None
-) -> tuple[FloatArray, BoolArray]:
+def roots_right_of(loops: Loops, line: FloatArray) -> tuple[FloatArray, BoolArray]:
     """Number of roots with real part above `line`, and whether one lies on the line itself.
 
-    loops : dead_time (M,) > 0; line : (M,) scaled 1/time; open_poles : (M, n) roots of D, where known.
+    loops : dead_time (M,) > 0; line : (M,) scaled 1/time.
     Returns count (M,) as floats, inf where the far chain of roots is not left of the line, NaN for a row that
     is not finite; touching (M,).
 
     Notes
     -----
-    Argument principle on s = line + jω. Between the frequencies where abs(N) = abs(D), which are the real
-    roots of a polynomial of degree n in ω², one of the two terms outweighs the other and the argument of the
-    sum stays within 90 degrees of the argument of the larger. The argument of N and D follows from their
-    roots and that of the delay is -ω θ, so the change of argument is known segment by segment with no
-    sampling at all, and rounding would have to reach half a turn to spoil the count; a root within about
-    1e-10 of the line is the exception. The crossing frequencies are those of K. Walton and J. E. Marshall,
-    Direct method for TDS stability analysis, IEE Proc. D 134 (1987) 101-107, who step through the delays
-    instead.
+    By the crossings of the line as the delay grows from 0 (crossing_count.py); where those leave the count to
+    rounding, by the argument principle on s = line + jω. Between the frequencies where abs(N) = abs(D), which
+    are the real roots of a polynomial of degree n in ω², one of the two terms outweighs the other and the
+    argument of the sum stays within 90 degrees of the argument of the larger. The argument of N and D follows
+    from their roots and that of the delay is -ω θ, so the change of argument is known segment by segment with
+    no sampling at all, and rounding would have to reach half a turn to spoil the count; a root within about
+    1e-10 of the line is the exception.
     """
     rows, order = len(loops), loops.order
     with np.errstate(all="ignore"):  # rows that are not finite run on; they are NaN at the end
@@ -63,23 +61,21 @@ def roots_right_of(
         numerator = moved(loops.numerator, line) * np.exp(-line * loops.dead_time)[:, None]
         gain = np.abs(numerator[:, 0]) / np.abs(denominator[:, 0])
         finite = np.isfinite(denominator).all(axis=1) & np.isfinite(numerator).all(axis=1)
-        usable = finite & (gain < 1.0)
+        usable = np.flatnonzero(finite & (gain < 1.0))
         count = np.where(finite, np.inf, np.nan)
         touching = np.zeros(rows, dtype=bool)
         if order == 0:
             count[usable] = 0.0
             return count, touching
-        if usable.any():
-            from_d = closed_roots(denominator[usable]) if open_poles is None else open_poles[usable]
-            if open_poles is not None:
-                from_d = from_d - line[usable, None]
-            change, near = _argument_change(
-                denominator[usable], numerator[usable], loops.dead_time[usable], from_d
-            )
+        found = count_by_crossings(denominator[usable], numerator[usable], loops.dead_time[usable])
+        count[usable] = found
+        open_ = usable[np.isnan(found)]
+        if open_.size:
+            change, near = _argument_change(denominator[open_], numerator[open_], loops.dead_time[open_])
             right = 0.5 * order - change / np.pi
             whole = np.round(right)
-            count[usable] = np.where(np.abs(right - whole) < 0.25, whole, np.nan)
-            touching[usable] = near
+            count[open_] = np.where(np.abs(right - whole) < 0.25, whole, np.nan)
+            touching[open_] = near
     return count, touching
 
 
@@ -96,18 +92,6 @@ def moved(polynomials: FloatArray, shift: FloatArray) -> FloatArray:
     return out
 
 
-def squared_on_axis(polynomials: FloatArray) -> FloatArray:
-    """abs(p(jω))² as a polynomial in x = ω²: (M, n + 1) -> (M, n + 1), descending powers of x."""
-    rows, width = polynomials.shape
-    ascending = polynomials[:, ::-1]
-    out = np.zeros((rows, width))
-    for i in range(width):
-        for j in range(i % 2, width, 2):
-            # s^i conj(s^j) = ω^(i+j) j^(i-j): real, as i - j is even
-            out[:, (i + j) // 2] += (-1.0) ** ((i - j) // 2) * ascending[:, i] * ascending[:, j]
-    return out[:, ::-1]
-
-
 def unit_crossings(denominator: FloatArray, numerator: FloatArray) -> FloatArray:
     """Frequencies ω > 0 with abs(N(jω)) = abs(D(jω)), ascending, padded with inf. (M, n + 1) twice -> (M,
     n)."""
@@ -118,7 +102,7 @@ def unit_crossings(denominator: FloatArray, numerator: FloatArray) -> FloatArray
 
 
 def _argument_change(
-    denominator: FloatArray, numerator: FloatArray, delay: FloatArray, from_d: ComplexArray
+    denominator: FloatArray, numerator: FloatArray, delay: FloatArray
 ) -> tuple[FloatArray, BoolArray]:
     """Change of arg(D + N e^(-jωθ)) from ω = 0 to ∞, less the bounded swing of the far chain; and roots met.
 
@@ -135,7 +119,7 @@ def _argument_change(
     numerator_above = there & (beyond % 2 == 0)
     change = np.where(numerator_above, angle, -angle).sum(axis=1)
 
-    from_n = closed_roots(numerator)
+    from_d, from_n = closed_roots(denominator), closed_roots(numerator)
     final = -np.sign(from_d.real).sum(axis=1) * (np.pi / 2.0)
     edges = np.concatenate([np.zeros((len(at), 1)), at], axis=1)
     arg_d, arg_n = _argument(from_d, edges), _argument(from_n, edges) - edges * delay[:, None]

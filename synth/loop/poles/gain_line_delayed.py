@@ -14,7 +14,8 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops, product
-from synth.loop.poles.encirclement import delayed_stable, squared_on_axis
+from synth.loop.poles.crossing_count import squared_on_axis
+from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.gain_intervals import Interval, intervals_between, without_rounding
 from synth.loop.poles.roots import closed_roots
 

@@ -8,7 +8,7 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.poles.delayed import FARTHEST, NEAREST, delayed_poles
+from synth.loop.poles.delayed import FARTHEST, NEAREST, delayed_poles, proven_poles
 from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.far import far_damping
 from synth.loop.poles.roots import closed_roots, routh_stable
@@ -20,6 +20,9 @@ from synth.loop.quantities import Measure
 REACH = 5.0
 # ... and, without dead time, any pole whose share in the reference step is at least this.
 LEAST_SHARE = 0.02
+# With dead time a loop whose abscissa is within this of the axis, in units of 1/θ, has its roots counted
+# right of the axis itself.
+CLOSE = 1e-5
 
 
 @dataclass(frozen=True, slots=True)
@@ -230,15 +233,17 @@ def _without_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArra
 
 
 def _with_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray, FloatArray]:
-    open_poles = closed_roots(loops.denominator)
-    stable = delayed_stable(loops, open_poles)
     reach = NEAREST / loops.dead_time  # counting asks for more where it reaches further
-    poles = delayed_poles(loops, reach, open_poles)
+    poles, proven = proven_poles(loops, reach)
     abscissa = np.where(np.isnan(poles.real), -np.inf, poles.real).max(axis=1, initial=-np.inf)
     with np.errstate(divide="ignore", invalid="ignore"):
         chain = np.log(np.abs(loops.numerator[:, 0] / loops.denominator[:, 0])) / loops.dead_time
     abscissa = np.fmax(abscissa, chain)  # -inf where L(∞) = 0
-    stable &= abscissa < 0.0
+    # nothing lies right of the rightmost true root: its side is the verdict, but for one on the axis
+    stable = abscissa < 0.0
+    close = np.flatnonzero(~proven | ~(np.abs(abscissa) > CLOSE / loops.dead_time))
+    if close.size:
+        stable[close] &= delayed_stable(loops.rows(close))
     nothing = ~loops.numerator.any(axis=1)
     if nothing.any():  # L = 0: the roots of D, and no dead time in them
         stable[nothing] = routh_stable(loops.denominator[nothing])

@@ -6,12 +6,13 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from synth.loop.closed_loop import Rational, close
+from synth.loop.poles.crossing_count import count_by_crossings, squared_on_axis
 from synth.loop.poles.encirclement import (
+    _argument_change,
     chain_abscissa,
     delayed_stable,
     moved,
     roots_right_of,
-    squared_on_axis,
 )
 
 
@@ -102,6 +103,37 @@ def test_count_agrees_with_a_dense_contour(line):
     assert np.abs(expected - np.round(expected)).max() < 0.01
     assert np.array_equal(count, np.round(expected))
     assert len(np.unique(count)) > 2
+
+
+@pytest.mark.parametrize("order", [1, 2, 3, 6, 9])
+def test_crossings_with_the_growing_delay_give_the_count_of_the_argument(order):
+    # two ways to one number: the argument on the axis, and the roots met as the delay grows from 0
+    rng = np.random.default_rng(order)
+    m = 200
+    den = np.c_[np.ones(m), rng.normal(0.6, 1.0, (m, order))]
+    num = rng.normal(0.0, 1.0, (m, order + 1)) * np.r_[0.3, np.ones(order)]
+    loops = closed(num, den, np.exp(rng.uniform(-3.0, 3.0, m)))
+    use = np.flatnonzero(np.abs(loops.numerator[:, 0]) < loops.denominator[:, 0])
+    part = (loops.denominator[use], loops.numerator[use], loops.dead_time[use])
+    found = count_by_crossings(*part)
+    change, _ = _argument_change(*part)
+    assert np.array_equal(found, np.round(0.5 * order - change / np.pi))
+    assert len(np.unique(found)) > 3
+
+
+def test_what_rounding_could_decide_is_left_to_the_argument():
+    # s² + 1 has its roots on the axis without delay; s + 1 - 1 one at 0; 1/s at a quarter turn one at jω
+    delay = np.ones(1)
+    assert np.isnan(count_by_crossings(np.array([[1.0, 0.0, 0.0]]), np.array([[0.0, 0.0, 1.0]]), delay))
+    unsure = count_by_crossings(np.array([[1.0, 1.0]]), np.array([[0.0, -1.0]]), delay)
+    assert np.isnan(unsure)
+    quarter = count_by_crossings(np.array([[1.0, 0.0]]), np.array([[0.0, np.pi / 2]]), delay)
+    assert np.isnan(quarter)
+    # the delay pushes the double integrator's roots to the right, whatever its sign
+    assert roots_right_of(closed([[1.0], [-1.0]], [[1.0, 0.0, 0.0]] * 2, 1.0), np.zeros(2))[0].tolist() == [
+        2,
+        1,
+    ]
 
 
 def test_far_chain_right_of_the_line_is_infinitely_many():
