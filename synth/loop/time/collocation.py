@@ -143,9 +143,10 @@ def primitive_coefficients(values: FloatArray) -> FloatArray:
 
 def powers(x: FloatArray) -> FloatArray:
     """(14, E): the powers 0 to 13 of 2x - 1."""
-    out = np.ones((NODES + 1, len(x)))
-    out[1:] = 2.0 * x - 1.0
-    np.multiply.accumulate(out, axis=0, out=out)
+    out = np.empty((NODES + 1, len(x)))
+    out[0], out[1] = 1.0, 2.0 * x - 1.0
+    for k in range(2, NODES + 1):  # np.multiply.accumulate takes five times as long
+        np.multiply(out[k - 1], out[1], out=out[k])
     return out
 
 

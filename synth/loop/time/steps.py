@@ -8,6 +8,7 @@ too fast to resolve).
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -28,24 +29,10 @@ from synth.loop.time.collocation import (
 # The same matrices for six complex numbers seen as twelve real ones, real and imaginary parts in turn.
 _FROM_NODES = np.ascontiguousarray(FROM_NODES.T).view(float)
 _TO_NODES = np.stack([TO_NODES.real.T, -TO_NODES.imag.T], axis=1).reshape(2 * len(SPREAD), STAGES)
+_PARTS = 2 * len(SPREAD)
 
 # Cuts of a delay go no finer than 2^-this, kept up all along or behind a kink alone.
 COARSEST, FINEST = 8, 40
-
-
-@dataclass(frozen=True, slots=True)
-class March:
-    """Signals over successive delays of each loop, in own time τ: u at τ, and y and d one delay later, at τ +
-    θ.
-
-    begin   number of the first delay held
-    sizes   (P,) lengths of the panels of a delay, parts of θ
-    values  (M, K, P, S, 13) at the nodes of each panel; NaN beyond a loop's own number of delays
-    """
-
-    begin: int
-    sizes: FloatArray
-    values: FloatArray
 
 
 def ladder(fine: int, coarse: int, hold: int = 0) -> FloatArray:
@@ -64,58 +51,57 @@ def ladder(fine: int, coarse: int, hold: int = 0) -> FloatArray:
     return np.array(sizes)
 
 
-def march(
-    loops: Loops, numerators: FloatArray, delays: IntArray, fine: FloatArray, smooth: FloatArray, kinks: int
-) -> list[March]:
-    """Step responses over the first `delays` delays of each loop.
+@dataclass(slots=True)
+class Walk:
+    """M loops on their way from delay to delay, all cut alike, in own time τ: u at τ, y and d at τ + θ.
 
-    numerators : (M, S, n + 1), what is read off: N first (it closes the loop), then control or load or both.
-    delays : (M,) how many delays each loop is followed for, descending.
-    fine, smooth : (P,) panel lengths, parts of a delay, over the first `kinks` delays and after them. The
-    kink at each multiple of θ is the smoother the later, and in the end excites the fast poles no more.
-
-    The error e of a unit reference step drives all: y = (N/D) e and d = (load/D) e, a delay later, as P S =
-    P·S.
+    numerators (S, M, n + 1), what is read off: N first (it closes the loop), then control or load or both.
+    sizes (P,) lengths of the panels, parts of a delay.
+    drive (M, P, 13), the error e of a unit reference step over the coming delay, drives all: y = (N/D) e and
+    d = (load/D) e, a delay later, as P S = P·S. state (M, n) is the open loop's.
     """
-    most = int(delays.max(initial=0))
-    kinks = min(kinks, most)
-    state = np.zeros((len(loops), loops.order))
-    first = _leg(loops, numerators, delays, 0, kinks, fine, np.ones((len(loops), len(fine), NODES)), state)
-    if kinks == most:
-        return [first]
-    active = int(np.searchsorted(-delays, -kinks))
-    drive = np.ones((len(loops), len(smooth), NODES))
-    drive[:active] = 1.0 - _recut(first.values[:active, -1, :, 0], fine, smooth)
-    return [first, _leg(loops, numerators, delays, kinks, most, smooth, drive, state)]
+
+    loops: Loops
+    numerators: FloatArray
+    sizes: FloatArray
+    drive: FloatArray
+    state: FloatArray
+    _panels: _Panels
+
+    @classmethod
+    def start(cls, loops: Loops, numerators: FloatArray, sizes: FloatArray) -> Walk:
+        """At rest, when the reference steps."""
+        drive = np.ones((len(loops), len(sizes), NODES))
+        state = np.zeros((len(loops), loops.order))
+        return cls(loops, numerators, sizes, drive, state, _Panels.of(loops, numerators, sizes))
+
+    def over(self) -> FloatArray:
+        """Over one delay: the signals at the nodes of its panels, (S, M, P, 13)."""
+        out, self.state = self._panels.over(self.drive, self.state)
+        self.drive = 1.0 - out[0]
+        return out
+
+    def rows(self, index: IntArray) -> Walk:
+        """The loops named by `index` alone."""
+        return Walk(
+            self.loops.rows(index),
+            self.numerators[:, index],
+            self.sizes,
+            self.drive[index],
+            self.state[index],
+            self._panels.rows(index),
+        )
+
+    def cut(self, sizes: FloatArray) -> Walk:
+        """The same loops, cut otherwise from here on."""
+        if np.array_equal(sizes, self.sizes):
+            return self
+        drive = recut(self.drive, self.sizes, sizes)
+        panels = _Panels.of(self.loops, self.numerators, sizes)
+        return Walk(self.loops, self.numerators, sizes, drive, self.state, panels)
 
 
-def _leg(
-    loops: Loops,
-    numerators: FloatArray,
-    delays: IntArray,
-    begin: int,
-    end: int,
-    sizes: FloatArray,
-    drive: FloatArray,
-    state: FloatArray,
-) -> March:
-    """Delays begin .. end - 1 with one cutting. drive (M, P, 13) is e over the first of them; state moves
-    on."""
-    most = int(np.searchsorted(-delays, -begin))
-    kinds, which = np.unique(sizes, return_inverse=True)
-    some = loops.rows(np.arange(most))
-    panels = [_Panel.of(some, numerators[:most], kind * some.dead_time) for kind in kinds]
-    values = np.full((len(loops), end - begin, len(sizes), numerators.shape[1], NODES), np.nan)
-    for k in range(begin, end):
-        active = int(np.searchsorted(-delays, -k))  # loops followed for more than k delays
-        here = [panel.rows(active) for panel in panels]
-        for i in range(len(sizes)):
-            given = drive[:active, i] if k == begin else 1.0 - values[:active, k - begin - 1, i, 0]
-            values[:active, k - begin, i], state[:active] = here[which[i]].over(given, state[:active])
-    return March(begin, sizes, values)
-
-
-def _recut(values: FloatArray, old: FloatArray, new: FloatArray) -> FloatArray:
+def recut(values: FloatArray, old: FloatArray, new: FloatArray) -> FloatArray:
     """A signal over one delay, (M, P, 13) on panels `old`, at the nodes of panels `new`, (M, P', 13)."""
     edges = np.concatenate([[0.0], np.cumsum(old)])
     out = np.empty((len(values), len(new), NODES))
@@ -133,20 +119,21 @@ def _recut(values: FloatArray, old: FloatArray, new: FloatArray) -> FloatArray:
 
 
 @dataclass(frozen=True, slots=True)
-class _Panel:
-    """The open loop over one panel of a length of its own for each loop.
+class _Panels:
+    """The open loop over the panels of a delay.
 
     States are ξ and its first n - 1 derivatives, D ξ = e. The stages of the Radau method are a rational
     function of the fixed integration matrix; in its eigenvectors the open loop is met at six complex points σ
     = length·SPREAD alone: the stages of ξ^(n) are (e - 1 Σ α_i ξ^(i)(0)) / α_n with α_i = Σ_{k<=i} a_k
     σ^(i-k), and every output follows by the like sums γ of its own numerator. What is particular to a loop is
-    small; the large products are with matrices that all loops share.
+    small; the large products are with matrices that all loops share. P is 1 here where all panels are alike.
 
-    inverse   (M, 6) 1/α_n
-    gamma     (M, S, 6)
-    direct    (M, S) what passes at once is kept exact: v = c_n e + Σ (c_k - c_n a_k) ξ^(k)
-    of_state  (M, 12 + S n + n, n): the state's part in the stages, the outputs and the state at the end
-    to_state  (M, n, 12): the stages' part in the state at the end
+    inverse   (M, P, 6) 1/α_n
+    gamma     (S, M, P, 6)
+    direct    (S, M) what passes at once is kept exact: v = c_n e + Σ (c_k - c_n a_k) ξ^(k)
+    of_state  (M, P, n, 12 + S n): the state's part in the stages, and in the outputs' free polynomials
+    of_stages (M, P, n, 12): the stages' part in the state at the end
+    carry     (M, P, n, n): the state's part in it, its way through the stages included
     shared    (12 + n, 13): stages and free polynomials to the nodes
     """
 
@@ -154,82 +141,108 @@ class _Panel:
     gamma: ComplexArray
     direct: FloatArray
     of_state: FloatArray
-    to_state: FloatArray
+    of_stages: FloatArray
+    carry: FloatArray
     shared: FloatArray
 
     @classmethod
-    def of(cls, loops: Loops, numerators: FloatArray, length: FloatArray) -> _Panel:
-        """numerators (M, S, n + 1); length (M,)."""
-        rows, n, signals = len(loops), loops.order, numerators.shape[1]
+    def of(cls, loops: Loops, numerators: FloatArray, sizes: FloatArray) -> _Panels:
+        """numerators (S, M, n + 1); sizes (P,)."""
+        kinds, which = np.unique(sizes, return_inverse=True)
+        length = loops.dead_time[:, None] * kinds
+        (rows, n), signals, many = (len(loops), loops.order), len(numerators), len(kinds)
         lead = loops.denominator[:, :1]
-        a = (loops.denominator / lead)[:, ::-1]
-        c = (numerators / lead[:, :, None])[:, :, ::-1]
+        a = (loops.denominator / lead)[:, ::-1, None, None]
+        c = (numerators / lead)[:, :, ::-1]
         direct = c[:, :, n].copy()
-        c = c - direct[:, :, None] * a[:, None, :]
+        c = c - direct[:, :, None] * a[:, :, 0, 0]
         c[:, :, n] = 0.0
-        sigma = length[:, None] * SPREAD
-        alpha = [total[:, 0] for total in _sums(a[:, None, :], sigma)]
-        gamma = _sums(c, sigma)[n]
+        sigma = length[:, :, None] * SPREAD
+        alpha = list(_sums(a.swapaxes(0, 1), sigma))
+        *_, gamma = _sums(np.moveaxis(c, 2, 0)[..., None, None], sigma)
         inverse = 1.0 / alpha[n]
-        of_state = np.zeros((rows, 2 * len(SPREAD) + signals * n + n, n))
-        to_state = np.empty((rows, n, 2 * len(SPREAD)))
+        of_state = np.zeros((rows, many, n, _PARTS + signals * n))
+        of_stages = np.empty((rows, many, n, len(SPREAD)), dtype=complex)
+        carry = np.zeros((rows, many, n, n))
+        stages = of_state[..., :_PARTS]
+        free = of_state[..., _PARTS:].reshape(rows, many, n, signals, n)
+        by_row = c.swapaxes(0, 1)[:, None]
         ones = FROM_NODES.sum(axis=1)
-        free = of_state[:, 12 : 12 + signals * n].reshape(rows, signals, n, n)
-        last = of_state[:, 12 + signals * n :]
-        taylor = np.ones(rows)  # length^i / i!
+        end = np.conj(TO_NODES[-1]) * np.conj(sigma)
+        taylor = np.ones((rows, many))  # length^i / i!
         for i in range(n):
-            stage = ones * alpha[i] * inverse
-            of_state[:, 0:12:2, i], of_state[:, 1:12:2, i] = stage.real, stage.imag
-            end = TO_NODES[-1] * sigma ** (n - i)
-            to_state[:, i, 0::2], to_state[:, i, 1::2] = end.real, -end.imag
+            stages[:, :, i] = (ones * alpha[i] * inverse).view(float)
+            of_stages[:, :, n - 1 - i] = end
+            end = end * np.conj(sigma)
             # free polynomials: Σ_{k<=j} c_k τ^(j-k)/(j-k)! read off, τ^(j-k)/(j-k)! in the states themselves
-            free[:, :, i, i:] = c[:, :, : n - i] * taylor[:, None, None]
+            free[:, :, i:, :, i] = (by_row[..., : n - i] * taylor[:, :, None, None]).swapaxes(2, 3)
             for k in range(n - i):
-                last[:, k, k + i] = taylor
+                carry[:, :, k + i, k] = taylor
             taylor = taylor * length / (i + 1)
-        shared = np.zeros((12 + n, NODES))
-        shared[:12, 1:] = _TO_NODES
-        shared[12:] = GRID ** np.arange(n)[:, None]
-        return cls(inverse, gamma, direct, of_state, to_state, shared)
+        to_end = of_stages.view(float)
+        carry -= stages @ to_end.swapaxes(2, 3)
+        shared = np.zeros((_PARTS + n, NODES))
+        shared[:_PARTS, 1:] = _TO_NODES
+        shared[_PARTS:] = GRID ** np.arange(n)[:, None]
+        found = cls(inverse, gamma, direct, of_state, to_end, carry, shared)
+        return found if many == 1 else found._of_panels(which)
 
-    def rows(self, count: int) -> _Panel:
-        """The first so many loops."""
-        if count == len(self.inverse):
-            return self
-        return _Panel(
-            self.inverse[:count],
-            self.gamma[:count],
-            self.direct[:count],
-            self.of_state[:count],
-            self.to_state[:count],
+    def _of_panels(self, which: IntArray) -> _Panels:
+        """Every panel by itself, (P,) numbers of kinds."""
+        return _Panels(
+            self.inverse[:, which],
+            self.gamma[:, :, which],
+            self.direct,
+            self.of_state[:, which],
+            self.of_stages[:, which],
+            self.carry[:, which],
+            self.shared,
+        )
+
+    def rows(self, index: IntArray) -> _Panels:
+        """The loops named by `index`."""
+        return _Panels(
+            self.inverse[index],
+            self.gamma[:, index],
+            self.direct[:, index],
+            self.of_state[index],
+            self.of_stages[index],
+            self.carry[index],
             self.shared,
         )
 
     def over(self, drive: FloatArray, state: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Outputs (M, S, 13) at the nodes and states (M, n) at the end; drive (M, 13) is e."""
-        rows, n = state.shape
-        signals = self.direct.shape[1]
-        own = (self.of_state @ state[:, :, None])[:, :, 0]
-        stages = (drive[:, 1:] @ _FROM_NODES).view(complex) * self.inverse
-        stages -= np.ascontiguousarray(own[:, :12]).view(complex)
-        both = np.empty((rows, signals, 12 + n))
-        both[:, :, :12] = (self.gamma * stages[:, None, :]).view(float)
-        both[:, :, 12:] = own[:, 12 : 12 + signals * n].reshape(rows, signals, n)
-        out = (both.reshape(-1, 12 + n) @ self.shared).reshape(rows, signals, NODES)
+        """Outputs (S, M, P, 13) at the nodes and states (M, n) at the end; drive (M, P, 13) is e.
+
+        From panel to panel only the state is handed on; all else is done for the whole delay at once.
+        """
+        (rows, count), n, signals = drive.shape[:2], state.shape[1], len(self.direct)
+        stages = (drive[:, :, 1:] @ _FROM_NODES).view(complex) * self.inverse
+        push = (self.of_stages @ stages.view(float)[..., None])[..., 0]
+        begin = np.empty((rows, count, 1, n))
+        state = state[:, None, :]
+        for i in range(count):
+            begin[:, i] = state
+            state = state @ self.carry[:, i if self.carry.shape[1] > 1 else 0]
+            state += push[:, i, None]
+        own = (begin @ self.of_state)[:, :, 0]
+        stages -= np.ascontiguousarray(own[..., :_PARTS]).view(complex)
+        both = np.empty((signals, rows, count, _PARTS + n))
+        both[..., :_PARTS] = (self.gamma * stages).view(float)
+        both[..., _PARTS:] = np.moveaxis(own[..., _PARTS:].reshape(rows, count, signals, n), 2, 0)
+        out = (both.reshape(-1, _PARTS + n) @ self.shared).reshape(signals, rows, count, NODES)
         if self.direct.any():
-            out += self.direct[:, :, None] * drive[:, None, :]
-        end: FloatArray = (self.to_state @ stages.view(float)[:, :, None])[:, :, 0]
-        return out, end + own[:, 12 + signals * n :]
+            out += self.direct[:, :, None, None] * drive
+        return out, state[:, 0]
 
 
-def _sums(coefficients: FloatArray, sigma: ComplexArray) -> list[ComplexArray]:
-    """Σ_{k<=i} c_k σ^(i-k) for i = 0 .. n. (M, S, n + 1) ascending, (M, 6) -> n + 1 arrays (M, S, 6)."""
-    total = np.repeat(coefficients[:, :, :1].astype(complex), sigma.shape[1], axis=2)
-    out = [total]
-    for i in range(1, coefficients.shape[2]):
-        total = total * sigma[:, None, :] + coefficients[:, :, i, None]
-        out.append(total)
-    return out
+def _sums(coefficients: FloatArray, sigma: ComplexArray) -> Iterator[ComplexArray]:
+    """Σ_{k<=i} c_k σ^(i-k) for i = 0 .. n. (n + 1, ..., M, 1, 1) ascending, (M, P, 6) -> (..., M, P, 6)."""
+    total = coefficients[0] + np.zeros_like(sigma)
+    yield total
+    for one in coefficients[1:]:
+        total = total * sigma + one
+        yield total
 
 
 def resolution(

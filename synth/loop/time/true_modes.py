@@ -19,6 +19,8 @@ from synth.loop.time.collocation import GRID, NODES
 FINE = 1e-10
 # A mode below this part of the unit is left out of the cutting of panels.
 GONE = 1e-13
+# Panels made at once: few enough to stay in the cache of a core.
+BLOCK = 512
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,7 +49,7 @@ class TrueModes:
 def true_modes(loops: Loops, numerators: FloatArray, poles: ComplexArray) -> TrueModes:
     """Residues at simple roots: numerator(p) / (p Δ'(p)).
 
-    numerators : (M, S, n + 1); poles : (M, q) NaN padded, pairs complete. A double root has no such residue:
+    numerators : (S, M, n + 1); poles : (M, q) NaN padded, pairs complete. A double root has no such residue:
     the caller compares the sum with the marched response and sees that it does not fit.
     """
     if poles.shape[1] == 0:  # a static loop of nothing: one mode without a residue stands in
@@ -61,10 +63,10 @@ def true_modes(loops: Loops, numerators: FloatArray, poles: ComplexArray) -> Tru
     with np.errstate(all="ignore"):
         _, slope = characteristic(loops, safe)
         weight = np.where(safe.imag > 0.0, 2.0, 1.0) / (safe * slope)
-        parts = [horner(numerators[:, s], safe) * weight for s in range(numerators.shape[1])]
+        parts = [horner(one, safe) * weight for one in numerators]
         residue = np.stack(parts, axis=1)
         residue = np.where(there[:, None, :] & np.isfinite(residue), residue, 0.0)
-        final = numerators[:, :, -1] / (loops.denominator[:, -1] + loops.numerator[:, -1])[:, None]
+        final = (numerators[:, :, -1] / (loops.denominator[:, -1] + loops.numerator[:, -1])).T
     return TrueModes(np.where(there, pole, -1.0 / loops.dead_time[:, None]), residue, final)
 
 
@@ -91,52 +93,84 @@ def alone_from(modes: TrueModes, unit: FloatArray, fine: float) -> FloatArray:
     return out
 
 
+def geometric(first: ComplexArray, ratio: ComplexArray, count: int) -> ComplexArray:
+    """first · ratio^k for k = 0 .. count - 1: (M, q) -> (M, count, q), by doubling."""
+    out = np.empty((len(first), count, first.shape[1]), dtype=complex)
+    out[:, 0] = first
+    done, step = 1, ratio
+    while done < count:
+        more = min(done, count - done)
+        np.multiply(out[:, :more], step[:, None], out=out[:, done : done + more])
+        done, step = done + more, step * step
+    return out
+
+
+@dataclass(frozen=True, slots=True)
+class LatePanels:
+    """Panels of late responses in order of loop and time: owner, start, length, level (B,); the length is
+    base (M,) times 2^level."""
+
+    owner: IntArray
+    start: FloatArray
+    length: FloatArray
+    level: IntArray
+    base: FloatArray
+
+
 def late_panels(
     modes: TrueModes, unit: FloatArray, start: FloatArray, end: FloatArray, most: int
-) -> tuple[IntArray, FloatArray, FloatArray, FloatArray]:
-    """Panels of the modes' sum from `start` to `end` (M,), at most `most` to a loop.
+) -> LatePanels:
+    """Panels for the modes' sum from `start` to `end` (M,), at most `most` to a loop.
 
-    Returns owner (B,), start (B,), length (B,) and values (B, S, 13), in order of loop and time. Lengths are
-    powers of two of the shortest of the loop, so a loop needs few tables of exponentials.
+    A mode A e^(pτ) is a polynomial of degree 12 on a panel of length h to 2 (abs(p) h / 4)^13 / 13! of its
+    size: h may grow by e^(abs(Re p) τ / 13) until the mode is gone. Lengths are powers of two of the first,
+    so a loop needs few tables of exponentials.
     """
-    rate = np.abs(modes.pole)
-    first = 2.0 ** np.floor(np.log2(2.0 / rate.max(axis=1)))
-    time, active = start.copy(), np.flatnonzero(end > start)
-    step = np.zeros(len(start), dtype=np.intp)
-    owners, starts, powers = [], [], []
-    relative = np.abs(modes.residue) / np.maximum(unit, 1e-300)[:, :, None]
-    size = relative.max(axis=1)
-    for _ in range(most):
-        if active.size == 0:
-            break
-        left = size[active] * np.exp(modes.pole[active].real * time[active, None])
-        # 2 (z/2)^13 / 13! of the mode is the interpolation error with z = abs(p) h / 2
-        with np.errstate(divide="ignore", over="ignore"):
-            reach = 4.0 * (FINE * 3.1e9 / left) ** (1.0 / 13.0) / rate[active]
-        h = np.where(left > GONE, reach, np.inf).min(axis=1)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            power = np.floor(np.log2(h / first[active]))
-        power = np.clip(power, 0.0, step[active] + 1.0)
-        step[active] = power.astype(np.intp)
-        owners.append(active)
-        starts.append(time[active])
-        powers.append(step[active])
-        time[active] += first[active] * 2.0 ** step[active]
-        active = active[time[active] < end[active]]
-    if not owners:
-        empty = np.zeros(0)
-        return np.zeros(0, dtype=np.intp), empty, empty, np.zeros((0, modes.residue.shape[1], NODES))
-    owner, begin, kind = np.concatenate(owners), np.concatenate(starts), np.concatenate(powers)
-    order = np.lexsort((begin, owner))
-    owner, begin, kind = owner[order], begin[order], kind[order]
-    values = np.empty((len(owner), modes.residue.shape[1], NODES))
-    table, level = np.exp(modes.pole[:, :, None] * (first[:, None, None] * GRID)), 0
-    for one in range(int(kind.max()) + 1):
-        at = np.flatnonzero(kind == one)
-        while level < one:
-            table, level = table * table, level + 1
-        if at.size:
-            who = owner[at]
-            weight = modes.residue[who] * np.exp(modes.pole[who] * begin[at, None])[:, None, :]
-            values[at] = (weight @ table[who]).real + modes.final[who][:, :, None]
-    return owner, begin, first[owner] * 2.0**kind, values
+    rate, fall = np.abs(modes.pole), -modes.pole.real / NODES
+    size = (np.abs(modes.residue) / np.maximum(unit, 1e-300)[:, :, None]).max(axis=1)
+    with np.errstate(all="ignore"):
+        # logs of the length allowed at τ = 0, and the time from which the mode is gone
+        reach = np.log(4.0 * (FINE * 3.1e9 / size) ** (1.0 / NODES) / rate)
+        gone = np.where(size > GONE, np.log(size / GONE), -np.inf) / (NODES * fall)
+        begin = np.where(gone > start[:, None], reach + fall * start[:, None], np.inf).min(axis=1)
+        base = np.minimum(np.exp(begin), end - start)
+        levels = int(np.ceil(np.log2(((end - start) / base).clip(max=1e18).max(initial=1.0)))) + 1
+        step = base[:, None] * 2.0 ** np.arange(levels)
+        # from when on every mode allows a level
+        allowed = (np.log(step)[:, :, None] - reach[:, None]) / fall[:, None]
+        allowed = np.minimum(allowed, gone[:, None]).max(axis=2)
+    until = np.minimum(np.append(allowed[:, 1:], end[:, None], axis=1), end[:, None])
+    until[:, -1] = end
+    count = np.empty((len(start), levels), dtype=np.intp)
+    first = np.empty((len(start), levels))
+    time, room = start.copy(), np.full(len(start), most)
+    for k in range(levels):
+        first[:, k] = time
+        count[:, k] = np.clip(np.ceil((until[:, k] - time) / step[:, k]), 0, room)
+        time, room = time + count[:, k] * step[:, k], room - count[:, k]
+    flat = count.ravel()
+    which = np.repeat(np.arange(len(flat)), flat)
+    within = np.arange(len(which)) - np.repeat(np.cumsum(flat) - flat, flat)
+    length = step.ravel()[which]
+    owner, level = np.divmod(which, levels)
+    return LatePanels(owner, first.ravel()[which] + within * length, length, level, base)
+
+
+def fill(modes: TrueModes, panels: LatePanels, out: FloatArray, place: IntArray) -> None:
+    """The signals on late panels, written to the panels `place` (B,) of out (S, B', 13)."""
+    # Re Σ weight · exponential as one real product: the weights and the conjugate exponentials, seen as real
+    exponent = np.conj(modes.pole) * panels.base[:, None]
+    table, level = np.exp(exponent[:, None, :] * GRID[:, None]), 0
+    for one in range(int(panels.level.max(initial=-1)) + 1):
+        same = np.flatnonzero(panels.level == one)
+        while same.size and level < one:
+            np.multiply(table, table, out=table)
+            level += 1
+        for begin in range(0, same.size, BLOCK):
+            at = same[begin : begin + BLOCK]
+            who = panels.owner[at]
+            growth = np.exp(modes.pole[who] * panels.start[at, None])
+            weight = (modes.residue[who] * growth[:, None]).view(float)
+            found = weight @ table.view(float)[who].swapaxes(1, 2)
+            found += modes.final[who][:, :, None]
+            out[:, place[at]] = found.swapaxes(0, 1)

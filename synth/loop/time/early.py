@@ -1,0 +1,211 @@
+"""Early responses of loops with dead time: marched delay by delay until the true modes meet them, or rest.
+
+M loops, S signals. Own time τ: u at τ, y and d one delay later.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.closed_loop import Loops
+from synth.loop.poles.roots import closed_roots
+from synth.loop.time.collocation import NODES, TO_CHEBYSHEV, value_matrix
+from synth.loop.time.steps import Walk, ladder, lasting_kinks, resolution
+from synth.loop.time.true_modes import TrueModes, geometric
+
+# The most delays that are ever marched, and the most panels of one loop; what is not decided by then is
+# flagged.
+MOST_DELAYS, MOST_PANELS = 1536, 6144
+# Delays marched before the modes are tried: sooner they hardly ever meet.
+SOONEST = 3
+# Places of a delay at which the modes are compared with what was marched: the modes that are left out turn
+# faster than those that are kept, but eight times a delay only where they have died.
+PLACES = 24
+# The modes are trusted where they meet the marched response over a whole delay to this part of its unit.
+AGREES = 3e-9
+# A response has come to rest, and modes have died, at this part of the unit.
+DEAD = 3e-10
+# Last Chebyshev coefficients above this part of the largest value: the panels are cut finer.
+RESOLVED = 3e-9
+# Delays that most loops are done with: before it new panels are not worth their making.
+WORTH = 8
+# The most panels of a delay, of all loops together, that are carried at once: 25 MB of matrices.
+ROOM = 8192
+
+# Values of a panel to its last two Chebyshev coefficients and its values at both ends.
+_ENDS = np.concatenate([TO_CHEBYSHEV[:, -2:], np.eye(NODES)[:, [0, -1]]], axis=1)
+
+
+@dataclass(frozen=True, slots=True)
+class Piece:
+    """One delay of some loops: the numbers of the loops (m,), of the delay, the panels' lengths (P,) as parts
+    of the delay, and values (S, m, P, 13)."""
+
+    rows: IntArray
+    delay: int
+    sizes: FloatArray
+    values: FloatArray
+
+
+@dataclass(slots=True)
+class Early:
+    """Pieces in order of time, how many delays each loop was followed for (M,), and whether the modes met it
+    in the last one, or it had come to rest."""
+
+    delays: IntArray
+    meets: BoolArray
+    quiet: BoolArray
+    pieces: list[Piece] = field(default_factory=list)
+
+
+def early_response(loops: Loops, numerators: FloatArray, modes: TrueModes, unit: FloatArray) -> Early:
+    """The response of each loop until its modes can take over.
+
+    numerators (S, M, n + 1), N first; unit (M, S) is what errors are relative to.
+    """
+    rows = len(loops)
+    out = Early(np.zeros(rows, dtype=np.intp), np.zeros(rows, dtype=bool), np.zeros(rows, dtype=bool))
+    open_poles = closed_roots(loops.denominator)
+    fine, coarse, hold = resolution(loops, open_poles, modes.pole)
+    kinks = lasting_kinks(loops, open_poles, coarse)
+    least = _jumping_delays(loops)
+    todo, finer = np.arange(rows), 0
+    while todo.size:
+        again = []
+        for at in _classes(todo, fine, coarse, hold):
+            even = int(coarse[at].max())
+            cut, smooth = ladder(int(fine[at].max()), even, int(hold[at].max())), ladder(even, even)
+            walk = Walk.start(loops.rows(at), numerators[:, at], cut)
+            meeting = _Meeting(modes.rows(at), unit[at], loops.dead_time[at])
+            refine = finer < 3 and len(cut) < MOST_PANELS // 16
+            again.append(_walk(out, at, walk, meeting, smooth, int(kinks[at].max()), least[at], refine))
+        todo, finer = np.concatenate(again), finer + 1
+        fine[todo] += 1
+        coarse[todo] += 1
+        kinks[todo] *= 2.0
+    return out
+
+
+def _walk(
+    out: Early,
+    at: IntArray,
+    walk: Walk,
+    meeting: _Meeting,
+    smooth: FloatArray,
+    kinks: int,
+    least: FloatArray,
+    refine: bool,
+) -> IntArray:
+    """March the loops `at` and write them to `out`; returns those that need finer panels instead."""
+    left, k, due = np.arange(len(at)), 0, SOONEST
+    longest = min(MOST_DELAYS, max(MOST_PANELS // len(walk.sizes), 2))
+    ends = np.zeros((len(walk.numerators), len(at), 4))
+    rough, pieces = np.zeros(len(at), dtype=bool), []
+    while left.size:
+        values = walk.over()
+        pieces.append(Piece(left, k, walk.sizes, values))
+        ends[:, left] = np.fmax(ends[:, left], _ends(values))
+        sizes = walk.sizes
+        k += 1
+        if k == max(kinks, WORTH):
+            walk = walk.cut(smooth)
+        if k < min(due, longest):
+            continue
+        due = k + 1 + k // 8
+        if refine:
+            last, size = ends[:, left, :2].max(axis=2), ends[:, left, 2:].max(axis=2)
+            rough[left] = (last > RESOLVED * size).any(axis=0)
+        meets = meeting.met(left, k, sizes, values) & (k >= least[left])
+        quiet = np.zeros_like(meets)
+        quiet[~meets] = meeting.at_rest(left[~meets], values[:, ~meets])
+        done = meets | quiet | rough[left] | (k >= longest)
+        ready = left[done]
+        out.delays[at[ready]], out.meets[at[ready]], out.quiet[at[ready]] = k, meets[done], quiet[done]
+        if done.any():
+            left = left[~done]
+            walk = walk.rows(np.flatnonzero(~done))
+    for piece in pieces:
+        good = ~rough[piece.rows]
+        values = piece.values if good.all() else piece.values[:, good]
+        out.pieces.append(Piece(at[piece.rows[good]], piece.delay, piece.sizes, values))
+    return at[rough]
+
+
+def _ends(values: FloatArray) -> FloatArray:
+    """The largest over all panels of the last two Chebyshev coefficients and the values at both ends.
+    (S, m, P, 13) -> (S, m, 4)."""
+    # one product for all panels: numpy would make a call for each of many small ones
+    found = np.abs(values.reshape(-1, NODES) @ _ENDS).reshape(*values.shape[:-1], 4)
+    out: FloatArray = np.fmax.reduce(found, axis=2)
+    return out
+
+
+class _Meeting:
+    """Where the modes (M) meet what was marched."""
+
+    def __init__(self, modes: TrueModes, unit: FloatArray, delay: FloatArray) -> None:
+        self.modes, self.unit = modes, np.maximum(unit, 1e-300)
+        self.turn = modes.pole * delay[:, None]
+        step = np.conj(self.turn) / PLACES  # conjugate as in true_modes.fill
+        self.table = geometric(np.exp(0.5 * step), np.exp(step), PLACES).view(float)
+        self.place = (np.arange(PLACES) + 0.5) / PLACES
+        self.matrices: dict[int, FloatArray] = {}
+
+    def met(self, rows: IntArray, delays: int, sizes: FloatArray, values: FloatArray) -> BoolArray:
+        """Whether the modes agree with values (S, m, P, 13), the last of so many delays. (m,).
+
+        What the modes leave out is itself a response of the loop, as small later as it is over one whole
+        delay.
+        """
+        signals, m, panels, _ = values.shape
+        if panels not in self.matrices:
+            self.matrices[panels] = _at_places(sizes, self.place)
+        marched = values.reshape(signals * m, panels * NODES) @ self.matrices[panels]
+        growth = np.exp(self.turn[rows] * (delays - 1.0))
+        weight = (self.modes.residue[rows] * growth[:, None]).view(float)
+        found = weight @ self.table[rows].swapaxes(1, 2) + self.modes.final[rows, :, None]
+        apart = np.abs(marched.reshape(signals, m, PLACES).swapaxes(0, 1) - found).max(axis=2)
+        out: BoolArray = (apart <= AGREES * self.unit[rows]).all(axis=1)  # not where it is no number
+        return out
+
+    def at_rest(self, rows: IntArray, values: FloatArray) -> BoolArray:
+        """Whether values (S, m, P, 13) have come to rest: a stable loop at rest over one whole delay stays
+        so."""
+        off = np.abs(values - self.modes.final[rows].T[:, :, None, None]).max(axis=(2, 3))
+        out: BoolArray = (off <= DEAD * self.unit[rows].T).all(axis=0)
+        return out
+
+
+def _at_places(sizes: FloatArray, places: FloatArray) -> FloatArray:
+    """(13 P, places): values on all panels of a delay to those at `places`, parts of the delay."""
+    begin = np.cumsum(sizes) - sizes
+    panel = np.searchsorted(begin, places, side="right") - 1
+    out = np.zeros((len(sizes), NODES, len(places)))
+    out[panel, :, np.arange(len(places))] = value_matrix((places - begin[panel]) / sizes[panel]).T
+    return out.reshape(len(sizes) * NODES, len(places))
+
+
+def _jumping_delays(loops: Loops) -> FloatArray:
+    """Delays after which jumps, each abs(N/D) at infinity times the last, have died. (M,)."""
+    with np.errstate(all="ignore"):
+        ratio = np.abs(loops.numerator[:, 0] / loops.denominator[:, 0])
+        out: FloatArray = np.ceil(23.0 / -np.log(np.clip(ratio, 1e-6, 0.985)))
+    return out
+
+
+def _classes(todo: IntArray, fine: IntArray, coarse: IntArray, hold: IntArray) -> list[IntArray]:
+    """Rows that are marched together: the same panels, and no more at once than there is room for."""
+    out = []
+    if len(todo) <= 300:  # one fine cut for all costs less than many calls
+        key = np.where(coarse[todo] > 1, coarse[todo], 0) * 100 + np.minimum((fine[todo] + 2) // 3, 3)
+        key += 10 * hold[todo]
+    else:
+        key = (hold[todo] * 100 + coarse[todo]) * 100 + fine[todo]
+    for one in np.unique(key):
+        at = todo[key == one]
+        panels = len(ladder(int(fine[at].max()), int(coarse[at].max()), int(hold[at].max())))
+        out += np.array_split(at, -(-len(at) * panels // ROOM))
+    return out
