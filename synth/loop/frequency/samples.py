@@ -164,7 +164,7 @@ def humps(
     """
     with np.errstate(divide="ignore", invalid="ignore"):
         inverse = s.closed / top
-    floor = np.minimum(np.nanmin(inverse, axis=0), np.maximum(best, 1e-150) ** -2.0)  # P = 0: best is 0
+    floor = np.fmin(np.fmin.reduce(inverse, axis=0), np.maximum(best, 1e-150) ** -2.0)  # P = 0: best is 0
     low, middle, high = inverse[:-2], inverse[1:-1], inverse[2:]
     local = (middle <= low) & (middle < high) & (middle <= floor * _NEAR)
     # |Δ|² less the share of |P|² that would equal the best: smooth even where |P| nearly vanishes near a peak

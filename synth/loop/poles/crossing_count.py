@@ -11,7 +11,9 @@ from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.frequency.isolation import Brackets, isolate
 
 # Turns and rad within which a crossing is too near to the delay at hand, or to none, to be told by rounding.
-CLOSE = 1e-6
+CLOSE = 1e-8
+# Relative error of a crossing frequency, squared, that goes with it.
+SETTLED = 1e-10
 # Rounding of an entry of Routh's array in units of the terms it is a difference of; some twenty times what
 # was seen.
 NOISE = 1e-14
@@ -32,7 +34,8 @@ def count_by_crossings(denominator: FloatArray, numerator: FloatArray, delay: Fl
     ascending = np.ascontiguousarray(squares[:, ::-1].T)
     brackets = isolate(ascending)
     row = brackets.row
-    w = np.sqrt(_bracketed(ascending[:, row], brackets))
+    x, off = _bracketed(ascending[:, row], brackets)
+    w = np.sqrt(x)
     above, below = _on_axis(numerator, row, w), _on_axis(denominator, row, w)
     angle = np.mod(np.angle(-above / below), 2.0 * np.pi)
     turns = (w * delay[row] - angle) / (2.0 * np.pi)
@@ -41,7 +44,7 @@ def count_by_crossings(denominator: FloatArray, numerator: FloatArray, delay: Fl
     np.add.at(count, row, np.where(brackets.negative, 2.0, -2.0) * times)
     near = np.minimum(angle, 2.0 * np.pi - angle) < CLOSE
     near |= np.abs(turns - np.round(turns)) < CLOSE * (1.0 + np.abs(turns))
-    sure[row[near | ~np.isfinite(turns)]] = False
+    sure[row[near | ~(off < SETTLED) | ~np.isfinite(turns)]] = False
     # isolation takes two roots in one place for none, and no sum of crossings is negative
     return np.where(sure & (count >= 0.0), count, np.nan)
 
@@ -60,9 +63,9 @@ def squared_on_axis(polynomials: FloatArray) -> FloatArray:
     return out[::-1].T
 
 
-def _bracketed(polynomials: FloatArray, brackets: Brackets) -> FloatArray:
-    """The root in each bracket, (F,), by Newton's method kept inside it. polynomials : (n + 1, F),
-    ascending."""
+def _bracketed(polynomials: FloatArray, brackets: Brackets) -> tuple[FloatArray, FloatArray]:
+    """The root in each bracket, (F,), by Newton's method kept inside it, and the relative error that rounding
+    may leave. polynomials : (n + 1, F), ascending."""
     low, high = brackets.low, brackets.high
     x = 0.5 * (low + high)
     for _ in range(60):
@@ -80,7 +83,11 @@ def _bracketed(polynomials: FloatArray, brackets: Brackets) -> FloatArray:
         x = new
         if done.all():
             break
-    return x
+    size = np.zeros_like(x)
+    for one in polynomials[::-1]:
+        size *= x
+        size += np.abs(one)
+    return x, 4.0 * np.finfo(float).eps * len(polynomials) * size / np.abs(slope * x)
 
 
 def _on_axis(polynomials: FloatArray, row: IntArray, w: FloatArray) -> ComplexArray:

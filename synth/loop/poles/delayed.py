@@ -6,8 +6,6 @@ chain of far roots beyond; every root returned solves the transcendental equatio
 
 from __future__ import annotations
 
-from math import comb, factorial
-
 import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
@@ -19,10 +17,10 @@ from synth.loop.poles.encirclement import (
     roots_right_of,
     unit_crossings,
 )
-from synth.loop.poles.newton import by_newton, upper_half
-from synth.loop.poles.roots import closed_roots
+from synth.loop.poles.newton import by_newton, characteristic, upper_half
+from synth.loop.poles.seeds import seeds_of
 from synth.loop.poles.winding import missing_roots
-from synth.loop.polynomials import horner, horner_slope, magnitude_sum
+from synth.loop.polynomials import magnitude_sum
 
 __all__ = ["characteristic", "delayed_poles", "delayed_stable"]
 
@@ -31,8 +29,6 @@ NEAREST = 7.0
 # Radius, in units of 1/θ, beyond which no roots are returned: the chain has long settled on its asymptote
 # there, and its damping is read from `far`.
 FARTHEST = 400.0
-# Order of the rational stand-in of the delay whose roots are the near seeds.
-STAND_IN = 3
 # So many of the rightmost are returned however far out they lie.
 RIGHTMOST = 6
 # Rows up to which a call is dearer than the numbers in it.
@@ -90,18 +86,9 @@ def proven_poles(loops: Loops, reach: FloatArray) -> tuple[ComplexArray, BoolArr
     return _trimmed(found, asked), proven
 
 
-def characteristic(loops: Loops, s: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
-    """Δ = D + N e^(-s θ) and dΔ/ds at each row's points, (M, q) twice."""
-    d, slope_d = horner_slope(loops.denominator, s)
-    n, slope_n = horner_slope(loops.numerator, s)
-    delay = loops.dead_time[:, None]
-    late = np.exp(-s * delay)
-    return d + n * late, slope_d + (slope_n - delay * n) * late
-
-
 def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
     """All roots of each row with abs(p) <= radius; rows of like size are worked on together."""
-    pairs = np.ceil(1.5 * radius * loops.dead_time / (2.0 * np.pi)).astype(np.intp) + 1
+    pairs = np.ceil(1.5 * radius * loops.dead_time / (2.0 * np.pi)).astype(np.intp)
     size = np.ceil(np.log2(pairs)).astype(np.intp)
     if len(loops) <= FEW:  # a few rows: longer lists for all cost less than more calls
         size = np.where(size <= 3, size.max(initial=0, where=size <= 3), size)
@@ -110,15 +97,16 @@ def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
         at = np.flatnonzero(size == one)
         some, far = (loops, radius) if len(at) == len(loops) else (loops.rows(at), radius[at])
         with np.errstate(all="ignore"):  # rows that are not finite and seeds that run away end as NaN
-            seeds = _seeds(some, int(pairs[at].max()))
+            seeds = seeds_of(some, int(pairs[at].max()))
             roots = _kept(some, by_newton(some, upper_half(seeds), far), apart=False)
+            wanting, part, reach = np.arange(len(some)), some, far
             for attempt in range(6):
-                lacking = missing_roots(some, roots, far)
-                wanting = np.flatnonzero(np.isfinite(lacking.real).any(axis=1))
-                if wanting.size == 0:
+                lacking = missing_roots(part, roots[wanting], reach)
+                still = np.flatnonzero(np.isfinite(lacking.real).any(axis=1))
+                if still.size == 0:
                     break
-                more = np.concatenate([roots[wanting], lacking[wanting]], axis=1)
-                part, reach = some.rows(wanting), far[wanting]
+                wanting, part, reach = wanting[still], part.rows(still), reach[still]
+                more = np.concatenate([roots[wanting], lacking[still]], axis=1)
                 if attempt == 0:
                     better = _kept(part, by_newton(part, upper_half(more), reach), apart=False)
                 else:
@@ -131,48 +119,6 @@ def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
         roots[outside] = np.nan
         found = _joined(found, at, _ordered(roots))
     return found
-
-
-def _seeds(loops: Loops, pairs: int) -> ComplexArray:
-    """Near seeds and `pairs` chain pairs; with long delays the poles of L too, near which roots gather."""
-    seeds = [_near_seeds(loops), _chain_seeds(loops, pairs)]
-    if pairs > 4:
-        seeds.append(closed_roots(loops.denominator))
-    return np.concatenate(seeds, axis=1)
-
-
-def _near_seeds(loops: Loops) -> ComplexArray:
-    """Roots of D Q + N P with the diagonal Padé quotient P/Q; good for abs(s) θ up to about its order."""
-    m = STAND_IN
-    powers = loops.dead_time[:, None] ** np.arange(m, -1, -1)
-    weights = np.array([comb(m, k) * factorial(2 * m - k) / factorial(2 * m) for k in range(m, -1, -1)])
-    below = powers * weights
-    above = below * (-1.0) ** np.arange(m, -1, -1)
-    order = loops.order
-    total = np.zeros((len(loops), order + m + 1))
-    for k in range(m + 1):
-        total[:, k : k + order + 1] += (
-            below[:, k, None] * loops.denominator + above[:, k, None] * loops.numerator
-        )
-    return closed_roots(total)
-
-
-def _chain_seeds(loops: Loops, pairs: int) -> ComplexArray:
-    """s θ = ln(-N/D) + 2πjk for k = 1 .. pairs, iterated; both halves of each pair."""
-    delay = loops.dead_time[:, None]
-    turns = 2.0j * np.pi * np.arange(1, pairs + 1)
-    lead = (loops.numerator != 0.0).argmax(axis=1)
-    first = np.take_along_axis(loops.numerator, lead[:, None], axis=1) / loops.denominator[:, :1]
-    falls = lead[:, None].astype(float)
-    level = np.log(-first.astype(complex))
-    s = (level + turns) / delay
-    for _ in range(4):
-        # the leading ratio by its own logarithm, which turns steadily with s, and the rest by the principal
-        # one
-        rest = horner(loops.numerator, s) / (horner(loops.denominator, s) * first) * s**falls
-        better = (level - falls * np.log(s) + np.log(rest) + turns) / delay
-        s = np.where(np.isfinite(better), better, s)
-    return np.concatenate([s, np.conj(s)], axis=1)
 
 
 def _refined(loops: Loops, seeds: ComplexArray, radius: FloatArray) -> ComplexArray:
@@ -243,14 +189,15 @@ def _kept(loops: Loops, roots: ComplexArray, *, apart: bool = True) -> ComplexAr
     below = np.take_along_axis(roots.imag < 0.0, order, axis=1)
     fuzz = np.take_along_axis(fuzz, order, axis=1)
     # the two halves of one pair, or one root found twice: the same half may not occur twice within rounding
-    gap = np.abs(upper[:, :, None] - upper[:, None, :])
-    earlier = np.tril(np.ones((upper.shape[1], upper.shape[1]), dtype=bool), -1)
-    twin = (gap <= (fuzz[:, :, None] if apart else fuzz[:, :, None] + fuzz[:, None, :])) & earlier
-    real = upper.imag == 0.0
-    # of reals that coincide a double root keeps two, told apart by the halves they came in from
-    same_half = below[:, :, None] == below[:, None, :]
-    twin &= ~(real[:, :, None] & real[:, None, :]) | same_half
-    upper[twin.any(axis=2)] = np.nan
+    place, near, lower = (np.ascontiguousarray(part.T) for part in (upper, fuzz, below))
+    real = place.imag == 0.0
+    twice = np.zeros(upper.shape, dtype=bool)
+    for k in range(1, len(place)):
+        twin = np.abs(place[k] - place[:k]) <= (near[k] if apart else near[k] + near[:k])
+        # of reals that coincide a double root keeps two, told apart by the halves they came in from
+        twin &= ~(real[k] & real[:k]) | (lower[k] == lower[:k])
+        twice[:, k] = twin.any(axis=0)
+    upper[twice] = np.nan
     both = np.concatenate([upper, np.where(upper.imag > 0.0, np.conj(upper), np.nan)], axis=1)
     return _ordered(both)
 

@@ -41,13 +41,13 @@ def routh_stable(closed: FloatArray) -> BoolArray:
     return stable
 
 
-def closed_roots(closed: FloatArray) -> ComplexArray:
+def closed_roots(closed: FloatArray, *, polish: bool = True) -> ComplexArray:
     """All roots of each row.
 
-    closed : (M, n + 1). Returns (M, n), ordered by decreasing real part; complex pairs stand together, upper
-    half first, exactly conjugate; a real root has imaginary part exactly 0. Where the leading coefficient is
-    0 the roots that are missing, and in a row that is not finite all of them, are NaN (at the end of the
-    row).
+    closed : (M, n + 1); polish : False for roots that are but a start, as LAPACK gives them.
+    Returns (M, n), ordered by decreasing real part; complex pairs stand together, upper half first, exactly
+    conjugate; a real root has imaginary part exactly 0. Where the leading coefficient is 0 the roots that are
+    missing, and in a row that is not finite all of them, are NaN (at the end of the row).
 
     Eigenvalues of the companion stack, balanced by LAPACK, then a step of Aberth's iteration, more where it
     moved far. Relative error about 10 × eps × condition: below 1e-12 for simple roots in the loops of
@@ -63,14 +63,15 @@ def closed_roots(closed: FloatArray) -> ComplexArray:
         monic = closed / closed[:, :1]
     full = np.isfinite(monic).all(axis=1)
     if full.all():
-        return _sorted(_polished(monic, _companion_roots(monic)))
+        rough = _companion_roots(monic)
+        return _sorted(_polished(monic, rough)) if polish else rough
     if full.any():
-        found[full] = closed_roots(closed[full])
+        found[full] = closed_roots(closed[full], polish=polish)
     short = exact_degree(closed)
     for d in np.unique(short[~full]):
         if 0 < d < degree:
             at = np.flatnonzero((short == d) & ~full)
-            found[at, :d] = closed_roots(closed[at, degree - d :])
+            found[at, :d] = closed_roots(closed[at, degree - d :], polish=polish)
     return found
 
 
