@@ -41,6 +41,13 @@ def surely(scan: Scan) -> str:
         return "the whole gain line, both signs"
     if scan.exhaustive == "dense":
         fine = f", neighbours {figure(scan.resolution, 3)} apart" if scan.resolution else ""
-        return f"a dense scan{fine}"
+        return f"a dense scan{fine}{_between(scan.ceiling)}"
     agreed = f"{scan.agreeing} of {count(scan.restarts, 'start')} agree"
     return agreed if scan.settled else f"{agreed}; not searched to the end"
+
+
+def _between(ceiling: float | None) -> str:
+    """What the scan says of the settings that it did not look at, where it says anything."""
+    if ceiling is None or ceiling >= 0.0:
+        return ""
+    return "; judged by the slopes seen there, none in between meets the sheet"

@@ -204,6 +204,7 @@ def rejected_part(given: Given, index: int) -> Rejected:
             "agreeing": r.scan.agreeing,
             "settled": r.scan.settled,
             "resolution": r.scan.resolution,
+            "ceiling": r.scan.ceiling,
             "best_slack": plain(r.scan.best_slack),
         },
     }

@@ -184,6 +184,9 @@ class Scan:
                  "search"
     restarts     polished starts; `agreeing` of them ended within 0.002 of the best
     resolution   of a dense scan, largest ratio between neighbouring values of a parameter
+    ceiling      of a dense scan: the worst slack stays at or below it anywhere, by the slopes measured
+                 between neighbours, doubled: an estimate, no proof; None where there is none. Like
+                 best_slack it is the slack that the search steers by: of the same sign as the exact one
     settled      the optimum is taken as found
     best_slack   best worst slack, on all the cases
     gain_intervals  of a one-parameter structure: the intervals of its gain that stabilise every case
@@ -199,6 +202,7 @@ class Scan:
     resolution: float | None = None
     gain_intervals: tuple[tuple[float, float], ...] = ()
     signs: tuple[int, ...] = (1, -1)
+    ceiling: float | None = None
 
 
 @dataclass(frozen=True, slots=True)

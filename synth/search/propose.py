@@ -240,6 +240,7 @@ def _scan(campaign: Campaign, n: int) -> Scan:
         structure=campaign.task.structures[n].name,
         exhaustive="exact" if standing.parameters == 1 else "dense" if standing.resolution else "search",
         resolution=standing.resolution,
+        ceiling=standing.ceiling,
         restarts=standing.restarts,
         agreeing=standing.agreeing,
         settled=standing.settled,

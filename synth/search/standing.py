@@ -25,7 +25,7 @@ class Standing:
     restarts   polishes that ran to their end, ever
     signs      of the gain that some start stabilised
     resolution of the dense scan, where there was one: largest ratio between neighbouring values of a
-    parameter
+    parameter; ceiling: what the slack may reach anywhere by what it saw, None where that is not known
     """
 
     number: int
@@ -39,6 +39,7 @@ class Standing:
     settled: bool = False
     evaluations: int = 0
     resolution: float | None = None
+    ceiling: float | None = None
 
     @property
     def best(self) -> float:
