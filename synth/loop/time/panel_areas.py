@@ -5,12 +5,17 @@ B panels.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.time.collocation import WHOLE, primitive_coefficients
 from synth.loop.time.panels import Panels
 from synth.loop.time.trace import SLOPES, VALUES, X, passing, turning
+
+# Parts of a panel, from a zero: nearer than this the parabola gives the rest of an area to 1e-12.
+NEAR = 1e-4
 
 
 def panel_areas(panels: Panels) -> FloatArray:
@@ -23,40 +28,76 @@ def panel_areas(panels: Panels) -> FloatArray:
     looks = signal @ VALUES
     positive = looks > 0.0
     panel, cell = np.nonzero(positive[:, :-1] != positive[:, 1:])
-    a, b = looks[panel, cell], looks[panel, cell + 1]
-    x = X[cell] + (X[cell + 1] - X[cell]) * (a / (a - b))
-    falls = positive[panel, cell]
-    pair, both, falls_first = _pairs(signal, looks)
-    panel, x = np.concatenate([panel, np.tile(pair, 2)]), np.concatenate([x, both.ravel()])
-    falls = np.concatenate([falls, falls_first, ~falls_first])
+    zeros = _Zeros(panel, X[cell], X[cell + 1], looks[panel, cell], looks[panel, cell + 1])
+    zeros = zeros.with_pairs(signal, looks)
     # the primitive F counts with the signal's sign: at the end once, and at each zero between two signs twice
-    twice = 2.0 * _primitive_at_zero(signal[panel], x)
+    twice = 2.0 * zeros.primitive(signal)
     whole = signal @ WHOLE
     out: FloatArray = np.where(positive[:, -1], whole, -whole)
-    out += np.bincount(panel, np.where(falls, twice, -twice), len(out))
+    out += np.bincount(zeros.panel, np.where(zeros.a > 0.0, twice, -twice), len(out))
     return out * panels.length
 
 
-def _primitive_at_zero(signal: FloatArray, x: FloatArray) -> FloatArray:
-    """The integral from 0 to the zero near x: one step of Newton's method, and what is left of the way taken
-    from the parabola. (E, 13), (E,) -> (E,).
+@dataclass(frozen=True, slots=True)
+class _Zeros:
+    """Brackets of one zero each, (E,): panel, places on either side, and the signal a and b there."""
 
-    From a straight line between looks the step errs by 3e-5 of a radian, and F, flat in it, by nothing.
-    """
-    coefficients = np.ascontiguousarray(primitive_coefficients(signal).T)
-    near = 2.0 * x - 1.0
-    _, value, slope = _horner(coefficients, near)
-    with np.errstate(all="ignore"):
-        step = value / slope
-        near = np.clip(near - np.where(np.abs(step) < 0.5 / len(X), step, 0.0), -1.0, 1.0)
-        primitive, value, slope = _horner(coefficients, near)
-        rest = 0.5 * value * value / slope
-    out: FloatArray = primitive - np.where(np.isfinite(rest), rest, 0.0)
-    return out
+    panel: IntArray
+    low: FloatArray
+    high: FloatArray
+    a: FloatArray
+    b: FloatArray
+
+    def with_pairs(self, signal: FloatArray, looks: FloatArray) -> _Zeros:
+        """These, and the pairs of zeros between two looks of one sign."""
+        panel, cell = _dips(signal, looks)
+        a, b = looks[panel, cell], looks[panel, cell + 1]
+        p, q = ((signal[panel] * SLOPES.T[cell + i]).sum(axis=1) for i in (0, 1))
+        # the tangents of a signal above zero meet at (a q - b p + p q width) / (q - p)
+        meet = (a * q - b * p + p * q * X[1]) * np.sign(a) * (q - p)
+        down = (a * b > 0.0) & (a * p < 0.0) & (b * q > 0.0) & (meet < 0.0)
+        if not down.any():
+            return self
+        panel, cell, a, b = panel[down], cell[down], a[down], b[down]
+        middle, least = turning(signal[panel], X[cell], X[cell + 1], p[down], q[down])
+        beyond = least * a < 0.0
+        before = _Zeros(panel, X[cell], middle, a, least).chosen(beyond)
+        after = _Zeros(panel, middle, X[cell + 1], least, b).chosen(beyond)
+        parts = (self, before, after)
+        return _Zeros(
+            np.concatenate([z.panel for z in parts]),
+            *(np.concatenate([getattr(z, name) for z in parts]) for name in ("low", "high", "a", "b")),
+        )
+
+    def chosen(self, index: BoolArray | IntArray) -> _Zeros:
+        """Those named by `index`."""
+        return _Zeros(self.panel[index], self.low[index], self.high[index], self.a[index], self.b[index])
+
+    def primitive(self, signal: FloatArray) -> FloatArray:
+        """The integral from 0 to each zero. (E,).
+
+        A step of Newton's method from the straight line; what is left of the way is taken from the parabola,
+        and where it is long, as beside an extremum, the zero is found out first.
+        """
+        coefficients = np.ascontiguousarray(primitive_coefficients(signal[self.panel]).T)
+        x = self.low + (self.high - self.low) * (self.a / (self.a - self.b))
+        _, value, slope = _horner(coefficients, x)
+        with np.errstate(all="ignore"):
+            x = np.clip(x - value / slope, self.low, self.high)
+            out, value, slope = _horner(coefficients, x)
+            left = value / slope
+        out -= 0.5 * value * left
+        far = np.flatnonzero(~(np.abs(left) < NEAR))
+        if far.size:
+            z = self.chosen(far)
+            exact = passing(signal[z.panel], z.low, z.high, z.a, z.b)
+            out[far] = _horner(coefficients[:, far], exact)[0]
+        return out
 
 
-def _horner(coefficients: FloatArray, at: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Value and first two derivatives of polynomials (k, E), ascending powers."""
+def _horner(coefficients: FloatArray, x: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Value and first two derivatives to x of polynomials (k, E), ascending powers of 2x - 1."""
+    at = 2.0 * x - 1.0
     value = coefficients[-1].copy()
     first, second = np.zeros_like(at), np.zeros_like(at)
     for one in coefficients[-2::-1]:
@@ -66,26 +107,7 @@ def _horner(coefficients: FloatArray, at: FloatArray) -> tuple[FloatArray, Float
         first += value
         value *= at
         value += one
-    return value, first, 2.0 * second
-
-
-def _pairs(signal: FloatArray, looks: FloatArray) -> tuple[IntArray, FloatArray, BoolArray]:
-    """Pairs of zeros between two looks of one sign: panels (E,), places (2, E), whether the first one
-    falls."""
-    panel, cell = _dips(signal, looks)
-    a, b = looks[panel, cell], looks[panel, cell + 1]
-    p, q = ((signal[panel] * SLOPES.T[cell + i]).sum(axis=1) for i in (0, 1))
-    # the tangents of a signal above zero meet at (a q - b p + p q width) / (q - p)
-    meet = (a * q - b * p + p * q * X[1]) * np.sign(a) * (q - p)
-    down = (a * b > 0.0) & (a * p < 0.0) & (b * q > 0.0) & (meet < 0.0)
-    panel, cell = panel[down], cell[down]
-    middle, least = turning(signal[panel], X[cell], X[cell + 1], p[down], q[down])
-    beyond = least * a[down] < 0.0
-    panel, cell, middle, least = panel[beyond], cell[beyond], middle[beyond], least[beyond]
-    a, b = looks[panel, cell], looks[panel, cell + 1]
-    left = passing(signal[panel], X[cell], middle, a, least)
-    right = passing(signal[panel], middle, X[cell + 1], least, b)
-    return panel, np.stack([left, right]), a > 0.0
+    return value, 2.0 * first, 8.0 * second
 
 
 def _dips(signal: FloatArray, looks: FloatArray) -> tuple[IntArray, IntArray]:
