@@ -15,7 +15,11 @@ LONG = 24  # two values that need more room than this stand on a line of their o
 _ADVICE = {
     "keep": ("KEEP", "good", "meets everything on the revised plant, untouched."),
     "retune": ("RETUNE", "warn", "needs other values."),
-    "restructure": ("RESTRUCTURE", "warn", "does not meet the sheet, and no other values for it were found that do; another does."),
+    "restructure": (
+        "RESTRUCTURE",
+        "warn",
+        "does not meet the sheet, and no other values for it were found that do; another structure does.",
+    ),
     "relax": ("RELAX", "bad", "does not meet the sheet, and nothing else that was searched does."),
 }
 _NOTHING_EARLIER = "The earlier record has no candidate to judge: the verdict below is that of a new search."

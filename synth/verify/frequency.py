@@ -6,7 +6,7 @@ from collections.abc import Callable
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.verify.subject import Subject
 
 _PER_DECADE = 50
@@ -125,21 +125,25 @@ class _Look:
         top = top[np.argsort(-y[top])][: 16 if self.delayed else 4]
         best = float(np.max(y))
         if top.size:
-            low, high = self.w[top - 1], self.w[top + 1]
-            every = np.arange(len(top))
-            for _ in range(_PEAK_ROUNDS):
-                t = np.linspace(low, high, _ZOOM)
-                z = np.nan_to_num(curve(t.ravel()).reshape(t.shape))
-                j = z.argmax(axis=0)
-                low, high = t[np.maximum(j - 1, 0), every], t[np.minimum(j + 1, _ZOOM - 1), every]
-            best = max(best, float(z.max()))
+            best = max(best, float(self._tops(curve, self.w[top - 1], self.w[top + 1])[1].max()))
         return max([best, *(x for x in limits if np.isfinite(x))])
 
-    def _crossings(self, curve: Curve, y: FloatArray, places: IntArray) -> FloatArray:
-        """ω of the sign changes of a curve between the nodes named by `places`."""
-        low, high, positive = self.w[places], self.w[places + 1], y[places] >= 0.0
-        every = np.arange(len(places))
-        for _ in range(_CROSSING_ROUNDS if places.size else 0):
+    @staticmethod
+    def _tops(curve: Curve, low: FloatArray, high: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """ω and height of a curve's maximum in each interval, closed in on by shrinking grids."""
+        every = np.arange(len(low))
+        for _ in range(_PEAK_ROUNDS):
+            t = np.linspace(low, high, _ZOOM)
+            z = np.nan_to_num(curve(t.ravel()).reshape(t.shape))
+            j = z.argmax(axis=0)
+            low, high = t[np.maximum(j - 1, 0), every], t[np.minimum(j + 1, _ZOOM - 1), every]
+        return t[j, every], z[j, every]
+
+    @staticmethod
+    def _crossings(curve: Curve, low: FloatArray, high: FloatArray, positive: BoolArray) -> FloatArray:
+        """ω of the sign change of a curve in each interval; `positive` where it is not below 0 at `low`."""
+        every = np.arange(len(low))
+        for _ in range(_CROSSING_ROUNDS if low.size else 0):
             t = np.linspace(low, high, _ZOOM)
             same = (curve(t.ravel()).reshape(t.shape) >= 0.0) == positive
             same[0], same[-1] = True, False
@@ -158,14 +162,38 @@ class _Look:
             out: FloatArray = np.abs(x / (1.0 + x)) - level
             return out
 
-        y = excess(self.w)
+        w, y = self._with_near_misses(excess)
         at = np.flatnonzero((y[:-1] >= 0.0) & (y[1:] < 0.0))
         ends = at[[0, -1]] if at.size else at
-        found = self._crossings(excess, y, ends).tolist()
+        found = self._crossings(excess, w[ends], w[ends + 1], y[ends] >= 0.0).tolist()
         k = self.k
         recurs = self.delayed and k > 0.0 and k / (1.0 - k) > level > k / (1.0 + k)
         highest = np.inf if recurs else max(found, default=np.nan)
         return {"bandwidth": min(found, default=np.inf), "highest_fall": highest}
+
+    def _with_near_misses(self, curve: Curve) -> tuple[FloatArray, FloatArray]:
+        """The grid and a curve on it, with the tops and bottoms that pass 0 between two nodes: those before
+        the first fall that the grid shows and after the last, where they make another one."""
+        y = curve(self.w)
+        falls = np.flatnonzero((y[:-1] >= 0.0) & (y[1:] < 0.0))
+        gap = np.diff(self.w)
+        slope, inner = np.diff(y) / gap, y[1:-1]
+        before, after = slope[:-1], slope[1:]
+        # a top that bends one way lies under the secants on either side, run on across the gap between
+        room = np.maximum(np.abs(before) * gap[1:], np.abs(after) * gap[:-1])
+        turns = (before * after <= 0.0) & (inner * (before - after) < 0.0)
+        at = np.flatnonzero(turns & (np.abs(inner) < room)) + 1
+        if falls.size:
+            at = at[(at <= falls[0]) | (at > falls[-1])]
+        if not at.size:
+            return self.w, y
+        side = -np.sign(y[at])
+        every_side = np.tile(side, _ZOOM)
+        w, height = self._tops(lambda t: every_side * curve(t), self.w[at - 1], self.w[at + 1])
+        passes = height > 0.0
+        every = np.concatenate((self.w, w[passes]))
+        order = np.argsort(every)
+        return every[order], np.concatenate((y, (side * height)[passes]))[order]
 
     def _gains(self) -> dict[str, float]:
         def excess(w: FloatArray) -> FloatArray:
@@ -174,7 +202,8 @@ class _Look:
 
         y = np.log(np.abs(self.l))
         at = np.flatnonzero((y[:-1] >= 0.0) != (y[1:] >= 0.0))
-        w = self._crossings(excess, y, at[-12:])
+        at = at[-12:]
+        w = self._crossings(excess, self.w[at], self.w[at + 1], y[at] >= 0.0)
         if abs(self.start) == 1.0:
             w = np.append(w, 0.0) if not w.size else w
         if not w.size:
@@ -200,7 +229,7 @@ class _Look:
         at = np.flatnonzero((y[:-1] >= 0.0) != (y[1:] >= 0.0))
         at = at[(self.l.real[at] < 0.0) | (self.l.real[at + 1] < 0.0)]
         at = at[np.argsort(np.abs(np.log(np.abs(self.l[at]))))][:8]
-        found = self._crossings(excess, y, at)
+        found = self._crossings(excess, self.w[at], self.w[at + 1], y[at] >= 0.0)
         sizes = np.abs(self.loop(found)).tolist() if found.size else []
         if np.isfinite(self.start) and self.start < 0.0:
             sizes.append(-self.start)

@@ -212,7 +212,8 @@ def _of_poles(
         reach, everything = measure.below, False
     elif everything:
         if delayed and measure.quantity == "damping_ratio":
-            return "all of infinitely many poles count"
+            # the chain goes on for ever while Re p grows like a logarithm at most: no ratio is the least
+            return 0.0
         reach = np.inf
     else:
         reach = _REACH * highest_fall
