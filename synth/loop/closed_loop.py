@@ -94,6 +94,14 @@ class Loops:
         parts = {f: getattr(self, f)[:, spare:] for f in POLYNOMIALS}
         return replace(self, **parts) if spare else self
 
+    def by_order(self) -> list[tuple[IntArray, Loops]]:
+        """The loops of each order as a stack of their own, and their rows in this one."""
+        order = exact_degree(self.denominator)
+        kinds = np.unique(order)
+        if kinds.size == 1:
+            return [(np.arange(len(self)), self)]
+        return [(at, self.rows(at).cut()) for at in (np.flatnonzero(order == n) for n in kinds)]
+
     def rows(self, index: IntArray | BoolArray) -> Loops:
         """The loops named by `index` (integers or a mask)."""
         return replace(self, **{f: getattr(self, f)[index] for f in self.__slots__})
@@ -151,11 +159,12 @@ def _stretched(polynomials: FloatArray, power: IntArray) -> tuple[FloatArray, In
 def close(plants: Rational, compensators: Rational, plant_of: IntArray, compensator_of: IntArray) -> Loops:
     """Close the loops of the named pairs.
 
-    plant_of, compensator_of : (M,) row numbers. Within one call every D_P D_C must have the same exact
-    degree, and every dead time be zero or every one positive (`evaluate` sorts them so).
+    plant_of, compensator_of : (M,) row numbers, at least one. Within one call every dead time must be zero or
+    every one positive (`evaluate` sorts them so). Where D_P D_C are of several degrees, the loops stand
+    together as those of the highest.
     """
-    dp = int(exact_degree(plants.denominator[plant_of[:1]])[0])
-    dc = int(exact_degree(compensators.denominator[compensator_of[:1]])[0])
+    dp = int(exact_degree(plants.denominator)[plant_of].max())
+    dc = int(exact_degree(compensators.denominator)[compensator_of].max())
     plant_num, plant_den = trimmed(plants.numerator, dp)[plant_of], trimmed(plants.denominator, dp)[plant_of]
     comp_num = trimmed(compensators.numerator, dc)[compensator_of]
     comp_den = trimmed(compensators.denominator, dc)[compensator_of]
@@ -174,7 +183,7 @@ def close(plants: Rational, compensators: Rational, plant_of: IntArray, compensa
         control, load = product(comp_num, plant_den), product(plant_num, comp_den)
         closed = numerator + denominator
     scale = np.ldexp(1.0, power.astype(np.int32))
-    return Loops(
+    loops = Loops(
         numerator=numerator,
         denominator=denominator,
         control=control,
@@ -184,6 +193,7 @@ def close(plants: Rational, compensators: Rational, plant_of: IntArray, compensa
         time_scale=scale,
         plant_gain=gain,
     )
+    return loops.cut()  # the plant of the highest degree may have met none of the highest compensators
 
 
 def _time_power(
@@ -198,17 +208,22 @@ def _time_power(
         return out
 
     # D + N is formed from logarithms of its end coefficients alone, so that no product can overflow
-    dp, dc = plant_den.shape[1] - 1, comp_den.shape[1] - 1
-    n = dp + dc
-    first = log2(plant_den[:, 0]) + log2(comp_den[:, 0])
-    tails = np.full((plant_num.shape[0], n + 1), -np.inf)
-    for x, y in ((plant_den, comp_den), (plant_num, comp_num)):
-        logs_x, logs_y = log2(x), log2(y)
-        for i in range(dp + 1):
-            tails[:, i : i + dc + 1] = np.maximum(tails[:, i : i + dc + 1], logs_x[:, i, None] + logs_y)
-    last = tails.shape[1] - 1 - np.argmax(np.isfinite(tails)[:, ::-1], axis=1)
-    constant = np.take_along_axis(tails, last[:, None], axis=1)[:, 0]
+    d = _largest_products(log2(plant_den), log2(comp_den))
+    tails = np.maximum(d, _largest_products(log2(plant_num), log2(comp_num)))
+    row, n = np.arange(len(tails)), tails.shape[1] - 1
+    first = np.argmax(np.isfinite(d), axis=1)
+    last = n - np.argmax(np.isfinite(tails)[:, ::-1], axis=1)
+    roots = last - first
     with np.errstate(invalid="ignore", divide="ignore"):
-        mean = np.where(last > 0, (constant - first) / np.maximum(last, 1), 0.0)
+        mean = np.where(roots > 0, (tails[row, last] - d[row, first]) / np.maximum(roots, 1), 0.0)
     power: IntArray = -np.round(np.clip(np.nan_to_num(mean), -900, 900)).astype(np.intp)
     return power
+
+
+def _largest_products(a: FloatArray, b: FloatArray) -> FloatArray:
+    """Logarithm of the largest term in each coefficient of a product, from those of the factors."""
+    out = np.full((a.shape[0], a.shape[1] + b.shape[1] - 1), -np.inf)
+    for i in range(a.shape[1]):
+        here = out[:, i : i + b.shape[1]]
+        np.maximum(here, a[:, i, None] + b, out=here)
+    return out

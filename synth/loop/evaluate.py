@@ -16,10 +16,9 @@ from synth.loop.closed_loop import Loops, Rational, close, exact_degree, togethe
 from synth.loop.frequency.stage import frequency_stage
 from synth.loop.poles.doubt import doubts
 from synth.loop.poles.encirclement import delayed_stable
-from synth.loop.poles.roots import closed_roots
 from synth.loop.poles.stage import PoleStage, needs_counting, pole_stage, statics
 from synth.loop.quantities import EVERY_QUANTITY, Measure
-from synth.loop.stand_in import damping, responses, without_dead_time, worthwhile
+from synth.loop.stand_in import StandIns, damping, responses, worthwhile
 from synth.loop.time.stage import time_stage
 
 # Loops handled at once: large enough to drown the cost of a call, small enough to stay in cache and in
@@ -116,20 +115,15 @@ def evaluate(
     # a natural frequency needs the shares of true poles
     replaced = rational and all(m.quantity != "natural_frequency" for m in measures)
     until = screen or Screen()
-    few: list[Stack] = []
-    for rows in stacks(plants, compensators, plant_of, compensator_of):
+    for rows in _batches(plants, compensators, plant_of, compensator_of):
         loops = close(plants, compensators, plant_of[rows], compensator_of[rows])
         if replaced and loops.dead_time[0] > 0.0:
             rows, loops = _fill_by_stand_in(out, rows, loops, until)
-        if rows.size == 0:
-            continue
-        stack = _fill_poles(out, rows, loops, until)
-        if len(stack[0]) < FEW and not loops.dead_time.any():
-            few.append(stack)
-        else:
-            _fill_responses(out, *stack, until)
-    if few:
-        _fill_responses(out, *_together(few), until)
+        parts = [_fill_poles(out, rows[at], some, until) for at, some in loops.by_order()]
+        if len(parts) > 1 and not loops.dead_time.any():
+            parts = [_together(parts)]
+        for part in parts:
+            _fill_responses(out, *part, until)
     for i, measure in enumerate(measures):
         if measure.quantity == "control_peak":
             out.values[:, i] *= abs(reference_step)
@@ -149,6 +143,22 @@ def evaluate(
 def _cross(compensators: int, plants: int) -> tuple[IntArray, IntArray]:
     pair = np.arange(compensators * plants)
     return pair // plants, pair % plants
+
+
+def _batches(
+    plants: Rational, compensators: Rational, plant_of: IntArray, compensator_of: IntArray
+) -> list[IntArray]:
+    """Row sets that are closed in one go: large stacks, and the small ones together."""
+    out: list[IntArray] = []
+    few: dict[bool, list[IntArray]] = {}
+    for rows in stacks(plants, compensators, plant_of, compensator_of):
+        if len(rows) < FEW:
+            one = rows[0]
+            delayed = plants.dead_time[plant_of[one]] + compensators.dead_time[compensator_of[one]] > 0.0
+            few.setdefault(bool(delayed), []).append(rows)
+        else:
+            out.append(rows)
+    return out + [np.concatenate(parts) for parts in few.values()]
 
 
 def stacks(
@@ -263,48 +273,46 @@ def _fill_by_stand_in(
     """The stages with a rational stand-in for the dead time; returns the loops that need the exact way."""
     wanted = out.measures
     fit = worthwhile(loops)
-    left, loops_left = rows[~fit], loops.rows(~fit)
-    rows, loops = rows[fit], loops.rows(fit)
-    if rows.size == 0:
-        return left, loops_left
-    stable = delayed_stable(loops)
-    stand_in = without_dead_time(loops)
-    poles = closed_roots(stand_in.closed)
-    abscissa = np.where(np.isnan(poles.real), -np.inf, poles.real).max(axis=1, initial=-np.inf)
+    near = StandIns.of(loops if fit.all() else loops.rows(fit))
+    served = rows[fit]
+    stable = np.zeros(len(served), dtype=bool)
+    for at, some in near.loops.by_order():
+        stable[at] = delayed_stable(some)
+    abscissa = near.abscissa()
     astray = stable & ~(abscissa < 0.0)  # the count is exact, so here the stand-in is wrong
-    left, loops_left = np.concatenate([left, rows[astray]]), together([loops_left, loops.rows(astray)])
-    out.stable[rows] = stable
-    out.abscissa[rows] = np.where(stable, abscissa, np.maximum(abscissa, 1e-3)) / loops.time_scale
-    keep = stable & ~astray
-    rows, loops, stand_in, poles, abscissa = (
-        rows[keep], loops.rows(keep), stand_in.rows(keep), poles[keep], abscissa[keep],
-    )  # fmt: skip
-    if rows.size == 0:
-        return left, loops_left
+    out.stable[served] = stable
+    out.abscissa[served] = np.where(stable, abscissa, np.maximum(abscissa, 1e-3)) / near.loops.time_scale
+    fit[fit] = ~astray
+    left = np.flatnonzero(~fit)
+    rest = rows[left], loops.rows(left)
+    keep = np.flatnonzero(stable & ~astray)
+    if keep.size == 0:
+        return rest
+    rows, near = served[keep], near.rows(keep)
     found: dict[Measure, FloatArray] = {}
     names = {m.quantity for m in wanted if m.row.stage == "frequency"}
     if any(needs_counting(m) for m in wanted):
         names.add("highest_fall")
-    values = frequency_stage(loops, poles, frozenset(names)) if names else {}
+    values = frequency_stage(near.loops, near.poles, frozenset(names)) if names else {}
     found |= {w: values[w.quantity] for w in wanted if w.quantity in values}
-    found |= damping(loops, stand_in, poles, wanted, values.get("highest_fall"))
-    still = statics(loops, np.ones(len(rows), dtype=bool), {m.quantity for m in wanted})
+    found |= damping(near, wanted, values.get("highest_fall"))
+    still = statics(near.loops, np.ones(len(rows), dtype=bool), {m.quantity for m in wanted})
     found |= {w: still[w.quantity] for w in wanted if w.quantity in still}
-    found |= {w: -abscissa for w in wanted if w.quantity == "decay_rate"}
-    _write(out, rows, loops, found, None)
+    found |= {w: -near.abscissa() for w in wanted if w.quantity == "decay_rate"}
+    _write(out, rows, near.loops, found, None)
     out.reached[rows] = 1
-    keep = np.ones(len(rows), dtype=bool)
+    on = np.ones(len(rows), dtype=bool)
     for measure, value in found.items():
         if measure.quantity == "damping_ratio":
-            keep &= ~(value < screen.least_damping)
+            on &= ~(value < screen.least_damping)
         elif measure.quantity == "sensitivity_peak":
-            keep &= ~(value > screen.most_peak)
-    rows = rows[keep]
-    if rows.size and any(m.row.stage == "time" for m in wanted):
-        loops = loops.rows(keep)
-        _write(out, rows, loops, responses(loops, stand_in.rows(keep), poles[keep], wanted), None)
+            on &= ~(value > screen.most_peak)
+    if on.any() and any(m.row.stage == "time" for m in wanted):
+        if not on.all():
+            rows, near = rows[on], near.rows(np.flatnonzero(on))
+        _write(out, rows, near.loops, responses(near, wanted), None)
         out.reached[rows] = 2
-    return left, loops_left
+    return rest
 
 
 def _kept(

@@ -5,7 +5,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from synth.loop.closed_loop import Rational, close, exact_degree, product, trimmed
+from synth.loop.closed_loop import POLYNOMIALS, Rational, close, exact_degree, product, trimmed
 
 
 def first(plant, comp):
@@ -59,6 +59,21 @@ def test_a_transfer_function_of_nothing_leaves_the_open_loop(zero):
     np.testing.assert_allclose(
         np.sort(np.roots(loops.closed[0])) / loops.time_scale, [-5e4, -2.0], rtol=1e-12
     )
+
+
+def test_loops_of_several_orders_are_each_as_closed_alone():
+    plants = Rational.of([[0.0, 0.0, 3.0], [0.0, 1e-3, 2.0]], [[0.0, 5.0, 1.0], [4e3, 7.0, 1.0]], [0.5, 2.0])
+    comps = Rational.of([[0.0, 0.7], [9.0, 0.2]], [[0.0, 1.0], [30.0, 0.0]])
+    plant_of, comp_of = np.array([0, 0, 1, 0]), np.array([1, 0, 0, 0])
+    loops = close(plants, comps, plant_of, comp_of)
+    assert loops.order == 2  # the third-order pair is not among them
+    assert [rows.tolist() for rows, _ in loops.by_order()] == [[1, 3], [0, 2]]
+    for rows, some in loops.by_order():
+        for i, row in enumerate(rows):
+            alone = close(plants, comps, plant_of[[row]], comp_of[[row]])
+            assert alone.order == some.order
+            for name in (*POLYNOMIALS, "dead_time", "time_scale", "plant_gain"):
+                np.testing.assert_array_equal(getattr(some, name)[i], getattr(alone, name)[0])
 
 
 def test_products_degrees_and_padding():

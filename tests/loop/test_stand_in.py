@@ -3,12 +3,15 @@
 import numpy as np
 import pytest
 
-from synth.loop import evaluate as evaluation
+from synth.loop import stand_in
 from synth.loop.closed_loop import Rational, close
 from synth.loop.evaluate import Screen, evaluate
+from synth.loop.poles.delayed import delayed_poles
+from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.roots import closed_roots
+from synth.loop.poles.stage import REACH
 from synth.loop.quantities import EVERY_QUANTITY, Measure
-from synth.loop.stand_in import ORDER, responses, without_dead_time, worthwhile
+from synth.loop.stand_in import ORDER, StandIns, damping, responses, without_dead_time, worthwhile
 from synth.loop.time.curves import step_curves
 
 MEASURES = tuple(m for m in EVERY_QUANTITY if m.quantity != "natural_frequency")
@@ -110,10 +113,8 @@ def test_y_is_late_by_the_dead_time_exactly():
     # slow loop, long dead time to the eye of the compensator: y follows the lag's own step, one θ later
     plants, comps = Rational.of([[1.0]], [[3.0, 1.0]], 2.0), Rational.of([[1e-6]], [[1.0]])
     loops = close(plants, comps, np.zeros(1, dtype=int), np.zeros(1, dtype=int))
-    nearly = without_dead_time(loops)
-    poles = closed_roots(nearly.closed)
     measures = (Measure("settling_time"), Measure("rise_time"), Measure("settling_time", band=0.05))
-    found = responses(loops, nearly, poles, measures)
+    found = responses(StandIns.of(loops), measures)
     seconds = [found[m][0] * loops.time_scale[0] for m in measures]
     expected = [2.0 + 3.0 * np.log(50.0), 3.0 * np.log(9.0), 2.0 + 3.0 * np.log(20.0)]
     np.testing.assert_allclose(seconds, expected, rtol=1e-5)
@@ -178,6 +179,46 @@ def test_natural_frequency_is_always_exact():
     np.testing.assert_array_equal(near.values, exact.values)
 
 
+@pytest.mark.parametrize("angle", [4.0, 9.0, 25.0, 120.0])
+def test_damping_reaches_as_far_as_the_rule(angle):
+    # the least ratio of all poles with abs(p) θ <= angle, the last of the chain among them
+    loops = close(*random_loops(300, seed=11), np.arange(300), np.arange(300))
+    loops = loops.rows(delayed_stable(loops))
+    reach = angle / loops.dead_time
+    usual = Measure("damping_ratio")
+    found = damping(StandIns.of(loops), (usual,), reach / REACH)[usual]
+    poles = delayed_poles(loops, reach)
+    with np.errstate(invalid="ignore"):
+        ratio = np.where(np.abs(poles) <= reach[:, None], -poles.real / np.abs(poles), 1.0)
+    expected = ratio.min(axis=1)
+    assert np.count_nonzero(expected < 0.5) > 50
+    np.testing.assert_allclose(found, expected, rtol=1e-8)
+
+
+def test_damping_with_no_end_to_the_reach_is_0():
+    loops = close(*random_loops(1, seed=1), np.zeros(1, dtype=int), np.zeros(1, dtype=int))
+    usual = Measure("damping_ratio")
+    np.testing.assert_array_equal(damping(StandIns.of(loops), (usual,), np.array([np.nan]))[usual], [0.0])
+
+
+def test_loops_of_several_orders_score_as_each_for_itself():
+    lags = [[0.0, 0.0, 1.0, 1.0], [0.0, 0.4, 1.3, 1.0], [0.05, 0.6, 1.5, 1.0]]
+    plants = Rational.of([[0.0, 0.0, 0.0, 1.0]] * 3, lags, [0.3, 0.2, 0.5])
+    comps = Rational.of(
+        [[0.0, 0.0, 0.5], [0.0, 0.4, 0.5], [0.1, 0.5, 0.4], [0.0, 0.0, 40.0]],
+        [[0.0, 0.0, 1.0], [0.0, 1.0, 0.0], [0.02, 1.0, 0.0], [0.0, 0.0, 1.0]],
+    )
+    whole = evaluate(plants, comps, measures=MEASURES, rational=True)
+    assert whole.stable[:3].all()
+    assert not whole.stable[3].any()
+    for k in range(3):
+        for b in range(4):
+            one = np.array([k]), np.array([b])
+            alone = evaluate(plants.rows(one[0]), comps.rows(one[1]), measures=MEASURES, rational=True)
+            np.testing.assert_allclose(alone.values[0, 0], whole.values[b, k], rtol=1e-9, atol=1e-9)
+            np.testing.assert_allclose(alone.abscissa[0, 0], whole.abscissa[b, k], rtol=1e-12)
+
+
 def test_every_case_keeps_its_own_dead_time():
     # one compensator row, four plants of different dead time, one of them without any
     lag = np.array([1.0, 1.0])
@@ -200,7 +241,7 @@ def test_a_stand_in_that_goes_astray_is_replaced(monkeypatch):
     keys = {"measures": MEASURES, "pairs": (index, index)}
     exact = evaluate(plants, comps, **keys)
     wrong = lambda closed: closed_roots(closed) * -1.0 if closed.shape[1] > 6 else closed_roots(closed)  # noqa: E731
-    monkeypatch.setattr(evaluation, "closed_roots", wrong)
+    monkeypatch.setattr(stand_in, "closed_roots", wrong)
     near = evaluate(plants, comps, rational=True, **keys)
     np.testing.assert_array_equal(near.stable, exact.stable)
     np.testing.assert_array_equal(near["settling_time"], exact["settling_time"])
