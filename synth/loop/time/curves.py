@@ -25,7 +25,7 @@ def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, Fl
     """
     times = np.broadcast_to(t, (len(loops), np.asarray(t).shape[-1]))
     if (loops.dead_time > 0.0).any():
-        from synth.loop.time.delayed import delayed_step_curves
+        from synth.loop.time.delayed_curves import delayed_step_curves
 
         delayed: tuple[FloatArray, FloatArray, FloatArray] = delayed_step_curves(loops, times)
         return delayed

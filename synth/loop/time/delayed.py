@@ -6,31 +6,34 @@ late one.
 
 from __future__ import annotations
 
+from functools import cached_property
+
 import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
 from synth.loop.closed_loop import Loops
-from synth.loop.poles.delayed import delayed_poles
-from synth.loop.poles.roots import closed_roots
 from synth.loop.quantities import Measure
 from synth.loop.time import last_mode
-from synth.loop.time.collocation import WHOLE, jet, primitive_coefficients
+from synth.loop.time.collocation import WHOLE
 from synth.loop.time.panel_areas import panel_areas
 from synth.loop.time.panels import Outline
+from synth.loop.time.proof import NEGLIGIBLE, Cells
 from synth.loop.time.responses import Responses, responses
 from synth.loop.time.result import TimeStage
-from synth.loop.time.steps import Walk, ladder, resolution
-from synth.loop.time.trace import Trace
-from synth.loop.time.true_modes import true_modes
+from synth.loop.time.trace import Passage, Trace
 
 _OF_U = {"control_peak"}
 _OF_D = {"disturbance_peak", "disturbance_area"}
-# The most delays marched for a curve before the modes take over, and how many where there are more.
-MOST_DRAWN, LONG = 200, 48
 # A change of sign within a panel is looked for where more than this part of the area may hang on it.
 NO_AREA = 1e-8
 # A sup less than this over the final value is rounding of a response that comes to rest.
 ROUNDING = 1e-10
+# A peak lower than this over the final value is not placed to 1e-6.
+PLACED = 1e-7
+# Parts of the unit that a response is uncertain by; a time that they move by more than this part is flagged.
+UNCERTAIN, SAME_TIME = 1e-10, 1e-6
+
+Reading = tuple[FloatArray, BoolArray]
 
 
 def delayed_time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...]) -> TimeStage:
@@ -72,7 +75,10 @@ class _Reading:
         self.trace = Trace.of(close, offset.ravel(), f.unit.ravel())
         self.z = self.trace.signal(0, len(self.signals))
         self.tail = last_mode.extremes(f.amplitude[0], f.pole)
-        self.passed = self._passages()
+        self.cells = Cells.of(self.trace)
+        self.cells_of_z = self.cells.signal(0, len(self.signals))
+        self.uncertain = UNCERTAIN * f.unit[0]
+        self._pass()
 
     def _relate(self) -> None:
         """y to z - 1 where it has a final value."""
@@ -110,94 +116,131 @@ class _Reading:
                 chosen |= z.panels.start + z.panels.length >= after
         return out
 
-    def _passages(self) -> dict[tuple[str, float], FloatArray]:
-        """Times of the first arrivals and last exits asked for, NaN where there is none in the panels."""
-        found = {}
+    def _pass(self) -> None:
+        """The first arrivals and last exits asked for, in the panels: passage, time and slope of each."""
+        found: dict[tuple[str, float], Passage] = {}
         for m in self.asked:
             if m.quantity == "rise_time":
-                for level in m.span:
-                    if level > 0.0:
-                        found["arrival", level] = self.z.first_reach(level - 1.0)
+                found |= {
+                    ("arrival", level): self.z.first_reach(level - 1.0) for level in m.span if level > 0.0
+                }
             elif m.quantity == "settling_time":
                 found["exit", m.band] = self.z.last_exit(m.band)
-        return dict(zip(found, self.z.times(list(found.values())), strict=True)) if found else {}
+        times = self.z.times(list(found.values())) if found else []
+        self.passage = found
+        self.passed = dict(zip(found, times, strict=True))
 
     def stage(self) -> TimeStage:
         """Values and flags of every measure asked for."""
-        values = {m: self._value(m) for m in self.asked}
-        doubtful: BoolArray = self.found.doubtful
-        return TimeStage(values, {m: doubtful & np.isfinite(values[m]) for m in self.asked})
+        read = {m: self._value(m) for m in self.asked}
+        doubtful = self.found.doubtful
+        return TimeStage(
+            {m: value for m, (value, _) in read.items()},
+            {m: (doubtful | unproven) & np.isfinite(value) for m, (value, unproven) in read.items()},
+        )
 
-    def _value(self, m: Measure) -> FloatArray:
+    def _value(self, m: Measure) -> Reading:
+        """The measure, and of which loops it is not proven that nothing between two knots decides it
+        otherwise. (M,) each."""
         name = m.quantity
+        proven = np.zeros(len(self.loops), dtype=bool)
         if name == "control_peak":
             return self._peak(self.signals.index("u"))
         if name == "disturbance_peak":
             return self._peak(self.signals.index("d"))
         if name == "disturbance_area":
-            return np.where(self.loops.load[:, -1] == 0.0, self._area(self.signals.index("d")), np.inf)
+            area = self._area(self.signals.index("d"))
+            return np.where(self.loops.load[:, -1] == 0.0, area, np.inf), proven
         if name == "tracking_area":
             # y is 0 until θ. Where L has no pole at 0 the error stays, and so does the area
-            return np.where(self.loops.denominator[:, -1] == 0.0, self.late + self._area(0), np.inf)
+            area = self.late + self._area(0)
+            return np.where(self.loops.denominator[:, -1] == 0.0, area, np.inf), proven
         if name in ("overshoot", "peak_time"):
-            out = self._overshoot(name)
+            best, when, unproven = self.highest
+            over = best > ROUNDING
+            out = np.where(over, 100.0 * best, 0.0) if name == "overshoot" else np.where(over, when, np.nan)
+            # where a peak lies hangs on more of its height than how high it is
+            unproven = unproven | ((name == "peak_time") & (best < PLACED))
         elif name == "undershoot":
-            out = self._undershoot()
+            out, unproven = self._undershoot()
         elif name == "rise_time":
-            out = self._arrival(m.span[1]) - self._arrival(m.span[0])
+            (low, a), (high, b) = (self._arrival(level) for level in m.span)
+            out, unproven = high - low, a | b
         elif name == "settling_time":
-            out = self._settling(m.band)
+            out, unproven = self._settling(m.band)
         elif name == "late_deviation":
-            out = self._late_deviation(m.after / self.loops.time_scale)
+            out, unproven = self._late_deviation(m.after / self.loops.time_scale), proven
         else:
             raise ValueError(f"no reading of {name!r}")
-        return np.where(self.has_end, out, np.nan)
+        return np.where(self.has_end, out, np.nan), unproven
 
-    def _peak(self, signal: int) -> FloatArray:
+    def _peak(self, signal: int) -> Reading:
         """sup of abs of the signal: panels, the last mode's own extremes, and the value at infinity."""
         f = self.found
         looked = self.trace.signal(signal, len(self.signals)).farthest()
         top, _, bottom, _ = last_mode.extremes(f.amplitude[signal], f.pole)
         late = np.maximum(np.abs(f.final[signal] + top), np.abs(f.final[signal] + bottom))
         out: FloatArray = np.maximum(looked, late)
-        return out
+        limit = out + NEGLIGIBLE * f.unit[signal]
+        return out, self.cells.signal(signal, len(self.signals)).may_exceed(-limit, limit)
 
-    def _overshoot(self, name: str) -> FloatArray:
+    @cached_property
+    def highest(self) -> tuple[FloatArray, FloatArray, BoolArray]:
+        """sup of z - 1, its time, and whether a higher one is not excluded."""
         best, when = self.z.largest(1.0)
         top, at, _, _ = self.tail
         later = top > best
         best, when = np.where(later, top, best), np.where(later, self._after_end(at), when)
-        over = best > ROUNDING
-        if name == "overshoot":
-            return np.where(over, 100.0 * best, 0.0)
-        return np.where(over, when, np.nan)
+        limit = np.maximum(best, 0.0) + NEGLIGIBLE * self.found.unit[0]
+        return best, when, self.cells_of_z.may_exceed(np.full_like(limit, -np.inf), limit)
 
-    def _undershoot(self) -> FloatArray:
+    def _undershoot(self) -> Reading:
         below = np.maximum(self.z.largest(-1.0)[0], -self.tail[2]) - 1.0
-        return np.where(below > ROUNDING, 100.0 * below, 0.0)
+        limit = -1.0 - np.maximum(below, 0.0) - NEGLIGIBLE * self.found.unit[0]
+        unproven = self.cells_of_z.may_exceed(limit, np.full_like(limit, np.inf))
+        return np.where(below > ROUNDING, 100.0 * below, 0.0), unproven
 
     def _after_end(self, time: FloatArray) -> FloatArray:
         out: FloatArray = self.found.end + self.late + time
         return out
 
-    def _arrival(self, level: float) -> FloatArray:
+    def _arrival(self, level: float) -> Reading:
         """First time at that part of the final value; 0 is where y leaves 0, after the dead time."""
         if level <= 0.0:
-            return self.late.copy()
-        out = self.passed["arrival", level].copy()
-        left = np.flatnonzero(np.isnan(out))
+            return self.late.copy(), np.zeros(len(self.late), dtype=bool)
+        f, uncertain = self.found, self.uncertain
+        early, steep = self.passed["arrival", level]
+        passage = self.passage["arrival", level]
+        unproven = self.cells_of_z.may_reach_sooner(level - 1.0, passage, uncertain)
+        unproven |= uncertain > SAME_TIME * steep * early
+        out = early.copy()
+        left = np.flatnonzero(np.isnan(early))
         if left.size:
             levels = np.full(len(left), level - 1.0)
-            late = last_mode.first_reach(self.found.amplitude[0, left], self.found.pole[left], levels)
-            out[left] = self.found.end[left] + self.late[left] + late
-        return np.where(np.isfinite(out), out, np.nan)
+            late, other = (
+                last_mode.first_reach(f.amplitude[0, left], f.pole[left], one)
+                for one in (levels, levels - uncertain[left])
+            )
+            out[left] = f.end[left] + self.late[left] + late
+            unproven[left] |= _apart(out[left], f.end[left] + self.late[left] + other)
+        return np.where(np.isfinite(out), out, np.nan), unproven
 
-    def _settling(self, band: float) -> FloatArray:
-        early = self.passed["exit", band]
-        late = last_mode.last_exit(self.found.amplitude[0], self.found.pole, np.full(len(self.loops), band))
+    def _settling(self, band: float) -> Reading:
+        f, uncertain = self.found, self.uncertain
+        early, steep = self.passed["exit", band]
+        unproven = self.cells_of_z.may_leave_later(band, self.passage["exit", band], uncertain)
+        unproven |= uncertain > SAME_TIME * steep * early
+        late, other = np.full((2, len(early)), np.nan)
+        size = np.maximum(self.tail[0], -self.tail[2])
+        some = np.flatnonzero(size > band - uncertain)
+        if some.size:
+            edges = np.full(len(some), band)
+            for out, one in ((late, edges), (other, edges - uncertain[some])):
+                out[some] = last_mode.last_exit(f.amplitude[0, some], f.pole[some], one)
+            unproven[some] = _apart(self._after_end(late), self._after_end(other))[some]
         out = np.where(np.isfinite(late), self._after_end(late), early)
         # y is 0, so outside any band below 100 %, until the dead time has passed
-        return np.where(np.isnan(out), self.late if band < 1.0 else 0.0, out)
+        return np.where(np.isnan(out), self.late if band < 1.0 else 0.0, out), unproven
 
     def _late_deviation(self, after: FloatArray) -> FloatArray:
         f = self.found
@@ -219,38 +262,8 @@ class _Reading:
         return out + last_mode.area(f.amplitude[signal], f.pole)
 
 
-def delayed_step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """y and u of a unit reference step and y of a unit step at the plant's input, stable or not.
-
-    t : (M, T) or (T,) scaled times. At a jump the value after it is given. Returns (y, u, d), (M, T) each.
-    """
-    t = np.broadcast_to(np.asarray(t, dtype=float), (len(loops), np.shape(t)[-1]))
-    delay = loops.dead_time[:, None]
-    numerators = np.stack([loops.numerator, loops.control, loops.load])
-    horizon = np.maximum(t.max(axis=1, initial=0.0) / loops.dead_time, 0.0)
-    poles = delayed_poles(loops, np.zeros(len(loops)))
-    modes = true_modes(loops, numerators, poles)
-    out = np.zeros((3, len(loops), t.shape[1]))
-    fine, coarse, hold = resolution(loops, closed_roots(loops.denominator), modes.pole)
-    own = np.stack([t - delay, t, t - delay])
-    for row in range(len(loops)):
-        one = np.array([row])
-        count = int(np.floor(horizon[row])) + 1
-        marched = min(count, MOST_DRAWN if count <= MOST_DRAWN else LONG)
-        sizes = ladder(int(fine[row]) + 1, int(coarse[row]) + 1, int(hold[row]))
-        walk = Walk.start(loops.rows(one), numerators[:, one], sizes)
-        values = np.stack([walk.over()[:, 0] for _ in range(marched)])
-        edges = np.concatenate([[0.0], np.cumsum(sizes)])
-        for s, signal in enumerate((0, 1, 2)):
-            time = own[s, row]
-            place = time / loops.dead_time[row]
-            early = np.flatnonzero((time >= 0.0) & (place < marched))
-            k = np.floor(place[early]).astype(np.intp)
-            part = place[early] - k
-            i = np.clip(np.searchsorted(edges, part, side="right") - 1, 0, len(sizes) - 1)
-            x = (part - edges[i]) / sizes[i]
-            out[s, row, early] = jet(primitive_coefficients(values[k, signal, i]), x)[1]
-            late = np.flatnonzero(place >= marched)
-            if late.size:
-                out[s, row, late] = modes.rows(one).at(time[None, late])[0, signal]
-    return out[0], out[1], out[2]
+def _apart(one: FloatArray, other: FloatArray) -> BoolArray:
+    """Whether two times differ by more than what counts as one; NaN is never."""
+    near = np.abs(one - other) <= SAME_TIME * np.abs(one)
+    out: BoolArray = ~(near | (one == other) | (np.isnan(one) & np.isnan(other)))
+    return out

@@ -90,7 +90,7 @@ class _Zeros:
         far = np.flatnonzero(~(np.abs(left) < NEAR))
         if far.size:
             z = self.chosen(far)
-            exact = passing(signal[z.panel], z.low, z.high, z.a, z.b)
+            exact, _ = passing(signal[z.panel], z.low, z.high, z.a, z.b)
             out[far] = _horner(coefficients[:, far], exact)[0]
         return out
 

@@ -155,22 +155,25 @@ class Trace:
         far = np.clip(knot + 2 * way, 0, width - 1)
         return np.where(np.isnan(self.height[panel, near]), far, near)
 
-    def times(self, passages: list[Passage]) -> list[FloatArray]:
-        """Time of each passage, (M,) each; NaN where a loop has none. All are refined together."""
-        panel, left, right, level = (
-            np.concatenate([getattr(p, name) for p in passages])
-            for name in ("panel", "left", "right", "level")
+    def times(self, passages: list[Passage]) -> list[tuple[FloatArray, FloatArray]]:
+        """Time of each passage and abs(slope) there, (M,) each; NaN where a loop has none. All are refined
+        together."""
+        panel, left, right = (
+            np.concatenate([getattr(p, name) for p in passages]) for name in ("panel", "left", "right")
         )
+        level = np.concatenate([p.level for p in passages])
         low, high = self.place[panel, left], self.place[panel, right]
         a, b = self.height[panel, left], self.height[panel, right]
-        x = passing(self.panels.values[0, panel], low, high, a - level, b - level)
+        x, slope = passing(self.panels.values[0, panel], low, high, a - level, b - level)
+        # a jump passes every level at one time
+        slope = np.where(left == right, np.inf, np.abs(slope) / self.panels.length[panel])
         when = self.time(panel, x)
-        out, begin = [], 0
-        for p in passages:
-            one = np.full(len(self.panels.first), np.nan)
-            one[p.loop] = when[begin : begin + len(p.loop)]
-            begin += len(p.loop)
-            out.append(one)
+        edges = np.cumsum([len(p.loop) for p in passages])[:-1]
+        out = []
+        for p, *of_loops in zip(passages, np.split(when, edges), np.split(slope, edges), strict=True):
+            both = np.full((2, len(self.panels.first)), np.nan)
+            both[:, p.loop] = of_loops
+            out.append((both[0], both[1]))
         return out
 
 
@@ -201,23 +204,25 @@ def turning(
 
 def passing(
     signal: FloatArray, low: FloatArray, high: FloatArray, a: FloatArray, b: FloatArray
-) -> FloatArray:
+) -> tuple[FloatArray, FloatArray]:
     """Where the signal, monotone from low to high, passes the level that it is a above at low and b above at
-    high: Newton from the straight line, halving where it leaves the bracket. (E,)."""
+    high, and its slope there: Newton from the straight line, halving where it leaves the bracket. (E,)
+    each."""
     value = polynomial(signal)
     slope = derivative(value)
     rising = b > a
     with np.errstate(all="ignore"):
         x = low + (high - low) * np.clip(a / (a - b), 0.0, 1.0)
-    level = total(value, powers(high)) - b
     x = np.where(np.isfinite(x), x, high)
+    level = total(value, powers(high)) - b
+    steep = np.zeros_like(x)
     for _ in range(60):
         at = powers(x)
-        error = total(value, at) - level
+        error, steep = total(value, at) - level, total(slope, at)
         above = (error > 0.0) == rising
         high, low = np.where(above, x, high), np.where(above, low, x)
         with np.errstate(all="ignore"):
-            newton = x - error / total(slope, at)
+            newton = x - error / steep
         # rounding may put a converged step just beyond its bracket: no reason to start over
         good = (newton >= low - SETTLED) & (newton <= high + SETTLED)
         better = np.where(good, np.clip(newton, low, high), 0.5 * (low + high))
@@ -225,4 +230,4 @@ def passing(
         x = better
         if moved < SETTLED:
             break
-    return x
+    return x, steep
