@@ -11,11 +11,12 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.time.outlook import RESOLUTION
 from synth.loop.time.plan import TAIL, Plan, blocks
 from synth.loop.time.questions import Answers, Area, Passage, Supremum
 from synth.loop.time.scan import scan
 from synth.loop.time.signals import CELLS, HERMITE, Signals
-from synth.loop.time.survey import RESOLUTION, Survey
+from synth.loop.time.survey import Survey
 
 FINE = 5e-3
 """Cubic error allowed in a cell, relative to the size of the signal. Cells that matter are split further."""
@@ -89,7 +90,7 @@ def _direct(
     profile = modes.profile(np.maximum(RESOLUTION * unit, 1e-13 * modes.largest()) + 1e-300, bool(integrals))
     unit = np.maximum(unit, np.abs(profile.deviation).max(axis=2)) + 1e-300
     survey = Survey(modes, profile, unit, suprema, passages, integrals)
-    plan = blocks(modes, profile, survey.ends, FINE * unit, most)
+    plan = blocks(modes, profile, survey.outlook.ends, FINE * unit, most)
     for a, b in _passes(plan):
         low = plan.first[a]
         high = plan.first[b] if b < len(plan.first) else len(plan.loop)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass, field
+
 import numpy as np
 
 from synth.loop.arrays import FloatArray, IntArray
@@ -11,61 +13,69 @@ from synth.loop.time.signals import Signals
 ROUNDS = 5
 
 
-def zeros(modes: Signals, cells: Cells, negligible: FloatArray) -> Cells:
-    """Cells that hold one zero each, from cells that may hold none, one or more.
+@dataclass(slots=True)
+class Zeros:
+    """V questions.
 
-    negligible (V,) of each question: an area below this between two zeros need not be found.
+    negligible  (V,) an area below this between two zeros need not be found
     """
-    out = []
-    for k in range(ROUNDS + 1):
-        if len(cells) == 0:
-            break
+
+    negligible: FloatArray
+    _held: list[Cells] = field(init=False, default_factory=list)
+
+    def sort(self, cells: Cells, round_: int) -> IntArray:
+        """Take the cells that hold one zero each; returns those that must be cut."""
         changes = (cells.a > 0.0) != (cells.b > 0.0)
-        proven = cells.monotone() | (changes & cells.bent())
-        clean = changes & (proven | (k == ROUNDS))
-        out.append(cells.rows(clean))
+        monotone = cells.monotone()
+        proven = monotone | (changes & cells.bent())
+        clean = changes & (proven | (round_ == ROUNDS))
+        self._held.append(cells.rows(clean))
+        if round_ == ROUNDS:
+            return np.zeros(0, dtype=np.intp)
         low, high = cells.range()
         sliver = np.minimum(-low, high) * cells.h
-        pending = ~clean & ~proven & ((sliver > negligible[cells.key]) | changes)
-        cells = cells.rows(pending)
-        if len(cells) > MANY:
-            cells = foremost(cells, -cells.h, FEW)
-        if k < ROUNDS and len(cells):
-            cells = cells.split(modes)
-    return joined(out) if out else cells
+        rest: IntArray = (~proven & ((sliver > self.negligible[cells.key]) | changes)).nonzero()[0]
+        if rest.size > MANY:
+            rest = rest[foremost(cells.key[rest], -cells.h[rest], FEW)]
+        return rest
+
+    def cells(self) -> Cells:
+        """The cells found."""
+        return joined(self._held) if self._held else Cells.none()
 
 
-def area(
-    modes: Signals, signal: int, loops: IntArray, end: FloatArray, crossings: Cells
+def areas(
+    modes: Signals, signals: list[int], end: FloatArray, crossings: Cells
 ) -> tuple[FloatArray, FloatArray]:
-    """Integral of abs(x) from 0 to infinity for the named loops, (A,), and a bound of its relative error.
+    """Integral of abs(x) from 0 to infinity of the named signals, (A, M), and a bound of its relative error.
 
-    crossings : one zero a cell; its key is the number of the loop within `loops`. end (A,) a time after the
-    last zero that counts; from there on the slowest mode stands for all.
+    crossings : one zero a cell; its key is signal number · M + loop. end (A, M) a time after the last zero
+    that counts; from there on the slowest mode stands for all.
 
     The primitive is flat at a zero, so one evaluation at the cubic's zero, moved by a Newton step, has an
     error of third order in that step.
     """
-    count = len(loops)
+    shape, m, end = end.shape, end.shape[1], end.ravel()
+    count = len(end)
+    number = np.arange(count)
+    loops, many = number % m, np.repeat(signals, m)
     guess = crossings.t + crossings.crossing(np.zeros(len(crossings))) * crossings.h
-    before = guess < end[crossings.key]
+    before = (guess < end[crossings.key]).nonzero()[0]
     crossings, guess = crossings.rows(before), guess[before]
-    many = np.full(count, signal)
     where = np.concatenate([loops, crossings.loop, loops])
     which = np.concatenate([many, crossings.signal, many])
     primitive, value, slope = modes.jet(where, which, np.concatenate([np.zeros(count), guess, end]), -1, 3)
     inner = slice(count, count + len(guess))
-    with np.errstate(all="ignore"):
-        step = -value[inner] / slope[inner]
+    step = -value[inner] / slope[inner]
     step = np.where(np.abs(step) <= crossings.h, step, 0.0)
     primitive[inner] += step * (value[inner] + 0.5 * step * slope[inner])
-    row = np.concatenate([np.arange(count), crossings.key, np.arange(count)])
+    row = np.concatenate([number, crossings.key, number])
     time = np.concatenate([np.full(count, -1.0), guess, np.maximum(end, 0.0)])
     order = np.lexsort((time, row))
     row = row[order]
     primitive = primitive[order]
-    change = np.abs(np.diff(primitive)) * (row[1:] == row[:-1])
-    total: FloatArray = np.bincount(row[1:], weights=change, minlength=count)[:count].astype(float)
+    change = np.abs(primitive[1:] - primitive[:-1]) * (row[1:] == row[:-1])
+    total: FloatArray = np.bincount(row[1:], weights=change, minlength=count).astype(float)
     rest, error = modes.tail(loops, many, end)
     total += rest
-    return total, error / np.maximum(total, 1e-300)
+    return total.reshape(shape), (error / np.maximum(total, 1e-300)).reshape(shape)

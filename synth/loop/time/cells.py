@@ -28,39 +28,47 @@ class Cells:
 
     place  (3, Q) number of the question it belongs to, loop, signal
     data   (7, Q) t, h: start and width; a, b, c, d: end values, end slopes times h; miss: cubic error
+    turn   (Q,) middle control point of the slope
     """
 
-    __slots__ = ("a", "b", "c", "d", "data", "h", "key", "loop", "miss", "place", "signal", "t")
+    __slots__ = ("a", "b", "c", "d", "data", "h", "key", "loop", "miss", "place", "signal", "t", "turn")
 
     def __init__(self, place: IntArray, data: FloatArray) -> None:
         self.place, self.data = place, data
         self.key, self.loop, self.signal = place
         self.t, self.h, self.a, self.b, self.c, self.d, self.miss = data
+        self.turn: FloatArray = 3.0 * (self.b - self.a) - self.c - self.d
 
     def __len__(self) -> int:
         return int(self.place.shape[1])
 
+    @classmethod
+    def none(cls) -> Cells:
+        """An empty list."""
+        return cls(np.zeros((3, 0), dtype=np.intp), np.zeros((7, 0)))
+
     def rows(self, index: IntArray | BoolArray) -> Cells:
         """The cells named by `index`."""
         if index.dtype == bool:
-            index = np.flatnonzero(index)
+            index = index.nonzero()[0]
         return Cells(self.place.take(index, axis=1), self.data.take(index, axis=1))
+
+    def part(self, start: int, stop: int, key: int) -> Cells:
+        """The cells from number `start` to `stop`, their questions counted from `key`."""
+        place = self.place[:, start:stop]
+        return Cells(place - np.array([[key], [0], [0]]) if key else place, self.data[:, start:stop])
 
     def keyed(self, key: IntArray) -> Cells:
         """The same cells for other questions."""
-        return Cells(np.stack([key, self.loop, self.signal]), self.data)
-
-    @property
-    def turn(self) -> FloatArray:
-        """Middle control point of the slope."""
-        out: FloatArray = 3.0 * (self.b - self.a) - self.c - self.d
-        return out
+        place = self.place.copy()
+        place[0] = key
+        return Cells(place, self.data)
 
     def monotone(self) -> BoolArray:
         """Whether the slope provably keeps its sign."""
-        turn, least = self.turn, SLOPE_MISS * self.miss
-        low = np.minimum(np.minimum(self.c, self.d), turn)
-        high = np.maximum(np.maximum(self.c, self.d), turn)
+        least = SLOPE_MISS * self.miss
+        low = np.minimum(np.minimum(self.c, self.d), self.turn)
+        high = np.maximum(np.maximum(self.c, self.d), self.turn)
         out: BoolArray = (low > least) | (high < -least)
         return out
 
@@ -68,8 +76,8 @@ class Cells:
         """Whether the second derivative provably keeps its sign: at most one extremum, at most two
         crossings.
         """
-        turn, least = self.turn, BEND_MISS * self.miss
-        one, two = turn - self.c, self.d - turn
+        least = BEND_MISS * self.miss
+        one, two = self.turn - self.c, self.d - self.turn
         out: BoolArray = (np.minimum(one, two) > least) | (np.maximum(one, two) < -least)
         return out
 
@@ -99,17 +107,15 @@ class Cells:
         x: FloatArray
         with np.errstate(all="ignore"):
             x = (level - self.a) / (self.b - self.a)
-        low, high = np.zeros(len(self)), np.ones(len(self))
-        turn, third = self.turn, self.c + self.d - 2.0 * (self.b - self.a)
-        rising = self.b > self.a
-        for _ in range(5):
-            value = self.a + x * (self.c + x * (turn - self.c + x * third)) - level
-            below = (value < 0.0) == rising
-            low, high = np.where(below, x, low), np.where(below, high, x)
-            slope = self.c + x * (2.0 * (turn - self.c) + x * (3.0 * third))
-            with np.errstate(all="ignore"):
-                x = x - value / slope
-            x = np.where((x >= low) & (x <= high), x, 0.5 * (low + high))
+            low, high = np.zeros(len(self)), np.ones(len(self))
+            third = self.c + self.d - 2.0 * (self.b - self.a)
+            second, rising, start = self.turn - self.c, self.b > self.a, self.a - level
+            for _ in range(5):
+                value = start + x * (self.c + x * (second + x * third))
+                below = (value < 0.0) == rising
+                low, high = np.where(below, x, low), np.where(below, high, x)
+                x = x - value / (self.c + x * (2.0 * second + x * (3.0 * third)))
+                x = np.where((x >= low) & (x <= high), x, 0.5 * (low + high))
         return x
 
     def since(self, time: FloatArray, value: FloatArray, slope: FloatArray) -> Cells:
@@ -124,27 +130,31 @@ class Cells:
         return Cells(self.place, data)
 
     def split(self, modes: Signals) -> Cells:
-        """Each cell in eight."""
+        """Each cell in eight, which stand side by side."""
         q, h = len(self), self.h / CELLS
         value, slope = modes.nodes(self.loop, self.t, h, self.signal)
-        data = np.empty((7, CELLS, q))
-        data[0] = self.t + h * np.arange(CELLS)[:, None]
-        data[1] = h
-        data[2], data[3] = value[0, :-1], value[0, 1:]
-        data[4], data[5] = slope[0, :-1], slope[0, 1:]
-        data[6] = modes.cell_misses(self.loop, self.signal, self.t, h)
-        return Cells(np.tile(self.place, CELLS), data.reshape(7, CELLS * q))
+        data = np.empty((7, q, CELLS))
+        data[0] = self.t[:, None] + h[:, None] * _EIGHT
+        data[1] = h[:, None]
+        data[2], data[3] = value[0, :-1].T, value[0, 1:].T
+        data[4], data[5] = slope[0, :-1].T, slope[0, 1:].T
+        data[6] = modes.cell_misses(self.loop, self.signal, self.t, h).T
+        return Cells(self.place.repeat(CELLS, axis=1), data.reshape(7, CELLS * q))
 
 
-def foremost(cells: Cells, rank: FloatArray, most: int) -> Cells:
-    """Of the cells of each question the `most` of least rank."""
-    order = np.lexsort((rank, cells.key))
-    key = cells.key[order]
+_EIGHT = np.arange(CELLS)
+
+
+def foremost(key: IntArray, rank: FloatArray, most: int) -> IntArray:
+    """Numbers of the cells that are among the `most` of least rank of their question."""
+    order = np.lexsort((rank, key))
+    key = key[order]
     number = np.arange(len(key))
     begin = np.ones(len(key), dtype=bool)
     begin[1:] = key[1:] != key[:-1]
     start = np.maximum.accumulate(np.where(begin, number, 0))
-    return cells.rows(order[number - start < most])
+    out: IntArray = order[number - start < most]
+    return out
 
 
 def joined(parts: list[Cells]) -> Cells:
@@ -154,8 +164,3 @@ def joined(parts: list[Cells]) -> Cells:
     return Cells(
         np.concatenate([p.place for p in parts], axis=1), np.concatenate([p.data for p in parts], axis=1)
     )
-
-
-def no_cells() -> Cells:
-    """An empty list."""
-    return Cells(np.zeros((3, 0), dtype=np.intp), np.zeros((7, 0)))

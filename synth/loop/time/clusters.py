@@ -155,17 +155,15 @@ class ClusterModes:
             out.append(np.ascontiguousarray(np.einsum("psck,kpwc->swp", part, basis).real))
         return out[0], out[1] * h
 
-    def jet(
-        self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int
-    ) -> list[FloatArray]:
-        """Derivatives number first, first + 1, ... (-1: the primitive that vanishes at infinity), each
-        (E,).
-        """
+    def jet(self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int) -> FloatArray:
+        """Derivatives number first, first + 1, ... (-1: the primitive, 0 at infinity), (count, E)."""
         basis = _basis(self.pole[loop], t[:, None])[:, :, 0]
-        return [
-            np.einsum("eck,kec->e", self._coefficients(order)[loop, signal], basis).real
-            for order in range(first, first + count)
-        ]
+        return np.array(
+            [
+                np.einsum("eck,kec->e", self._coefficients(order)[loop, signal], basis).real
+                for order in range(first, first + count)
+            ]
+        )
 
     def curves(self, t: FloatArray) -> FloatArray:
         """x - x(inf) at the times t (M, T) of each loop; (M, S, T)."""

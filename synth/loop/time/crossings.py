@@ -6,14 +6,12 @@ outside.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, FloatArray
-from synth.loop.time.cells import FEW, MANY, Cells, foremost, joined, no_cells
-from synth.loop.time.events import crossing
-from synth.loop.time.signals import Signals
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.time.cells import FEW, MANY, Cells, foremost, joined
 
 ROUNDS = 9
 ROUNDING = 1e-15
@@ -30,60 +28,55 @@ class Edges:
     low: FloatArray
     high: FloatArray
     last: BoolArray
-    dropped: BoolArray
+    dropped: BoolArray = field(init=False)
+    _rank: FloatArray = field(init=False)
+    _sure: list[Cells] = field(init=False, default_factory=list)
 
+    def __post_init__(self) -> None:
+        self.dropped = np.zeros(len(self.low), dtype=bool)
+        self._rank = np.full(len(self.low), np.inf)  # of the best passage found: the least counts
 
-def resolve(modes: Signals, edges: Edges, cells: Cells) -> FloatArray:
-    """(V,) time of the first or last passage within the cells given; NaN where there is none.
+    def sort(self, cells: Cells, round_: int) -> IntArray:
+        """Take the passages that are sure; returns the cells that must be cut.
 
-    The cells of a question need not join, but whatever lies between them must be known to hold no passage
-    that matters.
-    """
-    answers = len(edges.low)
-    found = np.full(answers, np.nan)
-    sure = no_cells()
-    for k in range(ROUNDS + 1):
-        if len(cells) == 0:
-            break
-        low, high, last = edges.low[cells.key], edges.high[cells.key], edges.last[cells.key]
-        out_a = (cells.a > high) | (cells.a < low)
-        out_b = (cells.b > high) | (cells.b < low)
-        least, most = cells.range()
-        touches = (most > high + ROUNDING) | (least < low - ROUNDING)
+        The cells of a question need not join, but whatever lies between them must be known to hold no passage
+        that matters.
+        """
+        low, high, last = self.low[cells.key], self.high[cells.key], self.last[cells.key]
+        a, b = cells.a, cells.b
+        out_a = (a > high) | (a < low)
         monotone = cells.monotone()
-        passes = out_a != out_b
         # a last exit leads from outside in, a first arrival from inside out
-        right_way = passes & (out_a == last)
-        outside = np.where(out_a, cells.a, cells.b)
-        above = outside > high
-        one_edge = np.where(above, least >= low, most <= high)
-        clean = right_way & (monotone | (cells.bent() & one_edge))
-        if k == ROUNDS:
-            clean = right_way  # the width is 1e-8 of a cell
-        if clean.any():
-            sure = joined([sure, cells.rows(clean)])
-            sure = foremost(sure, np.where(edges.last[sure.key], -sure.t, sure.t), 1)
-        pending = ~clean & ~monotone & touches
-        when = np.full(answers, np.nan)
-        when[sure.key] = sure.t
-        limit = when[cells.key]
-        with np.errstate(invalid="ignore"):
-            beaten = np.where(last, cells.t < limit, cells.t > limit)
-        cells = cells.rows(pending & ~beaten)
-        if len(cells) > MANY:
-            kept = foremost(cells, np.where(edges.last[cells.key], -cells.t, cells.t), FEW)
-            edges.dropped[
-                np.bincount(cells.key, minlength=answers) > np.bincount(kept.key, minlength=answers)
-            ] = True
-            cells = kept
-        if k < ROUNDS and len(cells):
-            cells = cells.split(modes)
-    if len(sure):
-        high = edges.high[sure.key]
-        above = (sure.a > high) | (sure.b > high)
-        level = np.where(above, high, edges.low[sure.key])
-        guess = sure.t + sure.crossing(level) * sure.h
-        found[sure.key] = crossing(
-            modes, sure.loop, sure.signal, sure.t, sure.h, guess, level, sure.b > sure.a
-        )
-    return found
+        right_way = (out_a != ((b > high) | (b < low))) & (out_a == last)
+        least, most = cells.range()
+        above = np.where(out_a, a, b) > high
+        clean = right_way
+        if round_ < ROUNDS:  # then the width is 1e-8 of a cell
+            clean = right_way & (monotone | (cells.bent() & np.where(above, least >= low, most <= high)))
+        rank = np.where(last, -cells.t, cells.t)
+        sure = clean.nonzero()[0]
+        if sure.size:
+            np.minimum.at(self._rank, cells.key[sure], rank[sure])
+            self._sure.append(cells.rows(sure))
+        if round_ == ROUNDS:
+            return np.zeros(0, dtype=np.intp)
+        touches = (most > high + ROUNDING) | (least < low - ROUNDING)
+        rest: IntArray = (touches & ~clean & ~monotone & ~(rank > self._rank[cells.key])).nonzero()[0]
+        if rest.size > MANY:
+            key = cells.key[rest]
+            self.dropped[np.bincount(key, minlength=len(self.low)) > FEW] = True
+            rest = rest[foremost(key, rank[rest], FEW)]
+        return rest
+
+    def passages(self) -> tuple[Cells, FloatArray, FloatArray]:
+        """The cell that holds the passage of each question that has one, the time to look for it from, and
+        the level that is passed.
+        """
+        if not self._sure:
+            return Cells.none(), np.zeros(0), np.zeros(0)
+        cells = joined(self._sure)
+        rank = np.where(self.last[cells.key], -cells.t, cells.t)
+        cells = cells.rows(rank == self._rank[cells.key])
+        high = self.high[cells.key]
+        level = np.where((cells.a > high) | (cells.b > high), high, self.low[cells.key])
+        return cells, cells.t + cells.crossing(level) * cells.h, level

@@ -9,7 +9,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.arrays import BoolArray, FloatArray
+from synth.loop.time.cells import Cells
 from synth.loop.time.signals import Signals
 
 NEAR = 1e-3
@@ -18,74 +19,44 @@ NEAR = 1e-3
 ROUNDS = 60
 
 
-def crossing(
+def solve(
     modes: Signals,
-    loop: IntArray,
-    signal: IntArray,
-    low: FloatArray,
-    width: FloatArray,
+    brackets: Cells,
     guess: FloatArray,
     level: FloatArray,
-    rising: BoolArray,
-) -> FloatArray:
-    """Times at which the signals meet their levels, (E,). Error about 1e-9 of the width."""
-    t, _ = _solve(modes, loop, signal, low, width, guess, level, rising)
-    return t
-
-
-def extremum(
-    modes: Signals,
-    loop: IntArray,
-    signal: IntArray,
-    low: FloatArray,
-    width: FloatArray,
-    guess: FloatArray,
-    maximum: BoolArray,
-) -> tuple[FloatArray, FloatArray]:
-    """Times and values of extrema, (E,) each. The value's error is of higher order than the time's."""
-    return _solve(modes, loop, signal, low, width, guess, None, ~maximum)
-
-
-def _solve(
-    modes: Signals,
-    loop: IntArray,
-    signal: IntArray,
-    low: FloatArray,
-    width: FloatArray,
-    guess: FloatArray,
-    level: FloatArray | None,
+    turning: BoolArray,
     rising: BoolArray,
 ) -> tuple[FloatArray, FloatArray]:
-    """Zero of x - level, or of x' without level; `rising` where that function goes from below to above 0."""
-    left, right = low.copy(), low + width
-    t = guess.copy()
-    value = np.empty(len(t))
-    open_ = np.arange(len(t))
+    """Times of the events, and values of the signals at the extrema among them, (E,) each.
+
+    turning : an extremum is sought, and level is 0; else where the signal meets the level. rising : whether
+    what vanishes there, the slope or the signal less the level, goes from below to above 0.
+    Error of a time about 1e-9 of the width; that of an extremum's value is of higher order.
+    """
+    loop, signal, low, width = brackets.loop, brackets.signal, brackets.t, brackets.h
+    times, values = np.empty(len(guess)), np.empty(len(guess))
+    high, t, open_ = low + width, guess, np.arange(len(guess))
     for _ in range(ROUNDS):
-        if open_.size == 0:
+        x = modes.jet(loop, signal, t, 0, 4)
+        x[0] -= level
+        f, f1, f2 = np.where(turning, x[1:], x[:-1])
+        below = (f < 0.0) == rising
+        low, high = np.where(below, t, low), np.where(below, high, t)
+        ratio = f * f2 / (f1 * f1)
+        aim = t - f / (f1 * (1.0 - 0.5 * ratio))
+        near, zero = NEAR * width, f == 0.0
+        done = (np.abs(aim - t) <= near) & (np.abs(ratio) <= NEAR)
+        # a zero at an end may be aimed at from just outside
+        inside = (aim >= low - near) & (aim <= high + near)
+        done = (done & inside) | zero | (high - low <= 4e-16 * high)
+        aim = np.where(inside, np.minimum(np.maximum(aim, low), high), 0.5 * (low + high))
+        aim = np.where(zero, t, aim)
+        step = aim - t
+        times[open_] = aim
+        values[open_] = x[0] + step * (f + step * (0.5 * f1 + step * f2 / 6.0))
+        left = (~done).nonzero()[0]
+        if left.size == 0:
             break
-        now = t[open_]
-        x, *slopes = modes.jet(loop[open_], signal[open_], now, 0, 3 if level is not None else 4)
-        f, f1, f2 = (x - level[open_], *slopes) if level is not None else slopes
-        below = (f < 0.0) == rising[open_]
-        left[open_] = np.where(below, now, left[open_])
-        right[open_] = np.where(below, right[open_], now)
-        with np.errstate(all="ignore"):
-            ratio = f * f2 / (f1 * f1)
-            step = -f / (f1 * (1.0 - 0.5 * ratio))
-        size, low_end, high_end = width[open_], left[open_], right[open_]
-        aim = now + step
-        inside = (aim >= low_end - NEAR * size) & (aim <= high_end + NEAR * size)
-        aim = np.minimum(
-            np.maximum(aim, low_end), high_end
-        )  # a zero at an end may be aimed at from just outside
-        done = inside & (np.abs(step) <= NEAR * size) & (np.abs(ratio) <= NEAR)
-        done |= (f == 0.0) | (high_end - low_end <= 4e-16 * high_end)
-        aim = np.where(f == 0.0, now, np.where(inside, aim, 0.5 * (low_end + high_end)))
-        step = aim - now
-        if level is None:
-            x = x + step * (f + step * (0.5 * f1 + step * f2 / 6.0))
-        t[open_] = aim
-        value[open_] = x
-        open_ = open_[~done]
-    return t, value
+        loop, signal, open_, rising, turning = (v[left] for v in (loop, signal, open_, rising, turning))
+        t, low, high, width, level = (v[left] for v in (aim, low, high, width, level))
+    return times, values

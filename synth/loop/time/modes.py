@@ -155,12 +155,8 @@ class Modes:
         turned = turned.reshape(2 * s, CELLS + 1, blocks)
         return turned[:s], turned[s:]
 
-    def jet(
-        self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int
-    ) -> list[FloatArray]:
-        """Derivatives number first, first + 1, ... (-1: the primitive that vanishes at infinity), each
-        (E,).
-        """
+    def jet(self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int) -> FloatArray:
+        """Derivatives number first, first + 1, ... (-1: the primitive, 0 at infinity), (count, E)."""
         pole = self._pole.take(loop, axis=1)
         term = np.exp(pole * t)
         term *= self._residue.take(loop * self.residue.shape[1] + signal, axis=1)
@@ -168,10 +164,11 @@ class Modes:
             term /= pole
         elif first > 0:
             term *= pole**first
-        out = [term.real.sum(axis=0)]
-        for _ in range(count - 1):
+        out = np.empty((count, len(t)))
+        np.add.reduce(term.real, axis=0, out=out[0])
+        for k in range(1, count):
             term *= pole
-            out.append(term.real.sum(axis=0))
+            np.add.reduce(term.real, axis=0, out=out[k])
         return out
 
     def curves(self, t: FloatArray) -> FloatArray:

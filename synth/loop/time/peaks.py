@@ -1,19 +1,17 @@
 """Suprema: the largest value a signal takes, proven over every cell.
 
 A question asks for the supremum of sign * (x + offset) over t >= 0. Its answer starts from what is known
-(nodes, limits) and is raised until no cell can hold more.
+(nodes, limits); cells that can hold more are halved until each holds one summit or nothing that matters.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
-from synth.loop.time.cells import FEW, MANY, Cells, foremost
-from synth.loop.time.events import extremum
-from synth.loop.time.signals import Signals
+from synth.loop.time.cells import FEW, MANY, Cells, foremost, joined
 
 ROUNDS = 8
 
@@ -27,81 +25,77 @@ class Peaks:
 
     best, place   (W,) largest value known and where it was found (NaN: at no time, a limit or a floor)
     tolerance     (W,) a gain below this does not count
-    answer, sign, offset   (V,) of each question
+    answer        (V,) of each question
     dropped       (W,) set where cells in doubt had to be given up
+    floor         (W,) what the supremum is sure to reach
     """
 
     best: FloatArray
     place: FloatArray
     tolerance: FloatArray
     answer: IntArray
-    sign: FloatArray
-    offset: FloatArray
-    dropped: BoolArray
+    dropped: BoolArray = field(init=False)
+    floor: FloatArray = field(init=False)
+    _summits: list[tuple[Cells, FloatArray, FloatArray]] = field(init=False, default_factory=list)
 
-    def seen(self, cells: Cells) -> Cells:
-        """The cells in terms of their question, sign * (x + offset)."""
-        sign = self.sign[cells.key]
-        data = cells.data.copy()
-        data[2:4] += self.offset[cells.key]
-        data[2:6] *= sign
-        return Cells(cells.place, data)
+    def __post_init__(self) -> None:
+        self.dropped, self.floor = np.zeros(len(self.best), dtype=bool), self.best + self.tolerance
 
-    def least(self, key: IntArray) -> FloatArray:
-        """(Q,) what a cell must be able to reach to matter."""
-        answer = self.answer[key]
-        out: FloatArray = self.best[answer] + self.tolerance[answer]
-        return out
+    def sort(self, cells: Cells, round_: int) -> IntArray:
+        """Take what the cells tell; returns those that must be cut. Cells are in the terms of their question.
 
-    def raise_to(self, key: IntArray, value: FloatArray, place: FloatArray) -> None:
-        """Take note of values found."""
+        A cell that is bent and rises at its start and falls at its end holds one summit.
+        """
+        answer = self.answer[cells.key]
+        top = np.maximum(cells.a, cells.b)
+        if round_ == ROUNDS:
+            self._raise_to(answer, top, cells.t)
+            return np.zeros(0, dtype=np.intp)
+        single = cells.bent() & (cells.c > 0.0) & (cells.d < 0.0)
+        place, summit = cells.summit()
+        upper = np.where(single, summit + cells.miss, cells.range()[1])
+        known = top - 2.0 * self.tolerance[answer]
+        np.maximum.at(self.floor, answer, np.where(single, np.maximum(summit - cells.miss, known), known))
+        useful = (upper >= self.floor[answer]) & ~cells.monotone()
+        found = (useful & single).nonzero()[0]
+        if found.size:
+            self._summits.append((cells.rows(found), place[found], upper[found]))
+        rest: IntArray = (useful & ~single).nonzero()[0]
+        if rest.size == 0:
+            return rest
+        level = _level(cells.rows(rest))
+        if level.any():
+            at, rest = rest[level], rest[~level]
+            later = np.where(cells.b[at] > cells.a[at], cells.h[at], 0.0)
+            self._raise_to(answer[at], top[at], cells.t[at] + later)
+        if rest.size > MANY:
+            kept = foremost(cells.key[rest], -upper[rest], FEW)
+            lost = np.bincount(cells.key[rest], minlength=len(self.answer)) > FEW
+            self.dropped[self.answer[lost]] = True
+            rest = rest[kept]
+        return rest
+
+    def summits(self) -> tuple[Cells, FloatArray]:
+        """Cells that hold a summit which may be the highest, and the times to look for it from."""
+        if not self._summits:
+            return Cells.none(), np.zeros(0)
+        parts, places, uppers = zip(*self._summits, strict=True)
+        cells, place = joined(list(parts)), np.concatenate(places)
+        high = (np.concatenate(uppers) >= self.floor[self.answer[cells.key]]).nonzero()[0]
+        cells = cells.rows(high)
+        return cells, cells.t + place[high] * cells.h
+
+    def close(self, key: IntArray, value: FloatArray, time: FloatArray) -> None:
+        """Take the summits found, in the terms of their questions."""
+        np.maximum(self.best, self.floor - self.tolerance, out=self.best)
+        self._raise_to(self.answer[key], value, time)
+
+    def _raise_to(self, answer: IntArray, value: FloatArray, place: FloatArray) -> None:
         order = np.argsort(value, kind="stable")
-        answer, value, place = self.answer[key][order], value[order], place[order]
+        answer, value, place = answer[order], value[order], place[order]
         higher = value > self.best[answer]
         self.best[answer[higher]] = value[higher]  # the last of equal answers, the largest, stays
         self.place[answer[higher]] = place[higher]
-
-
-def resolve(modes: Signals, peaks: Peaks, cells: Cells) -> None:
-    """Raise every answer to its supremum over the cells (already in the terms of their question)."""
-    for _ in range(ROUNDS):
-        if len(cells) == 0:
-            return
-        single = cells.bent() & (cells.c > 0.0) & (cells.d < 0.0)
-        upper = cells.range()[1]
-        place, summit = cells.summit()
-        upper = np.where(single, summit + cells.miss, upper)
-        known = np.maximum(cells.a, cells.b) - 2.0 * peaks.tolerance[peaks.answer[cells.key]]
-        lower = np.where(single, np.maximum(summit - cells.miss, known), known)
-        floor = peaks.best.copy()
-        np.maximum.at(floor, peaks.answer[cells.key], lower)
-        useful = (upper > peaks.least(cells.key)) & (upper >= floor[peaks.answer[cells.key]])
-        found = useful & single
-        if found.any():
-            few, x = cells.rows(found), place[found]
-            guess = few.t + x * few.h
-            up = peaks.sign[few.key] > 0.0
-            time, value = extremum(modes, few.loop, few.signal, few.t, few.h, guess, up)
-            peaks.raise_to(few.key, peaks.sign[few.key] * (value + peaks.offset[few.key]), time)
-        level = useful & ~single & _level(cells)
-        if level.any():
-            few = cells.rows(level)
-            at_end = few.b > few.a
-            peaks.raise_to(few.key, np.where(at_end, few.b, few.a), np.where(at_end, few.t + few.h, few.t))
-        np.maximum.at(peaks.best, peaks.answer[cells.key], known)
-        rest = useful & ~single & ~level & (upper > peaks.least(cells.key))
-        if np.count_nonzero(rest) > MANY:
-            kept = foremost(cells.rows(rest), -upper[rest], FEW)
-            lost = np.bincount(cells.key[rest], minlength=len(peaks.sign)) > np.bincount(
-                kept.key, minlength=len(peaks.sign)
-            )
-            peaks.dropped[peaks.answer[lost]] = True
-            cells, rest = kept, np.ones(len(kept), dtype=bool)
-        if not rest.any():
-            return
-        cells = peaks.seen(cells.rows(rest).split(modes))
-        cells = cells.rows((cells.range()[1] > peaks.least(cells.key)) & ~cells.monotone())
-    peaks.raise_to(cells.key, np.maximum(cells.a, cells.b), cells.t)
 
 
 def _level(cells: Cells) -> BoolArray:

@@ -44,24 +44,25 @@ class Plan:
 
 
 def reach(profile: Profile, curve: FloatArray, level: FloatArray) -> FloatArray:
-    """(M,) earliest sure time at which a decreasing curve (M, K) of the profile is <= level (M,).
+    """(M, R) earliest sure time at which decreasing curves (M, R, K) of the profile are <= level (M, R).
 
     Between two times a log-convex curve is read off the chord of its logarithm, which lies above it. The
     last time where the level is never reached.
     """
-    time, below = profile.time, curve <= level[:, None]
-    k = np.where(below.any(axis=1), below.argmax(axis=1), curve.shape[1] - 1)
-    row = np.arange(len(k))
+    time, below = profile.time, curve <= level[:, :, None]
+    below[:, :, -1] = True
+    k = below.argmax(axis=2)
+    row = np.arange(len(time))[:, None]
     right: FloatArray = time[row, k]
     if not profile.log_convex:
         return right
     before = np.maximum(k - 1, 0)
-    high, low = curve[row, before], curve[row, k]
-    with np.errstate(all="ignore"):
-        part = np.log(high / level) / np.log(high / low)
+    column = np.arange(curve.shape[1])
+    high, low = curve[row, column, before], curve[row, column, k]
+    part = np.log(high / level) / np.log(high / low)
     part = np.where((part >= 0.0) & (part <= 1.0), part, 1.0)
     left = time[row, before]
-    out: FloatArray = np.where(k == 0, time[:, 0], left + part * (right - left))
+    out: FloatArray = left + part * (right - left)
     return out
 
 

@@ -5,9 +5,7 @@ M loops. Signals are counted from their values at infinity. Only what is asked f
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
-
-import numpy as np
+from dataclasses import dataclass
 
 from synth.loop.arrays import BoolArray, FloatArray
 
@@ -56,13 +54,13 @@ class Answers:
     open_suprema, open_passages   True where the search was given up before that time
     """
 
-    suprema: list[FloatArray] = field(default_factory=list)
-    times: list[FloatArray] = field(default_factory=list)
-    passages: list[FloatArray] = field(default_factory=list)
-    areas: list[FloatArray] = field(default_factory=list)
-    doubts: list[FloatArray] = field(default_factory=list)
-    seen: FloatArray = field(default_factory=lambda: np.zeros(0))
-    supremum_ends: list[FloatArray] = field(default_factory=list)
-    passage_ends: list[FloatArray] = field(default_factory=list)
-    open_suprema: list[BoolArray] = field(default_factory=list)
-    open_passages: list[BoolArray] = field(default_factory=list)
+    suprema: list[FloatArray]
+    times: list[FloatArray]
+    passages: list[FloatArray]
+    areas: list[FloatArray]
+    doubts: list[FloatArray]
+    seen: FloatArray
+    supremum_ends: list[FloatArray]
+    passage_ends: list[FloatArray]
+    open_suprema: list[BoolArray]
+    open_passages: list[BoolArray]

@@ -82,12 +82,8 @@ class Signals(Protocol):
         loop, t, h (P,); signal (P,), and then S = 1, or None for all.
         """
 
-    def jet(
-        self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int
-    ) -> list[FloatArray]:
-        """Derivatives number first, first + 1, ... (-1: the primitive that vanishes at infinity), each
-        (E,).
-        """
+    def jet(self, loop: IntArray, signal: IntArray, t: FloatArray, first: int, count: int) -> FloatArray:
+        """Derivatives number first, first + 1, ... (-1: the primitive, 0 at infinity), (count, E)."""
 
     def curves(self, t: FloatArray) -> FloatArray:
         """x at the times t (M, T) of each loop; (M, S, T)."""

@@ -18,7 +18,7 @@ def _planned(random_loops):
     modes = step_modes(loops, poles, NAMES)
     profile = modes.profile(1e-9 * modes.largest(), False)
     level = 1e-3 * modes.largest()
-    ends = np.stack([reach(profile, profile.envelope[:, s], level[:, s]) for s in range(3)], axis=1)
+    ends = reach(profile, profile.envelope, level)
     return modes, ends, blocks(modes, profile, ends, 5e-3 * modes.largest(), 4096)
 
 
@@ -79,11 +79,11 @@ def test_a_split_cell_is_the_cell(planned):
     )
     parts = cells.split(modes)
     assert len(parts) == 5 * CELLS
-    first, last = parts.rows(np.arange(5)), parts.rows(np.arange(5 * CELLS - 5, 5 * CELLS))
+    first, last = (parts.rows(np.arange(5) * CELLS + k) for k in (0, CELLS - 1))
     np.testing.assert_allclose(first.a, cells.a, rtol=1e-12, atol=1e-12)
     np.testing.assert_allclose(last.b, cells.b, rtol=1e-9, atol=1e-12)
     np.testing.assert_allclose(first.c * CELLS, cells.c, rtol=1e-12, atol=1e-12)
-    assert (parts.miss <= np.tile(cells.miss, CELLS) / CELLS**4 * (1 + 1e-9)).all()
+    assert (parts.miss <= np.repeat(cells.miss, CELLS) / CELLS**4 * (1 + 1e-9)).all()
 
 
 def test_crossing_of_the_cubic():
