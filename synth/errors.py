@@ -28,6 +28,11 @@ class Fault:
     allowed: str | None = None
     nearest: str | None = None
 
+    def __str__(self) -> str:
+        line = None if self.line is None else f"line {self.line}"
+        place = ", ".join(part for part in (self.file, line, self.key) if part)
+        return f"{self.what} ({place})" if place else self.what
+
 
 class SynthError(Exception):
     """Base of every error the user is meant to read."""
@@ -38,7 +43,7 @@ class InputError(SynthError):
 
     def __init__(self, faults: Iterable[Fault]) -> None:
         self.faults: tuple[Fault, ...] = tuple(faults)
-        super().__init__("; ".join(f.what for f in self.faults))
+        super().__init__("; ".join(map(str, self.faults)))
 
 
 def nearest(name: str, allowed: Iterable[str]) -> str | None:

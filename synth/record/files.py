@@ -11,12 +11,12 @@ import hashlib
 import json
 import os
 import tempfile
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
 from synth.errors import Fault, InputError
-from synth.record.shape import departures
+from synth.record.shape import Departure, departures
 
 LARGEST_FILE = 200_000_000  # bytes; a record is a few hundred kilobytes
 
@@ -113,9 +113,17 @@ def read_document(path: Path, expected: str, kind: Any, noun: str) -> tuple[dict
     _check_format(data, expected, path, noun)
     found = departures(data, kind)
     if found:
-        raise InputError(Fault(f"damaged {noun}: {what}", file=str(path)) for what in found)
+        raise damaged(noun, path, found)
     checked: dict[str, Any] = data
     return checked, hashlib.sha256(content).hexdigest()
+
+
+def damaged(noun: str, path: Path, found: Sequence[Departure]) -> InputError:
+    """A fault for each place where a document is not what it should be."""
+    return InputError(
+        Fault(f"damaged {noun}: {'this' if place else 'the file'} {what}", file=str(path), key=place or None)
+        for place, what in found
+    )
 
 
 def _check_format(data: Any, expected: str, path: Path, noun: str) -> None:

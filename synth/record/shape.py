@@ -4,15 +4,35 @@ from __future__ import annotations
 
 import types
 from functools import cache
-from typing import Any, Literal, NotRequired, Union, get_args, get_origin, get_type_hints, is_typeddict
+from typing import (
+    Any,
+    Literal,
+    NamedTuple,
+    NotRequired,
+    Union,
+    get_args,
+    get_origin,
+    get_type_hints,
+    is_typeddict,
+)
 
 MOST = 8  # complaints worth reading about one file
 LARGEST = 1.8e308
 
 
-def departures(value: Any, kind: Any, path: str = "") -> list[str]:
+class Departure(NamedTuple):
+    """What is wrong at one place: key path ("" for the whole file), and words that go on after it."""
+
+    path: str
+    what: str
+
+    def __str__(self) -> str:
+        return f"{self.path or 'the file'} {self.what}"
+
+
+def departures(value: Any, kind: Any, path: str = "") -> list[Departure]:
     """What keeps `value` from being of the type `kind`; empty when nothing does. At most MOST complaints."""
-    found: list[str] = []
+    found: list[Departure] = []
     _compare(value, kind, path, found)
     return found[:MOST]
 
@@ -28,51 +48,50 @@ def _fields(kind: Any) -> dict[str, tuple[Any, bool]]:
     return out
 
 
-def _compare(value: Any, kind: Any, path: str, found: list[str]) -> None:
+def _compare(value: Any, kind: Any, path: str, found: list[Departure]) -> None:
     if len(found) >= MOST or kind is Any:
         return
     origin = get_origin(kind)
     if is_typeddict(kind):
         if not isinstance(value, dict):
-            found.append(f"{_at(path)} must be a table, is {_named(value)}")
+            found.append(Departure(path, f"must be a table, is {_named(value)}"))
             return
         for name, (inner, required) in _fields(kind).items():
             here = f"{path}.{name}" if path else name
             if name in value:
                 _compare(value[name], inner, here, found)
             elif required:
-                found.append(f"{here} is missing")
+                found.append(Departure(here, "is missing"))
     elif origin in (Union, types.UnionType):
         _compare_union(value, kind, path, found)
     elif origin is Literal:
         if value not in get_args(kind):
-            found.append(
-                f"{_at(path)} must be one of {', '.join(map(repr, get_args(kind)))}, is {_named(value)}"
-            )
+            allowed = ", ".join(map(repr, get_args(kind)))
+            found.append(Departure(path, f"must be one of {allowed}, is {_named(value)}"))
     elif origin is list:
         if not isinstance(value, list):
-            found.append(f"{_at(path)} must be a list, is {_named(value)}")
+            found.append(Departure(path, f"must be a list, is {_named(value)}"))
             return
         for i, item in enumerate(value):
             _compare(item, get_args(kind)[0], f"{path}[{i}]", found)
     elif origin is dict:
         if not isinstance(value, dict):
-            found.append(f"{_at(path)} must be a table, is {_named(value)}")
+            found.append(Departure(path, f"must be a table, is {_named(value)}"))
             return
         for name, item in value.items():
             _compare(item, get_args(kind)[1], f"{path}.{name}", found)
     elif not _plain(value, kind):
-        found.append(f"{_at(path)} must be {_word(kind)}, is {_named(value)}")
+        found.append(Departure(path, f"must be {_word(kind)}, is {_named(value)}"))
 
 
-def _compare_union(value: Any, kind: Any, path: str, found: list[str]) -> None:
+def _compare_union(value: Any, kind: Any, path: str, found: list[Departure]) -> None:
     """A union holds when one of its members does;
 
     The complaint is that of the member of the same outer kind.
     """
-    best: list[str] | None = None
+    best: list[Departure] | None = None
     for member in get_args(kind):
-        tried: list[str] = []
+        tried: list[Departure] = []
         _compare(value, member, path, tried)
         if not tried:
             return
@@ -82,9 +101,8 @@ def _compare_union(value: Any, kind: Any, path: str, found: list[str]) -> None:
             best = tried
     words = " or ".join(dict.fromkeys(_word(m) for m in get_args(kind)))
     nested = best is not None and isinstance(value, dict | list)
-    found.extend(
-        best if best is not None and nested else [f"{_at(path)} must be {words}, is {_named(value)}"]
-    )
+    plain = Departure(path, f"must be {words}, is {_named(value)}")
+    found.extend(best if best is not None and nested else [plain])
 
 
 def _plain(value: Any, kind: Any) -> bool:
@@ -98,10 +116,6 @@ def _plain(value: Any, kind: Any) -> bool:
         number = isinstance(value, int | float) and not isinstance(value, bool)
         return number and abs(value) < LARGEST  # 1e999 reads as infinite, and a huge integer is no float
     return isinstance(value, kind)
-
-
-def _at(path: str) -> str:
-    return path or "the file"
 
 
 def _word(kind: Any) -> str:

@@ -15,7 +15,7 @@ from typing import cast
 
 from synth.errors import Fault, InputError
 from synth.record.consistency import contradictions
-from synth.record.files import read_document, text_of, write_new
+from synth.record.files import damaged, read_document, text_of, write_new
 from synth.record.format import ADOPTION_FORMAT, RECORD_FORMAT, Adoption, Record
 from synth.record.shape import MOST
 
@@ -149,7 +149,7 @@ def read_record(path: Path) -> Stored:
     record = cast(Record, data)
     broken = contradictions(record)[:MOST]
     if broken:
-        raise InputError(Fault(f"damaged record: {what}", file=str(path)) for what in broken)
+        raise damaged("record", path, broken)
     return Stored(path, sha, record)
 
 

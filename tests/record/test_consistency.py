@@ -54,11 +54,12 @@ def test_a_broken_promise_is_named(record, tmp_path, path, value, complaint):
     for key in path[:-1]:
         inner = inner[key]
     inner[path[-1]] = value
-    assert contradictions(record) == [complaint]
+    assert [str(departure) for departure in contradictions(record)] == [complaint]
     file = tmp_path / "r.json"
     file.write_text(json.dumps(record))
-    with pytest.raises(InputError, match="damaged record"):
+    with pytest.raises(InputError, match="damaged record: this") as caught:
         read_record(file)
+    assert [fault.key for fault in caught.value.faults] == [complaint.split(" ")[0]]
 
 
 def _damaged(text, chance):

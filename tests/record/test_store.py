@@ -225,7 +225,7 @@ def test_the_chain_goes_back_while_the_files_are_unchanged(record, tmp_path):
         ('{"format": "synth-record/0"}', "unknown version of a record"),
         ('{"format": "synth-adoption/1"}', "a record was expected, this file says adoption"),
         ('{"format": "synth-record/1", "x": NaN}', "not a record: "),
-        ('{"format": "synth-record/1"}', "damaged record: tool is missing"),
+        ('{"format": "synth-record/1"}', "damaged record: this is missing"),
         ("[" * 100_000, "not a"),
     ],
 )

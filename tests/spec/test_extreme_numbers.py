@@ -20,7 +20,7 @@ def test_extreme_numbers(form, number):
     try:
         spec = parse_spec(text)
     except InputError as error:
-        message = str(error)
+        message = error.faults[0].what
     else:
         message = ""
         assert abs(spec.cases.rational.denominator).max() < float("inf")
