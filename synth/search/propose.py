@@ -10,6 +10,7 @@ import numpy as np
 
 from synth.loop.arrays import FloatArray
 from synth.model.cases import PlantCase
+from synth.search.approach import nearest
 from synth.search.archive import Rows, joined
 from synth.search.campaign import Campaign
 from synth.search.dense import dense_scans
@@ -155,8 +156,12 @@ def _listed(
     drafts: list[Draft] = []
     for standing in campaign.standings:
         if standing.tops is not None:
-            several = standing.tops.take(np.arange(min(2, len(standing.tops))))
+            count = 2 if standing.best >= 0.0 else 1
+            several = standing.tops.take(np.arange(min(count, len(standing.tops))))
             drafts += drafts_of(objective, several, "worst slack", campaign.origins)
+    near = nearest(campaign)
+    if near is not None:
+        drafts += drafts_of(objective, near, "worst slack", campaign.origins)
     for wish in wished:
         drafts += _wished_drafts(campaign, wish)
     drafts, looked = simplest(task, drafts, objective.plants, objective.case_names)
