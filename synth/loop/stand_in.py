@@ -36,6 +36,10 @@ and the 95th percentile below 1 %; what is decided early is the worst: rise time
 TRUSTED = 3.0
 """abs(s) θ up to which a pole of the stand-in is as good as a true one."""
 
+CROWDED = 1e9
+"""Crowding of the poles from which on close ones are taken together: seven digits are more than the stand-in
+has."""
+
 LADDER: FloatArray = np.pi * np.concatenate([np.arange(1.0, 17.0), 16.0 * 1.2 ** np.arange(1.0, 40.0)])
 LAST: FloatArray = np.pi * np.arange(0.0, 4.0, 0.5)
 """Angles ωθ from which poles of the chain are sought, and how far below the end of the reach."""
@@ -108,7 +112,7 @@ def responses(near: StandIns, measures: tuple[Measure, ...]) -> dict[Measure, Fl
         some = tuple(m for m in asked if m.after == after or (m.after == 0.0 and m not in out))
         if all(m in out for m in some):
             continue
-        stage: TimeStage = time_stage(_counting_from(near, after), near.poles, some)
+        stage: TimeStage = time_stage(_counting_from(near, after), near.poles, some, crowded=CROWDED)
         for measure in some:
             value = stage.values[measure]
             out[measure] = value + near.loops.dead_time if measure.quantity in LATER else value

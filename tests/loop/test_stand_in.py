@@ -11,8 +11,10 @@ from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.roots import closed_roots
 from synth.loop.poles.stage import REACH
 from synth.loop.quantities import EVERY_QUANTITY, Measure
-from synth.loop.stand_in import ORDER, StandIns, damping, responses, without_dead_time, worthwhile
+from synth.loop.stand_in import CROWDED, ORDER, StandIns, damping, responses, without_dead_time, worthwhile
 from synth.loop.time.curves import step_curves
+from synth.loop.time.residues import crowding
+from synth.loop.time.stage import time_stage
 
 MEASURES = tuple(m for m in EVERY_QUANTITY if m.quantity != "natural_frequency")
 SAME = (
@@ -193,6 +195,20 @@ def test_damping_reaches_as_far_as_the_rule(angle):
     expected = ratio.min(axis=1)
     assert np.count_nonzero(expected < 0.5) > 50
     np.testing.assert_allclose(found, expected, rtol=1e-8)
+
+
+def test_close_poles_that_are_not_taken_together_keep_the_digits_a_search_needs():
+    measures = tuple(m for m in MEASURES if m.row.stage == "time")
+    plants, _ = random_loops(1, seed=3)
+    comps = Rational.of([[0.3, 0.3]], [[1.0, 0.0]])
+    # two fast lags that are all but one, and that feedback hardly moves
+    denominator = np.polymul(np.polymul([1e-5, 1.0], [1.00001e-5, 1.0]), plants.denominator[0])
+    loops = close(Rational.of([1.0], denominator, plants.dead_time), comps, *np.zeros((2, 1), dtype=int))
+    near = StandIns.of(loops)
+    assert 1e5 < crowding(near.poles)[0] < CROWDED
+    apart, together = (time_stage(near.rational, near.poles, measures, crowded=c) for c in (CROWDED, 1e5))
+    for measure in measures:
+        np.testing.assert_allclose(apart.values[measure], together.values[measure], rtol=1e-7, atol=1e-9)
 
 
 def test_damping_with_no_end_to_the_reach_is_0():

@@ -32,11 +32,14 @@ LOST = 3e-8
 """The modes must add up to the known value at 0+ to this part of the quantity; else they have lost digits."""
 
 
-def time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...]) -> TimeStage:
+def time_stage(
+    loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...], *, crowded: float = CROWDED
+) -> TimeStage:
     """The time-stage measures among `measures`, for M stable loops.
 
     poles : (M, n) scaled closed-loop poles, pairs adjacent, upper first, NaN-padded (with dead time: the
     roots found).
+    crowded : crowding of the poles from which on close ones are taken together; more costs digits.
     """
     asked = tuple(m for m in measures if m.row.stage == "time")
     if (loops.dead_time > 0.0).any():
@@ -47,14 +50,15 @@ def time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...])
     if not asked or len(loops) == 0:
         return TimeStage({m: np.zeros(0) for m in asked}, {})
     with np.errstate(all="ignore"):  # rows at the edge of the number range run on with what they have
-        return _plain_stage(loops, poles, asked)
+        return _plain_stage(loops, poles, asked, crowding(poles) > crowded)
 
 
-def _plain_stage(loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...]) -> TimeStage:
-    """Loops with simple poles by their modes, those with crowded ones by clusters."""
+def _plain_stage(
+    loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...], close: BoolArray
+) -> TimeStage:
+    """Loops with simple poles by their modes, those with crowded ones, `close` (M,), by clusters."""
     needed = {REACHES[m.quantity] for m in asked}
     signals = tuple(s for s in ("y", "u", "d") if s in needed)
-    close = crowding(poles) > CROWDED
     if not close.any():
         modes = step_modes(loops, poles, signals)
         if np.isfinite(modes.residue).all():
@@ -103,7 +107,7 @@ def _order_by_order(
     for n in np.unique(order):
         rows = np.flatnonzero(order == n)
         some = loops.rows(rows).cut()
-        part = _plain_stage(some, poles[rows, : some.order], asked)
+        part = _plain_stage(some, poles[rows, : some.order], asked, crowded[rows])
         for m in asked:
             out.values[m][rows] = part.values[m]
         for m, doubt in part.approximate.items():
