@@ -27,7 +27,5 @@ budget = "quick"
 
 
 @pytest.fixture
-def sheet(tmp_path):
-    path = tmp_path / "turntable.toml"
-    path.write_text(SHEET)
-    return path
+def sheet(written):
+    return written("turntable.toml", SHEET)

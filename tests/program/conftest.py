@@ -1,10 +1,6 @@
-"""A sheet that a PI meets in a moment, and the command as a user types it, in this process."""
-
-import json
+"""A sheet that a PI meets in a moment, in the folder where the commands are typed."""
 
 import pytest
-
-from synth.cli import main
 
 SHEET = """\
 title = "Heated block"
@@ -30,31 +26,8 @@ budget = "quick"
 """
 
 
-class Typed:
-    """What one command gave: exit code, standard output, standard error."""
-
-    def __init__(self, code, out, err):
-        self.code, self.out, self.err = code, out, err
-
-    @property
-    def json(self):
-        return json.loads(self.out)
-
-
 @pytest.fixture
-def sheet(tmp_path, monkeypatch):
+def sheet(tmp_path, monkeypatch, written):
     monkeypatch.chdir(tmp_path)
     monkeypatch.delenv("COLUMNS", raising=False)
-    path = tmp_path / "block.toml"
-    path.write_text(SHEET)
-    return path
-
-
-@pytest.fixture
-def synth(capsys):
-    def run(*words):
-        code = main([str(w) for w in words])
-        out, err = capsys.readouterr()
-        return Typed(code, out, err)
-
-    return run
+    return written("block.toml", SHEET)

@@ -1,7 +1,5 @@
 """Anything typed, anything in a file: an exit code of the list, no traceback, no file touched but its own."""
 
-import contextlib
-import io
 import json
 import os
 import random
@@ -15,7 +13,6 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 import synth.search as search
-from synth.cli import main
 from synth.search.explore import fingerprint
 
 SHEET = """\
@@ -39,7 +36,7 @@ CODES = {0, 1, 2}  # 3 is a fault of the program, 130 needs Ctrl-C
 
 
 @pytest.fixture(scope="module")
-def folder(tmp_path_factory):
+def folder(tmp_path_factory, synth):
     """A folder with a sheet, a broken one, and a record; what a search finds is worked out once."""
     patch = pytest.MonkeyPatch()
     place = tmp_path_factory.mktemp("typed")
@@ -55,16 +52,9 @@ def folder(tmp_path_factory):
         return known[key]
 
     patch.setattr(search, "propose", once)
-    assert typed("propose", "block.toml", "--record", "first.json")[0] == 0
+    assert synth("propose", "block.toml", "--record", "first.json")[0] == 0
     yield place
     patch.undo()
-
-
-def typed(*words):
-    out, err = io.StringIO(), io.StringIO()
-    with contextlib.redirect_stdout(out), contextlib.redirect_stderr(err):
-        code = main([str(w) for w in words])
-    return code, out.getvalue(), err.getvalue()
 
 
 def files(folder):
@@ -88,9 +78,9 @@ LINES = st.lists(WORDS, max_size=6) | CLOSE
 
 @given(LINES)
 @settings(max_examples=150, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
-def test_any_command_line(folder, words):
+def test_any_command_line(folder, synth, words):
     before = files(folder)
-    code, out, err = typed(*words)
+    code, out, err = synth(*words)
     assert code in CODES, (words, err)
     assert "Traceback" not in out + err
     after = files(folder)
@@ -134,7 +124,7 @@ def damaged(text, chance):
     return json.dumps(record).encode()
 
 
-def test_any_damage_to_a_record_through_every_command_that_reads_one(folder):
+def test_any_damage_to_a_record_through_every_command_that_reads_one(folder, synth):
     text, chance = (folder / "first.json").read_text(), random.Random(11)
     before = files(folder)
     codes = set()
@@ -149,7 +139,7 @@ def test_any_damage_to_a_record_through_every_command_that_reads_one(folder):
         ]
         for line in words if k < 20 else [chance.choice(words)]:
             begun = time.process_time()
-            code, out, err = typed(*line)
+            code, out, err = synth(*line)
             assert code in CODES, (k, line, err)
             assert "Traceback" not in out + err
             if line[0] != "rerun":
