@@ -6,6 +6,7 @@ late one.
 
 from __future__ import annotations
 
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -17,13 +18,14 @@ from synth.loop.time import last_mode
 from synth.loop.time.collocation import WHOLE
 from synth.loop.time.panel_areas import panel_areas
 from synth.loop.time.panels import Outline
-from synth.loop.time.proof import NEGLIGIBLE, Cells
+from synth.loop.time.proof import NEGLIGIBLE, Cells, Claim, unproven
 from synth.loop.time.responses import Responses, responses
 from synth.loop.time.result import TimeStage
 from synth.loop.time.trace import Passage, Trace
 
 _OF_U = {"control_peak"}
 _OF_D = {"disturbance_peak", "disturbance_area"}
+_AREAS = {"z": "tracking_area", "d": "disturbance_area"}
 # A change of sign within a panel is looked for where more than this part of the area may hang on it.
 NO_AREA = 1e-8
 # A sup less than this over the final value is rounding of a response that comes to rest.
@@ -32,8 +34,6 @@ ROUNDING = 1e-10
 PLACED = 1e-7
 # Parts of the unit that a response is uncertain by; a time that they move by more than this part is flagged.
 UNCERTAIN, SAME_TIME = 1e-10, 1e-6
-
-Reading = tuple[FloatArray, BoolArray]
 
 
 def delayed_time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measure, ...]) -> TimeStage:
@@ -45,10 +45,19 @@ def delayed_time_stage(loops: Loops, poles: ComplexArray, measures: tuple[Measur
     asked = tuple(m for m in measures if m.row.stage == "time")
     if not asked or len(loops) == 0:
         return TimeStage({m: np.zeros(len(loops)) for m in asked}, {})
-    return _Reading(loops, poles, asked).stage()
+    return _Readings(loops, poles, asked).stage()
 
 
-class _Reading:
+@dataclass(frozen=True, slots=True)
+class Reading:
+    """A measure's values (M,), of which loops they are in doubt, and what else has to hold for them."""
+
+    value: FloatArray
+    doubtful: BoolArray | bool = False
+    claims: tuple[Claim, ...] = ()
+
+
+class _Readings:
     """One batch of responses and the measures read off it. The first signal is z - 1, or y where it returns
     to 0."""
 
@@ -69,7 +78,6 @@ class _Reading:
         f = self.found
         self.panels = f.panels.stacked()
         self.outline = Outline.of(self.panels)
-        self.whole = (f.panels.values @ WHOLE) * f.panels.length
         offset = np.stack([np.zeros_like(self.late) if s == "u" else self.late for s in self.signals])
         close = self.panels.rows(np.flatnonzero(self._decisive()))
         self.trace = Trace.of(close, offset.ravel(), f.unit.ravel())
@@ -133,46 +141,45 @@ class _Reading:
     def stage(self) -> TimeStage:
         """Values and flags of every measure asked for."""
         read = {m: self._value(m) for m in self.asked}
-        doubtful = self.found.doubtful
-        return TimeStage(
-            {m: value for m, (value, _) in read.items()},
-            {m: (doubtful | unproven) & np.isfinite(value) for m, (value, unproven) in read.items()},
-        )
+        claims = {id(claim): claim for reading in read.values() for claim in reading.claims}
+        found = unproven(list(claims.values()), len(self.loops)) if claims else []
+        of_claim = dict(zip(claims, found, strict=True))
+        flags: dict[Measure, BoolArray] = {}
+        for m, reading in read.items():
+            flag = self.found.doubtful | reading.doubtful
+            for claim in reading.claims:
+                flag = flag | of_claim[id(claim)]
+            flags[m] = flag & np.isfinite(reading.value)
+        return TimeStage({m: reading.value for m, reading in read.items()}, flags)
 
     def _value(self, m: Measure) -> Reading:
-        """The measure, and of which loops it is not proven that nothing between two knots decides it
-        otherwise. (M,) each."""
         name = m.quantity
-        proven = np.zeros(len(self.loops), dtype=bool)
         if name == "control_peak":
             return self._peak(self.signals.index("u"))
         if name == "disturbance_peak":
             return self._peak(self.signals.index("d"))
         if name == "disturbance_area":
-            area = self._area(self.signals.index("d"))
-            return np.where(self.loops.load[:, -1] == 0.0, area, np.inf), proven
+            area = self.areas[self.signals.index("d")]
+            return Reading(np.where(self.loops.load[:, -1] == 0.0, area, np.inf))
         if name == "tracking_area":
             # y is 0 until θ. Where L has no pole at 0 the error stays, and so does the area
-            area = self.late + self._area(0)
-            return np.where(self.loops.denominator[:, -1] == 0.0, area, np.inf), proven
+            area = self.late + self.areas[0]
+            return Reading(np.where(self.loops.denominator[:, -1] == 0.0, area, np.inf))
         if name in ("overshoot", "peak_time"):
-            best, when, unproven = self.highest
-            over = best > ROUNDING
-            out = np.where(over, 100.0 * best, 0.0) if name == "overshoot" else np.where(over, when, np.nan)
-            # where a peak lies hangs on more of its height than how high it is
-            unproven = unproven | ((name == "peak_time") & (best < PLACED))
+            out = self._overshoot(name)
         elif name == "undershoot":
-            out, unproven = self._undershoot()
+            out = self._undershoot()
         elif name == "rise_time":
-            (low, a), (high, b) = (self._arrival(level) for level in m.span)
-            out, unproven = high - low, a | b
+            low, high = (self._arrival(level) for level in m.span)
+            doubtful, claims = low.doubtful | high.doubtful, low.claims + high.claims
+            out = Reading(high.value - low.value, doubtful, claims)
         elif name == "settling_time":
-            out, unproven = self._settling(m.band)
+            out = self._settling(m.band)
         elif name == "late_deviation":
-            out, unproven = self._late_deviation(m.after / self.loops.time_scale), proven
+            out = Reading(self._late_deviation(m.after / self.loops.time_scale))
         else:
             raise ValueError(f"no reading of {name!r}")
-        return np.where(self.has_end, out, np.nan), unproven
+        return replace(out, value=np.where(self.has_end, out.value, np.nan))
 
     def _peak(self, signal: int) -> Reading:
         """sup of abs of the signal: panels, the last mode's own extremes, and the value at infinity."""
@@ -182,23 +189,31 @@ class _Reading:
         late = np.maximum(np.abs(f.final[signal] + top), np.abs(f.final[signal] + bottom))
         out: FloatArray = np.maximum(looked, late)
         limit = out + NEGLIGIBLE * f.unit[signal]
-        return out, self.cells.signal(signal, len(self.signals)).may_exceed(-limit, limit)
+        return Reading(out, claims=(self.cells.signal(signal, len(self.signals)).within(-limit, limit),))
 
     @cached_property
-    def highest(self) -> tuple[FloatArray, FloatArray, BoolArray]:
-        """sup of z - 1, its time, and whether a higher one is not excluded."""
+    def highest(self) -> tuple[FloatArray, FloatArray, Claim]:
+        """sup of z - 1, its time, and that nothing is higher."""
         best, when = self.z.largest(1.0)
         top, at, _, _ = self.tail
         later = top > best
         best, when = np.where(later, top, best), np.where(later, self._after_end(at), when)
         limit = np.maximum(best, 0.0) + NEGLIGIBLE * self.found.unit[0]
-        return best, when, self.cells_of_z.may_exceed(np.full_like(limit, -np.inf), limit)
+        return best, when, self.cells_of_z.within(np.full_like(limit, -np.inf), limit)
+
+    def _overshoot(self, name: str) -> Reading:
+        best, when, claim = self.highest
+        over = best > ROUNDING
+        if name == "overshoot":
+            return Reading(np.where(over, 100.0 * best, 0.0), claims=(claim,))
+        # where a peak lies hangs on more of its digits than how high it is
+        return Reading(np.where(over, when, np.nan), best < PLACED, (claim,))
 
     def _undershoot(self) -> Reading:
         below = np.maximum(self.z.largest(-1.0)[0], -self.tail[2]) - 1.0
         limit = -1.0 - np.maximum(below, 0.0) - NEGLIGIBLE * self.found.unit[0]
-        unproven = self.cells_of_z.may_exceed(limit, np.full_like(limit, np.inf))
-        return np.where(below > ROUNDING, 100.0 * below, 0.0), unproven
+        claim = self.cells_of_z.within(limit, np.full_like(limit, np.inf))
+        return Reading(np.where(below > ROUNDING, 100.0 * below, 0.0), claims=(claim,))
 
     def _after_end(self, time: FloatArray) -> FloatArray:
         out: FloatArray = self.found.end + self.late + time
@@ -207,40 +222,41 @@ class _Reading:
     def _arrival(self, level: float) -> Reading:
         """First time at that part of the final value; 0 is where y leaves 0, after the dead time."""
         if level <= 0.0:
-            return self.late.copy(), np.zeros(len(self.late), dtype=bool)
+            return Reading(self.late.copy())
         f, uncertain = self.found, self.uncertain
-        early, steep = self.passed["arrival", level]
+        out, steep = self.passed["arrival", level]
         passage = self.passage["arrival", level]
-        unproven = self.cells_of_z.may_reach_sooner(level - 1.0, passage, uncertain)
-        unproven |= uncertain > SAME_TIME * steep * early
-        out = early.copy()
-        left = np.flatnonzero(np.isnan(early))
+        doubtful = self.z.grazes(level - 1.0, passage, uncertain, last=False)
+        doubtful |= uncertain > SAME_TIME * steep * out
+        left = np.flatnonzero(np.isnan(out))
         if left.size:
             levels = np.full(len(left), level - 1.0)
-            late, other = (
-                last_mode.first_reach(f.amplitude[0, left], f.pole[left], one)
+            after, other = (
+                f.end[left] + self.late[left] + last_mode.first_reach(f.amplitude[0, left], f.pole[left], one)
                 for one in (levels, levels - uncertain[left])
             )
-            out[left] = f.end[left] + self.late[left] + late
-            unproven[left] |= _apart(out[left], f.end[left] + self.late[left] + other)
-        return np.where(np.isfinite(out), out, np.nan), unproven
+            out[left] = np.where(np.isfinite(after), after, np.nan)
+            doubtful[left] |= _apart(after, other)
+        return Reading(out, doubtful, self.cells_of_z.not_sooner(level - 1.0, passage))
 
     def _settling(self, band: float) -> Reading:
         f, uncertain = self.found, self.uncertain
-        early, steep = self.passed["exit", band]
-        unproven = self.cells_of_z.may_leave_later(band, self.passage["exit", band], uncertain)
-        unproven |= uncertain > SAME_TIME * steep * early
-        late, other = np.full((2, len(early)), np.nan)
-        size = np.maximum(self.tail[0], -self.tail[2])
-        some = np.flatnonzero(size > band - uncertain)
+        out, steep = self.passed["exit", band]
+        passage = self.passage["exit", band]
+        doubtful = self.z.grazes(band, passage, uncertain, last=True)
+        doubtful |= uncertain > SAME_TIME * steep * out
+        some = np.flatnonzero(np.maximum(self.tail[0], -self.tail[2]) > band - uncertain)
         if some.size:
-            edges = np.full(len(some), band)
-            for out, one in ((late, edges), (other, edges - uncertain[some])):
-                out[some] = last_mode.last_exit(f.amplitude[0, some], f.pole[some], one)
-            unproven[some] = _apart(self._after_end(late), self._after_end(other))[some]
-        out = np.where(np.isfinite(late), self._after_end(late), early)
+            bands = np.full(len(some), band)
+            after, other = (
+                f.end[some] + self.late[some] + last_mode.last_exit(f.amplitude[0, some], f.pole[some], one)
+                for one in (bands, bands - uncertain[some])
+            )
+            out[some] = np.where(np.isfinite(after), after, out[some])
+            doubtful[some] = _apart(after, other)
         # y is 0, so outside any band below 100 %, until the dead time has passed
-        return np.where(np.isnan(out), self.late if band < 1.0 else 0.0, out), unproven
+        out = np.where(np.isnan(out), self.late if band < 1.0 else 0.0, out)
+        return Reading(out, doubtful, self.cells_of_z.not_later(band, passage))
 
     def _late_deviation(self, after: FloatArray) -> FloatArray:
         f = self.found
@@ -250,16 +266,19 @@ class _Reading:
         out = np.maximum(seen, np.maximum(top, -bottom))
         return 100.0 * np.where(after < self.late, np.maximum(out, 1.0), out)
 
-    def _area(self, signal: int) -> FloatArray:
-        """∫ abs(signal) from its own time 0 on."""
-        f = self.found
-        piece = np.abs(self.whole[signal])
-        outline = self.outline.signal(signal, len(self.signals))
-        about = outline.panels.over(np.add, piece, 0.0)
-        cut = np.flatnonzero(outline.may_change_sign(NO_AREA * about))
-        piece[cut] = panel_areas(outline.panels.rows(cut))
-        out: FloatArray = outline.panels.over(np.add, piece, 0.0)
-        return out + last_mode.area(f.amplitude[signal], f.pole)
+    @cached_property
+    def areas(self) -> FloatArray:
+        """∫ abs(signal) of every signal from its own time 0 on, (S, M)."""
+        f, p = self.found, self.panels
+        piece = np.abs(f.panels.values @ WHOLE) * f.panels.length
+        asked = np.array([_AREAS.get(s) in self.names for s in self.signals])
+        negligible = NO_AREA * p.over(np.add, piece.ravel(), 0.0).reshape(len(self.signals), -1)
+        negligible[~asked] = np.inf
+        cut = np.flatnonzero(self.outline.may_change_sign(negligible.ravel()))
+        whole = piece.ravel()
+        whole[cut] = panel_areas(p.rows(cut))
+        early = p.over(np.add, whole, 0.0).reshape(len(self.signals), -1)
+        return early + np.stack([last_mode.area(a, f.pole) for a in f.amplitude])
 
 
 def _apart(one: FloatArray, other: FloatArray) -> BoolArray:

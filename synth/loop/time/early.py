@@ -12,8 +12,8 @@ import numpy as np
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 from synth.loop.poles.roots import closed_roots
-from synth.loop.time.collocation import NODES, TO_CHEBYSHEV, value_matrix
-from synth.loop.time.steps import Walk, ladder, lasting_kinks, resolution
+from synth.loop.time.collocation import NODES, TO_CHEBYSHEV
+from synth.loop.time.steps import Walk, ladder, lasting_kinks, resampling, resolution
 from synth.loop.time.true_modes import TrueModes, geometric
 
 # The most delays that are ever marched, and the most panels of one loop; what is not decided by then is
@@ -35,6 +35,7 @@ WORTH = 8
 # The most panels of a delay, of all loops together, that are carried at once: 25 MB of matrices.
 ROOM = 8192
 
+_PLACES = tuple((np.arange(PLACES) + 0.5) / PLACES)
 # Values of a panel to its last two Chebyshev coefficients and its values at both ends.
 _ENDS = np.concatenate([TO_CHEBYSHEV[:, -2:], np.eye(NODES)[:, [0, -1]]], axis=1)
 
@@ -68,7 +69,7 @@ def early_response(loops: Loops, numerators: FloatArray, modes: TrueModes, unit:
     """
     rows = len(loops)
     out = Early(np.zeros(rows, dtype=np.intp), np.zeros(rows, dtype=bool), np.zeros(rows, dtype=bool))
-    open_poles = closed_roots(loops.denominator)
+    open_poles = closed_roots(_without_integrators(loops.denominator))
     fine, coarse, hold = resolution(loops, open_poles, modes.pole)
     kinks = lasting_kinks(loops, open_poles, coarse)
     least = _jumping_delays(loops)
@@ -151,8 +152,6 @@ class _Meeting:
         self.turn = modes.pole * delay[:, None]
         step = np.conj(self.turn) / PLACES  # conjugate as in true_modes.fill
         self.table = geometric(np.exp(0.5 * step), np.exp(step), PLACES).view(float)
-        self.place = (np.arange(PLACES) + 0.5) / PLACES
-        self.matrices: dict[int, FloatArray] = {}
 
     def met(self, rows: IntArray, delays: int, sizes: FloatArray, values: FloatArray) -> BoolArray:
         """Whether the modes agree with values (S, m, P, 13), the last of so many delays. (m,).
@@ -161,9 +160,7 @@ class _Meeting:
         delay.
         """
         signals, m, panels, _ = values.shape
-        if panels not in self.matrices:
-            self.matrices[panels] = _at_places(sizes, self.place)
-        marched = values.reshape(signals * m, panels * NODES) @ self.matrices[panels]
+        marched = values.reshape(signals * m, panels * NODES) @ resampling(tuple(sizes), _PLACES)
         growth = np.exp(self.turn[rows] * (delays - 1.0))
         weight = (self.modes.residue[rows] * growth[:, None]).view(float)
         found = weight @ self.table[rows].swapaxes(1, 2) + self.modes.final[rows, :, None]
@@ -179,15 +176,6 @@ class _Meeting:
         return out
 
 
-def _at_places(sizes: FloatArray, places: FloatArray) -> FloatArray:
-    """(13 P, places): values on all panels of a delay to those at `places`, parts of the delay."""
-    begin = np.cumsum(sizes) - sizes
-    panel = np.searchsorted(begin, places, side="right") - 1
-    out = np.zeros((len(sizes), NODES, len(places)))
-    out[panel, :, np.arange(len(places))] = value_matrix((places - begin[panel]) / sizes[panel]).T
-    return out.reshape(len(sizes) * NODES, len(places))
-
-
 def _jumping_delays(loops: Loops) -> FloatArray:
     """Delays after which jumps, each abs(N/D) at infinity times the last, have died. (M,)."""
     with np.errstate(all="ignore"):
@@ -196,11 +184,18 @@ def _jumping_delays(loops: Loops) -> FloatArray:
     return out
 
 
+def _without_integrators(denominator: FloatArray) -> FloatArray:
+    """Without the roots at 0 that all rows have, at least: they ask for no panels."""
+    used = np.flatnonzero(denominator.any(axis=0))
+    return denominator[:, : used[-1] + 1]
+
+
 def _classes(todo: IntArray, fine: IntArray, coarse: IntArray, hold: IntArray) -> list[IntArray]:
     """Rows that are marched together: the same panels, and no more at once than there is room for."""
     out = []
     if len(todo) <= 300:  # one fine cut for all costs less than many calls
-        key = np.where(coarse[todo] > 1, coarse[todo], 0) * 100 + np.minimum((fine[todo] + 2) // 3, 3)
+        step = 3 if len(todo) > 100 else 6
+        key = np.where(coarse[todo] > 1, coarse[todo], 0) * 100 + np.minimum((fine[todo] + 2) // step, 3)
         key += 10 * hold[todo]
     else:
         key = (hold[todo] * 100 + coarse[todo]) * 100 + fine[todo]

@@ -5,11 +5,9 @@ M loops. p real or in the upper half plane, Re p < 0.
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
 import numpy as np
 
-from synth.loop.arrays import BoolArray, ComplexArray, FloatArray
+from synth.loop.arrays import ComplexArray, FloatArray
 
 
 def extremes(
@@ -43,11 +41,8 @@ def last_exit(amplitude: ComplexArray, pole: ComplexArray, band: FloatArray) -> 
         high = np.where(peak > band, low + half, at)
         some = np.flatnonzero(~real & ((peak > band) | started))
         # before the next extremum the size falls to 0 and rises to less than the band: one passage
-        high[some] = _switch(
-            lambda t: np.abs((amplitude[some] * np.exp(pole[some] * t)).real) > band[some],
-            low[some],
-            high[some],
-        )
+        outside = np.sign(_value(amplitude[some], pole[some], low[some]))
+        high[some] = _passing(amplitude[some] * outside, pole[some], band[some], low[some], high[some])
         swinging = np.where((peak > band) | started, high, np.nan)
     out_time: FloatArray = np.where(real, smooth, swinging)
     return out_time
@@ -68,13 +63,25 @@ def area(amplitude: ComplexArray, pole: ComplexArray) -> FloatArray:
     return out
 
 
-def _switch(before: Callable[[FloatArray], BoolArray], low: FloatArray, high: FloatArray) -> FloatArray:
-    """The upper end of where `before`, true at low, has turned false at high, halved down to rounding."""
-    for _ in range(52 if low.size else 0):
-        middle = 0.5 * (low + high)
-        still = before(middle)
-        low, high = np.where(still, middle, low), np.where(still, high, middle)
-    return high
+def _passing(
+    amplitude: ComplexArray, pole: ComplexArray, level: FloatArray, low: FloatArray, high: FloatArray
+) -> FloatArray:
+    """Where Re(a e^(pt)), monotone from low to high, passes the level: Newton, halving where it leaves the
+    bracket. (E,)."""
+    time = 0.5 * (low + high)
+    starts_above = _value(amplitude, pole, low) > level
+    for _ in range(60):
+        wave = amplitude * np.exp(pole * time)
+        off = wave.real - level
+        before = (off > 0.0) == starts_above
+        low, high = np.where(before, time, low), np.where(before, high, time)
+        newton = time - off / (pole * wave).real
+        better = np.where((newton >= low) & (newton <= high), newton, 0.5 * (low + high))
+        done = np.abs(better - time) <= 1e-15 * high
+        time = better
+        if done.all():
+            break
+    return time
 
 
 def _value(amplitude: ComplexArray, pole: ComplexArray, time: FloatArray) -> FloatArray:
@@ -109,9 +116,7 @@ def first_reach(amplitude: ComplexArray, pole: ComplexArray, level: FloatArray) 
         late = _value(amplitude, pole, at + half) >= level
         low, high = np.where(early, 0.0, at), np.where(early, at, at + half)
         some = np.flatnonzero((early | late) & (pole.imag != 0.0) & (amplitude.real < level))
-        high[some] = _switch(
-            lambda t: (amplitude[some] * np.exp(pole[some] * t)).real < level[some], low[some], high[some]
-        )
+        high[some] = _passing(amplitude[some], pole[some], level[some], low[some], high[some])
         found = np.where(pole.imag == 0.0, smooth, np.where(early | late, high, np.inf))
     out: FloatArray = np.where(amplitude.real >= level, 0.0, found)
     return out

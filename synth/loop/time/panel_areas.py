@@ -11,11 +11,11 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.time.collocation import WHOLE, primitive_coefficients
-from synth.loop.time.panels import Panels
+from synth.loop.time.panels import BLOCK, Panels
 from synth.loop.time.trace import SLOPES, VALUES, X, passing, turning
 
-# Parts of a panel, from a zero: nearer than this the parabola gives the rest of an area to 1e-12.
-NEAR = 1e-4
+# Parts of a panel, from a zero: nearer than this the parabola gives the rest of an area to 1e-8.
+NEAR = 1e-3
 
 
 def panel_areas(panels: Panels) -> FloatArray:
@@ -25,6 +25,12 @@ def panel_areas(panels: Panels) -> FloatArray:
     sign where the tangents meet beyond zero.
     """
     signal = panels.values[0]
+    parts = [_areas(signal[begin : begin + BLOCK]) for begin in range(0, len(signal), BLOCK)]
+    return np.concatenate([np.zeros(0), *parts]) * panels.length
+
+
+def _areas(signal: FloatArray) -> FloatArray:
+    """(B, 13) -> (B,), for panels of length 1."""
     looks = signal @ VALUES
     positive = looks > 0.0
     panel, cell = np.nonzero(positive[:, :-1] != positive[:, 1:])
@@ -35,7 +41,7 @@ def panel_areas(panels: Panels) -> FloatArray:
     whole = signal @ WHOLE
     out: FloatArray = np.where(positive[:, -1], whole, -whole)
     out += np.bincount(zeros.panel, np.where(zeros.a > 0.0, twice, -twice), len(out))
-    return out * panels.length
+    return out
 
 
 @dataclass(frozen=True, slots=True)

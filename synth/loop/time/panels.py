@@ -67,9 +67,9 @@ class Panels:
     def over(self, reduce: np.ufunc, values: FloatArray, empty: float) -> FloatArray:
         """minimum, maximum or add of values (B,) over the panels of each loop; `empty` where it has none.
         (M,)."""
-        found = reduce.reduceat(np.append(values, empty), self.first)
-        none = np.diff(self.first, append=len(values)) == 0
-        out: FloatArray = np.where(none, empty, found) if none.any() else found
+        out: FloatArray = reduce.reduceat(np.append(values, empty), self.first)
+        # where a loop has no panel the value is another's
+        out[:-1][self.first[1:] == self.first[:-1]] = empty
         return out
 
 

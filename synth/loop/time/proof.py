@@ -5,6 +5,7 @@ M loops, B panels, 16 cells to a panel from look to look, E cells in question.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from itertools import pairwise
 from typing import Any
@@ -44,6 +45,18 @@ _HALVES = np.stack([_BACK @ _part(0.0, 0.5), _BACK @ _part(0.5, 1.0)])
 
 
 @dataclass(frozen=True, slots=True)
+class Claim:
+    """That a signal stays between low and high (E,) all over the named cells, or at a knot alone leaves that
+    range. `loop` (E,) is whose signal it is."""
+
+    loop: IntArray
+    signal: FloatArray
+    cell: IntArray
+    low: FloatArray
+    high: FloatArray
+
+
+@dataclass(frozen=True, slots=True)
 class Cells:
     """low, high (B, 16) enclose the signal of a trace from look to look."""
 
@@ -64,38 +77,42 @@ class Cells:
         here, _ = self.trace.panels.signal(number, signals)
         return Cells(self.trace.signal(number, signals), self.low[here], self.high[here])
 
-    def may_exceed(self, low: FloatArray, high: FloatArray) -> BoolArray:
-        """Whether the signal may leave the range (M,) to (M,) of its loop, except at a knot. (M,)."""
+    def within(self, low: FloatArray, high: FloatArray) -> Claim:
+        """That the signal is nowhere outside the range (M,) to (M,) of its loop."""
         low, high = self._of_panels(low), self._of_panels(high)
-        return self._open((self.low < low) | (self.high > high), low[:, 0], high[:, 0])
+        return self._claim((self.low < low) | (self.high > high), low[:, 0], high[:, 0])
 
-    def may_reach_sooner(self, level: float, passage: Passage, uncertain: FloatArray) -> BoolArray:
-        """Whether signal >= level may come before that first passage, or a knot is so near the level, to
-        `uncertain` (M,), that it may not be the first. (M,)."""
-        end = self._numbers_of(passage, self.low.size)
-        sooner = self._before(end, self.low)
+    def not_sooner(self, level: float, passage: Passage) -> tuple[Claim, ...]:
+        """That signal >= level nowhere before that first passage, which is the only one in its cell."""
+        sooner = self._before(self._numbers_of(passage, self.low.size))
         limit = np.full(len(self.low), level)
-        out = self._open(sooner & (self.high >= level), np.full_like(limit, -np.inf), limit)
-        knots = self.trace.height
-        last = np.full(len(out), knots.size)
-        last[passage.loop] = passage.panel * knots.shape[1] + passage.right + 1
-        with np.errstate(invalid="ignore"):
-            near = np.abs(knots - level) < self._of_panels(uncertain)
-        return out | self._bent(passage) | self._any(near & self._before(last, knots))
+        claim = self._claim(sooner & (self.high >= level), np.full_like(limit, -np.inf), limit)
+        return claim, self._alone(passage)
 
-    def may_leave_later(self, band: float, passage: Passage, uncertain: FloatArray) -> BoolArray:
-        """Whether abs(signal) > band may come after that last passage, or a knot is so near the band's edge,
-        to `uncertain` (M,), that it may not be the last. (M,)."""
-        begin = self._numbers_of(passage, -1)
-        later = ~self._before(begin + 1, self.low)
+    def not_later(self, band: float, passage: Passage) -> tuple[Claim, ...]:
+        """That abs(signal) <= band everywhere after that last passage, which is the only one in its cell."""
+        later = ~self._before(self._numbers_of(passage, -1) + 1)
         limit = np.full(len(self.low), band)
-        out = self._open(later & ((self.high > band) | (self.low < -band)), -limit, limit)
-        knots = self.trace.height
-        first = np.full(len(out), 0)
-        first[passage.loop] = passage.panel * knots.shape[1] + passage.left
-        with np.errstate(invalid="ignore"):
-            near = np.abs(np.abs(knots) - band) < self._of_panels(uncertain)
-        return out | self._bent(passage) | self._any(near & ~self._before(first, knots))
+        claim = self._claim(later & ((self.high > band) | (self.low < -band)), -limit, limit)
+        return claim, self._alone(passage)
+
+    def _claim(self, cells: BoolArray, low: FloatArray, high: FloatArray) -> Claim:
+        """For cells (B, 16); low, high (B,)."""
+        panel, cell = np.nonzero(cells)
+        p = self.trace.panels
+        return Claim(p.owner[panel], p.values[0, panel], cell, low[panel], high[panel])
+
+    def _alone(self, passage: Passage) -> Claim:
+        """No range would do: the cell of the passage must be simple."""
+        inside = np.flatnonzero(passage.left != passage.right)
+        cell = np.minimum(passage.left, passage.right)[inside] // 2
+        never = np.full(len(inside), np.inf)
+        signal = self.trace.panels.values[0, passage.panel[inside]]
+        return Claim(passage.loop[inside], signal, cell, never, -never)
+
+    def _of_panels(self, of_loops: NDArray[Any]) -> NDArray[Any]:
+        out: NDArray[Any] = of_loops[self.trace.panels.owner][:, None]
+        return out
 
     def _numbers_of(self, passage: Passage, absent: int) -> IntArray:
         """Number of the cell of each loop's passage, of all cells in order. (M,)."""
@@ -104,64 +121,43 @@ class Cells:
         out[passage.loop] = passage.panel * (LOOKS - 1) + cell
         return out
 
-    def _before(self, number: IntArray, like: FloatArray) -> BoolArray:
-        """Entries of (B, k), numbered in order, before that number (M,) of their loop."""
-        out: BoolArray = np.arange(like.size).reshape(like.shape) < self._of_panels(number)
-        return out
-
-    def _any(self, where: BoolArray) -> BoolArray:
-        """Loops (M,) with any of (B, k)."""
-        out = np.zeros(len(self.trace.panels.first), dtype=bool)
-        out[self.trace.panels.owner[where.any(axis=1)]] = True
-        return out
-
-    def _of_panels(self, of_loops: NDArray[Any]) -> NDArray[Any]:
-        out: NDArray[Any] = of_loops[self.trace.panels.owner][:, None]
-        return out
-
-    def _open(self, cells: BoolArray, low: FloatArray, high: FloatArray) -> BoolArray:
-        """Loops (M,) with a cell among those named in which the signal may leave low to high (B,) unseen."""
-        panel, cell = np.nonzero(cells)
-        weights = _on_cells(self.trace.panels.values[0, panel], cell)
-        left = np.flatnonzero(~_simple(weights))
-        panel, weights = panel[left], weights[left]
-        for _ in range(HALVINGS):
-            if panel.size == 0:
-                break
-            panel = np.tile(panel, 2)
-            weights = np.concatenate([weights @ half for half in _HALVES])
-            spread = np.abs(weights[:, 1:]).sum(axis=1)
-            ends = weights.sum(axis=1), weights[:, ::2].sum(axis=1) - weights[:, 1::2].sum(axis=1)
-            # a signal that only rises or only falls stays between its ends
-            level = _one_sign(weights, 1, _SLOPE)
-            least = np.where(level, np.minimum(*ends), weights[:, 0] - spread)
-            most = np.where(level, np.maximum(*ends), weights[:, 0] + spread)
-            left = np.flatnonzero((least < low[panel]) | (most > high[panel]))
-            panel, weights = panel[left], weights[left]
-        out = np.zeros(len(self.trace.panels.first), dtype=bool)
-        out[self.trace.panels.owner[panel]] = True
-        return out
-
-    def _bent(self, passage: Passage) -> BoolArray:
-        """Loops (M,) whose passage lies in a cell that is not simple, so that it may not be the only one
-        there."""
-        inside = np.flatnonzero(passage.left != passage.right)
-        panel, cell = passage.panel[inside], np.minimum(passage.left, passage.right)[inside] // 2
-        bad = ~_simple(_on_cells(self.trace.panels.values[0, panel], cell))
-        out = np.zeros(len(self.trace.panels.first), dtype=bool)
-        out[passage.loop[inside[bad]]] = True
+    def _before(self, number: IntArray) -> BoolArray:
+        """Cells, numbered in order, before that number (M,) of their loop."""
+        out: BoolArray = np.arange(self.low.size).reshape(self.low.shape) < self._of_panels(number)
         return out
 
 
-def _on_cells(signal: FloatArray, cell: IntArray) -> FloatArray:
-    """Chebyshev coefficients of signals (E, 13) on one cell each."""
-    out: FloatArray = (signal[:, None, :] @ _OF_CELL[cell])[:, 0]
-    return out
+def unproven(claims: Sequence[Claim], loops: int) -> list[BoolArray]:
+    """Of each claim the loops (M,) of which it is not proven. All are looked into together."""
+    edges = np.cumsum([0, *(len(c.loop) for c in claims)])
+    signal, cell, low, high = (
+        np.concatenate([getattr(c, name) for c in claims]) for name in ("signal", "cell", "low", "high")
+    )
+    weights = (signal[:, None, :] @ _OF_CELL[cell])[:, 0]
+    left = np.flatnonzero(~(_one_sign(weights, 1, _SLOPE) | _one_sign(weights, 2, _BEND)))
+    left = _halved(left, weights[left], low, high)
+    out = np.zeros((len(claims), loops), dtype=bool)
+    out[np.searchsorted(edges, left, side="right") - 1, np.concatenate([c.loop for c in claims])[left]] = True
+    return list(out)
 
 
-def _simple(weights: FloatArray) -> BoolArray:
-    """Whether the slope keeps its sign, or the curvature does: then a trace knows every extremum."""
-    return _one_sign(weights, 1, _SLOPE) | _one_sign(weights, 2, _BEND)
+def _halved(which: IntArray, weights: FloatArray, low: FloatArray, high: FloatArray) -> IntArray:
+    """Those of the numbers `which` (E,) whose cell is left open: halved until the signal, with its Chebyshev
+    coefficients (E, 13) there, is seen to stay between low and high (of all numbers), or given up."""
+    for _ in range(HALVINGS):
+        if which.size == 0:
+            break
+        which = np.tile(which, 2)
+        weights = np.concatenate([weights @ half for half in _HALVES])
+        spread = np.abs(weights[:, 1:]).sum(axis=1)
+        ends = weights.sum(axis=1), weights[:, ::2].sum(axis=1) - weights[:, 1::2].sum(axis=1)
+        # a signal that only rises or only falls stays between its ends
+        level = _one_sign(weights, 1, _SLOPE)
+        least = np.where(level, np.minimum(*ends), weights[:, 0] - spread)
+        most = np.where(level, np.maximum(*ends), weights[:, 0] + spread)
+        left = np.flatnonzero((least < low[which]) | (most > high[which]))
+        which, weights = which[left], weights[left]
+    return which
 
 
 def _one_sign(weights: FloatArray, order: int, size: FloatArray) -> BoolArray:

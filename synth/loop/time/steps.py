@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -101,20 +102,22 @@ class Walk:
         return Walk(self.loops, self.numerators, sizes, drive, self.state, panels)
 
 
+@lru_cache(maxsize=64)
+def resampling(sizes: tuple[float, ...], places: tuple[float, ...]) -> FloatArray:
+    """(13 P, places): values on all panels of a delay to those at `places`, parts of the delay. A place on an
+    edge belongs to the panel it opens."""
+    begin = np.cumsum(sizes) - sizes
+    panel = np.searchsorted(begin, places, side="right") - 1
+    out = np.zeros((len(sizes), NODES, len(places)))
+    out[panel, :, np.arange(len(places))] = value_matrix((places - begin[panel]) / np.array(sizes)[panel]).T
+    return out.reshape(len(sizes) * NODES, len(places))
+
+
 def recut(values: FloatArray, old: FloatArray, new: FloatArray) -> FloatArray:
     """A signal over one delay, (M, P, 13) on panels `old`, at the nodes of panels `new`, (M, P', 13)."""
-    edges = np.concatenate([[0.0], np.cumsum(old)])
-    out = np.empty((len(values), len(new), NODES))
-    start = 0.0
-    for j, size in enumerate(new):
-        place = start + size * GRID
-        # a node on an edge belongs to the panel it opens, but the last node to the panel it ends
-        at = np.clip(np.searchsorted(edges, place, side="right") - 1, 0, len(old) - 1)
-        at[-1] = np.clip(np.searchsorted(edges, place[-1], side="left") - 1, 0, len(old) - 1)
-        for i in np.unique(at):
-            here = at == i
-            out[:, j, here] = values[:, i] @ value_matrix((place[here] - edges[i]) / old[i])
-        start += size
+    places = (np.cumsum(new) - new)[:, None] + new[:, None] * GRID
+    matrix = resampling(tuple(old), tuple(places.ravel()))
+    out: FloatArray = (values.reshape(len(values), -1) @ matrix).reshape(len(values), len(new), NODES)
     return out
 
 
@@ -159,28 +162,27 @@ class _Panels:
         c[:, :, n] = 0.0
         sigma = length[:, :, None] * SPREAD
         alpha = list(_sums(a.swapaxes(0, 1), sigma))
-        *_, gamma = _sums(np.moveaxis(c, 2, 0)[..., None, None], sigma)
+        *_, gamma = _sums(c.transpose(2, 0, 1)[..., None, None], sigma)
         inverse = 1.0 / alpha[n]
         of_state = np.zeros((rows, many, n, _PARTS + signals * n))
         of_stages = np.empty((rows, many, n, len(SPREAD)), dtype=complex)
-        carry = np.zeros((rows, many, n, n))
+        of_begin = np.zeros((rows, many, n * n))
         stages = of_state[..., :_PARTS]
         free = of_state[..., _PARTS:].reshape(rows, many, n, signals, n)
         by_row = c.swapaxes(0, 1)[:, None]
-        ones = FROM_NODES.sum(axis=1)
-        end = np.conj(TO_NODES[-1]) * np.conj(sigma)
-        taylor = np.ones((rows, many))  # length^i / i!
+        weight, ratio = FROM_NODES.sum(axis=1) * inverse, np.conj(sigma)
+        end = np.conj(TO_NODES[-1]) * ratio
+        taylor = np.ones((rows, many, 1, 1))  # length^i / i!
         for i in range(n):
-            stages[:, :, i] = (ones * alpha[i] * inverse).view(float)
+            stages[:, :, i] = (weight * alpha[i]).view(float)
             of_stages[:, :, n - 1 - i] = end
-            end = end * np.conj(sigma)
+            end = end * ratio
             # free polynomials: Σ_{k<=j} c_k τ^(j-k)/(j-k)! read off, τ^(j-k)/(j-k)! in the states themselves
-            free[:, :, i:, :, i] = (by_row[..., : n - i] * taylor[:, :, None, None]).swapaxes(2, 3)
-            for k in range(n - i):
-                carry[:, :, k + i, k] = taylor
-            taylor = taylor * length / (i + 1)
+            free[:, :, i:, :, i] = (by_row[..., : n - i] * taylor).swapaxes(2, 3)
+            of_begin[:, :, i * n :: n + 1] = taylor[..., 0]
+            taylor = taylor * (length / (i + 1))[:, :, None, None]
         to_end = of_stages.view(float)
-        carry -= stages @ to_end.swapaxes(2, 3)
+        carry = of_begin.reshape(rows, many, n, n) - stages @ to_end.swapaxes(2, 3)
         shared = np.zeros((_PARTS + n, NODES))
         shared[:_PARTS, 1:] = _TO_NODES
         shared[_PARTS:] = GRID ** np.arange(n)[:, None]
@@ -229,7 +231,7 @@ class _Panels:
         stages -= np.ascontiguousarray(own[..., :_PARTS]).view(complex)
         both = np.empty((signals, rows, count, _PARTS + n))
         both[..., :_PARTS] = (self.gamma * stages).view(float)
-        both[..., _PARTS:] = np.moveaxis(own[..., _PARTS:].reshape(rows, count, signals, n), 2, 0)
+        both[..., _PARTS:] = own[..., _PARTS:].reshape(rows, count, signals, n).transpose(2, 0, 1, 3)
         out = (both.reshape(-1, _PARTS + n) @ self.shared).reshape(signals, rows, count, NODES)
         if self.direct.any():
             out += self.direct[:, :, None, None] * drive

@@ -9,7 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from synth.loop.arrays import FloatArray, IntArray
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.time.collocation import (
     derivative,
     jet,
@@ -147,6 +147,21 @@ class Trace:
         knot = width - 1 - outside[panel, ::-1].argmax(axis=1)
         level = np.where(self.height[panel, knot] > 0.0, band, -band)
         return Passage(loop, panel, knot, self._neighbour(panel, knot, 1), level)
+
+    def grazes(self, level: float, passage: Passage, uncertain: FloatArray, *, last: bool) -> BoolArray:
+        """Whether a knot is so near the level, to `uncertain` (M,), that it may pass it before that first
+        passage, or with `last` pass the band of that half width after that last one. (M,)."""
+        p, knots = self.panels, self.height
+        number = np.arange(knots.size).reshape(knots.shape)
+        until = np.full(len(p.first), 0 if last else knots.size)
+        until[passage.loop] = passage.panel * knots.shape[1] + (passage.left if last else passage.right)
+        with np.errstate(invalid="ignore"):
+            near = np.abs((np.abs(knots) if last else knots) - level) < uncertain[p.owner, None]
+        open_to = until[p.owner, None]
+        near &= number >= open_to if last else number <= open_to
+        out = np.zeros(len(p.first), dtype=bool)
+        out[p.owner[near.any(axis=1)]] = True
+        return out
 
     def _neighbour(self, panel: IntArray, knot: IntArray, way: int) -> IntArray:
         """The knot next to each, within the panel (itself at the panel's end)."""

@@ -10,7 +10,7 @@ from synth.loop.quantities import Measure
 from synth.loop.time.collocation import GRID, value_matrix
 from synth.loop.time.delayed import delayed_time_stage
 from synth.loop.time.panels import Outline, Panels
-from synth.loop.time.proof import Cells
+from synth.loop.time.proof import Cells, unproven
 from synth.loop.time.trace import Trace
 
 INF = np.array([np.inf])
@@ -24,6 +24,11 @@ def cells_of(*signals):
         np.zeros(many, dtype=int), np.arange(many) * 1.0, np.ones(many), values, np.zeros(1, dtype=int)
     )
     return Cells.of(Trace.of(panels, np.zeros(1), np.ones(1)))
+
+
+def shown(*claims):
+    """Whether all of them are proven of the one loop."""
+    return not np.any(unproven(claims, 1))
 
 
 def hidden(x):
@@ -51,17 +56,17 @@ def test_a_peak_between_two_looks_is_not_excluded():
     cells = cells_of(hidden)
     best, _ = cells.trace.largest(1.0)
     assert best[0] < 1.0 - 1e-7  # the trace alone misses it
-    assert cells.may_exceed(-INF, best + 1e-8)[0]
-    assert not cells.may_exceed(-INF, np.array([1.0 + 1e-8]))[0]
+    assert not shown(cells.within(-INF, best + 1e-8))
+    assert shown(cells.within(-INF, np.array([1.0 + 1e-8])))
 
 
 def test_an_exit_or_a_passage_between_two_looks_is_not_excluded():
-    cells, none = cells_of(hidden), np.zeros(1)
+    cells = cells_of(hidden)
     band = 0.5 * (1.0 + cells.trace.largest(1.0)[0][0])
     later = cells_of(lambda x: 0.5 + 0.0 * x, hidden)
     for one, at in ((cells, band), (later, band)):
-        assert one.may_leave_later(at, one.trace.last_exit(at), none)[0]
-        assert one.may_reach_sooner(at, one.trace.first_reach(at), none)[0]
+        assert not shown(*one.not_later(at, one.trace.last_exit(at)))
+        assert not shown(*one.not_sooner(at, one.trace.first_reach(at)))
 
 
 @pytest.mark.parametrize("power", [0.0, -3.0, -9.0])
@@ -74,20 +79,19 @@ def test_plain_swings_are_proven(power):
         )
         best, _ = cells.trace.largest(1.0)
         far = cells.trace.farthest()
-        assert not cells.may_exceed(-INF, best + 1e-8 * size)[0]
-        assert not cells.may_exceed(-far - 1e-8 * size, far + 1e-8 * size)[0]
+        assert shown(cells.within(-INF, best + 1e-8 * size))
+        assert shown(cells.within(-far - 1e-8 * size, far + 1e-8 * size))
         for part in (0.9, 0.5, 0.1):
-            band, none = part * far[0], np.zeros(1)
-            assert not cells.may_leave_later(band, cells.trace.last_exit(band), none)[0]
-            assert not cells.may_reach_sooner(band, cells.trace.first_reach(band), none)[0]
+            band = part * far[0]
+            assert shown(*cells.not_later(band, cells.trace.last_exit(band)))
+            assert shown(*cells.not_sooner(band, cells.trace.first_reach(band)))
 
 
 def test_a_knot_too_near_the_level_is_not_trusted():
-    cells = cells_of(lambda x: np.sin(np.pi * x))
-    for band, trusted in ((1.0 - 1e-9, False), (1.0 + 1e-9, False), (1.0 - 1e-6, True), (1.0 + 1e-6, True)):
-        uncertain = np.array([1e-8])
-        assert cells.may_leave_later(band, cells.trace.last_exit(band), uncertain)[0] != trusted
-        assert cells.may_reach_sooner(band, cells.trace.first_reach(band), uncertain)[0] != trusted
+    trace, uncertain = cells_of(lambda x: np.sin(np.pi * x)).trace, np.array([1e-8])
+    for level, near in ((1.0 - 1e-9, True), (1.0 + 1e-9, True), (1.0 - 1e-6, False), (1.0 + 1e-6, False)):
+        assert trace.grazes(level, trace.last_exit(level), uncertain, last=True)[0] == near
+        assert trace.grazes(level, trace.first_reach(level), uncertain, last=False)[0] == near
 
 
 def test_bounds_of_a_panel_enclose_it():
