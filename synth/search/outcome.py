@@ -185,10 +185,11 @@ class Scan:
     restarts     polished starts; `agreeing` of them ended within 0.002 of the best
     resolution   of a dense scan, largest ratio between neighbouring values of a parameter
     ceiling      of a dense scan: the worst slack stays at or below it anywhere, by the slopes measured
-                 between neighbours, doubled: an estimate, no proof; None where there is none. Like
-                 best_slack it is the slack that the search steers by: of the same sign as the exact one
+                 between neighbours, doubled: an estimate, no proof; None where there is none. It is the
+                 slack that the search steers by: of the same sign as the exact one
     settled      the optimum is taken as found
-    best_slack   best worst slack, on all the cases
+    best_slack   largest worst slack of what was scored as a candidate, exact and on all the cases; -inf where
+                 nothing stabilised them all
     gain_intervals  of a one-parameter structure: the intervals of its gain that stabilise every case
     """
 
@@ -224,6 +225,7 @@ class Price:
     """What one requirement would have to be for a structure to meet all the rest.
 
     cost  how far the limit moves, in units of itself (or of the quantity's own scale where the limit is 0)
+    start, source  where the search for it set out from, as for a candidate
     """
 
     requirement: str
@@ -232,6 +234,8 @@ class Price:
     needed: float
     cost: float
     parameters: dict[str, float]
+    start: str
+    source: str
 
 
 @dataclass(frozen=True, slots=True)

@@ -79,6 +79,8 @@ def _prices(campaign: Campaign, drafts: list[Draft], aim_of: list[int]) -> tuple
                 outward,
                 abs(outward - bound.limit) / bound.unit,
                 values,
+                draft.start,
+                draft.source,
             )
         )
     return _undominated(found)

@@ -37,7 +37,7 @@ from synth.search.outcome import (
     Task,
 )
 from synth.search.prices import price_list
-from synth.search.ranking import chosen, different
+from synth.search.ranking import best_of, chosen, different
 from synth.search.two_processes import two_processes
 from synth.search.wishes import Wished, extremes, others, preferred
 from synth.structures import by_name
@@ -99,7 +99,7 @@ def _outcome(campaign: Campaign, seeds: Sequence[Seed]) -> Outcome:
         found, listed = _with_prices(campaign, found, listed, prices)
     campaign.enter("fragility")
     final = with_fragility(task, tuple(listed), objective.plants, objective.case_names)
-    scans = tuple(_scan(campaign, n) for n in range(len(task.structures)))
+    scans = tuple(_scan(campaign, n, found) for n in range(len(task.structures)))
     campaign.enter("end")
     return Outcome(
         candidates=final,
@@ -180,7 +180,11 @@ def _with_prices(
     task, objective = campaign.task, campaign.objective
     drafts = [
         Draft(
-            by_name(p.structure), np.array(list(p.parameters.values())), goal="price", start="the price list"
+            by_name(p.structure),
+            np.array(list(p.parameters.values())),
+            goal="price",
+            start=p.start,
+            source=p.source,
         )
         for p in prices
     ]
@@ -239,21 +243,26 @@ def _added(campaign: Campaign) -> tuple[PlantCase, ...]:
     return tuple(inside[name] for name in extra)
 
 
-def _scan(campaign: Campaign, n: int) -> Scan:
-    standing = campaign.standings[n]
+def _scan(campaign: Campaign, n: int, found: list[Candidate]) -> Scan:
+    standing, name = campaign.standings[n], campaign.task.structures[n].name
     return Scan(
-        structure=campaign.task.structures[n].name,
+        structure=name,
         exhaustive="exact" if standing.parameters == 1 else "dense" if standing.resolution else "search",
         resolution=standing.resolution,
         ceiling=standing.ceiling,
         restarts=standing.restarts,
         agreeing=standing.agreeing,
         settled=standing.settled,
-        best_slack=standing.best,
+        best_slack=max((c.worst_slack for c in _of(found, name)), default=-np.inf),
         evaluations=standing.evaluations,
         signs=standing.signs,
         gain_intervals=campaign.gains if standing.parameters == 1 else (),
     )
+
+
+def _of(found: list[Candidate], structure: str) -> list[Candidate]:
+    """Those that this structure can be."""
+    return [c for c in found if structure in (c.structure, *c.also)]
 
 
 def _rejections(
@@ -262,10 +271,10 @@ def _rejections(
     """Structures without a place in the list, nearest first, and why."""
     out = []
     for scan in scans:
-        mine = [c for c in found if scan.structure in (c.structure, *c.also)]
+        mine = _of(found, scan.structure)
         if any(c.structure == scan.structure and c.meets_all for c in final):
             continue
-        closest = max(mine, key=lambda c: c.worst_slack, default=None)
+        closest = best_of(campaign.task, mine) if mine else None
         out.append(_rejection(campaign, scan, closest, final))
     out.sort(key=lambda r: -(r.closest.worst_slack if r.closest is not None else -np.inf))
     return tuple(out)

@@ -2,7 +2,8 @@
 
 Without a preference: worst slack less COMPLEXITY for each tuned value; with one: that quantity on its worst
 case, among those that keep the reserve. What meets everything comes first. At most two of one structure; two
-are different when abs(ln(C1/C2)) exceeds APART somewhere within a decade of the crossover.
+are different when abs(ln(C1/C2)) exceeds APART somewhere within a decade of the crossover. Of two that are
+not, the better is listed, or the simpler where it is hardly worse.
 """
 
 from __future__ import annotations
@@ -13,9 +14,11 @@ import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray
 from synth.requirements import Bound, order
+from synth.search.goals import benefit
 from synth.search.outcome import Candidate, Task
 
 COMPLEXITY = 0.02
+WISH_COMPLEXITY = 1e-3  # of the wish, for each tuned value that the same loop does without
 APART = 0.1
 A_STRUCTURE = 2
 LIST = 5  # second candidates of a structure are added as long as the list is shorter than this ...
@@ -47,29 +50,30 @@ def ranked(task: Task, found: list[Candidate]) -> list[Candidate]:
     wish = task.prefer
     if wish is None or wish.measure is None:
         return _by_slack(task, found)
-    quantity, sense = wish.measure.quantity, wish.sense
-    name = wish.measure.row.name
-    column = [c.measures.index(wish.measure) for c in found]
-    worst = [
-        float(c.values[:, q].max() if sense == "min" else c.values[:, q].min())
-        for c, q in zip(found, column, strict=True)
-    ]
-    keeps = [c.worst_slack >= wish.reserve for c in found]
-    fit = [i for i in range(len(found)) if found[i].meets_all and keeps[i]]
-    rest = [i for i in range(len(found)) if i not in fit]
-    good = np.array([-w if sense == "min" else w for w in worst])
-    good = np.where(np.isnan(good), -np.inf, good)
+    worst = _wish_values(task, found)
+    good = np.where(np.isnan(worst), -np.inf, -worst if wish.sense == "min" else worst)
+    fit = [i for i, c in enumerate(found) if c.meets_all and c.worst_slack >= wish.reserve]
+    rest = [c for i, c in enumerate(found) if i not in fit]
     fit.sort(key=lambda i: (-good[i], -found[i].worst_slack))
     out = []
     for i in fit:
-        words = f"{name} {worst[i]:.4g}"
+        words = f"{wish.measure.row.name} {worst[i]:.4g}"
         if wish.reserve:
             words += f", with the reserve of {100.0 * wish.reserve:g} % kept"
         out.append(replace(found[i], ranked=words))
     short = f"worst slack below the reserve of {100.0 * wish.reserve:g} %"
-    for c in _by_slack(task, [found[i] for i in rest]):
+    for c in _by_slack(task, rest):
         out.append(replace(c, ranked=f"{c.ranked}; {short}") if c.meets_all else c)
-    del quantity
+    return out
+
+
+def _wish_values(task: Task, found: list[Candidate]) -> FloatArray:
+    """(N,) the preferred quantity on its worst case, NaN where it is absent on one."""
+    wish = task.prefer
+    if wish is None or wish.measure is None:
+        raise ValueError("the sheet prefers nothing")
+    columns = np.array([c.values[:, c.measures.index(wish.measure)] for c in found])
+    out: FloatArray = columns.max(axis=1) if wish.sense == "min" else columns.min(axis=1)
     return out
 
 
@@ -138,23 +142,58 @@ def chosen(task: Task, found: list[Candidate], fallback: float) -> list[Candidat
     """The list to report, in order: what is best of every structure, then seconds of a structure, all
     different.
 
-    Where something meets everything, only such are listed; else the closest approaches.
+    Where something meets everything, only such are listed; else the closest approaches that stabilise every
+    case. Where a wish or the closest approach is what counts, a structure is listed with the best it has or
+    not at all: where that best is the loop of another one, what it has besides would pass for its best.
     """
     queue = ranked(task, found)
-    if any(c.meets_all for c in queue):
-        queue = [c for c in queue if c.meets_all]
-    distinct: list[Candidate] = []
-    for c in queue:  # what is the same loop as one that stands higher adds nothing, whatever its name
-        if all(different(d, c, fallback) for d in distinct):
-            distinct.append(c)
+    met = any(c.meets_all for c in queue)
+    queue = [c for c in queue if (c.meets_all if met else c.stable.all())]
+    distinct = _distinct(task, queue, fallback)
+    at_its_best = not met or (task.prefer is not None and task.prefer.measure is not None)
+    best: dict[str, Candidate] = {}
+    for c in queue if met else sorted(queue, key=lambda c: -c.worst_slack):
+        best.setdefault(c.structure, c)
     picked: list[int] = []
     names: list[str] = []
     for i, c in enumerate(distinct):  # the best of each structure
-        if c.structure not in names:
+        if c.structure not in names and (c is best[c.structure] or not at_its_best):
             picked.append(i)
             names.append(c.structure)
     for i, c in enumerate(distinct):  # then seconds, as long as the list is short
-        if i not in picked and len(picked) < LIST and names.count(c.structure) < A_STRUCTURE:
+        if i not in picked and len(picked) < LIST and 0 < names.count(c.structure) < A_STRUCTURE:
             picked.append(i)
             names.append(c.structure)
     return [distinct[i] for i in sorted(picked)][:MOST]
+
+
+def best_of(task: Task, mine: list[Candidate]) -> Candidate:
+    """What stands for a structure: the first of what meets everything, else what comes nearest."""
+    if any(c.meets_all for c in mine):
+        return ranked(task, mine)[0]
+    return max(mine, key=lambda c: (bool(c.stable.all()), c.worst_slack))
+
+
+def _distinct(task: Task, queue: list[Candidate], fallback: float) -> list[Candidate]:
+    """Without what is the same loop as another that is better, or simpler and hardly worse: a second name for
+    it adds nothing. The order stays."""
+    kept: list[int] = []
+    for i in np.argsort(-_worth(task, queue), kind="stable"):
+        if all(different(queue[j], queue[i], fallback) for j in kept):
+            kept.append(int(i))
+    return [queue[i] for i in sorted(kept)]
+
+
+def _worth(task: Task, queue: list[Candidate]) -> FloatArray:
+    """(N,) what a candidate is worth when two are the same loop: what the queue goes by, less something for
+    each tuned value; its place in the queue where simplicity counts in that already."""
+    tuned = np.array([float(len(c.parameters)) for c in queue])
+    slack = np.array([c.worst_slack for c in queue])
+    wish = task.prefer
+    if not any(c.meets_all for c in queue):
+        return slack - COMPLEXITY * tuned
+    if wish is None or wish.measure is None:
+        return -np.arange(float(len(queue)))
+    gain = benefit(wish.measure, wish.sense, _wish_values(task, queue)) - WISH_COMPLEXITY * tuned
+    out: FloatArray = np.where(slack >= wish.reserve, gain, -1e3 + slack - COMPLEXITY * tuned)
+    return out

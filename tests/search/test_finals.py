@@ -145,3 +145,46 @@ def test_closest_approaches_are_listed_where_nothing_is_met():
     picked = chosen(task, made(task, draft("P", 8.0), draft("PD", 8.0, 0.05, 0.005)), 1.0)
     assert picked
     assert not any(c.meets_all for c in picked)
+
+
+def test_a_closest_approach_goes_under_the_simpler_of_two_names_for_one_loop():
+    """A PD that is a P at every frequency that matters, and nearer by a hair."""
+    task = servo(limits=(("velocity_error", "max", 1e-2),))
+    rich, plain, other = made(task, draft("PD", 8.1, 1e-4, 1e-4), draft("P", 8.0), draft("P", 4.0))
+    assert 0.0 < rich.worst_slack - plain.worst_slack < 0.2
+    near = replace(rich, worst_slack=plain.worst_slack + 0.01)
+    assert [c.structure for c in chosen(task, [other, near, plain], 1.0)] == ["P", "P"]
+    far = replace(rich, worst_slack=plain.worst_slack + 0.05)
+    assert chosen(task, [other, far, plain], 1.0)[0].structure == "PD"
+
+
+def test_a_structure_is_listed_with_its_closest_approach_or_not_at_all():
+    task = servo(limits=(("velocity_error", "max", 1e-2),))
+    found = made(task, draft("PD", 8.0, 1e-4, 1e-4), draft("P", 8.0), draft("PD", 5.0, 0.05, 0.005))
+    assert found[0].worst_slack > found[2].worst_slack
+    # what is left of the PD is another loop, and farther than the PD comes
+    assert [c.structure for c in chosen(task, found, 1.0)] == ["P"]
+    assert [c.structure for c in chosen(task, found[1:], 1.0)] == ["P", "PD"]
+
+
+def test_what_does_not_stabilise_comes_near_nothing():
+    task = cases(1, ("P", "PI"))
+    task = replace(task, bounds=bounds(("sensitivity_peak", "max", 1.0001)))
+    stable, unstable = made(task, draft("P", 2.0), draft("PI", -2.0, 0.4))
+    assert not unstable.stable.all()
+    assert [c.structure for c in chosen(task, [unstable, stable], 1.0)] == ["P"]
+    assert chosen(task, [unstable], 1.0) == []
+
+
+def test_under_a_wish_one_loop_goes_under_its_simpler_name_and_a_structure_is_at_its_best():
+    task = servo(limits=(("velocity_error", "max", 0.2), ("sensitivity_peak", "max", 2.0)))
+    task = replace(task, prefer=Aim(bounds(("control_peak", "max", 1.0))[0].measure, "min"))
+    plain, rich, more = made(
+        task, draft("P", 6.0), draft("PD", 5.9999, 1e-7, 1e-7), draft("PD", 8.0, 0.05, 0.01)
+    )
+    control = plain.measures.index(task.prefer.measure)
+    plain = replace(plain, values=np.where(np.arange(len(plain.measures)) == control, 6.0, plain.values))
+    rich = replace(rich, values=np.where(np.arange(len(rich.measures)) == control, 5.999, rich.values))
+    assert [c.structure for c in chosen(task, [more, plain, rich], 1.0)] == ["P"]
+    better = replace(rich, values=np.where(np.arange(len(rich.measures)) == control, 5.9, rich.values))
+    assert chosen(task, [more, plain, better], 1.0)[0].structure == "PD"

@@ -13,6 +13,7 @@ from synth.model.cases import ParameterRange, PlantCases
 from synth.model.forms import from_formula
 from synth.requirements import slacks
 from synth.search import Aim, Settings, Task, propose, rescore
+from synth.search.objective import Objective
 from synth.search.tradeoff import tradeoff, undominated
 from synth.structures import by_name
 
@@ -170,13 +171,36 @@ def test_a_sheet_that_cannot_be_met_is_priced():
     assert not any(c.meets_all for c in out.candidates)
     # the setting behind the cheapest price misses one limit alone: the nearest is at least as near
     assert out.candidates[0].worst_slack >= -out.prices[0].cost
+    assert all(p.start and p.start != "the price list" for p in out.prices)
+    assert all(c.start for c in out.candidates)
     how = {s.structure: s for s in out.scans}
     assert how["P"].exhaustive == "exact"
     for name in ("PI", "PD"):
         assert how[name].exhaustive == "dense"
         assert 1.0 < how[name].resolution < 3.0
-        assert how[name].best_slack <= how[name].ceiling
+        closest = next(r.closest for r in out.rejections if r.structure == name)
+        assert how[name].best_slack == closest.worst_slack
+        # the ceiling is one of the slack that the search steers by
+        objective = Objective(replace(task, structures=(by_name(closest.structure),)))
+        row = objective.rows_of(0, np.array([list(closest.parameters.values())]))
+        assert objective.score(row).guide()[0] <= how[name].ceiling
     assert how["PI"].ceiling < 0.0
+
+
+def test_the_figure_of_a_closest_approach_is_the_same_wherever_it_is_told():
+    task = servo(
+        ("P", "PI", "PD", "lead"),
+        limits=(("settling_time", "max", 0.25), ("overshoot", "max", 2.0), ("control_peak", "max", 6.0)),
+    )
+    out = propose(task, QUICK)
+    told = {r.structure: r for r in out.rejections}
+    assert set(told) == {s.structure for s in out.scans}
+    for scan in out.scans:
+        closest = told[scan.structure].closest
+        again = rescore(task, [(closest.structure, list(closest.parameters.values()))])[0]
+        assert scan.best_slack == closest.worst_slack == pytest.approx(again.worst_slack, rel=1e-9)
+        listed = [c.worst_slack for c in out.candidates if c.structure == scan.structure]
+        assert max(listed, default=scan.best_slack) == scan.best_slack
 
 
 def test_where_no_gain_stabilises_it_is_said_and_known_exactly():
@@ -187,7 +211,9 @@ def test_where_no_gain_stabilises_it_is_said_and_known_exactly():
     assert "no gain of either sign" in by_name_["P"].reason
     assert by_name_["P"].scan.exhaustive == "exact"
     assert by_name_["P"].scan.gain_intervals == ()
+    assert by_name_["P"].scan.best_slack == -np.inf
     assert out.verdict == "not met"
+    assert all(c.stable.all() for c in out.candidates)
 
 
 def test_the_trade_off_is_a_front_of_compensators_that_meet_the_sheet():
