@@ -22,17 +22,17 @@ RENAMED = {
 EXACT = 1e-9
 
 
-def embedded(objective: Objective, rows: Rows, larger: int) -> Rows | None:
+def embedded(objective: Objective, rows: Rows, larger: int, of: Objective | None = None) -> Rows | None:
     """The rows of one structure as rows of structure `larger`, which may be several each; None where it
-    cannot.
+    cannot. `of` is the objective that the rows belong to, where it is another one.
 
     The same function is carried over where both can be it; else the larger one has to contain the other
     (`Structure.simpler`).
     """
-    structure = objective.structures[larger]
+    structure, of = objective.structures[larger], of or objective
     parts = []
-    for theta, number, origin in zip(objective.theta(rows), rows.structure, rows.origin, strict=True):
-        small = objective.structures[int(number)]
+    for theta, number, origin in zip(of.theta(rows), rows.structure, rows.origin, strict=True):
+        small = of.structures[int(number)]
         made = _same(small, structure, theta)
         if made is not None:
             parts.append(objective.rows_of(larger, made[None, :], np.array([origin])))

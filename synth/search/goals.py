@@ -19,6 +19,7 @@ from synth.search.objective import Objective, Scores, compressed
 from synth.search.outcome import Aim
 
 PENALTY = 20.0  # enough to begin with; who needs a point that surely keeps the reserve raises it
+ABSENT = -60.0  # benefit of a quantity that is not there, and the least of any; its opposite is the most
 WORST_SLACK = Aim()
 
 
@@ -100,5 +101,5 @@ def benefit(measure: Measure, sense: str, value: FloatArray) -> FloatArray:
     with np.errstate(divide="ignore", invalid="ignore"):
         log = np.log(np.maximum(value, 0.0) + scale)
     log = np.where(np.isnan(log), np.inf if sense == "min" else -np.inf, log)
-    out: FloatArray = np.clip(-log if sense == "min" else log, -60.0, 60.0)
+    out: FloatArray = np.clip(-log if sense == "min" else log, ABSENT, -ABSENT)
     return out

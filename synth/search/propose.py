@@ -10,6 +10,7 @@ import numpy as np
 
 from synth.loop.arrays import FloatArray
 from synth.model.cases import PlantCase
+from synth.search.alternatives import extremes, others
 from synth.search.approach import nearest
 from synth.search.archive import Rows, joined
 from synth.search.campaign import Campaign
@@ -39,7 +40,7 @@ from synth.search.outcome import (
 from synth.search.prices import price_list
 from synth.search.ranking import best_of, chosen, different
 from synth.search.two_processes import two_processes
-from synth.search.wishes import Wished, extremes, others, preferred
+from synth.search.wishes import Wished, preferred
 from synth.structures import by_name
 
 Seed = tuple[str, Sequence[float]]

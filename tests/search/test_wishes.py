@@ -7,10 +7,10 @@ import pytest
 from sheets import servo
 
 from synth.search import Settings, Task, propose
+from synth.search.alternatives import _other_loops
 from synth.search.archive import joined
 from synth.search.campaign import Campaign
 from synth.search.ranking import different
-from synth.search.wishes import _other_loops
 from synth.spec import read_spec
 
 SPECS = Path(__file__).parents[2] / "specs"
