@@ -17,11 +17,12 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.frequency.isolation import Brackets, isolate
-from synth.loop.frequency.response import CLOSED, D, N, Response, cross, evaluate, log_rates, tamed
+from synth.loop.frequency.response import CLOSED, D, N, Response, complex_values, cross, evaluate
 
 GAIN, FALL, PHASE = 0, 1, 2
 _ITERATIONS = 70  # bisection alone closes any bracket in fewer
 _SETTLED = 3e-14  # Newton step in ln ω
+_NEAR = 1e-4  # step from which on the convergence is quadratic
 _HOLDS = 1e-4  # what may be left of a logarithm or an angle at a root
 
 
@@ -45,11 +46,9 @@ class Crossings:
 
 def of_kind(found: Sequence[Crossings], kind: int) -> Crossings:
     """All crossings of one kind."""
-    masks = [c.kind == kind for c in found]
-    empty = (np.empty(0, dtype=np.intp), np.empty(0), np.empty(0, dtype=bool), np.empty(0, dtype=complex))
-    parts = [(c.row[k], c.w[k], c.down[k], c.loop[k]) for c, k in zip(found, masks, strict=True)]
-    row, w, down, loop = (np.concatenate(part) for part in zip(empty, *parts, strict=True))
-    return Crossings(np.full(len(row), kind, dtype=np.intp), row, w, down, loop)
+    rows = [(c.kind == kind).nonzero()[0] for c in found]
+    parts = [(c.kind[k], c.row[k], c.w[k], c.down[k], c.loop[k]) for c, k in zip(found, rows, strict=True)]
+    return Crossings(*(np.concatenate(part) for part in zip(*parts, strict=True)))
 
 
 def fall_level(response: Response) -> FloatArray:
@@ -59,22 +58,32 @@ def fall_level(response: Response) -> FloatArray:
     return level
 
 
-def crossings(response: Response, kinds: tuple[int, ...]) -> Crossings:
-    """All crossings of the kinds asked for; loops without dead time, or GAIN alone."""
-    squares, m = response.squares, response.loops
-    level = fall_level(response)
-    stack = []
+def polynomials(response: Response, kinds: tuple[int, ...]) -> FloatArray:
+    """What vanishes at the crossings of each kind, (n + 1, kinds · M) in ascending powers of x; of loops
+    without dead time, or GAIN alone.
+    """
+    squares = response.squares
+    stack = [squares[:, :0, 0]]
     for kind in kinds:
         if kind == GAIN:
             stack.append(squares[:, D] - squares[:, N])
         elif kind == FALL:
+            level = fall_level(response)
             # a loop with T(0) = 0 has no level: the zero polynomial has no roots
             stack.append((level * squares[:, CLOSED] - squares[:, N]) * (level > 0.0))
         else:
             stack.append(_quadrature(response))
-    brackets = isolate(np.concatenate(stack, axis=1))
-    found = np.array(kinds, dtype=np.intp)[brackets.row // m]
-    return refine(response, found, brackets, level)
+    return np.concatenate(stack, axis=1)
+
+
+def crossings(response: Response, kinds: tuple[int, ...], brackets: Brackets) -> Crossings:
+    """The crossings at the bracketed roots of `polynomials`."""
+    m = response.loops
+    kind, row = np.array(kinds, dtype=np.intp)[brackets.row // m], brackets.row % m
+    equation = _Rational(response, kind, row, np.where(kind == FALL, fall_level(response)[row], 1.0))
+    u, holds = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
+    kind, row, w, down = kind[holds], row[holds], np.exp(u[holds]), brackets.negative[holds]
+    return Crossings(kind, row, w, down, loop_at(response, row, w))
 
 
 def _quadrature(response: Response) -> FloatArray:
@@ -86,16 +95,6 @@ def _quadrature(response: Response) -> FloatArray:
     p = cross(on, ed, en, od, -1.0, 0, n)
     size = cross(np.abs(on), np.abs(ed), np.abs(en), np.abs(od), 1.0, 0, n)
     return np.where(np.abs(p) <= 4e-16 * size, 0.0, p)
-
-
-def refine(response: Response, kind: IntArray, brackets: Brackets, level: FloatArray) -> Crossings:
-    """The crossings of bracketed roots of loops without dead time (or of kind GAIN)."""
-    row = brackets.row % response.loops
-    squared = np.where(kind == FALL, level[row], 1.0)
-    equation = _Rational(response, kind, row, squared)
-    u, holds = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
-    kind, row, w, down = kind[holds], row[holds], np.exp(u[holds]), brackets.negative[holds]
-    return Crossings(kind, row, w, down, loop_at(response, row, w))
 
 
 def gain_frequencies(response: Response, gain: FloatArray) -> tuple[IntArray, FloatArray]:
@@ -131,20 +130,24 @@ def newton(
     u = 0.5 * (bottom + top)
     result, holds = np.empty(len(u)), np.empty(len(u), dtype=bool)
     active = np.arange(len(u))
-    excess = result
+    excess, last = result, np.full(len(u), np.nan)  # last: the step before, where it was Newton's
     for iteration in range(_ITERATIONS):
         excess, slope, side = equation.at(u)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            new = u - excess / slope
+        new = u - excess / slope
         before = side * sign > 0.0
         bottom = np.where(before, u, bottom)
         top = np.where(before, top, u)
         tolerance = (_SETTLED if iteration < 10 else 30.0 * _SETTLED) * np.maximum(1.0, np.abs(u))
         # a converged step may end beside a bracket whose end is the root itself: that is no reason to bisect
-        good = ((new >= bottom) & (new <= top)) | (np.abs(new - u) < tolerance)
+        step = np.abs(new - u)
+        good = ((new >= bottom) & (new <= top)) | (step < tolerance)
         new = np.where(good, new, 0.5 * (bottom + top))
-        done = (np.abs(new - u) < tolerance) | (top - bottom < 1e-15)
-        u = new
+        # steps shrink as their squares: the next one is known before it is made
+        done = good & (
+            (step < tolerance) | ((step < _NEAR) & (step * step * step < 0.1 * tolerance * last * last))
+        )
+        done |= top - bottom < 1e-15
+        u, last = new, np.where(good, step, np.nan)
         finished = np.count_nonzero(done)
         if finished == len(u):
             break
@@ -152,7 +155,7 @@ def newton(
             result[active[done]], holds[active[done]] = u[done], np.abs(excess[done]) < _HOLDS
             keep = np.flatnonzero(~done)
             active, u, bottom, top, sign = active[keep], u[keep], bottom[keep], top[keep], sign[keep]
-            excess = excess[keep]
+            excess, last = excess[keep], last[keep]
             equation.keep(keep)
     result[active], holds[active] = u, np.abs(excess) < _HOLDS
     return result, holds
@@ -176,23 +179,25 @@ class _Rational:
         )
 
     def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-        re, im = tamed(*evaluate(self.columns, np.exp(u)))  # (2 derivatives, 2 polynomials, F)
-        size, rate, turn = log_rates(re, im)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            gain = np.log(size[0] / size[1]) - self.offset
-            cosine = re[0, 0] * re[0, 1] + im[0, 0] * im[0, 1]
-            sine = im[0, 0] * re[0, 1] - re[0, 0] * im[0, 1]
-            angle = np.arctan(sine / cosine)
-        excess = np.where(self.phase, angle, gain)
-        slope = np.where(self.phase, turn[0] - turn[1], 2.0 * (rate[0] - rate[1]))
-        return excess, slope, np.where(self.phase, -sine, gain)
+        value = complex_values(*evaluate(self.columns, np.exp(u)))  # (2 derivatives, 2 polynomials, F)
+        rate = value[1] / value[0]
+        rate, ratio = rate[0] - rate[1], value[0, 0] / value[0, 1]
+        gain = 2.0 * np.log(np.abs(ratio)) - self.offset
+        if not self.phase.any():
+            return gain, 2.0 * rate.real, gain
+        excess = np.where(self.phase, np.arctan(ratio.imag / ratio.real), gain)
+        return (
+            excess,
+            np.where(self.phase, rate.imag, 2.0 * rate.real),
+            np.where(self.phase, -ratio.imag, gain),
+        )
 
 
 def loop_at(response: Response, row: IntArray, w: FloatArray) -> ComplexArray:
     """L(jω) of F points, dead time included."""
-    n_re, n_im = evaluate(response.columns(N, row, 0), w)
-    d_re, d_im = evaluate(response.columns(D, row, 0), w)
-    value: ComplexArray = (n_re[0] + 1j * n_im[0]) / (d_re[0] + 1j * d_im[0])
+    both = np.stack((response.columns(N, row, 0), response.columns(D, row, 0)), axis=3)
+    numerator, denominator = complex_values(*evaluate(both, w))[0]
+    value: ComplexArray = numerator / denominator
     if response.dead_time.any():
         value = value * np.exp(-1j * w * response.dead_time[row])
     return value

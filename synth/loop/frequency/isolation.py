@@ -42,6 +42,10 @@ class Brackets:
     high: FloatArray
     negative: BoolArray
 
+    def rows(self, index: BoolArray, first: int) -> Brackets:
+        """The brackets named by `index`, polynomials counted from `first`."""
+        return Brackets(self.row[index] - first, self.low[index], self.high[index], self.negative[index])
+
 
 def isolate(polynomials: FloatArray, hint: FloatArray | None = None) -> Brackets:
     """Brackets of all positive roots.
@@ -214,7 +218,7 @@ def _scan(
         if many.size:
             at = row[column[many]]
             cut = np.zeros(len(many)) if hint is None else hint[at] / low[many] - 1.0
-            _halve(
+            halve(
                 coefficients[:, 1 + cell[many], column[many]],
                 at,
                 low[many],
@@ -246,7 +250,7 @@ def split(coefficients: FloatArray, t: FloatArray) -> tuple[FloatArray, FloatArr
     return left, right
 
 
-def _halve(
+def halve(
     coefficients: FloatArray,
     row: IntArray,
     low: FloatArray,

@@ -12,13 +12,14 @@ Letters: M loops, R = kinds · M curves.
 
 from __future__ import annotations
 
+from functools import cache
 from typing import Protocol
 
 import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
-from synth.loop.frequency.isolation import isolate
-from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, evaluate, log_rates, tamed
+from synth.loop.frequency.isolation import Brackets, isolate
+from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, complex_values, evaluate
 from synth.loop.polynomials import in_strips
 
 CURVES = {"sensitivity_peak": D, "complementary_peak": N, "noise_gain": CONTROL}
@@ -31,54 +32,63 @@ _STEPS = 60  # bisection alone needs half of them
 _ROUNDS = 12
 _LEAST_MARGIN = 2e-9  # relative, of the level above the peak in the test
 _MOST_MARGIN = 2e-7
+_EPS = float(np.finfo(float).eps)
 
 
-def suprema(response: Response, poles: ComplexArray, keys: tuple[str, ...]) -> dict[str, FloatArray]:
-    """(M,) suprema of the curves in `keys`, of stable loops without dead time.
+class Suprema:
+    """Suprema of the curves in `keys`, of stable loops without dead time, each with a level to be tested.
 
     Error: the value is that of a frequency found by Newton's method; the test excludes a higher peak by more
     than 1e-9 relative (1e-7 where damping of 1e-4 leaves no more digits in |Δ|²).
     """
-    m = response.loops
-    numerators = np.array([CURVES[k] for k in keys], dtype=np.intp)
-    curve = np.repeat(numerators, m)
-    row = np.tile(np.arange(m), len(keys))
-    best, at = _coarse(response, poles, numerators)
-    inside = np.flatnonzero(at > 0.0)
-    start = at[inside]
-    around = (start / _NEIGHBOUR, start, start * _NEIGHBOUR)
-    climb(_Rational(response, curve[inside], row[inside]), inside, around, best, at)
 
-    _climb_light_poles(response, poles, numerators, best, at)
+    def __init__(self, response: Response, poles: ComplexArray, keys: tuple[str, ...]) -> None:
+        self.response, self.keys = response, keys
+        m = response.loops
+        numerators = np.array([CURVES[k] for k in keys], dtype=np.intp)
+        self.curve, self.row = np.repeat(numerators, m), np.tile(np.arange(m), len(keys))
+        self.best, self.at = _coarse(response, poles, numerators)
+        inside = (self.at > 0.0).nonzero()[0]
+        start = self.at[inside]
+        self._climb(inside, (start / _NEIGHBOUR, start, start * _NEIGHBOUR))
+        _climb_light_poles(response, poles, numerators, self.best, self.at)
+        self.todo = np.arange(len(self.row))  # curves whose level is not tested yet
 
-    squares = response.squares
-    todo = np.arange(len(row))
-    for _ in range(_ROUNDS):
-        top, bottom = squares[:, curve[todo], row[todo]], squares[:, CLOSED, row[todo]]
-        margin = _margin(top, bottom, best[todo], at[todo])
-        level = (best[todo] * (1.0 + margin)) ** 2 * bottom - top
-        brackets = isolate(level, hint=at[todo] ** 2)
-        if not brackets.row.size:
-            break
+    def _climb(self, curves: IntArray, around: tuple[FloatArray, FloatArray, FloatArray]) -> None:
+        points = _Rational(self.response, self.curve[curves], self.row[curves])
+        climb(points, curves, around, self.best, self.at)
+
+    def levels(self) -> tuple[FloatArray, FloatArray]:
+        """γ² |Δ|² - |P|² of the curves to test, (n + 1, F), and where each should come close to 0, (F,)."""
+        curve, row = self.curve[self.todo], self.row[self.todo]
+        best, at = self.best[self.todo], self.at[self.todo]
+        top, bottom = self.response.squares[:, curve, row], self.response.squares[:, CLOSED, row]
+        level: FloatArray = (best * (1.0 + _margin(top, bottom, best, at))) ** 2 * bottom - top
+        return level, at**2
+
+    def raise_to(self, brackets: Brackets) -> None:
+        """Climb between the roots of the levels; what rose is to be tested again."""
         which, x = _between(brackets.row, brackets.low, brackets.high)
-        chosen = todo[which]
-        before = best.copy()
-        around = (np.sqrt(x[0]), (x[1] * x[2]) ** 0.25, np.sqrt(x[3]))
-        climb(_Rational(response, curve[chosen], row[chosen]), chosen, around, best, at)
-        todo = np.flatnonzero(best > before * (1.0 + 1e-12))
-        if not todo.size:
-            break
-    return {key: best[i * m : (i + 1) * m] for i, key in enumerate(keys)}
+        before = self.best.copy()
+        self._climb(self.todo[which], (np.sqrt(x[0]), (x[1] * x[2]) ** 0.25, np.sqrt(x[3])))
+        self.todo = (self.best > before * (1.0 + 1e-12)).nonzero()[0]
+
+    def settled(self) -> dict[str, FloatArray]:
+        """(M,) each, by key; the levels are tested until nothing rises."""
+        for _ in range(_ROUNDS):
+            if not self.todo.size:
+                break
+            level, hint = self.levels()
+            self.raise_to(isolate(level, hint))
+        m = self.response.loops
+        return {key: self.best[i * m : (i + 1) * m] for i, key in enumerate(self.keys)}
 
 
 def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tuple[FloatArray, FloatArray]:
     """Largest value seen of each curve and its frequency; 0 stands for an end, or the border of the look."""
     m = response.loops
-    span = min(_SPAN, _RANGE // max(len(response.squares) - 1, 1))
-    x = 2.0 ** np.arange(-span, span + 1)
-    powers = np.vander(x, len(response.squares), increasing=True).astype(float)
+    powers, w = _octaves(len(response.squares))
     bottom = in_strips(powers, response.squares[:, CLOSED])
-    w = np.sqrt(x)
     best, at = [], []
     lightest = _lightest(poles)
     light = np.flatnonzero(lightest > 0.0)
@@ -91,7 +101,7 @@ def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tu
         ratio = np.divide(above, bottom, out=size, where=bottom > 0.0)
         top = ratio.argmax(axis=0)
         value = np.sqrt(np.maximum(ratio[top, columns], 0.0))
-        place = np.where((top > 0) & (top < 2 * span), w[top], 0.0)
+        place = np.where((top > 0) & (top < len(w) - 1), w[top], 0.0)
         if light.size:
             seen = _size(response, np.full(len(light), p), light, lightest[light]) / below
             higher = seen > value[light]
@@ -103,6 +113,14 @@ def _coarse(response: Response, poles: ComplexArray, numerators: IntArray) -> tu
     return np.concatenate(best), np.concatenate(at)
 
 
+@cache
+def _octaves(count: int) -> tuple[FloatArray, FloatArray]:
+    """x^0, x^1, ... (F, count) at octaves of x, and ω there."""
+    span = min(_SPAN, _RANGE // max(count - 1, 1))
+    x: FloatArray = np.exp2(np.arange(-span, span + 1.0))
+    return np.vander(x, count, increasing=True), np.sqrt(x)
+
+
 def _climb_light_poles(
     response: Response, poles: ComplexArray, numerators: IntArray, best: FloatArray, at: FloatArray
 ) -> None:
@@ -111,9 +129,8 @@ def _climb_light_poles(
     So near the axis |Δ|² keeps few digits, and in a loop of high order with many modes the level test may see
     nothing of a second needle: one of 1.0083 beside 1.004 was missed at order 21 (see test_peaks).
     """
-    with np.errstate(invalid="ignore", divide="ignore"):
-        light = (poles.imag > 0.0) & (-poles.real < _LIGHT * np.abs(poles))
-    loop, place = np.nonzero(light & (np.count_nonzero(light, axis=1) > 1)[:, None])
+    light = (poles.imag > 0.0) & (-poles.real < _LIGHT * np.abs(poles))
+    loop, place = np.nonzero(light & (light.sum(axis=1) > 1)[:, None])
     if not loop.size:
         return
     pole = poles[loop, place]
@@ -128,13 +145,11 @@ def _lightest(poles: ComplexArray) -> FloatArray:
     """(M,) resonance frequency of the pole with the least damping, 0 where none is below 0.3."""
     if poles.shape[1] == 0:
         return np.zeros(len(poles))
-    with np.errstate(invalid="ignore", divide="ignore"):
-        damping = np.where(poles.imag > 0.0, -poles.real / np.abs(poles), 1.0)
-    pick = damping.argmin(axis=1)
-    chosen = np.take_along_axis(poles, pick[:, None], axis=1)[:, 0]
-    light = np.take_along_axis(damping, pick[:, None], axis=1)[:, 0] < 0.3
-    out: FloatArray = np.where(light, np.sqrt(np.maximum(chosen.imag**2 - chosen.real**2, 0.0)), 0.0)
-    return out
+    damping = np.where(poles.imag > 0.0, -poles.real / np.abs(poles), 1.0)
+    row, pick = np.arange(len(poles)), damping.argmin(axis=1)
+    chosen = poles[row, pick]
+    resonance = np.sqrt(np.maximum(chosen.imag**2 - chosen.real**2, 0.0))
+    return np.where(damping[row, pick] < 0.3, resonance, 0.0)
 
 
 def _size(response: Response, polynomial: IntArray, row: IntArray, w: FloatArray) -> FloatArray:
@@ -168,22 +183,20 @@ def climb(
     """
     if not target.size:
         return
-    with np.errstate(divide="ignore"):
-        low, u, high = (np.log(x) for x in between)
+    low, u, high = (np.log(x) for x in between)
     for _ in range(_STEPS):
         w = np.exp(u)
-        re, im = tamed(*curve.at(w))
-        size, rate, turn = log_rates(re, im)
-        with np.errstate(divide="ignore", invalid="ignore"):  # NaN where both are nothing, and no peak there
-            value = np.sqrt(size[0] / size[1])
-            bend = (re[2] * re[0] + im[2] * im[0]) / size - rate * rate + turn * turn
+        values = complex_values(*curve.at(w))
+        value = np.abs(values[0, 0] / values[0, 1])
+        rate, bend = values[1:] / values[0]  # NaN where a curve is nothing: no peak there
+        bend -= rate * rate
         np.fmax.at(best, target, value)
-        met = np.flatnonzero(best[target] == value)
+        met = best[target] == value
         at[target[met]] = w[met]
-        slope, curvature = rate[0] - rate[1], bend[0] - bend[1]
-        low, high = np.where(slope > 0.0, u, low), np.where(slope > 0.0, high, u)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            new = u + slope / (2.0 * slope * slope - curvature)  # |Δ/P|² is smooth where the peak is sharp
+        slope, curvature = rate[0].real - rate[1].real, bend[0].real - bend[1].real
+        rises = slope > 0.0
+        low, high = np.where(rises, u, low), np.where(rises, high, u)
+        new = u + slope / (2.0 * slope * slope - curvature)  # |Δ/P|² is smooth where the peak is sharp
         new = np.where((new >= low) & (new <= high), new, 0.5 * (low + high))
         moving = np.abs(new - u) > 1e-9
         count = np.count_nonzero(moving)
@@ -191,7 +204,7 @@ def climb(
             break
         u = new
         if 2 * count < len(u):
-            keep = np.flatnonzero(moving)
+            keep = moving.nonzero()[0]
             u, low, high, target = u[keep], low[keep], high[keep], target[keep]
             curve.keep(keep)
 
@@ -219,9 +232,8 @@ def _margin(top: FloatArray, bottom: FloatArray, best: FloatArray, at: FloatArra
         terms = terms * x + np.abs(bottom[k])
         above = above * x + np.abs(top[k])
         value = value * x + bottom[k]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        noise = 8.0 * np.finfo(float).eps * (terms + above / (best * best)) / np.abs(value)
-    out: FloatArray = np.clip(np.nan_to_num(noise, nan=0.0, posinf=1.0), _LEAST_MARGIN, _MOST_MARGIN)
+    noise = 8.0 * _EPS * (terms + above / (best * best)) / np.abs(value)
+    out: FloatArray = np.fmin(np.fmax(noise, _LEAST_MARGIN), _MOST_MARGIN)
     return out
 
 

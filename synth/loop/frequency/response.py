@@ -10,10 +10,11 @@ Letters: h degree of the halves, M loops, F points (each belonging to a loop).
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 
-from synth.loop.arrays import FloatArray, IntArray
+from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 
 _LARGE = 1e150  # values whose products with each other stay finite
@@ -67,14 +68,23 @@ def response_of(loops: Loops) -> Response:
     stack[CONTROL] = loops.control
     ascending = np.ascontiguousarray(np.moveaxis(stack, 2, 0)[::-1])  # (n + 1, 4, M)
     halves = np.zeros((h + 1, 3, 2, 4 * m))
-    for k in range(n + 1):
-        row = ascending[k].reshape(-1)
-        half, i = k % 2, k // 2
-        value = -row if i % 2 else row  # s^k = j^k ω^k
-        halves[i, 0, half], halves[i, 1, half], halves[i, 2, half] = value, k * value, k * k * value
+    for half in (0, 1):
+        part = ascending[half::2].reshape(-1, 1, 4 * m)
+        np.multiply(part, _factors(n)[half::2], out=halves[: len(part), :, half])
     squares = square(halves[:, 0], n).reshape(n + 1, 4, m)
-    ends = np.stack([ascending[0], np.stack([loops.leading(part) for part in stack])])
+    ends = np.empty((2, 4, m))
+    ends[0], ends[1] = ascending[0], [loops.leading(part) for part in stack]
     return Response(halves, squares, ends, loops.dead_time)
+
+
+@cache
+def _factors(n: int) -> FloatArray:
+    """Of the coefficient of s^k in p, dp/du and d²p/du², (n + 1, 3, 1): s^k = j^k ω^k, the j left to the odd
+    half.
+    """
+    k = np.arange(n + 1.0)[:, None, None]
+    out: FloatArray = k ** np.arange(3)[:, None] * np.where(k % 4 < 2, 1.0, -1.0)
+    return out
 
 
 def square(halves: FloatArray, n: int) -> FloatArray:
@@ -105,12 +115,19 @@ def evaluate(columns: FloatArray, w: FloatArray) -> tuple[FloatArray, FloatArray
     return value[:, 0], value[:, 1] * w
 
 
+def complex_values(re: FloatArray, im: FloatArray) -> ComplexArray:
+    """One complex array of both; its quotients keep within the number range where squares would not."""
+    out = np.empty(re.shape, dtype=complex)
+    out.real, out.imag = re, im
+    return out
+
+
 def tamed(re: FloatArray, im: FloatArray) -> tuple[FloatArray, FloatArray]:
     """The same values of several polynomials, (derivatives + 1, polynomials, F), over a power of two common
     to each point where their squares would leave the number range; ratios and logarithmic rates do not feel
     it.
     """
-    if not re.size or max(re.max(), -re.min(), im.max(), -im.min()) < _LARGE:
+    if np.vdot(re, re) + np.vdot(im, im) < _LARGE * _LARGE:
         return re, im
     size = np.maximum(np.abs(re), np.abs(im)).max(axis=(0, 1))
     _, exponent = np.frexp(size)

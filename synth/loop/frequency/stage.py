@@ -6,11 +6,21 @@ import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.frequency.crossings import FALL, GAIN, PHASE, Crossings, crossings, fall_level, of_kind
+from synth.loop.frequency.crossings import (
+    FALL,
+    GAIN,
+    PHASE,
+    Crossings,
+    crossings,
+    fall_level,
+    of_kind,
+    polynomials,
+)
 from synth.loop.frequency.delayed import delayed_quantities
+from synth.loop.frequency.isolation import isolate
 from synth.loop.frequency.margins import fall_quantities, gain_margins, gain_quantities
-from synth.loop.frequency.peaks import CURVES, suprema
-from synth.loop.frequency.response import response_of
+from synth.loop.frequency.peaks import CURVES, Suprema
+from synth.loop.frequency.response import Response, response_of
 
 FALLS = frozenset({"bandwidth", "highest_fall"})
 GAINS = frozenset({"crossover", "phase_margin", "delay_margin"})
@@ -18,14 +28,15 @@ PHASES = frozenset({"gain_margin", "gain_margin_up", "gain_margin_down"})
 KEYS = FALLS | GAINS | PHASES | frozenset(CURVES)
 
 
-@np.errstate(over="ignore")
+@np.errstate(all="ignore")  # what leaves the number range is NaN, and what rests on it is absent
 def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -> dict[str, FloatArray]:
     """Frequency quantities of stable loops.
 
     Parameters
     ----------
     loops : M stable loops; dead time in all or in none.
-    poles : (M, n) scaled closed-loop poles, used as a hint where to look first (NaN is passed over).
+    poles : (M, n) scaled closed-loop poles, used as a hint where to look first without dead time (NaN is
+        passed over).
     wanted : names of quantities; those of other stages are passed over. "highest_fall" is the HIGHEST ω at
         which |T| falls through |T(0)|/√2: NaN where it never does or T(0) = 0, inf where falls recur for ever
         (dead time with L(∞) ≠ 0).
@@ -33,8 +44,8 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
     Returns
     -------
     (M,) scaled values by name: frequencies in 1/time_scale, margins in deg and dB, delay_margin in
-    time_scale, noise_gain in 1/plant_gain. NaN is absent, inf is meant. Loops whose |N|², |D|² or θ^-n leaves
-    the number range have NaN throughout.
+    time_scale, noise_gain in 1/plant_gain. NaN is absent, inf is meant. Loops whose |N|² or |D|² leaves the
+    number range have NaN throughout.
     """
     wanted = wanted & KEYS
     if not wanted:
@@ -42,8 +53,8 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
     response = response_of(loops)
     readable = np.isfinite(response.squares).all(axis=(0, 1))
     delayed = bool((loops.dead_time > 0.0).any())
-    if delayed:  # coefficients are also read in powers of the angle ωθ
-        readable &= np.isfinite(loops.dead_time ** -(loops.order + 2.0))
+    if delayed:  # a coefficient whose square vanishes would be taken for none
+        readable &= ~((response.ends != 0.0) & (np.abs(response.ends) < 1e-150)).any(axis=(0, 1))
     if not readable.all():
         some = np.flatnonzero(readable)
         found_there = frequency_stage(loops.rows(some), poles[some], wanted) if some.size else {}
@@ -56,14 +67,11 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
         others = tuple(k for k in kinds if k != GAIN)
         recurring = np.zeros(len(loops), dtype=bool)
         if others or curves:
-            found, out, recurring = delayed_quantities(response, poles, others, curves)
+            found, out, recurring = delayed_quantities(response, others, curves)
         if GAIN in kinds:
-            found.append(crossings(response, (GAIN,)))
+            found.append(crossings(response, (GAIN,), isolate(polynomials(response, (GAIN,)))))
     else:
-        if kinds:
-            found.append(crossings(response, kinds))
-        if curves:
-            out = suprema(response, poles, curves)
+        found, out = _rational_quantities(response, poles, kinds, curves)
     if GAIN in kinds:
         out |= gain_quantities(response, of_kind(found, GAIN))
     if FALL in kinds:
@@ -73,6 +81,22 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
     if PHASE in kinds:
         out |= gain_margins(response, of_kind(found, PHASE))
     return {k: v for k, v in out.items() if k in wanted}
+
+
+def _rational_quantities(
+    response: Response, poles: ComplexArray, kinds: tuple[int, ...], curves: tuple[str, ...]
+) -> tuple[list[Crossings], dict[str, FloatArray]]:
+    """Crossings and suprema of loops without dead time: all polynomials are searched for roots at once."""
+    sought = polynomials(response, kinds)
+    if not curves:
+        return [crossings(response, kinds, isolate(sought))], {}
+    count = sought.shape[1]
+    suprema = Suprema(response, poles, curves)
+    levels, hint = suprema.levels()
+    brackets = isolate(np.concatenate([sought, levels], axis=1), np.concatenate([np.zeros(count), hint]))
+    first = brackets.row < count
+    suprema.raise_to(brackets.rows(~first, count))
+    return [crossings(response, kinds, brackets.rows(first, 0))], suprema.settled()
 
 
 def _spread(m: int, index: IntArray, values: FloatArray | None) -> FloatArray:

@@ -57,7 +57,7 @@ def doubts(loops: Loops, poles: ComplexArray, values: dict[Measure, FloatArray])
 
     values : (M,) of those measures, in scaled time; others are passed over. Loops without dead time.
     """
-    asked = {m: v for m, v in values.items() if m.quantity in OF_POLES}
+    asked = {m: v for m, v in values.items() if m.quantity in OF_POLES and np.isfinite(v).any()}
     if not asked or poles.shape[1] == 0:
         return {}
     off, size = uncertainty(loops, poles), np.abs(poles)
