@@ -102,8 +102,7 @@ class ClusterModes:
         k = np.arange(TERMS)
         # t^k e^(-sigma t) rises until k / sigma
         when = np.maximum(t[:, None, None], k / fall[:, :, None])
-        with np.errstate(divide="ignore"):
-            power = np.where(when > 0.0, k * np.log(np.maximum(when, 1e-300)), 0.0)
+        power = k * np.log(np.maximum(when, 1e-300))
         factor = np.exp(power - _LOG_FACTORIAL - fall[:, :, None] * when)
         out: FloatArray = np.einsum("psck,pck->sp", size[loop], factor)
         return out
@@ -193,30 +192,37 @@ def _basis(pole: ComplexArray, t: FloatArray) -> ComplexArray:
 def cluster_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -> ClusterModes:
     """The step responses of the named signals, each loop with the grouping of its poles that loses least.
 
-    poles : (M, n), n >= 1, of stable loops. They are found anew: what matters here is that all of them
-    together are the exact poles of a nearby loop, as eigenvalues are. Polishing each by itself moves
-    repeated poles within the circle of their own uncertainty, eps^(1/k), and what they then belong to is
-    that far off.
+    poles : (M, n), n >= 1, of stable loops, padded with NaN where the orders differ. They are found anew:
+    what matters here is that all of them together are the exact poles of a nearby loop, as eigenvalues are.
+    Polishing each by itself moves repeated poles within the circle of their own uncertainty, eps^(1/k), and
+    what they then belong to is that far off.
     """
+    order = np.count_nonzero(~np.isnan(poles), axis=1)
+    kinds = [(order == n).nonzero()[0] for n in np.unique(order)]
+    parts = [_of_one_order(loops.rows(rows).cut(), signals) for rows in kinds]
+    slots = max(part.pole.shape[1] for part in parts)
+    pole = np.full((len(loops), slots), -1.0, dtype=complex)
+    alpha = np.zeros((len(loops), len(signals), slots, TERMS), dtype=complex)
+    for rows, part in zip(kinds, parts, strict=True):
+        pole[rows, : part.pole.shape[1]], alpha[rows, :, : part.pole.shape[1]] = part.pole, part.alpha
+    return ClusterModes(pole, alpha)
+
+
+def _of_one_order(loops: Loops, signals: tuple[str, ...]) -> ClusterModes:
+    """The modes of loops of one order n."""
     poles = _eigenvalues(loops.closed)
+    m, n = poles.shape
     size = np.abs(poles)
     gap = np.abs(poles[:, :, None] - poles[:, None, :])
-    smaller, larger = (
-        np.minimum(size[:, :, None], size[:, None, :]),
-        np.maximum(size[:, :, None], size[:, None, :]),
-    )
-    near = np.repeat(np.eye(poles.shape[1], dtype=bool)[None], len(loops), axis=0)
-    least = np.full(len(loops), np.inf)
-    for reach in REACHES:
-        grouped = gap <= reach * smaller
-        for _ in range(int(np.ceil(np.log2(max(poles.shape[1], 2))))):  # friends of friends
-            grouped = np.matmul(grouped, grouped)
-        apart = np.where(grouped, 1.0, np.minimum(gap / larger, 1.0)).prod(axis=2).min(axis=1)
-        ratio = _geometry(poles, grouped)[1]
-        loss = np.finfo(float).eps / apart + np.minimum(ratio, 1.0) ** TERMS
-        better = loss < least
-        near[better], least[better] = grouped[better], loss[better]
-    return _clustered(loops, poles, signals, near)
+    smaller = np.minimum(size[:, :, None], size[:, None, :])
+    larger = np.maximum(size[:, :, None], size[:, None, :])
+    grouped = gap <= np.array(REACHES)[:, None, None, None] * smaller
+    for _ in range(int(np.ceil(np.log2(max(n, 2))))):  # friends of friends
+        grouped = np.matmul(grouped, grouped)
+    apart = np.where(grouped, 1.0, np.minimum(gap / larger, 1.0)).prod(axis=3).min(axis=2)
+    ratio = _geometry(poles, grouped)[1]
+    loss = np.finfo(float).eps / apart + np.minimum(ratio, 1.0) ** TERMS
+    return _clustered(loops, poles, signals, grouped[loss.argmin(axis=0), np.arange(m)])
 
 
 def _eigenvalues(closed: FloatArray) -> ComplexArray:
@@ -230,18 +236,18 @@ def _eigenvalues(closed: FloatArray) -> ComplexArray:
 
 
 def _geometry(poles: ComplexArray, near: BoolArray) -> tuple[ComplexArray, FloatArray]:
-    """Centre of each pole's cluster, (M, n), and how wide the clusters are for their distance from all else,
-    (M,).
+    """Centre of each pole's cluster, (..., M, n), and how wide the clusters are for their distance from all
+    else, (..., M), for groupings near (..., M, n, n).
     """
     mirrored = np.abs(poles[:, :, None] - poles[:, None, :].conj()) == 0.0
-    folded = (near & mirrored).any(axis=2)  # a cluster with its own mirror image has a real centre
-    centre = np.matmul(near, poles[:, :, None])[:, :, 0] / near.sum(axis=2)
+    folded = (near & mirrored).any(axis=-1)  # a cluster with its own mirror image has a real centre
+    centre = np.matmul(near, poles[:, :, None])[..., 0] / near.sum(axis=-1)
     centre = np.where(folded, centre.real, centre)
-    away = np.abs(centre[:, :, None] - poles[:, None, :])
-    width = np.where(near, away, 0.0).max(axis=2)
+    away = np.abs(centre[..., None] - poles[:, None, :])
+    width = np.where(near, away, 0.0).max(axis=-1)
     # powers of delta meet those of 1/(distance of other poles) and, until the cluster decays, of 1/sigma
-    clear = np.minimum(np.where(near, np.inf, away).min(axis=2), np.abs(centre.real))
-    return centre, (width / np.maximum(clear, 1e-300)).max(axis=1)
+    clear = np.minimum(np.where(near, np.inf, away).min(axis=-1), np.abs(centre.real))
+    return centre, (width / np.maximum(clear, 1e-300)).max(axis=-1)
 
 
 def _clustered(loops: Loops, poles: ComplexArray, signals: tuple[str, ...], near: BoolArray) -> ClusterModes:
@@ -256,53 +262,56 @@ def _clustered(loops: Loops, poles: ComplexArray, signals: tuple[str, ...], near
     centre = np.where(used, np.take_along_axis(centre, order, axis=1), -1.0)
     inside = np.take_along_axis(near, order[:, :, None], axis=1)  # (M, slot, n)
     offset = poles[:, None, :] - centre[:, :, None]
-    sums = _symmetric_sums(np.where(inside, offset, 0.0), inside.sum(axis=2))
+    # H_i of the members' delta, and H_(i - size + 1), i = 0 .. 2 TERMS - 1
+    delta = np.where(inside, offset, 0.0)
+    sums = _chain(np.eye(1, 2 * TERMS)[0] + 0j, delta, np.ones((m, slots, n)))
+    shift = np.arange(2 * TERMS) - (inside.sum(axis=2)[:, :, None] - 1)
+    sums = np.where(shift >= 0, np.take_along_axis(sums, np.maximum(shift, 0), axis=2), 0.0)
 
     weight = np.where(used, np.where(centre.imag > 0.0, 2.0, 1.0), 0.0)
-    alpha = np.zeros((m, len(signals), slots, TERMS), dtype=complex)
     with np.errstate(all="ignore"):
-        for s, name in enumerate(signals):
-            gamma = _taylor(numerator_of(loops, name), centre) / loops.closed[:, :1, None]
-            gamma = _divided(gamma, centre)
-            for j in range(n):
-                away = np.where(inside[:, :, j], 1.0, -offset[:, :, j])
-                gamma = np.where(inside[:, :, j, None], gamma, _divided(gamma, away))
-            for k in range(TERMS):
-                alpha[:, s, :, k] = (gamma * sums[:, :, k : k + TERMS]).sum(axis=2)
-    alpha *= weight[:, None, :, None]
+        tops = np.stack([numerator_of(loops, name) for name in signals], axis=1)
+        gamma = _taylor(tops, centre) / loops.closed[:, :1, None, None]
+        # over s and over s - p of the poles outside
+        here = np.zeros((m, slots, 1), dtype=bool)
+        skip = np.concatenate([here, inside], axis=2)
+        root = np.where(skip, 1.0, np.concatenate([centre[:, :, None], -offset], axis=2))
+        gamma = _chain(gamma, np.where(skip, 0.0, -1.0)[:, None], root[:, None])
+        hankel = np.lib.stride_tricks.sliding_window_view(sums, TERMS, axis=2)[:, None, :, :TERMS]
+        alpha = np.matmul(hankel, gamma[..., None])[..., 0] * weight[:, None, :, None]
     alpha[~np.broadcast_to(used[:, None, :, None], alpha.shape)] = 0.0
     return ClusterModes(centre, alpha)
 
 
-def _symmetric_sums(delta: ComplexArray, size: IntArray) -> ComplexArray:
-    """H_(i - size + 1) of the members' delta, i = 0 .. 2 TERMS - 1; delta (M, C, n) with 0 for others."""
-    count = 2 * TERMS
-    sums = np.zeros((*delta.shape[:2], count), dtype=complex)
-    sums[:, :, 0] = 1.0
-    for j in range(delta.shape[2]):
-        for i in range(1, count):
-            sums[:, :, i] += delta[:, :, j] * sums[:, :, i - 1]
-    shift = np.arange(count) - (size[:, :, None] - 1)
-    out: ComplexArray = np.where(shift >= 0, np.take_along_axis(sums, np.maximum(shift, 0), axis=2), 0.0)
-    return out
+def _chain(
+    series: ComplexArray, back: ComplexArray | FloatArray, root: ComplexArray | FloatArray
+) -> ComplexArray:
+    """A series through n stages, each of which makes out_k = (in_k + back · out_(k-1)) / root.
+
+    series : (..., K), broadcast against (...) of back and root, (..., n). Returns (..., K). All stages run at
+    once, each one step behind the one before. With back = delta_j they multiply by 1 / (1 - delta_j x), with
+    -1 they divide by (root + x).
+    """
+    count, n = series.shape[-1], root.shape[-1]
+    shape = np.broadcast_shapes(series.shape[:-1], root.shape[:-1])
+    out = np.empty((count, *shape), dtype=complex)
+    state = np.zeros((*shape, n + 1), dtype=complex)
+    for step in range(count + n - 1):
+        state[..., 0] = series[..., step] if step < count else 0.0
+        state[..., 1:] = (state[..., :-1] + back * state[..., 1:]) / root
+        if step >= n - 1:
+            out[step - n + 1] = state[..., n]
+    return np.moveaxis(out, 0, -1)
 
 
-def _taylor(polynomial: FloatArray, centre: ComplexArray) -> ComplexArray:
-    """Coefficients of p(c + delta) in ascending powers of delta, (M, C, TERMS); p (M, n + 1) descending."""
-    m, width = polynomial.shape
-    work = np.repeat(polynomial[:, None, :].astype(complex), centre.shape[1], axis=1)
-    out = np.zeros((m, centre.shape[1], max(TERMS, width)), dtype=complex)
+def _taylor(polynomials: FloatArray, centre: ComplexArray) -> ComplexArray:
+    """Coefficients of p(c + delta), ascending powers of delta, (M, S, C, TERMS); p (M, S, n + 1) descending.
+
+    Synthetic division by s - c again and again: all the divisions run at once, each a step behind.
+    """
+    m, s, width = polynomials.shape
+    state = np.zeros((m, s, centre.shape[1], 1 + max(TERMS, width)), dtype=complex)
     for k in range(width):
-        for i in range(1, width - k):
-            work[:, :, i] += work[:, :, i - 1] * centre
-        out[:, :, k] = work[:, :, width - 1 - k]
-    return out[:, :, :TERMS]
-
-
-def _divided(series: ComplexArray, root: ComplexArray) -> ComplexArray:
-    """The series over (root + delta)."""
-    out = np.empty_like(series)
-    out[:, :, 0] = series[:, :, 0] / root
-    for k in range(1, series.shape[2]):
-        out[:, :, k] = (series[:, :, k] - out[:, :, k - 1]) / root
-    return out
+        state[..., 0] = polynomials[:, :, None, k]
+        state[..., 1 : k + 2] = state[..., : k + 1] + centre[:, None, :, None] * state[..., 1 : k + 2]
+    return state[..., 1 : TERMS + 1]

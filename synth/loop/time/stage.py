@@ -63,8 +63,6 @@ def _plain_stage(
         modes = step_modes(loops, poles, signals)
         if np.isfinite(modes.residue).all():
             return _Reading(loops, modes, signals, asked).read()
-    if not loops.denominator[:, 0].all():
-        return _order_by_order(loops, poles, asked, close)
     values = {m: np.full(len(loops), np.nan) for m in asked}
     approximate: dict[Measure, BoolArray] = {}
     together, apart = np.flatnonzero(close), np.flatnonzero(~close)
@@ -96,23 +94,6 @@ def _in_range(clusters: ClusterModes) -> BoolArray:
     end = 30.0 / -clusters.pole.real.max(axis=1)
     values = clusters.curves(end[:, None] * np.array([0.0, 0.1, 1.0]))
     return np.asarray(np.isfinite(values).all(axis=(1, 2)))
-
-
-def _order_by_order(
-    loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...], crowded: BoolArray
-) -> TimeStage:
-    """A stack of several orders: its crowded loops (M,) for themselves, those of one order at a time."""
-    out = TimeStage({m: np.full(len(loops), np.nan) for m in asked}, {})
-    order = np.where(crowded, np.count_nonzero(~np.isnan(poles), axis=1), -1)
-    for n in np.unique(order):
-        rows = np.flatnonzero(order == n)
-        some = loops.rows(rows).cut()
-        part = _plain_stage(some, poles[rows, : some.order], asked, crowded[rows])
-        for m in asked:
-            out.values[m][rows] = part.values[m]
-        for m, doubt in part.approximate.items():
-            out.approximate.setdefault(m, np.zeros(len(loops), dtype=bool))[rows] = doubt
-    return out
 
 
 class _Reading:
