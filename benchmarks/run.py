@@ -1,7 +1,9 @@
 """Print every benchmark table, with the machine and the versions on top.
 
-    python benchmarks/run.py                  all tables
+    python benchmarks/run.py                  all tables (about eight minutes)
     python benchmarks/run.py core             those of bench_core.py alone
+    python benchmarks/run.py --full           the long questions too (an hour)
+    python benchmarks/run.py --sheets DIR     a long independent search against ours on the sheets of a folder
     python benchmarks/run.py --json PATH      and write the figures to a file
 
 One core: numerical libraries are held to one thread. Only ratios within one run mean anything.
@@ -16,6 +18,7 @@ import os
 import platform
 import sys
 import time
+from functools import partial
 from pathlib import Path
 
 for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
@@ -52,6 +55,13 @@ def main() -> int:
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("names", nargs="*", help="which files, bench_<name>.py; all when none is named")
     parser.add_argument("--json", type=Path, metavar="PATH", help="write machine and tables to this file")
+    parser.add_argument("--full", action="store_true", help="answer the long questions too")
+    parser.add_argument(
+        "--sheets",
+        type=Path,
+        metavar="DIR",
+        help="a long independent search against ours on these alone",
+    )
     options = parser.parse_args()
     there = sorted(path.stem.removeprefix("bench_") for path in HERE.glob("bench_*.py"))
     unknown = sorted(set(options.names) - set(there))
@@ -60,8 +70,12 @@ def main() -> int:
     facts = machine()
     print(", ".join(f"{key} {value}" for key, value in facts.items()), end="\n\n")
     record: dict[str, object] = {"machine": facts, "tables": []}
-    for name in options.names or there:
-        for question in importlib.import_module(f"bench_{name}").QUESTIONS:
+    for name in ["global"] if options.sheets else options.names or there:
+        module = importlib.import_module(f"bench_{name}")
+        questions = [*module.QUESTIONS, *(getattr(module, "LONG", ()) if options.full else ())]
+        if options.sheets:
+            questions = [partial(module.on_sheets, options.sheets)]
+        for question in questions:
             table = question()
             print(table.text(), end="\n\n", flush=True)
             record["tables"].append(  # type: ignore[attr-defined]

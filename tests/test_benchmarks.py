@@ -8,8 +8,15 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from synth.loop.closed_loop import Rational
 from synth.loop.evaluate import evaluate
 from synth.loop.quantities import QUANTITIES, Measure
+from synth.requirements import numbered
+from synth.search import Settings, Task, propose
+from synth.search.archive import Rows
+from synth.search.objective import Objective
+from synth.search.scales import response
+from synth.structures import by_name
 
 FOLDER = Path(__file__).parents[1] / "benchmarks"
 
@@ -18,12 +25,21 @@ FOLDER = Path(__file__).parents[1] / "benchmarks"
 def parts():
     sys.path.insert(0, str(FOLDER))
     try:
+        import bench_global
         import exact
+        import independent
         import plain_scipy
         import populations
         import tables
 
-        yield {"exact": exact, "plain": plain_scipy, "populations": populations, "tables": tables}
+        yield {
+            "exact": exact,
+            "plain": plain_scipy,
+            "populations": populations,
+            "tables": tables,
+            "independent": independent,
+            "global": bench_global,
+        }
     finally:
         sys.path.remove(str(FOLDER))
 
@@ -76,22 +92,26 @@ def test_a_table_in_words(parts):
     )
 
 
+FAKE = """
+import runpy, sys, types
+folder, path, *more = sys.argv[1:]
+sys.path.insert(0, folder)
+import tables
+fake = types.ModuleType("bench_core")
+fake.QUESTIONS = [lambda: tables.Table("T", ["a"], [[1.0]])]
+fake.LONG = [lambda: tables.Table("L", ["b"], [[2.0]])]
+sys.modules["bench_core"] = fake
+sys.argv = ["run.py", "core", "--json", path, *more]
+runpy.run_path(folder + "/run.py", run_name="__main__")
+"""
+
+
 def test_the_runner_refuses_what_it_does_not_have_and_writes_json(tmp_path):
     run = [sys.executable, str(FOLDER / "run.py")]
     bad = subprocess.run([*run, "nothing"], capture_output=True, text=True, check=False)
     assert bad.returncode == 2
     assert "core" in bad.stderr
-    code = """
-import runpy, sys, types
-folder, path = sys.argv[1:]
-sys.path.insert(0, folder)
-import tables
-fake = types.ModuleType("bench_core")
-fake.QUESTIONS = [lambda: tables.Table("T", ["a"], [[1.0]])]
-sys.modules["bench_core"] = fake
-sys.argv = ["run.py", "core", "--json", path]
-runpy.run_path(folder + "/run.py", run_name="__main__")
-"""
+    code = FAKE
     path = tmp_path / "figures.json"
     done = subprocess.run(
         [sys.executable, "-c", code, str(FOLDER), str(path)], capture_output=True, text=True, check=True
@@ -100,3 +120,65 @@ runpy.run_path(folder + "/run.py", run_name="__main__")
     record = json.loads(path.read_text(encoding="utf-8"))
     assert record["tables"] == [{"file": "bench_core.py", "title": "T", "columns": ["a"], "rows": [[1.0]]}]
     assert record["machine"]["cores"]
+
+
+def test_the_long_questions_are_asked_on_demand_alone(tmp_path):
+    path = tmp_path / "figures.json"
+    run = [sys.executable, "-c", FAKE, str(FOLDER), str(path)]
+    for more, titles in (([], ["T"]), (["--full"], ["T", "L"])):
+        subprocess.run([*run, *more], capture_output=True, check=True)
+        record = json.loads(path.read_text(encoding="utf-8"))
+        assert [t["title"] for t in record["tables"]] == titles
+
+
+LAGS = Task(
+    plants=Rational.of([2.0], [0.1, 1.1, 1.0]),
+    case_names=("nominal",),
+    bounds=numbered(
+        [
+            (Measure("sensitivity_peak"), "max", 1.5, None),
+            (Measure("bandwidth"), "min", 3.0, None),
+            (Measure("overshoot"), "max", 5.0, None),
+            (Measure("static_error"), "max", 40.0, None),
+        ]
+    ),
+    structures=(by_name("PI"), by_name("lead")),
+)
+
+
+def test_the_independent_search_needs_nothing_of_ours_to_find_the_same(parts):
+    outcome = propose(LAGS, Settings())
+    objective = Objective(LAGS)
+    for n, scan in enumerate(outcome.scans):
+        best = parts["independent"].search(objective, n, 6000)
+        assert 6000 <= best.evaluations < 7000
+        assert best.slack == pytest.approx(scan.best_slack, abs=2e-3)
+        wide = np.zeros((1, objective.width))
+        wide[0, : len(best.x)] = best.x
+        row = Rows(np.array([n]), wide, np.array([best.sign]), np.array([-1]))
+        assert objective.score(row).worst()[0] == pytest.approx(best.slack, abs=1e-12)
+
+
+def test_both_of_its_spaces_stay_in_the_box_and_one_goes_by_the_crossover(parts):
+    objective = Objective(LAGS)
+    for n in (0, 1):
+        low, high = objective.boxes[n]
+        for make in (parts["independent"]._own, parts["independent"]._by_crossover):
+            space = make(objective, n)
+            points = np.random.default_rng(1).uniform(space.low, space.high, (50, len(space.low)))
+            rows = space.rows(points)
+            x = rows.x[:, : len(low)]
+            assert ((x >= low) & (x <= high)).all()
+            assert set(rows.sign) == {-1.0, 1.0}
+        w = np.exp(points[:, 0]) / objective.scales.time
+        inside = (np.abs(rows.x[:, 0]) < 30.0) & (np.abs(points[:, 0]) < 5.0)
+        size = np.abs(response(objective.realise(rows), w)) * np.abs(response(LAGS.plants, w))
+        np.testing.assert_allclose(np.diag(size)[inside], 1.0, rtol=1e-9)
+
+
+def test_a_comparison_counts_by_what_was_said_of_the_structure(parts):
+    pair = parts["global"].Pair
+    table = parts["global"].compared(
+        "T", [pair("a PI", 0.1, 0.104, "met"), pair("b PI", 0.1, 0.12, "met"), pair("c PD", 0.2, 0.1, "far")]
+    )
+    assert table.rows == [["far", 1, 1, 0.0, "", 1], ["met", 2, 1, pytest.approx(0.02), "b PI", 0]]
