@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import argparse
 import re
+import textwrap
 from collections.abc import Sequence
 from pathlib import Path
 from typing import NoReturn
@@ -106,10 +107,15 @@ def _joined(words: Sequence[str]) -> list[str]:
     return out
 
 
-def help_text() -> str:
-    """What `synth --help` prints."""
-    room = max(map(len, COMMANDS)) + 2
-    return HELP.format(commands="\n".join(f"  {name:<{room}}{words}" for name, words in COMMANDS.items()))
+def help_text(width: int = 10_000) -> str:
+    """What `synth --help` prints on a page of that many columns."""
+    room = max(map(len, COMMANDS)) + 4
+    rows = [f"  {name:<{room - 2}}{words}" for name, words in COMMANDS.items()]
+    lines = HELP.format(commands="\n".join(rows)).splitlines()
+    return "\n".join(
+        textwrap.fill(line, width, subsequent_indent=" " * room if line.startswith("  ") else "")
+        for line in lines
+    )
 
 
 def _parser(command: str) -> argparse.ArgumentParser:

@@ -9,6 +9,7 @@ from __future__ import annotations
 import argparse
 import os
 import re
+import shutil
 import signal
 import sys
 import tempfile
@@ -63,7 +64,8 @@ def main(words: Sequence[str] | None = None) -> int:
 
 def _run(typed: argparse.Namespace) -> int:
     if typed.command == "help":
-        print(arguments.help_text())  # noqa: T201
+        width = shutil.get_terminal_size().columns  # before anything heavy is imported
+        print(arguments.help_text(max(40, width)))  # noqa: T201
         return MET
     if typed.command == "version":
         import synth
@@ -188,7 +190,8 @@ def _adopt(typed: argparse.Namespace) -> int:
     if typed.json:
         sys.stdout.write(text_of(adoption))
         return MET
-    _draw(lambda width: adopted(adoption, str(path), width))
+    _draw(lambda width: adopted(adoption, width))
+    print(f"adoption: {path}")  # noqa: T201
     return MET
 
 
@@ -225,7 +228,7 @@ def _new(typed: argparse.Namespace) -> int:
     from synth.jobs.lists import new
 
     path = new(typed.path)
-    print(f"{path} written. Edit it, then: synth check {path}; synth propose {path}")  # noqa: T201
+    print(f"{path} written. Edit it, then:\n  synth check {path}\n  synth propose {path}")  # noqa: T201
     return MET
 
 
@@ -245,11 +248,11 @@ _VERBS: dict[str, Callable[[argparse.Namespace], int]] = {
 
 def _draw(lines: Callable[[int], Iterable[Text]], to: Any = None) -> None:
     """Print lines that were made for the width of the terminal."""
-    from synth.report.theme import console
+    from synth.report.theme import console, fitted
 
     out = console(to)
     for line in lines(out.width):
-        out.print(line, no_wrap=True, overflow="ignore", crop=False)
+        out.print(fitted(line, out.width), no_wrap=True, overflow="ignore", crop=False)
 
 
 def _print_faults(found: Sequence[Fault], typed: argparse.Namespace | None) -> None:

@@ -45,12 +45,14 @@ def _candidate(candidate: Candidate) -> list[Departure]:
         found.extend(_pairs(factors.get(key, []), f"compensator.factors.{key}"))
     found.extend(_pairs([m["pole"] for m in candidate.get("modes", [])], "modes"))
     curves: Any = candidate["curves"]
-    for name, parts in (("step", ("t", "y", "u")), ("loop", ("w", "gain_db", "phase_deg"))):
-        lengths = {len(curves.get(name, {}).get(part, [])) for part in parts} - {0}
+    for name, needed, optional in (("step", ("t", "y"), ("u",)), ("loop", ("w", "gain_db", "phase_deg"), ())):
+        columns = curves.get(name, {})
+        lengths = {len(columns.get(part, [])) for part in needed}
+        lengths |= {len(columns[part]) for part in optional if columns.get(part)}
         if len(lengths) > 1:
             found.append(Departure(f"curves.{name}", "has columns of different lengths"))
-        if any(v is None or isinstance(v, str) for v in curves.get(name, {}).get(parts[0], [])):
-            found.append(Departure(f"curves.{name}.{parts[0]}", "has holes"))
+        if any(v is None or isinstance(v, str) for v in columns.get(needed[0], [])):
+            found.append(Departure(f"curves.{name}.{needed[0]}", "has holes"))
     if min(curves.get("loop", {}).get("w", []), default=1.0) <= 0.0 and not found:
         found.append(Departure("curves.loop.w", "must be above 0"))
     locus = curves["root_locus"]

@@ -9,7 +9,7 @@ from rich.text import Text
 from synth.record import Candidate, Near, Record, Requirement, number, quantity_name
 from synth.report import pictures
 from synth.report.settings import forms, fraction, poles_table, tuned
-from synth.report.theme import Columns, hanging, heading, items
+from synth.report.theme import NARROW, Columns, hanging, heading, items
 from synth.report.view import View, order
 from synth.wording.figures import figure, percent, quantity
 
@@ -33,12 +33,12 @@ def _compensator(view: View, candidate: Candidate, width: int) -> list[Text]:
     given = view.record.get("job") == "score"
     name = "The compensator given" if given else f"Candidate {candidate['rank']} in full"
     aside = f"order {order(candidate)}" if given else f"{candidate['structure']}, order {order(candidate)}"
-    lines = [heading(name, aside)]
+    lines = [heading(name, aside, width)]
     if candidate["parameters"]:
         lines.append(items("  ", tuned(candidate), width))
     lines.extend(hanging("  ", remark, width, style="warn") for remark in candidate.get("remarks", []))
     lines.append(Text())
-    lines.extend(Text("  " + line) for line in fraction(candidate["compensator"]))
+    lines.extend(fraction(candidate["compensator"], width))
     lines.append(Text())
     lines.extend(forms(candidate, view.record["spec"], width))
     return lines
@@ -49,8 +49,8 @@ def _requirements(view: View, candidate: Candidate, width: int) -> list[Text]:
 
     Other cases that come near below.
     """
-    several = view.several_cases
-    table = Columns(("<", ">", "<", ">", "<") if several else ("<", ">", "<", ">"))
+    several = view.several_cases and width >= NARROW
+    table = Columns(("<", ">", "<", ">", "<") if several else ("<", ">", "<", ">"), spare=((2,),))
     table.add("", "value", "limit", "slack", *(("case",) if several else ()), style="dim")
     for requirement in view.record["requirements"]:
         scale = view.scale(requirement, [candidate])
@@ -68,10 +68,7 @@ def _requirements(view: View, candidate: Candidate, width: int) -> list[Text]:
         for near in _near(candidate, requirement) if several else ():
             near_value, near_slack = number(near["value"]), number(near["slack"])
             table.add("", scale.full(near_value), "", percent(near_slack) + "  ", near["case"], style="dim")
-    lines = table.lines()
-    for line in lines:
-        if line.cell_len > width:
-            line.truncate(width, overflow="ellipsis")
+    lines = table.lines(width)
     lines.extend(_also(view, candidate, width))
     out = [
         heading("Requirements", "where each is nearest its limit; * holds the candidate back", width),
@@ -149,7 +146,7 @@ def _not_recomputed(details: list[str]) -> str:
 def _poles(view: View, candidate: Candidate, width: int) -> list[Text]:
     if not candidate.get("modes"):
         return []
-    lines = [heading("Closed-loop poles", "nominal plant"), poles_table(candidate)]
+    lines = [heading("Closed-loop poles", "nominal plant", width), *poles_table(candidate, width)]
     if any(not mode["counted"] for mode in candidate["modes"]):
         below = [r.get("below") for r in view.record["requirements"] if r["quantity"] == "damping_ratio"]
         given = [size for size in below if size is not None]
@@ -168,6 +165,6 @@ def _poles(view: View, candidate: Candidate, width: int) -> list[Text]:
 def _rationale(candidate: Candidate, width: int) -> list[Text]:
     if not candidate["rationale"]:
         return []
-    lines = [heading("Why")]
+    lines = [heading("Why", "", width)]
     lines.extend(hanging("  - ", sentence["text"], width) for sentence in candidate["rationale"])
     return lines

@@ -11,8 +11,8 @@ from synth.report.theme import hanging, items
 RELEASE = "This states a choice and is no release to service: a model is not the machine."
 
 
-def adopted(adoption: Adoption, path: str, width: int) -> list[Text]:
-    """Which candidate, of which record, and where that is written."""
+def adopted(adoption: Adoption, width: int) -> list[Text]:
+    """Which candidate, of which record."""
     head = Text.assemble(
         ("ADOPTED", "head"),
         f"  candidate {adoption['rank']} of {adoption['record']['file']}: {adoption['structure']}",
@@ -21,12 +21,11 @@ def adopted(adoption: Adoption, path: str, width: int) -> list[Text]:
     if adoption["parameters"]:
         lines.append(items("  ", tuned_values(adoption["parameters"], adoption.get("units", {})), width))
     lines.append(Text())
-    lines.extend(Text("  " + line) for line in fraction(adoption["compensator"]))
+    lines.extend(fraction(adoption["compensator"], width))
     lines.append(Text())
     if adoption["verdict"] != "met":
         lines.append(hanging("  ", "It does not meet everything.", width, style="warn"))
     if adoption["note"]:
         lines.append(hanging("  note: ", adoption["note"], width))
     lines.append(hanging("  ", RELEASE, width, style="dim"))
-    lines.append(Text(f"adoption: {path}"))
     return lines

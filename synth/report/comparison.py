@@ -54,16 +54,18 @@ def comparison(named: Sequence[tuple[str, Record]], width: int) -> list[Text]:
     rows = _rows(columns)
     left = INDENT + max(len(label) for label, _ in rows)
     cell = GAP + max(t.cell_len for _, cells in rows for t in cells)
-    room = max(1, (width - left) // cell)
+    room = (width - left) // cell
+    if room < min(2, len(columns)):  # then the labels stand on lines of their own
+        room = max(1, (width - INDENT) // cell)
     for start in range(0, len(columns), room):
         aside = ("worst plant case of each" if any_cases(named) else "") if start == 0 else "continued"
         lines.append(heading("Side by side", aside, width))
         table = Columns(("<", *(">" for _ in columns[start : start + room])), indent=INDENT, gap=GAP)
         for label, cells in rows:
             table.add(label, *cells[start : start + room])
-        lines.extend(table.lines())
+        lines.extend(table.lines(width))
     lines.append(Text("  * holds it back   ! falls short of its own sheet", style="dim"))
-    lines.append(heading("Tuned values"))
+    lines.append(heading("Tuned values", "", width))
     indent = max(len(c.label) for c in columns) + 4
     for c in columns:
         first = Text.assemble(f"  {c.label}".ljust(indent), (c.candidate["structure"].ljust(13), "name"))
@@ -152,7 +154,7 @@ def _limits(named: Sequence[tuple[str, Record]], width: int) -> list[Text]:
     ]
     if all(sheet == sheets[0] for sheet in sheets):
         return []
-    lines = [heading("The sheets differ")]
+    lines = [heading("The sheets differ", "", width)]
     for i, sheet in enumerate(sheets):
         own = [text for key, text in sheet.items() if any(other.get(key) != text for other in sheets)]
         lines.append(hanging(f"  {chr(ord('A') + i % 26)}  ", "; ".join(own) or "nothing of its own", width))

@@ -69,7 +69,7 @@ def step(view: View, candidates: Sequence[Candidate], width: int) -> list[Text]:
         legend.append(f" {c['rank']} {c['structure']}   ")
     legend.rstrip()
     return [
-        heading("Reference step", "y for a unit step of r, nominal plant"),
+        heading("Reference step", "y for a unit step of r, nominal plant", width),
         legend,
         *chart.lines(scale.word, ""),
     ]
@@ -97,10 +97,10 @@ def effort(view: View, candidate: Candidate, width: int) -> list[Text]:
         chart.level(-limit["limit"], "control peak limit")
     chart.curve([v / scale.factor for v in t], u, "first")
     unit = view.quantity_unit("control_peak")
-    step = f"{figure(size)} {view.record['spec']['output']['unit']}".rstrip()
+    step = f"{figure(size)} {view.output_unit}".rstrip()
     head = "u" if unit == "u" else f"u, {unit},"
     return [
-        heading("Control", f"{head} for a reference step of {step}"),
+        heading("Control", f"{head} for a reference step of {step}", width),
         *chart.lines(scale.word, ""),
     ]
 
@@ -109,9 +109,9 @@ def loop_gain(candidate: Candidate, width: int) -> list[Text]:
     """abs(L) and its phase over frequency, crossovers marked; nominal plant."""
     curve: Any = candidate["curves"].get("loop", {})
     w, gain, phase = (_floats(curve.get(key, [])) for key in ("w", "gain_db", "phase_deg"))
-    if len(w) < 2:
-        return []
     finite = [g for g in gain if math.isfinite(g)]
+    if len(w) < 2 or not finite:
+        return []
     low, high = max(min(finite), -60.0), min(max(finite), 80.0)
     chart = Chart((w[0], w[-1]), (min(low, -10.0), max(high, 10.0)), _columns(width), LOOP_ROWS, log_x=True)
     chart.level(0.0, "")
@@ -127,7 +127,7 @@ def loop_gain(candidate: Candidate, width: int) -> list[Text]:
             under.mark(at, phase[i - 1] + part * (phase[i] - phase[i - 1]), "◆", "first")
     upper = chart.lines("", "  abs(L), dB", least_margin=5)[:-2]
     return [
-        heading("Loop gain", "L = C P on the nominal plant; ◆ where abs(L) is 1"),
+        heading("Loop gain", "L = C P on the nominal plant; ◆ where abs(L) is 1", width),
         *upper,
         *under.lines("rad/s", "  phase of L, deg", least_margin=5),
     ]

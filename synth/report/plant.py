@@ -34,14 +34,14 @@ def plant(check: Check, width: int) -> list[Text]:
     lines.extend(_cases(check, width))
     lines.extend(_requirements(record, width))
     lines.extend(reach.limits(record, width))
-    lines.append(heading("Cautions"))
+    lines.append(heading("Cautions", "", width))
     lines.extend(hanging("  - ", caution, width) for caution in check["cautions"])
     return lines
 
 
 def _plant(check: Check, width: int) -> list[Text]:
     part, spec = check["plant"], check["spec"]
-    lines = [heading("Plant", "nominal")]
+    lines = [heading("Plant", "nominal", width)]
     if part.get("form"):
         lines.append(hanging("  P(s)   ", part["form"], width))
     for word, key in (("poles", "poles"), ("zeros", "zeros")):
@@ -56,7 +56,7 @@ def _plant(check: Check, width: int) -> list[Text]:
     valid = spec.get("valid_to")
     if valid is not None:
         lines.append(Text(f"  valid to  {figure(valid)} rad/s ({figure(valid / (2.0 * math.pi))} Hz)"))
-    lines.extend(_parameters(check))
+    lines.extend(_parameters(check, width))
     return lines
 
 
@@ -84,7 +84,7 @@ def _last(polynomial: list[float]) -> tuple[float, int]:
     return polynomial[at], len(polynomial) - 1 - at
 
 
-def _parameters(check: Check) -> list[Text]:
+def _parameters(check: Check, width: int) -> list[Text]:
     ranges = check["plant"].get("ranges", [])
     if not ranges:
         return []
@@ -96,14 +96,14 @@ def _parameters(check: Check) -> list[Text]:
             table.add(r["name"], figure(r["nominal"]), figure(r["low"]), "…", figure(r["high"]))
         else:
             table.add(r["name"], figure(r["nominal"]))
-    return [Text(), *table.lines()]
+    return [Text(), *table.lines(width)]
 
 
 def _cases(check: Check, width: int) -> list[Text]:
     cases = check["plant"]["cases"]
     if len(cases) < 2:
         return []
-    lines = [heading("Cases", count(len(cases), "plant case"))]
+    lines = [heading("Cases", count(len(cases), "plant case"), width)]
     names = [c["name"] for c in cases[:MOST_CASES]]
     more = f" and {len(cases) - MOST_CASES} more" if len(cases) > MOST_CASES else ""
     lines.append(hanging("  ", "; ".join(names) + more, width))
@@ -115,7 +115,7 @@ def _requirements(record: Record, width: int) -> list[Text]:
     table = Columns(("<", "<", "<"))
     for r in record["requirements"]:
         table.add(view.name(r["id"]), view.limit(r), f"on {', '.join(r['cases'])}" if r["cases"] else "")
-    lines = [heading("Requirements"), *table.lines()]
+    lines = [heading("Requirements", "", width), *table.lines(width)]
     prefer = record["spec"].get("prefer")
     if prefer:
         word = "minimise" if prefer["sense"] == "min" else "maximise"

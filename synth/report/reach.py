@@ -18,9 +18,8 @@ def rejected(record: Record, width: int) -> list[Text]:
     if not record["rejected"]:
         return []
     met = record["verdict"] == "met"
-    lines = [
-        heading("Structures not used", "and how near each came") if met else heading("How near each came")
-    ]
+    words, aside = ("Structures not used", "and how near each came") if met else ("How near each came", "")
+    lines = [heading(words, aside, width)]
     room = max(len(r["structure"]) for r in record["rejected"]) + 4
     told: list[dict[str, float]] = []
     for r in record["rejected"]:
@@ -43,8 +42,8 @@ def prices(record: Record, width: int) -> list[Text]:
     view = View(record)
     if not found:
         return _no_price(record, width)
-    lines = [heading("What it would take", "one limit moved, all the others met; cheapest first")]
-    table = Columns(("<", ">", "<", "<", ">", "<"))
+    lines = [heading("What it would take", "one limit moved, all the others met; cheapest first", width)]
+    table = Columns(("<", ">", "<", "<", "<"))
     for p in found:
         requirement = view.requirements.get(p["requirement"])
         if requirement is None:
@@ -56,10 +55,9 @@ def prices(record: Record, width: int) -> list[Text]:
             f"{SIGN[requirement['bound']]} {quantity(p['limit'], unit)}",
             "→",
             quantity(needed, unit),
-            "",
-            f"and a {p['structure']} does it",
+            f"with a {p['structure']}",
         )
-    lines.extend(line if line.cell_len <= width else _cut(line, width) for line in table.lines())
+    lines.extend(table.lines(width))
     return lines
 
 
@@ -72,12 +70,7 @@ def _no_price(record: Record, width: int) -> list[Text]:
     words = (
         "No single limit was found that, moved alone, lets the others be met: the sheet is short in several."
     )
-    return [heading("What it would take"), hanging("  ", words, width)]
-
-
-def _cut(line: Text, width: int) -> Text:
-    line.truncate(width, overflow="ellipsis")
-    return line
+    return [heading("What it would take", "", width), hanging("  ", words, width)]
 
 
 def limits(record: Record, width: int) -> list[Text]:
@@ -86,7 +79,7 @@ def limits(record: Record, width: int) -> list[Text]:
     if not found:
         return []
     view = View(record)
-    lines = [heading("Limits of the plant", "hold for any compensator in this loop")]
+    lines = [heading("Limits of the plant", "hold for any compensator in this loop", width)]
     together: dict[tuple[str, str], list[LimitPart]] = {}  # one statement may rule out several requirements
     for limit in found:
         together.setdefault((limit["statement"], limit["source"]), []).append(limit)

@@ -33,16 +33,16 @@ def revision(record: Record, width: int) -> list[Text]:
     word, style, words = _ADVICE[part["advice"]]
     about = part.get("about")
     text = f"{about[:1].upper()}{about[1:]} {words}" if about else _NOTHING_EARLIER
-    lines = [heading("Advice")]
+    lines = [heading("Advice", "", width)]
     lines.append(hanging(Text.assemble("  ", (word, style), "  "), text, width))
     lines.extend(hanging("  - ", sentence["text"], width) for sentence in part.get("evidence", []))
-    lines.extend(_moved(part["moved"], record))
+    lines.extend(_moved(part["moved"], record, width))
     lines.extend(_changes(record, width))
     lines.extend(_earlier(record, width))
     return lines
 
 
-def _moved(moved: dict[str, list[float]] | None, record: Record) -> list[Text]:
+def _moved(moved: dict[str, list[float]] | None, record: Record, width: int) -> list[Text]:
     if not moved:
         return []
     part = record["revision"]
@@ -54,14 +54,14 @@ def _moved(moved: dict[str, list[float]] | None, record: Record) -> list[Text]:
     for key, (old, new) in moved.items():
         unit = units.get(key, "")
         table.add(parameter_name(key), quantity(old, unit), "→", quantity(new, unit), change(old, new))
-    return table.lines()
+    return table.lines(width)
 
 
 def _changes(record: Record, width: int) -> list[Text]:
     part = record["revision"]
     if part is None:
         return []
-    lines = [heading("What changed", "from the predecessor's sheet to this one")]
+    lines = [heading("What changed", "from the predecessor's sheet to this one", width)]
     if not part["changes"]:
         return [*lines, Text("  nothing in plant or requirements")]
     table = Columns(("<", ">", "<", ">", "<"))
@@ -80,7 +80,7 @@ def _changes(record: Record, width: int) -> list[Text]:
             long.append(hanging(f"  {where}: ", f"{old} → {new}", width))
             continue
         table.add(where, old, "→", new, _relative(one["old"], one["new"]))
-    return [*lines, *table.lines(), *long]
+    return [*lines, *table.lines(width), *long]
 
 
 def _value(value: Any) -> str:
@@ -113,8 +113,8 @@ def _earlier(record: Record, width: int) -> list[Text]:
     if part is None or not part["earlier"]:
         return []
     view = View(record)
-    lines = [heading("Earlier candidates", "as they are, on the revised plant")]
-    table = Columns((">", "<", ">", "<", ">", "<"), indent=1)
+    lines = [heading("Earlier candidates", "as they are, on the revised plant", width)]
+    table = Columns((">", "<", ">", "<", ">", "<"), indent=1, spare=((2, 3), (5,)))
     table.add("", "structure", "slack was", "", "is", "held back by", style="dim")
     adopted = part["adopted"]
     if adopted is not None and adopted not in part["earlier"]:  # it comes from an older record than these
@@ -122,10 +122,7 @@ def _earlier(record: Record, width: int) -> list[Text]:
     for earlier in part["earlier"]:
         mark = " (adopted)" if earlier == adopted else ""
         table.add(*_row(view, earlier, f"{earlier['structure']}{mark}", str(earlier["rank"] or "")))
-    for line in table.lines():
-        line.truncate(width, overflow="ellipsis")
-        lines.append(line)
-    return lines
+    return [*lines, *table.lines(width)]
 
 
 def _row(view: View, earlier: Earlier, name: str, rank: str) -> list[str | Text]:

@@ -31,23 +31,31 @@ def _with_unit(text: str, unit: str) -> str:
     return f"{text} {unit}" if unit else text
 
 
-def fraction(compensator: Compensator) -> list[str]:
-    """C(s) in three lines, with corners written (s/corner + 1), so the gain is that at low frequency."""
+def fraction(compensator: Compensator, width: int) -> list[Text]:
+    """C(s) in three lines, with corners written (s/corner + 1), so the gain is that at low frequency.
+
+    Where that is too wide, numerator and denominator follow one another.
+    """
     factors = compensator.get("factors")
     if factors is None:
-        return [
-            f"C(s) = {_polynomial(compensator['numerator'])}  over  {_polynomial(compensator['denominator'])}"
-        ]
+        top, bottom = (_polynomial(compensator[part]) for part in ("numerator", "denominator"))
+        return [hanging("  C(s) = ", f"{top}  over  {bottom}", width)]
     gain = factors["gain"]
     top, up = _corners(factors["zeros"])
     bottom, down = _corners(factors["poles"])
     lead = f"C(s) = {figure(gain * up / down, 5)}"
     if not bottom:
-        return [f"{lead} {top}".rstrip()]
+        return [hanging("  ", f"{lead} {top}".rstrip(), width)]
     top = top or "1"
-    width = max(len(top), len(bottom))
-    pad = " " * (len(lead) + 1)
-    return [pad + top.center(width).rstrip(), f"{lead} {'─' * width}", pad + bottom.center(width).rstrip()]
+    bar = max(len(top), len(bottom))
+    pad = " " * (len(lead) + 3)
+    if len(pad) + bar > width:
+        return [hanging("  ", f"{lead} {top}", width), hanging("     over ", bottom, width)]
+    return [
+        Text(pad + top.center(bar).rstrip()),
+        Text(f"  {lead} {'─' * bar}"),
+        Text(pad + bottom.center(bar).rstrip()),
+    ]
 
 
 def _corners(roots: list[Pole]) -> tuple[str, float]:
@@ -127,9 +135,9 @@ def one_line(values: dict[str, float], candidate: Candidate) -> list[str]:
     return parts
 
 
-def poles_table(candidate: Candidate) -> Text:
+def poles_table(candidate: Candidate, width: int) -> list[Text]:
     """Closed-loop poles of the nominal case, largest share in the step first."""
-    table = Columns(("<", ">", "<", ">", ">", ">", "<"))
+    table = Columns(("<", ">", "<", ">", ">", ">", "<"), spare=((3,), (4,), (1,)))
     table.add("", "share of", "pole,", "period,", "decay to", "damping", "", style="dim")
     table.add("", "the step", "rad/s", "s", "1/e, s", "ratio", "", style="dim")
     for mode in candidate.get("modes", []):
@@ -146,4 +154,4 @@ def poles_table(candidate: Candidate) -> Text:
             figure(-re / size if im else 1.0, 3) if size else "",
             "" if mode["counted"] else "not counted",
         )
-    return table.text()
+    return table.lines(width)

@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import math
 
+from rich.cells import cell_len
 from rich.text import Text
 
 from synth.record import Candidate, Record, Requirement, number, quantity_name
 from synth.report.settings import tuned
-from synth.report.theme import Columns, hanging, heading, items
+from synth.report.theme import NARROW, Columns, hanging, heading, items
 from synth.report.view import SIGN, View, order
 from synth.wording.figures import Unit, count, figure, percent, unit_for
 
@@ -21,9 +22,9 @@ def title(record: Record, width: int) -> Text:
     spec = record["spec"]
     left = Text(spec["title"] or spec["file"], style="title")
     right = f"revision {spec['revision']} · {spec['file']}" if spec["revision"] else spec["file"]
-    if left.cell_len + len(right) + 2 <= width:
-        return Text.assemble(left, " " * (width - left.cell_len - len(right)), (right, "dim"))
-    return Text.assemble(left, "\n", (right, "dim"))
+    if left.cell_len + cell_len(right) + 2 <= width:
+        return Text.assemble(left, " " * (width - left.cell_len - cell_len(right)), (right, "dim"))
+    return Text.assemble(hanging("", left, width), "\n", hanging("", right, width, style="dim"))
 
 
 def verdict(record: Record, width: int) -> list[Text]:
@@ -36,7 +37,7 @@ def verdict(record: Record, width: int) -> list[Text]:
     if record["search"]["interrupted"]:
         lines.append(Text("Interrupted: the best found so far, not the end of the search.", style="warn"))
     if record["cautions"]:
-        lines.append(heading("Cautions", "with candidate 1" if len(record["candidates"]) > 1 else ""))
+        lines.append(heading("Cautions", "with candidate 1" if len(record["candidates"]) > 1 else "", width))
         lines.extend(hanging("  - ", caution, width) for caution in record["cautions"])
     return lines
 
@@ -56,21 +57,21 @@ def ranked(record: Record, width: int) -> list[Text]:
         reserve = f", with {100.0 * prefer['reserve']:g} % of slack kept" if prefer["reserve"] else ""
         words = f"those that meet everything by {quantity_name(prefer['quantity'])}, {least} first{reserve}"
         lines.append(hanging("  ", words, width, style="dim"))
-    table = Columns((">", "<", ">", ">", "<"), indent=1)
-    table.add("", "structure", "order", "slack", "held back by", style="dim")
+    beside = width >= NARROW  # else what holds a candidate back stands below it
+    table = Columns((">", "<", ">", ">", "<") if beside else (">", "<", ">", ">"), indent=1)
+    table.add("", "structure", "order", "slack", *(("held back by",) if beside else ()), style="dim")
     for c in candidates:
         held = _held_by(view, c, several)
         slack = Text(percent(float(c["worst_slack"] or 0.0)) if c["worst_slack"] is not None else "—")
         slack.stylize("short" if not c["meets_all"] else "")
         name = Text(c["structure"], style="name")
-        table.add(str(c["rank"]), name, str(order(c)), slack, held)
-    rows = table.lines()
-    room = width - 1
+        table.add(str(c["rank"]), name, str(order(c)), slack, *((held,) if beside else ()))
+    rows = table.lines(width - 1)
     lines.append(rows[0])
     for line, c in zip(rows[1:], candidates, strict=True):
-        if line.cell_len > room:
-            line.truncate(room, overflow="ellipsis")
         lines.append(line)
+        if not beside:
+            lines.append(hanging("      held back by ", _held_by(view, c, several), width))
         lines.append(items("      ", tuned(c), width))
         if c.get("also"):
             lines.append(Text(f"      the same function is a {' and a '.join(c['also'])}", style="dim"))
@@ -120,13 +121,16 @@ def values(record: Record, width: int) -> list[Text]:
     )
     cell = max(max(t.cell_len for t in cells) for _, _, cells in rows) + GAP
     taken = INDENT + max(len(r[0]) for r in rows) + GAP + max(len(r[1]) for r in rows)
-    shown = candidates[: max(1, (width - taken) // cell)]
+    room = (width - taken) // cell
+    if room < min(2, len(candidates)):  # then the labels stand on lines of their own
+        room = (width - taken + max(len(r[0]) for r in rows)) // cell
+    shown = candidates[: max(1, room)]
     table = Columns(("<", ">", *(">" for _ in shown)), indent=INDENT, gap=GAP)
     table.add("", "limit", *(f"{c['rank']} " for c in shown), style="dim")
     for label, limit, cells in rows:
         table.add(label, limit, *cells[: len(shown)])
     where = "worst plant case" if view.several_cases else ""
-    lines = [heading("Beside the limits", where), *table.lines()]
+    lines = [heading("Beside the limits", where, width), *table.lines(width)]
     lines.append(Text("  * holds the candidate back   ! falls short", style="dim"))
     rest = len(candidates) - len(shown)
     if rest:

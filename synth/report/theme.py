@@ -35,7 +35,10 @@ THEME = Theme(
     inherit=False,
 )
 
-NARROWEST = 64
+NARROWEST = 32
+NARROW = 60  # below this a plant case has no room beside its numbers
+LEAST_CELL = 12  # columns under which a cut cell says nothing
+LEAST_BODY = 20  # columns under which a paragraph goes below its label, not beside it
 WIDEST = 132  # lines longer than this are hard to follow, however wide the window
 
 
@@ -53,7 +56,7 @@ def console(file: IO[str] | None = None, width: int | None = None) -> Console:
     return out
 
 
-def heading(words: str, aside: str = "", width: int = WIDEST) -> Text:
+def heading(words: str, aside: str, width: int) -> Text:
     """A section's first line; beside it, or below where there is no room, what holds for all of it."""
     text = Text("\n")
     text.append(words, style="head")
@@ -66,15 +69,22 @@ def heading(words: str, aside: str = "", width: int = WIDEST) -> Text:
 
 
 def hanging(first: str | Text, body: str | Text, width: int, *, style: str = "") -> Text:
-    """A paragraph whose later lines start under its first word: `first` is the mark or label in front."""
+    """A paragraph whose later lines start under its first word: `first` is the mark or label in front.
+
+    Under a label that leaves no room the paragraph starts on the next line.
+    """
     label = first if isinstance(first, Text) else Text(first)
     text = body.copy() if isinstance(body, Text) else Text(body, style=style)
     indent = label.cell_len
-    lines = text.divide(_breaks(text.plain, max(20, width - indent)))
-    out = Text()
-    out.append_text(label)
+    below = width - indent < LEAST_BODY and label.plain.strip() != "" and indent + text.cell_len > width
+    if below:
+        indent = len(label.plain) - len(label.plain.lstrip()) + 2
+    lines = text.divide(_breaks(text.plain, max(1, width - indent)))
+    out = label.copy()
+    if below:
+        out.rstrip()
     for i, line in enumerate(lines):
-        if i:
+        if i or below:
             out.append("\n" + " " * indent)
         line.rstrip()
         out.append_text(line)
@@ -108,11 +118,13 @@ _UNITS = frozenset("% s ms µs ns h d deg dB rad/s 1/s Hz V W K A N m mm bar l/m
 def items(first: str | Text, parts: Sequence[str], width: int, *, between: str = " · ") -> Text:
     """Like `hanging`, but broken between the parts alone, unless one part is wider than a line."""
     label = first if isinstance(first, Text) else Text(first)
-    indent, room = label.cell_len, max(20, width - label.cell_len)
+    indent, room = label.cell_len, width - label.cell_len
+    if room < LEAST_BODY and label.plain.strip():
+        return hanging(label, between.join(parts), width)
     lines: list[str] = []
     for i, part in enumerate(parts):
         piece = part if i == len(parts) - 1 else part + between.rstrip()
-        if lines and len(lines[-1]) + 1 + len(piece) <= room:
+        if lines and cell_len(lines[-1]) + 1 + cell_len(piece) <= room:
             lines[-1] += " " + piece
         else:
             lines.append(piece)
@@ -124,17 +136,32 @@ def items(first: str | Text, parts: Sequence[str], width: int, *, between: str =
     return out
 
 
+def fitted(line: Text, width: int) -> Text:
+    """The same, with what is still wider than the page folded under its own indent."""
+    rows = line.split("\n", allow_blank=True)
+    if all(row.cell_len <= width for row in rows):
+        return line
+    out = []
+    for row in rows:
+        indent = len(row.plain) - len(row.plain.lstrip())
+        out.append(hanging(" " * indent, row[indent:], width) if row.cell_len > width else row)
+    return Text("\n").join(out)
+
+
 class Columns:
     """A table of text: cells padded to their column, two spaces between, no lines drawn.
 
-    sides : one "<" or ">" a column. Rows are Text or str; a row that is too wide is cut by nobody: the caller
-    sees to it that the columns fit.
+    sides : one "<" or ">" a column. spare : columns a narrow page does
+    without, those together that make sense together only, the least important first.
     """
 
-    def __init__(self, sides: Sequence[str], indent: int = 2, gap: int = 2) -> None:
+    def __init__(
+        self, sides: Sequence[str], indent: int = 2, gap: int = 2, spare: Sequence[tuple[int, ...]] = ()
+    ) -> None:
         self.sides = sides
         self.indent = indent
         self.gap = gap
+        self.spare = spare
         self.rows: list[list[Text]] = []
 
     def add(self, *cells: str | Text, style: str = "") -> None:
@@ -152,13 +179,59 @@ class Columns:
             for i in range(len(self.sides))
         ]
 
-    def lines(self) -> list[Text]:
-        """The rows, padded."""
+    def total(self) -> int:
+        """Of the whole table."""
+        return self.indent + sum(self.widths()) + self.gap * (len(self.sides) - 1)
+
+    def lines(self, width: int) -> list[Text]:
+        """The rows, padded. On a page too narrow for them the last column is cut; then the first, where it
+        is text, stands on lines of its own; then spare columns go."""
+        table = self
+        for k in range(len(self.spare) + 1):
+            table = self._without({i for group in self.spare[:k] for i in group})
+            if table._room(width) is not None:
+                return table._padded(width)
+            if self.sides[0] == "<" and table._below()._room(width) is not None:
+                break
+        out: list[Text] = []
+        below = table._below() if self.sides[0] == "<" else table
+        for row, line in zip(table.rows, below._padded(width), strict=True):
+            if below is not table and row[0].plain.strip():
+                out.append(hanging(" " * self.indent, row[0], width))
+            if line.plain.strip():
+                out.append(line)
+        return out
+
+    def _room(self, width: int) -> int | None:
+        """Columns for the last cell on a page so wide; None where that is too few to say anything."""
         widths = self.widths()
+        over = max(0, self.total() - width)
+        fits = over == 0 or (self.sides[-1] == "<" and widths[-1] - over >= LEAST_CELL)
+        return widths[-1] - over if fits else None
+
+    def _below(self) -> Columns:
+        """All but the first column, further in."""
+        table = Columns(self.sides[1:], indent=self.indent + 2, gap=self.gap)
+        table.rows = [row[1:] for row in self.rows]
+        return table
+
+    def _without(self, left_out: set[int]) -> Columns:
+        kept = [i for i in range(len(self.sides)) if i not in left_out]
+        table = Columns([self.sides[i] for i in kept], indent=self.indent, gap=self.gap)
+        table.rows = [[row[i] for i in kept if i < len(row)] for row in self.rows]
+        return table
+
+    def _padded(self, width: int) -> list[Text]:
+        """The rows with their last cells, and at worst the rows themselves, cut to the page."""
+        widths = self.widths()
+        room = self._room(width)
+        widths[-1] = widths[-1] if room is None else room
         out = []
         for row in self.rows:
             line = Text(" " * self.indent)
-            for i, cell in enumerate(row):
+            for i, whole in enumerate(row):
+                cell = whole.copy()
+                cell.truncate(widths[i], overflow="ellipsis")
                 pad = " " * (widths[i] - cell.cell_len)
                 line.append_text(
                     Text.assemble(pad, cell) if self.sides[i] == ">" else Text.assemble(cell, pad)
@@ -166,9 +239,6 @@ class Columns:
                 if i < len(row) - 1:
                     line.append(" " * self.gap)
             line.rstrip()
+            line.truncate(width, overflow="ellipsis")
             out.append(line)
         return out
-
-    def text(self) -> Text:
-        """The whole table."""
-        return Text("\n").join(self.lines())

@@ -24,7 +24,7 @@ def trade(record: Record, width: int) -> list[Text]:
     names = quantity_name(first), quantity_name(second)
     points = [(number(p["first"]), number(p["second"]), p["structure"]) for p in part["points"]]
     points = [p for p in points if math.isfinite(p[0]) and math.isfinite(p[1])]
-    lines = [heading("Trade-off", f"{names[0]} against {names[1]}; everything else is met")]
+    lines = [heading("Trade-off", f"{names[0]} against {names[1]}; everything else is met", width)]
     if not points:
         return [*lines, Text("  no point of it was found")]
     xs, ys = [p[0] for p in points], [p[1] for p in points]
@@ -34,14 +34,13 @@ def trade(record: Record, width: int) -> list[Text]:
     )
     chosen = sorted({round(i * (len(points) - 1) / max(1, MOST - 1)) for i in range(min(MOST, len(points)))})
     table = Columns((">", ">", "<"))
-    table.add(
-        *(f"{n}, {u.word}" if u.word else n for n, u in zip(names, units, strict=True)),
-        "structure",
-        style="dim",
-    )
+    heads = [f"{n}, {u.word}" if u.word else n for n, u in zip(names, units, strict=True)]
+    if sum(map(len, heads)) + 20 > width:  # the heading names them, in this order
+        heads = [u.word for u in units]
+    table.add(*heads, "structure", style="dim")
     for i in chosen:
         table.add(units[0].number(xs[i]), units[1].number(ys[i]), points[i][2])
-    lines.extend(table.lines())
+    lines.extend(table.lines(width))
     if len(points) > 2:
         chart = Chart(_room(xs, units[0].factor), _room(ys, units[1].factor), min(width, 100) - 14, ROWS)
         for x, y, _ in points:

@@ -82,6 +82,12 @@ class View:
         return quantity_unit(quantity, self.record["spec"])
 
     @property
+    def output_unit(self) -> str:
+        """Unit of y and r; "" where the sheet names none."""
+        output = self.record["spec"].get("output")
+        return output["unit"] if output else ""
+
+    @property
     def several_cases(self) -> bool:
         """Whether more than the nominal case was examined."""
         return len(self.record["plant"]["cases"]) > 1

@@ -2,6 +2,9 @@
 
 import pytest
 
+import synth.search as search
+from synth.search.explore import fingerprint
+
 SHEET = """\
 title = "Heated block"
 revision = "A"
@@ -31,3 +34,31 @@ def sheet(tmp_path, monkeypatch, written):
     monkeypatch.chdir(tmp_path)
     monkeypatch.delenv("COLUMNS", raising=False)
     return written("block.toml", SHEET)
+
+
+@pytest.fixture(scope="module")
+def searched_once():
+    """What a search finds is worked out once a sheet and budget; a patch to change the folder with, too."""
+    patch = pytest.MonkeyPatch()
+    whole, known = search.propose, {}
+
+    def once(task, settings, progress, stop, seeds=()):
+        key = (fingerprint(task), settings.budget)
+        if key not in known:
+            known[key] = whole(task, settings, progress, stop, seeds=seeds)
+        return known[key]
+
+    patch.setattr(search, "propose", once)
+    yield patch
+    patch.undo()
+
+
+@pytest.fixture(scope="session")
+def files_in():
+    """The files below a folder and what is in them."""
+
+    def found(folder):
+        inside = sorted(path for path in folder.rglob("*") if path.is_file())
+        return {str(path.relative_to(folder)): path.read_bytes() for path in inside}
+
+    return found

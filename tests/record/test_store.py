@@ -84,7 +84,8 @@ def test_kill_9_while_writing_leaves_whole_records_or_none(record, tmp_path):
     program = (
         "import json, sys\nfrom pathlib import Path\nfrom synth.record import place_for, write_record\n"
         "record = json.loads(Path(sys.argv[1]).read_text())\n"
-        "while True:\n    write_record(record, place_for(Path(sys.argv[2]), None))\n    print('one', flush=True)\n"
+        "while True:\n    write_record(record, place_for(Path(sys.argv[2]), None))\n"
+        "    print('one', flush=True)\n"
     )
     for wait in (0.02, 0.05, 0.11):
         child = subprocess.Popen(

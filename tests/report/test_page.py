@@ -89,7 +89,7 @@ def test_a_price_list(record, drawn):
     text = drawn(page(record, 80))
     assert (
         "\nWhat it would take  one limit moved, all the others met; cheapest first\n"
-        "  settling time (5 %)  ≤ 2 s  →  2.137 s    and a PI does it\n"
+        "  settling time (5 %)  ≤ 2 s  →  2.137 s  with a PI\n"
     ) in text
 
 
