@@ -1,0 +1,89 @@
+"""Above which frequency nothing can be found any more, whatever the dead time turns: polynomials alone.
+
+Letters: M loops, n degree. Polynomials (n + 1, M), ascending powers of x = ω².
+"""
+
+from __future__ import annotations
+
+from functools import cache
+from math import comb
+
+import numpy as np
+
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.frequency.isolation import Brackets, isolate
+from synth.loop.frequency.response import polynomial
+
+_BISECTIONS = 12  # an octave down to a five-thousandth of it
+
+
+def roots_above(polynomials: FloatArray, floor: FloatArray) -> Brackets:
+    """Brackets of the roots above `floor` (M,), within a five-thousandth of each; a bracket may begin below.
+
+    Most often there is none, and the Bernstein form on the whole of [floor, ∞) shows it.
+    """
+    n = len(polynomials) - 1
+    powers = floor ** np.arange(n + 1)[:, None]
+    form = _to_tail(n) @ (polynomials * powers)[::-1]
+    rows = np.flatnonzero(~(form > 0.0).all(axis=0))
+    brackets = isolate(polynomials[:, rows])
+    row = rows[brackets.row]
+    keep = brackets.high > floor[row]
+    row, low, high, negative = row[keep], brackets.low[keep], brackets.high[keep], brackets.negative[keep]
+    for _ in range(_BISECTIONS):
+        middle = 0.5 * (low + high)
+        before = (polynomial(polynomials[:, row], middle) < 0.0) == negative
+        low, high = np.where(before, middle, low), np.where(before, high, middle)
+    keep = high > floor[row]
+    return Brackets(row[keep], low[keep], high[keep], negative[keep])
+
+
+@cache
+def _to_tail(n: int) -> FloatArray:
+    """From powers of t = floor/x to the Bernstein form of degree n on 0 <= t <= 1."""
+    return np.array([[comb(i, j) / comb(n, j) for j in range(n + 1)] for i in range(n + 1)])
+
+
+def last_with_gain(squares: FloatArray, limit: FloatArray, floor: FloatArray) -> FloatArray:
+    """(M,) the x above which |L| stays below `limit` (M,), 0 where that is `floor` or lower, inf where it
+    never does.
+
+    squares : (2, n + 1, M), |N|² and |D|².
+    """
+    level = limit * limit * squares[1] - squares[0]
+    out = np.zeros(len(limit))
+    brackets = roots_above(level, floor)
+    np.maximum.at(out, brackets.row, brackets.high)
+    lead = len(level) - 1 - (level[::-1] != 0.0).argmax(axis=0)
+    out[level[lead, np.arange(len(limit))] < 0.0] = np.inf
+    return out
+
+
+def noise_range(
+    squares: FloatArray, peak: FloatArray, floor: FloatArray
+) -> tuple[IntArray, FloatArray, FloatArray]:
+    """(rows, x from, x to): where above `floor` |C S| may exceed `peak` (M,), were L turned at will.
+
+    squares : (3, n + 1, M), |N|², |D|² and |control|². That is where peak ||D| - |N|| <= |control|: with A =
+    peak² (|N|² + |D|²) - |control|² not above 2 peak² |N| |D|, so within the roots of A² - 4 peak⁴ |N|² |D|².
+    """
+    n2, d2, c2 = squares
+    a = n2 + d2 - c2 / np.maximum(peak * peak, 1e-300)
+    both = _product(n2, d2)
+    brackets = roots_above(_product(a, a) - 4.0 * both, floor)
+    first, last = np.full(len(peak), np.inf), np.zeros(len(peak))
+    np.minimum.at(first, brackets.row, brackets.low)
+    np.maximum.at(last, brackets.row, brackets.high)
+    # within it already at the floor: an odd number of roots lies above
+    odd: BoolArray = np.bincount(brackets.row, minlength=len(peak)) % 2 == 1
+    first = np.where(odd, floor, np.maximum(first, floor))
+    rows = np.flatnonzero(last > floor)
+    return rows, first[rows], last[rows]
+
+
+def _product(a: FloatArray, b: FloatArray) -> FloatArray:
+    """Of polynomials (n + 1, M): (2 n + 1, M)."""
+    out = np.zeros((2 * len(a) - 1, a.shape[1]))
+    for i in range(len(a)):
+        out[i : i + len(b)] += a[i] * b
+    return out
