@@ -72,11 +72,14 @@ class _Readings:
         if self.names & _OF_D:
             self.signals.append("d")
             rows.append(loops.load)
-        self.found: Responses = responses(loops, poles, np.stack(rows))
+        # of u, and of d where its area is not asked for, the sup alone matters
+        asked_for = {"z": self.names - _OF_U - _OF_D, "d": self.names & {"disturbance_area"}}
+        throughout = np.array([bool(asked_for.get(s)) for s in self.signals])
+        self.found: Responses = responses(loops, poles, np.stack(rows), throughout)
         self.has_end = loops.numerator[:, -1] != 0.0
         self._relate()
         f = self.found
-        self.panels = f.panels.stacked()
+        self.panels = f.panels
         self.outline = Outline.of(self.panels)
         offset = np.stack([np.zeros_like(self.late) if s == "u" else self.late for s in self.signals])
         close = self.panels.rows(np.flatnonzero(self._decisive()))
@@ -92,8 +95,9 @@ class _Readings:
         """y to z - 1 where it has a final value."""
         f = self.found
         per = np.where(self.has_end, f.final[0], 1.0)
-        f.panels.values[0] -= f.final[0][f.panels.owner, None]
-        f.panels.values[0] /= per[f.panels.owner, None]
+        here, panels = f.panels.signal(0, len(self.signals))
+        f.panels.values[here] -= f.final[0][panels.owner, None]
+        f.panels.values[here] /= per[panels.owner, None]
         f.amplitude[0] /= per
         f.unit[0] /= np.abs(per)
 
@@ -268,16 +272,14 @@ class _Readings:
 
     @cached_property
     def areas(self) -> FloatArray:
-        """∫ abs(signal) of every signal from its own time 0 on, (S, M)."""
-        f, p = self.found, self.panels
-        piece = np.abs(f.panels.values @ WHOLE) * f.panels.length
-        asked = np.array([_AREAS.get(s) in self.names for s in self.signals])
-        negligible = NO_AREA * p.over(np.add, piece.ravel(), 0.0).reshape(len(self.signals), -1)
-        negligible[~asked] = np.inf
+        """∫ abs(signal) of every signal asked for throughout, from its own time 0 on, (S, M)."""
+        f, p, shape = self.found, self.panels, self.found.final.shape
+        whole = np.abs(p.values @ WHOLE) * p.length
+        negligible = NO_AREA * p.over(np.add, whole, 0.0).reshape(shape)
+        negligible[[_AREAS.get(s) not in self.names for s in self.signals]] = np.inf
         cut = np.flatnonzero(self.outline.may_change_sign(negligible.ravel()))
-        whole = piece.ravel()
         whole[cut] = panel_areas(p.rows(cut))
-        early = p.over(np.add, whole, 0.0).reshape(len(self.signals), -1)
+        early = p.over(np.add, whole, 0.0).reshape(shape)
         return early + np.stack([last_mode.area(a, f.pole) for a in f.amplitude])
 
 

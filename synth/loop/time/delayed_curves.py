@@ -38,7 +38,7 @@ def delayed_step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatA
         count = int(np.floor(horizon[row])) + 1
         marched = min(count, MOST_DRAWN if count <= MOST_DRAWN else LONG)
         sizes = ladder(int(fine[row]) + 1, int(coarse[row]) + 1, int(hold[row]))
-        walk = Walk.start(loops.rows(one), numerators[:, one], sizes)
+        walk = Walk.start(loops, numerators, one, sizes)
         values = np.stack([walk.over()[:, 0] for _ in range(marched)])
         edges = np.concatenate([[0.0], np.cumsum(sizes)])
         for s, signal in enumerate((0, 1, 2)):

@@ -23,7 +23,7 @@ MOST_DELAYS, MOST_PANELS = 1536, 6144
 SOONEST = 3
 # Places of a delay at which the modes are compared with what was marched: the modes that are left out turn
 # faster than those that are kept, but eight times a delay only where they have died.
-PLACES = 24
+PLACES = 16
 # The modes are trusted where they meet the marched response over a whole delay to this part of its unit.
 AGREES = 3e-9
 # A response has come to rest, and modes have died, at this part of the unit.
@@ -53,12 +53,13 @@ class Piece:
 
 @dataclass(slots=True)
 class Early:
-    """Pieces in order of time, how many delays each loop was followed for (M,), and whether the modes met it
-    in the last one, or it had come to rest."""
+    """Pieces in order of time, how many delays each loop was followed for (M,), whether the modes met it in
+    the last one, or it had come to rest, and the largest size seen of each signal (S, M)."""
 
     delays: IntArray
     meets: BoolArray
     quiet: BoolArray
+    size: FloatArray
     pieces: list[Piece] = field(default_factory=list)
 
 
@@ -67,8 +68,8 @@ def early_response(loops: Loops, numerators: FloatArray, modes: TrueModes, unit:
 
     numerators (S, M, n + 1), N first; unit (M, S) is what errors are relative to.
     """
-    rows = len(loops)
-    out = Early(np.zeros(rows, dtype=np.intp), np.zeros(rows, dtype=bool), np.zeros(rows, dtype=bool))
+    rows, no = len(loops), np.zeros(len(loops), dtype=bool)
+    out = Early(np.zeros(rows, dtype=np.intp), no, no.copy(), np.zeros((len(numerators), rows)))
     open_poles = closed_roots(_without_integrators(loops.denominator))
     fine, coarse, hold = resolution(loops, open_poles, modes.pole)
     kinks = lasting_kinks(loops, open_poles, coarse)
@@ -79,7 +80,7 @@ def early_response(loops: Loops, numerators: FloatArray, modes: TrueModes, unit:
         for at in _classes(todo, fine, coarse, hold):
             even = int(coarse[at].max())
             cut, smooth = ladder(int(fine[at].max()), even, int(hold[at].max())), ladder(even, even)
-            walk = Walk.start(loops.rows(at), numerators[:, at], cut)
+            walk = Walk.start(loops, numerators, at, cut)
             meeting = _Meeting(modes.rows(at), unit[at], loops.dead_time[at])
             refine = finer < 3 and len(cut) < MOST_PANELS // 16
             again.append(_walk(out, at, walk, meeting, smooth, int(kinks[at].max()), least[at], refine))
@@ -128,6 +129,7 @@ def _walk(
         if done.any():
             left = left[~done]
             walk = walk.rows(np.flatnonzero(~done))
+    out.size[:, at] = ends[:, :, 2:].max(axis=2)
     for piece in pieces:
         good = ~rough[piece.rows]
         values = piece.values if good.all() else piece.values[:, good]
@@ -171,8 +173,11 @@ class _Meeting:
     def at_rest(self, rows: IntArray, values: FloatArray) -> BoolArray:
         """Whether values (S, m, P, 13) have come to rest: a stable loop at rest over one whole delay stays
         so."""
-        off = np.abs(values - self.modes.final[rows].T[:, :, None, None]).max(axis=(2, 3))
-        out: BoolArray = (off <= DEAD * self.unit[rows].T).all(axis=0)
+        final, limit = self.modes.final[rows].T, DEAD * self.unit[rows].T
+        out: BoolArray = np.all(np.abs(values[:, :, -1, -1] - final) <= limit, axis=0)
+        if out.any():
+            off = np.abs(values[:, out] - final[:, out, None, None]).max(axis=(2, 3))
+            out[out] = np.all(off <= limit[:, out], axis=0)
         return out
 
 
@@ -194,8 +199,8 @@ def _classes(todo: IntArray, fine: IntArray, coarse: IntArray, hold: IntArray) -
     """Rows that are marched together: the same panels, and no more at once than there is room for."""
     out = []
     if len(todo) <= 300:  # one fine cut for all costs less than many calls
-        step = 3 if len(todo) > 100 else 6
-        key = np.where(coarse[todo] > 1, coarse[todo], 0) * 100 + np.minimum((fine[todo] + 2) // step, 3)
+        step = 4 if len(todo) > 100 else 8
+        key = np.where(coarse[todo] > 1, coarse[todo], 0) * 100 + np.minimum(fine[todo] // step, 3)
         key += 10 * hold[todo]
     else:
         key = (hold[todo] * 100 + coarse[todo]) * 100 + fine[todo]

@@ -19,7 +19,7 @@ BLOCK = 2048
 
 @dataclass(frozen=True, slots=True)
 class Panels:
-    """owner (B,) loop of each panel; start, length (B,); values (S, B, 13); first (M,) number of its first
+    """owner (B,) loop of each panel; start, length (B,); values (B, 13); first (M,) number of its first
     panel."""
 
     owner: IntArray
@@ -27,18 +27,6 @@ class Panels:
     length: FloatArray
     values: FloatArray
     first: IntArray
-
-    def stacked(self) -> Panels:
-        """Every signal as loops of its own: S M loops, and one signal (S B, 13)."""
-        signals, count, _ = self.values.shape
-        number = np.arange(signals)[:, None]
-        return Panels(
-            (self.owner + len(self.first) * number).ravel(),
-            np.tile(self.start, signals),
-            np.tile(self.length, signals),
-            self.values.reshape(1, signals * count, -1),
-            (self.first + count * number).ravel(),
-        )
 
     def signal(self, number: int, signals: int) -> tuple[slice, Panels]:
         """Where in these stacked panels one of the signals stands, and its panels."""
@@ -49,7 +37,7 @@ class Panels:
             self.owner[here] - loops * number,
             self.start[here],
             self.length[here],
-            self.values[:, here],
+            self.values[here],
             self.first[loops * number : loops * (number + 1)] - edges[number],
         )
 
@@ -60,7 +48,7 @@ class Panels:
             owner,
             self.start[number],
             self.length[number],
-            self.values[:, number],
+            self.values[number],
             np.searchsorted(owner, np.arange(len(self.first))),
         )
 
@@ -87,7 +75,7 @@ class Outline:
     @classmethod
     def of(cls, panels: Panels) -> Outline:
         """Each Chebyshev polynomial is between -1 and 1."""
-        signal = panels.values[0]
+        signal = panels.values
         low, high, least, most = np.empty((4, len(signal)))
         for begin in range(0, len(signal), BLOCK):
             here = slice(begin, begin + BLOCK)

@@ -68,7 +68,7 @@ class Cells:
     def of(cls, trace: Trace) -> Cells:
         """From the looks and a bound on the curvature."""
         looks = trace.height[:, ::2]
-        off = (np.abs(trace.panels.values[0] @ TO_CHEBYSHEV) @ _OFF_LINE)[:, None]
+        off = (np.abs(trace.panels.values @ TO_CHEBYSHEV) @ _OFF_LINE)[:, None]
         low, high = np.minimum(looks[:, :-1], looks[:, 1:]), np.maximum(looks[:, :-1], looks[:, 1:])
         return cls(trace, low - off, high + off)
 
@@ -100,14 +100,14 @@ class Cells:
         """For cells (B, 16); low, high (B,)."""
         panel, cell = np.nonzero(cells)
         p = self.trace.panels
-        return Claim(p.owner[panel], p.values[0, panel], cell, low[panel], high[panel])
+        return Claim(p.owner[panel], p.values[panel], cell, low[panel], high[panel])
 
     def _alone(self, passage: Passage) -> Claim:
         """No range would do: the cell of the passage must be simple."""
         inside = np.flatnonzero(passage.left != passage.right)
         cell = np.minimum(passage.left, passage.right)[inside] // 2
         never = np.full(len(inside), np.inf)
-        signal = self.trace.panels.values[0, passage.panel[inside]]
+        signal = self.trace.panels.values[passage.panel[inside]]
         return Claim(passage.loop[inside], signal, cell, never, -never)
 
     def _of_panels(self, of_loops: NDArray[Any]) -> NDArray[Any]:

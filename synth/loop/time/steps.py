@@ -54,52 +54,50 @@ def ladder(fine: int, coarse: int, hold: int = 0) -> FloatArray:
 
 @dataclass(slots=True)
 class Walk:
-    """M loops on their way from delay to delay, all cut alike, in own time τ: u at τ, y and d at τ + θ.
+    """m loops on their way from delay to delay, all cut alike, in own time τ: u at τ, y and d at τ + θ.
 
-    numerators (S, M, n + 1), what is read off: N first (it closes the loop), then control or load or both.
+    loops (M), numerators (S, M, n + 1): what is read off, N first (it closes the loop), then control or load
+    or both; index (m,) which of the loops are still on their way.
     sizes (P,) lengths of the panels, parts of a delay.
-    drive (M, P, 13), the error e of a unit reference step over the coming delay, drives all: y = (N/D) e and
-    d = (load/D) e, a delay later, as P S = P·S. state (M, n) is the open loop's.
+    drive (m, P, 13), the error e of a unit reference step over the coming delay, drives all: y = (N/D) e and
+    d = (load/D) e, a delay later, as P S = P·S. state (m, n) is the open loop's.
     """
 
     loops: Loops
     numerators: FloatArray
+    index: IntArray
     sizes: FloatArray
     drive: FloatArray
     state: FloatArray
     _panels: _Panels
 
     @classmethod
-    def start(cls, loops: Loops, numerators: FloatArray, sizes: FloatArray) -> Walk:
+    def start(cls, loops: Loops, numerators: FloatArray, index: IntArray, sizes: FloatArray) -> Walk:
         """At rest, when the reference steps."""
-        drive = np.ones((len(loops), len(sizes), NODES))
-        state = np.zeros((len(loops), loops.order))
-        return cls(loops, numerators, sizes, drive, state, _Panels.of(loops, numerators, sizes))
+        drive = np.ones((len(index), len(sizes), NODES))
+        state = np.zeros((len(index), loops.order))
+        panels = _Panels.of(loops, numerators, index, sizes)
+        return cls(loops, numerators, index, sizes, drive, state, panels)
 
     def over(self) -> FloatArray:
-        """Over one delay: the signals at the nodes of its panels, (S, M, P, 13)."""
+        """Over one delay: the signals at the nodes of its panels, (S, m, P, 13)."""
         out, self.state = self._panels.over(self.drive, self.state)
         self.drive = 1.0 - out[0]
         return out
 
-    def rows(self, index: IntArray) -> Walk:
-        """The loops named by `index` alone."""
-        return Walk(
-            self.loops.rows(index),
-            self.numerators[:, index],
-            self.sizes,
-            self.drive[index],
-            self.state[index],
-            self._panels.rows(index),
-        )
+    def rows(self, number: IntArray) -> Walk:
+        """The loops on the way that are named by `number` alone."""
+        drive, state = self.drive[number], self.state[number]
+        index, panels = self.index[number], self._panels.rows(number)
+        return Walk(self.loops, self.numerators, index, self.sizes, drive, state, panels)
 
     def cut(self, sizes: FloatArray) -> Walk:
         """The same loops, cut otherwise from here on."""
         if np.array_equal(sizes, self.sizes):
             return self
         drive = recut(self.drive, self.sizes, sizes)
-        panels = _Panels.of(self.loops, self.numerators, sizes)
-        return Walk(self.loops, self.numerators, sizes, drive, self.state, panels)
+        panels = _Panels.of(self.loops, self.numerators, self.index, sizes)
+        return Walk(self.loops, self.numerators, self.index, sizes, drive, self.state, panels)
 
 
 @lru_cache(maxsize=64)
@@ -149,14 +147,15 @@ class _Panels:
     shared: FloatArray
 
     @classmethod
-    def of(cls, loops: Loops, numerators: FloatArray, sizes: FloatArray) -> _Panels:
-        """numerators (S, M, n + 1); sizes (P,)."""
+    def of(cls, loops: Loops, numerators: FloatArray, index: IntArray, sizes: FloatArray) -> _Panels:
+        """The loops `index` of these; numerators (S, M, n + 1); sizes (P,)."""
         kinds, which = np.unique(sizes, return_inverse=True)
-        length = loops.dead_time[:, None] * kinds
-        (rows, n), signals, many = (len(loops), loops.order), len(numerators), len(kinds)
-        lead = loops.denominator[:, :1]
-        a = (loops.denominator / lead)[:, ::-1, None, None]
-        c = (numerators / lead)[:, :, ::-1]
+        length = loops.dead_time[index, None] * kinds
+        (rows, n), signals, many = (len(index), loops.order), len(numerators), len(kinds)
+        denominator = loops.denominator[index]
+        lead = denominator[:, :1]
+        a = (denominator / lead)[:, ::-1, None, None]
+        c = (numerators[:, index] / lead)[:, :, ::-1]
         direct = c[:, :, n].copy()
         c = c - direct[:, :, None] * a[:, :, 0, 0]
         c[:, :, n] = 0.0

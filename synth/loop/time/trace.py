@@ -63,7 +63,7 @@ class Trace:
     @classmethod
     def of(cls, panels: Panels, offset: FloatArray, unit: FloatArray) -> Trace:
         """Look at every panel of the one signal."""
-        signal = panels.values[0]
+        signal = panels.values
         looks, slopes = signal @ VALUES, signal @ SLOPES
         place = np.full((len(signal), 2 * LOOKS - 1), np.nan)
         height = np.full_like(place, np.nan)
@@ -119,7 +119,7 @@ class Trace:
         best = np.where(inside, np.abs(self.height), -np.inf).max(axis=1)
         cut = np.flatnonzero((x > 0.0) & (x < 1.0))
         if cut.size:
-            edge = np.abs(jet(primitive_coefficients(p.values[0, cut]), x[cut])[1])
+            edge = np.abs(jet(primitive_coefficients(p.values[cut]), x[cut])[1])
             best[cut] = np.maximum(best[cut], edge)
         out: FloatArray = p.over(np.maximum, best, -np.inf)
         return out
@@ -179,7 +179,7 @@ class Trace:
         level = np.concatenate([p.level for p in passages])
         low, high = self.place[panel, left], self.place[panel, right]
         a, b = self.height[panel, left], self.height[panel, right]
-        x, slope = passing(self.panels.values[0, panel], low, high, a - level, b - level)
+        x, slope = passing(self.panels.values[panel], low, high, a - level, b - level)
         # a jump passes every level at one time
         slope = np.where(left == right, np.inf, np.abs(slope) / self.panels.length[panel])
         when = self.time(panel, x)

@@ -20,7 +20,7 @@ FINE = 1e-10
 # A mode below this part of the unit is left out of the cutting of panels.
 GONE = 1e-13
 # Panels made at once: few enough to stay in the cache of a core.
-BLOCK = 512
+BLOCK = 1024
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,6 +38,10 @@ class TrueModes:
     def rows(self, index: IntArray) -> TrueModes:
         """The loops named by `index`."""
         return TrueModes(self.pole[index], self.residue[index], self.final[index])
+
+    def signals(self, number: IntArray) -> TrueModes:
+        """The signals numbered alone."""
+        return TrueModes(self.pole, self.residue[:, number], self.final[:, number])
 
     def at(self, time: FloatArray) -> FloatArray:
         """Values at own times (M, T) -> (M, S, T)."""
@@ -77,7 +81,7 @@ def units(modes: TrueModes, delay: FloatArray) -> FloatArray:
     """
     slow = 6.0 / np.maximum(-modes.pole[:, 0].real, 1e-300)
     ratio = np.maximum(slow / delay, 2.0)
-    time = delay[:, None] * ratio[:, None] ** np.linspace(0.0, 1.0, 20)
+    time = delay[:, None] * ratio[:, None] ** np.linspace(0.0, 1.0, 12)
     out: FloatArray = np.fmax(np.abs(modes.at(time)).max(axis=2), np.abs(modes.final))
     return out
 
@@ -157,7 +161,7 @@ def late_panels(
 
 
 def fill(modes: TrueModes, panels: LatePanels, out: FloatArray, place: IntArray) -> None:
-    """The signals on late panels, written to the panels `place` (B,) of out (S, B', 13)."""
+    """The signals on late panels, written to the panels `place` (S, B) of out (B', 13)."""
     # Re Σ weight · exponential as one real product: the weights and the conjugate exponentials, seen as real
     exponent = np.conj(modes.pole) * panels.base[:, None]
     table, level = np.exp(exponent[:, None, :] * GRID[:, None]), 0
@@ -173,4 +177,4 @@ def fill(modes: TrueModes, panels: LatePanels, out: FloatArray, place: IntArray)
             weight = (modes.residue[who] * growth[:, None]).view(float)
             found = weight @ table.view(float)[who].swapaxes(1, 2)
             found += modes.final[who][:, :, None]
-            out[:, place[at]] = found.swapaxes(0, 1)
+            out[place[:, at]] = found.swapaxes(0, 1)

@@ -18,7 +18,7 @@ INF = np.array([np.inf])
 
 def cells_of(*signals):
     """The cells of one loop whose panels of length 1 hold these functions of x in [0, 1]."""
-    values = np.array([f(GRID) for f in signals])[None]
+    values = np.array([f(GRID) for f in signals])
     many = len(signals)
     panels = Panels(
         np.zeros(many, dtype=int), np.arange(many) * 1.0, np.ones(many), values, np.zeros(1, dtype=int)
@@ -96,10 +96,10 @@ def test_a_knot_too_near_the_level_is_not_trusted():
 
 def test_bounds_of_a_panel_enclose_it():
     rng = np.random.default_rng(5)
-    values = rng.normal(size=(1, 300, 13)) * 10.0 ** -np.arange(13) @ np.linalg.inv(np.vander(GRID, 13)).T
+    values = rng.normal(size=(300, 13)) * 10.0 ** -np.arange(13) @ np.linalg.inv(np.vander(GRID, 13)).T
     panels = Panels(np.zeros(300, dtype=int), np.arange(300.0), np.ones(300), values, np.zeros(1, dtype=int))
     outline = Outline.of(panels)
-    dense = values[0] @ value_matrix(np.linspace(0.0, 1.0, 401))
+    dense = values @ value_matrix(np.linspace(0.0, 1.0, 401))
     assert (outline.low <= dense.min(axis=1) + 1e-9).all()
     assert (outline.high >= dense.max(axis=1) - 1e-9).all()
 
