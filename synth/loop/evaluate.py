@@ -15,10 +15,9 @@ from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops, Rational, close, exact_degree, together
 from synth.loop.frequency.stage import frequency_stage
 from synth.loop.poles.doubt import doubts
-from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.stage import PoleStage, needs_counting, pole_stage, statics
 from synth.loop.quantities import EVERY_QUANTITY, Measure
-from synth.loop.stand_in import StandIns, damping, responses, worthwhile
+from synth.loop.stand_in import StandIns, damping, responses, truly_stable, worthwhile
 from synth.loop.time.stage import time_stage
 
 # Loops handled at once: large enough to drown the cost of a call, small enough to stay in cache and in
@@ -275,9 +274,7 @@ def _fill_by_stand_in(
     fit = worthwhile(loops)
     near = StandIns.of(loops if fit.all() else loops.rows(fit))
     served = rows[fit]
-    stable = np.zeros(len(served), dtype=bool)
-    for at, some in near.loops.by_order():
-        stable[at] = delayed_stable(some)
+    stable = truly_stable(near.loops)
     abscissa = near.abscissa()
     astray = stable & ~(abscissa < 0.0)  # the count is exact, so here the stand-in is wrong
     out.stable[served] = stable

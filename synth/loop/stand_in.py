@@ -18,8 +18,9 @@ from math import factorial
 import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
-from synth.loop.closed_loop import Loops, product
+from synth.loop.closed_loop import Loops, exact_degree, product
 from synth.loop.poles.delayed import characteristic
+from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.newton import by_newton, upper_half
 from synth.loop.poles.roots import closed_roots
 from synth.loop.poles.share import spaced
@@ -40,8 +41,8 @@ CROWDED = 1e9
 """Crowding of the poles from which on close ones are taken together: seven digits are more than the stand-in
 has."""
 
-LADDER: FloatArray = np.pi * np.concatenate([np.arange(1.0, 17.0), 16.0 * 1.2 ** np.arange(1.0, 40.0)])
-LAST: FloatArray = np.pi * np.arange(0.0, 4.0, 0.5)
+LADDER: FloatArray = np.pi * np.concatenate([np.arange(1.0, 9.0), 8.0 * 1.25 ** np.arange(1.0, 40.0)])
+LAST: FloatArray = np.pi * np.arange(0.0, 4.0)
 """Angles ωθ from which poles of the chain are sought, and how far below the end of the reach."""
 
 SETTLED = 1e-10
@@ -84,6 +85,22 @@ def worthwhile(loops: Loops) -> BoolArray:
     """(M,) where the stand-in serves: L(∞) = 0. Else y jumps anew after every θ."""
     out: BoolArray = loops.numerator[:, 0] == 0.0
     return out
+
+
+def truly_stable(loops: Loops) -> BoolArray:
+    """(M,) whether every pole of the true loops is stable: the exact count, of all orders at once.
+
+    D and N of a lower order are given a root at -1 for each degree they lack, which adds that pole alone.
+    """
+    lacking = loops.order - exact_degree(loops.denominator)
+    numerator, denominator = loops.numerator.copy(), loops.denominator.copy()
+    for degree in range(int(lacking.max(initial=0))):
+        short = np.flatnonzero(lacking > degree)
+        for polynomials in (numerator, denominator):
+            some = polynomials[short]
+            some[:, :-1] += some[:, 1:]  # p(s) (s + 1)
+            polynomials[short] = some
+    return delayed_stable(replace(loops, numerator=numerator, denominator=denominator))
 
 
 def without_dead_time(loops: Loops) -> Loops:

@@ -4,14 +4,23 @@ import numpy as np
 import pytest
 
 from synth.loop import stand_in
-from synth.loop.closed_loop import Rational, close
+from synth.loop.closed_loop import Rational, close, together
 from synth.loop.evaluate import Screen, evaluate
 from synth.loop.poles.delayed import delayed_poles
 from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.roots import closed_roots
 from synth.loop.poles.stage import REACH
 from synth.loop.quantities import EVERY_QUANTITY, Measure
-from synth.loop.stand_in import CROWDED, ORDER, StandIns, damping, responses, without_dead_time, worthwhile
+from synth.loop.stand_in import (
+    CROWDED,
+    ORDER,
+    StandIns,
+    damping,
+    responses,
+    truly_stable,
+    without_dead_time,
+    worthwhile,
+)
 from synth.loop.time.curves import step_curves
 from synth.loop.time.residues import crowding
 from synth.loop.time.stage import time_stage
@@ -179,6 +188,16 @@ def test_natural_frequency_is_always_exact():
     plants, comps = random_loops(20, seed=4, spread=0.5)
     exact, near = evaluate(plants, comps), evaluate(plants, comps, rational=True)
     np.testing.assert_array_equal(near.values, exact.values)
+
+
+def test_loops_of_several_orders_are_counted_as_each_for_itself():
+    plants, comps = random_loops(300, seed=17, spread=6.0)
+    without_rate = Rational.of(comps.numerator[:, 1:], comps.denominator[:, 1:])
+    index = np.arange(300)
+    loops = together([close(plants, comps, index, index), close(plants, without_rate, index, index)])
+    expected = np.concatenate([delayed_stable(some) for _, some in reversed(loops.by_order())])
+    assert 100 < np.count_nonzero(expected) < 500
+    np.testing.assert_array_equal(truly_stable(loops), expected)
 
 
 @pytest.mark.parametrize("angle", [4.0, 9.0, 25.0, 120.0])
