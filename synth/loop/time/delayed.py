@@ -85,7 +85,10 @@ class _Readings:
         close = self.panels.rows(np.flatnonzero(self._decisive()))
         self.trace = Trace.of(close, offset.ravel(), f.unit.ravel())
         self.z = self.trace.signal(0, len(self.signals))
-        self.tail = last_mode.extremes(f.amplitude[0], f.pole)
+        poles_of_all = np.tile(f.pole, len(self.signals))
+        tails = np.stack(last_mode.extremes(f.amplitude.ravel(), poles_of_all))
+        # top, its time, bottom, its time of what is left of each signal at the end, (4, S, M)
+        self.tails = tails.reshape(4, len(self.signals), -1)
         self.cells = Cells.of(self.trace)
         self.cells_of_z = self.cells.signal(0, len(self.signals))
         self.uncertain = UNCERTAIN * f.unit[0]
@@ -180,7 +183,7 @@ class _Readings:
         elif name == "settling_time":
             out = self._settling(m.band)
         elif name == "late_deviation":
-            out = Reading(self._late_deviation(m.after / self.loops.time_scale))
+            out = self._late_deviation(m.after / self.loops.time_scale)
         else:
             raise ValueError(f"no reading of {name!r}")
         return replace(out, value=np.where(self.has_end, out.value, np.nan))
@@ -189,7 +192,7 @@ class _Readings:
         """sup of abs of the signal: panels, the last mode's own extremes, and the value at infinity."""
         f = self.found
         looked = self.trace.signal(signal, len(self.signals)).farthest()
-        top, _, bottom, _ = last_mode.extremes(f.amplitude[signal], f.pole)
+        top, _, bottom, _ = self.tails[:, signal]
         late = np.maximum(np.abs(f.final[signal] + top), np.abs(f.final[signal] + bottom))
         out: FloatArray = np.maximum(looked, late)
         limit = out + NEGLIGIBLE * f.unit[signal]
@@ -199,7 +202,7 @@ class _Readings:
     def highest(self) -> tuple[FloatArray, FloatArray, Claim]:
         """sup of z - 1, its time, and that nothing is higher."""
         best, when = self.z.largest(1.0)
-        top, at, _, _ = self.tail
+        top, at, _, _ = self.tails[:, 0]
         later = top > best
         best, when = np.where(later, top, best), np.where(later, self._after_end(at), when)
         limit = np.maximum(best, 0.0) + NEGLIGIBLE * self.found.unit[0]
@@ -214,7 +217,7 @@ class _Readings:
         return Reading(np.where(over, when, np.nan), best < PLACED, (claim,))
 
     def _undershoot(self) -> Reading:
-        below = np.maximum(self.z.largest(-1.0)[0], -self.tail[2]) - 1.0
+        below = np.maximum(self.z.largest(-1.0)[0], -self.tails[2, 0]) - 1.0
         limit = -1.0 - np.maximum(below, 0.0) - NEGLIGIBLE * self.found.unit[0]
         claim = self.cells_of_z.within(limit, np.full_like(limit, np.inf))
         return Reading(np.where(below > ROUNDING, 100.0 * below, 0.0), claims=(claim,))
@@ -234,11 +237,10 @@ class _Readings:
         doubtful |= uncertain > SAME_TIME * steep * out
         left = np.flatnonzero(np.isnan(out))
         if left.size:
-            levels = np.full(len(left), level - 1.0)
-            after, other = (
-                f.end[left] + self.late[left] + last_mode.first_reach(f.amplitude[0, left], f.pole[left], one)
-                for one in (levels, levels - uncertain[left])
-            )
+            twice, levels = np.tile(left, 2), np.full(len(left), level - 1.0)
+            levels = np.append(levels, levels - uncertain[left])
+            passed = last_mode.first_reach(f.amplitude[0, twice], f.pole[twice], levels)
+            after, other = (f.end[twice] + self.late[twice] + passed).reshape(2, -1)
             out[left] = np.where(np.isfinite(after), after, np.nan)
             doubtful[left] |= _apart(after, other)
         return Reading(out, doubtful, self.cells_of_z.not_sooner(level - 1.0, passage))
@@ -249,26 +251,27 @@ class _Readings:
         passage = self.passage["exit", band]
         doubtful = self.z.grazes(band, passage, uncertain, last=True)
         doubtful |= uncertain > SAME_TIME * steep * out
-        some = np.flatnonzero(np.maximum(self.tail[0], -self.tail[2]) > band - uncertain)
+        some = np.flatnonzero(np.maximum(self.tails[0, 0], -self.tails[2, 0]) > band - uncertain)
         if some.size:
-            bands = np.full(len(some), band)
-            after, other = (
-                f.end[some] + self.late[some] + last_mode.last_exit(f.amplitude[0, some], f.pole[some], one)
-                for one in (bands, bands - uncertain[some])
-            )
+            twice, bands = np.tile(some, 2), np.full(len(some), band)
+            bands = np.append(bands, bands - uncertain[some])
+            passed = last_mode.last_exit(f.amplitude[0, twice], f.pole[twice], bands)
+            after, other = (f.end[twice] + self.late[twice] + passed).reshape(2, -1)
             out[some] = np.where(np.isfinite(after), after, out[some])
             doubtful[some] = _apart(after, other)
         # y is 0, so outside any band below 100 %, until the dead time has passed
         out = np.where(np.isnan(out), self.late if band < 1.0 else 0.0, out)
         return Reading(out, doubtful, self.cells_of_z.not_later(band, passage))
 
-    def _late_deviation(self, after: FloatArray) -> FloatArray:
+    def _late_deviation(self, after: FloatArray) -> Reading:
         f = self.found
         seen = self.z.farthest_after(after)
         rest = np.maximum(after - f.end - self.late, 0.0)
         top, _, bottom, _ = last_mode.extremes(f.amplitude[0] * np.exp(f.pole * rest), f.pole)
         out = np.maximum(seen, np.maximum(top, -bottom))
-        return 100.0 * np.where(after < self.late, np.maximum(out, 1.0), out)
+        limit = out + NEGLIGIBLE * f.unit[0]
+        claim = self.cells_of_z.within(-limit, limit, since=after)
+        return Reading(100.0 * np.where(after < self.late, np.maximum(out, 1.0), out), claims=(claim,))
 
     @cached_property
     def areas(self) -> FloatArray:

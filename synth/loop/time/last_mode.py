@@ -85,11 +85,10 @@ def _passing(
 
 
 def _value(amplitude: ComplexArray, pole: ComplexArray, time: FloatArray) -> FloatArray:
-    with np.errstate(all="ignore"):
-        out: FloatArray = np.where(
-            np.isfinite(time), (amplitude * np.exp(pole * np.nan_to_num(time))).real, 0.0
-        )
-    return out
+    """Re(a e^(pt)); 0 at infinity."""
+    there = np.isfinite(time)
+    out: FloatArray = (amplitude * np.exp(pole * np.where(there, time, 0.0))).real
+    return np.where(there, out, 0.0)
 
 
 def _half_period(pole: ComplexArray) -> FloatArray:

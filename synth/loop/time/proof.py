@@ -77,28 +77,37 @@ class Cells:
         here, _ = self.trace.panels.signal(number, signals)
         return Cells(self.trace.signal(number, signals), self.low[here], self.high[here])
 
-    def within(self, low: FloatArray, high: FloatArray) -> Claim:
-        """That the signal is nowhere outside the range (M,) to (M,) of its loop."""
+    def within(self, low: FloatArray, high: FloatArray, since: FloatArray | None = None) -> Claim:
+        """That the signal is nowhere outside the range (M,) to (M,) of its loop, or not after times (M,)."""
         low, high = self._of_panels(low), self._of_panels(high)
-        return self._claim((self.low < low) | (self.high > high), low[:, 0], high[:, 0])
+        outside = (self.low < low) | (self.high > high)
+        if since is not None:
+            p = self.trace.panels
+            begin = p.start + self.trace.offset[p.owner]
+            outside &= begin[:, None] + p.length[:, None] * X[1:] > self._of_panels(since)
+        return self._claim(np.flatnonzero(outside), low[:, 0], high[:, 0])
 
-    def not_sooner(self, level: float, passage: Passage) -> tuple[Claim, ...]:
+    def not_sooner(self, level: float, passage: Passage) -> tuple[Claim, Claim]:
         """That signal >= level nowhere before that first passage, which is the only one in its cell."""
-        sooner = self._before(self._numbers_of(passage, self.low.size))
+        number = np.flatnonzero(self.high >= level)
+        number = number[number < self._numbers_of(passage, self.low.size)[self._owner(number)]]
         limit = np.full(len(self.low), level)
-        claim = self._claim(sooner & (self.high >= level), np.full_like(limit, -np.inf), limit)
-        return claim, self._alone(passage)
+        return self._claim(number, np.full_like(limit, -np.inf), limit), self._alone(passage)
 
-    def not_later(self, band: float, passage: Passage) -> tuple[Claim, ...]:
+    def not_later(self, band: float, passage: Passage) -> tuple[Claim, Claim]:
         """That abs(signal) <= band everywhere after that last passage, which is the only one in its cell."""
-        later = ~self._before(self._numbers_of(passage, -1) + 1)
+        number = np.flatnonzero((self.high > band) | (self.low < -band))
+        number = number[number > self._numbers_of(passage, -1)[self._owner(number)]]
         limit = np.full(len(self.low), band)
-        claim = self._claim(later & ((self.high > band) | (self.low < -band)), -limit, limit)
-        return claim, self._alone(passage)
+        return self._claim(number, -limit, limit), self._alone(passage)
 
-    def _claim(self, cells: BoolArray, low: FloatArray, high: FloatArray) -> Claim:
-        """For cells (B, 16); low, high (B,)."""
-        panel, cell = np.nonzero(cells)
+    def _owner(self, number: IntArray) -> IntArray:
+        """Loops of the cells, numbered in order."""
+        return self.trace.panels.owner[number // (LOOKS - 1)]
+
+    def _claim(self, number: IntArray, low: FloatArray, high: FloatArray) -> Claim:
+        """For the cells numbered; low, high (B,)."""
+        panel, cell = np.divmod(number, LOOKS - 1)
         p = self.trace.panels
         return Claim(p.owner[panel], p.values[panel], cell, low[panel], high[panel])
 
@@ -119,11 +128,6 @@ class Cells:
         out = np.full(len(self.trace.panels.first), absent)
         cell = np.minimum(np.minimum(passage.left, passage.right) // 2, LOOKS - 2)
         out[passage.loop] = passage.panel * (LOOKS - 1) + cell
-        return out
-
-    def _before(self, number: IntArray) -> BoolArray:
-        """Cells, numbered in order, before that number (M,) of their loop."""
-        out: BoolArray = np.arange(self.low.size).reshape(self.low.shape) < self._of_panels(number)
         return out
 
 

@@ -152,15 +152,15 @@ class Trace:
         """Whether a knot is so near the level, to `uncertain` (M,), that it may pass it before that first
         passage, or with `last` pass the band of that half width after that last one. (M,)."""
         p, knots = self.panels, self.height
-        number = np.arange(knots.size).reshape(knots.shape)
+        with np.errstate(invalid="ignore"):
+            off = np.abs((np.abs(knots) if last else knots) - level)
+            number = np.flatnonzero(off < uncertain[p.owner, None])
+        loop = p.owner[number // knots.shape[1]]
         until = np.full(len(p.first), 0 if last else knots.size)
         until[passage.loop] = passage.panel * knots.shape[1] + (passage.left if last else passage.right)
-        with np.errstate(invalid="ignore"):
-            near = np.abs((np.abs(knots) if last else knots) - level) < uncertain[p.owner, None]
-        open_to = until[p.owner, None]
-        near &= number >= open_to if last else number <= open_to
+        counts = number >= until[loop] if last else number <= until[loop]
         out = np.zeros(len(p.first), dtype=bool)
-        out[p.owner[near.any(axis=1)]] = True
+        out[loop[counts]] = True
         return out
 
     def _neighbour(self, panel: IntArray, knot: IntArray, way: int) -> IntArray:
