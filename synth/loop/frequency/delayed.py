@@ -25,7 +25,7 @@ from synth.loop.frequency.delayed_curves import DelayedCrossing, DelayedCurve, c
 from synth.loop.frequency.isolation import Brackets
 from synth.loop.frequency.peaks import CURVES, climb
 from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, log_rates, polynomial, tamed
-from synth.loop.frequency.survey import Open, joined, open_cells, promising, sign_changes
+from synth.loop.frequency.survey import Open, begun, joined, open_cells, promising, sign_changes
 from synth.loop.frequency.upper_end import last_with_gain, noise_range
 
 _FARTHEST = 20_000.0  # rad: where the search for ever smaller ripples ends
@@ -36,6 +36,7 @@ _LEAST_MARGIN = 1e-8  # relative, of the level above the peak in the test
 _MOST_MARGIN = 2e-7
 _DEPTH = 1e-20  # of a bracket in y that begins at 0
 _OCTAVES = 2.0**6  # ratio of y over which a climb is not left to itself ...
+_BISECTIONS = 50
 _POINTS = 65  # ... but begins at the best of so many points
 _NOISE = 4e-13  # of a Bernstein coefficient, relative to the sum of its terms
 _PLACE = {N: 0, D: 1, CONTROL: 2}  # in the squares of the forms
@@ -88,14 +89,14 @@ class _Findings:
         """Raise the levels of `targets` until the cells exceed none; with them isolate `crossings`."""
         for _ in range(_ROUNDS):
             level = self.level_of_proof()
-            cells = [*self._above(tables, targets, level), *crossings]
-            if not cells:
+            above = self._above(tables, targets, level)
+            if not above and not crossings:
                 break
             hint = np.zeros((len(self.keys) + 2, self.m))
             hint[: len(self.keys)] = (self.at.reshape(-1, self.m) * self.response.dead_time) ** 2
-            brackets = sign_changes(joined(cells), edges, hint.ravel())
+            brackets = sign_changes(joined([*above, *crossings]), edges, hint.ravel())
             self._take_crossings(brackets)
-            self._climb_between(brackets, edges[-1])
+            self._climb_between([brackets, *(begun(part, edges) for part in above)], edges[-1], level)
             targets, crossings = targets[self.best[targets] > level[targets]], []
 
     def _climb_most_promising(self, edges: FloatArray, tables: FloatArray, rows: IntArray) -> None:
@@ -171,13 +172,17 @@ class _Findings:
         else:
             self.fallen[row[down]] = True
 
-    def _climb_between(self, brackets: Brackets, last: float) -> None:
+    def _climb_between(self, parts: list[Brackets], last: float, level: FloatArray) -> None:
         """Climb where a curve is above its level: from each place where it passes it upwards to the next
         downwards."""
-        some = np.flatnonzero(brackets.row < len(self.best))
-        order = some[np.lexsort((brackets.low[some], brackets.row[some]))]
-        target, low, high = brackets.row[order], brackets.low[order], brackets.high[order]
-        up = np.flatnonzero(~brackets.negative[order])
+        target, low, high, negative = (
+            np.concatenate([getattr(part, name) for part in parts])
+            for name in ("row", "low", "high", "negative")
+        )
+        some = np.flatnonzero(target < len(self.best))
+        order = some[np.lexsort((low[some], target[some]))]
+        target, low, high = target[order], low[order], high[order]
+        up = np.flatnonzero(~negative[order])
         if not up.size:
             return
         follows = np.append(target[1:] == target[:-1], False)[up]
@@ -186,10 +191,29 @@ class _Findings:
         start = np.sqrt(high[up] * np.where(follows, np.maximum(low[after], high[up]), last))
         bottom = np.maximum(bottom, _DEPTH * start)
         self._narrow(target, bottom, start, top)
+        self._climb_within(target, bottom, start, top)
+        stuck = np.flatnonzero(self.best[target] <= level[target])
+        if stuck.size:  # Newton's method has left the place: to the ends of what lies above the level
+            target, start = target[stuck], start[stuck]
+            bottom = self._passage(target, bottom[stuck], start, level)
+            top = self._passage(target, top[stuck], start, level)
+            self._climb_within(target, bottom, np.sqrt(bottom * top), top)
+
+    def _climb_within(self, target: IntArray, bottom: FloatArray, start: FloatArray, top: FloatArray) -> None:
         delay = self.response.dead_time[target % self.m]
         curve = DelayedCurve(self.response, self.curves[target // self.m], target % self.m)
         around = (np.sqrt(bottom) / delay, np.sqrt(start) / delay, np.sqrt(top) / delay)
         climb(curve, target, around, self.best, self.at)
+
+    def _squared(self, target: IntArray, y: FloatArray) -> FloatArray:
+        """|P/Δ|² of each target at y (.., F); 0 where it cannot be told."""
+        row = np.broadcast_to(target % self.m, y.shape).ravel()
+        curves = np.broadcast_to(self.curves[target // self.m], y.shape).ravel()
+        w = np.sqrt(y).ravel() / self.response.dead_time[row]
+        size, _, _ = log_rates(*tamed(*DelayedCurve(self.response, curves, row).at(w)))
+        with np.errstate(divide="ignore", invalid="ignore"):
+            out: FloatArray = np.nan_to_num(size[0] / size[1]).reshape(y.shape)
+        return out
 
     def _narrow(self, target: IntArray, bottom: FloatArray, start: FloatArray, top: FloatArray) -> None:
         """Ranges of y over many octaves to those beside the best of some points, in place: a curve may be all
@@ -198,16 +222,19 @@ class _Findings:
         if not wide.size:
             return
         y = bottom[wide] * (top[wide] / bottom[wide]) ** np.linspace(0.0, 1.0, _POINTS)[:, None]
-        x = y / self.response.dead_time[target[wide] % self.m] ** 2
-        row = np.tile(target[wide] % self.m, _POINTS)
-        curve = DelayedCurve(self.response, np.tile(self.curves[target[wide] // self.m], _POINTS), row)
-        re, im = tamed(*curve.at(np.sqrt(x).ravel()))
-        size, _, _ = log_rates(re, im)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            best = np.nan_to_num(size[0] / size[1]).reshape(_POINTS, -1).argmax(axis=0)
-        each = np.arange(len(wide))
+        best, each = self._squared(target[wide], y).argmax(axis=0), np.arange(len(wide))
         bottom[wide], start[wide] = y[np.maximum(best - 1, 0), each], y[best, each]
         top[wide] = y[np.minimum(best + 1, _POINTS - 1), each]
+
+    def _passage(
+        self, target: IntArray, outside: FloatArray, inside: FloatArray, level: FloatArray
+    ) -> FloatArray:
+        """y between `outside` and `inside`, which is above the level, where a curve passes it."""
+        for _ in range(_BISECTIONS):
+            middle = np.sqrt(outside * inside)
+            above = self._squared(target, middle) > level[target] ** 2
+            outside, inside = np.where(above, outside, middle), np.where(above, middle, inside)
+        return outside
 
     def end(self, floor: float, rows: IntArray) -> FloatArray:
         """Angle beyond `floor` above which |L| is so small that nothing found of the loops `rows` can be
@@ -240,7 +267,8 @@ class _Findings:
             rows = rows[end > start]
             if rows.size:
                 count = min(float(end.max()) - start, start) / STEP  # twice as far each time
-                edges: FloatArray = (start + STEP * np.arange(min(int(count), _MOST_CELLS) + 2.0)) ** 2
+                # a peak that lies across the start is seen as a whole
+                edges: FloatArray = (start + STEP * np.arange(-1.0, min(int(count), _MOST_CELLS) + 2.0)) ** 2
                 self.look(edges, cell_tables(edges, self.form.n), rows)
                 start = float(np.sqrt(edges[-1]))
 
@@ -258,7 +286,7 @@ class _Findings:
         start = floor
         while (last > start).any():
             start = max(start, first[last > start].min())
-            edges = (start + STEP * np.arange(_CELLS + 1.0)) ** 2
+            edges = (start + STEP * np.arange(-1.0, _CELLS + 1.0)) ** 2
             stop = float(np.sqrt(edges[-1]))
             some = rows[(first < stop) & (last > start)]
             self._prove(edges, cell_tables(edges, self.form.n), i * self.m + some, [])

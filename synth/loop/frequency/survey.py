@@ -84,6 +84,13 @@ def sign_changes(cells: Open, edges: FloatArray, hint: FloatArray) -> Brackets:
     return Brackets(target, low, high, before)
 
 
+def begun(cells: Open, edges: FloatArray) -> Brackets:
+    """What is negative where the cells begin, as if it had become so just before."""
+    at = np.flatnonzero((cells.cell == 0) & (cells.coefficients[0] < 0.0))
+    first = np.full(len(at), edges[0])
+    return Brackets(cells.target[at], 0.9 * first, first, np.zeros(len(at), dtype=bool))
+
+
 def _signs(coefficients: FloatArray, low: FloatArray) -> BoolArray:
     """Where coefficients are negative; a function that is 0 at y = 0 does not change sign there. In place."""
     root = np.flatnonzero((coefficients[0] == 0.0) & (low == 0.0))
