@@ -276,7 +276,8 @@ def _fill_by_stand_in(
     served = rows[fit]
     stable = truly_stable(near.loops)
     abscissa = near.abscissa()
-    astray = stable & ~(abscissa < 0.0)  # the count is exact, so here the stand-in is wrong
+    # the count is exact, so here the stand-in is wrong, or beyond the number range
+    astray = stable & ~(np.isfinite(abscissa) & (abscissa < 0.0))
     out.stable[served] = stable
     out.abscissa[served] = np.where(stable, abscissa, np.maximum(abscissa, 1e-3)) / near.loops.time_scale
     fit[fit] = ~astray

@@ -67,7 +67,8 @@ class StandIns:
     @classmethod
     def of(cls, loops: Loops) -> StandIns:
         """Those of `loops`."""
-        rational = without_dead_time(loops)
+        with np.errstate(all="ignore"):  # a dead time out of all proportion: no poles, and not served
+            rational = without_dead_time(loops)
         return cls(loops, rational, closed_roots(rational.closed))
 
     def rows(self, index: IntArray) -> StandIns:
@@ -82,8 +83,8 @@ class StandIns:
 
 
 def worthwhile(loops: Loops) -> BoolArray:
-    """(M,) where the stand-in serves: L(∞) = 0. Else y jumps anew after every θ."""
-    out: BoolArray = loops.numerator[:, 0] == 0.0
+    """(M,) where the stand-in serves: L(∞) = 0, else y jumps anew after every θ, but L not 0 throughout."""
+    out: BoolArray = (loops.numerator[:, 0] == 0.0) & loops.numerator.any(axis=1)
     return out
 
 

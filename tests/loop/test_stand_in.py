@@ -184,6 +184,20 @@ def test_a_loop_that_jumps_anew_after_every_delay_goes_the_exact_way():
     np.testing.assert_array_equal(near.values, exact.values)
 
 
+@pytest.mark.parametrize(
+    ("plant", "compensator"),
+    [
+        (([0.0], [1.0, 1.0], 2.0), ([1.0], [1.0, 0.0, 100.0])),  # no loop at all, and poles on the axis
+        (([1.0], [1.0, 1.0], 1e90), ([0.5], [1e-90, 1.0])),  # θ^4 leaves the number range
+    ],
+)
+def test_a_loop_that_no_stand_in_serves_goes_the_exact_way(plant, compensator):
+    loop = Rational.of(*plant), Rational.of(*compensator)
+    exact, near = (evaluate(*loop, measures=MEASURES, rational=r) for r in (False, True))
+    np.testing.assert_array_equal(near.stable, exact.stable)
+    np.testing.assert_array_equal(near.values, exact.values)
+
+
 def test_natural_frequency_is_always_exact():
     plants, comps = random_loops(20, seed=4, spread=0.5)
     exact, near = evaluate(plants, comps), evaluate(plants, comps, rational=True)
