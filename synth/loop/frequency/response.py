@@ -17,6 +17,7 @@ import numpy as np
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 
+_ONE_THREAD = 8192  # numbers
 _LARGE = 1e150  # values whose products with each other stay finite
 # places of the polynomials in the stack
 N, D, CLOSED, CONTROL = 0, 1, 2, 3
@@ -127,7 +128,13 @@ def tamed(re: FloatArray, im: FloatArray) -> tuple[FloatArray, FloatArray]:
     to each point where their squares would leave the number range; ratios and logarithmic rates do not feel
     it.
     """
-    if np.vdot(re, re) + np.vdot(im, im) < _LARGE * _LARGE:
+    if not re.size:
+        return re, im
+    if re.size > _ONE_THREAD:  # a scalar product of more is handed to several threads, at ten times the cost
+        small = max(re.max(), -re.min(), im.max(), -im.min()) < _LARGE
+    else:
+        small = bool(np.vdot(re, re) + np.vdot(im, im) < _LARGE * _LARGE)
+    if small:
         return re, im
     size = np.maximum(np.abs(re), np.abs(im)).max(axis=(0, 1))
     _, exponent = np.frexp(size)
