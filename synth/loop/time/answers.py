@@ -71,8 +71,9 @@ def answer(
         if rows.size == 0:
             continue
         if p.last:
-            time, open_ = _last_passage(modes, p, rows, found.passage_ends[v][rows])
-            found.passages[v][rows], found.open_passages[v][rows] = time, open_
+            time, open_ = _last_passage(modes, p, rows, found.seen[rows], found.passage_ends[v][rows])
+            later = (time > found.seen[rows]) | open_
+            found.passages[v][rows[later]], found.open_passages[v][rows] = time[later], open_
         else:
             _follow_passage(modes, unit, found, v, p, rows[np.isinf(found.passages[v][rows])], segments)
     return found
@@ -173,26 +174,26 @@ def _follow_passage(
 
 
 def _last_passage(
-    modes: Signals, p: Passage, rows: IntArray, end: FloatArray
+    modes: Signals, p: Passage, rows: IntArray, seen: FloatArray, end: FloatArray
 ) -> tuple[FloatArray, BoolArray]:
-    """Last time outside, looked for in windows that reach further and further back from `end` (A,).
+    """Last time outside, looked for in windows that reach further and further back from `end`, to `seen`,
+    (A,) each; `seen` where there is none.
 
     Also returns where a window took more blocks than are allowed, so that its end was not seen.
     """
-    out, open_ = np.zeros(len(rows)), np.zeros(len(rows), dtype=bool)
+    out, open_ = seen.copy(), np.zeros(len(rows), dtype=bool)
     fourth, envelope = modes.bounds(rows, end)
-    with np.errstate(all="ignore"):
-        width = np.sqrt(np.sqrt(TAIL * envelope[p.signal] / (HERMITE * fourth[p.signal])))
+    width = np.sqrt(np.sqrt(TAIL * envelope[p.signal] / (HERMITE * fourth[p.signal])))
     window = np.where(np.isfinite(width), WINDOW * CELLS * width, end)
     pending = np.arange(len(rows))
     on = Passage(0, p.low, p.high, True)
     while pending.size:
-        start = np.maximum(end[pending] - window[pending], 0.0)
+        start = np.maximum(end[pending] - window[pending], seen[pending])
         later = modes.rows(rows[pending]).later([p.signal], start)
         part = _direct(later, np.zeros((len(pending), 1)), [], [on], [], MOST)
         out[pending] = start + part.passages[0]
         open_[pending] = part.passage_ends[0] > part.seen
-        again = (part.passages[0] == 0.0) & (start > 0.0) & ~open_[pending]
+        again = (part.passages[0] == 0.0) & (start > seen[pending]) & ~open_[pending]
         pending = pending[again]
         window[pending] *= 4.0
     return out, open_

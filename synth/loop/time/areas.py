@@ -59,7 +59,7 @@ def areas(
     count = len(end)
     number = np.arange(count)
     loops, many = number % m, np.repeat(signals, m)
-    guess = crossings.t + crossings.crossing(np.zeros(len(crossings))) * crossings.h
+    guess = crossings.t + crossings.crossing(np.zeros(len(crossings)), 5) * crossings.h
     before = (guess < end[crossings.key]).nonzero()[0]
     crossings, guess = crossings.rows(before), guess[before]
     where = np.concatenate([loops, crossings.loop, loops])

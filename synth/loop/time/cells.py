@@ -93,7 +93,8 @@ class Cells:
         turn = self.turn
         sign = np.sign(self.c)
         root = np.sqrt(np.maximum(turn * turn - self.c * self.d, 0.0))
-        x = np.clip(np.abs(self.c) / np.maximum(np.abs(self.c) - sign * turn + root, 1e-300), 0.0, 1.0)
+        size = np.abs(self.c)
+        x = np.minimum(size / np.maximum(size - sign * turn + root, 1e-300), 1.0)
         return x, self.cubic(x)
 
     def cubic(self, x: FloatArray) -> FloatArray:
@@ -102,15 +103,16 @@ class Cells:
         out: FloatArray = self.a + x * (self.c + x * (self.turn - self.c + x * third))
         return out
 
-    def crossing(self, level: FloatArray) -> FloatArray:
-        """Place (0 to 1) where the cubic meets the level; for cells whose ends lie on either side of it."""
-        x: FloatArray
+    def crossing(self, level: FloatArray, steps: int) -> FloatArray:
+        """Place (0 to 1) where the cubic meets the level, by so many steps of Newton's from where the chord
+        does; for cells whose ends lie on either side of it.
+        """
+        low, high = np.zeros(len(self)), np.ones(len(self))
+        third = self.c + self.d - 2.0 * (self.b - self.a)
+        second, rising, start = self.turn - self.c, self.b > self.a, self.a - level
         with np.errstate(all="ignore"):
-            x = (level - self.a) / (self.b - self.a)
-            low, high = np.zeros(len(self)), np.ones(len(self))
-            third = self.c + self.d - 2.0 * (self.b - self.a)
-            second, rising, start = self.turn - self.c, self.b > self.a, self.a - level
-            for _ in range(5):
+            x: FloatArray = start / (self.a - self.b)
+            for _ in range(steps):
                 value = start + x * (self.c + x * (second + x * third))
                 below = (value < 0.0) == rising
                 low, high = np.where(below, x, low), np.where(below, high, x)

@@ -20,7 +20,7 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.time.residues import numerator_of
+from synth.loop.time.residues import numerators_of
 from synth.loop.time.signals import CELLS, HERMITE, Profile
 
 TERMS = 32
@@ -270,7 +270,7 @@ def _clustered(loops: Loops, poles: ComplexArray, signals: tuple[str, ...], near
 
     weight = np.where(used, np.where(centre.imag > 0.0, 2.0, 1.0), 0.0)
     with np.errstate(all="ignore"):
-        tops = np.stack([numerator_of(loops, name) for name in signals], axis=1)
+        tops = numerators_of(loops, signals).transpose(0, 2, 1)
         gamma = _taylor(tops, centre) / loops.closed[:, :1, None, None]
         # over s and over s - p of the poles outside
         here = np.zeros((m, slots, 1), dtype=bool)

@@ -79,4 +79,4 @@ class Edges:
         cells = cells.rows(rank == self._rank[cells.key])
         high = self.high[cells.key]
         level = np.where((cells.a > high) | (cells.b > high), high, self.low[cells.key])
-        return cells, cells.t + cells.crossing(level) * cells.h, level
+        return cells, cells.t + cells.crossing(level, 2) * cells.h, level

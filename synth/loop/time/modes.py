@@ -10,8 +10,12 @@ from __future__ import annotations
 
 import numpy as np
 
-from synth.loop.arrays import ComplexArray, FloatArray, IntArray
+from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.time.signals import CELLS, HERMITE, Profile
+
+OCTAVES = 120
+"""Times of a profile at most; what lies further off is left to one step, and to a profile of what is then
+left of the modes."""
 
 
 class Modes:
@@ -35,6 +39,11 @@ class Modes:
     def __len__(self) -> int:
         return int(self.pole.shape[0])
 
+    def readable(self) -> BoolArray:
+        """(M,) whether residues and fourth powers of the poles lie within the number range."""
+        inside = (self.swing > 1e-75) & (self.swing < 1e75)
+        return np.asarray(inside.all(axis=1) & np.isfinite(self.residue).all(axis=(1, 2)))
+
     def rows(self, index: IntArray) -> Modes:
         """The loops named by `index`."""
         return Modes(self.pole[index], self.residue[index])
@@ -52,38 +61,34 @@ class Modes:
         """The chosen signals seen from `delay` (M,) on: x(t + delay)."""
         return Modes(self.pole, self.residue[:, signals] * np.exp(self.pole * delay[:, None])[:, None])
 
-    def first(self) -> IntArray:
-        """(M, S) slot of the slowest mode that the signal carries."""
-        slot: IntArray = (self.size > 0.0).argmax(axis=2)
-        return slot
-
+    @np.errstate(all="ignore")  # empty slots have no life
     def profile(self, floor: FloatArray, areas: bool) -> Profile:
         """The signals at times doubling, until every mode has decayed below `floor` (M, S)."""
         m, s, slots = self.residue.shape
         fall = -self.pole.real
-        present = (self.size > 0.0).any(axis=1)
+        carried = self.size > 0.0
+        present = carried.any(axis=1)
         t0 = 0.25 / np.where(present, self.swing, 0.0).max(axis=1, initial=1e-9)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            life = np.log(self.size * (slots / floor[:, :, None])).max(axis=1) / fall
+        life = np.log(self.size * (slots / floor[:, :, None])).max(axis=1) / fall
         end = np.where(present, life, 0.0).max(axis=1, initial=0.0)
-        octaves = int(np.clip(np.ceil(np.log2(np.maximum(end / t0, 1.0)).max(initial=0.0)) + 1, 2, 120))
-        grow = np.empty((octaves + 1, m, slots), dtype=complex)
-        grow[0] = 1.0
-        grow[1] = np.exp(self.pole * t0[:, None])
+        octaves = float(np.log2((end / t0).max(initial=1.0)))
+        count = int(max(octaves, 1.0)) + 2 if octaves < OCTAVES else OCTAVES
+        time = np.zeros((m, count + 1))
+        time[:, 1:] = t0[:, None] * np.exp2(np.arange(count))
+        if count == OCTAVES:  # the way that is left in one step
+            time[:, -1] = np.maximum(time[:, -1], end)
+        grow = np.empty((count + 1, m, slots), dtype=complex)
         decay = np.empty(grow.shape)
-        decay[:2] = np.abs(grow[:2])
-        for k in range(2, octaves + 1):
-            if k % 16 == 0:  # squaring doubles the rounding each time
-                grow[k] = np.exp(self.pole * (t0 * 2.0 ** (k - 1))[:, None])
+        for k in range(count + 1):
+            if k < 2 or k % 16 == 0 or k == OCTAVES:  # squaring doubles the rounding each time
+                grow[k] = np.exp(self.pole * time[:, k, None])
                 decay[k] = np.abs(grow[k])
                 continue
             np.multiply(grow[k - 1], grow[k - 1], out=grow[k])
             np.multiply(decay[k - 1], decay[k - 1], out=decay[k])
-        time = np.zeros((m, octaves + 1))
-        time[:, 1:] = t0[:, None] * np.exp2(np.arange(octaves))
-
         deviation = np.matmul(_real(self.residue.conj()), _real(grow).transpose(1, 2, 0))
-        slow = np.arange(slots) == self.first()[:, :, None]
+        slot = carried.argmax(axis=2)  # of the slowest mode that the signal carries
+        slow = np.arange(slots) == slot[:, :, None]
         speed = np.where(slow, 0.0, self.size * self.swing[:, None])
         weights = [self.size, self.fourth, speed]
         if areas:
@@ -91,22 +96,12 @@ class Modes:
             weights += [integral, np.where(slow, 0.0, integral)]
         bound = np.matmul(np.concatenate(weights, axis=1), decay.transpose(1, 2, 0))
         parts = [bound[:, k * s : (k + 1) * s] for k in range(len(weights))]
-        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-            first = np.where(slow & (self.pole.imag == 0.0)[:, None], self.size * fall[:, None], 0.0).sum(
-                axis=2
-            )
-            slowest = decay.transpose(1, 0, 2)[np.arange(m)[:, None], :, self.first()]
-            rivals = parts[2] / (first[:, :, None] * slowest)
+        row, column = np.arange(m)[:, None], np.arange(s)
+        first = np.where(self.pole.imag == 0.0, fall, 0.0)[row, slot] * self.size[row, column, slot]
+        rivals = parts[2] / (first[:, :, None] * decay.transpose(1, 2, 0)[row, slot])
         rivals[~(rivals >= 0.0)] = np.inf
-        return Profile(
-            time,
-            deviation,
-            parts[0],
-            parts[1],
-            rivals,
-            parts[3] if areas else None,
-            parts[4] if areas else None,
-        )
+        area, others = parts[3:] if areas else (None, None)
+        return Profile(time, deviation, parts[0], parts[1], rivals, area, others)
 
     def bounds(self, loop: IntArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:
         """(S, P) bounds of the fourth derivative and of abs(x) from t on."""
@@ -186,7 +181,7 @@ class Modes:
         the first zero is abs(f(zero)) coth(pi sigma / (2 omega)).
         """
         slots = self.pole.shape[1]
-        slot = self.first()[loop, signal]
+        slot = (self.size[loop, signal] > 0.0).argmax(axis=1)
         pole, now = self.pole[loop], self.residue[loop, signal] * np.exp(self.pole[loop] * t[:, None])
         size = np.abs(now)
         others = np.where(np.arange(slots) == slot[:, None], 0.0, size)

@@ -63,8 +63,8 @@ class Peaks:
         rest: IntArray = (useful & ~single).nonzero()[0]
         if rest.size == 0:
             return rest
-        level = _level(cells.rows(rest))
-        if level.any():
+        if round_:
+            level = _level(cells.rows(rest))
             at, rest = rest[level], rest[~level]
             later = np.where(cells.b[at] > cells.a[at], cells.h[at], 0.0)
             self._raise_to(answer[at], top[at], cells.t[at] + later)

@@ -21,8 +21,8 @@ TAIL = 0.02
 GROWTH = 1.2
 """Growth of the block's length per length."""
 
-SLACK = 4.0
-"""Cubic error relative to what is allowed, above which a block is cut."""
+SLACK, HOPELESS = 4.0, 1e8
+"""Cubic error relative to what is allowed, above which a block is cut, and above which it stays as it is."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,6 +43,7 @@ class Plan:
     owner: IntArray
 
 
+@np.errstate(all="ignore")  # curves that have died away
 def reach(profile: Profile, curve: FloatArray, level: FloatArray) -> FloatArray:
     """(M, R) earliest sure time at which decreasing curves (M, R, K) of the profile are <= level (M, R).
 
@@ -78,13 +79,13 @@ def widths(profile: Profile, ends: FloatArray, allowed: FloatArray) -> FloatArra
     ends (M, S) when each signal has been seen enough; allowed (M, S) cubic error allowed.
     """
     tolerance = np.minimum(allowed[:, :, None], TAIL * profile.envelope)
-    with np.errstate(all="ignore"):
-        width = np.sqrt(np.sqrt(tolerance / (HERMITE * profile.fourth)))
+    width = np.sqrt(np.sqrt(tolerance / (HERMITE * profile.fourth)))
     width[~(profile.time[:, None] < ends[:, :, None])] = np.inf
     out: FloatArray = np.fmin.reduce(width, axis=1)
     return out
 
 
+@np.errstate(all="ignore")  # signals that are nothing
 def blocks(modes: Signals, profile: Profile, ends: FloatArray, allowed: FloatArray, most: int) -> Plan:
     """Blocks from 0 to the last of the ends of each loop, at most `most` a loop (then the plan stops early).
 
@@ -98,23 +99,20 @@ def blocks(modes: Signals, profile: Profile, ends: FloatArray, allowed: FloatArr
     slope = GROWTH / CELLS
     width = np.minimum.accumulate(width - slope * time, axis=1) + slope * time
     reached = np.minimum(time, end[:, None])
-    with np.errstate(invalid="ignore", divide="ignore"):
-        rate = 1.0 / (CELLS * np.sqrt(width[:, :-1] * width[:, 1:]))
+    rate = (reached[:, 1:] - reached[:, :-1]) / (CELLS * np.sqrt(width[:, :-1] * width[:, 1:]))
     load = np.zeros((m, k))
-    np.cumsum(np.nan_to_num(rate) * np.diff(reached, axis=1), axis=1, out=load[:, 1:])
+    np.where(rate >= 0.0, np.minimum(rate, 1e300), 0.0).cumsum(axis=1, out=load[:, 1:])
     total = load[:, -1]
     count = np.where(end > 0.0, np.maximum(np.ceil(total), 1.0), 0.0)
     cut_short = count > most
     count = np.minimum(count, most).astype(np.intp)
-    loop = np.repeat(np.arange(m), count)
-    last = np.cumsum(count)
-    number = np.arange(len(loop)) - np.repeat(last - count, count)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        share = np.where(cut_short, 1.0, total / count)
+    loop = np.arange(m).repeat(count)
+    number = np.arange(len(loop)) - (count.cumsum() - count)[loop]
+    share = np.where(cut_short, 1.0, total / count)
     # one interpolation for all loops, each loop's curve in a stretch of its own
     base = np.arange(m) * (2.0 * total.max(initial=0.0) + 4.0)
     stop = np.interp(share[loop] * (number + 1) + base[loop], (load + base[:, None]).ravel(), reached.ravel())
-    final = (number + 1 == count[loop]) & ~cut_short[loop]
+    final = ((number + 1 == count[loop]) & ~cut_short[loop]).nonzero()[0]
     stop[final] = end[loop[final]]
     start = np.zeros(len(stop))
     start[1:] = stop[:-1]
@@ -130,18 +128,18 @@ def _cut(
     quartic = HERMITE * h**4
     tolerance = np.minimum(allowed[loop].T, TAIL * envelope)
     live = t < ends[loop].T
-    with np.errstate(invalid="ignore", divide="ignore"):
-        excess = np.where(live, fourth * quartic / tolerance, 0.0).max(axis=0)
-    pieces = np.where(excess > SLACK, np.ceil(np.sqrt(np.sqrt(excess))), 1.0).astype(np.intp)
-    if (pieces > 1).any():
-        again = np.repeat(pieces > 1, pieces)
-        number = np.arange(len(again)) - np.repeat(np.cumsum(pieces) - pieces, pieces)
-        loop, h = np.repeat(loop, pieces), np.repeat(h / pieces, pieces)
-        t = np.repeat(t, pieces) + number * CELLS * h
-        fourth = np.repeat(fourth, pieces, axis=1)
+    excess = np.where(live, fourth * quartic / tolerance, 0.0).max(axis=0)
+    many = (excess > SLACK) & (excess < HOPELESS)
+    if many.any():
+        pieces = np.where(many, np.ceil(np.sqrt(np.sqrt(excess))), 1.0).astype(np.intp)
+        block = np.arange(len(loop)).repeat(pieces)
+        number = np.arange(len(block)) - (pieces.cumsum() - pieces)[block]
+        loop, h, again = loop[block], (h / pieces)[block], many[block].nonzero()[0]
+        t = t[block] + number * CELLS * h
+        fourth = fourth[:, block]
         fourth[:, again] = modes.bounds(loop[again], t[again])[0]
         quartic = HERMITE * h**4
     fresh = np.ones(len(loop), dtype=bool)
-    fresh[1:] = loop[1:] != loop[:-1]
-    first = np.flatnonzero(fresh)
+    np.not_equal(loop[1:], loop[:-1], out=fresh[1:])
+    first = fresh.nonzero()[0]
     return Plan(loop, t, h, fourth * quartic, first, loop[first])

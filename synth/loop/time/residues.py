@@ -17,10 +17,13 @@ CROWDED = 1e5
 """Crowding of the poles from which on close poles are taken together."""
 
 
-def numerator_of(loops: Loops, signal: str) -> FloatArray:
-    """(M, n + 1) numerator of T ("y"), C S ("u") or P S ("d") over the characteristic polynomial."""
-    rows = {"y": loops.numerator, "u": loops.control, "d": loops.load}[signal]
-    return trimmed(rows, loops.order)
+def numerators_of(loops: Loops, signals: tuple[str, ...]) -> FloatArray:
+    """(M, n + 1, S) numerators of T ("y"), C S ("u") and P S ("d") over the characteristic polynomial."""
+    rows = {"y": loops.numerator, "u": loops.control, "d": loops.load}
+    out = np.empty((*loops.closed.shape, len(signals)))
+    for i, signal in enumerate(signals):
+        out[:, :, i] = trimmed(rows[signal], loops.order)
+    return out
 
 
 def upper_half(poles: ComplexArray) -> tuple[ComplexArray, FloatArray, IntArray]:
@@ -32,8 +35,8 @@ def upper_half(poles: ComplexArray) -> tuple[ComplexArray, FloatArray, IntArray]
     keep = (poles.imag >= 0.0) & ~np.isnan(poles)
     m = int(keep.sum(axis=1).max(initial=0))
     column: IntArray = np.argsort(~keep, axis=1, kind="stable")[:, :m]
-    pole = np.take_along_axis(poles, column, axis=1)
-    used = np.take_along_axis(keep, column, axis=1)
+    row = np.arange(len(poles))[:, None]
+    pole, used = poles[row, column], keep[row, column]
     weight = np.where(used, np.where(pole.imag > 0.0, 2.0, 1.0), 0.0)
     return np.where(used, pole, -1.0), weight, column
 
@@ -53,21 +56,19 @@ def step_modes(loops: Loops, poles: ComplexArray, signals: tuple[str, ...]) -> M
     gap = pole[:, :, None] - poles[:, None, :]
     padding = np.isnan(poles)
     if padding.any():
-        gap[np.broadcast_to(padding[:, None, :], gap.shape)] = 1.0
-    np.put_along_axis(gap, column[:, :, None], 1.0, axis=2)
+        np.copyto(gap, 1.0, where=padding[:, None, :])
+    gap[np.arange(m)[:, None], np.arange(slots), column] = 1.0
+    tops = numerators_of(loops, signals)[:, :, :, None]
+    value = np.zeros((m, len(signals), slots), dtype=complex)
+    value += tops[:, 0]
     with np.errstate(all="ignore"):
         factor = weight / (loops.leading(loops.closed)[:, None] * pole * gap.prod(axis=2))
         factor[weight == 0.0] = 0.0
-        residue = np.empty((m, len(signals), slots), dtype=complex)
-        for i, name in enumerate(signals):
-            top = numerator_of(loops, name)
-            value = np.zeros((m, slots), dtype=complex)
-            value += top[:, :1]
-            for k in range(1, top.shape[1]):
-                value *= pole
-                value += top[:, k, None]
-            np.multiply(value, factor, out=residue[:, i])
-    return Modes(pole, residue)
+        for k in range(1, tops.shape[1]):
+            value *= pole[:, None]
+            value += tops[:, k]
+        value *= factor[:, None]
+    return Modes(pole, value)
 
 
 def crowding(poles: ComplexArray) -> FloatArray:
@@ -88,8 +89,7 @@ def crowding(poles: ComplexArray) -> FloatArray:
 
 def limits(loops: Loops, signals: tuple[str, ...]) -> tuple[FloatArray, FloatArray]:
     """Values of the named signals at 0+ and at infinity, (M, S) each."""
-    top = [numerator_of(loops, name) for name in signals]
-    closed = loops.leading(loops.closed)
-    start = np.stack([loops.leading(p) / closed for p in top], axis=1)
-    end = np.stack([p[:, -1] / loops.closed[:, -1] for p in top], axis=1)
+    top = numerators_of(loops, signals)
+    start: FloatArray = loops.leading(top) / loops.leading(loops.closed)[:, None]
+    end: FloatArray = top[:, -1] / loops.closed[:, -1:]
     return start, end

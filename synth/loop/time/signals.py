@@ -21,7 +21,7 @@ HERMITE = 1.0 / 384.0
 class Profile:
     """Coarse course of the signals: what the block plan is made from. K times, the first one 0.
 
-    time       (M, K) increasing from 0 by a constant factor after the first two
+    time       (M, K) increasing from 0, after the first two by a constant factor except for the last one
     deviation  (M, S, K) x - x(inf)
     envelope   (M, S, K) bound of abs(x - x(inf)) from that time on
     fourth     (M, S, K) bound of the fourth derivative from that time on

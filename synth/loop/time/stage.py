@@ -61,7 +61,7 @@ def _plain_stage(
     signals = tuple(s for s in ("y", "u", "d") if s in needed)
     if not close.any():
         modes = step_modes(loops, poles, signals)
-        if np.isfinite(modes.residue).all():
+        if modes.readable().all():
             return _Reading(loops, modes, signals, asked).read()
     values = {m: np.full(len(loops), np.nan) for m in asked}
     approximate: dict[Measure, BoolArray] = {}
@@ -73,8 +73,8 @@ def _plain_stage(
         parts.append((together[whole], clusters.rows(np.flatnonzero(whole))))
         apart = np.concatenate([apart, together[~whole]])
     single = step_modes(loops.rows(apart), poles[apart], signals)
-    finite = np.isfinite(single.residue).all(axis=(1, 2))  # coefficients at the ends of the range: absent
-    parts.append((apart[finite], single.rows(np.flatnonzero(finite))))
+    whole = single.readable()  # the others are absent
+    parts.append((apart[whole], single.rows(np.flatnonzero(whole))))
     for rows, some in parts:
         if rows.size:
             part = _Reading(loops.rows(rows), some, signals, asked).read()

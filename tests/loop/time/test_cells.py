@@ -93,7 +93,7 @@ def test_crossing_of_the_cubic():
     zero = np.zeros((3, 200), dtype=np.intp)
     cells = Cells(zero, np.stack([np.zeros(200), np.ones(200), a, b, c, d, np.zeros(200)]))
     level = rng.uniform(0.01, 0.99, 200)
-    np.testing.assert_allclose(cells.cubic(cells.crossing(level)), level, atol=1e-6)
+    np.testing.assert_allclose(cells.cubic(cells.crossing(level, 5)), level, atol=1e-6)
 
 
 def test_residues_add_up_to_the_jump(random_loops):

@@ -93,6 +93,27 @@ def test_a_supremum_that_comes_late_is_followed(unity_loop):
     assert t[y.argmax()] * abs(poles[0][0]) > LONG  # past one plan of about a radian and a half a cell
 
 
+@pytest.mark.parametrize("decades", [6, 12, 24, 40, 60, 100, 140])
+@pytest.mark.parametrize("gain", [1.0, 9.0])
+def test_time_constants_many_decades_apart(decades, gain):
+    """The fast lag is over at once: what is left is a single lag, whose times are logarithms."""
+    lags = np.polymul([10.0 ** (decades / 2), 1.0], [10.0 ** (-decades / 2), 1.0])
+    measures = tuple(map(Measure, ("settling_time", "rise_time", "overshoot", "disturbance_peak")))
+    found = evaluate(Rational.of([1.0], lags), Rational.of([gain], [1.0]), measures=measures)
+    slow = 10.0 ** (decades / 2) / (1.0 + gain)
+    expected = [slow * np.log(50.0), slow * np.log(9.0), 0.0, 1.0 / (1.0 + gain)]
+    np.testing.assert_allclose(found.values[0, 0], expected, rtol=30.0 * 10.0**-decades + 1e-12)
+    assert not found.approximate.any()
+
+
+def test_time_constants_beyond_the_number_range_are_absent():
+    """The fourth power of a pole 125 decades off is none: no settling time of 0."""
+    for lags in (np.polymul([1e125, 1.0], [1e-125, 1.0]), np.polymul([1.0, 1.0], [1e-250, 1.0])):
+        found = evaluate(Rational.of([1.0], lags), Rational.of([1.0], [1.0]), measures=TIME)
+        assert found.stable.all()
+        assert np.isnan(found.values).all()
+
+
 def test_areas_that_are_not_proven_say_so(unity_loop):
     """Two lightly damped modes share the tail for ten thousand periods: no single mode stands for both."""
     zeta = 1e-4
