@@ -5,7 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 
 from synth.errors import Fault, InputError
-from synth.jobs.finish import now
+from synth.jobs.clock import now
 from synth.jobs.show import candidate_of
 from synth.record import ADOPTION_FORMAT, Adoption, Candidate, Record, read_record, write_adoption
 

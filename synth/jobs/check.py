@@ -7,12 +7,12 @@ from pathlib import Path
 import numpy as np
 
 import synth
-from synth.jobs.finish import now
+from synth.jobs.clock import now
 from synth.limits import assess
-from synth.rationale.cautions import HARDWARE
 from synth.record import CHECK_FORMAT, Check
-from synth.record.build import limit_part, plant_part, requirement_part, spec_part
+from synth.record.sheet import limit_part, plant_part, requirement_part, spec_part
 from synth.spec import Spec, read_spec
+from synth.wording.caveats import HARDWARE
 
 
 def check(spec_path: str | Path) -> Check:

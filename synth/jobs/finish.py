@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import replace
-from datetime import UTC, datetime
 from typing import TYPE_CHECKING
 
+from synth.jobs.clock import now
 from synth.jobs.opinions import opinions
 from synth.jobs.options import Done
 from synth.rationale import Said, verdict
@@ -18,11 +18,6 @@ from synth.spec import Spec
 if TYPE_CHECKING:
     from synth.limits import Limit
     from synth.record.format import Link, Revision, Trade
-
-
-def now() -> str:
-    """The time as a record writes it: UTC, whole seconds."""
-    return datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ")
 
 
 def finish(

@@ -29,10 +29,10 @@ from synth.record import (
     predecessor_of,
     read_record,
 )
-from synth.record.build import plant_part, requirement_part, spec_part
 from synth.record.changes import changes
 from synth.record.clean import clean
 from synth.record.format import Compensator, Revision
+from synth.record.sheet import plant_part, requirement_part, spec_part
 from synth.search.outcome import Candidate, Outcome
 from synth.spec import Spec, read_spec
 

@@ -9,12 +9,9 @@ import numpy as np
 from synth.loop.arrays import ComplexArray, FloatArray
 from synth.rationale.practice import EFFORT, far_beyond, idle, poor_reach, reach_words
 from synth.rationale.scene import Scene
+from synth.wording.caveats import HARDWARE
 from synth.wording.figures import count, figure, quantity
 
-HARDWARE = (
-    "A model is not the machine: check sign, units and direction, limit the first trials, keep an emergency "
-    "stop, follow local codes and a licensed engineer's word. No result here is a release to service."
-)
 DELAY_PERIODS = 1.5  # sampling periods that hold and computation cost together
 EASY_SHARE = 0.1  # of the longest period; costs some tenth of the delay margin
 SLOW = 5.0  # times the settling time

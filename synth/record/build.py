@@ -2,41 +2,31 @@
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Sequence
 from dataclasses import dataclass
-from pathlib import Path
 from typing import TYPE_CHECKING, cast
 
-import numpy as np
-
 import synth
-from synth.loop.closed_loop import Rational
 from synth.rationale import Said, Scene, cautions, uncounted
 from synth.rationale.closest import reason
 from synth.record.candidate import binding_part, candidate_part
 from synth.record.clean import clean
 from synth.record.format import (
     RECORD_FORMAT,
-    Case,
-    LimitPart,
     Link,
-    Plant,
     Record,
     Rejected,
-    Requirement,
     Revision,
-    SpecPart,
     Trade,
 )
 from synth.record.numbers import plain
-from synth.record.plant_words import form_words
 from synth.record.poles import every_pole, rows_of
+from synth.record.sheet import limit_part, plant_part, requirement_part, spec_part
 from synth.requirements import Bound
 from synth.search.outcome import Outcome
 from synth.spec import Spec
 from synth.structures import REGISTRY
-from synth.wording.names import options_of
+from synth.wording.caveats import HARDWARE
 
 if TYPE_CHECKING:
     from synth.limits import Limit
@@ -124,73 +114,6 @@ def _counted_below(bounds: Sequence[Bound]) -> float | None:
     return max(given) if given and len(given) == len(sizes) else None
 
 
-def spec_part(spec: Spec) -> SpecPart:
-    """The sheet, verbatim and in the words a report needs."""
-    prefer = spec.prefer
-    return {
-        "file": Path(spec.file).name,
-        "title": spec.title,
-        "revision": spec.revision,
-        "sha256": spec.sha256 or hashlib.sha256(spec.text.encode()).hexdigest(),
-        "text": spec.text,
-        "reference_step": spec.reference_step,
-        "valid_to": spec.valid_to,
-        "input": {"name": spec.input.name, "unit": spec.input.unit},
-        "output": {"name": spec.output.name, "unit": spec.output.unit},
-        "prefer": None
-        if prefer is None
-        else {"quantity": prefer.quantity.quantity, "sense": prefer.sense, "reserve": prefer.reserve},
-    }
-
-
-def plant_part(spec: Spec, outcome: Outcome | None) -> Plant:
-    """Every case that was examined, those found inside the tolerances included."""
-    cases = outcome.cases if outcome is not None and outcome.cases else spec.cases.cases
-    nominal = spec.cases.cases[0].plant
-    part: Plant = {
-        "cases": [case_part(c.name, c.kind, c.parameters, c.plant.rational()) for c in cases],
-        "form": form_words(spec.form),
-        "ranges": [{"name": r.name, "nominal": r.nominal, "low": r.low, "high": r.high} for r in spec.ranges],
-        "poles": [[float(p.real), float(p.imag)] for p in nominal.poles()],
-        "zeros": [[float(z.real), float(z.imag)] for z in nominal.zeros()],
-        "interior_examined": outcome.interior_examined if outcome is not None else 0,
-    }
-    return part
-
-
-def case_part(name: str, role: str, parameters: dict[str, float], plant: Rational) -> Case:
-    """One plant case."""
-    return {
-        "name": name,
-        "kind": "rational",
-        "role": role,
-        "parameters": dict(parameters),
-        "numerator": [float(v) for v in np.trim_zeros(plant.numerator[0], "f")],
-        "denominator": [float(v) for v in np.trim_zeros(plant.denominator[0], "f")],
-        "dead_time": float(plant.dead_time[0]),
-    }
-
-
-def requirement_part(bound: Bound) -> Requirement:
-    """One requirement, with the options that stand in the sheet."""
-    part: Requirement = {
-        "id": bound.id,
-        "quantity": bound.measure.quantity,
-        "bound": bound.side,
-        "limit": bound.limit,
-        "unit": bound.measure.row.unit,
-        "cases": None if bound.cases is None else list(bound.cases),
-    }
-    options = options_of(bound.measure)
-    if "band" in options:
-        part["band"] = bound.measure.band
-    if "below" in options:
-        part["below"] = float(bound.measure.below or 0.0)
-    if "span" in options:
-        part["span"] = list(bound.measure.span)
-    return part
-
-
 def rejected_part(given: Given, index: int) -> Rejected:
     """A structure without a place in the list, and its closest approach."""
     spec, r = given.spec, given.outcome.rejections[index]
@@ -221,22 +144,10 @@ def rejected_part(given: Given, index: int) -> Rejected:
     return part
 
 
-def limit_part(limit: Limit) -> LimitPart:
-    """A limit of the plant."""
-    return {
-        "name": limit.name,
-        "statement": limit.statement,
-        "source": limit.source,
-        "violates": limit.violates,
-        "relax": clean(dict(limit.relax)) if limit.relax else None,
-        "facts": clean(dict(limit.facts)),
-    }
-
-
 def _cautions(given: Given, record: Record) -> list[str]:
     """Those of the first candidate; without one, the line on hardware."""
     if not given.outcome.candidates:
-        return [cautions.HARDWARE]
+        return [HARDWARE]
     found = cautions.cautions(Scene(given.spec, given.outcome, given.outcome.candidates[0]))
     limits = [b.limit for b in given.spec.bounds if b.measure.quantity == "damping_ratio" and b.side == "min"]
     if limits:

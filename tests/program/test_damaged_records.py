@@ -114,7 +114,7 @@ READERS = [
     st.lists(CHANGE, min_size=1, max_size=3),
     st.none() | st.none() | CUT,
 )
-@settings(max_examples=300, deadline=None, suppress_health_check=list(HealthCheck))
+@settings(max_examples=200, deadline=None, suppress_health_check=list(HealthCheck))
 def test_any_damage_is_read_or_refused_with_its_place(folder, files_in, synth, whole, line, changes, cut):
     if "odd.json" in line:
         odd, text = folder / "odd.json", (folder / whole).read_text()

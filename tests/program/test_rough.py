@@ -195,3 +195,14 @@ def test_help_is_quick_because_nothing_heavy_is_imported():
     run = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert run.stdout.splitlines()[-1] == "[]"
     assert cli.MET == 0
+
+
+@pytest.mark.parametrize("words", ["'check', 'block.toml'", "'adopt', 'nowhere.json', '1'"])
+def test_what_searches_nothing_loads_no_search(sheet, words):
+    code = f"import sys; from synth import cli; cli.main([{words}]); " + (
+        "print([m for m in ('synth.search', 'synth.verify', 'synth.loop.evaluate') if m in sys.modules])"
+    )
+    run = subprocess.run(
+        [sys.executable, "-c", code], cwd=sheet.parent, capture_output=True, text=True, check=True
+    )
+    assert run.stdout.splitlines()[-1] == "[]"
