@@ -52,7 +52,9 @@ class _Findings:
         self.form = AngleForm(response)
         self.level = fall_level(response)
         self.m = response.loops
-        self.found: list[Crossings] = []
+        none = np.zeros(0, dtype=np.intp)
+        nowhere = np.zeros(0), np.zeros(0, dtype=bool), np.zeros(0, dtype=complex)
+        self.found = [Crossings(none, none, *nowhere)]
         self.fallen = np.zeros(self.m, dtype=bool)
         ends = np.abs(response.ends)
         self.gain_end = ends[1, N] / ends[1, D]

@@ -86,6 +86,17 @@ def proven_poles(loops: Loops, reach: FloatArray) -> tuple[ComplexArray, BoolArr
     return _trimmed(found, asked), proven
 
 
+def further_poles(loops: Loops, known: ComplexArray, reach: FloatArray) -> ComplexArray:
+    """`known` (M, q), the rightmost among them, and all others with abs(p) <= reach: as `delayed_poles`."""
+    delay = loops.dead_time
+    circle = np.clip(np.nan_to_num(reach), NEAREST / delay, FARTHEST / delay)[:, None] * (1.0 + 1e-12)
+    found = _within(loops, circle[:, 0])
+    with np.errstate(invalid="ignore"):
+        inside = np.where(np.abs(found) <= circle, found, np.nan)
+        outside = np.where(np.abs(known) > circle, known, np.nan)
+    return _ordered(np.concatenate([inside, outside], axis=1))
+
+
 def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
     """All roots of each row with abs(p) <= radius; rows of like size are worked on together."""
     pairs = np.ceil(1.5 * radius * loops.dead_time / (2.0 * np.pi)).astype(np.intp)

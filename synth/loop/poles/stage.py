@@ -8,7 +8,8 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.poles.delayed import FARTHEST, NEAREST, delayed_poles, proven_poles
+from synth.loop.poles.delayed import FARTHEST, NEAREST, delayed_poles, further_poles, proven_poles
+from synth.loop.poles.doubt import OF_POLES
 from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.poles.far import far_damping
 from synth.loop.poles.roots import closed_roots, routh_stable
@@ -30,14 +31,14 @@ class PoleStage:
     """What the poles say of M loops, in scaled time.
 
     stable    (M,)
-    abscissa  (M,) largest real part of a pole; with dead time also of the chain, ln abs(L(∞)) / θ. Where 1 +
-              L(∞) is not positive a pole has passed through infinity: a finite positive stand-in. -inf with
-              no pole at all.
+    abscissa  (M,) largest real part of a pole, NaN where it was not asked for; with dead time also of the
+              chain, ln abs(L(∞)) / θ. Where 1 + L(∞) is not positive a pole has passed through infinity: a
+              finite positive stand-in. -inf with no pole at all.
     poles     (M, n) without dead time, (M, q) padded with NaN with it: the rightmost true roots. By
               decreasing real part, pairs together, upper half first, exactly conjugate; reals have imaginary
               part exactly 0.
     values    scaled values of the measures that are ready; NaN where absent
-    reach     (M,) all poles with abs(p) up to here are in `poles`; inf without dead time
+    reach     (M,) all poles with abs(p) up to here are in `poles`; inf without dead time, 0 where none is
     shares    spacing of the poles and share of each (M, n) where they are known already; else None
     """
 
@@ -109,12 +110,16 @@ def needs_counting(measure: Measure) -> bool:
 def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
     """Stability, poles and the quantities of the poles' stage that need no frequency.
 
+    With dead time a stable loop has no poles and no abscissa here where none of the measures needs a pole;
+    with no measures at all poles are what is asked for.
+
     An unstable loop keeps its decay rate (negative) and its damping ratio, taken over all its poles;
     everything else is NaN.
     """
     names = {m.quantity for m in measures}
     if _delayed(loops):
-        stable, abscissa, poles, reach = _with_dead_time(loops)
+        asked = not measures or any(m.row.stage == "time" or m.quantity in OF_POLES for m in measures)
+        stable, abscissa, poles, reach = _with_dead_time(loops) if asked else _stability_alone(loops)
     else:
         stable, abscissa, poles = _without_dead_time(loops)
         reach = np.full(len(loops), np.inf)
@@ -127,7 +132,7 @@ def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
         elif name in still:
             values[measure] = still[name]
         elif name == "damping_ratio":
-            values[measure] = _early_damping(loops, stable, poles, measure)
+            values[measure] = _early_damping(loops, stable, poles, reach, measure)
     return PoleStage(stable, abscissa, poles, values, reach)
 
 
@@ -152,17 +157,7 @@ def _far_enough(
     """With dead time the true poles as far out as the rule reaches; else the poles as they are."""
     if not _delayed(loops):
         return poles
-    further = REACH * np.where(np.isfinite(highest_fall), highest_fall, 0.0)
-    short = np.flatnonzero(further > reach)
-    if short.size == 0:
-        return poles
-    fetched = _reaching(loops.rows(short), poles[short], further[short])
-    width = max(poles.shape[1], fetched.shape[1])
-    out = np.full((len(poles), width), np.nan, dtype=complex)
-    out[:, : poles.shape[1]] = poles
-    out[short] = np.nan
-    out[short, : fetched.shape[1]] = fetched
-    return out
+    return _reaching(loops, poles, reach, REACH * np.where(np.isfinite(highest_fall), highest_fall, 0.0))
 
 
 def _spacing_and_share(loops: Loops, poles: ComplexArray) -> tuple[Spacing, FloatArray]:
@@ -250,12 +245,40 @@ def _with_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray, 
     return stable, abscissa, poles, reach
 
 
-def _reaching(loops: Loops, poles: ComplexArray, reach: FloatArray) -> ComplexArray:
-    """Poles of loops with dead time as far out as `reach`, and never fewer than are known already."""
-    if not (reach > 0.0).any():
-        return poles
-    further: ComplexArray = delayed_poles(loops, reach)
-    return further
+def _stability_alone(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray, FloatArray]:
+    """The verdict by the exact count, and poles of the loops that are not stable."""
+    stable = delayed_stable(loops)
+    nothing = ~loops.numerator.any(axis=1)
+    if nothing.any():
+        stable[nothing] = routh_stable(loops.denominator[nothing])
+    abscissa, reach = np.full(len(loops), np.nan), np.zeros(len(loops))
+    poles = np.full((len(loops), 0), np.nan, dtype=complex)
+    bad = np.flatnonzero(~stable)
+    if bad.size:
+        _, abscissa[bad], found, reach[bad] = _with_dead_time(loops.rows(bad))
+        poles = np.full((len(loops), found.shape[1]), np.nan, dtype=complex)
+        poles[bad] = found
+    return stable, abscissa, poles, reach
+
+
+def _reaching(loops: Loops, poles: ComplexArray, reach: FloatArray, wanted: FloatArray) -> ComplexArray:
+    """Poles of loops with dead time as far out as `wanted`, and never fewer than are known already.
+
+    reach : (M,) to where all are known; 0 where none is.
+    """
+    for at, known in (
+        (np.flatnonzero((wanted > reach) & (reach > 0.0)), True),
+        (np.flatnonzero(reach == 0.0), False),
+    ):
+        if at.size:
+            some = loops.rows(at)
+            fetched = further_poles(some, poles[at], wanted[at]) if known else delayed_poles(some, wanted[at])
+            out = np.full((len(poles), max(poles.shape[1], fetched.shape[1])), np.nan, dtype=complex)
+            out[:, : poles.shape[1]] = poles
+            out[at] = np.nan
+            out[at, : fetched.shape[1]] = fetched
+            poles = out
+    return poles
 
 
 def statics(loops: Loops, stable: BoolArray, names: set[str]) -> dict[str, FloatArray]:
@@ -287,7 +310,9 @@ def _unless(diverges: BoolArray, value: FloatArray, stable: BoolArray) -> FloatA
     return np.where(stable & diverges, np.inf, value)
 
 
-def _early_damping(loops: Loops, stable: BoolArray, poles: ComplexArray, measure: Measure) -> FloatArray:
+def _early_damping(
+    loops: Loops, stable: BoolArray, poles: ComplexArray, reach: FloatArray, measure: Measure
+) -> FloatArray:
     """Damping ratio with `below`; by the usual rule for unstable loops alone (all poles), else NaN."""
     if measure.below is None:
         out = np.full(len(loops), np.nan)
@@ -297,7 +322,7 @@ def _early_damping(loops: Loops, stable: BoolArray, poles: ComplexArray, measure
         return out
     limit = measure.below * loops.time_scale
     if _delayed(loops):
-        poles = _reaching(loops, poles, limit)
+        poles = _reaching(loops, poles, reach, limit)
     with np.errstate(invalid="ignore"):
         near = least_damping(loops, poles, np.abs(poles) <= limit[:, None])
     return with_far_poles(loops, near, limit)

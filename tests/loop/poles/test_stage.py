@@ -6,6 +6,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from synth.loop.closed_loop import Rational, close
+from synth.loop.poles.delayed import delayed_poles, further_poles
 from synth.loop.poles.stage import counted_poles, pole_stage
 from synth.loop.quantities import EVERY_QUANTITY, Measure
 
@@ -230,6 +231,45 @@ def test_dominant_root_of_an_integrator_with_dead_time():
     root = -si(loops, stage, "decay_rate")
     assert root + 0.2 * np.exp(-root) == pytest.approx(0.0, abs=1e-14)
     assert -1.0 < root < 0.0
+
+
+def test_poles_with_dead_time_are_found_where_something_asks_for_them():
+    stable, unstable = loop([1.0], [1.0, 0.0], dead_time=0.5), loop([9.0], [1.0, 0.0], dead_time=0.5)
+    for loops, verdict in ((stable, True), (unstable, False)):
+        whole = pole_stage(loops, ())
+        few = pole_stage(loops, (Measure("sensitivity_peak"), Measure("static_error")))
+        assert whole.stable[0] == few.stable[0] == verdict
+        assert np.isfinite(whole.abscissa[0])
+        if verdict:
+            assert few.poles.shape == (1, 0)
+            assert np.isnan(few.abscissa[0])
+        else:
+            np.testing.assert_array_equal(few.poles, whole.poles)
+            assert few.abscissa[0] == whole.abscissa[0]
+    # a count that is asked for after all fetches what it needs
+    few = pole_stage(stable, (Measure("sensitivity_peak"),))
+    whole = pole_stage(stable, ())
+    for fall in (3.0, np.nan):
+        asked = (Measure("damping_ratio"), Measure("natural_frequency"))
+        late = few.count(stable, asked, np.full(1, fall))
+        at_once = whole.count(stable, asked, np.full(1, fall))
+        for measure in asked:
+            assert late[measure][0] == pytest.approx(at_once[measure][0], rel=1e-12)
+
+
+def test_poles_further_out_join_the_known_ones():
+    loops = loop([0.5, 1.0], [1.0, 0.3, 0.0], dead_time=0.8)
+    known = delayed_poles(loops, np.zeros(1))
+    for reach in (0.0, 20.0, 90.0):
+        wanted = np.full(1, reach) * loops.time_scale
+        found = further_poles(loops, known, wanted)[0]
+        whole = delayed_poles(loops, wanted)[0]
+        found = found[np.isfinite(found)]
+        inside = whole[np.abs(whole) <= wanted[0]]
+        assert len(found) >= len(inside)
+        assert all(np.abs(found - p).min() < 1e-12 * np.abs(p) for p in inside)
+        assert all(np.abs(found - p).min() < 1e-12 * np.abs(p) for p in known[0][np.isfinite(known[0])])
+        assert (np.abs(found[:, None] - found[None, :]) + np.eye(len(found)) > 1e-9).all()
 
 
 def test_counting_with_dead_time_reaches_as_far_as_the_rule_says():
