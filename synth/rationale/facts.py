@@ -176,6 +176,9 @@ def reached(scene: Scene, scan: Scan) -> float:
     The search steers by stand-ins (how far a response is from its band at the limit, say), so what it calls
     the slack of a point that falls short is none of the sheet's: there the scored candidates speak alone.
     """
+    listed = [c.worst_slack for c in scene.outcome.candidates if scan.structure in (c.structure, *c.also)]
+    if listed and scene.spec.prefer is None:  # the list has its best, on every case there is by now
+        return max(listed)
     found = [c.worst_slack for c in _scored(scene) if scan.structure in (c.structure, *c.also)]
     return max([*found, scan.best_slack] if scan.best_slack >= 0.0 else found, default=-math.inf)
 

@@ -48,7 +48,7 @@ def _plant(check: Check, width: int) -> list[Text]:
         roots = part.get(key, [])
         listed = [_root(re, im) for re, im in cast("list[list[float]]", roots) if im >= 0.0]
         if listed:
-            lines.append(hanging(f"  {word}  ", ", ".join(listed) + " rad/s", width))
+            lines.append(hanging(f"  {word}  ", "; ".join(listed), width))
     nominal = part["cases"][0]
     if nominal["dead_time"]:
         lines.append(Text(f"  dead time  {quantity(nominal['dead_time'], 's')}"))
@@ -62,7 +62,7 @@ def _plant(check: Check, width: int) -> list[Text]:
 
 def _root(re: float, im: float) -> str:
     if im == 0.0:
-        return figure(re)
+        return f"{figure(re)} rad/s"
     size = math.hypot(re, im)
     return f"{figure(re)} ± {figure(im)}j ({figure(size)} rad/s, damping ratio {figure(-re / size, 3)})"
 

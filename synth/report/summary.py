@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from itertools import pairwise
 
 from rich.cells import cell_len
 from rich.text import Text
@@ -57,6 +58,9 @@ def ranked(record: Record, width: int) -> list[Text]:
         reserve = f", with {100.0 * prefer['reserve']:g} % of slack kept" if prefer["reserve"] else ""
         words = f"those that meet everything by {quantity_name(prefer['quantity'])}, {least} first{reserve}"
         lines.append(hanging("  ", words, width, style="dim"))
+    elif candidates[0]["meets_all"] and not _falling(candidates):
+        words = "by slack less a charge for each tuned value; what hardly follows the reference comes last"
+        lines.append(hanging("  ", words, width, style="dim"))
     beside = width >= NARROW  # else what holds a candidate back stands below it
     table = Columns((">", "<", ">", ">", "<") if beside else (">", "<", ">", ">"), indent=1)
     table.add("", "structure", "order", "slack", *(("held back by",) if beside else ()), style="dim")
@@ -82,6 +86,12 @@ def ranked(record: Record, width: int) -> list[Text]:
                 Text("      second opinion disagrees: do not use before it is understood", style="bad")
             )
     return lines
+
+
+def _falling(candidates: list[Candidate]) -> bool:
+    """Whether the slacks of those that meet everything fall down the list, as a reader expects."""
+    slacks = [number(c["worst_slack"]) for c in candidates if c["meets_all"]]
+    return all(first >= second for first, second in pairwise(slacks))
 
 
 def _examined(record: Record) -> str:

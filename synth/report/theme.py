@@ -98,7 +98,8 @@ def _breaks(text: str, room: int) -> list[int]:
     words = list(re.finditer(r"[^ ]+", text))
     groups: list[tuple[int, int]] = []  # what must stay together
     for before, word in zip([None, *words], words, strict=False):
-        if before is not None and word.group().rstrip(".,;:)") in _UNITS and before.group()[-1].isdigit():
+        after = before is not None and (before.group()[-1].isdigit() or before.group() in _UNITS)
+        if after and word.group().rstrip(".,;:)") in _UNITS:
             groups[-1] = (groups[-1][0], word.end())
         else:
             groups.append((word.start(), word.end()))

@@ -8,6 +8,7 @@ from pathlib import Path
 import pytest
 
 from synth.report import one_candidate, page
+from synth.report.theme import Columns, hanging
 
 
 def test_the_whole_page_at_80_columns(record, drawn):
@@ -137,3 +138,27 @@ def test_where_no_single_limit_does_it_that_is_said(record, drawn):
     assert "What it would take\n  No single limit was found that, moved alone," in drawn(page(record, 80))
     stopped = record | {"search": record["search"] | {"interrupted": True}}
     assert "What it would take" not in drawn(page(stopped, 80))
+
+
+def test_an_order_that_is_not_that_of_the_slacks_is_explained(record, drawn):
+    words = "by slack less a charge for each tuned value"
+    assert words not in drawn(page(record, 80))
+    first, second = record["candidates"]
+    second |= {"meets_all": True, "worst_slack": 2.0 * first["worst_slack"]}
+    assert words in drawn(page(record, 80))
+
+
+@pytest.mark.parametrize("width", range(20, 34))
+def test_a_number_and_its_unit_of_two_words_stay_on_one_line(drawn, width):
+    text = drawn([hanging("  ", "u jumps to 39.4 N m at the instant of it", width)], width)
+    assert "39.4 N m" in text
+
+
+def test_a_narrow_page_keeps_what_matters_of_a_table(drawn):
+    table = Columns(("<", ">", "<", "<"), spare=((2,),))
+    table.add("settling time", "0.88 s", "≤ 1.5 s", "on the second payload")
+    wide = ["  settling time  0.88 s  ≤ 1.5 s  on the second payload\n"]
+    assert [drawn(table.lines(width)) for width in (80,)] == wide
+    assert drawn(table.lines(48)) == "  settling time  0.88 s  ≤ 1.5 s  on the second…\n"
+    assert drawn(table.lines(35)) == "  settling time\n    0.88 s  ≤ 1.5 s  on the second…\n"
+    assert drawn(table.lines(26)) == "  settling time\n    0.88 s  on the second…\n"
