@@ -21,8 +21,8 @@ from synth.loop.time.true_modes import TrueModes, geometric
 MOST_DELAYS, MOST_PANELS = 1536, 6144
 # Delays marched before the modes are tried: sooner they hardly ever meet.
 SOONEST = 3
-# Places of a delay at which the modes are compared with what was marched: the modes that are left out turn
-# faster than those that are kept, but eight times a delay only where they have died.
+# Places of a delay at which the modes are compared with what was marched: enough to see modes that turn up
+# to eight times a delay, and those that turn faster die long before the first that are left out.
 PLACES = 16
 # The modes are trusted where they meet the marched response over a whole delay to this part of its unit.
 AGREES = 3e-9

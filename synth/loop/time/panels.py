@@ -1,6 +1,6 @@
 """Signals cut into panels of 13 values each, and what can be said of them without looking between the nodes.
 
-M loops, B panels in order of loop and time, S signals.
+M loops, B panels in order of loop and time. S signals of M loops are stacked as S M loops.
 """
 
 from __future__ import annotations

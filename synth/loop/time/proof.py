@@ -139,7 +139,9 @@ def unproven(claims: Sequence[Claim], loops: int) -> list[BoolArray]:
     )
     weights = (signal[:, None, :] @ _OF_CELL[cell])[:, 0]
     left = np.flatnonzero(~(_one_sign(weights, 1, _SLOPE) | _one_sign(weights, 2, _BEND)))
-    left = _halved(left, weights[left], low, high)
+    some = low[left] <= high[left]
+    halved = _halved(left[some], weights[left[some]], low, high)
+    left = np.append(left[~some], halved)  # no halving makes a cell simple that has to be so as a whole
     out = np.zeros((len(claims), loops), dtype=bool)
     out[np.searchsorted(edges, left, side="right") - 1, np.concatenate([c.loop for c in claims])[left]] = True
     return list(out)
