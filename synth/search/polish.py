@@ -17,7 +17,7 @@ Figures (steps, factors, limits) were measured on the families of benchmarks/pro
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -26,6 +26,7 @@ from synth.search.archive import Rows, joined
 from synth.search.goals import Goals, Terms, terms
 from synth.search.linear_step import Step, maximin_step
 from synth.search.objective import Objective
+from synth.search.planes import Planes
 
 TRIALS = (1.0, 0.5, 0.2)
 GROWTH = (1.8, 0.9, 0.45)  # of the radius when the trial of the same place was best
@@ -56,6 +57,7 @@ class Pace:
     halve           after these iterations the worse half of each structure's rows is dropped, down to `field`
     second          second differences in place of gathered curvature: dearer, for the last digits of an
                     optimum
+    planes          how many slopes of other points are minded besides a row's own, see `planes`
     """
 
     radius: float = 0.4
@@ -64,6 +66,7 @@ class Pace:
     halve: tuple[int, ...] = (3, 6)
     field: int = 5
     second: bool = False
+    planes: int = 0
 
 
 def polish(
@@ -78,7 +81,7 @@ def polish(
     iteration."""
     pace = pace or Pace()
     goals = goals or Goals.same(len(rows))
-    field = _Field(objective, rows, goals, pace.radius)
+    field = _Field(objective, rows, goals, pace)
     for iteration in range(pace.iterations):
         index = np.flatnonzero(field.running)
         if index.size == 0 or (stop is not None and stop()):
@@ -112,14 +115,14 @@ class _Known:
 class _Field:
     """The rows of one polish and where they stand."""
 
-    def __init__(self, objective: Objective, rows: Rows, goals: Goals, radius: float) -> None:
+    def __init__(self, objective: Objective, rows: Rows, goals: Goals, pace: Pace) -> None:
         self.objective, self.rows, self.goals = objective, rows, goals
         scores = objective.score(rows)
         state = terms(objective, goals, scores)
         self.x = rows.x.copy()
         self.constraint, self.cap, self.gain = state.constraint, state.cap, state.gain
         self.merit, self.worst, self.stable = state.merit(), scores.worst(), scores.stable.copy()
-        self.radius = np.full(len(rows), radius)
+        self.radius = np.full(len(rows), pace.radius)
         self.running = np.ones(len(rows), dtype=bool)
         self.dropped = np.zeros(len(rows), dtype=bool)
         self.low, self.high, self.free = objective.limits(rows)
@@ -134,6 +137,7 @@ class _Field:
             np.zeros((count, variables, variables)),
             np.zeros(count, dtype=bool),
         )
+        self.planes = Planes.of(pace.planes, self.x, self.constraint)
 
     def advance(self, index: IntArray, pace: Pace) -> None:
         """One iteration of the rows named by `index`."""
@@ -145,7 +149,10 @@ class _Field:
             None if self.gain is None else self.gain[index],
             goals.penalty,
         )
-        slope, gain_slope = self._slopes(index, here, goals, now)
+        if pace.planes:
+            slope, gain_slope = self._slopes_of_several(index, here, goals, now)
+        else:
+            slope, gain_slope = self._slopes(index, here, goals, now)
         if pace.second:
             first = self._step(index, now, slope, gain_slope, None)
             curvature = self._second_differences(index, here, goals, now, first)
@@ -164,9 +171,12 @@ class _Field:
         curvature: FloatArray | None,
     ) -> Step:
         room = np.where(self.free[index], self.radius[index, None], 0.0)
-        return maximin_step(
-            now.constraint,
-            slope,
+        level, level_slope = self.planes.beside(
+            index, self.x[index], now.constraint, slope, self.radius[index]
+        )
+        step = maximin_step(
+            level,
+            level_slope,
             -np.minimum(room, np.maximum(self.x[index] - self.low[index], 0.0)),
             np.minimum(room, np.maximum(self.high[index] - self.x[index], 0.0)),
             gain=now.gain,
@@ -175,6 +185,7 @@ class _Field:
             cap=now.cap,
             curvature=curvature,
         )
+        return replace(step, multipliers=step.multipliers[:, : now.constraint.shape[1]])
 
     def _try(self, index: IntArray, here: Rows, goals: Goals, step: Step, pace: Pace) -> None:
         """Score the trial points, move to the best where it is better, and let the radius follow."""
@@ -192,9 +203,32 @@ class _Field:
         if self.gain is not None and ahead.gain is not None:
             self.gain[moved] = ahead.gain[source]
         self.worst[moved], self.stable[moved] = tried.worst()[source], tried.stable[source]
+        if pace.planes:
+            self.planes.look(index, self.x[index], self.constraint[index])
+            nearest = np.arange((len(TRIALS) - 1) * index.size, len(TRIALS) * index.size)
+            drop = np.abs(_difference(ahead.constraint[nearest], self.constraint[index])).max(axis=1)
+            failed = ~better & (drop <= CLIFF)
+            self.planes.look(index[failed], points.x[nearest[failed]], ahead.constraint[nearest[failed]])
         factor = np.where(better, np.array(GROWTH)[choice], SHRINK)
         self.radius[index] = np.minimum(self.radius[index] * factor, LARGEST_RADIUS)
         self.running[index] = self.radius[index] >= pace.least
+
+    def _slopes_of_several(
+        self, index: IntArray, here: Rows, goals: Goals, now: Terms
+    ) -> tuple[FloatArray, FloatArray | None]:
+        """Slopes as of `_slopes`; a row that did not move has its own already, and takes those of the nearest
+        point that it failed to move to."""
+        planes, known = self.planes, self.known
+        there = here.at(planes.there[index])
+        slope, gain_slope = self._slopes(
+            index, there, goals, replace(now, constraint=planes.value_there[index])
+        )
+        planes.add(index, slope)
+        elsewhere = (there.x != here.x).any(axis=1)[:, None, None]
+        slope = np.where(elsewhere, known.slope[index], slope)
+        if gain_slope is not None:
+            gain_slope = np.where(elsewhere, known.gain_slope[index], gain_slope)
+        return slope, gain_slope
 
     def _slopes(
         self, index: IntArray, here: Rows, goals: Goals, now: Terms
@@ -276,10 +310,16 @@ class _Field:
         return positive(hessian / length[:, None, None] ** 2)
 
 
+def _difference(ahead: FloatArray, base: FloatArray) -> FloatArray:
+    """Differences, 0 where both are absent."""
+    with np.errstate(invalid="ignore"):
+        out: FloatArray = np.where(ahead == base, 0.0, ahead - base)
+    return out
+
+
 def _change(ahead: FloatArray, base: FloatArray) -> FloatArray:
     """Differences, 0 where one of them is absent or fell off a cliff."""
-    with np.errstate(invalid="ignore"):
-        change = ahead - base
+    change = _difference(ahead, base)
     out: FloatArray = np.where(np.isfinite(change) & (np.abs(change) <= CLIFF), change, 0.0)
     return out
 

@@ -18,8 +18,8 @@ from synth.search.outcome import Aim
 from synth.search.polish import Pace
 from synth.search.wish_starts import fresh, from_archive, from_inside, lifted
 
-WISH_PACE = Pace(radius=0.2, iterations=20, least=1e-4, halve=(3, 6), field=4)
-AGAIN_PACE = Pace(radius=0.05, iterations=20, least=1e-5, halve=(3,), field=1, second=True)
+WISH_PACE = Pace(radius=0.2, iterations=20, least=1e-4, halve=(3, 6), field=4, planes=4)
+AGAIN_PACE = Pace(radius=0.05, iterations=20, least=1e-5, halve=(3,), field=1, second=True, planes=4)
 PASSES = 2  # what a structure gains by a simpler one may lift one that contains it in turn
 
 
