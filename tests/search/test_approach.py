@@ -1,9 +1,12 @@
 """The closest approach is told in exact slack, not in that of the stand-in that leads the search."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from sheets import servo
 
+from synth.loop.closed_loop import Rational
 from synth.search import Settings, propose
 from synth.search.approach import nearest
 from synth.search.campaign import Campaign
@@ -39,17 +42,39 @@ def test_nothing_drawn_round_it_comes_nearer(short, name):
     assert objective.score(around).worst().max() <= told(short, name) + 5e-3
 
 
-def test_where_another_meets_the_sheet_the_best_that_was_scored_is_told():
-    limits = (("damping_ratio", "min", 0.6), ("settling_time", "max", 0.25), ("sensitivity_peak", "max", 1.5))
+def campaign_of(limits):
     campaign = Campaign(servo(("P", "PD"), limits=limits), Settings(budget="quick"))
     campaign.run()
     assert campaign.standings[0].best < 0.0 <= campaign.standings[1].best
+    return campaign
+
+
+def test_where_the_search_steers_by_the_exact_slack_its_best_is_told_for_nothing():
+    campaign = campaign_of((("damping_ratio", "min", 0.6), ("bandwidth", "min", 40.0)))
     scored = campaign.objective.evaluations
     rows = nearest(campaign)
     assert campaign.objective.evaluations == scored
     assert rows.structure.tolist() == [0]
     every, slack, _, _ = campaign.objective.archive.all()
     assert campaign.objective.score(rows).worst()[0] == slack[every.structure == 0].min(axis=1).max()
+
+
+def test_where_a_stand_in_led_elsewhere_the_exact_best_is_looked_for():
+    limits = (("settling_time", "max", 0.25), ("overshoot", "max", 2.0), ("sensitivity_peak", "max", 1.8))
+    campaign = campaign_of(limits)
+    top = campaign.standings[0].tops
+    objective = campaign.objective
+    line = objective.rows_of(0, np.exp(np.linspace(-3.0, 6.0, 20_001))[:, None])
+    best = objective.score(line, remember=False).worst().max()
+    assert objective.score(top, remember=False).worst().max() < best - 0.02
+    assert objective.score(nearest(campaign)).worst().max() == pytest.approx(best, abs=2e-3)
+
+
+def test_where_nothing_is_stable_there_is_no_row_to_tell():
+    task = replace(servo(("P", "PI"), limits=TIGHT), plants=Rational.of([1.0], [1.0, 0.0, -1.0]))
+    campaign = Campaign(task, Settings(budget="quick"))
+    campaign.run()
+    assert len(nearest(campaign)) == 0
 
 
 def test_nothing_is_told_where_all_meet_the_sheet():
