@@ -54,7 +54,8 @@ class Evaluation:
                  least the true one's upper bound
     approximate  same shape: True where the error bound of the quantity was not reached
     stable       (B, K) or (M,)
-    abscissa     (B, K) or (M,) largest real part of the poles [1/s]; the negative of the decay rate
+    abscissa     (B, K) or (M,) largest real part of the poles [1/s]; the negative of the decay rate. NaN for
+                 a stable loop with dead time where no measure asks for a pole
     reached      (B, K) or (M,) last stage run: 0 poles, 1 frequency, 2 time
     """
 

@@ -26,7 +26,6 @@ _OCTAVES = 40  # of one window: x from 2^-20 to 2^20, three decades of ω to eit
 _RANGE = 480  # most powers of two that x^m may span on one side of a window
 _WINDOWS = 400  # windows to either side before giving up: beyond any double
 _NARROW = 1e-10  # relative width below which two roots are one touch
-_CROWD = np.arange(-2.0, 27.0) / 24.0  # places of nodes in an interval that could not be decided
 _BLOCK = 150_000  # doubles of one matrix product: it stays in the second-level cache
 
 
@@ -61,7 +60,7 @@ def isolate(polynomials: FloatArray, hint: FloatArray | None = None) -> Brackets
     Brackets in no order. Roots closer together than 1e-10 (relative) may be reported as none or one.
     """
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]] = []
-    _search(polynomials, hint, found, None)
+    _search(polynomials, hint, found)
     if not found:
         nothing = np.empty(0)
         return Brackets(np.empty(0, dtype=np.intp), nothing, nothing, np.empty(0, dtype=bool))
@@ -69,39 +68,20 @@ def isolate(polynomials: FloatArray, hint: FloatArray | None = None) -> Brackets
     return Brackets(row, low, high, negative)
 
 
-def light_roots(polynomials: FloatArray) -> tuple[IntArray, FloatArray]:
-    """Points that crowd round roots near the positive axis: (row, x), of polynomials positive on it.
-
-    Some two dozen for every interval that could not be decided: of |p(jω)|² they are the frequencies round a
-    lightly damped root of p, the closer together the lighter it is.
-    """
-    near: list[tuple[IntArray, FloatArray, FloatArray]] = []
-    _search(polynomials, None, [], near)
-    if not near:
-        return np.empty(0, dtype=np.intp), np.empty(0)
-    row, low, high = (np.concatenate(part) for part in zip(*near, strict=True))
-    places = low[:, None] + (high - low)[:, None] * _CROWD
-    return np.repeat(row, places.shape[1]), places.ravel()
-
-
 def _search(
     polynomials: FloatArray,
     hint: FloatArray | None,
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
-    near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
 ) -> None:
     """All windows that hold roots, beginning with the central one."""
     signs = _filled_signs(polynomials)
     count = changes(signs)  # Descartes on the whole axis: often there is nothing to do
-    if near is None:
-        _single(polynomials, signs, np.flatnonzero(count == 1), found)
-        rows = np.flatnonzero(count > 1)
-    else:
-        rows = np.flatnonzero(count)
+    _single(polynomials, signs, np.flatnonzero(count == 1), found)
+    rows = np.flatnonzero(count > 1)
     work = [(rows, 0, 0)] if rows.size else []
     while work:
         which, shift, side = work.pop()
-        below, above = _scan(polynomials, signs, hint, which, shift, found, near)
+        below, above = _scan(polynomials, signs, hint, which, shift, found)
         if side <= 0 and below.size and shift > -_WINDOWS:
             work.append((below, shift - 1, -1))
         if side >= 0 and above.size and shift < _WINDOWS:
@@ -186,7 +166,6 @@ def _scan(
     which: IntArray,
     shift: int,
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
-    near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
 ) -> tuple[IntArray, IntArray]:
     """One window, 2^(octaves · shift) times the central one, into `found`; returns rows with roots below and
     above it.
@@ -225,7 +204,6 @@ def _scan(
                 2.0 * low[many],
                 cut,
                 found,
-                near,
             )
     return np.concatenate(below), np.concatenate(above)
 
@@ -257,11 +235,8 @@ def halve(
     high: FloatArray,
     cut: FloatArray,
     found: list[tuple[IntArray, FloatArray, FloatArray, BoolArray]],
-    near: list[tuple[IntArray, FloatArray, FloatArray]] | None,
 ) -> None:
     """Cut intervals until each holds one root or none. cut : (F,) where to cut first, 0..1 of the width."""
-    if near is not None:
-        near.append((row, low, high))
     cut = np.where((cut > 1e-9) & (cut < 1.0 - 1e-9), cut, 0.5)
     while row.size:
         middle = low + cut * (high - low)
@@ -275,7 +250,5 @@ def halve(
         done = (count == 1) | ((count % 2 == 1) & narrow)
         found.append((row[done], low[done], high[done], negative[0, done]))
         keep = np.flatnonzero((count > 1) & ~narrow)
-        if near is not None:
-            near.append((row[keep], low[keep], high[keep]))
         coefficients, row, low, high = coefficients[:, keep], row[keep], low[keep], high[keep]
         cut = np.full(len(row), 0.5)

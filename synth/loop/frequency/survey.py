@@ -79,7 +79,7 @@ def sign_changes(cells: Open, edges: FloatArray, hint: FloatArray) -> Brackets:
         near = (hint[target] - low) / (high - low)
         usual = np.where(high > 2.5 * low, _WIDE, 0.5)
         cut = np.where((near > 1e-9) & (near < 1.0 - 1e-9), near, usual)
-        halve(cells.coefficients[:, many], target, low, high, cut, found, None)
+        halve(cells.coefficients[:, many], target, low, high, cut, found)
     target, low, high, before = (np.concatenate(part) for part in zip(*found, strict=True))
     return Brackets(target, low, high, before)
 

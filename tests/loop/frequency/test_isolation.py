@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from synth.loop.frequency.isolation import isolate, light_roots, split
+from synth.loop.frequency.isolation import isolate, split
 
 
 @pytest.mark.parametrize("degree", [1, 2, 3, 5, 8, 12])
@@ -67,16 +67,3 @@ def test_splitting_a_bernstein_form_keeps_its_values():
     middle, _ = split(left, np.full(3, 0.5))
     direct, _ = split(form, t / 2)
     np.testing.assert_allclose(middle[-1], direct[-1], rtol=1e-13)
-
-
-@pytest.mark.parametrize("damping", [0.02, 1e-3, 1e-4])
-def test_light_roots_are_crowded_round(damping):
-    p = np.polymul([1.0, 2 * damping * 3.0, 9.0], [1.0, 0.5])
-    e, o = np.array([p[3], -p[1]]), np.array([p[2], -p[0]])  # even and odd half in x
-    square = np.zeros(4)
-    square[:3] += np.convolve(e, e)
-    square[1:] += np.convolve(o, o)
-    _, x = light_roots(square[:, None])
-    w = np.sort(np.sqrt(x[x > 0]))
-    near = np.flatnonzero(np.abs(w - 3.0) < 3.0 * damping)
-    assert near.size >= 2
