@@ -123,13 +123,10 @@ class _Findings:
 
     def level_of_proof(self) -> FloatArray:
         """What is known of each target, and as much more as the digits of |Δ|² ask for."""
-        squares = self.response.squares
-        noise = np.empty((len(self.keys), self.m))
-        for i, p in enumerate(self.curves):
-            x = self.at[i * self.m : (i + 1) * self.m] ** 2
-            n2, d2, top = (polynomial(squares[:, k], x) for k in (N, D, int(p)))
-            with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-                noise[i] = _NOISE * (n2 + d2) * self.peaks[i] ** 2 / top
+        squares, x = self.response.squares, self.at.reshape(-1, self.m) ** 2
+        terms = polynomial(squares[:, N] + squares[:, D], x)
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            noise = _NOISE * terms * self.peaks**2 / polynomial(squares[:, self.curves], x)
         margin = np.clip(np.nan_to_num(noise, nan=0.0, posinf=1.0), _LEAST_MARGIN, _MOST_MARGIN)
         out: FloatArray = self.best * (1.0 + margin.ravel())
         return out
