@@ -31,7 +31,7 @@ class Panels:
     def signal(self, number: int, signals: int) -> tuple[slice, Panels]:
         """Where in these stacked panels one of the signals stands, and its panels."""
         loops = len(self.first) // signals
-        edges = np.append(self.first, len(self.owner))[:: loops or None]
+        edges = np.append(self.first, len(self.owner))[::loops]
         here = slice(int(edges[number]), int(edges[number + 1]))
         return here, Panels(
             self.owner[here] - loops * number,
@@ -55,6 +55,7 @@ class Panels:
     def over(self, reduce: np.ufunc, values: FloatArray, empty: float) -> FloatArray:
         """minimum, maximum or add of values (B,) over the panels of each loop; `empty` where it has none.
         (M,)."""
+        # one more value, which changes no result, so that the last loops too may begin where the panels end
         out: FloatArray = reduce.reduceat(np.append(values, empty), self.first)
         # where a loop has no panel the value is another's
         out[:-1][self.first[1:] == self.first[:-1]] = empty
