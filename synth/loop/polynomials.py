@@ -16,31 +16,34 @@ def horner(polynomials: FloatArray, points: ComplexArray) -> ComplexArray:
     polynomials : (M, n + 1), descending powers; points : (M, q). Returns (M, q).
     Relative rounding error of a value: about 2 n eps × sum of abs(a_k s^k) / abs(value).
     """
-    value = np.repeat(polynomials[:, :1].astype(complex), points.shape[1], axis=1)
+    columns = polynomials[:, :, None]
+    value = columns[:, 0].astype(complex).repeat(points.shape[1], axis=1)
     for k in range(1, polynomials.shape[1]):
         value *= points
-        value += polynomials[:, k, None]
+        value += columns[:, k]
     return value
 
 
 def horner_slope(polynomials: FloatArray, points: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
     """Values and first derivatives at the same points, (M, q) each."""
-    value = np.repeat(polynomials[:, :1].astype(complex), points.shape[1], axis=1)
+    columns = polynomials[:, :, None]
+    value = columns[:, 0].astype(complex).repeat(points.shape[1], axis=1)
     slope = np.zeros_like(value)
     for k in range(1, polynomials.shape[1]):
         slope *= points
         slope += value
         value *= points
-        value += polynomials[:, k, None]
+        value += columns[:, k]
     return value, slope
 
 
 def magnitude_sum(polynomials: FloatArray, radius: FloatArray) -> FloatArray:
     """Sum of abs(a_k) r^k, the yardstick of rounding in a value. (M, n + 1), (M, q) -> (M, q)."""
-    out: FloatArray = np.repeat(np.abs(polynomials[:, :1]), radius.shape[1], axis=1)
-    for k in range(1, polynomials.shape[1]):
+    size = np.abs(polynomials)[:, :, None]
+    out: FloatArray = size[:, 0].repeat(radius.shape[1], axis=1)
+    for k in range(1, size.shape[1]):
         out *= radius
-        out += np.abs(polynomials[:, k, None])
+        out += size[:, k]
     return out
 
 

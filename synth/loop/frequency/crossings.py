@@ -129,7 +129,7 @@ def newton(
     sign = np.where(negative, 1.0, -1.0)
     u = 0.5 * (bottom + top)
     result, holds = np.empty(len(u)), np.empty(len(u), dtype=bool)
-    active = np.arange(len(u))
+    active, done = np.arange(len(u)), np.zeros(len(u), dtype=bool)
     excess, last = result, np.full(len(u), np.nan)  # last: the step before, where it was Newton's
     for iteration in range(_ITERATIONS):
         excess, slope, side = equation.at(u)
@@ -142,12 +142,11 @@ def newton(
         step = np.abs(new - u)
         good = ((new >= bottom) & (new <= top)) | (step < tolerance)
         new = np.where(good, new, 0.5 * (bottom + top))
+        u = np.where(done, u, new)  # what is done stays, whatever the others still need
         # steps shrink as their squares: the next one is known before it is made
-        done = good & (
-            (step < tolerance) | ((step < _NEAR) & (step * step * step < 0.1 * tolerance * last * last))
-        )
-        done |= top - bottom < 1e-15
-        u, last = new, np.where(good, step, np.nan)
+        known = (step < _NEAR) & (step * step * step < 0.1 * tolerance * last * last)
+        done |= (good & ((step < tolerance) | known)) | (top - bottom < 1e-15)
+        last = np.where(good, step, np.nan)
         finished = np.count_nonzero(done)
         if finished == len(u):
             break
@@ -155,19 +154,22 @@ def newton(
             result[active[done]], holds[active[done]] = u[done], np.abs(excess[done]) < _HOLDS
             keep = np.flatnonzero(~done)
             active, u, bottom, top, sign = active[keep], u[keep], bottom[keep], top[keep], sign[keep]
-            excess, last = excess[keep], last[keep]
+            excess, last, done = excess[keep], last[keep], done[keep]
             equation.keep(keep)
     result[active], holds[active] = u, np.abs(excess) < _HOLDS
     return result, holds
 
 
 class _Rational:
-    """ln|ratio|² less its level, or the angle of ±N/D nearest to zero, for loops without dead time."""
+    """ln|ratio|² less its level, or the angle of ±N/D nearest to zero, for loops without dead time.
+
+    With the slope corrected by the bend Newton's steps are Halley's (E. Halley, 1694), of third order.
+    """
 
     def __init__(self, response: Response, kind: IntArray, row: IntArray, squared: FloatArray) -> None:
-        first = response.columns(N, row, 1)
-        second = response.columns(np.where(kind == FALL, CLOSED, D), row, 1)
-        self.columns = np.stack((first, second), axis=3)  # (h + 1, 2, 2, 2, F)
+        first = response.columns(N, row, 2)
+        second = response.columns(np.where(kind == FALL, CLOSED, D), row, 2)
+        self.columns = np.stack((first, second), axis=3)  # (h + 1, 3, 2, 2, F)
         self.offset = np.log(squared)
         self.phase = kind == PHASE
 
@@ -179,18 +181,18 @@ class _Rational:
         )
 
     def at(self, u: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-        value = complex_values(*evaluate(self.columns, np.exp(u)))  # (2 derivatives, 2 polynomials, F)
-        rate = value[1] / value[0]
-        rate, ratio = rate[0] - rate[1], value[0, 0] / value[0, 1]
-        gain = 2.0 * np.log(np.abs(ratio)) - self.offset
-        if not self.phase.any():
-            return gain, 2.0 * rate.real, gain
-        excess = np.where(self.phase, np.arctan(ratio.imag / ratio.real), gain)
-        return (
-            excess,
-            np.where(self.phase, rate.imag, 2.0 * rate.real),
-            np.where(self.phase, -ratio.imag, gain),
-        )
+        value = complex_values(*evaluate(self.columns, np.exp(u)))  # (3 derivatives, 2 polynomials, F)
+        rates, bends = value[1:] / value[0]
+        bends -= rates * rates
+        rate, bend, ratio = rates[0] - rates[1], bends[0] - bends[1], value[0, 0] / value[0, 1]
+        gain = np.log(np.abs(ratio)) - 0.5 * self.offset
+        excess, slope, bent, side = gain, rate.real, bend.real, gain
+        if self.phase.any():
+            excess = np.where(self.phase, np.arctan(ratio.imag / ratio.real), gain)
+            slope = np.where(self.phase, rate.imag, slope)
+            bent = np.where(self.phase, bend.imag, bent)
+            side = np.where(self.phase, -ratio.imag, gain)
+        return excess, slope - 0.5 * excess * bent / slope, side
 
 
 def loop_at(response: Response, row: IntArray, w: FloatArray) -> ComplexArray:

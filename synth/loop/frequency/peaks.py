@@ -198,7 +198,8 @@ def climb(
         low, high = np.where(rises, u, low), np.where(rises, high, u)
         new = u + slope / (2.0 * slope * slope - curvature)  # |Δ/P|² is smooth where the peak is sharp
         new = np.where((new >= low) & (new <= high), new, 0.5 * (low + high))
-        moving = np.abs(new - u) > 1e-9
+        step = np.abs(new - u)
+        moving = (step > 1e-9) & (step * np.abs(slope) > 1e-16)  # what the value gains is half of the product
         count = np.count_nonzero(moving)
         if count == 0:
             break

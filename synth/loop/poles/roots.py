@@ -90,7 +90,7 @@ def _polished(monic: FloatArray, roots: ComplexArray) -> ComplexArray:
     """One Aberth step from good roots, or up to four where roots many decades apart were not good enough."""
     better, moved = _aberth_step(monic, roots)
     for _ in range(3):
-        rough = np.flatnonzero(moved > ROUGH)
+        rough = (moved > ROUGH).nonzero()[0]
         if rough.size == 0:
             break
         better[rough], moved[rough] = _aberth_step(monic[rough], better[rough])
@@ -121,7 +121,7 @@ def _aberth_step(monic: FloatArray, roots: ComplexArray) -> tuple[ComplexArray, 
     better: ComplexArray = roots - step
     # the two halves of a pair see the same arithmetic but for the order of sums: make them conjugate again
     lower = roots.imag < 0.0
-    better[lower] = np.conj(better[np.roll(lower, -1, axis=1)])
+    better[:, 1:][lower[:, 1:]] = np.conj(better[:, :-1][lower[:, 1:]])
     better.imag[roots.imag == 0.0] = 0.0
     return better, moved
 
@@ -129,5 +129,4 @@ def _aberth_step(monic: FloatArray, roots: ComplexArray) -> tuple[ComplexArray, 
 def _sorted(roots: ComplexArray) -> ComplexArray:
     """By decreasing real part. A stable sort keeps pairs together, their halves having the same real part."""
     order = np.argsort(-roots.real, axis=1, kind="stable")
-    out: ComplexArray = np.take_along_axis(roots, order, axis=1)
-    return out
+    return roots[np.arange(len(roots))[:, None], order]
