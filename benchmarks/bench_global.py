@@ -7,6 +7,7 @@ steer by, which is the exact one wherever a structure meets the sheet.
 
 from __future__ import annotations
 
+import time
 from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
@@ -17,6 +18,7 @@ from problems import problems
 from tables import Table
 
 from synth.search import Settings, Task, propose
+from synth.search.dense import MOST_PARAMETERS, cover
 from synth.search.objective import Objective
 from synth.spec import read_spec
 
@@ -110,5 +112,44 @@ def on_sheets(folder: Path) -> Table:
     )
 
 
+def ceilings() -> Table:
+    """Whether the ceiling of a dense scan holds, and how often it says that nothing meets the sheet."""
+    told, exceeded, taken = [], 0, []
+    for p in problems(SHEETS, 0.02, push=True, seed=8300):
+        objective = Objective(p.task)
+        for n, scan in enumerate(propose(p.task, Settings()).scans):
+            parameters = len(p.task.structures[n].parameters)
+            if not 1 < parameters <= MOST_PARAMETERS or scan.best_slack >= 0.0:
+                continue
+            best = max(scan.best_slack, independent.search(objective, n, LEAST, seed=1).slack)
+            start = time.process_time()
+            with objective.approximating():
+                found = cover(objective, n, uncompressed(scan.best_slack))
+            taken.append(time.process_time() - start)
+            if found.ceiling is not None:
+                told.append(found.ceiling)
+                exceeded += uncompressed(best) > found.ceiling + NEAR
+    return Table(
+        f"Ceilings of dense scans, structures that do not meet one of {SHEETS} sheets",
+        ["scans", "with a ceiling", "below zero", "exceeded", "median s", "longest s"],
+        [
+            [
+                len(taken),
+                len(told),
+                sum(c < 0.0 for c in told),
+                exceeded,
+                float(np.median(taken)),
+                max(taken),
+            ]
+        ],
+        note=f"Exceeded: ours or an evolution of {LEAST} evaluations found more, by {NEAR} at least.",
+    )
+
+
+def uncompressed(slack: float) -> float:
+    """The search compresses what is below -1."""
+    return -float(np.exp(-1.0 - slack)) if slack < -1.0 else slack
+
+
 QUESTIONS = (sample,)
-LONG = (all_structures,)
+LONG = (all_structures, ceilings)

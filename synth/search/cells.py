@@ -21,7 +21,7 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 
-MARGIN = 2.0
+MARGIN = 2.0  # measured by `ceilings` of benchmarks/bench_global.py
 LOST = -1e3
 ENOUGH = 2e-3  # a cell that may lie above the best by no more than this is left whole
 AT_ONCE = 256  # cells divided together: what a call costs is shared
