@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from scipy.optimize import brentq
 
 from synth.loop.closed_loop import Rational, close
 from synth.loop.poles.encirclement import delayed_stable
@@ -61,3 +62,29 @@ def test_stable_gains_are_those_of_a_sweep(seed, n, theta):
     expected = delayed_stable(replace(rows, numerator=sweep[:, None] * rows.numerator))
     got = np.array([any(k in i for i in found) for k in sweep])
     np.testing.assert_array_equal(got, expected)
+
+
+@pytest.mark.parametrize(("beyond", "windows"), [(1e-6, 2), (1e-9, 2), (-1e-9, 1)])
+def test_a_window_of_gains_that_a_hair_of_phase_opens_is_found(beyond, windows):
+    # a light mode beside its zero turns the phase back to the negative axis, `beyond` rad past it or short of
+    # it: between the two crossings the loop is stable once more
+    mode, zero = np.array([1.0, 0.002, 1.0]), np.array([1.0, 0.0021, 1.0])
+    w = np.linspace(1.003, 1.008, 400_001)
+    phase = np.angle(np.polyval(zero, 1j * w) / np.polyval(mode, 1j * w)) + np.pi / 2
+
+    def excess(delay):
+        return (phase - w * delay).max() - beyond
+
+    delay = brentq(excess, 1.54, 1.56, xtol=1e-15, rtol=1e-15)
+    top = 1j * w[np.argmax(phase - w * delay)]
+    loops = unit_gain_loop(0.3 * zero, np.polymul(mode, [1.0, 0.0]), delay)
+    (found,) = stable_gain_intervals(loops)
+    assert len(found) == windows
+    if windows == 2:
+        there = 1.0 / abs(0.3 * np.polyval(zero, top) / np.polyval(mode, top) / top)
+        assert there in found[1]
+        assert found[1].high - found[1].low < 1e-3
+        gains = np.array([found[1].low - 1e-6, there, found[1].high + 1e-6])
+        rows = loops.rows(np.zeros(3, dtype=int))
+        verdict = delayed_stable(replace(rows, numerator=gains[:, None] * rows.numerator))
+        assert verdict.tolist() == [False, True, False]
