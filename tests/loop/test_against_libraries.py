@@ -181,6 +181,7 @@ def test_gain_margin_and_bandwidth(loop):
         return np.abs(1.0 - 1.0 / (1.0 + response(loop, x)))
 
     level = abs(values["final_value"]) / np.sqrt(2.0)
+    w = np.geomspace(1e-4, 1e4, 18001)  # a low level is passed late
     seen = t(w)
     falls = np.flatnonzero((seen[:-1] > level) & (seen[1:] <= level))
     fall = brentq(lambda x: t(x)[0] - level, w[falls[0]], w[falls[0] + 1], xtol=1e-14)
