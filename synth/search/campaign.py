@@ -16,9 +16,9 @@ from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.quantities import Measure
 from synth.rules import starts
 from synth.search.archive import Rows, distinct, joined
-from synth.search.embed import embedded
 from synth.search.evolution import evolve
 from synth.search.gain_line import Intervals, refined, stable_gains
+from synth.search.nesting import nest
 from synth.search.objective import Objective
 from synth.search.outcome import Progress, ProgressCall, Settings, StopCall, Task
 from synth.search.polish import EXACT_PACE, Pace, Polished, polish
@@ -47,12 +47,7 @@ PICKS = 10
 LEAST_GENERATIONS = 4
 ROUGH_PACE = Pace(least=1e-3)  # where a stand-in leads: the last digits are not its own
 NARROW_ROUNDS = 4  # of a structure that misses by a hair where nothing meets: agreement is not enough there
-# By which a simpler structure has to stand higher before its points are tried in a larger one; the second
-# where a stand-in leads.
-LIFT, ROUGH_LIFT = 2e-4, 2e-3
 AGAIN_PACE = Pace(radius=0.15, iterations=10, halve=(3,))
-NESTED_PACE = Pace(radius=0.2, iterations=8, least=1e-3, halve=(2,), field=1)
-NESTED = 3  # of those points are polished
 EXACT_TOPS = 2
 MOST_CASE_TURNS = 12
 # Where another structure meets the sheet, one that stays short of the first is not pursued beyond two rounds,
@@ -181,53 +176,7 @@ class Campaign:
         self.enter("exploration")
         self._explore()
         self.enter("nesting")
-        self.nest()
-
-    def nest(self) -> None:
-        """A structure that contains a simpler one comes out no worse: where the simpler one stands higher,
-        its best points are written in the parameters of the larger one and polished on.
-
-        Twice, since what a structure gains this way may lift one that contains it in turn.
-        """
-        for _ in range(2):
-            changed = self._lifted()
-            if not changed or self.halted():
-                break
-            self.examine(changed)
-
-    def _lifted(self) -> list[int]:
-        parts: list[Rows] = []
-        owners: list[int] = []
-        for large in self.standings:
-            if large.parameters == 1:
-                continue
-            lift = ROUGH_LIFT if self.objective.by_stand_in else LIFT
-            for small in self.standings:
-                if small.tops is None or small.best <= large.best + lift or small is large:
-                    continue
-                rows = embedded(
-                    self.objective, small.tops.take(np.arange(min(2, len(small.tops)))), large.number
-                )
-                if rows is None:
-                    continue
-                parts.append(rows)
-                owners.append(large.number)
-                active = self.objective.active
-                more = [c for c in active[small.number] if c not in active[large.number]]
-                if more:  # what the simpler one was judged on
-                    active[large.number] = (*active[large.number], *more)
-        if not parts:
-            return []
-        owners = sorted(set(owners))
-        before = {n: self.standings[n].best for n in owners}
-        rows = joined(parts)
-        guide = self.objective.score(rows).guide()
-        picks = [i[np.argsort(-guide[i], kind="stable")[:NESTED]] for i in _by_structure(rows)]
-        self.polish_in(rows.take(np.concatenate(picks)), NESTED_PACE)
-        changed = [n for n in owners if self.standings[n].best > before[n]]
-        for n in changed:
-            self.standings[n].judge()
-        return changed
+        nest(self)
 
     def _explore(self) -> None:
         """The outer layer, where the rounds left doubt: hard sheets, and always on a thorough budget."""
@@ -406,8 +355,3 @@ class Campaign:
         found = [s for s in self.standings if s.tops is not None]
         rows = joined([self._top(s.number) for s in found])
         return np.array([s.number for s in found]), rows, np.array([s.best for s in found])
-
-
-def _by_structure(rows: Rows) -> list[IntArray]:
-    """Row numbers of each structure."""
-    return [np.flatnonzero(rows.structure == n) for n in np.unique(rows.structure)]

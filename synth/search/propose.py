@@ -26,6 +26,7 @@ from synth.search.finals import (
     simplest,
     with_fragility,
 )
+from synth.search.nesting import nest
 from synth.search.outcome import (
     Candidate,
     Outcome,
@@ -79,7 +80,7 @@ def _outcome(campaign: Campaign, seeds: Sequence[Seed]) -> Outcome:
         campaign.enter("dense scans")
         if dense_scans(campaign):
             campaign.examine(list(range(len(campaign.standings))))
-            campaign.nest()
+            nest(campaign)
             found, listed, wish_rows = _listed(campaign, wish_rows)
     examined = 0
     for _ in range(BOX_TURNS):
