@@ -26,11 +26,12 @@ from synth.loop.frequency.isolation import Brackets
 from synth.loop.frequency.peaks import CURVES, climb
 from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, log_rates, polynomial, tamed
 from synth.loop.frequency.survey import Open, begun, joined, open_cells, promising, sign_changes
-from synth.loop.frequency.upper_end import last_with_gain, noise_range
+from synth.loop.frequency.upper_end import fall_range, last_with_gain, noise_ranges
 
 _FARTHEST = 20_000.0  # rad: where the search for ever smaller ripples ends
 _ROUNDS = 12
-_CELLS = 32  # looked at in one go where |C S| has its far top
+_CELLS = 64  # looked at in one go for far falls, and where |C S| has its far top
+_ZOOMS = 6  # that find the top of its bound
 _MOST_CELLS = 2048  # looked at in one go anywhere else
 _LEAST_MARGIN = 1e-8  # relative, of the level above the peak in the test
 _MOST_MARGIN = 2e-7
@@ -55,7 +56,7 @@ class _Findings:
         none = np.zeros(0, dtype=np.intp)
         nowhere = np.zeros(0), np.zeros(0, dtype=bool), np.zeros(0, dtype=complex)
         self.found = [Crossings(none, none, *nowhere)]
-        self.fallen = np.zeros(self.m, dtype=bool)
+        self.fallen, self.last_fall = np.zeros(self.m, dtype=bool), np.zeros(self.m)
         ends = np.abs(response.ends)
         self.gain_end = ends[1, N] / ends[1, D]
         self.largest_up = (
@@ -81,11 +82,11 @@ class _Findings:
         out &= (size > gain / (1.0 + gain)) & (gain > 0.0)
         return out
 
-    def look(self, edges: FloatArray, tables: FloatArray, rows: IntArray) -> None:
-        """Everything that loops `rows` have on the cells between `edges`."""
+    def look(self, edges: FloatArray, tables: FloatArray, rows: IntArray, kinds: tuple[int, ...]) -> None:
+        """The peaks and the crossings of `kinds` that loops `rows` have on the cells between `edges`."""
         self._climb_most_promising(edges, tables, rows)
         targets = (np.arange(len(self.keys))[:, None] * self.m + rows).ravel()
-        self._prove(edges, tables, targets, self._crossings(tables, rows))
+        self._prove(edges, tables, targets, self._crossings(tables, rows, kinds))
 
     def _prove(self, edges: FloatArray, tables: FloatArray, targets: IntArray, crossings: list[Open]) -> None:
         """Raise the levels of `targets` until the cells exceed none; with them isolate `crossings`."""
@@ -131,14 +132,14 @@ class _Findings:
         out: FloatArray = self.best * (1.0 + margin.ravel())
         return out
 
-    def _crossings(self, tables: FloatArray, rows: IntArray) -> list[Open]:
+    def _crossings(self, tables: FloatArray, rows: IntArray, kinds: tuple[int, ...]) -> list[Open]:
         """Cells on which |T| may pass its level, or L the real axis."""
         out = []
         first = len(self.keys) * self.m
-        if FALL in self.kinds:
+        if FALL in kinds:
             passing = self.form.below(_PLACE[N], self.level[rows], rows)
             out.append(open_cells(tables, passing, first + rows, below=False))
-        if PHASE in self.kinds:
+        if PHASE in kinds:
             out.append(open_cells(tables, self.form.turned[:, rows], first + self.m + rows, below=False))
         return out
 
@@ -170,6 +171,7 @@ class _Findings:
             np.maximum.at(self.largest_up, row[below], size[below])
         else:
             self.fallen[row[down]] = True
+            np.maximum.at(self.last_fall, row[down], w[down])
 
     def _climb_between(self, parts: list[Brackets], last: float, level: FloatArray) -> None:
         """Climb where a curve is above its level: from each place where it passes it upwards to the next
@@ -237,7 +239,7 @@ class _Findings:
 
     def end(self, floor: float, rows: IntArray) -> FloatArray:
         """Angle beyond `floor` above which |L| is so small that nothing found of the loops `rows` can be
-        bettered; 0 where there is none. |C S| is left out: see `look_for_noise`."""
+        bettered; 0 where there is none. Falls and |C S| are left out, and looked for below."""
         level = self.level_of_proof().reshape(-1, self.m)[:, rows]
         limits = [np.full(len(rows), np.inf)]
         for i, p in enumerate(self.curves):
@@ -247,10 +249,6 @@ class _Findings:
                 limits.append(level[i] / (1.0 + level[i]))
         if PHASE in self.kinds:
             limits.append(self.largest_up[rows])
-        if FALL in self.kinds:
-            size = np.sqrt(self.level[rows])
-            done = (self.recurring() & self.fallen)[rows] | (size == 0.0)
-            limits.append(np.where(done, np.inf, size / (1.0 + size)))
         # a limit that |L| only tends to is passed for ever: the circle |L(∞)| itself is among the findings
         limit = np.maximum(np.min(limits, axis=0), self.gain_end[rows]) * (1.0 + 1e-9)
         squares = self.form.squares[:2, :, rows]
@@ -268,8 +266,39 @@ class _Findings:
                 count = min(float(end.max()) - start, start) / STEP  # twice as far each time
                 # a peak that lies across the start is seen as a whole
                 edges: FloatArray = (start + STEP * np.arange(-1.0, min(int(count), _MOST_CELLS) + 2.0)) ** 2
-                self.look(edges, cell_tables(edges, self.form.n), rows)
+                self.look(
+                    edges, cell_tables(edges, self.form.n), rows, (PHASE,) if PHASE in self.kinds else ()
+                )
                 start = float(np.sqrt(edges[-1]))
+
+    def look_for_falls(self, floor: float) -> None:
+        """Passages of |T| through its level beyond the angle `floor`: up to the first fall, where there is
+        none so far, and down to the last."""
+        x = np.full(self.m, floor * floor)
+        first, last = (np.sqrt(v) for v in fall_range(self.form.squares, self.level, x))
+        recurring = self.recurring()
+        last[recurring] = _FARTHEST
+        place, todo = first.copy(), (first < last) & ~self.fallen
+        while todo.any():
+            start = float(place[todo].min())
+            rows = np.flatnonzero(todo & (place < start + _CELLS * STEP))
+            place[rows] = self._falls(start, rows)
+            todo &= (place < last) & ~self.fallen
+        place, todo = last.copy(), (first < last) & ~recurring
+        while todo.any():
+            stop = float(place[todo].max())
+            start = max(stop - _CELLS * STEP, STEP)
+            rows = np.flatnonzero(todo & (place > start))
+            self._falls(start, rows)
+            place[rows] = start
+            todo &= (place > first) & ~(self.last_fall * self.response.dead_time > place)
+
+    def _falls(self, start: float, rows: IntArray) -> float:
+        """Passages of loops `rows` from an angle on; returns to where they have been looked for."""
+        edges = (start + STEP * np.arange(_CELLS + 1.0)) ** 2
+        tables = cell_tables(edges, self.form.n)
+        self._prove(edges, tables, np.zeros(0, dtype=np.intp), self._crossings(tables, rows, (FALL,)))
+        return float(np.sqrt(edges[-1]))
 
     def look_for_noise(self, floor: float) -> None:
         """|C S| beyond the angle `floor`, where it ripples round |C|.
@@ -281,35 +310,50 @@ class _Findings:
         rows, first, last = self._noisy(i, np.arange(self.m), floor)
         if rows.size:
             self._climb_turns(i, rows, first, last)
-            rows, first, last = self._noisy(i, rows, floor)
+            rows, first, last = self._noisy(i, np.unique(rows), floor)
+            last = np.minimum(last, first + _FARTHEST)
         start = floor
         while (last > start).any():
             start = max(start, first[last > start].min())
             edges = (start + STEP * np.arange(-1.0, _CELLS + 1.0)) ** 2
             stop = float(np.sqrt(edges[-1]))
-            some = rows[(first < stop) & (last > start)]
+            some = np.unique(rows[(first < stop) & (last > start)])
             self._prove(edges, cell_tables(edges, self.form.n), i * self.m + some, [])
             start = stop
 
     def _noisy(self, i: int, rows: IntArray, floor: float) -> tuple[IntArray, FloatArray, FloatArray]:
-        """Those of `rows` where |C S| may exceed what is known, and between which angles."""
+        """Those of `rows`, repeated, where |C S| may exceed what is known, and between which angles."""
         level = self.level_of_proof().reshape(-1, self.m)[i, rows]
-        at, low, high = noise_range(self.form.squares[:, :, rows], level, np.full(len(rows), floor * floor))
-        return rows[at], np.sqrt(low), np.minimum(np.sqrt(high), _FARTHEST)
+        at, low, high = noise_ranges(self.form.squares[:, :, rows], level, np.full(len(rows), floor * floor))
+        return rows[at], np.sqrt(low), np.sqrt(high)
 
     def _climb_turns(self, i: int, rows: IntArray, first: FloatArray, last: FloatArray) -> None:
         """Climb where |C S| touches |C|/(1 - |L|) next to the top of that."""
-        place = first * (last / first) ** np.linspace(0.0, 1.0, 33)[:, None]
-        n2, d2, c2 = (polynomial(p[:, rows], place * place) for p in self.form.squares)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            bound = np.sqrt(c2) / (np.sqrt(d2) - np.sqrt(n2))
-        top = np.where(np.isfinite(bound) & (bound > 0.0), bound, 0.0).argmax(axis=0)
-        angle = place[top, np.arange(len(rows))]
+        squares = self.form.squares[:, :, rows]
+        angle, ratio = np.sqrt(first * last), np.sqrt(last / first)
+        for _ in range(_ZOOMS):
+            place = angle * ratio ** np.linspace(-1.0, 1.0, 33)[:, None]
+            n2, d2, c2 = (polynomial(p, place * place) for p in squares)
+            with np.errstate(divide="ignore", invalid="ignore"):
+                bound = np.sqrt(c2) / (np.sqrt(d2) - np.sqrt(n2))
+            top = np.where(np.isfinite(bound) & (bound > 0.0), bound, 0.0).argmax(axis=0)
+            angle, ratio = place[top, np.arange(len(rows))], ratio**0.1
         turn = np.angle(-loop_at(self.response, rows, angle / self.response.dead_time[rows]))
         target = i * self.m + rows
         for other in (0.0, 2.0 * np.pi):
             near = angle + turn - np.copysign(other, turn)
-            self._climb(target, np.maximum(near, first))
+            for some in _each_once(target):
+                self._climb(target[some], np.maximum(near, first)[some])
+
+
+def _each_once(target: IntArray) -> list[IntArray]:
+    """Places in `target` in groups that name none twice."""
+    out, left = [], np.arange(len(target))
+    while left.size:
+        _, first = np.unique(target[left], return_index=True)
+        out.append(left[first])
+        left = np.delete(left, first)
+    return out
 
 
 def delayed_quantities(
@@ -324,9 +368,11 @@ def delayed_quantities(
         light damping leaves |Δ|² no more digits). Two crossings closer than 1e-10 (relative) may be missed.
     """
     findings = _Findings(response, kinds, keys)
-    findings.look(SHARED_EDGES, shared_tables(findings.form.n), np.arange(response.loops))
+    findings.look(SHARED_EDGES, shared_tables(findings.form.n), np.arange(response.loops), kinds)
     last = float(np.sqrt(SHARED_EDGES[-1]))
     findings.look_further(last)
+    if FALL in kinds:
+        findings.look_for_falls(last)
     if "noise_gain" in keys:
         findings.look_for_noise(last)
     return findings.found, {k: findings.peaks[i] for i, k in enumerate(keys)}, findings.recurring()

@@ -10,7 +10,7 @@ from math import comb
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.frequency.isolation import Brackets, isolate
 from synth.loop.frequency.response import polynomial
 
@@ -59,26 +59,51 @@ def last_with_gain(squares: FloatArray, limit: FloatArray, floor: FloatArray) ->
     return out
 
 
-def noise_range(
+def noise_ranges(
     squares: FloatArray, peak: FloatArray, floor: FloatArray
 ) -> tuple[IntArray, FloatArray, FloatArray]:
-    """(rows, x from, x to): where above `floor` |C S| may exceed `peak` (M,), were L turned at will.
+    """(row, x from, x to): where above `floor` |C S| may exceed `peak` (M,), were L turned at will.
 
     squares : (3, n + 1, M), |N|², |D|² and |control|². That is where peak ||D| - |N|| <= |control|: with A =
-    peak² (|N|² + |D|²) - |control|² not above 2 peak² |N| |D|, so within the roots of A² - 4 peak⁴ |N|² |D|².
+    peak² (|N|² + |D|²) - |control|² not above 2 peak² |N| |D|, so between roots of A² - 4 peak⁴ |N|² |D|².
     """
     n2, d2, c2 = squares
     a = n2 + d2 - c2 / np.maximum(peak * peak, 1e-300)
-    both = _product(n2, d2)
-    brackets = roots_above(_product(a, a) - 4.0 * both, floor)
-    first, last = np.full(len(peak), np.inf), np.zeros(len(peak))
-    np.minimum.at(first, brackets.row, brackets.low)
-    np.maximum.at(last, brackets.row, brackets.high)
-    # within it already at the floor: an odd number of roots lies above
-    odd: BoolArray = np.bincount(brackets.row, minlength=len(peak)) % 2 == 1
-    first = np.where(odd, floor, np.maximum(first, floor))
-    rows = np.flatnonzero(last > floor)
-    return rows, first[rows], last[rows]
+    brackets = roots_above(_product(a, a) - 4.0 * _product(n2, d2), floor)
+    order = np.lexsort((brackets.low, brackets.row))
+    row, low, high = brackets.row[order], brackets.low[order], brackets.high[order]
+    # an odd number of roots: within it already at the floor
+    odd = np.flatnonzero(np.bincount(row, minlength=len(peak)) % 2 == 1)
+    row = np.concatenate([odd, row])
+    low, high = np.concatenate([floor[odd], low]), np.concatenate([floor[odd], high])
+    order = np.lexsort((low, row))
+    row, low, high = row[order][::2], low[order][::2], high[order][1::2]
+    # between two such ranges the curve exceeds the peak whatever the angle, or it cannot: A tells
+    between = np.sqrt(high[:-1] * low[1:])
+    apart = (row[1:] != row[:-1]) | (polynomial(a[:, row[1:]], between) > 0.0)
+    begins, ends = np.append(True, apart), np.append(apart, True)
+    begins, ends = begins[: len(row)], ends[: len(row)]
+    return row[begins], np.maximum(low[begins], floor[row[begins]]), high[ends]
+
+
+def fall_range(squares: FloatArray, level: FloatArray, floor: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """(M,) lowest and highest x above `floor` where |T|² may pass `level`; an empty range is (inf, 0).
+
+    |T| lies between |L|/(1 + |L|) and |L|/(1 - |L|), so |L| lies between s/(1 + s) and s/(1 - s) where it
+    passes s = √level.
+    """
+    size = np.sqrt(level)
+    low = size / (1.0 + size)
+    high = np.where(size < 1.0, size / np.maximum(1.0 - size, 1e-300), np.inf)
+    first, last = np.full(len(level), np.inf), np.zeros(len(level))
+    for limit in (low * (1.0 - 1e-9), high * (1.0 + 1e-9)):
+        rows = np.flatnonzero(np.isfinite(limit) & (limit > 0.0))
+        found = roots_above(limit[rows] ** 2 * squares[1][:, rows] - squares[0][:, rows], floor[rows])
+        np.minimum.at(first, rows[found.row], found.low)
+        np.maximum.at(last, rows[found.row], found.high)
+    gain = np.sqrt(polynomial(squares[0], floor) / polynomial(squares[1], floor))
+    inside = (gain >= low) & (gain <= high) & (level > 0.0)
+    return np.where(inside, floor, np.maximum(first, floor)), np.where(inside, np.maximum(last, floor), last)
 
 
 def _product(a: FloatArray, b: FloatArray) -> FloatArray:

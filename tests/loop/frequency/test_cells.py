@@ -8,7 +8,7 @@ from scipy.interpolate import BPoly
 from synth.loop.frequency.cells import ROTATION, SHARED_EDGES, STEP, AngleForm, cell_tables, in_form
 from synth.loop.frequency.response import response_of
 from synth.loop.frequency.survey import open_cells, sign_changes
-from synth.loop.frequency.upper_end import last_with_gain, noise_range, roots_above
+from synth.loop.frequency.upper_end import last_with_gain, noise_ranges, roots_above
 
 FAR = (300.0 + STEP * np.arange(3)) ** 2
 
@@ -99,9 +99,9 @@ def test_the_end_of_a_gain():
 def test_the_range_where_the_noise_gain_could_exceed_its_peak(peak):
     # |C| = 1, |L| = 1/ω: |C|/||L| - 1| exceeds the peak between 1/(1 + 1/peak) and 1/(1 - 1/peak)
     squares = np.array([[1.0, 0.0], [0.0, 1.0], [0.0, 1.0]])[:, :, None]
-    rows, low, high = noise_range(squares, np.array([peak]), np.array([1e-6]))
+    rows, low, high = noise_ranges(squares, np.array([peak]), np.array([1e-6]))
     assert rows.tolist() == [0]
     assert np.sqrt(low[0]) == pytest.approx(1.0 / (1.0 + 1.0 / peak), rel=1e-3)
     assert np.sqrt(high[0]) == pytest.approx(1.0 / (1.0 - 1.0 / peak), rel=1e-3)
-    rows, _, _ = noise_range(squares, np.array([peak]), np.array([4.0 / (1.0 - 1.0 / peak) ** 2]))
+    rows, _, _ = noise_ranges(squares, np.array([peak]), np.array([4.0 / (1.0 - 1.0 / peak) ** 2]))
     assert rows.size == 0

@@ -3,10 +3,15 @@
 The reference of each is its own dense evaluation, crowded where the design says that something happens.
 """
 
+from dataclasses import replace
+
 import mpmath
 import numpy as np
 import pytest
 from scipy.optimize import brentq
+
+from synth.loop.frequency.stage import frequency_stage
+from synth.loop.poles.encirclement import delayed_stable
 
 PI = ([0.1, 0.05], [1.0, 0.0])
 
@@ -156,8 +161,6 @@ def test_a_phase_that_grazes_the_negative_axis_gives_its_two_crossings(measure):
 @pytest.mark.parametrize("light", [False, True])
 @pytest.mark.parametrize("order", [2, 4, 6, 9])
 def test_no_value_of_a_dense_look_exceeds_a_peak(delayed_loops, poles_of, order, light):
-    from synth.loop.frequency.stage import frequency_stage
-
     loops = delayed_loops(70 + order + light, order, 60, light=light)
     keys = frozenset({"sensitivity_peak", "complementary_peak", "noise_gain"})
     found = frequency_stage(loops, poles_of(loops), keys)
@@ -197,3 +200,56 @@ def test_a_needle_in_40_digits(measure):
         start = max((place + width * mpmath.mpf(k) / 50 for k in range(-200, 201)), key=sensitivity)
         top = mpmath.findroot(lambda w: mpmath.diff(sensitivity, w, h=1e-15), (start, start + width / 100))
         assert abs(found / float(sensitivity(top)) - 1.0) < 1e-8
+
+
+@pytest.mark.parametrize("delay", [1e3, 1e5, 1e7])
+def test_falls_ten_thousands_of_turns_out_are_the_first_and_the_last(measure, delay):
+    # |L| falls so slowly against the dead time that |T| passes its level in thousands of ripples
+    def loop(w):
+        return 0.5 / (1.0 + 1j * np.asarray(w)) ** 2 * np.exp(-1j * np.asarray(w) * delay)
+
+    found = measure(([0.5], [1.0, 2.0, 1.0]), ([1.0], [1.0]), delay, ("bandwidth", "highest_fall"))
+    level = 0.5 / 1.5 / np.sqrt(2.0)
+    # |T| first reaches down to the level where |L|/(1 + |L|) does, and last where |L|/(1 - |L|) does
+    for key, gain, turns in (
+        ("bandwidth", level / (1.0 - level), (-0.5, 4.0)),
+        ("highest_fall", level / (1.0 + level), (-4.0, 0.5)),
+    ):
+        edge = np.sqrt(0.5 / gain - 1.0)
+        w = edge + np.linspace(turns[0], turns[1], 800_001) * 2.0 * np.pi / delay
+        value = loop(w)
+        above = np.abs(value / (1.0 + value)) > level
+        falls = w[np.flatnonzero(above[:-1] & ~above[1:])]
+        expected = falls[0] if key == "bandwidth" else falls[-1]
+        assert found[key] == pytest.approx(expected, abs=1e-4 / delay, rel=1e-12)
+
+
+def test_the_noise_gain_of_loops_with_very_long_dead_times(delayed_loops, poles_of):
+    # C S far out: above every value of a dense look round the top of its bound, below that bound
+    rng = np.random.default_rng(5)
+    loops = delayed_loops(21, 4, 60, light=True)
+    factor = np.exp(rng.uniform(-4.0, -1.0, len(loops)))[:, None]
+    scaled = {name: getattr(loops, name) * factor for name in ("numerator", "control")}
+    loops = replace(loops, **scaled, closed=loops.denominator + scaled["numerator"],
+                    dead_time=loops.dead_time * np.exp(rng.uniform(2.0, 7.0, len(loops))))  # fmt: skip
+    loops = loops.rows(np.flatnonzero(delayed_stable(loops)))
+    assert len(loops) > 20
+    found = frequency_stage(loops, poles_of(loops), frozenset({"noise_gain"}))["noise_gain"]
+    far = 0
+    for i in range(len(loops)):
+        theta, parts = loops.dead_time[i], (loops.numerator[i], loops.denominator[i], loops.control[i])
+        roots = np.concatenate([np.roots(np.trim_zeros(p, "f")) for p in parts])
+        near = [abs(p.imag) + abs(p.real) * np.linspace(-20.0, 20.0, 2001) for p in roots]
+        w = np.unique(np.concatenate([np.geomspace(1e-4, 1e5, 200_001), *near]))[1:]
+        n, d, c = (np.abs(np.polyval(p, 1j * w)) for p in parts)
+        bound = np.where(d > n, c / np.maximum(d - n, 1e-300), 0.0)
+        top = w[np.argmax(bound)]
+        around = top + np.linspace(-20.0, 20.0, 200_001) / theta
+        s = 1j * np.abs(around)
+        n, d, c = (np.polyval(p, s) for p in parts)
+        looked = np.abs(c / (d + n * np.exp(-s * theta))).max()
+        assert looked <= found[i] * (1.0 + 2e-7)
+        if top * theta > 20.0:
+            far += 1
+            assert found[i] <= bound.max() * (1.0 + 1e-3)
+    assert far > 10
