@@ -132,7 +132,7 @@ class ClusterModes:
             time, self.curves(time), shaped(envelope), shaped(fourth), rivals, area, area, log_convex=False
         )
 
-    def cell_misses(self, loop: IntArray, signal: IntArray, t: FloatArray, h: FloatArray) -> FloatArray:
+    def cell_misses(self, loop: IntArray, t: FloatArray, h: FloatArray, signal: IntArray) -> FloatArray:
         """(8, P) cubic error in the cells of width h that start at t, for one signal each."""
         starts = (t + h * np.arange(CELLS)[:, None]).ravel()
         many = np.tile(loop, CELLS)

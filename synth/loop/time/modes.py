@@ -110,7 +110,7 @@ class Modes:
         envelope: FloatArray = np.matmul(self.size[loop], decay)[:, :, 0].T
         return fourth, envelope
 
-    def cell_misses(self, loop: IntArray, signal: IntArray, t: FloatArray, h: FloatArray) -> FloatArray:
+    def cell_misses(self, loop: IntArray, t: FloatArray, h: FloatArray, signal: IntArray) -> FloatArray:
         """(8, P) cubic error in the cells of width h that start at t, for one signal each."""
         fall = self.pole.real[loop]
         weight = self.fourth[loop, signal] * np.exp(fall * t[:, None])

@@ -70,7 +70,7 @@ class Signals(Protocol):
     def bounds(self, loop: IntArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:
         """(S, P) bounds of the fourth derivative and of abs(x) from t on."""
 
-    def cell_misses(self, loop: IntArray, signal: IntArray, t: FloatArray, h: FloatArray) -> FloatArray:
+    def cell_misses(self, loop: IntArray, t: FloatArray, h: FloatArray, signal: IntArray) -> FloatArray:
         """(CELLS, P) cubic error in the cells of width h that start at t, for one signal each."""
 
     def nodes(

@@ -39,22 +39,22 @@ class Survey:
         self.start = profile.deviation[:, :, 0]
         self.best = outlook.best
         self.negligible = 1e-2 * AREA_RESOLUTION * outlook.about
-        # of every key: when it is settled, and in what terms its cells are seen
+        # of every key: when it is settled; of those of views, in what terms their cells are seen
         ends = [outlook.supremum_ends[outlook.answer], outlook.passage_ends, outlook.area_ends]
         self.end = np.concatenate(ends).ravel()
         self.borders = len(ends[0]) * self.m, (len(ends[0]) + len(passages)) * self.m
-        self.sign, self.offset = np.ones(len(self.end)), np.zeros(len(self.end))
-        self.sign[: self.borders[0]] = outlook.sign.repeat(self.m)
-        self.offset[: self.borders[0]] = outlook.offset.ravel()
+        self.sign, self.offset = outlook.sign.repeat(self.m), outlook.offset.ravel()
         self.doubt: list[Cells] = []
 
     def _seen(self, cells: Cells) -> Cells:
-        """The cells in terms of their question, sign * (x + offset)."""
-        sign = self.sign[cells.key]
-        data = cells.data
-        data[2:6] *= sign
-        data[2:4] += self.offset[cells.key]
-        return Cells(cells.place, data)
+        """The cells, those of views, which come first, in terms of their question, sign * (x + offset)."""
+        views = int(np.count_nonzero(cells.key < self.borders[0]))
+        key = cells.key[:views]
+        sign = self.sign[key]
+        cells.data[2:6, :views] *= sign
+        cells.data[2:4, :views] += self.offset[key]
+        cells.turn[:views] *= sign
+        return cells
 
     def look(self, s: Scan) -> None:
         """Take from one pass what it tells, and keep the cells that need more."""
