@@ -207,5 +207,5 @@ def _classes(todo: IntArray, fine: IntArray, coarse: IntArray, hold: IntArray) -
     for one in np.unique(key):
         at = todo[key == one]
         panels = len(ladder(int(fine[at].max()), int(coarse[at].max()), int(hold[at].max())))
-        out += np.array_split(at, -(-len(at) * panels // ROOM))
+        out += np.array_split(at, min(-(-len(at) * panels // ROOM), len(at)))
     return out
