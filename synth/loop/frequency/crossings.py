@@ -16,7 +16,7 @@ from typing import Protocol
 import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
-from synth.loop.frequency.isolation import Brackets, isolate
+from synth.loop.frequency.isolation import Brackets
 from synth.loop.frequency.response import CLOSED, D, N, Response, complex_values, cross, evaluate
 
 GAIN, FALL, PHASE = 0, 1, 2
@@ -95,16 +95,6 @@ def _quadrature(response: Response) -> FloatArray:
     p = cross(on, ed, en, od, -1.0, 0, n)
     size = cross(np.abs(on), np.abs(ed), np.abs(en), np.abs(od), 1.0, 0, n)
     return np.where(np.abs(p) <= 4e-16 * size, 0.0, p)
-
-
-def gain_frequencies(response: Response, gain: FloatArray) -> tuple[IntArray, FloatArray]:
-    """(row, ω) of every frequency at which |L| is `gain` (M,); 0 asks for none."""
-    polynomials = (gain * gain * response.squares[:, D] - response.squares[:, N]) * (gain > 0.0)
-    brackets = isolate(polynomials)
-    row = brackets.row
-    equation = _Rational(response, np.full(len(row), GAIN, dtype=np.intp), row, gain[row] ** 2)
-    u, holds = newton(equation, 0.5 * np.log(brackets.low), 0.5 * np.log(brackets.high), brackets.negative)
-    return row[holds], np.exp(u[holds])
 
 
 class Equation(Protocol):

@@ -61,12 +61,6 @@ class Cells:
         place = self.place[:, start:stop]
         return Cells(place - np.array([[key], [0], [0]]) if key else place, self.data[:, start:stop])
 
-    def keyed(self, key: IntArray) -> Cells:
-        """The same cells for other questions."""
-        place = self.place.copy()
-        place[0] = key
-        return Cells(place, self.data)
-
     def monotone(self) -> BoolArray:
         """Whether the slope provably keeps its sign."""
         least = SLOPE_MISS * self.miss

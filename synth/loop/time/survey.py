@@ -87,8 +87,9 @@ class Survey:
             questions.append(np.full(len(number), len(self.outlook.sign) + k))
         number = np.concatenate(numbers)
         key = np.concatenate(questions) * self.m + cells.loop[number]
-        few = cells.rows(number).keyed(key)
-        few = few.rows(few.t < self.end[key])
+        counts = (cells.t[number] < self.end[key]).nonzero()[0]
+        few = cells.rows(number[counts])
+        few.key[:] = key[counts]
         if self.outlook.since is not None:
             few = self._later(few)
         self.doubt.append(self._seen(few))
