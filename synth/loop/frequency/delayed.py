@@ -21,11 +21,11 @@ import numpy as np
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.frequency.cells import SHARED_EDGES, STEP, AngleForm, cell_tables, shared_tables
 from synth.loop.frequency.crossings import FALL, PHASE, Crossings, fall_level, loop_at, newton
-from synth.loop.frequency.delayed_curves import DelayedCrossing, DelayedCurve, climb_freely
+from synth.loop.frequency.delayed_curves import DelayedCrossing
+from synth.loop.frequency.delayed_peaks import PLACE, Levels
 from synth.loop.frequency.isolation import Brackets
-from synth.loop.frequency.peaks import CURVES, climb
-from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, log_rates, polynomial, tamed
-from synth.loop.frequency.survey import Open, begun, joined, open_cells, promising, sign_changes
+from synth.loop.frequency.response import D, N, Response, polynomial
+from synth.loop.frequency.survey import Open, begun, joined, open_cells, sign_changes
 from synth.loop.frequency.upper_end import fall_range, last_with_gain, noise_ranges
 
 _FARTHEST = 20_000.0  # rad: where the search for ever smaller ripples ends
@@ -33,14 +33,6 @@ _ROUNDS = 12
 _CELLS = 64  # looked at in one go for far falls, and where |C S| has its far top
 _ZOOMS = 6  # that find the top of its bound
 _MOST_CELLS = 2048  # looked at in one go anywhere else
-_LEAST_MARGIN = 1e-8  # relative, of the level above the peak in the test
-_MOST_MARGIN = 2e-7
-_DEPTH = 1e-20  # of a bracket in y that begins at 0
-_OCTAVES = 2.0**6  # ratio of y over which a climb is not left to itself ...
-_BISECTIONS = 50
-_POINTS = 65  # ... but begins at the best of so many points
-_NOISE = 4e-13  # of a Bernstein coefficient, relative to the sum of its terms
-_PLACE = {N: 0, D: 1, CONTROL: 2}  # in the squares of the forms
 
 
 class _Findings:
@@ -48,9 +40,8 @@ class _Findings:
 
     def __init__(self, response: Response, kinds: tuple[int, ...], keys: tuple[str, ...]) -> None:
         self.response, self.kinds, self.keys = response, kinds, keys
-        self.curves = np.array([CURVES[k] for k in keys], dtype=np.intp)
-        self.places = [_PLACE[CURVES[k]] for k in keys]
         self.form = AngleForm(response)
+        self.levels = Levels(response, self.form, keys)
         self.level = fall_level(response)
         self.m = response.loops
         none = np.zeros(0, dtype=np.intp)
@@ -59,20 +50,8 @@ class _Findings:
         self.fallen, self.last_fall = np.zeros(self.m, dtype=bool), np.zeros(self.m)
         ends = np.abs(response.ends)
         self.gain_end = ends[1, N] / ends[1, D]
-        self.largest_up = (
-            self.gain_end.copy()
-        )  # |L| of the nearest crossing below 1; the circle |L(∞)| is one
-        with np.errstate(divide="ignore"):
-            largest = 1.0 / np.maximum(1.0 - self.gain_end, 0.0)
-        at_zero = ends[0, self.curves] / np.abs(response.ends[0, CLOSED])
-        self.best = np.maximum(at_zero, ends[1, self.curves] / ends[1, D] * largest).ravel()
-        self.at = np.zeros_like(self.best)
-
-    @property
-    def peaks(self) -> FloatArray:
-        """(keys, M) largest values so far."""
-        out: FloatArray = self.best.reshape(len(self.keys), self.m)
-        return out
+        # |L| of the nearest crossing below 1; the circle |L(∞)| is one
+        self.largest_up = self.gain_end.copy()
 
     def recurring(self) -> BoolArray:
         """(M,) where |T| passes its level for ever: the circle |L(∞)| lies across it."""
@@ -84,60 +63,30 @@ class _Findings:
 
     def look(self, edges: FloatArray, tables: FloatArray, rows: IntArray, kinds: tuple[int, ...]) -> None:
         """The peaks and the crossings of `kinds` that loops `rows` have on the cells between `edges`."""
-        self._climb_most_promising(edges, tables, rows)
+        self.levels.climb_most_promising(edges, tables, rows)
         targets = (np.arange(len(self.keys))[:, None] * self.m + rows).ravel()
         self._prove(edges, tables, targets, self._crossings(tables, rows, kinds))
 
     def _prove(self, edges: FloatArray, tables: FloatArray, targets: IntArray, crossings: list[Open]) -> None:
         """Raise the levels of `targets` until the cells exceed none; with them isolate `crossings`."""
         for _ in range(_ROUNDS):
-            level = self.level_of_proof()
-            above = self._above(tables, targets, level)
+            level = self.levels.of_proof()
+            above = self.levels.above(tables, targets, level)
             if not above and not crossings:
                 break
             hint = np.zeros((len(self.keys) + 2, self.m))
-            hint[: len(self.keys)] = (self.at.reshape(-1, self.m) * self.response.dead_time) ** 2
+            hint[: len(self.keys)] = (self.levels.at.reshape(-1, self.m) * self.response.dead_time) ** 2
             brackets = sign_changes(joined([*above, *crossings]), edges, hint.ravel())
             self._take_crossings(brackets)
-            self._climb_between([brackets, *(begun(part, edges) for part in above)], edges[-1], level)
-            targets, crossings = targets[self.best[targets] > level[targets]], []
-
-    def _climb_most_promising(self, edges: FloatArray, tables: FloatArray, rows: IntArray) -> None:
-        y = promising(self.form, self.places, tables, edges, rows, self.peaks[:, rows])
-        key, column = np.nonzero(y)
-        self._climb(key * self.m + rows[column], np.sqrt(y[key, column]))
-
-    def _climb(self, target: IntArray, angle: FloatArray) -> None:
-        row = target % self.m
-        curve = DelayedCurve(self.response, self.curves[target // self.m], row)
-        climb_freely(curve, target, angle / self.response.dead_time[row], self.best, self.at)
-
-    def _above(self, tables: FloatArray, targets: IntArray, level: FloatArray) -> list[Open]:
-        """Cells on which curves may exceed their levels."""
-        out = []
-        for i, place in enumerate(self.places):
-            mine = targets[targets // self.m == i]
-            if mine.size:
-                columns = self.form.below(place, level[mine] ** 2, mine - i * self.m)
-                out.append(open_cells(tables, columns, mine, below=True))
-        return out
-
-    def level_of_proof(self) -> FloatArray:
-        """What is known of each target, and as much more as the digits of |Δ|² ask for."""
-        squares, x = self.response.squares, self.at.reshape(-1, self.m) ** 2
-        terms = polynomial(squares[:, N] + squares[:, D], x)
-        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-            noise = _NOISE * terms * self.peaks**2 / polynomial(squares[:, self.curves], x)
-        margin = np.clip(np.nan_to_num(noise, nan=0.0, posinf=1.0), _LEAST_MARGIN, _MOST_MARGIN)
-        out: FloatArray = self.best * (1.0 + margin.ravel())
-        return out
+            self.levels.climb_between([brackets, *(begun(part, edges) for part in above)], edges[-1], level)
+            targets, crossings = targets[self.levels.best[targets] > level[targets]], []
 
     def _crossings(self, tables: FloatArray, rows: IntArray, kinds: tuple[int, ...]) -> list[Open]:
         """Cells on which |T| may pass its level, or L the real axis."""
         out = []
         first = len(self.keys) * self.m
         if FALL in kinds:
-            passing = self.form.below(_PLACE[N], self.level[rows], rows)
+            passing = self.form.below(PLACE[N], self.level[rows], rows)
             out.append(open_cells(tables, passing, first + rows, below=False))
         if PHASE in kinds:
             out.append(open_cells(tables, self.form.turned[:, rows], first + self.m + rows, below=False))
@@ -173,76 +122,12 @@ class _Findings:
             self.fallen[row[down]] = True
             np.maximum.at(self.last_fall, row[down], w[down])
 
-    def _climb_between(self, parts: list[Brackets], last: float, level: FloatArray) -> None:
-        """Climb where a curve is above its level: from each place where it passes it upwards to the next
-        downwards."""
-        target, low, high, negative = (
-            np.concatenate([getattr(part, name) for part in parts])
-            for name in ("row", "low", "high", "negative")
-        )
-        some = np.flatnonzero(target < len(self.best))
-        order = some[np.lexsort((low[some], target[some]))]
-        target, low, high = target[order], low[order], high[order]
-        up = np.flatnonzero(~negative[order])
-        if not up.size:
-            return
-        follows = np.append(target[1:] == target[:-1], False)[up]
-        after = np.minimum(up + 1, len(order) - 1)
-        target, bottom, top = target[up], low[up], np.where(follows, high[after], 2.0 * last)
-        start = np.sqrt(high[up] * np.where(follows, np.maximum(low[after], high[up]), last))
-        bottom = np.maximum(bottom, _DEPTH * start)
-        self._narrow(target, bottom, start, top)
-        self._climb_within(target, bottom, start, top)
-        stuck = np.flatnonzero(self.best[target] <= level[target])
-        if stuck.size:  # Newton's method has left the place: to the ends of what lies above the level
-            target, start = target[stuck], start[stuck]
-            bottom = self._passage(target, bottom[stuck], start, level)
-            top = self._passage(target, top[stuck], start, level)
-            self._climb_within(target, bottom, np.sqrt(bottom * top), top)
-
-    def _climb_within(self, target: IntArray, bottom: FloatArray, start: FloatArray, top: FloatArray) -> None:
-        delay = self.response.dead_time[target % self.m]
-        curve = DelayedCurve(self.response, self.curves[target // self.m], target % self.m)
-        around = (np.sqrt(bottom) / delay, np.sqrt(start) / delay, np.sqrt(top) / delay)
-        climb(curve, target, around, self.best, self.at)
-
-    def _squared(self, target: IntArray, y: FloatArray) -> FloatArray:
-        """|P/Δ|² of each target at y (.., F); 0 where it cannot be told."""
-        row = np.broadcast_to(target % self.m, y.shape).ravel()
-        curves = np.broadcast_to(self.curves[target // self.m], y.shape).ravel()
-        w = np.sqrt(y).ravel() / self.response.dead_time[row]
-        size, _, _ = log_rates(*tamed(*DelayedCurve(self.response, curves, row).at(w)))
-        with np.errstate(divide="ignore", invalid="ignore"):
-            out: FloatArray = np.nan_to_num(size[0] / size[1]).reshape(y.shape)
-        return out
-
-    def _narrow(self, target: IntArray, bottom: FloatArray, start: FloatArray, top: FloatArray) -> None:
-        """Ranges of y over many octaves to those beside the best of some points, in place: a curve may be all
-        but flat over most of such a range."""
-        wide = np.flatnonzero(top > _OCTAVES * bottom)
-        if not wide.size:
-            return
-        y = bottom[wide] * (top[wide] / bottom[wide]) ** np.linspace(0.0, 1.0, _POINTS)[:, None]
-        best, each = self._squared(target[wide], y).argmax(axis=0), np.arange(len(wide))
-        bottom[wide], start[wide] = y[np.maximum(best - 1, 0), each], y[best, each]
-        top[wide] = y[np.minimum(best + 1, _POINTS - 1), each]
-
-    def _passage(
-        self, target: IntArray, outside: FloatArray, inside: FloatArray, level: FloatArray
-    ) -> FloatArray:
-        """y between `outside` and `inside`, which is above the level, where a curve passes it."""
-        for _ in range(_BISECTIONS):
-            middle = np.sqrt(outside * inside)
-            above = self._squared(target, middle) > level[target] ** 2
-            outside, inside = np.where(above, outside, middle), np.where(above, middle, inside)
-        return outside
-
     def end(self, floor: float, rows: IntArray) -> FloatArray:
         """Angle beyond `floor` above which |L| is so small that nothing found of the loops `rows` can be
         bettered; 0 where there is none. Falls and |C S| are left out, and looked for below."""
-        level = self.level_of_proof().reshape(-1, self.m)[:, rows]
+        level = self.levels.of_proof().reshape(-1, self.m)[:, rows]
         limits = [np.full(len(rows), np.inf)]
-        for i, p in enumerate(self.curves):
+        for i, p in enumerate(self.levels.curves):
             if p == D:
                 limits.append(1.0 - 1.0 / np.maximum(level[i], 1.0))
             elif p == N:
@@ -323,7 +208,7 @@ class _Findings:
 
     def _noisy(self, i: int, rows: IntArray, floor: float) -> tuple[IntArray, FloatArray, FloatArray]:
         """Those of `rows`, repeated, where |C S| may exceed what is known, and between which angles."""
-        level = self.level_of_proof().reshape(-1, self.m)[i, rows]
+        level = self.levels.of_proof().reshape(-1, self.m)[i, rows]
         at, low, high = noise_ranges(self.form.squares[:, :, rows], level, np.full(len(rows), floor * floor))
         return rows[at], np.sqrt(low), np.sqrt(high)
 
@@ -343,7 +228,7 @@ class _Findings:
         for other in (0.0, 2.0 * np.pi):
             near = angle + turn - np.copysign(other, turn)
             for some in _each_once(target):
-                self._climb(target[some], np.maximum(near, first)[some])
+                self.levels.climb(target[some], np.maximum(near, first)[some])
 
 
 def _each_once(target: IntArray) -> list[IntArray]:
@@ -364,6 +249,7 @@ def delayed_quantities(
 
     response : M stable loops, every dead time positive. Crossings beyond the frequency where they could be
         the nearest are left out; PHASE crossings of the positive axis may be among them.
+    Further out than 20,000 rad of ωθ nothing is followed but falls and |C S|.
     Error: a supremum is a value met; the test excludes a higher one by more than 1e-8 relative (2e-7 where
         light damping leaves |Δ|² no more digits). Two crossings closer than 1e-10 (relative) may be missed.
     """
@@ -375,4 +261,4 @@ def delayed_quantities(
         findings.look_for_falls(last)
     if "noise_gain" in keys:
         findings.look_for_noise(last)
-    return findings.found, {k: findings.peaks[i] for i, k in enumerate(keys)}, findings.recurring()
+    return findings.found, {k: findings.levels.values[i] for i, k in enumerate(keys)}, findings.recurring()
