@@ -29,6 +29,7 @@ from synth.loop.frequency.survey import Open, begun, joined, open_cells, sign_ch
 from synth.loop.frequency.upper_end import fall_range, last_with_gain, noise_ranges
 
 _FARTHEST = 20_000.0  # rad: where the search for ever smaller ripples ends
+_BLURRED = 1e12  # rad: from where on a turn is no more than some digits of ω
 _ROUNDS = 12
 _CELLS = 64  # looked at in one go for far falls, and where |C S| has its far top
 _ZOOMS = 6  # that find the top of its bound
@@ -110,7 +111,9 @@ class _Findings:
         with np.errstate(divide="ignore"):
             bottom = np.maximum(np.log(low), np.log(high) - 50.0)
         u, holds = newton(equation, bottom, np.log(high), negative)
-        row, w, down = row[holds], np.exp(u[holds]), negative[holds]
+        self._note(kind, row[holds], np.exp(u[holds]), negative[holds])
+
+    def _note(self, kind: int, row: IntArray, w: FloatArray, down: BoolArray) -> None:
         kinds = np.full(len(row), kind, dtype=np.intp)
         found = Crossings(kinds, row, w, down, loop_at(self.response, row, w))
         self.found.append(found)
@@ -163,6 +166,11 @@ class _Findings:
         first, last = (np.sqrt(v) for v in fall_range(self.form.squares, self.level, x))
         recurring = self.recurring()
         last[recurring] = _FARTHEST
+        # ripples closer together than the digits of ω: the range itself tells, to the 1e-9 that it is wider
+        for edge in (first, last):
+            rows = np.flatnonzero((first < last) & (edge > _BLURRED))
+            self._note(FALL, rows, edge[rows] / self.response.dead_time[rows], np.ones(len(rows), dtype=bool))
+        last[last > _BLURRED] = 0.0
         place, todo = first.copy(), (first < last) & ~self.fallen
         while todo.any():
             start = float(place[todo].min())

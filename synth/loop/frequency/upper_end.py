@@ -15,10 +15,11 @@ from synth.loop.frequency.isolation import Brackets, isolate
 from synth.loop.frequency.response import polynomial
 
 _BISECTIONS = 12  # an octave down to a five-thousandth of it
+_TO_THE_END = 52  # and to the last digit
 
 
-def roots_above(polynomials: FloatArray, floor: FloatArray) -> Brackets:
-    """Brackets of the roots above `floor` (M,), within a five-thousandth of each; a bracket may begin below.
+def roots_above(polynomials: FloatArray, floor: FloatArray, bisections: int = _BISECTIONS) -> Brackets:
+    """Brackets of the roots above `floor` (M,), an octave halved that often; a bracket may begin below it.
 
     Most often there is none, and the Bernstein form on the whole of [floor, ∞) shows it.
     """
@@ -30,7 +31,7 @@ def roots_above(polynomials: FloatArray, floor: FloatArray) -> Brackets:
     row = rows[brackets.row]
     keep = brackets.high > floor[row]
     row, low, high, negative = row[keep], brackets.low[keep], brackets.high[keep], brackets.negative[keep]
-    for _ in range(_BISECTIONS):
+    for _ in range(bisections):
         middle = 0.5 * (low + high)
         before = (polynomial(polynomials[:, row], middle) < 0.0) == negative
         low, high = np.where(before, middle, low), np.where(before, high, middle)
@@ -98,7 +99,8 @@ def fall_range(squares: FloatArray, level: FloatArray, floor: FloatArray) -> tup
     first, last = np.full(len(level), np.inf), np.zeros(len(level))
     for limit in (low * (1.0 - 1e-9), high * (1.0 + 1e-9)):
         rows = np.flatnonzero(np.isfinite(limit) & (limit > 0.0))
-        found = roots_above(limit[rows] ** 2 * squares[1][:, rows] - squares[0][:, rows], floor[rows])
+        level_of = limit[rows] ** 2 * squares[1][:, rows] - squares[0][:, rows]
+        found = roots_above(level_of, floor[rows], _TO_THE_END)
         np.minimum.at(first, rows[found.row], found.low)
         np.maximum.at(last, rows[found.row], found.high)
     gain = np.sqrt(polynomial(squares[0], floor) / polynomial(squares[1], floor))

@@ -224,6 +224,14 @@ def test_falls_ten_thousands_of_turns_out_are_the_first_and_the_last(measure, de
         assert found[key] == pytest.approx(expected, abs=1e-4 / delay, rel=1e-12)
 
 
+def test_falls_whose_turns_are_finer_than_the_digits(measure):
+    # the edges of the range of |L| tell them, to the 1e-9 by which it is taken wider
+    found = measure(([0.5], [1.0, 2.0, 1.0]), ([1.0], [1.0]), 1e15, ("bandwidth", "highest_fall"))
+    level = 0.5 / 1.5 / np.sqrt(2.0)
+    assert found["bandwidth"] == pytest.approx(np.sqrt(0.5 * (1.0 - level) / level - 1.0), rel=1e-8)
+    assert found["highest_fall"] == pytest.approx(np.sqrt(0.5 * (1.0 + level) / level - 1.0), rel=1e-8)
+
+
 def test_the_noise_gain_of_loops_with_very_long_dead_times(delayed_loops, poles_of):
     # C S far out: above every value of a dense look round the top of its bound, below that bound
     rng = np.random.default_rng(5)
