@@ -160,10 +160,11 @@ def chosen(task: Task, found: list[Candidate], fallback: float) -> list[Candidat
         if c.structure not in names and (c is best[c.structure] or not at_its_best):
             picked.append(i)
             names.append(c.structure)
-    for i, c in enumerate(distinct):  # then seconds, as long as the list is short
-        if i not in picked and len(picked) < LIST and 0 < names.count(c.structure) < A_STRUCTURE:
-            picked.append(i)
-            names.append(c.structure)
+    for least in (1, 0) if met else (1,):  # then seconds, as long as the list is short
+        for i, c in enumerate(distinct):
+            if i not in picked and len(picked) < LIST and least <= names.count(c.structure) < A_STRUCTURE:
+                picked.append(i)
+                names.append(c.structure)
     return [distinct[i] for i in sorted(picked)][:MOST]
 
 

@@ -185,6 +185,11 @@ def test_under_a_wish_one_loop_goes_under_its_simpler_name_and_a_structure_is_at
     control = plain.measures.index(task.prefer.measure)
     plain = replace(plain, values=np.where(np.arange(len(plain.measures)) == control, 6.0, plain.values))
     rich = replace(rich, values=np.where(np.arange(len(rich.measures)) == control, 5.999, rich.values))
-    assert [c.structure for c in chosen(task, [more, plain, rich], 1.0)] == ["P"]
+    assert [c.structure for c in chosen(task, [more, plain, rich], 1.0)] == ["P", "PD"]  # a list too short
+    others = made(task, *[draft("lag", g, 1.0 / r, 1.0) for g, r in ((5.5, 1.5), (5.5, 3.0))])
+    others += made(task, draft("lead", 6.5, 9.0, 30.0), draft("P", 8.0), draft("lead", 9.0, 9.0, 60.0))
+    full = chosen(task, [more, plain, rich, *others], 1.0)
+    assert len(full) >= 5
+    assert "PD" not in [c.structure for c in full]
     better = replace(rich, values=np.where(np.arange(len(rich.measures)) == control, 5.9, rich.values))
     assert chosen(task, [more, plain, better], 1.0)[0].structure == "PD"
