@@ -29,9 +29,11 @@ def roots_above(polynomials: FloatArray, floor: FloatArray, bisections: int = _B
     rows = np.flatnonzero(~(form > 0.0).all(axis=0))
     brackets = isolate(polynomials[:, rows])
     row = rows[brackets.row]
+    if not row.size:
+        return brackets
     keep = brackets.high > floor[row]
     row, low, high, negative = row[keep], brackets.low[keep], brackets.high[keep], brackets.negative[keep]
-    for _ in range(bisections):
+    for _ in range(bisections if row.size else 0):
         middle = 0.5 * (low + high)
         before = (polynomial(polynomials[:, row], middle) < 0.0) == negative
         low, high = np.where(before, middle, low), np.where(before, high, middle)
