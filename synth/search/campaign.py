@@ -24,7 +24,6 @@ from synth.search.outcome import Progress, ProgressCall, Settings, StopCall, Tas
 from synth.search.polish import EXACT_PACE, Pace, Polished, polish
 from synth.search.standing import FINE, Standing
 from synth.search.starts import SOURCES, line, sample
-from synth.search.two_processes import Core, alone
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,11 +72,10 @@ class Campaign:
         extra: tuple[Measure, ...] = (),
         progress: ProgressCall | None = None,
         stop: StopCall | None = None,
-        core: Core = alone,
     ) -> None:
         self.task, self.settings = task, settings
         self.effort = EFFORTS[settings.budget]
-        self.objective = Objective(task, extra, core)
+        self.objective = Objective(task, extra)
         self.standings = [Standing(i, len(s.parameters)) for i, s in enumerate(task.structures)]
         self.origins: list[tuple[str, str]] = [(name, "") for name in SOURCES]
         self.gains: Intervals = ()

@@ -17,13 +17,12 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.closed_loop import Rational
-from synth.loop.evaluate import Screen
+from synth.loop.evaluate import Screen, evaluate
 from synth.loop.quantities import Measure
 from synth.requirements import judged, slack_of
 from synth.search.archive import Archive, Rows
 from synth.search.outcome import Task
 from synth.search.scales import Scales, scales_of
-from synth.search.two_processes import Batch, Core, alone
 from synth.structures import Structure
 
 ABSENT = -12.0  # search slack of a quantity that a stable loop does not have; below any compressed slack
@@ -71,7 +70,6 @@ class Objective:
 
     measures   Q: those of the requirements, then what else is asked for at the moment
     kept       those of them that the archive remembers
-    core       who scores the loops of a batch
     active     for each structure the case numbers it is judged on; starts with the nominal
     evaluations  loops scored so far (one compensator on one plant)
     delayed    whether some case has dead time; by_stand_in: whether time responses with dead time come from
@@ -79,8 +77,8 @@ class Objective:
     by_the_letter  whether a settling time that is not met counts as it is at the moment, without its stand-in
     """
 
-    def __init__(self, task: Task, extra: tuple[Measure, ...] = (), core: Core = alone) -> None:
-        self.task, self.core = task, core
+    def __init__(self, task: Task, extra: tuple[Measure, ...] = ()) -> None:
+        self.task = task
         self.structures = task.structures
         self.width = max(len(s.parameters) for s in task.structures)
         self.plants = task.plants
@@ -211,16 +209,14 @@ class Objective:
         case = table[rows.structure]
         real = case >= 0
         row, slot = np.nonzero(real)
-        found = self.core(
-            Batch(
-                self.plants,
-                self.realise(rows),
-                pairs=(row, case[row, slot]),
-                measures=(*self.measures, *self._stand_ins, *((Measure("damping_ratio"),) if hasty else ())),
-                reference_step=self.task.reference_step,
-                screen=self.screen if hasty else None,
-                rational=self.by_stand_in,
-            )
+        found = evaluate(
+            self.plants,
+            self.realise(rows),
+            measures=(*self.measures, *self._stand_ins, *((Measure("damping_ratio"),) if hasty else ())),
+            reference_step=self.task.reference_step,
+            pairs=(row, case[row, slot]),
+            screen=self.screen if hasty else None,
+            rational=self.by_stand_in,
         )
         self.evaluations += len(row)
         exact, search = self.slacks(found.values, found.stable, found.abscissa, case[row, slot])

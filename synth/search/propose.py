@@ -40,7 +40,6 @@ from synth.search.outcome import (
 )
 from synth.search.prices import price_list
 from synth.search.ranking import best_of, chosen, different
-from synth.search.two_processes import two_processes
 from synth.search.wishes import Wished, preferred
 from synth.structures import by_name
 
@@ -56,24 +55,17 @@ def propose(
     *,
     seeds: Sequence[Seed] = (),
 ) -> Outcome:
-    """Search every structure of the task and rank what is found; with a second process, where that is safe.
+    """Search every structure of the task and rank what is found.
 
     seeds : (structure, tuned values in SI) of earlier candidates to set out from as well.
     stop : asked often; True ends the search and keeps what is best so far (`interrupted`).
     The same task, settings and seeds give the same outcome bit for bit, unless a time limit or `stop` ends
     it.
     """
+    settings = settings or Settings()
     wish = task.prefer
     extra = (wish.measure,) if wish is not None and wish.measure is not None else ()
-    with two_processes() as core:
-        return _outcome(
-            Campaign(task, settings or Settings(), extra=extra, progress=progress, stop=stop, core=core),
-            seeds,
-        )
-
-
-def _outcome(campaign: Campaign, seeds: Sequence[Seed]) -> Outcome:
-    task, settings = campaign.task, campaign.settings
+    campaign = Campaign(task, settings, extra=extra, progress=progress, stop=stop)
     campaign.run(_seed_rows(campaign, seeds))
     found, listed, wish_rows = _listed(campaign)
     if not any(c.meets_all for c in listed) and not campaign.halted():

@@ -19,7 +19,6 @@ from synth.search.finals import drafts_of, named, realised, rounded, scorecards
 from synth.search.goals import Goals
 from synth.search.outcome import Aim, FrontPoint, ProgressCall, Settings, StopCall, Task
 from synth.search.polish import Pace, polish
-from synth.search.two_processes import two_processes
 
 LEVELS = 12
 MARGIN = 1e-6
@@ -41,15 +40,7 @@ def tradeoff(
     Which way is better is the table's; a quantity without one (crossover) counts as better when smaller.
     """
     settings = settings or Settings()
-    with two_processes() as core:
-        return _swept(
-            Campaign(task, settings, extra=(first, second), progress=progress, stop=stop, core=core),
-            first,
-            second,
-        )
-
-
-def _swept(campaign: Campaign, first: Measure, second: Measure) -> tuple[FrontPoint, ...]:
+    campaign = Campaign(task, settings, extra=(first, second), progress=progress, stop=stop)
     campaign.run()
     campaign.enter("front")
     heads = [s.tops.take(np.array([0])) for s in campaign.standings if s.tops is not None and s.best >= 0.0]
