@@ -119,7 +119,6 @@ def _campaign_of(campaign: Campaign, begun: list[Standing], names: tuple[str, ..
         campaign.settings,
         extra=() if aim.measure is None else (aim.measure,),
         stop=campaign.halted,
-        core=objective.core,
     )
     for n, name in enumerate(names):
         around = [s for s in begun if name in objective.structures[s.number].simpler]
