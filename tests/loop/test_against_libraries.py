@@ -148,9 +148,7 @@ def test_frequency_response(loop):
 
     above = np.abs(response(loop, w)) > 1.0
     cells = np.flatnonzero(above[1:] != above[:-1])
-    ends = [
-        brentq(lambda x: np.log(np.abs(response(loop, x)[0])), w[i], w[i + 1], xtol=1e-13) for i in cells
-    ]
+    ends = [brentq(lambda x: np.log(np.abs(response(loop, x)[0])), w[i], w[i + 1], xtol=1e-13) for i in cells]
     if not ends:
         assert np.isinf(values["phase_margin"])
         return

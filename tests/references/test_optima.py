@@ -71,9 +71,7 @@ def test_printed_settings_sit_on_their_bound(entry):
     plant = Rational.of(entry["plant"]["numerator"], entry["plant"]["denominator"])
     around = half_unit(printed["gain"]), half_unit(printed.get("integral_time", "0.01"))
     corners = [
-        (gain + a * around[0], integral + b * around[1])
-        for a in (-1.0, 0.0, 1.0)
-        for b in (-1.0, 0.0, 1.0)
+        (gain + a * around[0], integral + b * around[1]) for a in (-1.0, 0.0, 1.0) for b in (-1.0, 0.0, 1.0)
     ]
     numerators = [[k * t, k] for k, t in corners]
     denominators = [[t, 0.0] for _, t in corners]
