@@ -108,16 +108,16 @@ def _other_loops(campaign: Campaign, rows: Rows, heads: Rows) -> IntArray:
     objective = campaign.objective
     w = plant_band(objective).at(np.linspace(0.0, 1.0, 241))
     plant = response(objective.task.plants, w)[0]
+    apart: IntArray = np.arange(len(rows))
     with np.errstate(divide="ignore", invalid="ignore"):
         first, other = response(objective.realise(heads), w), response(objective.realise(rows), w)
-        apart = np.ones(len(rows), dtype=bool)
         for one in first:
             above = np.flatnonzero(np.abs(one * plant) > 1.0)
             crossover = w[above[-1]] if above.size else 1.0 / objective.scales.time
             near = np.abs(np.log10(w / crossover)) <= 1.0
-            apart &= np.abs(np.log(other[:, near] / one[near])).max(axis=1, initial=0.0) > APART
-    out: IntArray = np.flatnonzero(apart)
-    return out
+            distance = np.abs(np.log(other[apart][:, near] / one[near])).max(axis=1, initial=0.0)
+            apart = apart[distance > APART]
+    return apart
 
 
 def _reserve(campaign: Campaign) -> float:
