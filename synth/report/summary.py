@@ -53,14 +53,17 @@ def ranked(record: Record, width: int) -> list[Text]:
     words = "Candidates" if candidates[0]["meets_all"] else "Nearest found, none meets the sheet"
     lines = [heading(words, _examined(record), width)]
     prefer = record["spec"].get("prefer")
-    if prefer:
+    by_slack = "by slack less a charge for each tuned value; what hardly follows the reference comes last"
+    if prefer and candidates[0].get("ranked", "").startswith("worst slack"):
+        words = f"no candidate has a finite {quantity_name(prefer['quantity'])}: {by_slack}"
+        lines.append(hanging("  ", words, width, style="dim"))
+    elif prefer:
         least = "smallest" if prefer["sense"] == "min" else "largest"
         reserve = f", with {100.0 * prefer['reserve']:g} % of slack kept" if prefer["reserve"] else ""
         words = f"those that meet everything by {quantity_name(prefer['quantity'])}, {least} first{reserve}"
         lines.append(hanging("  ", words, width, style="dim"))
     elif candidates[0]["meets_all"] and not _falling(candidates):
-        words = "by slack less a charge for each tuned value; what hardly follows the reference comes last"
-        lines.append(hanging("  ", words, width, style="dim"))
+        lines.append(hanging("  ", by_slack, width, style="dim"))
     beside = width >= NARROW  # else what holds a candidate back stands below it
     table = Columns((">", "<", ">", ">", "<") if beside else (">", "<", ">", ">"), indent=1)
     table.add("", "structure", "order", "slack", *(("held back by",) if beside else ()), style="dim")

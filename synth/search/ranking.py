@@ -54,6 +54,9 @@ def ranked(task: Task, found: list[Candidate]) -> list[Candidate]:
     good = np.where(np.isnan(worst), -np.inf, -worst if wish.sense == "min" else worst)
     fit = [i for i, c in enumerate(found) if c.meets_all and c.worst_slack >= wish.reserve]
     rest = [c for i, c in enumerate(found) if i not in fit]
+    if fit and not np.isfinite(good[fit]).any():  # what none has tells none from another
+        none = f"no candidate has a finite {wish.measure.row.name}"
+        return [replace(c, ranked=f"{c.ranked}; {none}") for c in _by_slack(task, found)]
     fit.sort(key=lambda i: (-good[i], -found[i].worst_slack))
     out = []
     for i in fit:

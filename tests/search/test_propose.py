@@ -236,6 +236,16 @@ def test_undominated_rows():
     assert list(undominated(cost)) == [0, 1, 4]
 
 
+def test_a_wish_that_nothing_has_leaves_the_order_to_the_slack():
+    """Without an integral in C a step of disturbance leaves an error, and its area is infinite."""
+    wish = Aim(Measure("disturbance_area"), "min", 0.0)
+    out = propose(replace(servo(("P", "PD", "lead")), prefer=wish), QUICK)
+    plain = propose(servo(("P", "PD", "lead")), QUICK)
+    assert out.candidates[0].structure == plain.candidates[0].structure
+    assert out.candidates[0].worst_slack == pytest.approx(plain.candidates[0].worst_slack, abs=0.005)
+    assert all(c.ranked.endswith("no candidate has a finite disturbance area") for c in out.candidates)
+
+
 def test_a_wish_is_followed_to_the_reserve():
     task = servo(("PI-lead",), prefer="disturbance_integral")
     out = propose(replace(task, prefer=Aim(Measure("disturbance_integral"), "min", 0.05)))
