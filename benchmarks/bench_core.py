@@ -45,15 +45,15 @@ def plainly(population: Population, count: int = SAMPLE) -> list[dict[str, float
 
 def speed() -> Table:
     """One call of many loops against the plain loop."""
-    cases = [(f"order {n}, random designs", designs(n, 1024), 3) for n in (4, 6, 8, 10)]
-    cases += [(f"order {n}, cloud of 10 %", cloud(n, 1024, 0.1), 3) for n in (4, 6, 8, 10)]
+    cases = [(f"order {n}, random designs", designs(n, 1024), 7) for n in (4, 6, 8, 10)]
+    cases += [(f"order {n}, cloud of 10 %", cloud(n, 1024, 0.1), 7) for n in (4, 6, 8, 10)]
     cases += [("order 6, random designs", designs(6, 1024).rows(count), 7) for count in (64, 8, 1)]
     return _against_scipy("Every quantity, one core: core against a plain scipy.signal loop", cases)
 
 
 def dead_time() -> Table:
     """The same with dead time, exact in the core, by a Padé approximation in the plain loop."""
-    cases = [(f"order {n} with dead time", designs(n, 1024, dead_time=True), 3) for n in (4, 6, 8)]
+    cases = [(f"order {n} with dead time", designs(n, 1024, dead_time=True), 7) for n in (4, 6, 8)]
     six = designs(6, 1024, dead_time=True)
     cases += [("order 6 with dead time", six.rows(count), 5) for count in (256, 64)]
     return _against_scipy(
