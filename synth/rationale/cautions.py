@@ -7,7 +7,7 @@ import math
 import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray
-from synth.rationale.practice import EFFORT, far_beyond, idle, poor_reach, reach_words
+from synth.rationale.practice import EFFORT, backwards, far_beyond, idle, poor_reach, reach_words
 from synth.rationale.scene import Scene
 from synth.wording.caveats import HARDWARE
 from synth.wording.figures import count, figure, quantity
@@ -71,11 +71,8 @@ def _roots(polynomial: FloatArray) -> ComplexArray:
 
 
 def _direction(scene: Scene) -> list[str]:
-    final = scene.column("final_value")
-    if (final < 0.0).any():
-        return [
-            f"The loop drives backwards: y ends at {figure(float(np.nanmin(final)), 3)} of the reference."
-        ]
+    if words := backwards(scene):
+        return [f"The loop {words}."]
     gain = scene.candidate.parameters.get("gain")
     if gain is not None and gain < 0.0:
         return ["The gain of C is negative (reverse-acting): make sure of the sign at the terminals."]

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import cmath
 import math
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -176,22 +176,27 @@ def reached(scene: Scene, scan: Scan) -> float:
     The search steers by stand-ins (how far a response is from its band at the limit, say), so what it calls
     the slack of a point that falls short is none of the sheet's: there the scored candidates speak alone.
     """
-    listed = [c.worst_slack for c in scene.outcome.candidates if scan.structure in (c.structure, *c.also)]
+    listed = [c.worst_slack for c in _of(scene.outcome.candidates, scan)]
     if listed and scene.spec.prefer is None:  # the list has its best, on every case there is by now
         return max(listed)
-    found = [c.worst_slack for c in _scored(scene) if scan.structure in (c.structure, *c.also)]
+    found = [c.worst_slack for c in _scored(scene, scan)]
     return max([*found, scan.best_slack] if scan.best_slack >= 0.0 else found, default=-math.inf)
 
 
-def _scored(scene: Scene) -> list[Candidate]:
+def _of(found: Iterable[Candidate], scan: Scan) -> list[Candidate]:
+    """Those that the structure of the scan can be."""
+    return [c for c in found if scan.structure in (c.structure, *c.also)]
+
+
+def _scored(scene: Scene, scan: Scan) -> list[Candidate]:
     closest = [r.closest for r in scene.outcome.rejections if r.closest is not None]
-    return [*scene.outcome.candidates, *closest]
+    return _of([*scene.outcome.candidates, *closest], scan)
 
 
 def _little(scene: Scene, scan: Scan, slack: float) -> dict[str, Any]:
     """The final value behind a structure's slack, where it is won by a loop that hardly follows."""
-    for c in _scored(scene):
-        if scan.structure in (c.structure, *c.also) and abs(c.worst_slack - slack) < 0.01:
+    for c in _scored(scene, scan):
+        if abs(c.worst_slack - slack) < 0.01:
             other = Scene(scene.spec, scene.outcome, c)
             case = poor_reach(other)
             return {} if case is None else {"final_value": float(other.column("final_value")[case])}

@@ -22,6 +22,14 @@ def remarks(scene: Scene) -> list[str]:
     return [*_final_value(scene), *idle(scene), *far_beyond(scene)]
 
 
+def backwards(scene: Scene) -> str:
+    """ "drives backwards: y ends at −0.4 of the reference", on the worst case; nothing for a usual loop."""
+    final = scene.column("final_value")
+    if not (final < 0.0).any():
+        return ""
+    return f"drives backwards: y ends at {figure(float(np.nanmin(final)), 3)} of the reference"
+
+
 def reach_words(final: float) -> str:
     """ "reaches only 38 % of the reference", or "settles at 208 % of the reference" where it goes past it."""
     verb = "settles at" if final > 1.0 else "reaches only"
@@ -37,11 +45,10 @@ def poor_reach(scene: Scene) -> int | None:
 
 
 def _final_value(scene: Scene) -> list[str]:
-    final = scene.column("final_value")
-    if (final < 0.0).any():
-        return [f"drives backwards: y ends at {figure(float(np.nanmin(final)), 3)} of the reference"]
+    if words := backwards(scene):
+        return [words]
     case = poor_reach(scene)
-    return [] if case is None else [reach_words(float(final[case]))]
+    return [] if case is None else [reach_words(float(scene.column("final_value")[case]))]
 
 
 def _pace(scene: Scene) -> float:

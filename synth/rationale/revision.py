@@ -76,16 +76,14 @@ def _before_and_after(
     known = not math.isnan(before)
     was = f" (its slack on the old plant was {percent(before)})" if known else ""
     facts: dict[str, Any] = {"before": before, "after": untouched.worst_slack}
+    scene = Scene(spec, outcome, untouched)
     if not untouched.stable.all():
-        bad = [n for n, ok in zip(outcome.case_names, untouched.stable, strict=False) if not ok]
-        more = f" and {len(bad) - 3} more" if len(bad) > 3 else ""
-        where = f" on {'; '.join(bad[:3])}{more}" if len(outcome.case_names) > 1 else ""
-        return f"Untouched, it is unstable{where}{was}.", facts
+        return f"Untouched, it is unstable{scene.on_unstable()}{was}.", facts
     if untouched.meets_all:
         how = "still meets" if before >= 0.0 else "meets"
     else:
         how = "no longer meets" if before >= 0.0 else "still does not meet" if known else "does not meet"
-    return f"Untouched, it {how} everything{was}. {said_binding(Scene(spec, outcome, untouched))}", facts
+    return f"Untouched, it {how} everything{was}. {said_binding(scene)}", facts
 
 
 def _could_be_better(outcome: Outcome, untouched: Candidate) -> list[tuple[str, dict[str, Any]]]:

@@ -64,6 +64,12 @@ class Scene:
         """ " on I high" where there is more than one case; nothing otherwise."""
         return f" on {case}" if len(self.outcome.case_names) > 1 else ""
 
+    def on_unstable(self) -> str:
+        """ " on I high; I low", the first three cases that are not stable; nothing where there is but one."""
+        bad = [self.case(int(k)) for k in np.flatnonzero(~self.candidate.stable)]
+        more = f" and {len(bad) - 3} more" if len(bad) > 3 else ""
+        return self.on("; ".join(bad[:3]) + more)
+
 
 def worst_of(measure: Measure, values: FloatArray, bounds: tuple[Bound, ...]) -> tuple[float, int]:
     """The worst of a quantity over the cases (K,): value and case number.

@@ -8,11 +8,11 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from synth.rationale.practice import poor_reach, reach_words
+from synth.rationale.practice import backwards, poor_reach, reach_words
 from synth.rationale.scene import Scene
 from synth.search.outcome import Outcome
 from synth.spec import Spec
-from synth.wording.figures import count, figure, percent, quantity
+from synth.wording.figures import count, percent, quantity
 from synth.wording.names import limit_words, name_of
 
 if TYPE_CHECKING:
@@ -78,10 +78,7 @@ def _missed(scene: Scene, who: str, searched: bool) -> Said:
         "short": {scene.spec.bounds[i].id: float(worst[i]) for i in short},
     }
     if not candidate.stable.all():
-        bad = [scene.case(int(k)) for k in np.flatnonzero(~candidate.stable)]
-        listed = "; ".join(bad[:3]) + (f" and {len(bad) - 3} more" if len(bad) > 3 else "")
-        where = f" on {listed}" if len(scene.outcome.case_names) > 1 else ""
-        return f"{who} does not stabilise the plant{where}.", facts
+        return f"{who} does not stabilise the plant{scene.on_unstable()}.", facts
     parts = []
     for i in short[:3]:
         bound = scene.spec.bounds[i]
@@ -111,11 +108,12 @@ def _how_far_searched(outcome: Outcome) -> str:
 
 def _word_on_reach(scene: Scene) -> str:
     """Where the sheet bounds no static error: a loop that hardly follows has to be called so."""
-    final = scene.column("final_value")
-    if (final < 0.0).any():
-        return f" The loop drives backwards: y ends at {figure(float(np.nanmin(final)), 3)} of the reference."
+    if words := backwards(scene):
+        return f" The loop {words}."
     case = poor_reach(scene)
-    return "" if case is None else f" It {reach_words(float(final[case]))}{scene.on(scene.case(case))}."
+    if case is None:
+        return ""
+    return f" It {reach_words(float(scene.column('final_value')[case]))}{scene.on(scene.case(case))}."
 
 
 def _nothing(outcome: Outcome) -> Said:
