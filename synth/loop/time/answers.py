@@ -13,7 +13,7 @@ import numpy as np
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.time.outlook import RESOLUTION
 from synth.loop.time.plan import TAIL, Plan, blocks
-from synth.loop.time.questions import Answers, Area, Passage, Supremum
+from synth.loop.time.questions import Answers, Area, Passage, Questions, Supremum
 from synth.loop.time.scan import scan
 from synth.loop.time.signals import CELLS, HERMITE, Signals
 from synth.loop.time.survey import Survey
@@ -45,28 +45,21 @@ unproven.
 """
 
 
-def answer(
-    modes: Signals,
-    unit: FloatArray,
-    suprema: list[Supremum],
-    passages: list[Passage],
-    integrals: list[Area],
-    segments: int = SEGMENTS,
-) -> Answers:
+def answer(modes: Signals, unit: FloatArray, asked: Questions, segments: int = SEGMENTS) -> Answers:
     """Answer the questions for every loop.
 
     unit : (M, S) a size of each signal that is known beforehand (its value at 0+ or at infinity), or 0.
     """
-    found = _direct(modes, unit, suprema, passages, integrals, LONG)
+    found = _direct(modes, unit, asked, LONG)
     if np.isinf(found.seen).all():
         return found
-    for w, q in enumerate(suprema):
+    for w, q in enumerate(asked.suprema):
         rows = np.flatnonzero(found.supremum_ends[w] > found.seen)
         if rows.size:
             _follow_supremum(modes, unit, found, w, q, rows, segments)
-    for k, r in enumerate(integrals):
+    for k, r in enumerate(asked.areas):
         _go_on_with_area(modes, unit, found, k, r)
-    for v, p in enumerate(passages):
+    for v, p in enumerate(asked.passages):
         rows = np.flatnonzero(found.passage_ends[v] > found.seen)
         if rows.size == 0:
             continue
@@ -79,18 +72,12 @@ def answer(
     return found
 
 
-def _direct(
-    modes: Signals,
-    unit: FloatArray,
-    suprema: list[Supremum],
-    passages: list[Passage],
-    integrals: list[Area],
-    most: int,
-) -> Answers:
+def _direct(modes: Signals, unit: FloatArray, asked: Questions, most: int) -> Answers:
     """Answers as far as `most` blocks a loop reach."""
-    profile = modes.profile(np.maximum(RESOLUTION * unit, 1e-13 * modes.largest()) + 1e-300, bool(integrals))
+    floor = np.maximum(RESOLUTION * unit, 1e-13 * modes.largest()) + 1e-300
+    profile = modes.profile(floor, bool(asked.areas))
     unit = np.maximum(unit, np.abs(profile.deviation).max(axis=2)) + 1e-300
-    survey = Survey(modes, profile, unit, suprema, passages, integrals)
+    survey = Survey(modes, profile, unit, asked)
     plan = blocks(modes, profile, survey.outlook.ends, FINE * unit, most)
     for a, b in _passes(plan):
         low = plan.first[a]
@@ -117,7 +104,7 @@ def _go_on_with_area(modes: Signals, unit: FloatArray, found: Answers, k: int, r
     rows = np.flatnonzero(found.doubts[k] > AREA_ERROR)
     for some in np.split(rows, range(AT_ONCE, len(rows), AT_ONCE)):
         if some.size:
-            part = _direct(modes.rows(some), unit[some], [], [], [r], AREA_MOST)
+            part = _direct(modes.rows(some), unit[some], Questions(areas=[r]), AREA_MOST)
             found.areas[k][some], found.doubts[k][some] = part.areas[0], part.doubts[0]
 
 
@@ -144,7 +131,7 @@ def _follow_supremum(
         return
     later = modes.rows(rows).later([q.signal], seen)
     on = Supremum(0, q.signs, q.offset[rows], best)
-    part = answer(later, unit[rows][:, [q.signal]], [on], [], [], segments - 1)
+    part = answer(later, unit[rows][:, [q.signal]], Questions(suprema=[on]), segments - 1)
     found.open_suprema[w][rows] = part.open_suprema[0]
     higher = part.suprema[0] > best
     found.suprema[w][rows] = part.suprema[0]
@@ -168,7 +155,7 @@ def _follow_passage(
     seen = found.seen[rows]
     later = modes.rows(rows).later([p.signal], seen)
     on = Passage(0, p.low, p.high, False)
-    part = answer(later, unit[rows][:, [p.signal]], [], [on], [], segments - 1)
+    part = answer(later, unit[rows][:, [p.signal]], Questions(passages=[on]), segments - 1)
     found.passages[v][rows] = seen + part.passages[0]
     found.open_passages[v][rows] = part.open_passages[0]
 
@@ -186,11 +173,11 @@ def _last_passage(
     width = np.sqrt(np.sqrt(TAIL * envelope[p.signal] / (HERMITE * fourth[p.signal])))
     window = np.where(np.isfinite(width), WINDOW * CELLS * width, end)
     pending = np.arange(len(rows))
-    on = Passage(0, p.low, p.high, True)
+    on = Questions(passages=[Passage(0, p.low, p.high, True)])
     while pending.size:
         start = np.maximum(end[pending] - window[pending], seen[pending])
         later = modes.rows(rows[pending]).later([p.signal], start)
-        part = _direct(later, np.zeros((len(pending), 1)), [], [on], [], MOST)
+        part = _direct(later, np.zeros((len(pending), 1)), on, MOST)
         out[pending] = start + part.passages[0]
         open_[pending] = part.passage_ends[0] > part.seen
         again = (part.passages[0] == 0.0) & (start > seen[pending]) & ~open_[pending]

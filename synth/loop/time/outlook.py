@@ -7,11 +7,13 @@ V views. P passages, A areas.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 
 from synth.loop.arrays import FloatArray
 from synth.loop.time.plan import onset, reach
-from synth.loop.time.questions import Area, Passage, Supremum
+from synth.loop.time.questions import Passage, Questions, Supremum
 from synth.loop.time.signals import Profile, Signals
 
 RESOLUTION = 1e-9
@@ -31,6 +33,7 @@ class Outlook:
     offset                 (V, M) sign times the supremum's offset
     since                  (V, M) time from which the view counts; None where all count from 0 on
     entry                  (2, V, M) signals and slopes at `since`
+    floor                  (W, M) what each supremum is at least
     known, when            (W, M) largest sample, and its time; NaN where the floor is no less
     best, place            (W, M) the same of the start alone
     tolerance              (W, M) a gain below this does not count
@@ -39,20 +42,13 @@ class Outlook:
     ends                   (M, S) when each signal has been seen enough
     """
 
-    def __init__(
-        self,
-        modes: Signals,
-        profile: Profile,
-        unit: FloatArray,
-        suprema: list[Supremum],
-        passages: list[Passage],
-        integrals: list[Area],
-    ) -> None:
+    def __init__(self, modes: Signals, profile: Profile, unit: FloatArray, asked: Questions) -> None:
         m, s = unit.shape
+        suprema, passages = asked.suprema, asked.passages
         self._ask(modes, suprema, m)
         signals = [q.signal for q in suprema]
         self.tolerance = RESOLUTION * unit.T[signals]
-        held = [q.signal for q in integrals]
+        held = [q.signal for q in asked.areas]
         # everything that is read off a decreasing curve is read in one go
         curves = [profile.rivals, profile.envelope[:, signals + [p.signal for p in passages]]]
         levels = [np.full((m, s), STEADY), self._samples(profile, suprema).T]
@@ -82,7 +78,7 @@ class Outlook:
             np.maximum(ends[signal], end, out=ends[signal])
         self.ends = ends.T
 
-    def _ask(self, modes: Signals, suprema: list[Supremum], m: int) -> None:
+    def _ask(self, modes: Signals, suprema: Sequence[Supremum], m: int) -> None:
         views = [(w, sign) for w, q in enumerate(suprema) for sign in q.signs]
         self.answer = np.array([w for w, _ in views], dtype=np.intp)
         self.sign = np.array([sign for _, sign in views])
@@ -98,10 +94,10 @@ class Outlook:
                 self.since[v] = since
                 self.entry[:, v] = modes.jet(np.arange(m), np.full(m, self.signal[v]), since, 0, 2)
 
-    def _samples(self, profile: Profile, suprema: list[Supremum]) -> FloatArray:
+    def _samples(self, profile: Profile, suprema: Sequence[Supremum]) -> FloatArray:
         """Takes the suprema over the samples; returns (W, M) how far signals must fall to matter no more."""
         m = len(profile.time)
-        floor = np.array([q.floor for q in suprema]).reshape(-1, m)
+        self.floor = floor = np.array([q.floor for q in suprema]).reshape(-1, m)
         self.known, self.when = floor.copy(), np.full(floor.shape, np.nan)
         if not suprema:
             self.best, self.place = floor, self.when

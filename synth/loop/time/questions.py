@@ -5,6 +5,7 @@ M loops. Signals are counted from their values at infinity. Only what is asked f
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 from synth.loop.arrays import BoolArray, FloatArray
@@ -39,6 +40,15 @@ class Area:
     """Integral of abs(x)."""
 
     signal: int
+
+
+@dataclass(frozen=True, slots=True)
+class Questions:
+    """All that is asked of one batch."""
+
+    suprema: Sequence[Supremum] = ()
+    passages: Sequence[Passage] = ()
+    areas: Sequence[Area] = ()
 
 
 @dataclass(slots=True)

@@ -9,7 +9,7 @@ from synth.loop.closed_loop import Loops
 from synth.loop.quantities import Measure
 from synth.loop.time.answers import AREA_ERROR, answer
 from synth.loop.time.clusters import ClusterModes, cluster_modes
-from synth.loop.time.questions import Answers, Area, Passage, Supremum
+from synth.loop.time.questions import Answers, Area, Passage, Questions, Supremum
 from synth.loop.time.residues import CROWDED, crowding, limits, step_modes
 from synth.loop.time.result import TimeStage
 from synth.loop.time.signals import Signals
@@ -133,13 +133,8 @@ class _Reading:
         """All values."""
         for m in self.asked:
             self._ask(m)
-        found = answer(
-            self.modes,
-            self.unit,
-            list(self.suprema.values()),
-            list(self.passages.values()),
-            list(self.areas.values()),
-        )
+        suprema, passages, areas = self.suprema.values(), self.passages.values(), self.areas.values()
+        found = answer(self.modes, self.unit, Questions(tuple(suprema), tuple(passages), tuple(areas)))
         self.approximate: dict[Measure, BoolArray] = {}
         values = {m: self._value(m, found) for m in self.asked}
         for m in self.asked:

@@ -16,7 +16,7 @@ from synth.loop.time.events import solve
 from synth.loop.time.outlook import AREA_RESOLUTION, Outlook
 from synth.loop.time.peaks import Peaks
 from synth.loop.time.plan import Plan
-from synth.loop.time.questions import Answers, Area, Passage, Supremum
+from synth.loop.time.questions import Answers, Area, Passage, Questions
 from synth.loop.time.scan import Scan
 from synth.loop.time.signals import CELLS, Profile, Signals
 
@@ -24,25 +24,17 @@ from synth.loop.time.signals import CELLS, Profile, Signals
 class Survey:
     """The questions of one batch, what is known about them, and the cells still in doubt."""
 
-    def __init__(
-        self,
-        modes: Signals,
-        profile: Profile,
-        unit: FloatArray,
-        suprema: list[Supremum],
-        passages: list[Passage],
-        integrals: list[Area],
-    ) -> None:
+    def __init__(self, modes: Signals, profile: Profile, unit: FloatArray, asked: Questions) -> None:
         self.modes, self.m = modes, len(modes)
-        self.suprema, self.passages, self.integrals = suprema, passages, integrals
-        self.outlook = outlook = Outlook(modes, profile, unit, suprema, passages, integrals)
+        self.passages, self.areas = asked.passages, asked.areas
+        self.outlook = outlook = Outlook(modes, profile, unit, asked)
         self.start = profile.deviation[:, :, 0]
         self.best = outlook.best
         self.negligible = 1e-2 * AREA_RESOLUTION * outlook.about
         # of every key: when it is settled; of those of views, in what terms their cells are seen
         ends = [outlook.supremum_ends[outlook.answer], outlook.passage_ends, outlook.area_ends]
         self.end = np.concatenate(ends).ravel()
-        self.borders = len(ends[0]) * self.m, (len(ends[0]) + len(passages)) * self.m
+        self.borders = len(ends[0]) * self.m, (len(ends[0]) + len(self.passages)) * self.m
         self.sign, self.offset = outlook.sign.repeat(self.m), outlook.offset.ravel()
         self.doubt: list[Cells] = []
 
@@ -61,13 +53,13 @@ class Survey:
         doubtful = s.doubtful()
         border = doubtful.searchsorted(np.arange(len(s.value) + 1) * (CELLS * len(s.loop)))
         own = [s.passing(p.signal, p.low, p.high, p.last) for p in self.passages]
-        own += [s.changing(r.signal) for r in self.integrals]
+        own += [s.changing(r.signal) for r in self.areas]
         cells = s.cells(np.concatenate([doubtful, *own]))
         low, high = cells.range()
         number, view = self._peaks(s, cells, border, low, high)
         numbers, questions = [number], [view]
         stop = len(doubtful)
-        asked: list[Passage | Area] = [*self.passages, *self.integrals]
+        asked: list[Passage | Area] = [*self.passages, *self.areas]
         for k, q in enumerate(asked):
             start, stop = stop, stop + len(own[k])
             part = slice(border[q.signal], border[q.signal + 1])
@@ -159,14 +151,13 @@ class Survey:
         best, place = peaks.best.reshape(shape), peaks.place.reshape(shape)
         place = np.where(outlook.known > best, outlook.when, place)
         best = np.maximum(best, outlook.known)
-        floor = np.array([q.floor for q in self.suprema]).reshape(shape)
-        more = best > floor + outlook.tolerance  # less than that is rounding
+        more = best > outlook.floor + outlook.tolerance  # less than that is rounding
         total = doubt = outlook.about
-        if self.integrals:
+        if self.areas:
             end = np.minimum(outlook.area_ends, seen)
-            total, doubt = areas(self.modes, [r.signal for r in self.integrals], end, zeros.cells())
+            total, doubt = areas(self.modes, [r.signal for r in self.areas], end, zeros.cells())
         return Answers(
-            suprema=list(np.where(more, best, floor)),
+            suprema=list(np.where(more, best, outlook.floor)),
             times=list(np.where(more, place, np.nan)),
             passages=[self._time(p, t) for p, t in zip(self.passages, time.reshape(-1, m), strict=True)],
             areas=list(total),
