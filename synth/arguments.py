@@ -1,4 +1,4 @@
-"""The command line as it may be typed: commands, options, help;
+"""The command line as it may be typed: commands, options, help.
 
 Every mistake becomes a fault with the nearest name.
 """

@@ -111,10 +111,7 @@ def _searched(typed: argparse.Namespace, job: Callable[[Options], Done]) -> int:
 
 
 def _code(record: Record) -> int:
-    """0 where the one that counts meets everything: the adopted one, untouched, in a rerun;
-
-    Else the first.
-    """
+    """0 where the one that counts meets everything: in a rerun the adopted one, untouched; else the first."""
     revision = record["revision"]
     if revision is not None and revision["adopted"] is not None:
         return MET if revision["adopted"]["meets_all"] else NOT_MET

@@ -93,10 +93,8 @@ def _newest(spec_path: Path) -> Stored:
 
 
 def in_service(before: Stored) -> InService | None:
-    """The newest adoption of the record or of those before it; else its first candidate;
-
-    None where it has none.
-    """
+    """The newest adoption of the record or of those before it, else its first candidate; None where it has
+    none."""
     stored: Stored | None = before
     for _ in range(MOST_ANCESTORS):
         if stored is None:

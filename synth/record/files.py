@@ -1,6 +1,6 @@
-"""JSON files written whole or not at all, and never over another;
+"""JSON files written whole or not at all, and never over another.
 
-Read with one clear word when they are not right.
+They are read with one clear word when they are not right.
 """
 
 from __future__ import annotations

@@ -157,10 +157,8 @@ class Sentence(TypedDict):
 
 
 class StepCurve(TypedDict, total=False):
-    """y and u of a unit reference step over t [s], as long as one another;
-
-    Empty for a loop that is not stable.
-    """
+    """y and u of a unit reference step over t [s], as long as one another; empty for a loop that is not
+    stable."""
 
     case: str
     t: list[Number]

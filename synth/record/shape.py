@@ -85,10 +85,8 @@ def _compare(value: Any, kind: Any, path: str, found: list[Departure]) -> None:
 
 
 def _compare_union(value: Any, kind: Any, path: str, found: list[Departure]) -> None:
-    """A union holds when one of its members does;
-
-    The complaint is that of the member of the same outer kind.
-    """
+    """A union holds when one of its members does; else the complaint is that of the member of the same outer
+    kind."""
     best: list[Departure] | None = None
     for member in get_args(kind):
         tried: list[Departure] = []

@@ -45,10 +45,8 @@ def _compensator(view: View, candidate: Candidate, width: int) -> list[Text]:
 
 
 def _requirements(view: View, candidate: Candidate, width: int) -> list[Text]:
-    """Value, limit and slack of each requirement where it is nearest its limit;
-
-    Other cases that come near below.
-    """
+    """Value, limit and slack of each requirement where it is nearest its limit; below it, further cases that
+    come near."""
     several = view.several_cases and width >= NARROW
     table = Columns(("<", ">", "<", ">", "<") if several else ("<", ">", "<", ">"), spare=((2,),))
     table.add("", "value", "limit", "slack", *(("case",) if several else ()), style="dim")

@@ -38,10 +38,7 @@ class Column:
 
 
 def comparison(named: Sequence[tuple[str, Record]], width: int) -> list[Text]:
-    """The records named, then their candidates in columns;
-
-    As many columns as fit, the rest in further blocks.
-    """
+    """The records named, then their candidates in columns: as many as fit, the rest in further blocks."""
     several = len(named) > 1
     lines: list[Text] = []
     columns: list[Column] = []

@@ -1,7 +1,4 @@
-"""Pictures of a candidate in the terminal: step responses, loop gain, root locus;
-
-Drawn from the record's curves.
-"""
+"""Pictures of a candidate in the terminal: step responses, loop gain, root locus, as in the record."""
 
 from __future__ import annotations
 
@@ -141,10 +138,7 @@ def _phase_range(phase: Sequence[float]) -> tuple[float, float]:
 
 
 def locus(view: View, candidate: Candidate, width: int) -> list[Text]:
-    """Poles of the nominal closed loop as the gain of C goes from 0 to infinity;
-
-    The upper half of the plane.
-    """
+    """Poles of the nominal closed loop as the gain of C goes from 0 to infinity, upper half plane."""
     curves = candidate["curves"].get("root_locus") or {}
     branches = curves.get("branches", [])
     points = curves.get("points", [])

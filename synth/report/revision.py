@@ -75,7 +75,7 @@ def _changes(record: Record, width: int) -> list[Text]:
         if sign is not None:  # a limit that moved reads as everywhere else, not by its key
             asked = one["what"] in view.requirements  # one that was dropped is not
             where = f"{view.name(one['what']) if asked else quantity_name(key)} {sign}"
-            old, new = (_limit(limit, view.quantity_unit(key)) for limit in (one["old"], one["new"]))
+            old, new = (quantity(number(one[at]), view.quantity_unit(key)) for at in ("old", "new"))
         if len(old) + len(new) > LONG:
             long.append(hanging(f"  {where}: ", f"{old} → {new}", width))
             continue
@@ -95,10 +95,6 @@ def _value(value: Any) -> str:
     if isinstance(value, list):
         return "[" + ", ".join(_value(v) for v in value) + "]"
     return str(value)
-
-
-def _limit(value: Any, unit: str) -> str:
-    return ABSENT if value is None else quantity(number(value), unit)
 
 
 def _relative(old: Any, new: Any) -> str:

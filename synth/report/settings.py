@@ -112,9 +112,8 @@ def forms(candidate: Candidate, spec: SpecPart, width: int) -> list[Text]:
 
 
 def one_line(values: dict[str, float], candidate: Candidate) -> list[str]:
-    """A lead or a lag as one says it: "gain 3.1; +38° at 12 rad/s; corner ratio 4.2;
-
-    Corners 6 and 25 rad/s".
+    """A lead or a lag as one says it: "+38° at 12 rad/s", "corner ratio 4.2", "corners 6 and 25 rad/s"; before
+    them the gain and, of a structure that has one, the integral time.
     """
     parts = []
     for name, value in values.items():

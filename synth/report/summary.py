@@ -69,7 +69,7 @@ def ranked(record: Record, width: int) -> list[Text]:
     table.add("", "structure", "order", "slack", *(("held back by",) if beside else ()), style="dim")
     for c in candidates:
         held = _held_by(view, c, several)
-        slack = Text(percent(float(c["worst_slack"] or 0.0)) if c["worst_slack"] is not None else "—")
+        slack = Text(percent(number(c["worst_slack"])))
         slack.stylize("short" if not c["meets_all"] else "")
         name = Text(c["structure"], style="name")
         table.add(str(c["rank"]), name, str(order(c)), slack, *((held,) if beside else ()))
@@ -109,9 +109,7 @@ def _examined(record: Record) -> str:
 
 def _held_by(view: View, candidate: Candidate, several: bool) -> str:
     binding = candidate["binding"]
-    if binding is None:
-        return "nothing: every slack is 100 %"
-    if number(candidate["worst_slack"]) >= 1.0:
+    if binding is None or number(candidate["worst_slack"]) >= 1.0:
         return "nothing: every slack is 100 %"
     where = f", {binding['case']}" if several else ""
     return f"{view.name(binding['requirement'])}{where}"
