@@ -49,16 +49,18 @@ def last_exit(amplitude: ComplexArray, pole: ComplexArray, band: FloatArray) -> 
 
 
 def area(amplitude: ComplexArray, pole: ComplexArray) -> FloatArray:
-    """Integral of abs(Re a e^(pt)) from 0 to infinity. (M,)."""
+    """Integral of abs(Re a e^(pt)) from 0 to infinity. (M,).
+
+    With f = a e^(pt) / p, the primitive of a pair's mode, and abs f falling by e^(-pi sigma/omega) from zero
+    to zero, the sum after the first zero is abs(f(zero)) coth(pi sigma / (2 omega)).
+    """
     with np.errstate(all="ignore"):
         real = pole.imag == 0.0
-        half = _half_period(pole)
-        phase = np.angle(amplitude)
-        zero = np.mod(np.pi / 2.0 - phase, np.pi) / pole.imag
+        zero = np.mod(np.pi / 2.0 - np.angle(amplitude), np.pi) / pole.imag
         whole = (amplitude / pole).real
         at_zero = (amplitude / pole * np.exp(pole * zero)).real
-        ratio = np.exp(pole.real * half)
-        swinging = np.abs(at_zero - whole) + np.abs(at_zero) * (1.0 + ratio) / (1.0 - ratio)
+        waves = np.abs(at_zero) / np.tanh(-0.5 * np.pi * pole.real / pole.imag)
+        swinging = np.abs(at_zero - whole) + waves
     out: FloatArray = np.where(real, np.abs(amplitude.real / pole.real), swinging)
     return out
 

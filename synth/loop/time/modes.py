@@ -11,6 +11,7 @@ from __future__ import annotations
 import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
+from synth.loop.time import last_mode
 from synth.loop.time.signals import CELLS, HERMITE, Profile
 
 OCTAVES = 120
@@ -176,9 +177,7 @@ class Modes:
         """Integral of abs(x) from t on, and a bound of its error. (E,) each.
 
         Where the slowest mode is real and its slope outweighs all others', x keeps its sign: exact. Else the
-        slowest mode stands for all, and the others' areas bound the error. With f = r e^(p t) / p, the
-        primitive of a pair's mode, and abs f falling by e^(-pi sigma/omega) from zero to zero, the sum after
-        the first zero is abs(f(zero)) coth(pi sigma / (2 omega)).
+        slowest mode stands for all, and the others' areas bound the error.
         """
         slots = self.pole.shape[1]
         slot = (self.size[loop, signal] > 0.0).argmax(axis=1)
@@ -187,15 +186,9 @@ class Modes:
         others = np.where(np.arange(slots) == slot[:, None], 0.0, size)
         row = np.arange(len(loop))
         p, x = pole[row, slot], now[row, slot]
-        paired = p.imag > 0.0
-        steady = ~paired & (size[row, slot] * -p.real > (others * np.abs(pole)).sum(axis=1))
+        steady = (p.imag == 0.0) & (size[row, slot] * -p.real > (others * np.abs(pole)).sum(axis=1))
         exact = np.abs((now / pole).real.sum(axis=1))
-        omega = np.where(paired, p.imag, 1.0)
-        wait = np.mod(0.5 * np.pi - np.angle(x), np.pi) / omega
-        primitive = (x / p).real
-        at_zero = (x / p * np.exp(p * wait)).real
-        waves = np.abs(at_zero - primitive) + np.abs(at_zero) / np.tanh(-0.5 * np.pi * p.real / omega)
-        area = np.where(steady, exact, np.where(paired, waves, np.abs(primitive)))
+        area = np.where(steady, exact, last_mode.area(x, p))
         return area, np.where(steady, 0.0, (others / -pole.real).sum(axis=1))
 
 
