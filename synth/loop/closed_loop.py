@@ -81,6 +81,11 @@ class Loops:
         """n, the order of D."""
         return int(self.denominator.shape[1]) - 1
 
+    @property
+    def delayed(self) -> bool:
+        """Whether there is dead time: in all of them or in none."""
+        return len(self) > 0 and bool(self.dead_time[0] > 0.0)
+
     def leading(self, polynomials: FloatArray) -> FloatArray:
         """(M,) coefficient of s^n in each row, n the order of that row's loop."""
         if self.denominator[:, 0].all():

@@ -117,10 +117,10 @@ def evaluate(
     until = screen or Screen()
     for rows in _batches(plants, compensators, plant_of, compensator_of):
         loops = close(plants, compensators, plant_of[rows], compensator_of[rows])
-        if replaced and loops.dead_time[0] > 0.0:
+        if replaced and loops.delayed:
             rows, loops = _fill_by_stand_in(out, rows, loops, until)
         parts = [_fill_poles(out, rows[at], some, until) for at, some in loops.by_order()]
-        if len(parts) > 1 and not loops.dead_time.any():
+        if len(parts) > 1 and not loops.delayed:
             parts = [_together(parts)]
         for part in parts:
             _fill_responses(out, *part, until)
@@ -349,7 +349,7 @@ def _write_doubts(
     out: Evaluation, rows: IntArray, loops: Loops, stage: PoleStage, values: dict[Measure, FloatArray]
 ) -> None:
     """Mark quantities of the poles that rounding leaves open."""
-    if rows.size and not loops.dead_time.any():
+    if rows.size and not loops.delayed:
         for measure, doubt in doubts(loops, stage.poles, values).items():
             for i in (i for i, wanted in enumerate(out.measures) if wanted == measure):
                 out.approximate[rows, i] = doubt

@@ -19,10 +19,9 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops, exact_degree, product
-from synth.loop.poles.delayed import characteristic
 from synth.loop.poles.encirclement import delayed_stable
-from synth.loop.poles.newton import by_newton, upper_half
-from synth.loop.poles.roots import closed_roots
+from synth.loop.poles.newton import by_newton, characteristic, upper_half
+from synth.loop.poles.roots import closed_roots, rightmost
 from synth.loop.poles.share import spaced
 from synth.loop.poles.stage import REACH, least_damping, needs_counting
 from synth.loop.polynomials import horner
@@ -77,9 +76,7 @@ class StandIns:
 
     def abscissa(self) -> FloatArray:
         """(M,) largest real part of a pole."""
-        real = self.poles.real
-        out: FloatArray = np.where(np.isnan(real), -np.inf, real).max(axis=1, initial=-np.inf)
-        return out
+        return rightmost(self.poles)
 
 
 def worthwhile(loops: Loops) -> BoolArray:

@@ -52,8 +52,7 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
         return {}
     response = response_of(loops)
     readable = np.isfinite(response.squares).all(axis=(0, 1))
-    delayed = bool((loops.dead_time > 0.0).any())
-    if delayed:  # a coefficient whose square vanishes would be taken for none
+    if loops.delayed:  # a coefficient whose square vanishes would be taken for none
         readable &= ~((response.ends != 0.0) & (np.abs(response.ends) < 1e-150)).any(axis=(0, 1))
     if not readable.all():
         some = np.flatnonzero(readable)
@@ -63,7 +62,7 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
     curves = tuple(k for k in CURVES if k in wanted)
     out: dict[str, FloatArray] = {}
     found: list[Crossings] = []
-    if delayed:
+    if loops.delayed:
         others = tuple(k for k in kinds if k != GAIN)
         recurring = np.zeros(len(loops), dtype=bool)
         if others or curves:
@@ -76,7 +75,7 @@ def frequency_stage(loops: Loops, poles: ComplexArray, wanted: frozenset[str]) -
         out |= gain_quantities(response, of_kind(found, GAIN))
     if FALL in kinds:
         out |= fall_quantities(len(loops), of_kind(found, FALL), fall_level(response) == 0.0)
-        if delayed:
+        if loops.delayed:
             out["highest_fall"] = np.where(recurring, np.inf, out["highest_fall"])
     if PHASE in kinds:
         out |= gain_margins(response, of_kind(found, PHASE))

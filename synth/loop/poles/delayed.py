@@ -18,6 +18,7 @@ from synth.loop.poles.encirclement import (
     unit_crossings,
 )
 from synth.loop.poles.newton import by_newton, characteristic, upper_half
+from synth.loop.poles.roots import rightmost
 from synth.loop.poles.seeds import seeds_of
 from synth.loop.poles.winding import missing_roots
 from synth.loop.polynomials import magnitude_sum
@@ -76,13 +77,13 @@ def proven_poles(loops: Loops, reach: FloatArray) -> tuple[ComplexArray, BoolArr
     short = np.flatnonzero(~sure)
     while short.size:
         radius[short] = np.minimum(3.0 * radius[short], FARTHEST / delay[short])
-        found = _joined(found, short, _within(loops.rows(short), radius[short]))
+        found = joined(found, short, _within(loops.rows(short), radius[short]))
         proven[short], sure = _rightmost_proven(loops.rows(short), found[short])
         lacking = short[~sure]
         short = lacking[radius[lacking] * delay[lacking] < 0.999 * FARTHEST]
         astray = np.setdiff1d(lacking, short)
         if astray.size:
-            found = _joined(found, astray, _with_rightmost(loops.rows(astray), found[astray]))
+            found = joined(found, astray, _with_rightmost(loops.rows(astray), found[astray]))
     return _trimmed(found, asked), proven
 
 
@@ -123,12 +124,12 @@ def _within(loops: Loops, radius: FloatArray) -> ComplexArray:
                 else:
                     # from the beginning, and with care
                     better = _kept(part, _refined(part, seeds[wanting] if attempt == 1 else more, reach))
-                roots = _joined(roots, wanting, better)
+                roots = joined(roots, wanting, better)
             outside = ~(np.abs(roots) <= far[:, None] * (1.0 + 1e-12))
             best = np.where(outside, -np.inf, roots.real).max(axis=1, initial=-np.inf)
             outside &= ~(roots.real > best[:, None])
         roots[outside] = np.nan
-        found = _joined(found, at, _ordered(roots))
+        found = joined(found, at, _ordered(roots))
     return found
 
 
@@ -227,7 +228,7 @@ def _ordered(roots: ComplexArray) -> ComplexArray:
     return out[:, :width]
 
 
-def _joined(whole: ComplexArray, at: IntArray, part: ComplexArray) -> ComplexArray:
+def joined(whole: ComplexArray, at: IntArray, part: ComplexArray) -> ComplexArray:
     """`whole` with its rows `at` replaced by `part`, widened with NaN as needed."""
     width = max(whole.shape[1], part.shape[1])
     out = np.full((whole.shape[0], width), np.nan, dtype=complex)
@@ -255,8 +256,7 @@ def _with_rightmost(loops: Loops, found: ComplexArray) -> ComplexArray:
     The line is bisected to where the last root leaves its right side; the crossing frequency where L is
     nearest -1 there is the root's imaginary part.
     """
-    low = np.where(np.isnan(found.real), -np.inf, found.real).max(axis=1, initial=-np.inf)
-    low = np.fmax(low, -FARTHEST / loops.dead_time)
+    low = np.fmax(rightmost(found), -FARTHEST / loops.dead_time)
     step = 1.0 / loops.dead_time
     high = low + step
     for _ in range(60):
@@ -287,9 +287,8 @@ def _with_rightmost(loops: Loops, found: ComplexArray) -> ComplexArray:
 def _rightmost_proven(loops: Loops, found: ComplexArray) -> tuple[BoolArray, BoolArray]:
     """Whether the count right of a line just beyond the rightmost root found (or the far chain) is 0, and
     whether nothing more can be expected of a wider circle. (M,) twice."""
-    chain = chain_abscissa(loops)
-    best = np.where(np.isnan(found.real), -np.inf, found.real).max(axis=1, initial=-np.inf)
-    line = np.maximum(best, chain) + 1e-6 / loops.dead_time
+    best = rightmost(found)
+    line = np.maximum(best, chain_abscissa(loops)) + 1e-6 / loops.dead_time
     readable = np.isfinite(line)
     count, _ = roots_right_of(loops, np.where(readable, line, 0.0))
     proven: BoolArray = readable & (count == 0.0)

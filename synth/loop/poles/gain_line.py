@@ -40,7 +40,7 @@ def stable_gain_intervals(loops: Loops) -> list[tuple[Interval, ...]]:
     which a pole lies on the axis (or at infinity), and each gap between such gains is judged at a point
     within it.
     """
-    if len(loops) and loops.dead_time[0] > 0.0:
+    if loops.delayed:
         return delayed_intervals(loops)
     roots = closed_roots(_axis_polynomials(loops.numerator, loops.denominator))
     out = []

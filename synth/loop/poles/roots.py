@@ -75,6 +75,12 @@ def closed_roots(closed: FloatArray, *, polish: bool = True) -> ComplexArray:
     return found
 
 
+def rightmost(roots: ComplexArray) -> FloatArray:
+    """(M,) largest real part in each row of (M, q) roots, NaN padded; -inf where there is none."""
+    out: FloatArray = np.where(np.isnan(roots.real), -np.inf, roots.real).max(axis=1, initial=-np.inf)
+    return out
+
+
 def _companion_roots(monic: FloatArray) -> ComplexArray:
     """Eigenvalues of the companion matrices; LAPACK puts pairs side by side, upper half first, conjugate."""
     rows, degree = monic.shape[0], monic.shape[1] - 1

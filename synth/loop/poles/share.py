@@ -46,7 +46,7 @@ def spaced(loops: Loops, poles: ComplexArray) -> Spacing:
         np.zeros((0, count, count), dtype=bool),
         np.zeros((0, count), dtype=bool),
     )
-    if _delayed(loops) or count < 2:
+    if loops.delayed or count < 2:
         return none
     with np.errstate(all="ignore"):
         product, nearest = _product_and_nearest(poles)
@@ -91,7 +91,7 @@ def residues(loops: Loops, poles: ComplexArray, spacing: Spacing | None = None) 
     characteristic function, N e^(-pθ) / (p Δ'(p)).
     """
     with np.errstate(all="ignore"):
-        if _delayed(loops):
+        if loops.delayed:
             theta = loops.dead_time[:, None]
             top, top_slope = horner_slope(loops.numerator, poles)
             _, slope = horner_slope(loops.denominator, poles)
@@ -166,7 +166,3 @@ def _product_and_nearest(poles: ComplexArray) -> tuple[ComplexArray, FloatArray]
     squared[diagonal, diagonal] = np.inf
     squared[padding] = np.inf
     return product.T, np.sqrt(squared.min(axis=1)).T
-
-
-def _delayed(loops: Loops) -> bool:
-    return len(loops) > 0 and bool(loops.dead_time[0] > 0.0)

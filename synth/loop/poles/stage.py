@@ -8,11 +8,18 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.poles.delayed import FARTHEST, NEAREST, delayed_poles, further_poles, proven_poles
+from synth.loop.poles.delayed import (
+    FARTHEST,
+    NEAREST,
+    delayed_poles,
+    further_poles,
+    joined,
+    proven_poles,
+)
 from synth.loop.poles.doubt import OF_POLES
-from synth.loop.poles.encirclement import delayed_stable
+from synth.loop.poles.encirclement import chain_abscissa, delayed_stable
 from synth.loop.poles.far import far_damping
-from synth.loop.poles.roots import closed_roots, routh_stable
+from synth.loop.poles.roots import closed_roots, rightmost, routh_stable
 from synth.loop.poles.share import Spacing, damping_of, share_in_step, spaced
 from synth.loop.polynomials import coefficient
 from synth.loop.quantities import Measure
@@ -85,7 +92,7 @@ class PoleStage:
 
     def with_shares(self, loops: Loops) -> PoleStage:
         """The same with the shares worked out; as it is with dead time, where poles are fetched as needed."""
-        return self if _delayed(loops) else replace(self, shares=_spacing_and_share(loops, self.poles))
+        return self if loops.delayed else replace(self, shares=_spacing_and_share(loops, self.poles))
 
     def surely_counted_damping(self, loops: Loops) -> FloatArray:
         """Least damping ratio of the poles that count whatever the bandwidth, for their share alone. (M,).
@@ -93,7 +100,7 @@ class PoleStage:
         An upper bound of the damping ratio, known before any frequency; 1 with dead time, where share
         counts none.
         """
-        if _delayed(loops):
+        if loops.delayed:
             return np.ones(len(loops))
         with np.errstate(invalid="ignore"):
             spacing, share = self.shares or _spacing_and_share(loops, self.poles)
@@ -117,7 +124,7 @@ def pole_stage(loops: Loops, measures: tuple[Measure, ...]) -> PoleStage:
     everything else is NaN.
     """
     names = {m.quantity for m in measures}
-    if _delayed(loops):
+    if loops.delayed:
         asked = not measures or any(m.row.stage == "time" or m.quantity in OF_POLES for m in measures)
         stable, abscissa, poles, reach = _with_dead_time(loops) if asked else _stability_alone(loops)
     else:
@@ -155,7 +162,7 @@ def _far_enough(
     loops: Loops, poles: ComplexArray, reach: FloatArray, highest_fall: FloatArray
 ) -> ComplexArray:
     """With dead time the true poles as far out as the rule reaches; else the poles as they are."""
-    if not _delayed(loops):
+    if not loops.delayed:
         return poles
     return _reaching(loops, poles, reach, REACH * np.where(np.isfinite(highest_fall), highest_fall, 0.0))
 
@@ -170,7 +177,7 @@ def _counted(loops: Loops, poles: ComplexArray, share: FloatArray, highest_fall:
     everything = _all_count(loops, highest_fall)
     with np.errstate(invalid="ignore"):
         counted = everything[:, None] | (np.abs(poles) <= REACH * highest_fall[:, None])
-        if not _delayed(loops):
+        if not loops.delayed:
             counted |= share >= LEAST_SHARE
     out: BoolArray = counted & ~np.isnan(poles)
     return out
@@ -188,7 +195,7 @@ def with_far_poles(loops: Loops, near: FloatArray, reach: FloatArray) -> FloatAr
     With dead time there are poles beyond those that `delayed_poles` lists; with an infinite reach the ratio
     is 0, which theirs tends to.
     """
-    if not _delayed(loops):
+    if not loops.delayed:
         return near
     further = reach > FARTHEST / loops.dead_time
     if not further.any():
@@ -208,15 +215,11 @@ def least_damping(
     return out
 
 
-def _delayed(loops: Loops) -> bool:
-    return len(loops) > 0 and bool(loops.dead_time[0] > 0.0)
-
-
 def _without_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray]:
     poles = closed_roots(loops.closed)
     with np.errstate(invalid="ignore", over="ignore"):
         passed = ~(loops.closed[:, 0] * loops.denominator[:, 0] > 0.0)  # 1 + L(∞) <= 0
-    abscissa = np.where(np.isnan(poles.real), -np.inf, poles.real).max(axis=1, initial=-np.inf)
+    abscissa = rightmost(poles)
     if passed.any():
         with np.errstate(all="ignore"):
             depth = np.abs(loops.closed[passed, 0] / loops.denominator[passed, 0])
@@ -230,35 +233,33 @@ def _without_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArra
 def _with_dead_time(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray, FloatArray]:
     reach = NEAREST / loops.dead_time  # counting asks for more where it reaches further
     poles, proven = proven_poles(loops, reach)
-    abscissa = np.where(np.isnan(poles.real), -np.inf, poles.real).max(axis=1, initial=-np.inf)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        chain = np.log(np.abs(loops.numerator[:, 0] / loops.denominator[:, 0])) / loops.dead_time
-    abscissa = np.fmax(abscissa, chain)  # -inf where L(∞) = 0
+    abscissa = np.fmax(rightmost(poles), chain_abscissa(loops))
     # nothing lies right of the rightmost true root: its side is the verdict, but for one on the axis
     stable = abscissa < 0.0
     close = np.flatnonzero(~proven | ~(np.abs(abscissa) > CLOSE / loops.dead_time))
     if close.size:
         stable[close] &= delayed_stable(loops.rows(close))
-    nothing = ~loops.numerator.any(axis=1)
-    if nothing.any():  # L = 0: the roots of D, and no dead time in them
-        stable[nothing] = routh_stable(loops.denominator[nothing])
-    return stable, abscissa, poles, reach
+    return _judged_without_feedback(loops, stable), abscissa, poles, reach
 
 
 def _stability_alone(loops: Loops) -> tuple[BoolArray, FloatArray, ComplexArray, FloatArray]:
     """The verdict by the exact count, and poles of the loops that are not stable."""
-    stable = delayed_stable(loops)
-    nothing = ~loops.numerator.any(axis=1)
-    if nothing.any():
-        stable[nothing] = routh_stable(loops.denominator[nothing])
+    stable = _judged_without_feedback(loops, delayed_stable(loops))
     abscissa, reach = np.full(len(loops), np.nan), np.zeros(len(loops))
     poles = np.full((len(loops), 0), np.nan, dtype=complex)
     bad = np.flatnonzero(~stable)
     if bad.size:
         _, abscissa[bad], found, reach[bad] = _with_dead_time(loops.rows(bad))
-        poles = np.full((len(loops), found.shape[1]), np.nan, dtype=complex)
-        poles[bad] = found
+        poles = joined(poles, bad, found)
     return stable, abscissa, poles, reach
+
+
+def _judged_without_feedback(loops: Loops, stable: BoolArray) -> BoolArray:
+    """The verdicts with those of loops with L = 0 by the roots of D, in which there is no dead time."""
+    nothing = ~loops.numerator.any(axis=1)
+    if nothing.any():
+        stable[nothing] = routh_stable(loops.denominator[nothing])
+    return stable
 
 
 def _reaching(loops: Loops, poles: ComplexArray, reach: FloatArray, wanted: FloatArray) -> ComplexArray:
@@ -266,18 +267,12 @@ def _reaching(loops: Loops, poles: ComplexArray, reach: FloatArray, wanted: Floa
 
     reach : (M,) to where all are known; 0 where none is.
     """
-    for at, known in (
-        (np.flatnonzero((wanted > reach) & (reach > 0.0)), True),
-        (np.flatnonzero(reach == 0.0), False),
-    ):
-        if at.size:
-            some = loops.rows(at)
-            fetched = further_poles(some, poles[at], wanted[at]) if known else delayed_poles(some, wanted[at])
-            out = np.full((len(poles), max(poles.shape[1], fetched.shape[1])), np.nan, dtype=complex)
-            out[:, : poles.shape[1]] = poles
-            out[at] = np.nan
-            out[at, : fetched.shape[1]] = fetched
-            poles = out
+    short = np.flatnonzero((wanted > reach) & (reach > 0.0))
+    if short.size:
+        poles = joined(poles, short, further_poles(loops.rows(short), poles[short], wanted[short]))
+    unknown = np.flatnonzero(reach == 0.0)
+    if unknown.size:
+        poles = joined(poles, unknown, delayed_poles(loops.rows(unknown), wanted[unknown]))
     return poles
 
 
@@ -321,7 +316,7 @@ def _early_damping(
             out[bad] = least_damping(loops.rows(bad), poles[bad], ~np.isnan(poles[bad]))
         return out
     limit = measure.below * loops.time_scale
-    if _delayed(loops):
+    if loops.delayed:
         poles = _reaching(loops, poles, reach, limit)
     with np.errstate(invalid="ignore"):
         near = least_damping(loops, poles, np.abs(poles) <= limit[:, None])
