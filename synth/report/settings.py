@@ -112,8 +112,9 @@ def forms(candidate: Candidate, spec: SpecPart, width: int) -> list[Text]:
 
 
 def one_line(values: dict[str, float], candidate: Candidate) -> list[str]:
-    """A lead or a lag as one says it: "+38° at 12 rad/s", "corner ratio 4.2", "corners 6 and 25 rad/s"; before
-    them the gain and, of a structure that has one, the integral time.
+    """A lead or a lag as one says it: "+38° at 12 rad/s", "corner ratio 4.2", "corners 6 and 25 rad/s".
+
+    Before them stand the gain and, of a structure that has one, the integral time.
     """
     parts = []
     for name, value in values.items():
