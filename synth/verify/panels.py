@@ -15,6 +15,7 @@ import numpy as np
 from synth.loop.arrays import FloatArray, IntArray
 
 NODES = 16
+PER_PANEL = 5.0  # radians, or time constants, of the fastest mode alive in a panel
 POINTS: FloatArray = 0.5 - 0.5 * np.cos(np.pi * np.arange(NODES, dtype=float) / (NODES - 1))
 _ORDERS: FloatArray = np.arange(NODES, dtype=float)
 _UNSEEN = 0.03  # what a panel may do beyond its nodes, relative to what it does at them
@@ -48,9 +49,8 @@ def _differentiation() -> FloatArray:
 _SLOPE = _differentiation()
 _EVEN = np.linspace(0.0, 1.0, 65)
 _ZOOM = np.linspace(0.0, 1.0, 33)
-_CLOSE: FloatArray = np.unique(
-    np.round(np.concatenate((_EVEN, POINTS)), 12)
-)  # a node on the even grid counts once
+# a node on the even grid counts once
+_CLOSE: FloatArray = np.unique(np.round(np.concatenate((_EVEN, POINTS)), 12))
 _ON_CLOSE = basis(_CLOSE)
 _HALVES = np.linspace(0.0, 1.0, 129)  # ends and middles of 64 cells
 _ON_HALVES = basis(_HALVES)
@@ -206,9 +206,9 @@ def plan(
     """Panels for a sum of modes e^(pt), |p| = sizes, -Re p = decays: (level, how many) in order, a panel of a
     level being base · 2^level long.
 
-    While a mode is alive (decay · t < dead) no panel is longer than 5/|p|. A panel begins at a multiple of
-    its own length after `start`. whole : where to stop, in units of base, a power of two; None: when all are
-    dead.
+    While a mode is alive (decay · t < dead) no panel is longer than PER_PANEL/|p|. A panel begins at a
+    multiple of its own length after `start`. whole : where to stop, in units of base, a power of two; None:
+    when all are dead.
     """
     out: list[tuple[int, int]] = []
     order = np.argsort(-sizes)
@@ -234,9 +234,6 @@ def plan(
             out.append((now, count))
             t += count << now
     return out
-
-
-PER_PANEL = 5.0  # radians, or time constants, of the fastest mode alive in a panel
 
 
 def edges(stages: list[tuple[int, int]]) -> tuple[IntArray, IntArray]:

@@ -13,6 +13,7 @@ roots of delay differential equations, SIAM J. Sci. Comput. 27 (2005) 482-495.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from fractions import Fraction
 
 import numpy as np
@@ -36,11 +37,9 @@ def poles(subject: Subject, reach: float = 0.0) -> ComplexArray | None:
     None where some may be missing: their sums do not fit the coefficients, or, with dead time, their number
     the count of the argument principle, or `reach` is too far.
     """
-    above, below = subject.exact
     if subject.dead_time == 0.0:
-        closed = [a + b for a, b in zip(above, below, strict=True)]
-        found = refined(closed)
-        return found if _complete(found, closed) else None
+        found = refined(subject.closed)
+        return found if _complete(found, subject.closed) else None
     return _delayed(subject, reach)
 
 
@@ -52,10 +51,9 @@ def chain(subject: Subject) -> float:
     return float(-np.log(abs(float(above[0] / below[0]))) / subject.dead_time)
 
 
-def refined(closed: list[Fraction]) -> ComplexArray:
-    """Roots of a polynomial with exact coefficients, descending; right to rounding of the result."""
-    while closed and closed[0] == 0:
-        closed = closed[1:]
+def refined(closed: Sequence[Fraction]) -> ComplexArray:
+    """Roots of a polynomial with exact coefficients, descending, the first not 0; right to rounding of the
+    result."""
     degree = len(closed) - 1
     if degree < 1:
         return np.empty(0, dtype=complex)
@@ -77,10 +75,8 @@ def refined(closed: list[Fraction]) -> ComplexArray:
     return np.concatenate((np.array(out) * 2.0**power, np.zeros(zeros)))
 
 
-def _complete(roots: ComplexArray, closed: list[Fraction]) -> bool:
+def _complete(roots: ComplexArray, closed: Sequence[Fraction]) -> bool:
     """Whether the sums of the roots and of their inverses are the polynomial's: no root found twice."""
-    while closed and closed[0] == 0:
-        closed = closed[1:]
     if len(roots) != len(closed) - 1 or not np.isfinite(roots).all():
         return False
     if not roots.size or closed[-1] == 0:
@@ -130,9 +126,8 @@ def _polish(coefficients: list[int], start: complex, others: list[complex]) -> c
 
 
 def _delayed(subject: Subject, reach: float) -> ComplexArray | None:
-    """Roots of D(s) + N(s) e^(-sθ); inside they are counted in units of 1/θ, D's first coefficient is 1."""
-    (above, below), delay = subject.exact, subject.dead_time
-    d, b = (np.array([float(c / below[0]) for c in q]) * delay ** np.arange(len(q)) for q in (below, above))
+    """Roots of D(s) + N(s) e^(-sθ); inside they are counted in units of 1/θ."""
+    (d, b), delay = _in_dead_times(subject), subject.dead_time
     far = max(reach * delay, 25.0)
     if far > _FARTHEST:
         return None
@@ -150,6 +145,14 @@ def _delayed(subject: Subject, reach: float) -> ComplexArray | None:
                 upper = _polished(subject, d, b, upper) / delay
                 return np.concatenate((upper, upper[upper.imag > 0.0].conj()))
     return None
+
+
+def _in_dead_times(subject: Subject) -> tuple[FloatArray, FloatArray]:
+    """D and N for time counted in dead times, D's first coefficient 1."""
+    above, below = subject.exact
+    grown = subject.dead_time ** np.arange(len(below))
+    d, b = (np.array([float(c / below[0]) for c in q]) * grown for q in (below, above))
+    return d, b
 
 
 def _generated(d: FloatArray, b: FloatArray, points: int) -> ComplexArray:
@@ -219,9 +222,8 @@ def _count(d: FloatArray, b: FloatArray, radius: float) -> int:
 def right_of(subject: Subject, decay: float) -> int | None:
     """How many poles of a loop with dead time have Re p > -decay, by the turns of D + N e^(-sθ) along that
     line; None where the line is too long. With a direct path `decay` must be below that of the chain."""
-    (above, below), delay = subject.exact, subject.dead_time
-    d, b = (np.array([float(c / below[0]) for c in q]) * delay ** np.arange(len(q)) for q in (below, above))
-    x = -decay * delay
+    d, b = _in_dead_times(subject)
+    x = -decay * subject.dead_time
     # from here on |N e^(-p)| stays below |D|, which turns as p^n does
     w = np.geomspace(1e-9, _FARTHEST, 4000)
     p: ComplexArray = (x + 1j * w).astype(complex)

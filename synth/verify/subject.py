@@ -63,6 +63,13 @@ class Subject:
         return _padded(above, len(below)), below
 
     @cached_property
+    def closed(self) -> Exact:
+        """D_P D_C + N_P N_C without rounding and without leading zeros: the characteristic polynomial where
+        there is no dead time."""
+        total = [a + b for a, b in zip(*self.exact, strict=True)]
+        return tuple(total[next((i for i, c in enumerate(total) if c), len(total)) :])
+
+    @cached_property
     def load(self) -> Exact:
         """N_P D_C without rounding, as long as D."""
         return _padded(self._product(self.plant.numerator, self.denominator), len(self.exact[1]))

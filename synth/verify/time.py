@@ -92,10 +92,8 @@ def _without_dead_time(subject: Subject, poles: ComplexArray) -> Response:
     sizes = np.abs(poles)
     power = round(float(np.log2(sizes).mean())) if sizes.size else 0
     unit = 2.0**-power
-    above, below = subject.exact
-    closed = scaled([a + b for a, b in zip(above, below, strict=True)], power)
-    closed = np.trim_zeros(closed, "f")
-    parts = [scaled(p, power) for p in (above, subject.control, subject.load)]
+    closed = np.trim_zeros(scaled(subject.closed, power), "f")
+    parts = [scaled(p, power) for p in (subject.exact[0], subject.control, subject.load)]
     parts = [p[len(p) - len(closed) :] for p in parts]
     final = np.array([p[-1] / closed[-1] for p in parts])
     p = poles * unit
@@ -103,9 +101,7 @@ def _without_dead_time(subject: Subject, poles: ComplexArray) -> Response:
     loop = _realised(parts, closed, sizes)
     n = len(loop.a)
     base = PER_PANEL / sizes.max() if n else 1.0
-    stages = plan(sizes, -p.real, base=base, start=0.0, whole=None, dead=_DEAD) if n else [(0, 1)]
-    if sum(count for _, count in stages) > _MOST_PANELS:
-        raise NotSimulated(f"more than {_MOST_PANELS} panels")
+    stages = _until_dead(p, base, 0.0) if n else [(0, 1)]
     rungs = ladder(loop.a, None, base, max(level for level, _ in stages) + 1)
     x = np.zeros(n)
     if n:
@@ -128,6 +124,14 @@ def _without_dead_time(subject: Subject, poles: ComplexArray) -> Response:
     start = begins * (base * unit)
     length = (1 << levels) * (base * unit)
     return Response(*(Trace(start, length, s) for s in signals))
+
+
+def _until_dead(poles: ComplexArray, base: float, start: float) -> list[tuple[int, int]]:
+    """The panels from `start` until every mode has died out. Raises NotSimulated."""
+    stages = plan(np.abs(poles), -poles.real, base=base, start=start, whole=None, dead=_DEAD)
+    if sum(count for _, count in stages) > _MOST_PANELS:
+        raise NotSimulated(f"more than {_MOST_PANELS} panels")
+    return stages
 
 
 def _advance(growth: FloatArray, x: FloatArray, count: int) -> FloatArray:
@@ -268,11 +272,8 @@ class _Delayed:
         values = errors.reshape(3, len(start), NODES)
         if modes is not None and len(modes[0]):
             p, weights = modes
-            sizes = np.abs(p)
-            base = PER_PANEL / float(sizes.max())
-            stages = plan(sizes, -p.real, base=base, start=float(turns), whole=None, dead=_DEAD)
-            if sum(count for _, count in stages) > _MOST_PANELS:
-                raise NotSimulated(f"more than {_MOST_PANELS} panels")
+            base = PER_PANEL / float(np.abs(p).max())
+            stages = _until_dead(p, base, float(turns))
             if stages:
                 levels, begins = edges(stages)
                 later = turns + begins * base
