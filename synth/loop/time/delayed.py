@@ -87,8 +87,8 @@ class _Readings:
         self.z = self.trace.signal(0, len(self.signals))
         poles_of_all = np.tile(f.pole, len(self.signals))
         tails = np.stack(last_mode.extremes(f.amplitude.ravel(), poles_of_all))
-        # top, its time, bottom, its time of what is left of each signal at the end, (4, S, M)
-        self.tails = tails.reshape(4, len(self.signals), -1)
+        # top, its time and bottom of what is left of each signal at the end, (3, S, M)
+        self.tails = tails.reshape(3, len(self.signals), -1)
         self.cells = Cells.of(self.trace)
         self.cells_of_z = self.cells.signal(0, len(self.signals))
         self.uncertain = UNCERTAIN * f.unit[0]
@@ -192,7 +192,7 @@ class _Readings:
         """sup of abs of the signal: panels, the last mode's own extremes, and the value at infinity."""
         f = self.found
         looked = self.trace.signal(signal, len(self.signals)).farthest()
-        top, _, bottom, _ = self.tails[:, signal]
+        top, _, bottom = self.tails[:, signal]
         late = np.maximum(np.abs(f.final[signal] + top), np.abs(f.final[signal] + bottom))
         out: FloatArray = np.maximum(looked, late)
         limit = out + NEGLIGIBLE * f.unit[signal]
@@ -202,7 +202,7 @@ class _Readings:
     def highest(self) -> tuple[FloatArray, FloatArray, Claim]:
         """sup of z - 1, its time, and that nothing is higher."""
         best, when = self.z.largest(1.0)
-        top, at, _, _ = self.tails[:, 0]
+        top, at, _ = self.tails[:, 0]
         later = top > best
         best, when = np.where(later, top, best), np.where(later, self._after_end(at), when)
         limit = np.maximum(best, 0.0) + NEGLIGIBLE * self.found.unit[0]
@@ -267,7 +267,7 @@ class _Readings:
         f = self.found
         seen = self.z.farthest_after(after)
         rest = np.maximum(after - f.end - self.late, 0.0)
-        top, _, bottom, _ = last_mode.extremes(f.amplitude[0] * np.exp(f.pole * rest), f.pole)
+        top, _, bottom = last_mode.extremes(f.amplitude[0] * np.exp(f.pole * rest), f.pole)
         out = np.maximum(seen, np.maximum(top, -bottom))
         limit = out + NEGLIGIBLE * f.unit[0]
         claim = self.cells_of_z.within(-limit, limit, since=after)

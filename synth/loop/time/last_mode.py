@@ -10,18 +10,15 @@ import numpy as np
 from synth.loop.arrays import ComplexArray, FloatArray
 
 
-def extremes(
-    amplitude: ComplexArray, pole: ComplexArray
-) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-    """Largest value and its time, least value and its time; 0 at time inf counts as the limit. (M,) each."""
+def extremes(amplitude: ComplexArray, pole: ComplexArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Largest value and its time, least value; 0 at time inf counts as the limit. (M,) each."""
     at = _first_extremum(amplitude, pole)
     half = _half_period(pole)
     times = np.stack([np.zeros_like(at), at, at + half])
     values = np.stack([_value(amplitude, pole, t) for t in times] + [np.zeros_like(at)])
     times = np.concatenate([times, np.full((1, len(at)), np.inf)])
-    top, bottom = values.argmax(axis=0), values.argmin(axis=0)
-    column = np.arange(len(at))
-    return values[top, column], times[top, column], values[bottom, column], times[bottom, column]
+    top, column = values.argmax(axis=0), np.arange(len(at))
+    return values[top, column], times[top, column], values.min(axis=0)
 
 
 def last_exit(amplitude: ComplexArray, pole: ComplexArray, band: FloatArray) -> FloatArray:

@@ -52,10 +52,10 @@ def test_first_reach(level):
 
 def test_extremes_and_area():
     amplitude, pole = modes()
-    top, when, bottom, _ = last_mode.extremes(amplitude, pole)
+    top, when, bottom = last_mode.extremes(amplitude, pole)
     area = last_mode.area(amplitude, pole)
     for i, (a, p) in enumerate(zip(amplitude, pole, strict=True)):
-        t, wave = samples(a, p)
+        _, wave = samples(a, p)
         assert top[i] == pytest.approx(max(wave.max(), 0.0), abs=1e-4)
         assert bottom[i] == pytest.approx(min(wave.min(), 0.0), abs=1e-4)
         assert when[i] == np.inf or (a * np.exp(p * when[i])).real == pytest.approx(top[i])
