@@ -135,10 +135,14 @@ WHOLE: FloatArray = TO_PRIMITIVE @ np.ones(NODES + 1)
 
 
 def primitive_coefficients(values: FloatArray) -> FloatArray:
-    """Rows of values (E, 13) to (E, 14): coefficients, ascending powers of 2x - 1, of the integral from x =
+    """Rows of values (E, 13) to (14, E): coefficients, ascending powers of 2x - 1, of the integral from x =
     0."""
-    out: FloatArray = values @ TO_PRIMITIVE
-    return out
+    return np.ascontiguousarray((values @ TO_PRIMITIVE).T)
+
+
+def polynomial(values: FloatArray) -> FloatArray:
+    """Rows of values (E, 13) to (13, E): coefficients, ascending powers of 2x - 1."""
+    return derivative(primitive_coefficients(values))
 
 
 def powers(x: FloatArray) -> FloatArray:
@@ -160,16 +164,3 @@ def total(coefficients: FloatArray, of_x: FloatArray) -> FloatArray:
     """Values of the polynomials (k, E) where the powers are `of_x` (14, E). (E,)."""
     out: FloatArray = (coefficients * of_x[: len(coefficients)]).sum(axis=0)
     return out
-
-
-def jet(coefficients: FloatArray, x: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-    """Integral from 0, value, slope and curvature at x of each row. (E, 14), (E,) -> four (E,)."""
-    g = 2.0 * x - 1.0
-    zero = np.zeros_like(g)
-    f, d1, d2, d3 = zero, zero, zero, zero
-    for k in range(coefficients.shape[1] - 1, -1, -1):
-        d3 = d3 * g + 3.0 * d2
-        d2 = d2 * g + 2.0 * d1
-        d1 = d1 * g + f
-        f = f * g + coefficients[:, k]
-    return f, 2.0 * d1, 4.0 * d2, 8.0 * d3

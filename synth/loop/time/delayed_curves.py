@@ -11,7 +11,7 @@ from synth.loop.arrays import FloatArray
 from synth.loop.closed_loop import Loops
 from synth.loop.poles.delayed import delayed_poles
 from synth.loop.poles.roots import closed_roots
-from synth.loop.time.collocation import jet, primitive_coefficients
+from synth.loop.time.collocation import polynomial, powers, total
 from synth.loop.time.steps import Walk, ladder, resolution
 from synth.loop.time.true_modes import true_modes
 
@@ -41,7 +41,7 @@ def delayed_step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatA
         walk = Walk.start(loops, numerators, one, sizes)
         values = np.stack([walk.over()[:, 0] for _ in range(marched)])
         edges = np.concatenate([[0.0], np.cumsum(sizes)])
-        for s, signal in enumerate((0, 1, 2)):
+        for s in range(3):
             time = own[s, row]
             place = time / loops.dead_time[row]
             early = np.flatnonzero((time >= 0.0) & (place < marched))
@@ -49,8 +49,8 @@ def delayed_step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatA
             part = place[early] - k
             i = np.clip(np.searchsorted(edges, part, side="right") - 1, 0, len(sizes) - 1)
             x = (part - edges[i]) / sizes[i]
-            out[s, row, early] = jet(primitive_coefficients(values[k, signal, i]), x)[1]
+            out[s, row, early] = total(polynomial(values[k, s, i]), powers(x))
             late = np.flatnonzero(place >= marched)
             if late.size:
-                out[s, row, late] = modes.rows(one).at(time[None, late])[0, signal]
+                out[s, row, late] = modes.rows(one).at(time[None, late])[0, s]
     return out[0], out[1], out[2]

@@ -85,7 +85,7 @@ class _Zeros:
         """The integral from 0 to each zero, (E,): steps of Newton's method from the straight line, and the
         rest of the way, which counts by its square, from the parabola. Where it is long, as beside an
         extremum, the zero is found out first."""
-        coefficients = np.ascontiguousarray(primitive_coefficients(signal[self.panel]).T)
+        coefficients = primitive_coefficients(signal[self.panel])
         x = self.low + (self.high - self.low) * (self.a / (self.a - self.b))
         with np.errstate(all="ignore"):
             for step in range(STEPS):

@@ -12,9 +12,8 @@ import numpy as np
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.time.collocation import (
     derivative,
-    jet,
+    polynomial,
     powers,
-    primitive_coefficients,
     slope_matrix,
     total,
     value_matrix,
@@ -119,7 +118,7 @@ class Trace:
         best = np.where(inside, np.abs(self.height), -np.inf).max(axis=1)
         cut = np.flatnonzero((x > 0.0) & (x < 1.0))
         if cut.size:
-            edge = np.abs(jet(primitive_coefficients(p.values[cut]), x[cut])[1])
+            edge = np.abs(total(polynomial(p.values[cut]), powers(x[cut])))
             best[cut] = np.maximum(best[cut], edge)
         out: FloatArray = p.over(np.maximum, best, -np.inf)
         return out
@@ -190,11 +189,6 @@ class Trace:
             both[:, p.loop] = of_loops
             out.append((both[0], both[1]))
         return out
-
-
-def polynomial(signal: FloatArray) -> FloatArray:
-    """(E, 13) values to (13, E) coefficients, ascending powers of 2x - 1."""
-    return derivative(np.ascontiguousarray(primitive_coefficients(signal).T))
 
 
 def turning(
