@@ -42,10 +42,11 @@ class Responses:
 
 @dataclass(frozen=True, slots=True)
 class _Late:
-    """Late panels of some signals of some loops."""
+    """Late panels of some signals of some loops, and the modes that fill them."""
 
     loops: IntArray
     signals: IntArray
+    modes: TrueModes
     panels: LatePanels
 
 
@@ -72,13 +73,14 @@ def responses(loops: Loops, poles: ComplexArray, numerators: FloatArray, through
         alone = alone_from(some, size, DEAD)
         later = np.flatnonzero(alone > start[at])
         at, alone = at[later], alone[later]
-        later_panels = late_panels(some.rows(later), size[later], start[at], alone, MOST_LATE)
+        some = some.rows(later)
+        later_panels = late_panels(some, size[later], start[at], alone, MOST_LATE)
         np.maximum.at(end, at[later_panels.owner], later_panels.start + later_panels.length)
         doubtful[at] |= end[at] < alone
-        parts.append(_Late(at, signals, later_panels))
+        parts.append(_Late(at, signals, some, later_panels))
     pole = modes.pole[:, 0]
     amplitude = np.where(early.meets, modes.residue[:, :, 0].T, 0.0) * np.exp(pole * end)
-    panels = _assembled(early, delay, modes, parts)
+    panels = _assembled(early, delay, parts)
     return Responses(panels, end, amplitude, pole, modes.final.T.copy(), unit.T.copy(), doubtful)
 
 
@@ -110,9 +112,9 @@ def _early_size(loops: Loops, numerators: FloatArray) -> FloatArray:
     return out
 
 
-def _assembled(early: Early, delay: FloatArray, modes: TrueModes, late: list[_Late]) -> Panels:
+def _assembled(early: Early, delay: FloatArray, late: list[_Late]) -> Panels:
     """All panels in order of signal, loop and time."""
-    rows, signals = modes.final.shape
+    signals, rows = early.size.shape
     marched = np.zeros(rows, dtype=np.intp)
     for piece in early.pieces:
         marched[piece.rows] += len(piece.sizes)
@@ -136,6 +138,6 @@ def _assembled(early: Early, delay: FloatArray, modes: TrueModes, late: list[_La
         within = np.arange(len(mine)) - np.searchsorted(p.owner, p.owner)
         place = (first + marched)[part.signals[:, None], mine] + within
         start[place], length[place] = p.start, p.length
-        fill(modes.rows(part.loops).signals(part.signals), p, values, place)
+        fill(part.modes, p, values, place)
     owner = np.repeat(np.arange(signals * rows), count.ravel())
     return Panels(owner, start, length, values, first.ravel())
