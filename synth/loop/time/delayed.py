@@ -20,11 +20,9 @@ from synth.loop.time.panel_areas import panel_areas
 from synth.loop.time.panels import Outline
 from synth.loop.time.proof import NEGLIGIBLE, Cells, Claim, unproven
 from synth.loop.time.responses import Responses, responses
-from synth.loop.time.result import TimeStage
+from synth.loop.time.result import READ_FROM, TimeStage
 from synth.loop.time.trace import Passage, Trace
 
-_OF_U = {"control_peak"}
-_OF_D = {"disturbance_peak", "disturbance_area"}
 _AREAS = {"z": "tracking_area", "d": "disturbance_area"}
 # A change of sign within a panel is looked for where more than this part of the area may hang on it.
 NO_AREA = 1e-8
@@ -64,18 +62,14 @@ class _Readings:
     def __init__(self, loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...]) -> None:
         self.loops, self.asked, self.late = loops, asked, loops.dead_time
         self.names = {m.quantity for m in asked}
-        self.signals = ["z"]
-        rows = [loops.numerator]
-        if self.names & _OF_U:
-            self.signals.append("u")
-            rows.append(loops.control)
-        if self.names & _OF_D:
-            self.signals.append("d")
-            rows.append(loops.load)
+        read = {READ_FROM[name] for name in self.names}
+        rows = {"z": loops.numerator}  # drives the loop, whether it is read or not
+        rows |= {s: row for s, row in (("u", loops.control), ("d", loops.load)) if s in read}
+        self.signals = list(rows)
         # of u, and of d where its area is not asked for, the sup alone matters
-        asked_for = {"z": self.names - _OF_U - _OF_D, "d": self.names & {"disturbance_area"}}
-        throughout = np.array([bool(asked_for.get(s)) for s in self.signals])
-        self.found: Responses = responses(loops, poles, np.stack(rows), throughout)
+        whole = {"z": "y" in read, "u": False, "d": "disturbance_area" in self.names}
+        throughout = np.array([whole[s] for s in self.signals])
+        self.found: Responses = responses(loops, poles, np.stack(list(rows.values())), throughout)
         self.has_end = loops.numerator[:, -1] != 0.0
         self._relate()
         f = self.found

@@ -11,22 +11,8 @@ from synth.loop.time.answers import AREA_ERROR, answer
 from synth.loop.time.clusters import ClusterModes, cluster_modes
 from synth.loop.time.questions import Answers, Area, Passage, Questions, Supremum
 from synth.loop.time.residues import CROWDED, crowding, limits, step_modes
-from synth.loop.time.result import TimeStage
+from synth.loop.time.result import READ_FROM, TimeStage
 from synth.loop.time.signals import Signals
-
-REACHES = {
-    "overshoot": "y",
-    "undershoot": "y",
-    "peak_time": "y",
-    "rise_time": "y",
-    "settling_time": "y",
-    "late_deviation": "y",
-    "tracking_area": "y",
-    "control_peak": "u",
-    "disturbance_peak": "d",
-    "disturbance_area": "d",
-}
-"""Which signal each quantity is read from."""
 
 LOST = 3e-8
 """The modes must add up to the known value at 0+ to this part of the quantity; else they have lost digits."""
@@ -45,8 +31,7 @@ def time_stage(
     if (loops.dead_time > 0.0).any():
         from synth.loop.time.delayed import delayed_time_stage
 
-        delayed: TimeStage = delayed_time_stage(loops, poles, asked)
-        return delayed
+        return delayed_time_stage(loops, poles, asked)
     if not asked or len(loops) == 0:
         return TimeStage({m: np.zeros(0) for m in asked}, {})
     with np.errstate(all="ignore"):  # rows at the edge of the number range run on with what they have
@@ -57,7 +42,7 @@ def _plain_stage(
     loops: Loops, poles: ComplexArray, asked: tuple[Measure, ...], close: BoolArray
 ) -> TimeStage:
     """Loops with simple poles by their modes, those with crowded ones, `close` (M,), by clusters."""
-    needed = {REACHES[m.quantity] for m in asked}
+    needed = {READ_FROM[m.quantity] for m in asked}
     signals = tuple(s for s in ("y", "u", "d") if s in needed)
     if not close.any():
         modes = step_modes(loops, poles, signals)
@@ -145,7 +130,7 @@ class _Reading:
     def _lost(self, m: Measure, value: FloatArray) -> BoolArray:
         """Where the modes do not add up at 0+; an area by the longest time the error could last."""
         name = m.quantity
-        off = self.off[:, self.index[REACHES[name]]]
+        off = self.off[:, self.index[READ_FROM[name]]]
         size = np.abs(value) if name in ("control_peak", "disturbance_peak") else np.ones(len(self.loops))
         if name in ("tracking_area", "disturbance_area"):
             size = np.abs(value) * -self.modes.pole.real.max(axis=1) * (AREA_ERROR / 1e-6)
@@ -154,7 +139,7 @@ class _Reading:
 
     def _ask(self, m: Measure) -> None:
         zero, one = np.zeros(len(self.loops)), np.ones(len(self.loops))
-        name, signal = m.quantity, self.index.get(REACHES[m.quantity], 0)
+        name, signal = m.quantity, self.index[READ_FROM[m.quantity]]
         if name in ("overshoot", "peak_time"):
             self.suprema["overshoot"] = Supremum(signal, (1.0,), zero, zero)
         elif name == "undershoot":
