@@ -27,8 +27,7 @@ def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, Fl
     if (loops.dead_time > 0.0).any():
         from synth.loop.time.delayed_curves import delayed_step_curves
 
-        delayed: tuple[FloatArray, FloatArray, FloatArray] = delayed_step_curves(loops, times)
-        return delayed
+        return delayed_step_curves(loops, times)
     signals = ("y", "u", "d")
     poles = closed_roots(loops.closed)
     close = crowding(poles) > CROWDED

@@ -26,8 +26,7 @@ class Profile:
     envelope   (M, S, K) bound of abs(x - x(inf)) from that time on
     fourth     (M, S, K) bound of the fourth derivative from that time on
     rivals     (M, S, K) bound of the slope of all other modes over that of the slowest, where that is real;
-               below 1 the
-               signal is monotone from that time on; inf where the slowest is a pair
+               below 1 the signal is monotone from that time on; inf where the slowest is a pair
     area       (M, S, K) bound of the integral of abs(x - x(inf)) from that time on; None when not asked for
     others     (M, S, K) the same without the slowest mode; None when not asked for
     log_convex whether the bounds are sums of decaying exponentials
