@@ -94,7 +94,7 @@ def _own(objective: Objective, n: int) -> Space:
     low[0], high[0] = max(-size.max() - WIDE, -25.0), min(-size.min() + WIDE, 25.0)
 
     def rows(u: Array) -> Rows:
-        return _rows(objective, n, u[:, :-1], u[:, -1])
+        return objective.rows_at(n, u[:, :-1], _sign(u))
 
     return Space(np.append(low, -1.0), np.append(high, 1.0), rows)
 
@@ -121,12 +121,10 @@ def _by_crossover(objective: Objective, n: int) -> Space:
         with np.errstate(divide="ignore"):
             gain = -np.log(size)
         x[:, 0] = np.clip(np.nan_to_num(gain), -30.0, 30.0)
-        return _rows(objective, n, x, u[:, -1])
+        return objective.rows_at(n, x, _sign(u))
 
     return Space(np.append(bottom, -1.0), np.append(top, 1.0), rows)
 
 
-def _rows(objective: Objective, n: int, x: Array, side: Array) -> Rows:
-    wide = np.zeros((len(x), objective.width))
-    wide[:, : x.shape[1]] = x
-    return Rows(np.full(len(x), n), wide, np.where(side < 0.0, -1.0, 1.0), np.full(len(x), -1))
+def _sign(u: Array) -> Array:
+    return np.where(u[:, -1] < 0.0, -1.0, 1.0)

@@ -37,14 +37,9 @@ AROUND_SIZES = (0.05, 0.1, 0.2)
 def extremes(campaign: Campaign) -> Wished | None:
     """From the best of every structure that meets the sheet: least control peak, fastest settling."""
     reserve = _reserve(campaign)
-    good_ones = [s for s in campaign.standings if s.tops is not None and s.best >= reserve]
-    best = {campaign.task.structures[s.number].name: s.best for s in good_ones}
-    heads = [
-        s.tops.take(np.array([0]))
-        for s in good_ones
-        if s.tops is not None
-        and best.get(TWINS.get(campaign.task.structures[s.number].name, ""), -np.inf) < s.best - AGREE
-    ]
+    best = {campaign.task.structures[s.number].name: s for s in campaign.standings if s.best >= reserve}
+    twins = {name: best[simple].best for name, simple in TWINS.items() if simple in best}
+    heads = [s.first(1) for name, s in best.items() if twins.get(name, -np.inf) < s.best - AGREE]
     if not heads:
         return None
     campaign.enter("alternatives")
@@ -64,26 +59,23 @@ def others(campaign: Campaign) -> Wished | None:
     """Scored rows that meet the sheet and lie apart from the best of their structure: seconds for a short
     list."""
     reserve = _reserve(campaign)
-    heads = [
-        s.tops.take(np.array([0])) for s in campaign.standings if s.tops is not None and s.best >= reserve
-    ]
-    if not heads:
+    met = [s for s in campaign.standings if s.best >= reserve]
+    if not met:
         return None
     campaign.enter("alternatives")
+    heads = joined([s.first(1) for s in met])
     if len(heads) < SHORT:
-        _look_around(campaign, joined(heads))
+        _look_around(campaign, heads)
     rows, slack, _, _ = campaign.objective.archive.all()
     worst = slack.min(axis=1)
     parts = []
-    for standing in campaign.standings:
-        if standing.tops is None or standing.best < reserve:
-            continue
+    for standing in met:
         fit: IntArray = np.flatnonzero((rows.structure == standing.number) & (worst >= reserve))
         fit = fit[np.argsort(-worst[fit], kind="stable")[:300]]
         if fit.size:
             pick = distinct(rows.take(fit), worst[fit], OTHERS + 1, OTHERS_APART)
             parts.append(rows.take(fit[pick]))
-            parts.append(rows.take(fit[_other_loops(campaign, rows.take(fit), joined(heads))][:OTHERS]))
+            parts.append(rows.take(fit[_other_loops(campaign, rows.take(fit), heads)][:OTHERS]))
     if not parts:
         return None
     found = joined(parts)

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from synth.search.archive import Rows, distinct, joined
+from synth.search.archive import Rows, best_each, distinct, joined
 from synth.search.campaign import Campaign
 from synth.search.polish import Pace, polish
 from synth.search.standing import AGREE, Standing
@@ -38,13 +38,11 @@ def nearest(campaign: Campaign) -> Rows | None:
         if len(rows) and (nothing or led_elsewhere):
             polished.append(rows)
         else:
-            told.append(rows.take(np.arange(min(1, len(rows)))))
+            told.append(rows.first(1))
     if polished:
         with objective.approximating(), objective.literally():
             done = polish(objective, joined(polished), pace=PACE, stop=campaign.halted)
-        for n in np.unique(done.rows.structure):
-            index = np.flatnonzero(done.rows.structure == n)
-            told.append(done.rows.take(index[np.argsort(-done.worst[index], kind="stable")[:2]]))
+        told.append(done.rows.take(best_each(done.rows, done.worst, 2)))
     return joined(told) if told else None
 
 

@@ -32,6 +32,10 @@ class Rows:
         """The rows named by `index` (integers or a mask)."""
         return Rows(self.structure[index], self.x[index], self.sign[index], self.origin[index])
 
+    def first(self, count: int) -> Rows:
+        """The first `count` rows, all where there are no more."""
+        return self.take(np.arange(min(count, len(self))))
+
     def at(self, x: FloatArray) -> Rows:
         """The same rows moved to other coordinates."""
         return Rows(self.structure, x, self.sign, self.origin)
@@ -80,6 +84,13 @@ class Archive:
             self._values = [np.concatenate(self._values)]
             self._cases = [np.concatenate(self._cases)]
         return self._rows[0], self._slack[0], self._values[0], self._cases[0]
+
+
+def best_each(rows: Rows, guide: FloatArray, count: int) -> IntArray:
+    """Numbers of the best `count` rows of every structure, one structure after the other, best first. guide
+    (S,), larger is better."""
+    parts = [np.flatnonzero(rows.structure == n) for n in np.unique(rows.structure)]
+    return np.concatenate([index[np.argsort(-guide[index], kind="stable")[:count]] for index in parts])
 
 
 def distinct(rows: Rows, guide: FloatArray, count: int, apart: float = 0.15) -> IntArray:

@@ -142,9 +142,7 @@ class Campaign:
         if not self.objective.delayed:
             return
         self.enter("exact")
-        tops = [
-            s.tops.take(np.arange(min(EXACT_TOPS, len(s.tops)))) for s in self.standings if s.tops is not None
-        ]
+        tops = [s.tops.first(EXACT_TOPS) for s in self.standings if s.tops is not None]
         if not tops:
             return
         done = polish(self.objective, joined(tops), pace=EXACT_PACE)
@@ -278,9 +276,9 @@ class Campaign:
             index = np.flatnonzero(rows.structure == n)
             size = 8 * self.standings[n].parameters
             fresh = rows.take(index[distinct(rows.take(index), guide[index], size, 0.05)])
-            members = joined([tops.take(np.arange(min(3, len(tops)))), fresh]) if tops is not None else fresh
+            members = joined([tops.first(3), fresh]) if tops is not None else fresh
             if len(members) >= 4:
-                parts.append(members.take(np.arange(min(size, len(members)))))
+                parts.append(members.first(size))
         if not parts:
             return
         rng = np.random.default_rng([self.settings.seed, *[self.standings[n].rounds for n in numbers]])
@@ -316,24 +314,16 @@ class Campaign:
     def _violated(self, numbers: list[int]) -> list[int]:
         """Structures whose best loses on a case that is not active; that case becomes active."""
         numbers = [n for n in numbers if self.standings[n].tops is not None]
-        everything = tuple(range(len(self.objective.case_names)))
-        heads = joined([self._top(n) for n in numbers])
-        cases = [everything for _ in self.standings]
-        scores = self.objective.score(heads, cases, remember=False)
+        heads = joined([self.standings[n].first(1) for n in numbers])
+        scores = self.objective.score(heads, self.objective.everywhere(), remember=False)
         by_case = scores.search.min(axis=2)
         changed = []
         for i, n in enumerate(numbers):
             worst = int(by_case[i].argmin())
             if by_case[i, worst] < self.standings[n].best - FINE and worst not in self.objective.active[n]:
-                self.objective.active[n] = (*self.objective.active[n], worst)
+                self.objective.activate(n, [worst])
                 changed.append(n)
         return changed
-
-    def _top(self, n: int) -> Rows:
-        tops = self.standings[n].tops
-        if tops is None:
-            raise ValueError(f"structure {n} was not searched yet")
-        return tops.take(np.array([0]))
 
     def _restart(self, numbers: list[int]) -> None:
         """The active cases changed: what was found is scored anew and polished on."""
@@ -341,7 +331,7 @@ class Campaign:
         for n in numbers:
             tops = self.standings[n].tops
             if tops is not None:
-                parts.append(tops.take(np.arange(min(4, len(tops)))))
+                parts.append(tops.first(4))
             standing = self.standings[n]
             standing.tops, standing.guides, standing.optima = None, np.zeros(0), []
         self.polish_in(joined(parts), AGAIN_PACE)
@@ -351,5 +341,5 @@ class Campaign:
     def heads(self) -> tuple[IntArray, Rows, FloatArray]:
         """The best of every structure: its number, its row, its worst search slack on the active cases."""
         found = [s for s in self.standings if s.tops is not None]
-        rows = joined([self._top(s.number) for s in found])
+        rows = joined([s.first(1) for s in found])
         return np.array([s.number for s in found]), rows, np.array([s.best for s in found])

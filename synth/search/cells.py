@@ -135,10 +135,10 @@ def on_a_grid(slack: FloatArray, width: FloatArray) -> tuple[FloatArray, FloatAr
     """
     axes = range(len(width))
     slope = np.stack(
-        [_largest([np.abs(side - slack) for side in _beside(slack, k)]) / width[k] for k in axes], axis=-2
+        [_largest([np.abs(side - slack) for side in beside(slack, k)]) / width[k] for k in axes], axis=-2
     )
-    near = _largest([side for k in axes for side in _beside(slack, k)])
-    steep = _largest([side for k in axes for side in _beside(slope, k)])
+    near = _largest([side for k in axes for side in beside(slack, k)])
+    steep = _largest([side for k in axes for side in beside(slope, k)])
     absent = np.isnan(slack)
     return (
         np.nan_to_num(np.where(absent, near, slack), nan=LOST),
@@ -146,7 +146,7 @@ def on_a_grid(slack: FloatArray, width: FloatArray) -> tuple[FloatArray, FloatAr
     )
 
 
-def _beside(values: FloatArray, axis: int) -> tuple[FloatArray, FloatArray]:
+def beside(values: FloatArray, axis: int) -> tuple[FloatArray, FloatArray]:
     """The values one place before and one place after along an axis, NaN beyond the ends."""
     end = np.full_like(np.take(values, [0], axis), np.nan)
     before = np.concatenate([end, np.delete(values, -1, axis)], axis)

@@ -26,8 +26,7 @@ STEPS_BACK = np.geomspace(1e-6, 0.1, 11)  # lengths of the steps with which a st
 def on_all_cases(campaign: Campaign, rows: Rows) -> FloatArray:
     """(S, K) exact worst slack of each case."""
     objective = campaign.objective
-    everything = [tuple(range(len(objective.case_names)))] * len(objective.structures)
-    out: FloatArray = objective.score(rows, everything, remember=False).exact.min(axis=2)
+    out: FloatArray = objective.score(rows, objective.everywhere(), remember=False).exact.min(axis=2)
     return out
 
 
@@ -67,7 +66,7 @@ def _on_binding_cases(campaign: Campaign, rows: Rows, goals: Goals, pace: Pace) 
         for i in np.flatnonzero(done.finished):
             s, worst = int(done.rows.structure[i]), int(by_case[i].argmin())
             if by_case[i, worst] < done.worst[i] - FINE and worst not in objective.active[s]:
-                objective.active[s] = (*objective.active[s], worst)
+                objective.activate(s, [worst])
                 changed.add(s)
         if not changed:
             break

@@ -19,9 +19,9 @@ from synth.loop.evaluate import stacks
 from synth.loop.poles.gain_line import stable_gain_intervals
 from synth.search.archive import Rows, distinct
 from synth.search.campaign import Campaign
-from synth.search.cells import Cells, Look, joined, on_a_grid, refined
+from synth.search.cells import Cells, Look, beside, joined, on_a_grid, refined
 from synth.search.gain_line import FURTHEST
-from synth.search.objective import ABSENT, Objective
+from synth.search.objective import ABSENT, Objective, uncompressed
 from synth.search.polish import Pace
 from synth.search.scales import response
 from synth.search.starts import DECADE, Band, plant_band
@@ -76,7 +76,7 @@ def cover(objective: Objective, n: int, known: float = -np.inf) -> Cover:
     """Cells over the whole box of structure n and both signs, divided where more than `known` may be."""
 
     def look(x: FloatArray, sign: FloatArray) -> FloatArray:
-        scores = objective.score(_rows(objective, n, x, sign), hasty=True, remember=False)
+        scores = objective.score(objective.rows_at(n, x, sign), hasty=True, remember=False)
         return _plain(scores.search.min(axis=1), scores.stable)
 
     low, high = objective.boxes[n]
@@ -90,13 +90,13 @@ def cover(objective: Objective, n: int, known: float = -np.inf) -> Cover:
         if bool((ends[0] < ends[1]).any())
     ]
     if not parts:
-        none = _rows(objective, n, np.zeros((0, len(low))), np.zeros(0))
+        none = objective.rows_at(n, np.zeros((0, len(low))), np.zeros(0))
         return Cover(none, np.zeros(0), float(np.exp(2.0 * half.max())), None)
     cells = joined(parts)
     resolution = float(np.exp(2.0 * cells.half.max()))
     cells = refined(cells, look, CENTRES // len(objective.active[n]), known, DEEP)
     return Cover(
-        _rows(objective, n, cells.centre, cells.sign),
+        objective.rows_at(n, cells.centre, cells.sign),
         cells.guide(),
         resolution,
         max(float(cells.bound().max()), cells.best()),
@@ -120,7 +120,7 @@ def _grid(
     gains = bottom + tall * (2 * np.arange(steps) + 1)
     wide = (
         _widened(e.reshape(counts), take).reshape(-1, 1)
-        for e, take in zip(ends, (np.minimum, np.maximum), strict=True)
+        for e, take in zip(ends, (np.fmin, np.fmax), strict=True)
     )
     shape, gain = np.nonzero((gains + tall > next(wide)) & (gains - tall < next(wide)))
     centre = np.column_stack([gains[gain], shapes[shape]])
@@ -141,7 +141,7 @@ def _grid(
 
 def _plain(search: FloatArray, stable: BoolArray) -> FloatArray:
     """Search slacks (n, R) without their compression, which hides how steep they are; NaN where absent."""
-    plain = np.where(search < -1.0, -np.exp(-1.0 - search), np.minimum(search, 1.0))
+    plain = np.minimum(uncompressed(search), 1.0)
     out: FloatArray = np.where(stable[:, None] & (search > ABSENT), plain, np.nan)
     return out
 
@@ -190,18 +190,7 @@ def _stable_ends(plants: Rational, unit: Rational) -> FloatArray:
 
 
 def _widened(ends: FloatArray, take: np.ufunc) -> FloatArray:
-    """The ends with those of all neighbours on the grid taken in."""
+    """The ends with those of all neighbours on the grid taken in; `take` passes over NaN."""
     for axis in range(ends.ndim):
-        back, ahead = np.roll(ends, 1, axis), np.roll(ends, -1, axis)
-        first = [slice(None)] * ends.ndim
-        last = first.copy()
-        first[axis], last[axis] = slice(0, 1), slice(-1, None)
-        back[tuple(first)], ahead[tuple(last)] = ends[tuple(first)], ends[tuple(last)]
-        ends = take(take(back, ahead), ends)
+        ends = take(take(*beside(ends, axis)), ends)
     return ends
-
-
-def _rows(objective: Objective, n: int, x: FloatArray, sign: FloatArray) -> Rows:
-    wide = np.zeros((len(x), objective.width))
-    wide[:, : x.shape[1]] = x
-    return Rows(np.full(len(x), n), wide, sign, np.full(len(x), -1))

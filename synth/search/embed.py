@@ -35,7 +35,7 @@ def embedded(objective: Objective, rows: Rows, larger: int, of: Objective | None
         small = of.structures[int(number)]
         made = _same(small, structure, theta)
         if made is not None:
-            parts.append(objective.rows_of(larger, made[None, :], np.array([origin])))
+            parts.append(objective.rows_of(larger, made[None, :], int(origin)))
         elif small.name in structure.simpler:
             parts.append(_with_neutral(objective, small, structure, larger, theta, int(origin)))
     return joined(parts) if parts else None
@@ -78,10 +78,7 @@ def _with_neutral(
             if not far and parameter.key == "integral_time":
                 one[j] += 2.0 * float(np.log(10.0))
         out.append(one)
-    wide = np.zeros((len(out), objective.width))
-    wide[:, : len(low)] = np.clip(np.array(out), low, high)
-    count = len(out)
-    return Rows(np.full(count, number), wide, np.repeat(sign, count), np.full(count, origin))
+    return objective.rows_at(number, np.array(out), np.repeat(sign, len(out)), origin)
 
 
 def _neutral_when_slow(structure: Structure, key: str) -> bool:

@@ -105,11 +105,10 @@ def _box(campaign: Campaign, n: int) -> tuple[list[str], list[float], list[float
 
 def _centre(campaign: Campaign, n: int, trial: Any) -> Rows:
     names, low, high = _box(campaign, n)
-    x = np.zeros((1, campaign.objective.width))
-    x[0, : len(names)] = [trial.suggest_float(k, a, b) for k, a, b in zip(names, low, high, strict=True)]
+    x = [trial.suggest_float(k, a, b) for k, a, b in zip(names, low, high, strict=True)]
     sign = trial.suggest_categorical("sign", list(campaign.standings[n].signs))
     origin = campaign.origin("a trial of the outer exploration")
-    return Rows(np.array([n]), x, np.array([float(sign)]), np.array([origin]))
+    return campaign.objective.rows_at(n, np.array([x]), float(sign), origin)
 
 
 def _round(centres: Rows, campaign: Campaign, salt: int) -> Rows:
@@ -181,10 +180,9 @@ def _best_of(campaign: Campaign, n: int, study: optuna.Study) -> Rows | None:
     done.sort(key=lambda t: -float(t.value or -np.inf))
     parts = []
     for t in done[:3]:
-        x = np.zeros((1, campaign.objective.width))
-        x[0, : len(names)] = [t.params[k] for k in names]
+        x = np.array([[t.params[k] for k in names]])
         origin = campaign.origin("an earlier exploration, resumed")
-        parts.append(Rows(np.array([n]), x, np.array([float(t.params["sign"])]), np.array([origin])))
+        parts.append(campaign.objective.rows_at(n, x, float(t.params["sign"]), origin))
     return joined(parts) if parts else None
 
 

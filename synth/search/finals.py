@@ -16,7 +16,7 @@ from synth.loop.evaluate import evaluate
 from synth.loop.quantities import EVERY_QUANTITY, Measure
 from synth.requirements import judged, slack_of
 from synth.search.archive import Rows
-from synth.search.objective import Objective
+from synth.search.objective import Objective, placed
 from synth.search.outcome import Candidate, Fragility, Task
 from synth.structures import Structure, same_function
 
@@ -83,14 +83,11 @@ def realised(drafts: list[Draft]) -> Rational:
     """C(s) of every draft, padded to one width."""
     if not drafts:
         raise ValueError("no draft to realise")
-    width = 1 + max(d.structure.order for d in drafts)
-    numerator, denominator = np.zeros((len(drafts), width)), np.zeros((len(drafts), width))
+    parts = []
     for structure in {d.structure.name: d.structure for d in drafts}.values():
-        index = [i for i, d in enumerate(drafts) if d.structure.name == structure.name]
-        made = structure.realise(np.array([drafts[i].theta for i in index]))
-        numerator[index, width - made.numerator.shape[1] :] = made.numerator
-        denominator[index, width - made.denominator.shape[1] :] = made.denominator
-    return Rational(numerator, denominator, np.zeros(len(drafts)))
+        index = np.flatnonzero([d.structure.name == structure.name for d in drafts])
+        parts.append((index, structure.realise(np.array([drafts[i].theta for i in index]))))
+    return placed(parts)
 
 
 def named(draft: Draft, structures: tuple[Structure, ...]) -> Draft:

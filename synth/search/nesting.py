@@ -8,9 +8,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-import numpy as np
-
-from synth.search.archive import Rows, joined
+from synth.search.archive import Rows, best_each, joined
 from synth.search.embed import embedded
 from synth.search.polish import Pace
 from synth.search.standing import Standing
@@ -54,9 +52,7 @@ def _lifted(campaign: Campaign) -> list[int]:
     before = {n: standings[n].best for n in parts}
     rows = joined([joined(own) for own in parts.values()])
     guide = objective.score(rows).guide()
-    mine = [np.flatnonzero(rows.structure == n) for n in parts]
-    picks = [index[np.argsort(-guide[index], kind="stable")[:POLISHED]] for index in mine]
-    campaign.polish_in(rows.take(np.concatenate(picks)), PACE)
+    campaign.polish_in(rows.take(best_each(rows, guide, POLISHED)), PACE)
     changed = [n for n in parts if standings[n].best > before[n]]
     for n in changed:
         standings[n].judge()
@@ -66,12 +62,8 @@ def _lifted(campaign: Campaign) -> list[int]:
 def _carried(campaign: Campaign, small: Standing, large: Standing) -> Rows | None:
     """The best of one structure as rows of the other, which is judged from now on where the first one was;
     None where it cannot be."""
-    if small.tops is None:
-        return None
-    tops = small.tops.take(np.arange(min(CARRIED, len(small.tops))))
-    rows = embedded(campaign.objective, tops, large.number)
+    objective = campaign.objective
+    rows = embedded(objective, small.first(CARRIED), large.number)
     if rows is not None:
-        active = campaign.objective.active
-        more = tuple(c for c in active[small.number] if c not in active[large.number])
-        active[large.number] = (*active[large.number], *more)
+        objective.activate(large.number, objective.active[small.number])
     return rows

@@ -9,7 +9,7 @@ far below everything a bounded term in the spectral abscissa for a loop that is 
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 
@@ -140,6 +140,14 @@ class Objective:
         self.case_names = self.case_names + names
         self.judged = judged(self.task.bounds, self.case_names)
 
+    def everywhere(self) -> list[tuple[int, ...]]:
+        """All the cases, for each structure."""
+        return [tuple(range(len(self.case_names)))] * len(self.structures)
+
+    def activate(self, s: int, cases: Sequence[int]) -> None:
+        """Judge structure s on these cases too from now on."""
+        self.active[s] = tuple(dict.fromkeys([*self.active[s], *cases]))
+
     def theta(self, rows: Rows) -> list[FloatArray]:
         """Tuned values in SI, one array (P,) a row."""
         out: list[FloatArray] = [np.zeros(0)] * len(rows)
@@ -154,14 +162,18 @@ class Objective:
         x = rows.x[index, : len(structure.parameters)]
         return structure.from_search(x, rows.sign[index], self.scales.time, self.scales.gain)
 
-    def rows_of(self, s: int, theta: FloatArray, origin: IntArray | None = None) -> Rows:
+    def rows_of(self, s: int, theta: FloatArray, origin: IntArray | int = -1) -> Rows:
         """Rows of structure s from tuned values (B, P), brought inside its box."""
-        structure = self.structures[s]
-        x, sign = structure.to_search(theta, self.scales.time, self.scales.gain)
-        wide = np.zeros((len(theta), self.width))
+        x, sign = self.structures[s].to_search(theta, self.scales.time, self.scales.gain)
+        return self.rows_at(s, x, sign, origin)
+
+    def rows_at(self, s: int, x: FloatArray, sign: FloatArray | float, origin: IntArray | int = -1) -> Rows:
+        """Rows of structure s from search coordinates (B, P), brought inside its box. One sign and one origin
+        for all, or (B,) of them."""
+        count = len(x)
+        wide = np.zeros((count, self.width))
         wide[:, : x.shape[1]] = np.clip(x, *self.boxes[s])
-        start = np.full(len(theta), -1) if origin is None else origin
-        return Rows(np.full(len(theta), s), wide, sign, start)
+        return Rows(np.full(count, s), wide, np.full(count, sign, dtype=float), np.full(count, origin))
 
     def limits(self, rows: Rows) -> tuple[FloatArray, FloatArray, BoolArray]:
         """(S, V) lower and upper ends of the coordinates, and which of them the row has."""
@@ -176,14 +188,11 @@ class Objective:
 
     def realise(self, rows: Rows) -> Rational:
         """C(s) of every row, padded to one width."""
-        width = 1 + max((self.structures[int(s)].order for s in np.unique(rows.structure)), default=0)
-        numerator, denominator = np.zeros((len(rows), width)), np.zeros((len(rows), width))
+        parts = []
         for s in np.unique(rows.structure):
             index = np.flatnonzero(rows.structure == s)
-            made = self.structures[int(s)].realise(self._theta(rows, int(s), index))
-            numerator[index, width - made.numerator.shape[1] :] = made.numerator
-            denominator[index, width - made.denominator.shape[1] :] = made.denominator
-        return Rational(numerator, denominator, np.zeros(len(rows)))
+            parts.append((index, self.structures[int(s)].realise(self._theta(rows, int(s), index))))
+        return placed(parts)
 
     def score(
         self,
@@ -311,6 +320,23 @@ def compressed(slack: FloatArray) -> FloatArray:
         np.isnan(slack), ABSENT, np.where(slack < -1.0, np.maximum(deep, ABSENT), slack)
     )
     return out
+
+
+def uncompressed(slack: FloatArray) -> FloatArray:
+    """The slack that was `compressed`, where it is not absent."""
+    out: FloatArray = np.where(slack < -1.0, -np.exp(-1.0 - slack), slack)
+    return out
+
+
+def placed(parts: Sequence[tuple[IntArray, Rational]]) -> Rational:
+    """Rows without dead time, each part at the places named beside it, padded to one width."""
+    count = sum(len(made) for _, made in parts)
+    width = max((p.shape[1] for _, made in parts for p in (made.numerator, made.denominator)), default=1)
+    numerator, denominator = np.zeros((count, width)), np.zeros((count, width))
+    for index, made in parts:
+        numerator[index, width - made.numerator.shape[1] :] = made.numerator
+        denominator[index, width - made.denominator.shape[1] :] = made.denominator
+    return Rational(numerator, denominator, np.zeros(count))
 
 
 def stacked(a: Rational, b: Rational) -> Rational:

@@ -29,7 +29,7 @@ def price_list(campaign: Campaign) -> tuple[Price, ...]:
     for standing in campaign.standings:
         if standing.tops is None or standing.best <= -15.0:
             continue
-        tops = standing.tops.take(np.arange(min(2, len(standing.tops))))
+        tops = standing.first(2)
         for r in range(len(aims)):
             parts.append(tops)
             aim_of += [r] * len(tops)

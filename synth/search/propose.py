@@ -150,8 +150,7 @@ def _listed(
     drafts: list[Draft] = []
     for standing in campaign.standings:
         if standing.tops is not None:
-            count = 2 if standing.best >= 0.0 else 1
-            several = standing.tops.take(np.arange(min(count, len(standing.tops))))
+            several = standing.tops.first(2 if standing.best >= 0.0 else 1)
             drafts += drafts_of(objective, several, "worst slack", campaign.origins)
     near = nearest(campaign)
     if near is not None:

@@ -56,6 +56,12 @@ class Standing:
         """Optima within AGREE of the best."""
         return sum(o >= self.best - AGREE for o in self.optima)
 
+    def first(self, count: int) -> Rows:
+        """Its best `count` points; ValueError before there is one."""
+        if self.tops is None:
+            raise ValueError(f"structure {self.number} was not searched yet")
+        return self.tops.first(count)
+
     def record(self, rows: Rows, guides: FloatArray, finished: int, keep: int = 6) -> None:
         """Take in polished points of this structure; the first `finished` of them ran to their end."""
         both = rows if self.tops is None else joined([self.tops, rows])

@@ -121,10 +121,7 @@ def line(objective: Objective, s: int, intervals: Intervals, signs: tuple[int, .
     for sign in signs:
         gains = covering(intervals, sign, objective.scales.gain, count)
         logs = np.log(gains * objective.scales.gain) if gains.size else np.linspace(bottom, top, 16)
-        x = np.zeros((logs.size, objective.width))
-        x[:, 0] = logs
-        rows = _rows(objective, s, x, sign, 3)
-        parts.append(rows)
+        parts.append(objective.rows_at(s, logs[:, None], sign, 3))
     return joined(parts)
 
 
@@ -139,8 +136,7 @@ def _design(objective: Objective, s: int, count: int, seed: int, band: Band, sig
     with np.errstate(divide="ignore", invalid="ignore"):
         theta[:, 0] = sign / np.abs(plant) * theta[:, 0]
     theta = theta[np.isfinite(theta).all(axis=1) & structure.legal(theta)][:count]
-    rows = objective.rows_of(s, theta)
-    return Rows(rows.structure, rows.x, rows.sign, np.zeros(len(rows), dtype=np.intp))
+    return objective.rows_of(s, theta, 0)
 
 
 def _crossover(objective: Objective, s: int, count: int, seed: int, band: Band, sign: int) -> Rows:
@@ -158,13 +154,13 @@ def _crossover(objective: Objective, s: int, count: int, seed: int, band: Band, 
     size = np.abs(structure.response(theta, crossover) * response(objective.task.plants, crossover)[0])
     with np.errstate(divide="ignore", invalid="ignore"):
         x[:, 0] = -np.log(size)
-    return _rows(objective, s, x[np.isfinite(x).all(axis=1)], sign, 1)
+    return objective.rows_at(s, x[np.isfinite(x).all(axis=1)], sign, 1)
 
 
 def _wide(objective: Objective, s: int, count: int, seed: int, sign: int) -> Rows:
     structure = objective.structures[s]
     u = halton(count, len(structure.parameters), seed)
-    return _rows(objective, s, _corners(structure, u, -3.0 * DECADE, 3.0 * DECADE), sign, 2)
+    return objective.rows_at(s, _corners(structure, u, -3.0 * DECADE, 3.0 * DECADE), sign, 2)
 
 
 def _corners(structure: Structure, u: FloatArray, low: float, high: float) -> FloatArray:
@@ -180,11 +176,3 @@ def _corners(structure: Structure, u: FloatArray, low: float, high: float) -> Fl
         else:
             x[:, j] = low + u[:, j] * (high - low)
     return x
-
-
-def _rows(objective: Objective, s: int, x: FloatArray, sign: int, source: int) -> Rows:
-    wide = np.zeros((len(x), objective.width))
-    low, high = objective.boxes[s]
-    wide[:, : len(low)] = np.clip(x[:, : len(low)], low, high)
-    count = len(x)
-    return Rows(np.full(count, s), wide, np.full(count, float(sign)), np.full(count, source))

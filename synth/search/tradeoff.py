@@ -43,7 +43,7 @@ def tradeoff(
     campaign = Campaign(task, settings, extra=(first, second), progress=progress, stop=stop)
     campaign.run()
     campaign.enter("front")
-    heads = [s.tops.take(np.array([0])) for s in campaign.standings if s.tops is not None and s.best >= 0.0]
+    heads = [s.first(1) for s in campaign.standings if s.best >= 0.0]
     if not heads:
         return ()
     senses = (_sense(first), _sense(second))

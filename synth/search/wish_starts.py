@@ -11,7 +11,7 @@ from dataclasses import replace
 import numpy as np
 
 from synth.loop.arrays import FloatArray, IntArray
-from synth.search.archive import Rows, distinct, joined
+from synth.search.archive import Rows, best_each, distinct, joined
 from synth.search.campaign import Campaign
 from synth.search.embed import embedded
 from synth.search.goals import ABSENT, Goals, benefit, terms
@@ -84,8 +84,7 @@ def lifted(campaign: Campaign, rows: Rows, aim: Aim) -> Rows | None:
     """The best of a structure as a start of each one that contains it and has ended worse; None where there
     is none."""
     objective = campaign.objective
-    everything = [tuple(range(len(objective.case_names)))] * len(objective.structures)
-    gain = _gain(objective, objective.score(rows, everything, remember=False), aim)
+    gain = _gain(objective, objective.score(rows, objective.everywhere(), remember=False), aim)
     best = {
         int(n): max(np.flatnonzero(rows.structure == n), key=lambda i: gain[i])
         for n in np.unique(rows.structure)
@@ -99,9 +98,7 @@ def lifted(campaign: Campaign, rows: Rows, aim: Aim) -> Rows | None:
             made = embedded(objective, rows.take(np.array([i])), large.number)
             if made is not None:
                 parts.append(made)
-                objective.active[large.number] = tuple(
-                    dict.fromkeys([*objective.active[large.number], *objective.active[number]])
-                )
+                objective.activate(large.number, objective.active[number])
     return _nearest(objective, parts, aim)
 
 
@@ -135,8 +132,7 @@ def _nearest(objective: Objective, parts: list[Rows], aim: Aim) -> Rows | None:
     rows = joined(parts)
     with objective.approximating():
         merit = terms(objective, Goals.same(len(rows), aim), objective.score(rows)).merit()
-    index = [np.flatnonzero(rows.structure == n) for n in np.unique(rows.structure)]
-    return rows.take(np.concatenate([i[np.argsort(-merit[i], kind="stable")[:NESTED]] for i in index]))
+    return rows.take(best_each(rows, merit, NESTED))
 
 
 def _gain(objective: Objective, scores: Scores, aim: Aim) -> FloatArray:

@@ -46,12 +46,12 @@ def preferred(campaign: Campaign, earlier: Wished | None = None) -> Wished | Non
     parts = [] if earlier is None else [earlier.rows]
     begun = []
     for standing in campaign.standings:
-        if standing.tops is None or standing.best < wish.reserve:
+        if standing.best < wish.reserve:
             continue
         if earlier is not None and np.any(earlier.rows.structure == standing.number):
             continue
         begun.append(standing)
-        parts.append(standing.tops.take(np.arange(min(3, len(standing.tops)))))
+        parts.append(standing.first(3))
         parts.append(from_archive(campaign, standing.number, aim))
         parts.append(fresh(campaign, standing, aim))
     if not parts:
