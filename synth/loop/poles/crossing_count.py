@@ -7,8 +7,10 @@ from __future__ import annotations
 
 import numpy as np
 
-from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
+from synth.loop.arrays import BoolArray, FloatArray
 from synth.loop.frequency.isolation import Brackets, isolate
+from synth.loop.frequency.response import polynomial
+from synth.loop.poles.newton import columnwise, value_and_slope, value_at
 
 # Turns and rad within which a crossing is too near to the delay at hand, or to none, to be told by rounding.
 CLOSE = 1e-8
@@ -36,7 +38,7 @@ def count_by_crossings(denominator: FloatArray, numerator: FloatArray, delay: Fl
     row = brackets.row
     x, off = _bracketed(ascending[:, row], brackets)
     w = np.sqrt(x)
-    above, below = _on_axis(numerator, row, w), _on_axis(denominator, row, w)
+    above, below = (value_at(columnwise(p)[:, row], 1j * w) for p in (numerator, denominator))
     angle = np.mod(np.angle(-above / below), 2.0 * np.pi)
     turns = (w * delay[row] - angle) / (2.0 * np.pi)
     times = np.maximum(np.floor(turns) + 1.0, 0.0)
@@ -69,12 +71,7 @@ def _bracketed(polynomials: FloatArray, brackets: Brackets) -> tuple[FloatArray,
     low, high = brackets.low, brackets.high
     x = 0.5 * (low + high)
     for _ in range(60):
-        value, slope = np.zeros_like(x), np.zeros_like(x)
-        for one in polynomials[::-1]:
-            slope *= x
-            slope += value
-            value *= x
-            value += one
+        value, slope = value_and_slope(polynomials[::-1], x)
         before = (value < 0.0) == brackets.negative
         low, high = np.where(before, x, low), np.where(before, high, x)
         new = x - value / slope
@@ -83,21 +80,8 @@ def _bracketed(polynomials: FloatArray, brackets: Brackets) -> tuple[FloatArray,
         x = new
         if done.all():
             break
-    size = np.zeros_like(x)
-    for one in polynomials[::-1]:
-        size *= x
-        size += np.abs(one)
+    size = polynomial(np.abs(polynomials), x)
     return x, 4.0 * np.finfo(float).eps * len(polynomials) * size / np.abs(slope * x)
-
-
-def _on_axis(polynomials: FloatArray, row: IntArray, w: FloatArray) -> ComplexArray:
-    """p(jω) of the rows `row`, (F,)."""
-    columns = np.ascontiguousarray(polynomials.T)[:, row]
-    value: ComplexArray = columns[0].astype(complex)
-    for one in columns[1:]:
-        value *= 1j * w
-        value += one
-    return value
 
 
 def _right_of_axis(polynomials: FloatArray) -> tuple[FloatArray, BoolArray]:

@@ -6,6 +6,8 @@ fast as the other way round.
 
 from __future__ import annotations
 
+from typing import TypeVar
+
 import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray
@@ -13,6 +15,9 @@ from synth.loop.closed_loop import Loops
 
 # Steps, of which the last is taken by all seeds: it squares what is left.
 STEPS = 10
+
+# real or complex, as they come
+Points = TypeVar("Points", FloatArray, ComplexArray)
 
 
 def characteristic(loops: Loops, s: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
@@ -92,7 +97,7 @@ def _characteristic(
     return d + n, slope_d + slope_n - delay * n
 
 
-def value_and_slope(coefficients: FloatArray, s: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+def value_and_slope(coefficients: FloatArray, s: Points) -> tuple[Points, Points]:
     """p(s) and p'(s) at s (.., M) by Horner's rule; coefficients (n + 1, M), descending."""
     value = np.empty_like(s)
     value[:] = coefficients[0]
