@@ -20,8 +20,8 @@ import numpy as np
 
 from synth.loop.arrays import BoolArray, FloatArray, IntArray
 from synth.loop.frequency.cells import SHARED_EDGES, STEP, AngleForm, cell_tables, shared_tables
-from synth.loop.frequency.crossings import FALL, PHASE, Crossings, fall_level, loop_at, newton
-from synth.loop.frequency.delayed_curves import DelayedCrossing
+from synth.loop.frequency.crossings import FALL, PHASE, Crossings, fall_level, loop_at
+from synth.loop.frequency.delayed_curves import refined
 from synth.loop.frequency.delayed_peaks import PLACE, Levels
 from synth.loop.frequency.isolation import Brackets
 from synth.loop.frequency.response import D, N, Response, polynomial
@@ -95,23 +95,11 @@ class _Findings:
 
     def _take_crossings(self, brackets: Brackets) -> None:
         number = brackets.row // self.m - len(self.keys)
-        for kind in self.kinds:
-            at = np.flatnonzero(number == (0 if kind == FALL else 1))
-            row, negative = brackets.row[at] % self.m, brackets.negative[at]
-            delay = self.response.dead_time[row]
-            low, high = np.sqrt(brackets.low[at]) / delay, np.sqrt(brackets.high[at]) / delay
-            self._refine(kind, row, low, high, negative)
-
-    def _refine(
-        self, kind: int, row: IntArray, low: FloatArray, high: FloatArray, negative: BoolArray
-    ) -> None:
-        if not row.size:
-            return
-        equation = DelayedCrossing(self.response, kind, row, self.level)
-        with np.errstate(divide="ignore"):
-            bottom = np.maximum(np.log(low), np.log(high) - 50.0)
-        u, holds = newton(equation, bottom, np.log(high), negative)
-        self._note(kind, row[holds], np.exp(u[holds]), negative[holds])
+        for place, kind in enumerate((FALL, PHASE)):
+            mine = number == place
+            if mine.any():
+                some = brackets.rows(mine, (len(self.keys) + place) * self.m)
+                self._note(kind, *refined(self.response, kind, some, self.level))
 
     def _note(self, kind: int, row: IntArray, w: FloatArray, down: BoolArray) -> None:
         kinds = np.full(len(row), kind, dtype=np.intp)

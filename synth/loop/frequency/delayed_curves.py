@@ -8,10 +8,12 @@ from __future__ import annotations
 
 import numpy as np
 
-from synth.loop.arrays import FloatArray, IntArray
-from synth.loop.frequency.crossings import FALL, PHASE
+from synth.loop.arrays import BoolArray, FloatArray, IntArray
+from synth.loop.frequency.crossings import FALL, PHASE, newton
+from synth.loop.frequency.isolation import Brackets
 from synth.loop.frequency.response import D, N, Response, evaluate, log_rates, tamed
 
+_DEPTH = 50.0  # in u, of a bracket that begins at 0
 _STEPS = 12
 _STRIDE = 0.3  # longest step in u
 _FAR = 0.6  # from the start: what lies there is another's to find
@@ -55,6 +57,21 @@ class DelayedCrossing:
         with np.errstate(divide="ignore", invalid="ignore"):
             excess = np.log(size[0] / size[1]) - self.offset
         return excess, 2.0 * (rate[0] - rate[1]), excess
+
+
+def refined(
+    response: Response, kind: int, brackets: Brackets, level: FloatArray
+) -> tuple[IntArray, FloatArray, BoolArray]:
+    """(row, ω, negative) of the crossings of one kind in brackets of y = (ωθ)², whose `row` is the loop.
+
+    level : (M,) of |T|² for FALL. What the brackets do not hold, by rounding or as a jump, is left out.
+    """
+    row, delay = brackets.row, response.dead_time[brackets.row]
+    with np.errstate(divide="ignore"):
+        top = np.log(np.sqrt(brackets.high) / delay)
+        bottom = np.maximum(np.log(np.sqrt(brackets.low) / delay), top - _DEPTH)
+    u, holds = newton(DelayedCrossing(response, kind, row, level), bottom, top, brackets.negative)
+    return row[holds], np.exp(u[holds]), brackets.negative[holds]
 
 
 class DelayedCurve:

@@ -6,8 +6,8 @@ import numpy as np
 
 from synth.loop.arrays import FloatArray, IntArray
 from synth.loop.frequency.cells import SHARED_EDGES, STEP, AngleForm, cell_tables, shared_tables
-from synth.loop.frequency.crossings import PHASE, newton
-from synth.loop.frequency.delayed_curves import DelayedCrossing
+from synth.loop.frequency.crossings import PHASE
+from synth.loop.frequency.delayed_curves import refined
 from synth.loop.frequency.response import Response
 from synth.loop.frequency.survey import open_cells, sign_changes
 
@@ -28,13 +28,8 @@ def real_axis_crossings(response: Response, until: FloatArray) -> tuple[IntArray
     while rows.size:
         cells = open_cells(tables, form.turned[:, rows], rows, below=False)
         brackets = sign_changes(cells, edges, hint)
-        row, delay = brackets.row, response.dead_time[brackets.row]
-        with np.errstate(divide="ignore", invalid="ignore"):
-            top = np.log(np.sqrt(brackets.high) / delay)
-            bottom = np.maximum(np.log(np.sqrt(brackets.low) / delay), top - 50.0)
-        crossing = DelayedCrossing(response, PHASE, row, hint)
-        u, holds = newton(crossing, bottom, top, brackets.negative)
-        found.append((row[holds], np.exp(u[holds])))
+        row, w, _ = refined(response, PHASE, brackets, hint)
+        found.append((row, w))
         start = float(np.sqrt(edges[-1]))
         rows = rows[until[rows] > start]
         edges = (start + STEP * np.arange(_CELLS + 1.0)) ** 2

@@ -45,10 +45,11 @@ def open_cells(tables: FloatArray, columns: FloatArray, targets: IntArray, *, be
         if len(targets[part]) < form.shape[2]:
             form = np.empty((*tables.shape[:2], len(targets[part])))
         in_form(tables, columns[:, part], form)
-        mask: BoolArray = form.min(axis=1) < 0.0
         if not below:
             form[1:, 0] = form[:-1, -1]  # one value, one sign where two cells meet
-            mask = (form.min(axis=1) < 0.0) & (form.max(axis=1) >= 0.0)
+        mask: BoolArray = form.min(axis=1) < 0.0
+        if not below:
+            mask &= form.max(axis=1) >= 0.0
         cell, column = np.nonzero(mask)
         parts.append(Open(targets[part][column], cell, np.ascontiguousarray(form[cell, :, column].T)))
     return joined(parts)
