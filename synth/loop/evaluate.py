@@ -34,8 +34,7 @@ class Screen:
     """When to stop looking at a loop: later stages are skipped for it.
 
     least_damping   damping ratio below this ends the loop: after its poles where a pole that is sure to
-    count (its
-                    share in the step is 2 % or more) is damped less, else after its frequencies
+                    count (its share in the step is 2 % or more) is damped less, else after its frequencies
     most_peak       sensitivity peak above this ends it after its frequencies
     """
 
@@ -49,9 +48,8 @@ class Evaluation:
 
     measures     the Q measures asked for, in order
     values       (B, K, Q) or (M, Q); NaN is absent (or not looked at, see `reached`), ±inf is meant. Of a
-    loop that
-                 the screen ended after its poles, damping_ratio is that of the poles sure to count: at
-                 least the true one's upper bound
+                 loop that the screen ended after its poles, damping_ratio is that of the poles sure to
+                 count: an upper bound of the true one
     approximate  same shape: True where the error bound of the quantity was not reached
     stable       (B, K) or (M,)
     abscissa     (B, K) or (M,) largest real part of the poles [1/s]; the negative of the decay rate. NaN for
@@ -297,7 +295,7 @@ def _fill_by_stand_in(
     found |= damping(near, wanted, values.get("highest_fall"))
     still = statics(near.loops, np.ones(len(rows), dtype=bool), {m.quantity for m in wanted})
     found |= {w: still[w.quantity] for w in wanted if w.quantity in still}
-    found |= {w: -near.abscissa() for w in wanted if w.quantity == "decay_rate"}
+    found |= {w: -abscissa[keep] for w in wanted if w.quantity == "decay_rate"}
     _write(out, rows, near.loops, found, None)
     out.reached[rows] = 1
     on = np.ones(len(rows), dtype=bool)
