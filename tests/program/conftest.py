@@ -1,5 +1,9 @@
 """A sheet that a PI meets in a moment, in the folder where the commands are typed."""
 
+import os
+import subprocess
+import sys
+
 import pytest
 
 import synth.search as search
@@ -51,6 +55,24 @@ def searched_once():
     patch.setattr(search, "propose", once)
     yield patch
     patch.undo()
+
+
+@pytest.fixture(scope="session")
+def begun():
+    """One command line in a process of its own, begun in that folder and not waited for."""
+
+    def begin(folder, *words, world=(), **more):
+        return subprocess.Popen(
+            [sys.executable, "-m", "synth.cli", *map(str, words)],
+            cwd=folder,
+            env=os.environ | {"OPENBLAS_NUM_THREADS": "1"} | dict(world),
+            stdout=subprocess.PIPE,
+            stderr=subprocess.PIPE,
+            text=True,
+            **more,
+        )
+
+    return begin
 
 
 @pytest.fixture(scope="session")

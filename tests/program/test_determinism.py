@@ -1,9 +1,6 @@
 """One sheet, one seed, one version: one record, but for time stamps and seconds, whatever runs beside it."""
 
 import json
-import os
-import subprocess
-import sys
 from concurrent.futures import ThreadPoolExecutor
 
 import pytest
@@ -46,34 +43,36 @@ WORLDS = [
 ]
 
 
-def record_of(folder, world, *words):
-    done = subprocess.run(
-        [sys.executable, "-m", "synth.cli", "propose", "sheet.toml", "--json", *words],
-        cwd=folder,
-        env=os.environ | world,
-        capture_output=True,
-        text=True,
-        check=False,
-    )
-    assert done.returncode in (0, 1), done.stderr
-    record = json.loads(done.stdout)
+PROPOSE = ("propose", "sheet.toml", "--json")
+
+
+def record_of(run):
+    out, err = run.communicate()
+    assert run.returncode in (0, 1), err
+    record = json.loads(out)
     record["created"] = record["search"]["seconds"] = None
     return json.dumps(record)
 
 
 @pytest.mark.parametrize("workers", [1, 2])
 @pytest.mark.parametrize("kind", SHEETS)
-def test_the_same_record_bit_for_bit(tmp_path, kind, workers):
+def test_the_same_record_bit_for_bit(tmp_path, begun, kind, workers):
     (tmp_path / "sheet.toml").write_text(SHEETS[kind])
     with ThreadPoolExecutor(workers) as pool:  # runs one after another, or two at once
-        found = list(pool.map(lambda world: record_of(tmp_path, world), WORLDS[: 3 if workers == 1 else 2]))
+        found = list(
+            pool.map(
+                lambda world: record_of(begun(tmp_path, *PROPOSE, world=world)),
+                WORLDS[: 3 if workers == 1 else 2],
+            )
+        )
     assert len(set(found)) == 1
     assert json.loads(found[0])["candidates"]
 
 
-def test_another_seed_is_another_search(tmp_path):
+def test_another_seed_is_another_search(tmp_path, begun):
     (tmp_path / "sheet.toml").write_text(SHEETS["one case"])
-    one, other = (json.loads(record_of(tmp_path, WORLDS[0], "--seed", seed)) for seed in "05")
+    runs = (begun(tmp_path, *PROPOSE, "--seed", seed, world=WORLDS[0]) for seed in "05")
+    one, other = (json.loads(record_of(run)) for run in runs)
     assert one["search"]["seed"] == 0
     assert other["search"]["seed"] == 5
     assert one["candidates"] != other["candidates"]

@@ -5,8 +5,6 @@ import os
 import random
 import resource
 import signal
-import subprocess
-import sys
 import time
 
 import pytest
@@ -27,19 +25,16 @@ static_error = { max = "0 %" }
 structures = ["PI"]
 budget = "thorough"
 """
-CODE = "import sys; from synth.cli import main; sys.exit(main(sys.argv[1:]))"
 
 
-def run(folder, *words, **more):
-    return subprocess.Popen(
-        [sys.executable, "-c", CODE, *map(str, words)],
-        cwd=folder,
-        stdout=subprocess.PIPE,
-        stderr=subprocess.PIPE,
-        text=True,
-        env=os.environ | {"OPENBLAS_NUM_THREADS": "1"},
-        **more,
-    )
+def files_up_to(size):
+    """A limit on the size of files stands for a full disk: the write itself fails, part way."""
+
+    def limit():
+        resource.setrlimit(resource.RLIMIT_FSIZE, (size, size))
+        signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
+
+    return limit
 
 
 def records(folder):
@@ -48,37 +43,31 @@ def records(folder):
     return {path.name: (read_record(path).sha256, path.read_bytes()) for path in found}
 
 
-def test_kill_9_at_random_moments_of_a_run(sheet):
-    begun = time.monotonic()
-    whole = run(sheet.parent, "propose", sheet.name)
+def test_kill_9_at_random_moments_of_a_run(sheet, begun):
+    at = time.monotonic()
+    whole = begun(sheet.parent, "propose", sheet.name)
     whole.communicate()
     assert whole.returncode == 0
-    length = time.monotonic() - begun
+    length = time.monotonic() - at
     before, chance = records(sheet.parent), random.Random(3)
     assert list(before) == ["block-001.json"]
     for share in (0.5, *(chance.uniform(0.75, 1.05) for _ in range(3))):
-        one = run(sheet.parent, "propose", sheet.name)
+        one = begun(sheet.parent, "propose", sheet.name)
         time.sleep(share * length)
         one.kill()
         one.communicate()
         after = records(sheet.parent)
         assert {name: after[name] for name in before} == before  # nothing there is touched
         before = after
-    last = run(sheet.parent, "propose", sheet.name)
+    last = begun(sheet.parent, "propose", sheet.name)
     last.communicate()
     assert last.returncode == 0
     assert len(records(sheet.parent)) == len(before) + 1
 
 
 @pytest.mark.parametrize("words", ["propose block.toml", "score block.toml --compensator 1/s"])
-def test_no_room_for_the_record(sheet, words):
-    """A limit on the size of files stands for a full disk: the write itself fails, part way."""
-
-    def small():
-        resource.setrlimit(resource.RLIMIT_FSIZE, (20_000, 20_000))
-        signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
-
-    one = run(sheet.parent, *words.split(), preexec_fn=small)
+def test_no_room_for_the_record(sheet, begun, words):
+    one = begun(sheet.parent, *words.split(), preexec_fn=files_up_to(20_000))
     _, err = one.communicate()
     assert one.returncode == 2
     assert "cannot be written" in err
@@ -124,11 +113,11 @@ def told(journal):
     )
 
 
-def test_a_run_goes_on_from_its_journal_after_kill_9(tmp_path):
+def test_a_run_goes_on_from_its_journal_after_kill_9(tmp_path, begun):
     (tmp_path / "chain.toml").write_text(HARD)
     journal = tmp_path / "chain.journal"
     words = ("propose", "chain.toml", "--study", "chain.journal")
-    first = run(tmp_path, *words)
+    first = begun(tmp_path, *words)
     wait_for(journal, 60_000, first)
     first.kill()
     first.communicate()
@@ -138,7 +127,7 @@ def test_a_run_goes_on_from_its_journal_after_kill_9(tmp_path):
     torn = journal.read_bytes()
     torn += torn[: torn.index(b"\n") // 2]  # as a write that kill -9 cut short
     journal.write_bytes(torn)
-    again = run(tmp_path, *words)
+    again = begun(tmp_path, *words)
     wait_for(journal, len(torn) + 5_000, again)
     again.send_signal(signal.SIGINT)
     out, err = again.communicate(timeout=60)
@@ -167,14 +156,9 @@ def test_a_file_that_is_no_journal_is_left_alone(sheet, synth):
     assert os.listdir(sheet.parent) == ["block.toml"]
 
 
-def test_a_full_disk_under_the_journal(tmp_path):
+def test_a_full_disk_under_the_journal(tmp_path, begun):
     (tmp_path / "chain.toml").write_text(HARD)
-
-    def small():
-        resource.setrlimit(resource.RLIMIT_FSIZE, (30_000, 30_000))
-        signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
-
-    one = run(tmp_path, "propose", "chain.toml", "--study", "chain.journal", preexec_fn=small)
+    one = begun(tmp_path, "propose", "chain.toml", "--study", "chain.journal", preexec_fn=files_up_to(30_000))
     _, err = one.communicate()
     assert one.returncode == 2
     assert "the storage of the study cannot be used" in err

@@ -2,8 +2,6 @@
 
 import os
 import resource
-import subprocess
-import sys
 
 import pytest
 from hypothesis import HealthCheck, given, settings
@@ -89,7 +87,7 @@ LARGE = {
 
 
 @pytest.mark.parametrize("name", LARGE)
-def test_large_sheets_get_an_answer_or_a_refusal_within_bounds(tmp_path, name):
+def test_large_sheets_get_an_answer_or_a_refusal_within_bounds(tmp_path, begun, name):
     """Two gigabytes of address space, most of which numpy takes, and ten seconds of processor time."""
     (tmp_path / "large.toml").write_text(LARGE[name])
 
@@ -97,18 +95,10 @@ def test_large_sheets_get_an_answer_or_a_refusal_within_bounds(tmp_path, name):
         resource.setrlimit(resource.RLIMIT_AS, (2_000_000_000, 2_000_000_000))
         resource.setrlimit(resource.RLIMIT_CPU, (10, 10))
 
-    code = "import sys; from synth.cli import main; sys.exit(main(sys.argv[1:]))"
-    done = subprocess.run(
-        [sys.executable, "-c", code, "check", "large.toml"],
-        cwd=tmp_path,
-        env=os.environ | {"OPENBLAS_NUM_THREADS": "1"},
-        preexec_fn=bounded,
-        capture_output=True,
-        text=True,
-        check=False,
-    )
-    assert done.returncode in CODES, done.stderr
-    assert len(done.stdout) + len(done.stderr) < 50_000
+    done = begun(tmp_path, "check", "large.toml", preexec_fn=bounded)
+    out, err = done.communicate()
+    assert done.returncode in CODES, err
+    assert len(out) + len(err) < 50_000
     assert os.listdir(tmp_path) == ["large.toml"]
 
 
@@ -116,11 +106,11 @@ EXTREME = ["1e308/(1e308*s + 1e307)", "1e-300/(1e-300*s + 1e-301)", "1e250/(s + 
 
 
 @pytest.mark.parametrize("plant", EXTREME)
-def test_extreme_coefficients_are_scored_and_doubted_at_most(tmp_path, plant):
+def test_extreme_coefficients_are_scored_and_doubted_at_most(written, begun, plant):
     """The products D_P D_C of the second opinion leave the range of doubles unless they are scaled."""
-    path = tmp_path / "extreme.toml"
-    path.write_text(f'[plant]\ntransfer = "{plant}"\n[requirements]\novershoot = {{ max = "10 %" }}\n')
-    words = ["-m", "synth.cli", "score", str(path), "--compensator", "(20*s + 2)/(10*s)"]
-    done = subprocess.run([sys.executable, *words], cwd=tmp_path, capture_output=True, text=True, check=False)
-    assert done.returncode in CODES, done.stderr
-    assert "Traceback" not in done.stderr
+    text = f'[plant]\ntransfer = "{plant}"\n[requirements]\novershoot = {{ max = "10 %" }}\n'
+    path = written("extreme.toml", text)
+    done = begun(path.parent, "score", path, "--compensator", "(20*s + 2)/(10*s)")
+    _, err = done.communicate()
+    assert done.returncode in CODES, err
+    assert "Traceback" not in err
