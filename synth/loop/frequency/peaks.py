@@ -19,7 +19,16 @@ import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.frequency.isolation import Brackets, isolate
-from synth.loop.frequency.response import CLOSED, CONTROL, D, N, Response, complex_values, evaluate
+from synth.loop.frequency.response import (
+    CLOSED,
+    CONTROL,
+    D,
+    N,
+    Response,
+    complex_values,
+    evaluate,
+    polynomial,
+)
 from synth.loop.polynomials import in_strips
 
 CURVES = {"sensitivity_peak": D, "complementary_peak": N, "noise_gain": CONTROL}
@@ -227,13 +236,8 @@ class _Rational:
 def _margin(top: FloatArray, bottom: FloatArray, best: FloatArray, at: FloatArray) -> FloatArray:
     """How far above the peak to put the level: as near as the digits left in the squares allow."""
     x = at * at
-    terms, value = np.abs(bottom[-1]), bottom[-1].copy()
-    above = np.abs(top[-1])
-    for k in range(len(bottom) - 2, -1, -1):
-        terms = terms * x + np.abs(bottom[k])
-        above = above * x + np.abs(top[k])
-        value = value * x + bottom[k]
-    noise = 8.0 * _EPS * (terms + above / (best * best)) / np.abs(value)
+    terms, above = polynomial(np.abs(bottom), x), polynomial(np.abs(top), x)
+    noise = 8.0 * _EPS * (terms + above / (best * best)) / np.abs(polynomial(bottom, x))
     out: FloatArray = np.fmin(np.fmax(noise, _LEAST_MARGIN), _MOST_MARGIN)
     return out
 

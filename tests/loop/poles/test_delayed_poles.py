@@ -7,8 +7,9 @@ import pytest
 from scipy.special import lambertw
 
 from synth.loop.closed_loop import Rational, close
-from synth.loop.poles.delayed import characteristic, delayed_poles
+from synth.loop.poles.delayed import delayed_poles
 from synth.loop.poles.encirclement import chain_abscissa, delayed_stable, roots_right_of
+from synth.loop.poles.newton import characteristic
 from synth.loop.poles.winding import missing_roots
 
 

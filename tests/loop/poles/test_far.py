@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from scipy.special import lambertw
 
-from synth.loop.closed_loop import Rational
+from synth.loop.closed_loop import Rational, close
 from synth.loop.evaluate import evaluate
 from synth.loop.poles.delayed import FARTHEST, delayed_poles
 from synth.loop.poles.far import far_damping
@@ -81,8 +81,6 @@ def test_a_light_resonance_far_out_holds_the_least_damped_pole():
 
 def test_far_damping_is_that_of_the_listed_poles():
     rng = np.random.default_rng(3)
-    from synth.loop.closed_loop import close
-
     den = np.c_[np.ones(8), rng.uniform(0.05, 2.0, 8), rng.uniform(0.5, 2.0, 8)]
     plant = Rational.of(rng.normal(size=(8, 2)) * 0.2, den, 10.0 ** rng.uniform(0.0, 2.0, 8))
     rows = np.arange(8)
