@@ -3,34 +3,14 @@
 import os
 import subprocess
 import sys
+from pathlib import Path
 
 import pytest
 
 import synth.search as search
 from synth.search.explore import fingerprint
 
-SHEET = """\
-title = "Heated block"
-revision = "A"
-[plant]
-transfer = "K / ((T*s + 1)*(0.1*s + 1))"
-input = { name = "heater", unit = "W" }
-output = { name = "block", unit = "K" }
-[parameters]
-K = 2
-T = 1.0
-[[cases]]
-name = "cold"
-T = 1.1
-[requirements]
-overshoot = { max = "10 %" }
-settling_time = { max = "2 s" }
-static_error = { max = "0 %" }
-sensitivity_peak = { max = 1.7 }
-[search]
-structures = ["P", "PI"]
-budget = "quick"
-"""
+SHEET = Path(__file__).with_name("block.toml").read_text(encoding="utf-8")
 
 
 @pytest.fixture

@@ -2,28 +2,13 @@
 
 import os
 import resource
+from pathlib import Path
 
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-SHEET = """\
-[plant]
-transfer = "K / ((T*s + 1)*(0.1*s + 1))"
-[parameters]
-K = 2
-T = 1.0
-[[cases]]
-name = "cold"
-T = 1.1
-[requirements]
-overshoot = { max = "10 %" }
-settling_time = { max = "2 s" }
-static_error = { max = "0 %" }
-[search]
-structures = ["P", "PI"]
-budget = "quick"
-"""
+SHEET = Path(__file__).with_name("block.toml").read_text(encoding="utf-8")
 CODES = {0, 1, 2}  # 3 is a fault of the program, 130 needs Ctrl-C
 
 

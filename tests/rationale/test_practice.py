@@ -16,10 +16,9 @@ phase_margin = {{ min = "30 deg" }}
 
 
 @pytest.fixture
-def scored(tmp_path):
+def scored(written):
     def run(plant, compensator, more=""):
-        path = tmp_path / "sheet.toml"
-        path.write_text(SHEET.format(plant=plant, more=more))
+        path = written("sheet.toml", SHEET.format(plant=plant, more=more))
         return score(path, compensator, Options(keep=False)).record
 
     return run

@@ -16,19 +16,16 @@ from synth.report import plant
         ("6*s/(s*(s + 2))", "gain at zero frequency  3"),
     ],
 )
-def test_the_plant_at_low_frequency(tmp_path, drawn, transfer, line):
-    sheet = tmp_path / "sheet.toml"
-    sheet.write_text(
-        f'[plant]\ntransfer = "{transfer}"\n[requirements]\nphase_margin = {{ min = "30 deg" }}\n'
-    )
-    assert f"  {line}\n" in drawn(plant(check(sheet), 80))
+def test_the_plant_at_low_frequency(written, drawn, transfer, line):
+    text = f'[plant]\ntransfer = "{transfer}"\n[requirements]\nphase_margin = {{ min = "30 deg" }}\n'
+    assert f"  {line}\n" in drawn(plant(check(written("sheet.toml", text)), 80))
 
 
-def test_a_limit_that_rules_out_several_requirements_is_said_once(tmp_path, drawn):
-    sheet = tmp_path / "sheet.toml"
-    sheet.write_text(
+def test_a_limit_that_rules_out_several_requirements_is_said_once(written, drawn):
+    sheet = written(
+        "sheet.toml",
         '[plant]\ntransfer = "(s - 1)/((s - 1)*(s + 2))"\n[requirements]\n'
-        'overshoot = { max = "10 %" }\nsettling_time = { max = "3 s" }\n'
+        'overshoot = { max = "10 %" }\nsettling_time = { max = "3 s" }\n',
     )
     text = " ".join(drawn(plant(check(sheet), 80)).split())
     assert text.count("share a root at s = 1 rad/s") == 1
