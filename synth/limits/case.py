@@ -140,10 +140,3 @@ class CaseView:
                 because = name if because.startswith("nothing") else f"{because}, {name}"
             low, high = max(low, least), min(high, most)
         return FinalValue(low, high, because)
-
-
-def in_words(root: complex) -> str:
-    """A root as it is written in a statement: "27" or "3 ± 4j"."""
-    if root.imag == 0.0:
-        return f"{root.real:.4g}"
-    return f"{root.real:.4g} ± {abs(root.imag):.4g}j"

@@ -7,7 +7,8 @@ from collections.abc import Iterator, Sequence
 
 import numpy as np
 
-from synth.limits.case import CaseView, Finding, in_words
+from synth.limits.case import CaseView, Finding
+from synth.wording.figures import pole as in_words
 from synth.wording.figures import quantity
 
 PEAK_SOURCE = (
@@ -71,10 +72,10 @@ def findings(view: CaseView) -> Iterator[Finding]:
 
 def _with(view: CaseView) -> str:
     facts = view.facts
-    poles = list(dict.fromkeys(map(in_words, facts.right_poles)))
+    poles = list(dict.fromkeys(in_words(p.real, p.imag) for p in facts.right_poles))
     parts = [f"the unstable {'pole' if len(poles) == 1 else 'poles'} at s = {', '.join(poles)} rad/s"]
     if facts.right_zeros:
-        zeros = list(dict.fromkeys(map(in_words, facts.right_zeros)))
+        zeros = list(dict.fromkeys(in_words(z.real, z.imag) for z in facts.right_zeros))
         parts.append(f"the {'zero' if len(zeros) == 1 else 'zeros'} at s = {', '.join(zeros)} rad/s")
     if facts.dead_time > 0.0:
         parts.append(f"a dead time of {quantity(facts.dead_time, 's')}")

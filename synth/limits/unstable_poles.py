@@ -7,7 +7,8 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from synth.limits.case import CaseView, Finding, in_words
+from synth.limits.case import CaseView, Finding
+from synth.wording.figures import pole as in_words
 
 OVERSHOOT_SOURCE = (
     "R. H. Middleton, Trade-offs in linear control system design, Automatica 27 (1991) 281-292: "
@@ -141,8 +142,8 @@ def _noise_gain(view: CaseView) -> Iterator[Finding]:
     least = least_noise_gain(view)
     fastest = max(view.facts.right_poles, key=lambda p: p.real)
     statement = (
-        f"To hold the unstable pole at s = {in_words(fastest)} rad/s the compensator passes noise of y "
-        f"to the actuator with a gain of at least {least:.4g} at some frequency."
+        f"To hold the unstable pole at s = {in_words(fastest.real, fastest.imag)} rad/s the compensator "
+        f"passes noise of y to the actuator with a gain of at least {least:.4g} at some frequency."
     )
     facts: dict[str, float | str] = {"pole": float(fastest.real), "noise_gain": least}
     bounds = list(view.asked("noise_gain", "max"))
