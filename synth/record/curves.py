@@ -23,9 +23,9 @@ DELAY_GAINS = 110  # gains at which the locus of a loop with dead time is looked
 DIGITS = 6  # a picture needs no more, and a record stays small
 
 
-def one_loop(plants: Rational, compensators: Rational, case: int = 0) -> Loops:
-    """The loop of the first compensator on one case."""
-    return close(plants, compensators, np.array([case]), np.array([0]))
+def one_loop(plants: Rational, compensators: Rational) -> Loops:
+    """The loop of the first compensator on the nominal case."""
+    return close(plants, compensators, np.array([0]), np.array([0]))
 
 
 def short(values: Sequence[float] | FloatArray) -> list[Any]:

@@ -158,12 +158,12 @@ class Chart:
             self.curve(self.x, (y, y), style, "sparse")
             self._word_at(self.x[1], y, word, style)
 
-    def upright(self, x: float, word: str, style: str = "axis") -> None:
+    def upright(self, x: float, word: str) -> None:
         """A thin vertical line, labelled at its upper end."""
         if self.x[0] <= x <= self.x[1]:
-            self.curve((x, x), self.y, style, "sparse")
+            self.curve((x, x), self.y, "axis", "sparse")
             column, _ = self.place(x, self.y[1])
-            self.canvas.word(int(column // 2) + 1, 0, word, style)
+            self.canvas.word(int(column // 2) + 1, 0, word, "axis")
 
     def mark(self, x: float, y: float, letter: str, style: str) -> None:
         """A letter at a data point."""

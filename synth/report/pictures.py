@@ -12,7 +12,7 @@ from synth.record import Candidate, Requirement, number
 from synth.report.canvas import Chart, Line
 from synth.report.theme import heading
 from synth.report.view import View
-from synth.wording.figures import figure, unit_for
+from synth.wording.figures import figure, pole, unit_for
 
 STEP_ROWS, LOOP_ROWS, PHASE_ROWS, LOCUS_ROWS = 13, 10, 6, 17
 WIDEST_PICTURE = 100
@@ -172,9 +172,7 @@ def locus(view: View, candidate: Candidate, width: int) -> list[Text]:
     ]
     lines.extend(chart.lines("rad/s", ""))
     if outside:
-        far = ", ".join(
-            f"{figure(re)} ± {figure(im)}j" if im else figure(re) for re, im in sorted(set(outside))
-        )
+        far = ", ".join(pole(re, im) for re, im in sorted(set(outside)))
         lines.append(Text(f"  outside the picture: closed-loop poles at {far}", style="dim"))
     return lines
 

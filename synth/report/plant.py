@@ -11,7 +11,7 @@ from synth.record import Check, Record, quantity_name
 from synth.report import reach, summary
 from synth.report.theme import Columns, hanging, heading
 from synth.report.view import View
-from synth.wording.figures import count, figure, quantity
+from synth.wording.figures import count, figure, pole, quantity
 
 MOST_CASES = 12  # listed; the rest is counted
 
@@ -62,9 +62,9 @@ def _plant(check: Check, width: int) -> list[Text]:
 
 def _root(re: float, im: float) -> str:
     if im == 0.0:
-        return f"{figure(re)} rad/s"
+        return f"{pole(re, im)} rad/s"
     size = math.hypot(re, im)
-    return f"{figure(re)} ± {figure(im)}j ({figure(size)} rad/s, damping ratio {figure(-re / size, 3)})"
+    return f"{pole(re, im)} ({figure(size)} rad/s, damping ratio {figure(-re / size, 3)})"
 
 
 def _low_frequency(numerator: list[float], denominator: list[float]) -> str:

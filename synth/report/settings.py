@@ -6,7 +6,7 @@ from rich.text import Text
 
 from synth.record import Candidate, Closest, Compensator, Pole, SpecPart, parameter_name, plant_unit
 from synth.report.theme import Columns, hanging, items
-from synth.wording.figures import MINUS, exact, figure, quantity
+from synth.wording.figures import MINUS, exact, figure, pole, quantity
 
 
 def tuned(candidate: Candidate | Closest) -> list[str]:
@@ -148,7 +148,7 @@ def poles_table(candidate: Candidate, width: int) -> list[Text]:
         table.add(
             "",
             shown,
-            f"{figure(re)} ± {figure(im)}j" if im else figure(re),
+            pole(re, im),
             figure(2.0 * 3.141592653589793 / im) if im else "",
             figure(-1.0 / re) if re else "",
             figure(-re / size if im else 1.0, 3) if size else "",

@@ -22,7 +22,6 @@ from synth.record import (
 from synth.wording.figures import Unit, unit_for
 
 SIGN = {"min": "≥", "max": "≤"}
-WORD = {"min": "at least", "max": "at most"}
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,10 +52,9 @@ class View:
             return requirement_id
         return requirement_name(requirement)
 
-    def limit(self, requirement: Requirement, *, words: bool = False) -> str:
-        """ "≤ 10 %", or "at most 10 %"."""
-        sign = (WORD if words else SIGN)[requirement["bound"]]
-        return f"{sign} {self.scale(requirement).full(requirement['limit'])}"
+    def limit(self, requirement: Requirement) -> str:
+        """ "≤ 10 %"."""
+        return f"{SIGN[requirement['bound']]} {self.scale(requirement).full(requirement['limit'])}"
 
     def judged(self, candidate: Candidate, requirement: Requirement) -> tuple[float, str | None, float]:
         """Value and case where the slack is least, and that slack."""

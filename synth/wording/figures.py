@@ -99,11 +99,11 @@ def change(old: float, new: float) -> str:
     return percent(ratio - 1.0)
 
 
-def pole(re: float, im: float, digits: int = 4) -> str:
+def pole(re: float, im: float) -> str:
     """A pole; a pair is given by its upper half."""
     if im == 0.0:
-        return figure(re, digits)
-    return f"{figure(re, digits)} ± {figure(abs(im), digits)}j"
+        return figure(re)
+    return f"{figure(re)} ± {figure(abs(im))}j"
 
 
 def count(n: int, one: str, many: str | None = None) -> str:
