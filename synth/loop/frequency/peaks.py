@@ -48,7 +48,7 @@ class Suprema:
     """Suprema of the curves in `keys`, of stable loops without dead time, each with a level to be tested.
 
     Error: the value is that of a frequency found by Newton's method; the test excludes a higher peak by more
-    than 1e-9 relative (1e-7 where damping of 1e-4 leaves no more digits in |Δ|²).
+    than 2e-9 relative (2e-7 where damping of 1e-4 leaves no more digits in |Δ|²).
     """
 
     def __init__(self, response: Response, poles: ComplexArray, keys: tuple[str, ...]) -> None:
@@ -136,7 +136,7 @@ def _climb_light_poles(
     """Climb at every pole of loops that have several lightly damped ones; raises `best` and `at`.
 
     So near the axis |Δ|² keeps few digits, and in a loop of high order with many modes the level test may see
-    nothing of a second needle: one of 1.0083 beside 1.004 was missed at order 21 (see test_peaks).
+    nothing of a second needle: one of 1.0083 beside 1.004 was missed at order 21 (see test_ill_conditioned).
     """
     light = (poles.imag > 0.0) & (-poles.real < _LIGHT * np.abs(poles))
     loop, place = np.nonzero(light & (light.sum(axis=1) > 1)[:, None])
