@@ -29,6 +29,7 @@ from synth.record import (
     predecessor_of,
     read_record,
 )
+from synth.record.candidate import binding_part
 from synth.record.changes import changes
 from synth.record.clean import clean
 from synth.record.format import Compensator, Revision
@@ -147,7 +148,10 @@ def _revision(seen: Spec, outcome: Outcome, before: Stored, service: InService |
     """What changed, how the earlier candidates do now, and the advice."""
     new = plant_part(seen, None), [requirement_part(b) for b in seen.bounds], spec_part(seen)
     old = before.record["plant"], before.record["requirements"], before.record["spec"]
-    earlier = [_earlier(_again(seen, c), c["rank"], c["worst_slack"]) for c in before.record["candidates"]]
+    earlier = [
+        _earlier(_again(seen, c["structure"], c["parameters"], c["compensator"]), c["rank"], c["worst_slack"])
+        for c in before.record["candidates"]
+    ]
     part: Revision = {
         "advice": "restructure" if outcome.verdict == "met" else "relax",
         "about": "",
@@ -161,15 +165,9 @@ def _revision(seen: Spec, outcome: Outcome, before: Stored, service: InService |
     }
     if service is None:
         return part
-    untouched = scored(
-        seen, *_polynomials(service.compensator), structure=service.structure, parameters=service.parameters
-    )
+    untouched = _again(seen, service.structure, service.parameters, service.compensator)
     decision = decide(
-        seen,
-        outcome,
-        untouched,
-        slack_before=service.slack_before,
-        parameters=service.parameters,
+        seen, outcome, untouched, slack_before=service.slack_before, parameters=service.parameters
     )
     part["advice"] = decision.advice
     part["about"] = service.about
@@ -182,24 +180,18 @@ def _revision(seen: Spec, outcome: Outcome, before: Stored, service: InService |
     return part
 
 
-def _again(seen: Spec, candidate: Any) -> Candidate:
-    """An earlier candidate, untouched, on the new plant."""
-    return scored(
-        seen,
-        *_polynomials(candidate["compensator"]),
-        structure=candidate["structure"],
-        parameters=candidate["parameters"],
-    )
+def _again(seen: Spec, structure: str, parameters: dict[str, float], compensator: Compensator) -> Candidate:
+    """An earlier compensator, untouched, on the new plant."""
+    return scored(seen, *_polynomials(compensator), structure=structure, parameters=parameters)
 
 
 def _earlier(found: Candidate, rank: int | None, was: Any) -> Earlier:
-    binding = found.binding
     return {
         "rank": rank,
         "structure": found.structure,
         "meets_all": found.meets_all,
         "worst_slack": plain(found.worst_slack),
-        "binding": None if binding is None else {"requirement": binding[0], "case": binding[1]},
+        "binding": binding_part(found.binding),
         "was": was,
     }
 

@@ -69,7 +69,7 @@ def second_opinion(
         step = None
         values, missing = {}, dict.fromkeys(measures, "its numbers leave the range of double precision")
     where = f" on {case}" if case else ""
-    details = [f"{_name(m)}{where} was not recomputed: {why}" for m, why in missing.items()]
+    details = [f"{m.quantity}{where} was not recomputed: {why}" for m, why in missing.items()]
     differences: dict[str, float] = {}
     for measure, claim in zip(measures, claimed, strict=True):
         if measure not in values:
@@ -81,7 +81,7 @@ def second_opinion(
             and _as_high(step, claim, values[measure])
         ):
             difference = 0.0
-        name = _name(measure)
+        name = measure.quantity
         differences[name] = max(difference, differences.get(name, 0.0))
         if not difference <= TOLERANCE:
             details.append(f"{name}{where}: claimed {claim:.6g}, second value {values[measure]:.6g}")
@@ -102,10 +102,6 @@ def together(opinions: Iterable[Verified]) -> Verified:
         tuple(dict.fromkeys(d for one in every for d in one.details)),
         differences,
     )
-
-
-def _name(measure: Measure) -> str:
-    return measure.quantity
 
 
 def _difference(measure: Measure, claim: float, value: float) -> float:
