@@ -49,9 +49,8 @@ def nearest(campaign: Campaign) -> Rows | None:
 def _scored(campaign: Campaign, standing: Standing) -> tuple[Rows, float]:
     """The best scored rows of a structure on all the cases that are active for it, distinct, and the worst
     slack of the best."""
-    rows, slack, _, cases = campaign.objective.archive.all()
-    judged = cases >= len(campaign.objective.active[standing.number])
-    worst = np.where(judged & (rows.structure == standing.number), slack.min(axis=1), -np.inf)
+    rows, worst, _ = campaign.objective.remembered(standing.number)
     order = np.argsort(-worst, kind="stable")[:BEST]
     order = order[np.isfinite(worst[order])]
-    return rows.take(order[distinct(rows.take(order), worst[order], PICKS)]), float(worst.max())
+    order = order[distinct(rows.take(order), worst[order], PICKS)]
+    return rows.take(order), float(worst.max(initial=-np.inf))

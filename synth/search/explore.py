@@ -151,10 +151,8 @@ def _known(campaign: Campaign, n: int) -> list[Any]:
     import optuna
 
     names, low, high = _box(campaign, n)
-    rows, slack, _, cases = campaign.objective.archive.all()
-    mine = np.flatnonzero((rows.structure == n) & (cases == len(campaign.objective.active[n])))
-    guide = np.maximum(slack[mine].min(axis=1, initial=1.0), -30.0)
-    best = mine[distinct(rows.take(mine), guide, KNOWN, 0.3)]
+    rows, worst, _ = campaign.objective.remembered(n)
+    best = distinct(rows, np.clip(worst, -30.0, 1.0), KNOWN, 0.3)
     spaces: dict[str, Any] = {
         k: optuna.distributions.FloatDistribution(a, b) for k, a, b in zip(names, low, high, strict=True)
     }
@@ -166,7 +164,7 @@ def _known(campaign: Campaign, n: int) -> list[Any]:
         if inside and int(rows.sign[i]) in campaign.standings[n].signs:
             values: dict[str, Any] = {k: float(v) for k, v in zip(names, x, strict=True)}
             values["sign"] = int(rows.sign[i])
-            least = float(np.maximum(slack[i].min(), -30.0))
+            least = float(np.maximum(worst[i], -30.0))
             out.append(optuna.trial.create_trial(params=values, distributions=spaces, value=least))
     return out
 

@@ -265,6 +265,13 @@ class Objective:
         search[~self.judged[case] & stable[:, None]] = np.inf
         return exact, search
 
+    def remembered(self, s: int) -> tuple[Rows, FloatArray, FloatArray]:
+        """The scored rows of structure s that were judged on all the cases now active: rows, exact worst
+        slack (S,), values (S, kept)."""
+        rows, slack, values, cases = self.archive.all()
+        index = np.flatnonzero((rows.structure == s) & (cases >= len(self.active[s])))
+        return rows.take(index), slack[index].min(axis=1), values[index]
+
     def _worst_values(self, scores: Scores) -> FloatArray:
         """(S, kept) each on its worst case: the largest, or the smallest where large is good."""
         out = np.empty((scores.values.shape[0], len(self.kept)))

@@ -42,22 +42,17 @@ def fresh(campaign: Campaign, standing: Standing, aim: Aim, count: int = FRESH_P
     short = np.minimum(scores.guide() - aim.reserve, 0.0)
     merit = np.where(scores.stable & (gain > ABSENT), gain + FRESH_PENALTY * short, -np.inf)
     index: IntArray = np.flatnonzero(np.isfinite(merit))
-    if index.size == 0:
-        return drawn.take(index)
     return drawn.take(index[distinct(drawn.take(index), merit[index], count)])
 
 
 def from_archive(campaign: Campaign, number: int, aim: Aim, count: int = 3) -> Rows:
     """Scored rows of a structure with the reserve kept, best by the wish, distinct."""
-    rows, slack, values, cases = campaign.objective.archive.all()
+    rows, worst, values = campaign.objective.remembered(number)
     if aim.measure is None:
         raise ValueError("an aim at the worst slack needs no archive")
-    judged = cases >= len(campaign.objective.active[number])
-    fit: IntArray = np.flatnonzero((rows.structure == number) & judged & (slack.min(axis=1) >= aim.reserve))
+    fit: IntArray = np.flatnonzero(worst >= aim.reserve)
     gain = benefit(aim.measure, aim.sense, values[fit, campaign.objective.kept.index(aim.measure)])
     order = np.argsort(-gain, kind="stable")[:200]
-    if order.size == 0:
-        return rows.take(fit)
     return rows.take(fit[order[distinct(rows.take(fit[order]), gain[order], count)]])
 
 
