@@ -1,6 +1,6 @@
 """A long global search that shares nothing with ours but the evaluator: scipy's differential evolution.
 
-The worst search slack of one structure over its whole box, both signs of gain. Runs from fresh populations
+The worst slack of one structure over its whole box, both signs of gain. Runs from fresh populations
 follow each other until the evaluations are used up, in turns over the search coordinates themselves and over
 the crossover with corners relative to it: what is a narrow valley in one of them need not be in the other.
 """
@@ -14,7 +14,7 @@ import numpy as np
 from scipy.optimize import differential_evolution
 
 from synth.search.archive import Rows
-from synth.search.objective import Objective
+from synth.search.objective import Objective, uncompressed
 from synth.search.polish import EXACT_PACE, polish
 from synth.search.scales import response
 
@@ -25,7 +25,7 @@ Array = np.ndarray
 
 @dataclass(frozen=True)
 class Best:
-    """Where the best of all runs stands: x (P,), sign, worst search slack, and what it took."""
+    """Where the best of all runs stands: x (P,), sign, worst slack, and what it took."""
 
     x: Array
     sign: float
@@ -43,8 +43,12 @@ class Space:
     rows: Callable[[Array], Rows]
 
 
-def search(objective: Objective, n: int, evaluations: int, seed: int = 0) -> Best:
-    """The best of structure n that `evaluations` of them find, on the cases that are active."""
+def search(objective: Objective, n: int, evaluations: int, seed: int = 0, *, steering: bool = False) -> Best:
+    """The best of structure n that `evaluations` of them find, on the cases that are active: by the exact
+    worst slack, or by the one that our search steers by."""
+    if not steering:
+        with objective.literally():
+            return search(objective, n, evaluations, seed, steering=True)
     spaces = [_own(objective, n), _by_crossover(objective, n)]
     used, runs, best = 0, 0, None
 
@@ -80,6 +84,7 @@ def search(objective: Objective, n: int, evaluations: int, seed: int = 0) -> Bes
     if objective.delayed:  # the stand-in led the way
         done = polish(objective, rows, pace=EXACT_PACE)
         rows, slack = done.rows, float(done.merit[0])
+    slack = float(uncompressed(np.array([slack]))[0])
     return Best(rows.x[0, : len(objective.boxes[n][0])], float(rows.sign[0]), slack, used, runs)
 
 
