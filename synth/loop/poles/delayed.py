@@ -12,7 +12,6 @@ from synth.loop.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
 from synth.loop.poles.encirclement import (
     chain_abscissa,
-    delayed_stable,
     moved,
     roots_right_of,
     unit_crossings,
@@ -22,8 +21,6 @@ from synth.loop.poles.roots import rightmost
 from synth.loop.poles.seeds import seeds_of
 from synth.loop.poles.winding import missing_roots
 from synth.loop.polynomials import magnitude_sum
-
-__all__ = ["characteristic", "delayed_poles", "delayed_stable"]
 
 # Radius, in units of 1/θ, within which every root is always sought; it holds the first chain pair.
 NEAREST = 7.0

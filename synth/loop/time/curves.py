@@ -24,7 +24,7 @@ def step_curves(loops: Loops, t: FloatArray) -> tuple[FloatArray, FloatArray, Fl
     y, u, d : (M, T) each, scaled by the loop's plant gain like every value of the core.
     """
     times = np.broadcast_to(t, (len(loops), np.asarray(t).shape[-1]))
-    if (loops.dead_time > 0.0).any():
+    if loops.delayed:
         from synth.loop.time.delayed_curves import delayed_step_curves
 
         return delayed_step_curves(loops, times)

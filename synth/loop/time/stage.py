@@ -28,7 +28,7 @@ def time_stage(
     crowded : crowding of the poles from which on close ones are taken together; more costs digits.
     """
     asked = tuple(m for m in measures if m.row.stage == "time")
-    if (loops.dead_time > 0.0).any():
+    if loops.delayed:
         from synth.loop.time.delayed import delayed_time_stage
 
         return delayed_time_stage(loops, poles, asked)

@@ -11,7 +11,7 @@ import numpy as np
 
 from synth.loop.arrays import ComplexArray, FloatArray, IntArray
 from synth.loop.closed_loop import Loops
-from synth.loop.poles.delayed import characteristic
+from synth.loop.poles.newton import characteristic
 from synth.loop.polynomials import horner
 from synth.loop.time.collocation import GRID, NODES
 

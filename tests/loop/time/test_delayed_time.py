@@ -11,7 +11,8 @@ from scipy.optimize import brentq, minimize_scalar
 from scipy.signal import tf2ss
 
 from synth.loop.closed_loop import Rational, close
-from synth.loop.poles.delayed import delayed_poles, delayed_stable
+from synth.loop.poles.delayed import delayed_poles
+from synth.loop.poles.encirclement import delayed_stable
 from synth.loop.quantities import EVERY_QUANTITY, Measure
 from synth.loop.time.delayed import delayed_time_stage
 from synth.loop.time.delayed_curves import delayed_step_curves
